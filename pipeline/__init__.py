@@ -1,0 +1,1 @@
+"""Measure how share prices react to announced deals."""

@@ -1,0 +1,146 @@
+"""Abnormal returns of N events over D days, with the facts of their estimation."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from functools import cached_property
+
+import numpy as np
+
+from pipeline.core.prices import Booleans, Dates, Floats, Integers
+from pipeline.core.window import Window
+
+
+@dataclass(frozen=True, eq=False)
+class AbnormalReturns:
+    """One expected-return model's abnormal returns.
+
+    Attributes:
+        model: the expected-return model's key.
+        deals: N deal identifiers.
+        span: the event days covered, D of them.
+        returns: (N, D) abnormal returns, decimal; NaN where the share did not trade.
+        days: (N, D) ``datetime64[D]`` calendar date of each event day; NaT outside the panel.
+        regressors: (N, D, d) event-window regressors X*; d may be 0.
+        bread: (N, d, d) inverse of X'X over the estimation window.
+        parameters: (N, d) estimated mean parameters, the constant first.
+        residual_variance: (N,) s² = e'e / (M - d), per session.
+        observations: (N,) M, returns used in estimation.
+        estimation_returns: (N, E) abnormal returns of the estimation window; NaN where unused.
+        estimation_days: (N, E) their dates.
+        expected: (N, D) expected returns, decimal.
+    """
+
+    model: str
+    deals: tuple[str, ...]
+    span: Window
+    returns: Floats
+    days: Dates
+    regressors: Floats
+    bread: Floats
+    parameters: Floats
+    residual_variance: Floats
+    observations: Integers
+    estimation_returns: Floats
+    estimation_days: Dates
+    expected: Floats
+
+    def __post_init__(self) -> None:
+        n, width = len(self.deals), len(self.span)
+        if self.returns.shape != (n, width) or self.days.shape != (n, width):
+            raise ValueError(f"abnormal returns {self.returns.shape}, expected {(n, width)}")
+        if self.regressors.shape[:2] != (n, width) or self.bread.shape[0] != n:
+            raise ValueError("regressors and bread must have one slice an event")
+
+    @property
+    def mean_parameters(self) -> int:
+        """d, the number of estimated mean parameters."""
+        return int(self.regressors.shape[2])
+
+    @cached_property
+    def degrees_of_freedom(self) -> Integers:
+        """(N,) M - d."""
+        return self.observations - self.mean_parameters
+
+    def columns(self, window: Window) -> slice:
+        """Where ``window`` lies among the D days.
+
+        Raises:
+            ValueError: if it reaches outside the days held.
+        """
+        if window.start < self.span.start or window.end > self.span.end:
+            raise ValueError(f"window {window.label} is outside the days held {self.span.label}")
+        first = window.start - self.span.start
+        return slice(first, first + len(window))
+
+    def complete(self, window: Window, share: float = 1.0) -> Booleans:
+        """(N,) whether at least ``share`` of the window's days traded, day 0 (if in it) among them.
+
+        A missing day is not a zero: methods, common practice, no source.
+        """
+        inside = np.isfinite(self.returns[:, self.columns(window)])
+        enough = inside.mean(axis=1) >= share - 1e-12
+        if window.start <= 0 <= window.end:
+            enough &= inside[:, -window.start]
+        return np.asarray(enough, dtype=np.bool_)
+
+    def car(self, window: Window) -> Floats:
+        """(N,) cumulative abnormal return, decimal: the sum over the window's traded days."""
+        total = np.nansum(self.returns[:, self.columns(window)], axis=1)
+        return np.asarray(total, dtype=np.float64)
+
+    def bhar(self, window: Window) -> Floats:
+        """(N,) buy-and-hold abnormal return: product of 1+R less product of 1+E[R], minus."""
+        where = self.columns(window)
+        traded = np.isfinite(self.returns[:, where])
+        expected = np.where(traded, self.expected[:, where], 0.0)
+        realised = np.where(traded, self.returns[:, where] + self.expected[:, where], 0.0)
+        return np.asarray((1 + realised).prod(axis=1) - (1 + expected).prod(axis=1))
+
+    def forecast_covariance(self, window: Window) -> Floats:
+        """(N, L, L) forecast-error covariance of the window's abnormal returns.
+
+        V = s² [I + X* (X'X)⁻¹ X*'] (Patell 1976; Campbell, Lo and MacKinlay 1997, ch. 4). Rows
+        and columns of days that did not trade are zero.
+        """
+        where = self.columns(window)
+        traded = np.isfinite(self.returns[:, where])
+        x = np.where(traded[:, :, None], self.regressors[:, where], 0.0)
+        shape = np.einsum("nld,nde,nme->nlm", x, self.bread, x)
+        shape += traded[:, :, None] * np.eye(traded.shape[1])
+        return np.asarray(self.residual_variance[:, None, None] * shape)
+
+    def car_variance(self, window: Window) -> Floats:
+        """(N,) forecast-error variance of the CAR, 1'V1, decimal squared."""
+        where = self.columns(window)
+        traded = np.isfinite(self.returns[:, where])
+        total = np.where(traded[:, :, None], self.regressors[:, where], 0.0).sum(axis=1)
+        estimation = np.einsum("nd,nde,ne->n", total, self.bread, total)
+        return np.asarray(self.residual_variance * (traded.sum(axis=1) + estimation))
+
+    def standardised(self, window: Window) -> Floats:
+        """(N,) SCAR, the CAR over its forecast standard deviation."""
+        return np.asarray(self.car(window) / np.sqrt(self.car_variance(window)))
+
+    def select(self, keep: Booleans) -> AbnormalReturns:
+        """The events where ``keep`` (N,) is true."""
+        return AbnormalReturns(
+            model=self.model,
+            deals=tuple(deal for deal, kept in zip(self.deals, keep, strict=True) if kept),
+            span=self.span,
+            **{
+                name: getattr(self, name)[keep]
+                for name in (
+                    "returns",
+                    "days",
+                    "regressors",
+                    "bread",
+                    "parameters",
+                    "residual_variance",
+                    "observations",
+                    "estimation_returns",
+                    "estimation_days",
+                    "expected",
+                )
+            },
+        )

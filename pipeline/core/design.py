@@ -1,0 +1,83 @@
+"""The arrays an estimator may see, and nothing else."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from pipeline.core.prices import Booleans, Floats, Integers
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class SelectionRows:
+    """All candidates, those that announced and those that did not.
+
+    Attributes:
+        W: (A, q) regressors of the decision to announce, a constant first.
+        names: q names.
+        excluded: the names that enter this equation and not the outcome.
+        selected: (A,) whether the candidate's deal is a row of the design.
+        outcome_row: (A,) the row of the design for a selected candidate, -1 otherwise.
+        clusters: name -> (A,) integer codes.
+    """
+
+    W: Floats
+    names: tuple[str, ...]
+    excluded: tuple[str, ...]
+    selected: Booleans
+    outcome_row: Integers
+    clusters: dict[str, Integers] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Design:
+    """One sample, one mask: every array has the same n rows.
+
+    Attributes:
+        y: (n,) outcome, decimal.
+        X: (n, k) regressors: the constant, the treatment, the controls, in that order.
+        names: k names.
+        treatment: name of the regressor whose coefficient is the question.
+        effects: fixed effect -> (n,) integer codes from 0.
+        clusters: cluster dimension -> (n,) integer codes from 0.
+        Z: (n, L) excluded instruments; L may be 0.
+        instruments: L names.
+        selection: the candidates, if the study models who announces.
+        rows: n deal identifiers.
+        outcome: how the outcome is called on a page, e.g. ``CAR[-1, +1]``.
+
+    Raises:
+        ValueError: if a shape disagrees or a value is not finite.
+    """
+
+    y: Floats
+    X: Floats
+    names: tuple[str, ...]
+    treatment: str
+    rows: tuple[str, ...]
+    outcome: str
+    effects: dict[str, Integers] = field(default_factory=dict)
+    clusters: dict[str, Integers] = field(default_factory=dict)
+    Z: Floats = field(default_factory=lambda: np.empty((0, 0)))
+    instruments: tuple[str, ...] = ()
+    selection: SelectionRows | None = None
+
+    def __post_init__(self) -> None:
+        n = len(self.y)
+        if self.X.shape != (n, len(self.names)) or len(self.rows) != n:
+            raise ValueError(f"X has shape {self.X.shape}, expected {(n, len(self.names))}")
+        if self.instruments and self.Z.shape != (n, len(self.instruments)):
+            raise ValueError(f"Z has shape {self.Z.shape}, expected {(n, len(self.instruments))}")
+        for codes in (*self.effects.values(), *self.clusters.values()):
+            if codes.shape != (n,):
+                raise ValueError("effects and clusters need one code a row")
+        if self.treatment and self.treatment not in self.names:
+            raise ValueError(f"treatment {self.treatment} is not a regressor")
+        if not (np.isfinite(self.y).all() and np.isfinite(self.X).all()):
+            raise ValueError("y and X must be finite: rows with gaps are dropped before")
+
+    @property
+    def n(self) -> int:
+        """Rows."""
+        return len(self.y)

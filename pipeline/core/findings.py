@@ -1,0 +1,80 @@
+"""What a check says about bad input, and the one exception that carries it to the screen."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import dataclass
+from enum import StrEnum
+
+import pandas as pd
+
+
+class Severity(StrEnum):
+    """How much a finding matters: an error stops the run, a warning travels to the report."""
+
+    ERROR = "error"
+    WARNING = "warning"
+    NOTE = "note"
+
+
+@dataclass(frozen=True, slots=True)
+class Finding:
+    """One thing a check found.
+
+    ``rule`` is an entry of :mod:`pipeline.core.rules`; ``where`` parts are as the person sees
+    them (file name, row number of her sheet counted from its header as row 1, column or key).
+    """
+
+    rule: str
+    severity: Severity
+    file: str
+    got: str
+    expected: str
+    remedy: str
+    row: str = ""
+    column: str = ""
+
+    @property
+    def where(self) -> str:
+        """File, row and column in one phrase."""
+        row_word = "rows" if any(mark in self.row for mark in ",–") else "row"
+        parts = [self.file]
+        if self.row:
+            parts.append(f"{row_word} {self.row}")
+        if self.column:
+            parts.append(f"column or key '{self.column}'")
+        return ", ".join(part for part in parts if part)
+
+
+class InputProblem(Exception):
+    """Input that cannot be worked with; holds every finding, shown at once.
+
+    The command line prints the findings on one screen and leaves with exit code 2.
+    """
+
+    def __init__(self, findings: Iterable[Finding]):
+        self.findings = tuple(findings)
+        super().__init__("; ".join(f"{f.where}: {f.got}" for f in self.findings))
+
+
+def problem(
+    rule: str, file: str, *, got: str, expected: str, remedy: str, row: str = "", column: str = ""
+) -> InputProblem:
+    """An :class:`InputProblem` of one error finding."""
+    return InputProblem(
+        [Finding(rule, Severity.ERROR, file, got, expected, remedy, row=row, column=column)]
+    )
+
+
+def raise_errors(findings: Iterable[Finding]) -> None:
+    """Raise :class:`InputProblem` with all errors among ``findings``, if there is one."""
+    errors = [finding for finding in findings if finding.severity is Severity.ERROR]
+    if errors:
+        raise InputProblem(errors)
+
+
+def findings_frame(findings: Iterable[Finding]) -> pd.DataFrame:
+    """One row a finding, columns as the fields of :class:`Finding`, in the order found."""
+    columns = ["rule", "severity", "file", "row", "column", "got", "expected", "remedy"]
+    rows = [[str(getattr(finding, name)) for name in columns] for finding in findings]
+    return pd.DataFrame(rows, columns=columns, dtype="str")

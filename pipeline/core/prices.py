@@ -1,0 +1,62 @@
+"""Daily prices of the securities of one exchange, on that exchange's own sessions."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+Dates = NDArray[np.datetime64]
+Floats = NDArray[np.float64]
+Integers = NDArray[np.int64]
+Booleans = NDArray[np.bool_]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class PricePanel:
+    """Closes, volumes and simple returns, one contiguous column a security.
+
+    Attributes:
+        exchange: ISO 10383 code.
+        sessions: (T,) ``datetime64[D]``, the exchange's sessions in order.
+        securities: S codes, the columns.
+        close: (T, S) in the listing's currency; NaN where nothing was quoted.
+        volume: (T, S) shares; NaN where unknown.
+        returns: (T, S) simple returns; NaN on a session without a close and on the first
+            session after one, so that no return spans a gap unseen.
+        benchmark: (T,) simple returns of the exchange's benchmark.
+        factors: name -> (T,) simple daily returns, decimal.
+    """
+
+    exchange: str
+    sessions: Dates
+    securities: tuple[str, ...]
+    close: Floats
+    volume: Floats
+    returns: Floats
+    benchmark: Floats
+    factors: dict[str, Floats]
+
+    def __post_init__(self) -> None:
+        shape = (len(self.sessions), len(self.securities))
+        for name in ("close", "volume", "returns"):
+            if getattr(self, name).shape != shape:
+                raise ValueError(f"{name} has shape {getattr(self, name).shape}, expected {shape}")
+        if self.benchmark.shape != shape[:1]:
+            raise ValueError(f"benchmark has shape {self.benchmark.shape}, expected {shape[:1]}")
+
+    def position(self, day: np.datetime64) -> int:
+        """Index of the first session on or after ``day``; T if there is none."""
+        return int(np.searchsorted(self.sessions, day))
+
+    def column(self, security: str) -> int:
+        """Index of the security's column.
+
+        Raises:
+            KeyError: if the security is not in the panel.
+        """
+        try:
+            return self.securities.index(security)
+        except ValueError:
+            raise KeyError(security) from None

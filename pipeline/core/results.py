@@ -1,0 +1,126 @@
+"""Everything a run found, in one value: what the report reads and the data files hold."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import pandas as pd
+
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.estimate import Column, Tested
+from pipeline.core.findings import Finding
+from pipeline.core.ledger import Ledger
+from pipeline.core.window import Window
+
+
+@dataclass(frozen=True, slots=True)
+class StudyFacts:
+    """What the report may know of the study file.
+
+    Attributes:
+        name: the study's short name, its folder under ``reports/``.
+        title, question: as written by the analyst.
+        headline: the window declared before looking; ``windows`` holds it and the secondary ones.
+        estimation: the estimation window.
+        minimum_observations: returns an estimation window must hold.
+        models: expected-return model keys, the headline one first.
+        headline_test: key of the test that leads; ``headline_test_reason`` says why, in words.
+        treatment: the deal feature asked about ('' if the study asks about the mean alone).
+        groups: the two payment forms (or other treatment values) in words: (untreated, treated).
+        regressors, effects, clusters, instruments, excluded, selection: names.
+        rationales: heading -> the analyst's argument, printed verbatim.
+        labels: variable name -> its words on a page.
+        notes: conventions used, one sentence each (day zero, missing data, return basis).
+        level: confidence level.
+        currency: of the money columns, with the scale, e.g. ``USD million``.
+        seed: of every random stream.
+    """
+
+    name: str
+    title: str
+    question: str
+    headline: Window
+    windows: tuple[Window, ...]
+    estimation: Window
+    minimum_observations: int
+    models: tuple[str, ...]
+    headline_test: str
+    headline_test_reason: str
+    treatment: str = ""
+    groups: tuple[str, str] = ("", "")
+    regressors: tuple[str, ...] = ()
+    effects: tuple[str, ...] = ()
+    clusters: tuple[str, ...] = ()
+    instruments: tuple[str, ...] = ()
+    excluded: tuple[str, ...] = ()
+    selection: tuple[str, ...] = ()
+    rationales: Mapping[str, str] = field(default_factory=dict)
+    labels: Mapping[str, str] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
+    level: float = 0.95
+    currency: str = ""
+    seed: int = 0
+
+    def words(self, name: str) -> str:
+        """A variable's label, or its name with spaces."""
+        return self.labels.get(name, name.replace("_", " "))
+
+
+@dataclass(frozen=True, slots=True)
+class WindowTests:
+    """All tests of the mean abnormal return in one window under one expected-return model.
+
+    ``mean``, ``median`` and ``std_dev`` are decimal CARs over ``n`` deals; ``share_positive`` is
+    a fraction; ``interval`` is the headline test's (low, high) for the mean, decimal.
+    """
+
+    window: Window
+    model: str
+    n: int
+    mean: float
+    median: float
+    std_dev: float
+    share_positive: float
+    interval: tuple[float, float]
+    tests: Mapping[str, Tested]
+    p_holm: Mapping[str, float] = field(default_factory=dict)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Results:
+    """One run.
+
+    Attributes:
+        study: the facts of the study file.
+        abnormal: expected-return model -> abnormal returns of the deals kept.
+        deals: one row a deal kept: ``deal``, keys, outcomes ``car_<start>_<end>`` (decimal),
+            characteristics; ``market_value`` in money when known.
+        window_tests: one entry a window and model, the headline window and model first.
+        columns: the comparison table's columns, in order.
+        lead: index in ``columns`` of the column that answers the question, -1 without one.
+        paths: ``group, day, n, mean, low, high`` of the cumulative average abnormal return.
+        diagnostics: ``subject, check, value, threshold, verdict, meaning, source``; verdict is
+            ``pass``, ``warn`` or ``fail``.
+        sensitivity: ``dimension, variant, estimate, ci_low, ci_high, n`` (decimal).
+        tables: name -> the frame written to ``data/<name>.parquet``.
+        ledger, findings: as collected.
+    """
+
+    study: StudyFacts
+    abnormal: Mapping[str, AbnormalReturns]
+    deals: pd.DataFrame
+    window_tests: tuple[WindowTests, ...]
+    columns: tuple[Column, ...]
+    lead: int
+    paths: pd.DataFrame
+    diagnostics: pd.DataFrame
+    sensitivity: pd.DataFrame
+    ledger: Ledger
+    findings: tuple[Finding, ...]
+    tables: Mapping[str, pd.DataFrame]
+
+    @property
+    def headline(self) -> WindowTests:
+        """The tests of the headline window under the headline model."""
+        return self.window_tests[0]
