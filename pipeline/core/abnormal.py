@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -9,6 +10,19 @@ import numpy as np
 
 from pipeline.core.prices import Booleans, Dates, Floats, Integers
 from pipeline.core.window import Window
+
+ARRAYS = (
+    "returns",
+    "days",
+    "regressors",
+    "bread",
+    "parameters",
+    "residual_variance",
+    "observations",
+    "estimation_returns",
+    "estimation_days",
+    "expected",
+)
 
 
 @dataclass(frozen=True, eq=False)
@@ -124,23 +138,23 @@ class AbnormalReturns:
 
     def select(self, keep: Booleans) -> AbnormalReturns:
         """The events where ``keep`` (N,) is true."""
+        return self.take(np.flatnonzero(keep))
+
+    def take(self, rows: Integers) -> AbnormalReturns:
+        """The events at ``rows``, in that order."""
         return AbnormalReturns(
             model=self.model,
-            deals=tuple(deal for deal, kept in zip(self.deals, keep, strict=True) if kept),
+            deals=tuple(self.deals[row] for row in rows),
             span=self.span,
-            **{
-                name: getattr(self, name)[keep]
-                for name in (
-                    "returns",
-                    "days",
-                    "regressors",
-                    "bread",
-                    "parameters",
-                    "residual_variance",
-                    "observations",
-                    "estimation_returns",
-                    "estimation_days",
-                    "expected",
-                )
-            },
+            **{name: getattr(self, name)[rows] for name in ARRAYS},
         )
+
+
+def concatenate(parts: Sequence[AbnormalReturns]) -> AbnormalReturns:
+    """Events of several chunks or exchanges as one value, in the order given."""
+    return AbnormalReturns(
+        model=parts[0].model,
+        deals=tuple(deal for part in parts for deal in part.deals),
+        span=parts[0].span,
+        **{name: np.concatenate([getattr(part, name) for part in parts]) for name in ARRAYS},
+    )

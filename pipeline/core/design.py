@@ -74,10 +74,43 @@ class Design:
                 raise ValueError("effects and clusters need one code a row")
         if self.treatment and self.treatment not in self.names:
             raise ValueError(f"treatment {self.treatment} is not a regressor")
-        if not (np.isfinite(self.y).all() and np.isfinite(self.X).all()):
-            raise ValueError("y and X must be finite: rows with gaps are dropped before")
+        if not all(np.isfinite(array).all() for array in (self.y, self.X, self.Z)):
+            raise ValueError("y, X and Z must be finite: rows with gaps are dropped before")
 
     @property
     def n(self) -> int:
         """Rows."""
         return len(self.y)
+
+
+COVARIANCES = ("auto", "classical", "hc0", "hc1", "hc2", "hc3")
+"""What a study may ask for; ``auto`` leaves the choice to the estimator."""
+
+
+@dataclass(frozen=True, slots=True)
+class FitOptions:
+    """What a person may choose about a fit.
+
+    Attributes:
+        level: confidence level of every interval, between .5 and 1.
+        covariance: one of :data:`COVARIANCES`; anything but ``auto`` excludes ``cluster``.
+        cluster: whether to cluster by the design's one or two dimensions.
+        allow_functional_form: accept a selection model without an excluded variable, identified
+            by the curvature of the inverse Mills ratio alone.
+
+    Raises:
+        ValueError: if a value is none of these, or both kinds of covariance are asked for.
+    """
+
+    level: float = 0.95
+    covariance: str = "auto"
+    cluster: bool = False
+    allow_functional_form: bool = False
+
+    def __post_init__(self) -> None:
+        if not 0.5 <= self.level < 1:
+            raise ValueError(f"level must be in [.5, 1). Got {self.level} instead.")
+        if self.covariance not in COVARIANCES:
+            raise ValueError(f"covariance must be one of {COVARIANCES}. Got {self.covariance}.")
+        if self.cluster and self.covariance != "auto":
+            raise ValueError(f"cluster and covariance {self.covariance} exclude each other")

@@ -13,12 +13,20 @@ from scipy import special
 from pipeline.core.prices import Floats
 
 
+class EstimationFailed(Exception):
+    """A fit that was allowed to start and gave no number that may be shown; ``reason`` says why."""
+
+    def __init__(self, reason: str):
+        self.reason = reason
+        super().__init__(reason)
+
+
 @dataclass(frozen=True, slots=True)
 class TestResult:
     """A statistic with its null hypothesis and distribution.
 
-    ``distribution`` is ``t``, ``normal``, ``chi2``, ``F`` or ``empirical``; ``df`` holds its
-    parameters; ``caution`` says where the test does not hold.
+    ``distribution`` is ``t``, ``normal``, ``chi2``, ``F``, ``noncentral chi2`` or ``empirical``;
+    ``df`` holds its parameters; ``caution`` says where the test does not hold.
     """
 
     __test__ = False
@@ -178,6 +186,7 @@ class Estimate:
         tests: name -> result or why there is none.
         stages: first stages and selection equations, each an Estimate.
         robust_set: a confidence set for the treatment that replaces the t interval when set.
+        sets: further confidence sets for the treatment, by how they are made.
         scores: (n, k) influence of each row on the coefficients, or None.
         notes: sentences a reader must see.
         citation: the published source.
@@ -202,6 +211,7 @@ class Estimate:
     tests: Mapping[str, Tested] = field(default_factory=dict)
     stages: tuple[Estimate, ...] = ()
     robust_set: ConfidenceSet | None = None
+    sets: Mapping[str, ConfidenceSet] = field(default_factory=dict)
     scores: Floats | None = None
     notes: tuple[str, ...] = ()
     citation: str = ""

@@ -285,6 +285,20 @@ RULES: Mapping[str, Rule] = _catalogue(
         "Add the company's row to the candidates.",
     ),
     Rule(
+        "second_in_year",
+        "Second deal of the company in the year",
+        "The company-year's row among the candidates stands for another deal.",
+        "The decision to bid is modelled once a company and year.",
+        "None needed: the first deal of the year is kept in the regressions.",
+    ),
+    Rule(
+        "candidates_used",
+        "Candidates in the selection equation",
+        "How many company-years enter the selection equation.",
+        "A selection model speaks of the candidates it was shown.",
+        "None needed.",
+    ),
+    Rule(
         "no_variation",
         "Treatment without variation",
         "The deal feature has one value, or fewer than five deals with one of its values.",

@@ -1,0 +1,1 @@
+"""Deal-level variables and the design matrices made from them."""

@@ -1,0 +1,1 @@
+"""From the analyst's files to typed tables, with every finding at once."""

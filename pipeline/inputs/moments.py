@@ -1,0 +1,159 @@
+"""When an announcement became public: from a cell to an instant, or to a date alone."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import dataclass
+from datetime import UTC, date, datetime
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+import pandas as pd
+
+from pipeline.core.findings import Finding, Severity
+from pipeline.inputs.contracts import EARLIEST, LATEST
+from pipeline.inputs.files import ROW, Source
+
+ISO_DATE = re.compile(r"^\d{4}-\d{2}-\d{2}$")
+
+
+@dataclass(frozen=True, slots=True)
+class Refusal:
+    """Why a cell gives no instant."""
+
+    rule: str
+    expected: str
+    remedy: str
+
+
+BAD_FORMAT = Refusal(
+    "unparseable_date",
+    "YYYY-MM-DD HH:MM, with an offset or a zone in timestamp_zone, or a date YYYY-MM-DD",
+    "Correct the cell, or declare your format in inputs.date_format.",
+)
+NO_ZONE = Refusal(
+    "missing_zone",
+    "an offset (+01:00) or a zone for every time of day",
+    "Fill timestamp_zone (for example Europe/London), or set inputs.timestamp_zone.",
+)
+BAD_ZONE = Refusal(
+    "missing_zone", "the name of a time zone, such as America/New_York", "Correct timestamp_zone."
+)
+IMPOSSIBLE = Refusal(
+    "impossible_local_time",
+    "a local time that exists once; the clocks changed that night",
+    "Write the time with its offset, for example 2021-11-07T01:30:00-05:00.",
+)
+OUT_OF_RANGE = Refusal(
+    "date_out_of_range",
+    f"a date from {EARLIEST:%Y-%m-%d} to {LATEST:%Y-%m-%d}",
+    "Correct the date.",
+)
+
+
+def read_moment(cell: object, zone: str, date_format: str = "") -> datetime | date | Refusal:
+    """The UTC instant of an announcement, its date if no time was given, or a refusal.
+
+    A local time that the change of clocks skipped, or made twice, is refused unless it carries
+    its offset. Midnight without a zone counts as a date alone.
+
+    Args:
+        cell: as read from the file.
+        zone: IANA name for times without an offset; '' if none is known.
+        date_format: the format declared in the study, tried before ISO 8601.
+    """
+    moment = _parse(cell, date_format)
+    if isinstance(moment, Refusal):
+        return moment
+    if not EARLIEST <= pd.Timestamp(moment.replace(tzinfo=None)) <= LATEST:
+        return OUT_OF_RANGE
+    text = str(cell).strip()
+    bare = ISO_DATE.match(text) or (
+        moment.tzinfo is None and (moment.hour, moment.minute, moment.second) == (0, 0, 0)
+    )
+    if bare:
+        return moment.date()
+    if moment.tzinfo is not None:
+        return moment.astimezone(UTC)
+    if not zone:
+        return NO_ZONE
+    return _localise(moment, zone)
+
+
+def _parse(cell: object, date_format: str) -> datetime | Refusal:
+    if isinstance(cell, pd.Timestamp):
+        return cell.to_pydatetime()
+    if isinstance(cell, datetime):
+        return cell
+    if isinstance(cell, date):
+        return datetime(cell.year, cell.month, cell.day)
+    text = str(cell).strip()
+    if date_format:
+        try:
+            return datetime.strptime(text, date_format)
+        except ValueError:
+            pass
+    if not re.match(r"^\d{4}-\d{2}-\d{2}([T ]\d{2}:\d{2}|$)", text):
+        return BAD_FORMAT
+    try:
+        return datetime.fromisoformat(text)
+    except ValueError:
+        return BAD_FORMAT
+
+
+def _localise(moment: datetime, zone: str) -> datetime | Refusal:
+    try:
+        clock = ZoneInfo(zone)
+    except (ZoneInfoNotFoundError, ValueError):
+        return BAD_ZONE
+    first = moment.replace(tzinfo=clock, fold=0)
+    second = moment.replace(tzinfo=clock, fold=1)
+    instant = first.astimezone(UTC)
+    exists = instant.astimezone(clock).replace(tzinfo=None) == moment
+    if not exists or first.utcoffset() != second.utcoffset():
+        return IMPOSSIBLE
+    return instant
+
+
+def read_moments(
+    deals: pd.DataFrame, source: Source, default_zone: str, date_format: str
+) -> tuple[pd.DataFrame, list[Finding]]:
+    """The deals with ``announced_utc`` (NaT when only a date is known) and ``announced_date``.
+
+    ``announced_date`` is the date as written, in the announcement's own zone when it has one.
+    Findings name each row that gives no moment.
+    """
+    instants: list[datetime | None] = []
+    dates: list[date | None] = []
+    findings: list[Finding] = []
+    rows = zip(deals["announced_at"], deals["timestamp_zone"], deals[ROW], strict=True)
+    for cell, own_zone, row in rows:
+        moment = read_moment(cell, own_zone or default_zone, date_format)
+        if isinstance(moment, Refusal):
+            instants.append(None)
+            dates.append(None)
+            findings.append(_finding(moment, cell, own_zone, int(row), source))
+        elif isinstance(moment, datetime):
+            instants.append(moment)
+            dates.append(moment.date())
+        else:
+            instants.append(None)
+            dates.append(moment)
+    moments = deals.assign(
+        announced_utc=pd.to_datetime(pd.Series(instants, index=deals.index), utc=True),
+        announced_date=pd.to_datetime(pd.Series(dates, index=deals.index)),
+    )
+    return moments, findings
+
+
+def _finding(refusal: Refusal, cell: object, zone: str, row: int, source: Source) -> Finding:
+    got = f"'{cell}'" + (f" in zone '{zone}'" if zone else "")
+    return Finding(
+        refusal.rule,
+        Severity.ERROR,
+        source.file,
+        got=got,
+        expected=refusal.expected,
+        remedy=refusal.remedy,
+        row=str(row),
+        column=source.columns.get("announced_at", "announced_at"),
+    )

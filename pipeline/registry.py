@@ -1,0 +1,107 @@
+"""The one table of everything a study file may name.
+
+An entry names its function by dotted path, so that nothing heavy is imported before it is used.
+Adding an estimator, a test, a model, a measure or a format is one file and one line here.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from importlib import import_module
+from typing import Any
+
+EXPECTED_RETURNS = "expected_returns"
+TESTS = "tests"
+PRICE_MEASURES = "price_measures"
+ESTIMATORS = "estimators"
+FORMATS = "formats"
+
+
+@dataclass(frozen=True, slots=True)
+class Entry:
+    """A thing a study file may name.
+
+    ``needs`` lists parts of the study without which the entry makes no sense (estimators:
+    ``effects``, ``selection``, ``instruments``; models: factor columns). ``answers`` ranks the
+    estimators by how much of the choice they account for: the highest one leads the finding.
+    """
+
+    key: str
+    path: str
+    needs: tuple[str, ...] = ()
+    answers: int = 0
+
+    def load(self) -> Callable[..., Any]:
+        """Import the function the entry names."""
+        module, _, name = self.path.partition(":")
+        function: Callable[..., Any] = getattr(import_module(module), name)
+        return function
+
+
+TABLE: dict[str, tuple[Entry, ...]] = {
+    EXPECTED_RETURNS: (
+        Entry("market_model", "pipeline.returns.expected:market_model"),
+        Entry("market_adjusted", "pipeline.returns.expected:market_adjusted"),
+        Entry("constant_mean", "pipeline.returns.expected:constant_mean"),
+        Entry("factor_model", "pipeline.returns.expected:factor_model", needs=("factors",)),
+    ),
+    TESTS: (
+        Entry("cross_sectional", "pipeline.significance.parametric:cross_sectional"),
+        Entry("patell", "pipeline.significance.parametric:patell"),
+        Entry("standardised", "pipeline.significance.parametric:standardised_cross_sectional"),
+        Entry("dependence_adjusted", "pipeline.significance.parametric:dependence_adjusted"),
+        Entry("single_event", "pipeline.significance.parametric:single_event"),
+    ),
+    PRICE_MEASURES: (
+        Entry("run_up", "pipeline.characteristics.measures:run_up"),
+        Entry("volatility", "pipeline.characteristics.measures:volatility"),
+        Entry("beta", "pipeline.characteristics.measures:beta"),
+        Entry("illiquidity", "pipeline.characteristics.measures:illiquidity"),
+    ),
+    ESTIMATORS: (
+        Entry("ols", "pipeline.estimators.least_squares:ols", answers=1),
+        Entry(
+            "fixed_effects",
+            "pipeline.estimators.least_squares:fixed_effects",
+            needs=("effects",),
+            answers=2,
+        ),
+        Entry(
+            "heckman_two_step",
+            "pipeline.estimators.selection:heckman_two_step",
+            needs=("selection",),
+            answers=3,
+        ),
+        Entry(
+            "two_stage_least_squares",
+            "pipeline.estimators.instruments:two_stage_least_squares",
+            needs=("instruments",),
+            answers=4,
+        ),
+    ),
+    FORMATS: (
+        Entry("html", "pipeline.report.html:render"),
+        Entry("docx", "pipeline.report.docx:render"),
+        Entry("xlsx", "pipeline.report.xlsx:render"),
+        Entry("tex", "pipeline.report.tex:render"),
+        Entry("svg", "pipeline.report.svg:render"),
+    ),
+}
+
+
+def keys(kind: str) -> tuple[str, ...]:
+    """The names of one kind, in the table's order."""
+    return tuple(entry.key for entry in TABLE[kind])
+
+
+def entry(kind: str, key: str) -> Entry:
+    """The entry of that kind and name.
+
+    Raises:
+        KeyError: if there is none.
+    """
+    for candidate in TABLE[kind]:
+        if candidate.key == key:
+            return candidate
+    raise KeyError(f"{kind}: {key}")

@@ -1,0 +1,1 @@
+"""From announcements and prices to abnormal returns on the exchange's own sessions."""

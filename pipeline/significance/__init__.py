@@ -1,0 +1,1 @@
+"""Is the average abnormal return real? Tests, dependence, paths and power."""

@@ -1,0 +1,116 @@
+"""How alike the abnormal returns of different deals are on the same calendar dates."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.prices import Floats
+from pipeline.core.window import Window
+
+COMMON_DAYS = 30
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Dependence:
+    """Correlation of estimation-window abnormal returns and overlap of the event windows.
+
+    Attributes:
+        mean: average correlation over all pairs that share at least 30 dates; NaN without one.
+        weighted: average over all pairs of correlation times overlap of the event windows.
+        pairs: pairs that share at least 30 dates.
+        overlapping: share of pairs whose event windows share a date.
+        noise: what ``mean`` would scatter by if deals were independent.
+        dates: distinct dates of day zero (or of the window's first day).
+        largest: most deals on one such date.
+    """
+
+    mean: float
+    weighted: float
+    pairs: int
+    overlapping: float
+    noise: float
+    dates: int
+    largest: int
+
+    def adjustment(self, n: int) -> float:
+        """Kolari–Pynnönen's factor on a standardised t: sqrt((1 - r) / (1 + (n - 1) r)), r ≥ 0."""
+        r = max(self.weighted, 0.0)
+        return float(np.sqrt((1 - r) / (1 + (n - 1) * r)))
+
+    def effective_n(self, n: int) -> float:
+        """n / (1 + (n - 1) r): deals that independent ones would be worth."""
+        return n / (1 + (n - 1) * max(self.weighted, 0.0))
+
+
+def dependence(abnormal: AbnormalReturns, window: Window) -> Dependence:
+    """Measure the dependence among N deals.
+
+    Pairwise correlations are taken over common calendar dates, at least 30 of them (Kolari and
+    Pynnönen 2010, RFS 23). The weighted mean multiplies each by the share of the event window
+    that the two deals have in common, and is zero for deals whose windows do not meet; a pair
+    that shares too few dates counts with the mean of the others.
+    """
+    n = len(abnormal.deals)
+    where = abnormal.columns(window)
+    starts = abnormal.days[:, where.start]
+    _, counts = np.unique(starts, return_counts=True)
+    if n < 2:
+        return Dependence(np.nan, 0.0, 0, 0.0, np.nan, len(counts), int(counts.max(initial=0)))
+    correlation, common = pairwise(abnormal.estimation_returns, abnormal.estimation_days)
+    apart = ~np.eye(n, dtype=bool)
+    known = apart & (common >= COMMON_DAYS) & np.isfinite(correlation)
+    mean = float(correlation[known].mean()) if known.any() else np.nan
+    filled = np.where(known, correlation, mean if known.any() else 0.0)
+    shared = overlap(abnormal.days[:, where])
+    weighted = float((filled * shared)[apart].sum() / (n * (n - 1)))
+    length = float(common[known].mean()) if known.any() else np.nan
+    return Dependence(
+        mean=mean,
+        weighted=weighted,
+        pairs=int(known.sum() // 2),
+        overlapping=float((shared[apart] > 0).mean()),
+        noise=float(np.sqrt(2 / (max(known.sum(), 1) * length))) if known.any() else np.nan,
+        dates=len(counts),
+        largest=int(counts.max()),
+    )
+
+
+def pairwise(returns: Floats, days: np.ndarray) -> tuple[Floats, Floats]:
+    """Correlations over common dates.
+
+    Args:
+        returns: (N, E) with NaN where unused.
+        days: (N, E) ``datetime64[D]``.
+
+    Returns:
+        (N, N) correlations (NaN where undefined) and (N, N) numbers of common dates.
+    """
+    used = np.isfinite(returns) & ~np.isnat(days)
+    dates, at = np.unique(days[used], return_inverse=True)
+    n = len(returns)
+    values = np.zeros((n, len(dates)))
+    present = np.zeros((n, len(dates)))
+    row = np.nonzero(used)[0]
+    values[row, at] = returns[used]
+    present[row, at] = 1.0
+    count = present @ present.T
+    total = values @ present.T
+    square = (values**2) @ present.T
+    with np.errstate(divide="ignore", invalid="ignore"):
+        covariance = values @ values.T - total * total.T / count
+        spread = square - total**2 / count
+        correlation = covariance / np.sqrt(spread * spread.T)
+    return np.clip(correlation, -1, 1), count
+
+
+def overlap(days: np.ndarray) -> Floats:
+    """(N, N) share of L event dates that two deals have in common, from (N, L) dates."""
+    n, length = days.shape
+    known = ~np.isnat(days)
+    dates, at = np.unique(days[known], return_inverse=True)
+    present = np.zeros((n, len(dates)))
+    present[np.nonzero(known)[0], at] = 1.0
+    return np.asarray(present @ present.T / length)

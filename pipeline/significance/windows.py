@@ -1,0 +1,102 @@
+"""Every window under every model, with every test, and what several windows cost."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping, Sequence
+
+import numpy as np
+
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.estimate import Tested, TestResult, t_reach
+from pipeline.core.results import WindowTests
+from pipeline.core.window import Window
+from pipeline.significance.sample import CarSample, car_sample
+
+TestFunction = Callable[[CarSample], Tested]
+
+
+def all_windows(
+    abnormal: Mapping[str, AbnormalReturns],
+    windows: Sequence[Window],
+    tests: Mapping[str, TestFunction],
+    share_of_days: float,
+    level: float,
+) -> tuple[WindowTests, ...]:
+    """Test every window under every model; the first window is the headline.
+
+    The headline window needs all its days; the others ``share_of_days`` of them. p-values of the
+    secondary windows are also given after Holm's correction within a model and a test.
+    """
+    found: list[WindowTests] = []
+    for model, measured in abnormal.items():
+        samples = [
+            car_sample(measured, window, 1.0 if at == 0 else share_of_days)
+            for at, window in enumerate(windows)
+        ]
+        results = [{key: test(sample) for key, test in tests.items()} for sample in samples]
+        adjusted: list[dict[str, float]] = [{} for _ in results[:1]] + holm_by_test(results[1:])
+        found += [
+            _summary(model, sample, result, p_holm, level)
+            for sample, result, p_holm in zip(samples, results, adjusted, strict=True)
+        ]
+    return tuple(found)
+
+
+def _summary(
+    model: str,
+    sample: CarSample,
+    tests: Mapping[str, Tested],
+    p_holm: Mapping[str, float],
+    level: float,
+) -> WindowTests:
+    return WindowTests(
+        window=sample.window,
+        model=model,
+        n=sample.n,
+        mean=float(sample.car.mean()) if sample.n else np.nan,
+        median=float(np.median(sample.car)) if sample.n else np.nan,
+        std_dev=float(sample.car.std(ddof=1)) if sample.n > 1 else np.nan,
+        share_positive=float((sample.car > 0).mean()) if sample.n else np.nan,
+        interval=mean_interval(sample, level),
+        tests=tests,
+        p_holm=p_holm,
+    )
+
+
+def mean_interval(sample: CarSample, level: float) -> tuple[float, float]:
+    """(low, high) for the mean CAR, decimal.
+
+    Cross-sectional standard error, divided by Kolari–Pynnönen's factor so that deals which move
+    together count for less, and t(n - 1); for a single deal its forecast standard deviation and
+    t(M - d).
+    """
+    if sample.n == 0:
+        return np.nan, np.nan
+    mean = float(sample.car.mean())
+    if sample.n == 1:
+        half = t_reach(level, float(sample.df[0])) * float(sample.std_dev[0])
+    else:
+        error = sample.car.std(ddof=1) / np.sqrt(sample.n)
+        half = t_reach(level, sample.n - 1) * error / sample.dependence.adjustment(sample.n)
+    return mean - half, mean + half
+
+
+def holm_by_test(results: Sequence[Mapping[str, Tested]]) -> list[dict[str, float]]:
+    """Holm-adjusted p-values of each test over several windows (Holm 1979, SJS 6)."""
+    adjusted: list[dict[str, float]] = [{} for _ in results]
+    for key in results[0] if results else ():
+        at = [i for i, tests in enumerate(results) if isinstance(tests[key], TestResult)]
+        raw = [tests.p_value for i in at if isinstance(tests := results[i][key], TestResult)]
+        for i, p in zip(at, holm(np.array(raw)), strict=True):
+            adjusted[i][key] = float(p)
+    return adjusted
+
+
+def holm(p: np.ndarray) -> np.ndarray:
+    """Step-down Holm adjustment of (m,) p-values, in their order."""
+    m = len(p)
+    order = np.argsort(p, kind="stable")
+    stepped = np.minimum(np.maximum.accumulate(p[order] * np.arange(m, 0, -1)), 1.0)
+    out = np.empty(m)
+    out[order] = stepped
+    return out

@@ -1,0 +1,1 @@
+"""The study file: its schema, its loading and its inheritance."""

@@ -1,0 +1,144 @@
+"""Checks of a study that no single key can make."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+from pipeline.core.findings import Finding, Severity
+from pipeline.study.schema import Study
+
+
+def cross_checks(study: Study, file: str) -> list[Finding]:
+    """All findings about how the parts of a study fit together."""
+    return [
+        *_windows(study, file),
+        *_roles(study, file),
+        *_needs(study, file),
+        *_zone(study, file),
+    ]
+
+
+def _error(rule: str, file: str, key: str, got: str, expected: str, remedy: str) -> Finding:
+    return Finding(rule, Severity.ERROR, file, got, expected, remedy, column=key)
+
+
+def _windows(study: Study, file: str) -> Iterator[Finding]:
+    estimation = study.event_time.estimation_window
+    for window in study.event_time.all_windows:
+        if window.overlaps(estimation) or window.start <= estimation.end:
+            yield _error(
+                "overlapping_windows",
+                file,
+                "event_time",
+                f"window {window.label} and estimation window {estimation.label}",
+                f"windows that start after session {estimation.end}",
+                f"End the estimation window before session {window.start}, or shorten the window.",
+            )
+    if len(estimation) < study.event_time.minimum_observations:
+        yield _error(
+            "bad_value",
+            file,
+            "event_time.minimum_observations",
+            str(study.event_time.minimum_observations),
+            f"at most {len(estimation)}, the sessions of the estimation window",
+            "Lower it, or lengthen the estimation window.",
+        )
+    first = min(window.start for window in study.event_time.all_windows)
+    for name, item in study.characteristics.items():
+        if item.window is not None and item.window[1] >= min(first, 0):
+            yield _error(
+                "overlapping_windows",
+                file,
+                f"characteristics.{name}.window",
+                f"sessions {item.window[0]} to {item.window[1]}",
+                f"sessions that end before {min(first, 0)}, where the event windows begin",
+                "A control measured during the event would absorb the reaction: end it earlier.",
+            )
+
+
+def _roles(study: Study, file: str) -> Iterator[Finding]:
+    regression = study.regression
+    if regression is None:
+        return
+    outcome = [regression.treatment, *regression.controls]
+    if study.instruments is not None:
+        for name in study.instruments.use:
+            if name in outcome or name in regression.fixed_effects:
+                yield _error(
+                    "instrument_is_control",
+                    file,
+                    "instruments.use",
+                    f"'{name}', which also explains the outcome",
+                    "instruments that reach the outcome through the treatment alone",
+                    f"Take '{name}' out of regression or out of instruments.use.",
+                )
+        if study.instruments.treatment != regression.treatment:
+            yield _error(
+                "bad_value",
+                file,
+                "instruments.for",
+                f"'{study.instruments.treatment}'",
+                f"'{regression.treatment}', the treatment of the regression",
+                "Name the same variable in both places.",
+            )
+    if study.selection is not None:
+        for name in study.selection.excluded:
+            if name in outcome:
+                yield _error(
+                    "excluded_is_control",
+                    file,
+                    "selection.excluded",
+                    f"'{name}', which also explains the outcome",
+                    "variables that move the decision to bid and nothing else",
+                    f"Take '{name}' out of regression.controls or out of selection.excluded.",
+                )
+
+
+def _needs(study: Study, file: str) -> Iterator[Finding]:
+    parts = {"selection": study.selection, "instruments": study.instruments}
+    for name, part in parts.items():
+        if part is not None and study.regression is None:
+            yield _error(
+                "bad_value",
+                file,
+                name,
+                f"[{name}] without [regression]",
+                "a regression for it to serve",
+                f"Add [regression], or delete [{name}].",
+            )
+    if study.selection is not None and study.inputs.candidates is None:
+        yield _error(
+            "bad_value",
+            file,
+            "inputs.candidates",
+            "nothing",
+            "the table of companies that could have announced, needed by [selection]",
+            "Name the file, or delete [selection].",
+        )
+    if "factor_model" in study.expected_returns.all_models and study.inputs.factors is None:
+        yield _error(
+            "bad_value",
+            file,
+            "inputs.factors",
+            "nothing",
+            "the factor returns, needed by the factor model",
+            "Name the file, or take factor_model out of [expected_returns].",
+        )
+
+
+def _zone(study: Study, file: str) -> Iterator[Finding]:
+    zone = study.inputs.timestamp_zone
+    if not zone:
+        return
+    try:
+        ZoneInfo(zone)
+    except (ZoneInfoNotFoundError, ValueError):
+        yield _error(
+            "bad_value",
+            file,
+            "inputs.timestamp_zone",
+            f"'{zone}'",
+            "the name of a time zone, such as America/New_York",
+            "Correct the name.",
+        )

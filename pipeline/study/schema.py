@@ -1,0 +1,286 @@
+"""Every key a study file may hold, with its kind, default and reason.
+
+The models are strict and frozen: an unknown key or a value of another kind is an error.
+"""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Annotated
+
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validator
+
+from pipeline.core.window import Window
+from pipeline.registry import (
+    ESTIMATORS,
+    EXPECTED_RETURNS,
+    FORMATS,
+    PRICE_MEASURES,
+    TABLE,
+    TESTS,
+    keys,
+)
+
+
+class Part(BaseModel):
+    """A table of the study file: strict, frozen, no unknown key."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, strict=True, populate_by_name=True)
+
+
+def _known(table: str) -> AfterValidator:
+    names = keys(table)
+
+    def check(value: str) -> str:
+        if value not in names:
+            raise ValueError(f"must be one of {', '.join(names)}")
+        return value
+
+    return AfterValidator(check)
+
+
+Model = Annotated[str, _known(EXPECTED_RETURNS)]
+Test = Annotated[str, _known(TESTS)]
+Estimator = Annotated[str, _known(ESTIMATORS)]
+Format = Annotated[str, _known(FORMATS)]
+Measure = Annotated[str, _known(PRICE_MEASURES)]
+Span = Annotated[list[int], Field(min_length=2, max_length=2)]
+Rationale = Annotated[str, Field(min_length=20)]
+
+
+class Inputs(Part):
+    """Where the tables are. Paths count from the folder of the study file that names them."""
+
+    deals: Path = Field(description="One row a deal.")
+    prices: Path = Field(description="Daily closes: security, date, close, volume.")
+    benchmarks: Path = Field(description="Index levels: exchange, date, close.")
+    candidates: Path | None = Field(
+        None, description="Companies by year that could have announced, for the selection model."
+    )
+    factors: Path | None = Field(
+        None, description="Daily factor returns, decimal: exchange, date, one column a factor."
+    )
+    columns: dict[str, dict[str, str]] = Field(
+        default_factory=dict,
+        description="Your column names: [inputs.columns.deals] announced_at = 'Announced'.",
+    )
+    sheets: dict[str, str] = Field(
+        default_factory=dict, description="Sheet of an xlsx file, by table; the first if absent."
+    )
+    timestamp_zone: str = Field(
+        "", description="Time zone of announcements without one, e.g. Europe/London."
+    )
+    date_format: str = Field(
+        "", description="Format of dates that are not YYYY-MM-DD, e.g. '%d/%m/%Y %H:%M'."
+    )
+
+
+class EventTime(Part):
+    """Sessions are those of the security's own exchange, counted from day zero."""
+
+    estimation: Span = Field([-250, -31], description="Estimation window, sessions, inclusive.")
+    minimum_observations: int = Field(
+        120, ge=30, description="Returns that the estimation window must hold."
+    )
+    headline: Span = Field([-1, 1], description="The window declared before looking.")
+    windows: list[Span] = Field(
+        default_factory=list, description="Secondary windows, adjusted for multiplicity."
+    )
+    cutoff_minutes: int = Field(
+        0, ge=0, le=120, description="News this close to the close counts for the next session."
+    )
+    share_of_days: float = Field(
+        0.8, gt=0, le=1, description="Share of a secondary window's days that must have traded."
+    )
+    mask_sessions: int = Field(
+        5, ge=0, description="Sessions around another deal that are left out of estimation."
+    )
+    confounding_days: int = Field(
+        1, ge=0, description="Sessions within which an earnings release is flagged."
+    )
+
+    @model_validator(mode="after")
+    def _ordered(self) -> EventTime:
+        for start, end in (self.estimation, self.headline, *self.windows):
+            if end < start:
+                raise ValueError(f"window [{start}, {end}] ends before it starts")
+        return self
+
+    @property
+    def estimation_window(self) -> Window:
+        """The estimation window."""
+        return Window(*self.estimation)
+
+    @property
+    def headline_window(self) -> Window:
+        """The window declared before looking."""
+        return Window(*self.headline)
+
+    @property
+    def all_windows(self) -> tuple[Window, ...]:
+        """The headline window, then each secondary one once."""
+        listed = [Window(*pair) for pair in (self.headline, *self.windows)]
+        return tuple(dict.fromkeys(listed))
+
+
+class ExpectedReturns(Part):
+    """How a normal return is made."""
+
+    headline: Model = Field("market_model", description="The model of the headline numbers.")
+    also: list[Model] = Field(
+        default_factory=list, description="Models shown beside it for comparison."
+    )
+
+    @property
+    def all_models(self) -> tuple[str, ...]:
+        """The headline model, then each further one once."""
+        return tuple(dict.fromkeys([self.headline, *self.also]))
+
+
+class Tests(Part):
+    """Tests of the mean abnormal return."""
+
+    headline: Test = Field(
+        "dependence_adjusted", description="The test that leads; declared before looking."
+    )
+    use: list[Test] = Field(
+        default_factory=lambda: list(keys(TESTS)), description="Tests shown, in this order."
+    )
+
+
+class Indicator(Part):
+    """One where the column meets the condition, zero elsewhere."""
+
+    column: str
+    equals: str | int | float | None = None
+    above: float | None = None
+
+    @model_validator(mode="after")
+    def _one_condition(self) -> Indicator:
+        if (self.equals is None) == (self.above is None):
+            raise ValueError("needs either equals or above")
+        return self
+
+
+class Characteristic(Part):
+    """A variable made from one source and then treated by steps, always in the order shown."""
+
+    label: str = Field("", description="How the variable is called on a page.")
+    column: str | None = Field(None, description="Source: a column of the deals.")
+    ratio: Annotated[list[str], Field(min_length=2, max_length=2)] | None = Field(
+        None, description="Source: the first column divided by the second."
+    )
+    interaction: Annotated[list[str], Field(min_length=2, max_length=2)] | None = Field(
+        None, description="Source: the product of two columns or characteristics."
+    )
+    indicator: Indicator | None = Field(None, description="Source: a condition on a column.")
+    price: Measure | None = Field(None, description="Source: a measure made from prices.")
+    window: Span | None = Field(
+        None, description="Sessions the price measure looks at; must end before the windows."
+    )
+    lag: int = Field(0, ge=0, le=5, description="Take the candidate's value this many years back.")
+    log: bool = Field(False, description="Natural logarithm.")
+    winsorise: float = Field(
+        0.0, ge=0, lt=0.5, description="Share set to the quantile at each end, on the rows used."
+    )
+    standardise: bool = Field(
+        False, description="Subtract the mean and divide by the standard deviation."
+    )
+
+    @model_validator(mode="after")
+    def _one_source(self) -> Characteristic:
+        given = [name for name in SOURCES if getattr(self, name) is not None]
+        if len(given) != 1:
+            raise ValueError(f"needs exactly one source of {', '.join(SOURCES)}; has {given}")
+        if (self.window is not None) and self.price is None:
+            raise ValueError("window belongs to a price measure")
+        if self.lag and self.column is None:
+            raise ValueError("lag needs a column of the candidates")
+        return self
+
+
+SOURCES = ("column", "ratio", "interaction", "indicator", "price")
+
+
+class Regression(Part):
+    """The cross-section of abnormal returns in the headline window."""
+
+    treatment: str = Field(description="The deal feature the committee can choose: 0 or 1.")
+    controls: list[str] = Field(default_factory=list, description="Held fixed in every column.")
+    fixed_effects: list[str] = Field(default_factory=list, description="Absorbed effects.")
+    clusters: Annotated[list[str], Field(max_length=2)] = Field(
+        default_factory=list, description="One or two dimensions of dependent errors."
+    )
+    columns: list[Estimator] = Field(
+        default_factory=list,
+        description="Estimators of the comparison table; all that the study allows if empty.",
+    )
+
+
+class Selection(Part):
+    """Which companies announce at all."""
+
+    explained_by: Annotated[list[str], Field(min_length=1)] = Field(
+        description="Company variables, known for every candidate."
+    )
+    excluded: Annotated[list[str], Field(min_length=1)] = Field(
+        description="Variables that move the decision to bid and nothing else."
+    )
+    rationale: Rationale = Field(description="The argument for the exclusion, printed verbatim.")
+
+
+class Instruments(Part):
+    """What moves the treatment and nothing else."""
+
+    treatment: str = Field(alias="for", description="The variable they move.")
+    use: Annotated[list[str], Field(min_length=1)] = Field(description="The instruments.")
+    rationale: Rationale = Field(description="The argument for the exclusion, printed verbatim.")
+
+
+class Report(Part):
+    """How the documents look."""
+
+    groups: Annotated[list[str], Field(min_length=2, max_length=2)] = Field(
+        default_factory=lambda: ["without", "with"],
+        description="The two values of the treatment in words: untreated, treated.",
+    )
+    formats: list[Format] = Field(
+        default_factory=lambda: list(keys(FORMATS)), description="What is written."
+    )
+    currency: str = Field("", description="Of the money columns, with scale: USD million.")
+
+
+class Study(Part):
+    """A study file, resolved: base files merged, paths absolute, defaults filled in."""
+
+    name: str = Field(description="Name of the folder under reports/; the file's own name.")
+    title: str = Field(description="Title of the documents.")
+    question: str = Field(description="What the committee wants to know.")
+    seed: int = Field(20260301, ge=0, description="Seed of every random stream.")
+    level: float = Field(0.95, gt=0.5, lt=1, description="Confidence level of intervals.")
+    inputs: Inputs
+    event_time: EventTime = Field(default_factory=EventTime)
+    expected_returns: ExpectedReturns = Field(default_factory=ExpectedReturns)
+    tests: Tests = Field(default_factory=Tests)
+    characteristics: dict[str, Characteristic] = Field(default_factory=dict)
+    regression: Regression | None = None
+    selection: Selection | None = None
+    instruments: Instruments | None = None
+    labels: dict[str, str] = Field(default_factory=dict)
+    report: Report = Field(default_factory=Report)
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """Estimator keys of the comparison table: those named, or all that the study allows."""
+        if self.regression is None:
+            return ()
+        if self.regression.columns:
+            return tuple(dict.fromkeys(self.regression.columns))
+        has = {
+            "effects": bool(self.regression.fixed_effects),
+            "selection": self.selection is not None,
+            "instruments": self.instruments is not None,
+        }
+        return tuple(
+            entry.key for entry in TABLE[ESTIMATORS] if all(has[need] for need in entry.needs)
+        )
