@@ -25,12 +25,14 @@ class Entry:
     ``needs`` lists parts of the study without which the entry makes no sense (estimators:
     ``effects``, ``selection``, ``instruments``; models: factor columns). ``answers`` ranks the
     estimators by how much of the choice they account for: the highest one leads the finding.
+    ``why`` says in a clause what a test is chosen for, to follow "chosen because it".
     """
 
     key: str
     path: str
     needs: tuple[str, ...] = ()
     answers: int = 0
+    why: str = ""
 
     def load(self) -> Callable[..., Any]:
         """Import the function the entry names."""
@@ -47,11 +49,31 @@ TABLE: dict[str, tuple[Entry, ...]] = {
         Entry("factor_model", "pipeline.returns.expected:factor_model", needs=("factors",)),
     ),
     TESTS: (
-        Entry("cross_sectional", "pipeline.significance.parametric:cross_sectional"),
-        Entry("patell", "pipeline.significance.parametric:patell"),
-        Entry("standardised", "pipeline.significance.parametric:standardised_cross_sectional"),
-        Entry("dependence_adjusted", "pipeline.significance.parametric:dependence_adjusted"),
-        Entry("single_event", "pipeline.significance.parametric:single_event"),
+        Entry(
+            "cross_sectional",
+            "pipeline.significance.parametric:cross_sectional",
+            why="uses the deals' own spread, so a rise of variance at the event does no harm",
+        ),
+        Entry(
+            "patell",
+            "pipeline.significance.parametric:patell",
+            why="weighs each deal by how precisely its return is forecast",
+        ),
+        Entry(
+            "standardised",
+            "pipeline.significance.parametric:standardised_cross_sectional",
+            why="weighs deals by precision and stays right when variance rises at the event",
+        ),
+        Entry(
+            "dependence_adjusted",
+            "pipeline.significance.parametric:dependence_adjusted",
+            why="allows for deals that move together and for variance that rises at the event",
+        ),
+        Entry(
+            "single_event",
+            "pipeline.significance.parametric:single_event",
+            why="is made for one deal",
+        ),
     ),
     PRICE_MEASURES: (
         Entry("run_up", "pipeline.characteristics.measures:run_up"),

@@ -163,6 +163,23 @@ class ConfidenceSet:
         return self.shape is Shape.LINE
 
 
+@dataclass(frozen=True, slots=True)
+class Diagnostic:
+    """One check of a sample or an estimate: what was found against what was hoped for.
+
+    ``verdict`` is ``pass``, ``warn`` or ``fail``; ``meaning`` says what follows from it;
+    ``source`` names where the threshold comes from.
+    """
+
+    subject: str
+    check: str
+    value: float
+    threshold: str
+    verdict: str
+    meaning: str
+    source: str
+
+
 @dataclass(frozen=True, slots=True, eq=False)
 class Estimate:
     """One column of the comparison table; t, p and intervals are derived, never stored.

@@ -45,6 +45,18 @@ class Tables:
     factors: pd.DataFrame | None
     findings: tuple[Finding, ...] = field(default=())
 
+    @property
+    def listings(self) -> pd.DataFrame:
+        """security, exchange: one row each, of deals and candidates."""
+        named = [table for table in (self.deals, self.candidates) if table is not None]
+        return pd.concat([table[["security", "exchange"]] for table in named]).drop_duplicates()
+
+    @property
+    def factor_names(self) -> tuple[str, ...]:
+        """The factor file's columns beyond exchange and date."""
+        names = [] if self.factors is None else list(self.factors.columns)
+        return tuple(str(name) for name in names if name not in ("exchange", "date"))
+
 
 def read_inputs(
     sources: Mapping[str, Source], wanted: Wanted, *, zone: str = "", date_format: str = ""

@@ -323,3 +323,17 @@ def screen_event(abnormal: AbnormalReturns, headline: Window) -> tuple[Booleans,
                 )
             )
     return keep, StageLedger("headline window", len(abnormal.deals), tuple(entries))
+
+
+def locate_candidates(candidates: pd.DataFrame, panels: Mapping[str, PricePanel]) -> pd.DataFrame:
+    """The candidates with ``column`` (-1 without prices) and ``position`` of their date."""
+    column = np.full(len(candidates), -1, dtype=np.int64)
+    position = np.zeros(len(candidates), dtype=np.int64)
+    exchanges = candidates["exchange"].to_numpy()
+    days = candidates["as_of"].to_numpy().astype("datetime64[D]")
+    for exchange, panel in panels.items():
+        here = exchanges == exchange
+        columns = {code: at for at, code in enumerate(panel.securities)}
+        column[here] = candidates.loc[here, "security"].map(columns).fillna(-1).to_numpy()
+        position[here] = np.searchsorted(panel.sessions, days[here])
+    return candidates.assign(column=column, position=position)

@@ -1,0 +1,57 @@
+"""The deal table: one row a measured deal, its outcomes beside its keys and variables."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+import pandas as pd
+
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.window import Window
+
+HIDDEN = ("_row", "column", "position", "announced_utc")
+
+
+def car_column(window: Window) -> str:
+    """Name of a window's CAR in the deal table: ``car_m1_1`` for [-1, +1]."""
+    return f"car_{window.start}_{window.end}".replace("-", "m")
+
+
+def with_outcomes(
+    deals: pd.DataFrame, abnormal: AbnormalReturns, windows: Sequence[Window], share: float
+) -> pd.DataFrame:
+    """The deals with one CAR column a window and the facts of estimation.
+
+    Args:
+        deals: N rows in the order of ``abnormal``.
+        windows: the first is the headline, which needs all its days.
+        share: of the days of the others that must have traded; NaN where fewer did.
+    """
+    added: dict[str, np.ndarray] = {}
+    for at, window in enumerate(windows):
+        enough = abnormal.complete(window, 1.0 if at == 0 else share)
+        added[car_column(window)] = np.where(enough, abnormal.car(window), np.nan)
+    added[f"{car_column(windows[0])}_std_dev"] = np.sqrt(abnormal.car_variance(windows[0]))
+    added["estimation_returns"] = abnormal.observations
+    return deals.assign(**added)
+
+
+def group_names(deals: pd.DataFrame, treatment: str, words: tuple[str, str]) -> pd.Series:
+    """Each deal's group in words: (untreated, treated); 'all deals' without a yes-or-no feature."""
+    if not treatment or treatment not in deals:
+        return pd.Series("all deals", index=deals.index, dtype="str")
+    values = pd.to_numeric(deals[treatment], errors="coerce")
+    if not values.dropna().isin([0.0, 1.0]).all():
+        return pd.Series("all deals", index=deals.index, dtype="str")
+    named = values.map({0.0: words[0], 1.0: words[1]})
+    return named.where(named.notna(), "not known").astype("str")
+
+
+def deals_frame(deals: pd.DataFrame, groups: pd.Series) -> pd.DataFrame:
+    """The deal table as written: ``deal`` first, working columns left out."""
+    shown = deals.drop(columns=[name for name in HIDDEN if name in deals])
+    shown = shown.rename(columns={"deal_id": "deal"}).assign(group=groups)
+    for name in ("announced_date", "day_zero", "earnings_release"):
+        shown[name] = shown[name].astype("datetime64[s]")
+    return shown.reset_index(drop=True)

@@ -1,0 +1,135 @@
+"""Arguments in, exit code out; computes nothing. Heavy libraries are imported where used."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any, TypeVar
+
+import typer
+
+if TYPE_CHECKING:
+    from pipeline.core.findings import InputProblem
+    from pipeline.study.schema import Study
+
+BAD_INPUT = 2
+T = TypeVar("T")
+
+app = typer.Typer(
+    name="dealwake",
+    help="How the market priced announced deals, and whether a choice in them made the difference.",
+    no_args_is_help=True,
+    add_completion=False,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+)
+StudyFile = Annotated[Path, typer.Argument(help="The study file, ending in .toml.")]
+Quiet = Annotated[bool, typer.Option("--quiet", help="Print the result only.")]
+AsJson = Annotated[bool, typer.Option("--json", help="Print the result as JSON, for machines.")]
+
+
+@app.callback()
+def _root() -> None:
+    """Commands of dealwake."""
+
+
+@app.command()
+def run(
+    study: StudyFile,
+    out: Annotated[
+        Path | None, typer.Option(help="Folder to write; reports/<study name> if absent.")
+    ] = None,
+    window: Annotated[
+        str, typer.Option(help="Another headline window, as first:last session, e.g. -3:3.")
+    ] = "",
+    quiet: Quiet = False,
+    as_json: AsJson = False,
+) -> None:
+    """Run a study: from the tables it names to the committee's documents."""
+    from pipeline.screen import Screen
+
+    screen = Screen(quiet=quiet, as_json=as_json)
+
+    def work() -> None:
+        from pipeline.flow import Clock, save
+        from pipeline.flow import run as run_stages
+
+        with screen.progress() as tell:
+            plan = _load(study, window)
+            results, seconds = run_stages(plan, tell)
+            folder = out or Path("reports") / plan.name
+            written = save(plan, results, seconds, folder, Clock(tell))
+        screen.finished(results, folder, written)
+
+    _guard(work, screen.problem)
+
+
+@app.command()
+def check(study: StudyFile, as_json: AsJson = False) -> None:
+    """Read and check everything a study needs; estimate nothing, write nothing."""
+    from pipeline.screen import Screen
+
+    screen = Screen(quiet=False, as_json=as_json)
+
+    def work() -> None:
+        from pipeline.flow import Clock, measure_deals
+
+        with screen.progress() as tell:
+            measured = measure_deals(_load(study, ""), Clock(tell))
+        screen.checked(measured.ledger, measured.findings)
+
+    _guard(work, screen.problem)
+
+
+@app.command()
+def explain(
+    rule: Annotated[
+        str, typer.Argument(help="A rule's key as shown in brackets; empty: all.")
+    ] = "",
+) -> None:
+    """Say what a rule of the ledger or of the findings means and what to do."""
+    from pipeline.screen import explain_rule
+
+    if not explain_rule(rule):
+        raise typer.Exit(BAD_INPUT)
+
+
+def _load(path: Path, window: str) -> Study:
+    from pipeline.study.load import load_study
+
+    overrides: Mapping[str, Any] = {}
+    if window:
+        overrides = {"event_time": {"headline": _span(window)}}
+    return load_study(path, overrides)
+
+
+def _span(text: str) -> list[int]:
+    """``-3:3`` as two sessions."""
+    from pipeline.core.findings import problem
+
+    first, _, last = text.partition(":")
+    try:
+        return [int(first), int(last)]
+    except ValueError:
+        raise problem(
+            "bad_value",
+            "command line",
+            column="--window",
+            got=f"'{text}'",
+            expected="first:last session counted from the announcement, such as -3:3",
+            remedy="Write two whole numbers with a colon between them.",
+        ) from None
+
+
+def _guard(work: Callable[[], None], show: Callable[[InputProblem], None]) -> None:
+    """Run; a problem of the input becomes one screen and exit code 2."""
+    from pipeline.core.findings import InputProblem
+
+    try:
+        work()
+    except InputProblem as fault:
+        show(fault)
+        raise typer.Exit(BAD_INPUT) from None
+    except KeyboardInterrupt:
+        typer.echo("Stopped; the last finished run is untouched.", err=True)
+        raise typer.Exit(130) from None

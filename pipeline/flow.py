@@ -1,0 +1,307 @@
+"""The stages in order: the only place that knows the order. No number is made here."""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import platform
+import time
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, field, replace
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any
+
+from pipeline.characteristics.design import Prepared, prepare, price_measures
+from pipeline.characteristics.outcomes import deals_frame, group_names, with_outcomes
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.design import FitOptions
+from pipeline.core.estimate import Column, EstimationFailed, Withheld
+from pipeline.core.findings import Finding, findings_frame, problem, raise_errors
+from pipeline.core.ledger import Ledger
+from pipeline.core.parquet import parquet_bytes
+from pipeline.core.prices import PricePanel
+from pipeline.core.results import Results
+from pipeline.core.store import write_folder
+from pipeline.core.tables import (
+    abnormal_returns_frame,
+    diagnostics_frame,
+    estimates_frame,
+    event_tests_frame,
+)
+from pipeline.inputs.read import Tables, read_inputs
+from pipeline.registry import (
+    ESTIMATORS,
+    EXPECTED_RETURNS,
+    FORMATS,
+    PRICE_MEASURES,
+    TESTS,
+    entry,
+    keys,
+)
+from pipeline.returns.events import (
+    keep_first_of_overlapping,
+    locate,
+    locate_candidates,
+    masked_sessions,
+    screen_estimation,
+    screen_event,
+)
+from pipeline.returns.measure import measure
+from pipeline.returns.panel import build_panels
+from pipeline.significance.checks import sample_checks
+from pipeline.significance.paths import average_paths
+from pipeline.significance.variants import mean_variants
+from pipeline.significance.windows import all_windows
+from pipeline.study import plan
+from pipeline.study.schema import Study
+
+Progress = Callable[[str], None]
+PACKAGES = ("dealwake", "numpy", "pandas", "scipy", "statsmodels", "pandas-market-calendars")
+
+
+@dataclass(slots=True)
+class Clock:
+    """Seconds spent in each stage, and who is told when one begins."""
+
+    progress: Progress
+    seconds: dict[str, float] = field(default_factory=dict)
+
+    @contextmanager
+    def stage(self, name: str) -> Iterator[None]:
+        """Time a stage."""
+        self.progress(name)
+        begin = time.perf_counter()
+        yield
+        self.seconds[name] = round(time.perf_counter() - begin, 3)
+
+
+@dataclass(frozen=True, slots=True)
+class Measured:
+    """What stands after the abnormal returns: the deals kept, their returns, how they got here."""
+
+    deals: Any
+    abnormal: Mapping[str, AbnormalReturns]
+    panels: Mapping[str, PricePanel]
+    ledger: Ledger
+    findings: tuple[Finding, ...]
+    tables: Tables
+
+
+def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Mapping[str, float]]:
+    """All stages of a study.
+
+    Returns:
+        The results, and the seconds each stage took.
+
+    Raises:
+        InputProblem: with every finding of the stage that could not go on.
+    """
+    clock = Clock(progress)
+    measured = measure_deals(study, clock)
+    with clock.stage("tests"):
+        tests = {key: entry(TESTS, key).load() for key in _tests(study)}
+        windows = study.event_time.all_windows
+        found = all_windows(
+            measured.abnormal, windows, tests, study.event_time.share_of_days, study.level
+        )
+    with clock.stage("characteristics"):
+        prepared = _prepare(study, measured)
+    columns: tuple[Column, ...] = ()
+    if prepared is not None:
+        with clock.stage("estimators"):
+            columns = tuple(_fit(study, key, prepared) for key in study.columns)
+    with clock.stage("results"):
+        results = _results(study, measured, found, prepared, columns)
+    return results, clock.seconds
+
+
+def measure_deals(study: Study, clock: Clock) -> Measured:
+    """Inputs, day zero, abnormal returns and the screens between them."""
+    options = plan.event_options(study)
+    with clock.stage("inputs"):
+        tables = read_inputs(
+            plan.sources(study),
+            plan.wanted(study),
+            zone=study.inputs.timestamp_zone,
+            date_format=study.inputs.date_format,
+        )
+    with clock.stage("sessions and prices"):
+        panels, calendars, found = build_panels(
+            tables.listings,
+            tables.prices,
+            tables.benchmarks,
+            tables.factors,
+            tables.factor_names,
+        )
+        raise_errors(found)
+        located, at_zero = locate(tables.deals, panels, calendars, options)
+        first, repeats = keep_first_of_overlapping(located, options.headline)
+    ledger = Ledger((tables.ledger, at_zero, repeats))
+    _refuse_empty(len(first), ledger)
+    with clock.stage("abnormal returns"):
+        masked = masked_sessions(first, located, options.estimation, options.mask_sessions)
+        abnormal = {
+            key: measure(
+                key,
+                entry(EXPECTED_RETURNS, key).load(),
+                first,
+                masked,
+                panels,
+                options.estimation,
+                options.span,
+            )
+            for key in study.expected_returns.all_models
+        }
+        lead = study.expected_returns.headline
+        usable, at_estimation = screen_estimation(first, abnormal[lead], panels, masked, options)
+        abnormal = {key: item.select(usable) for key, item in abnormal.items()}
+        traded, at_event = screen_event(abnormal[lead], options.headline)
+        abnormal = {key: item.select(traded) for key, item in abnormal.items()}
+    ledger = ledger.then(at_estimation, at_event)
+    _refuse_empty(ledger.rows_kept, ledger)
+    deals = first[usable][traded].reset_index(drop=True)
+    return Measured(deals, abnormal, panels, ledger, tables.findings + tuple(found), tables)
+
+
+def _tests(study: Study) -> tuple[str, ...]:
+    return tuple(dict.fromkeys([study.tests.headline, *study.tests.use]))
+
+
+def _refuse_empty(kept: int, ledger: Ledger) -> None:
+    if kept:
+        return
+    worst = max(ledger.stages, key=lambda stage: len(stage.dropped))
+    raise problem(
+        "no_deals_left",
+        "deals",
+        got=f"no deal left; {len(worst.dropped)} of {worst.rows_in} left at '{worst.stage}': "
+        + ", ".join(sorted({e.rule.replace("_", " ") for e in worst.dropped})),
+        expected="at least one deal with prices around its announcement",
+        remedy="Compare the dates and codes of the deals with those of the prices.",
+    )
+
+
+def _prepare(study: Study, measured: Measured) -> Prepared | None:
+    roles = plan.roles(study)
+    if roles is None:
+        return None
+    book = plan.recipes(study)
+    functions = {key: entry(PRICE_MEASURES, key).load() for key in keys(PRICE_MEASURES)}
+    deals = _with_outcomes(study, measured)
+    candidates = measured.tables.candidates
+    on_candidates = {}
+    if candidates is not None:
+        candidates = locate_candidates(candidates, measured.panels)
+        on_candidates = price_measures(list(book.values()), candidates, measured.panels, functions)
+    on_deals = price_measures(list(book.values()), deals, measured.panels, functions)
+    return prepare(deals, candidates, book, on_deals, on_candidates, roles)
+
+
+def _with_outcomes(study: Study, measured: Measured) -> Any:
+    time = study.event_time
+    lead = measured.abnormal[study.expected_returns.headline]
+    return with_outcomes(measured.deals, lead, time.all_windows, time.share_of_days)
+
+
+def _fit(study: Study, key: str, prepared: Prepared) -> Column:
+    options = FitOptions(level=study.level)
+    try:
+        column: Column = entry(ESTIMATORS, key).load()(prepared.design, options)
+    except EstimationFailed as failure:
+        return Withheld(key, key.replace("_", " "), failure.reason)
+    return column
+
+
+def _results(
+    study: Study,
+    measured: Measured,
+    found: Any,
+    prepared: Prepared | None,
+    columns: tuple[Column, ...],
+) -> Results:
+    facts = plan.facts(study)
+    lead_model = study.expected_returns.headline
+    lead = measured.abnormal[lead_model]
+    deals = prepared.deals if prepared else _with_outcomes(study, measured)
+    groups = group_names(deals, facts.treatment, facts.groups)
+    checks = sample_checks(lead, study.event_time.headline_window, deals)
+    checks += tuple(check for column in columns for check in getattr(column, "checks", ()))
+    ledger = measured.ledger.then(prepared.ledger) if prepared else measured.ledger
+    findings = measured.findings + (prepared.findings if prepared else ())
+    results = Results(
+        study=facts,
+        abnormal=measured.abnormal,
+        deals=deals,
+        window_tests=found,
+        columns=columns,
+        lead=_lead(columns),
+        paths=average_paths(lead, groups, plan.path_days(study), study.level),
+        diagnostics=diagnostics_frame(checks),
+        sensitivity=mean_variants(measured.abnormal, facts.headline, ledger, study.level),
+        ledger=ledger,
+        findings=findings,
+        tables={},
+    )
+    tables = {
+        "abnormal_returns": abnormal_returns_frame(measured.abnormal),
+        "deals": deals_frame(deals, groups),
+        "event_tests": event_tests_frame(found),
+        "estimates": estimates_frame(columns, facts.headline, lead_model),
+        "diagnostics": results.diagnostics,
+        "sensitivity": results.sensitivity,
+        "ledger": ledger.frame(),
+        "findings": findings_frame(findings),
+        "paths": results.paths,
+    }
+    return replace(results, tables=tables)
+
+
+def _lead(columns: tuple[Column, ...]) -> int:
+    """The column that accounts for most of the choice; -1 if none gave a number."""
+    ranks = [
+        -1 if isinstance(column, Withheld) else entry(ESTIMATORS, column.estimator).answers
+        for column in columns
+    ]
+    return ranks.index(max(ranks)) if ranks and max(ranks) >= 0 else -1
+
+
+def save(
+    study: Study, results: Results, seconds: Mapping[str, float], folder: Path, clock: Clock
+) -> list[str]:
+    """Write documents, data and manifest to ``folder``, whole or not at all.
+
+    Returns:
+        The names of the files written.
+    """
+    files: dict[str, bytes] = {}
+    with clock.stage("documents"):
+        for key in study.report.formats:
+            files.update(entry(FORMATS, key).load()(results))
+        for name, frame in results.tables.items():
+            files[f"data/{name}.parquet"] = parquet_bytes(frame)
+    files["manifest.json"] = _manifest(study, {**seconds, **clock.seconds})
+    write_folder(folder, files)
+    return sorted(files)
+
+
+def _manifest(study: Study, seconds: Mapping[str, float]) -> bytes:
+    inputs = {
+        name: {"file": source.path.name, "sha256": _digest(source.path)}
+        for name, source in plan.sources(study).items()
+    }
+    content = {
+        "study": study.model_dump(mode="json", by_alias=True, exclude={"inputs"}),
+        "inputs": inputs,
+        "packages": {name: version(name) for name in PACKAGES},
+        "python": platform.python_version(),
+        "seed": study.seed,
+        "seconds": dict(seconds),
+    }
+    return (json.dumps(content, indent=2, ensure_ascii=False) + "\n").encode()
+
+
+def _digest(path: Path) -> str:
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()

@@ -1,0 +1,157 @@
+"""What the terminal shows: progress, the finding, ledger totals and problems of the input."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from rich.console import Console
+from rich.table import Table
+
+from pipeline.core.rules import RULES, Rule, rule_title
+
+if TYPE_CHECKING:
+    from pipeline.core.findings import Finding, InputProblem
+    from pipeline.core.ledger import Ledger
+    from pipeline.core.results import Results
+
+STAGES = 8
+
+
+@dataclass(frozen=True, slots=True)
+class Screen:
+    """Where a command speaks: progress on standard error, results on standard output."""
+
+    quiet: bool
+    as_json: bool
+
+    @contextmanager
+    def progress(self) -> Iterator[Callable[[str], None]]:
+        """A bar over the stages with the time left, unless machines are listening."""
+        if self.quiet or self.as_json:
+            yield lambda _: None
+            return
+        from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+
+        bar = Progress(
+            TextColumn("{task.description:<22}"),
+            BarColumn(bar_width=30),
+            TimeElapsedColumn(),
+            console=Console(stderr=True),
+            transient=True,
+        )
+        with bar:
+            task = bar.add_task("study file", total=STAGES)
+
+            def tell(stage: str) -> None:
+                bar.update(task, description=stage, advance=1)
+
+            yield tell
+
+    def finished(self, results: Results, folder: Path, written: Sequence[str]) -> None:
+        """The finding, the ledger's totals and where the documents are."""
+        from pipeline.report.finding import finding_text
+
+        text = finding_text(results)
+        ledger = results.ledger
+        if self.as_json:
+            content = {
+                "finding": text,
+                "rows_read": ledger.rows_in,
+                "rows_kept": ledger.rows_kept,
+                "folder": str(folder),
+                "files": list(written),
+            }
+            print(json.dumps(content, ensure_ascii=False))
+            return
+        console = Console(highlight=False, soft_wrap=False)
+        console.print()
+        console.print(text)
+        console.print()
+        _ledger_totals(console, ledger)
+        console.print()
+        console.print(f"Written to {folder}: start with {folder / 'report.html'}", soft_wrap=True)
+        console.print("Research, not advice; see the cautions in the report.")
+
+    def checked(self, ledger: Ledger, findings: Sequence[Finding]) -> None:
+        """Findings and ledger of a check."""
+        if self.as_json:
+            content = {
+                "rows_read": ledger.rows_in,
+                "rows_kept": ledger.rows_kept,
+                "findings": [_as_dict(finding) for finding in findings],
+            }
+            print(json.dumps(content, ensure_ascii=False))
+            return
+        console = Console(highlight=False)
+        for finding in findings:
+            _show(console, finding)
+        _ledger_totals(console, ledger)
+
+    def problem(self, fault: InputProblem) -> None:
+        """Every finding on one screen."""
+        if self.as_json:
+            print(json.dumps({"findings": [_as_dict(f) for f in fault.findings]}))
+            return
+        console = Console(stderr=True, highlight=False)
+        count = len(fault.findings)
+        noun = "problem" if count == 1 else "problems"
+        console.print(f"{count} {noun} in the input; nothing was written.\n")
+        for finding in fault.findings:
+            _show(console, finding)
+
+
+def _as_dict(finding: Finding) -> dict[str, str]:
+    names = ("rule", "severity", "file", "row", "column", "got", "expected", "remedy")
+    return {name: str(getattr(finding, name)) for name in names}
+
+
+def _show(console: Console, finding: Finding) -> None:
+    console.print(f"{rule_title(finding.rule)} [{finding.rule}]", markup=False)
+    lines = (
+        ("where", finding.where),
+        ("found", finding.got),
+        ("expected", finding.expected),
+        ("do", finding.remedy),
+    )
+    for label, text in lines:
+        console.print(f"  {label:<9}{text}", markup=False, soft_wrap=True)
+    console.print()
+
+
+def _ledger_totals(console: Console, ledger: Ledger) -> None:
+    table = Table(box=None, pad_edge=False, header_style="")
+    for name, side in (("Stage", "left"), ("in", "right"), ("lost", "right"), ("kept", "right")):
+        table.add_column(name, justify=side)  # type: ignore[arg-type]
+    table.add_column("why")
+    for stage in ledger.stages:
+        reasons = sorted({entry.rule for entry in stage.dropped})
+        why = "; ".join(rule_title(rule) for rule in reasons)
+        lost = len(stage.dropped)
+        table.add_row(stage.stage, str(stage.rows_in), str(lost), str(stage.rows_kept), why)
+    console.print(table)
+
+
+def explain_rule(key: str) -> bool:
+    """Print a rule, or all keys if ``key`` is empty; False if there is no such rule."""
+    console = Console(highlight=False)
+    if not key:
+        for rule in RULES.values():
+            console.print(f"{rule.key:<26}{rule.title}", markup=False)
+        return True
+    rule_found: Rule | None = RULES.get(key)
+    if rule_found is None:
+        console.print(f"No rule '{key}'. dealwake explain lists all of them.", markup=False)
+        return False
+    for label, text in (
+        ("", rule_found.title),
+        ("What it does", rule_found.what),
+        ("Why it matters", rule_found.why),
+        ("What to do", rule_found.remedy),
+    ):
+        console.print(f"{label}\n  {text}" if label else text, markup=False)
+    return True

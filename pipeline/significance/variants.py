@@ -1,0 +1,72 @@
+"""The headline mean once more, each time with one choice made differently."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+
+import numpy as np
+import pandas as pd
+
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.ledger import Action, Ledger
+from pipeline.core.tables import typed_frame
+from pipeline.core.window import Window
+from pipeline.significance.sample import CarSample, car_sample
+from pipeline.significance.windows import mean_interval
+
+COLUMNS = {
+    "dimension": "str",
+    "variant": "str",
+    "estimate": "float64",
+    "ci_low": "float64",
+    "ci_high": "float64",
+    "n": "int64",
+}
+FLAGS = {
+    "confounded": "without deals next to an earnings release",
+    "time_unknown": "without deals whose time of day is unknown",
+    "thin_trading": "without thinly traded shares",
+}
+
+
+def mean_variants(
+    abnormal: Mapping[str, AbnormalReturns], window: Window, ledger: Ledger, level: float
+) -> pd.DataFrame:
+    """The mean CAR of ``window`` under each model, and without each kind of flagged deal.
+
+    Returns:
+        ``dimension, variant, estimate, ci_low, ci_high, n``; decimal. The first model leads.
+    """
+    rows = [
+        _row("expected return", model.replace("_", " "), car_sample(item, window, 1.0), level)
+        for model, item in abnormal.items()
+    ]
+    lead = next(iter(abnormal.values()))
+    for variant, keep in _without(lead, ledger):
+        rows.append(_row("deals", variant, car_sample(lead.select(keep), window, 1.0), level))
+    return typed_frame(rows, COLUMNS)
+
+
+def _without(lead: AbnormalReturns, ledger: Ledger) -> Iterator[tuple[str, np.ndarray]]:
+    for rule, words in FLAGS.items():
+        flagged = {
+            entry.deal
+            for _, entry in ledger
+            if entry.rule == rule and entry.action is not Action.DROPPED
+        }
+        keep = np.array([deal not in flagged for deal in lead.deals])
+        if 1 < keep.sum() < len(keep):
+            yield words, keep
+
+
+def _row(dimension: str, variant: str, sample: CarSample, level: float) -> dict[str, object]:
+    low, high = mean_interval(sample, level)
+    mean = float(sample.car.mean()) if sample.n else np.nan
+    return {
+        "dimension": dimension,
+        "variant": variant,
+        "estimate": mean,
+        "ci_low": low,
+        "ci_high": high,
+        "n": sample.n,
+    }

@@ -1,0 +1,211 @@
+"""What a study asks of each stage, in the stages' own terms. No data is read here."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from dataclasses import replace
+
+from pipeline.characteristics.design import Roles
+from pipeline.characteristics.outcomes import car_column
+from pipeline.characteristics.recipes import Recipe, needed
+from pipeline.core.results import StudyFacts
+from pipeline.core.window import Window
+from pipeline.inputs.files import Source
+from pipeline.inputs.read import Wanted
+from pipeline.registry import TESTS, entry
+from pipeline.returns.events import EventOptions
+from pipeline.study.schema import Characteristic, Study
+
+PATH_DAYS = Window(-10, 10)
+
+
+def sources(study: Study) -> dict[str, Source]:
+    """The files of a study, by table."""
+    paths = {
+        "deals": study.inputs.deals,
+        "prices": study.inputs.prices,
+        "benchmarks": study.inputs.benchmarks,
+        "candidates": study.inputs.candidates,
+        "factors": study.inputs.factors,
+    }
+    return {
+        table: Source(
+            table,
+            path,
+            study.inputs.columns.get(table, {}),
+            study.inputs.sheets.get(table, ""),
+        )
+        for table, path in paths.items()
+        if path is not None and (table != "candidates" or study.selection is not None)
+    }
+
+
+def recipes(study: Study) -> dict[str, Recipe]:
+    """The study's characteristics as recipes."""
+    return {name: _recipe(name, item, study) for name, item in study.characteristics.items()}
+
+
+def _recipe(name: str, item: Characteristic, study: Study) -> Recipe:
+    treated = Recipe(
+        name,
+        "column",
+        lag=item.lag,
+        log=item.log,
+        winsorise=item.winsorise,
+        standardise=item.standardise,
+    )
+    if item.price is not None:
+        window = Window(*item.window) if item.window else study.event_time.estimation_window
+        return replace(treated, source="price", measure=item.price, window=window)
+    if item.indicator is not None:
+        condition = item.indicator
+        return replace(
+            treated,
+            source="indicator",
+            columns=(condition.column,),
+            equals=condition.equals,
+            above=condition.above,
+        )
+    for source in ("ratio", "interaction"):
+        pair = getattr(item, source)
+        if pair is not None:
+            return replace(treated, source=source, columns=tuple(pair))
+    return replace(treated, columns=(str(item.column),))
+
+
+def roles(study: Study) -> Roles | None:
+    """Which variable plays which part, or None without a regression."""
+    regression = study.regression
+    if regression is None:
+        return None
+    chosen, instruments = study.selection, study.instruments
+    return Roles(
+        outcome=car_column(study.event_time.headline_window),
+        outcome_label=f"CAR{study.event_time.headline_window.label}",
+        treatment=regression.treatment,
+        controls=tuple(regression.controls),
+        effects=tuple(regression.fixed_effects),
+        clusters=tuple(regression.clusters),
+        instruments=tuple(instruments.use) if instruments else (),
+        selection=tuple(chosen.explained_by) if chosen else (),
+        excluded=tuple(chosen.excluded) if chosen else (),
+    )
+
+
+def wanted(study: Study) -> Wanted:
+    """The columns a study reads beyond the fixed ones."""
+    parts = roles(study)
+    if parts is None:
+        return Wanted()
+    book = recipes(study)
+    numbers, texts = _columns(parts.numbers, book)
+    c_numbers, c_texts = _columns((*parts.selection, *parts.excluded), book)
+    return Wanted(
+        deal_numbers=numbers,
+        deal_texts=(*texts, *parts.effects, *parts.clusters),
+        candidate_numbers=c_numbers,
+        candidate_texts=c_texts,
+    )
+
+
+def _columns(
+    names: Iterable[str], book: dict[str, Recipe]
+) -> tuple[tuple[str, ...], tuple[str, ...]]:
+    """Raw columns behind variables: numeric ones, and text ones that indicators compare."""
+    numbers: list[str] = []
+    texts: list[str] = []
+    for name in needed(list(names), book):
+        recipe = book.get(name) or Recipe(name, "column", (name,))
+        if recipe.source == "interaction":
+            continue
+        is_text = recipe.source == "indicator" and isinstance(recipe.equals, str)
+        (texts if is_text else numbers).extend(recipe.columns)
+    return tuple(dict.fromkeys(numbers)), tuple(dict.fromkeys(texts))
+
+
+def event_options(study: Study) -> EventOptions:
+    """How events are placed and screened."""
+    time = study.event_time
+    return EventOptions(
+        estimation=time.estimation_window,
+        headline=time.headline_window,
+        span=span(study),
+        minimum_observations=time.minimum_observations,
+        cutoff_minutes=time.cutoff_minutes,
+        mask_sessions=time.mask_sessions,
+        confounding_days=time.confounding_days,
+    )
+
+
+def span(study: Study) -> Window:
+    """The event days held: every window, and the days of the path that estimation leaves free."""
+    windows = study.event_time.all_windows
+    path = path_days(study)
+    return Window(
+        min(path.start, *(window.start for window in windows)),
+        max(path.end, *(window.end for window in windows)),
+    )
+
+
+def path_days(study: Study) -> Window:
+    """The days drawn in the path."""
+    first = max(PATH_DAYS.start, study.event_time.estimation_window.end + 1)
+    headline = study.event_time.headline_window
+    return Window(min(first, headline.start), max(PATH_DAYS.end, headline.end))
+
+
+def facts(study: Study) -> StudyFacts:
+    """What the report may know of the study."""
+    parts = roles(study)
+    arguments = {
+        "What moves the decision to bid and nothing else": study.selection,
+        "What moves the form of payment and nothing else": study.instruments,
+    }
+    labels = {name: item.label for name, item in study.characteristics.items() if item.label}
+    return StudyFacts(
+        name=study.name,
+        title=study.title,
+        question=study.question,
+        headline=study.event_time.headline_window,
+        windows=study.event_time.all_windows,
+        estimation=study.event_time.estimation_window,
+        minimum_observations=study.event_time.minimum_observations,
+        models=study.expected_returns.all_models,
+        headline_test=study.tests.headline,
+        headline_test_reason=entry(TESTS, study.tests.headline).why,
+        treatment=parts.treatment if parts else "",
+        groups=(study.report.groups[0], study.report.groups[1]),
+        regressors=(parts.treatment, *parts.controls) if parts else (),
+        effects=parts.effects if parts else (),
+        clusters=parts.clusters if parts else (),
+        instruments=parts.instruments if parts else (),
+        excluded=parts.excluded if parts else (),
+        selection=parts.selection if parts else (),
+        rationales={head: part.rationale for head, part in arguments.items() if part is not None},
+        labels={**labels, **study.labels},
+        notes=conventions(study),
+        level=study.level,
+        currency=study.report.currency,
+        seed=study.seed,
+    )
+
+
+def conventions(study: Study) -> tuple[str, ...]:
+    """The conventions a reader must know, one sentence each, from the study's own values."""
+    time = study.event_time
+    model = study.expected_returns.headline.replace("_", " ")
+    return (
+        "Day zero is the first session of the listing's own exchange whose close, "
+        f"less {time.cutoff_minutes} minutes, comes at or after the announcement.",
+        "An announcement with a date and no time takes that date's session; the session after "
+        "may hold its reaction.",
+        f"Returns are simple daily returns of adjusted closes; the headline model is the {model}, "
+        f"estimated over sessions {time.estimation_window.label} with at least "
+        f"{time.minimum_observations} returns.",
+        "A session without a price is a gap, never a return of zero; a deal needs every day of "
+        f"the headline window and {time.share_of_days:.0%} of the days of another window.",
+        f"Sessions within {time.mask_sessions} of another deal of the company are left out of "
+        "estimation; of two deals whose headline windows meet, the first is kept.",
+        "A deal within "
+        f"{time.confounding_days} session(s) of an earnings release is kept and flagged.",
+    )
