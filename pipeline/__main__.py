@@ -7,7 +7,7 @@ def main() -> None:
     """Run the command line."""
     from pipeline.cli import app
 
-    app()
+    app(prog_name="dealwake")
 
 
 if __name__ == "__main__":

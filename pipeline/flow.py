@@ -226,6 +226,7 @@ def _results(
     lead = measured.abnormal[lead_model]
     deals = prepared.deals if prepared else _with_outcomes(study, measured)
     groups = group_names(deals, facts.treatment, facts.groups)
+    table = deals_frame(deals, groups)
     checks = sample_checks(lead, study.event_time.headline_window, deals)
     checks += tuple(check for column in columns for check in getattr(column, "checks", ()))
     ledger = measured.ledger.then(prepared.ledger) if prepared else measured.ledger
@@ -233,7 +234,7 @@ def _results(
     results = Results(
         study=facts,
         abnormal=measured.abnormal,
-        deals=deals,
+        deals=table,
         window_tests=found,
         columns=columns,
         lead=_lead(columns),
@@ -246,7 +247,7 @@ def _results(
     )
     tables = {
         "abnormal_returns": abnormal_returns_frame(measured.abnormal),
-        "deals": deals_frame(deals, groups),
+        "deals": table,
         "event_tests": event_tests_frame(found),
         "estimates": estimates_frame(columns, facts.headline, lead_model),
         "diagnostics": results.diagnostics,

@@ -196,7 +196,7 @@ def screen_estimation(
 ) -> tuple[Booleans, StageLedger]:
     """Which events have a usable estimation window, by the first rule each fails.
 
-    The rules in order: suspected split, too few returns, too many zero returns, no fit.
+    The rules in order: suspected split, too few returns, no fit, too many zero returns.
     """
     splits = {exchange: suspected_splits(panel) for exchange, panel in panels.items()}
     entries: list[LedgerEntry] = []

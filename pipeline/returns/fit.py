@@ -11,6 +11,7 @@ from pipeline.core.prices import Booleans, Floats, Integers, PricePanel
 from pipeline.core.window import Window
 
 CHUNK = 256
+FLAT = 1e-20
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -83,10 +84,12 @@ def _chunk(
     residuals = np.where(used, y, np.nan) - np.einsum("ned,nd->ne", x, parameters)
     observations = used.sum(axis=1)
     free = observations - x.shape[2]
+    fitted = np.isfinite(parameters).all(axis=1) & (free > 0)
     with np.errstate(divide="ignore", invalid="ignore"):
-        variance = np.where(free > 0, np.nansum(residuals**2, axis=1) / free, np.nan)
+        variance = np.where(fitted, np.nansum(residuals**2, axis=1) / free, np.nan)
     x_event = np.where(s_inside[:, :, None], regressors[s_at], np.nan)
     expected = offset[s_at] + np.einsum("nld,nd->nl", x_event, parameters)
+    expected = np.where(s_inside, expected, np.nan)
     realised = np.where(s_inside, panel.returns[s_at, column[:, None]], np.nan)
     not_a_day = np.datetime64("NaT")
     return AbnormalReturns(
@@ -137,6 +140,9 @@ def least_squares(y: Floats, x: Floats, used: Booleans) -> tuple[Floats, Floats]
     yc = np.where(used, y - y_mean[:, None], 0.0)
     xc = np.where(weight, slopes - x_mean[:, None, :], 0.0)
     moments = np.einsum("nei,nej->nij", xc, xc)
+    # A regressor that never moves leaves only rounding around its mean.
+    size = np.einsum("nei,nei->ni", xc, xc) + count[:, None] * x_mean**2
+    moments[np.einsum("nii->ni", moments) <= FLAT * size] = np.nan
     inverse = _inverses(moments)
     slope = np.einsum("nij,nej,ne->ni", inverse, xc, yc)
     parameters = np.column_stack([y_mean - (x_mean * slope).sum(axis=1), slope])

@@ -104,9 +104,10 @@ def _lay(
     close[row[inside], codes[inside]] = prices["close"].to_numpy()[inside]
     volume[row[inside], codes[inside]] = prices["volume"].to_numpy()[inside]
     findings = []
-    off = dates[~inside]
+    priced = prices["close"].notna().to_numpy()  # an empty cell on a holiday is no price
+    off = dates[~inside & priced]
     if off.size:
-        share = off.size / dates.size
+        share = off.size / priced.sum()
         findings.append(
             Finding(
                 "price_off_session",

@@ -17,8 +17,6 @@ CALENDARS = {
     "XNAS": "NASDAQ",
     "XLON": "LSE",
     "XTKS": "JPX",
-    "XSTO": "OMX",
-    "XETR": "XETR",
     "XHKG": "HKEX",
     "XSWX": "SIX",
     "XTSE": "TSX",

@@ -1,0 +1,56 @@
+"""Rerunning with new windows, from a three-line study and from the command line."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import pandas as pd
+
+from tests.end_to_end.conftest import ROOT, dealwake
+
+DEMO = ROOT / "configs" / "demo.toml"
+
+
+def headline_windows(folder: Path) -> set[tuple[int, int]]:
+    tests = pd.read_parquet(folder / "data" / "event_tests.parquet")
+    own = tests[tests["headline"]]
+    return set(zip(own["window_start"], own["window_end"], strict=True))
+
+
+def test_three_lines_change_the_headline_window(tmp_path: Path) -> None:
+    study = tmp_path / "wider.toml"
+    study.write_text(f'base = "{DEMO.as_posix()}"\n[event_time]\nheadline = [-2, 2]\n')
+    dealwake("run", study, "--out", tmp_path / "out")
+    assert headline_windows(tmp_path / "out") == {(-2, 2)}
+    estimates = pd.read_parquet(tmp_path / "out" / "data" / "estimates.parquet")
+    assert set(estimates["window_start"]) == {-2}
+    manifest = json.loads((tmp_path / "out" / "manifest.json").read_text())
+    assert manifest["study"]["name"] == "wider"
+
+
+def test_a_window_on_the_command_line(tmp_path: Path) -> None:
+    dealwake("run", DEMO, "--window", "-3:3", "--out", tmp_path / "out")
+    assert headline_windows(tmp_path / "out") == {(-3, 3)}
+    text = (tmp_path / "out" / "report.html").read_text()
+    assert "[−3, +3]" in text
+
+
+def test_the_car_of_a_new_window_is_the_sum_of_its_days(tmp_path: Path, demo: Path) -> None:
+    dealwake("run", DEMO, "--window", "-3:3", "--out", tmp_path / "out", "--quiet")
+    returns = pd.read_parquet(demo / "data" / "abnormal_returns.parquet")
+    inside = returns[(returns["expected_return"] == "market_model") & returns["day"].between(-3, 3)]
+    total = inside.groupby("deal")["abnormal_return"].sum()
+    deals = pd.read_parquet(tmp_path / "out" / "data" / "deals.parquet").set_index("deal")
+    shared = deals.index.intersection(total.index)
+    assert len(shared) > 400
+    pd.testing.assert_series_equal(
+        deals.loc[shared, "car_m3_3"], total[shared], check_names=False, rtol=1e-9, atol=1e-12
+    )
+
+
+def test_the_run_lands_under_reports_in_the_folder_one_works_in(tmp_path: Path) -> None:
+    study = tmp_path / "short.toml"
+    study.write_text(f'base = "{DEMO.as_posix()}"\n[report]\nformats = ["tex"]\n')
+    dealwake("run", study, cwd=tmp_path)
+    assert (tmp_path / "reports" / "short" / "manifest.json").is_file()
