@@ -59,10 +59,12 @@ def deal_table(
 ) -> pd.DataFrame:
     """Deals in order of announcement, one exact duplicate row included; raises nothing.
 
-    Money in millions of `currency`, `treasury_shares` in percent, dates as ISO text.
+    Money in millions of USD at the fixed rates, so that sizes compare across exchanges;
+    `treasury_shares` in percent, dates as ISO text.
     """
     i, y = plan.company, plan.year
     venue = companies.exchange[i]
+    rate = np.array([e.usd_rate for e in EXCHANGES])[venue]
     frame = pd.DataFrame(
         {
             "deal_id": deal_ids(plan),
@@ -70,9 +72,9 @@ def deal_table(
             "exchange": VENUES[venue],
             "announced_at": stamp_texts(plan),
             "timestamp_zone": np.array([e.zone for e in EXCHANGES], dtype=object)[venue],
-            "deal_value": terms.deal_value,
-            "market_value": terms.market_value,
-            "currency": np.array([e.currency for e in EXCHANGES], dtype=object)[venue],
+            "deal_value": np.round(terms.deal_value * rate, 3),
+            "market_value": np.round(terms.market_value * rate, 3),
+            "currency": "USD",
             "industry": np.array(INDUSTRIES, dtype=object)[companies.industry[i]],
             "year": FIRST_YEAR + y,
             "paid_in_shares": in_shares.astype(np.int64),
