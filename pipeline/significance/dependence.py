@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from pipeline.core.abnormal import AbnormalReturns
-from pipeline.core.prices import Floats
+from pipeline.core.prices import Dates, Floats, Integers
 from pipeline.core.window import Window
 
 COMMON_DAYS = 30
@@ -45,13 +45,32 @@ class Dependence:
         return n / (1 + (n - 1) * max(self.weighted, 0.0))
 
 
-def dependence(abnormal: AbnormalReturns, window: Window) -> Dependence:
+@dataclass(frozen=True, slots=True, eq=False)
+class Links:
+    """(N, N) correlations over common estimation dates, and how many dates each pair shares."""
+
+    correlation: Floats
+    common: Floats
+
+    def take(self, rows: Integers) -> Links:
+        """The links among the events at ``rows``."""
+        at = np.ix_(rows, rows)
+        return Links(self.correlation[at], self.common[at])
+
+
+def links(abnormal: AbnormalReturns) -> Links:
+    """The links of all events of one model; made once and shared by its windows."""
+    return Links(*pairwise(abnormal.estimation_returns, abnormal.estimation_days))
+
+
+def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = None) -> Dependence:
     """Measure the dependence among N deals.
 
     Pairwise correlations are taken over common calendar dates, at least 30 of them (Kolari and
     Pynnönen 2010, RFS 23). The weighted mean multiplies each by the share of the event window
     that the two deals have in common, and is zero for deals whose windows do not meet; a pair
-    that shares too few dates counts with the mean of the others.
+    that shares too few dates counts with the mean of the others. ``known`` are the links of
+    these N deals, if they were made before.
     """
     n = len(abnormal.deals)
     where = abnormal.columns(window)
@@ -59,26 +78,26 @@ def dependence(abnormal: AbnormalReturns, window: Window) -> Dependence:
     _, counts = np.unique(starts, return_counts=True)
     if n < 2:
         return Dependence(np.nan, 0.0, 0, 0.0, np.nan, len(counts), int(counts.max(initial=0)))
-    correlation, common = pairwise(abnormal.estimation_returns, abnormal.estimation_days)
+    known = known or links(abnormal)
     apart = ~np.eye(n, dtype=bool)
-    known = apart & (common >= COMMON_DAYS) & np.isfinite(correlation)
-    mean = float(correlation[known].mean()) if known.any() else np.nan
-    filled = np.where(known, correlation, mean if known.any() else 0.0)
+    usable = apart & (known.common >= COMMON_DAYS) & np.isfinite(known.correlation)
+    mean = float(known.correlation[usable].mean()) if usable.any() else np.nan
+    filled = np.where(usable, known.correlation, mean if usable.any() else 0.0)
     shared = overlap(abnormal.days[:, where])
     weighted = float((filled * shared)[apart].sum() / (n * (n - 1)))
-    length = float(common[known].mean()) if known.any() else np.nan
+    length = float(known.common[usable].mean()) if usable.any() else np.nan
     return Dependence(
         mean=mean,
         weighted=weighted,
-        pairs=int(known.sum() // 2),
+        pairs=int(usable.sum() // 2),
         overlapping=float((shared[apart] > 0).mean()),
-        noise=float(np.sqrt(2 / (max(known.sum(), 1) * length))) if known.any() else np.nan,
+        noise=float(np.sqrt(2 / (usable.sum() * length))) if usable.any() else np.nan,
         dates=len(counts),
         largest=int(counts.max()),
     )
 
 
-def pairwise(returns: Floats, days: np.ndarray) -> tuple[Floats, Floats]:
+def pairwise(returns: Floats, days: Dates) -> tuple[Floats, Floats]:
     """Correlations over common dates.
 
     Args:
@@ -106,7 +125,7 @@ def pairwise(returns: Floats, days: np.ndarray) -> tuple[Floats, Floats]:
     return np.clip(correlation, -1, 1), count
 
 
-def overlap(days: np.ndarray) -> Floats:
+def overlap(days: Dates) -> Floats:
     """(N, N) share of L event dates that two deals have in common, from (N, L) dates."""
     n, length = days.shape
     known = ~np.isnat(days)

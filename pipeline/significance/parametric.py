@@ -5,10 +5,12 @@ from __future__ import annotations
 import numpy as np
 
 from pipeline.core.estimate import NotApplicable, Tested, t_test, z_test
+from pipeline.core.prices import Floats
 from pipeline.significance.sample import CarSample
 
 NULL = "the mean cumulative abnormal return is zero"
 FEW = "needs at least two deals"
+ALIKE = "needs deals whose returns differ"
 
 
 def cross_sectional(sample: CarSample) -> Tested:
@@ -18,10 +20,10 @@ def cross_sectional(sample: CarSample) -> Tested:
     event day does no harm. Deals that move together do.
     """
     name = "Cross-sectional t"
-    if sample.n < 2:
-        return NotApplicable(name, FEW)
-    spread = sample.car.std(ddof=1)
-    statistic = float(sample.car.mean() / (spread / np.sqrt(sample.n)))
+    reason = _no_spread(sample.car)
+    if reason:
+        return NotApplicable(name, reason)
+    statistic = float(sample.car.mean() / (sample.car.std(ddof=1) / np.sqrt(sample.n)))
     return t_test(
         name,
         NULL,
@@ -38,6 +40,8 @@ def patell(sample: CarSample) -> Tested:
     SCARs carry the full forecast-error covariance of the window.
     """
     name = "Patell Z"
+    if sample.n == 0:
+        return NotApplicable(name, "needs at least one deal")
     if (sample.df <= 2).any():
         return NotApplicable(name, "needs more than two degrees of freedom in each estimation")
     scale = np.sqrt(np.sum(sample.df / (sample.df - 2)))
@@ -53,8 +57,9 @@ def patell(sample: CarSample) -> Tested:
 def standardised_cross_sectional(sample: CarSample) -> Tested:
     """t = sqrt(n) mean(SCAR) / s(SCAR), t(n - 1) (Boehmer, Musumeci and Poulsen 1991, JFE 30)."""
     name = "Standardised cross-sectional t"
-    if sample.n < 2:
-        return NotApplicable(name, FEW)
+    reason = _no_spread(sample.scar)
+    if reason:
+        return NotApplicable(name, reason)
     return t_test(
         name,
         NULL,
@@ -63,6 +68,13 @@ def standardised_cross_sectional(sample: CarSample) -> Tested:
         caution="assumes that deals are independent of one another",
         citation="Boehmer, Musumeci and Poulsen 1991",
     )
+
+
+def _no_spread(values: Floats) -> str:
+    """Why the deals give no error to measure their mean by; '' if they do."""
+    if len(values) < 2:
+        return FEW
+    return "" if values.std(ddof=1) > 0 else ALIKE
 
 
 def _standardised(sample: CarSample) -> float:
@@ -76,8 +88,9 @@ def dependence_adjusted(sample: CarSample) -> Tested:
     event windows overlap, so the test becomes the standardised t when no windows meet.
     """
     name = "Dependence-adjusted standardised t"
-    if sample.n < 2:
-        return NotApplicable(name, FEW)
+    reason = _no_spread(sample.scar)
+    if reason:
+        return NotApplicable(name, reason)
     link = sample.dependence
     return t_test(
         name,

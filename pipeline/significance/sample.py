@@ -9,7 +9,7 @@ import numpy as np
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Floats, Integers
 from pipeline.core.window import Window
-from pipeline.significance.dependence import Dependence, dependence
+from pipeline.significance.dependence import Dependence, Links, dependence
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -38,11 +38,16 @@ class CarSample:
         return len(self.car)
 
 
-def car_sample(abnormal: AbnormalReturns, window: Window, share_of_days: float) -> CarSample:
-    """The deals that traded on enough days of ``window``, as a sample."""
-    kept = abnormal.select(abnormal.complete(window, share_of_days))
+def car_sample(
+    abnormal: AbnormalReturns, window: Window, share_of_days: float, known: Links | None = None
+) -> CarSample:
+    """The deals that traded on enough days of ``window``, as a sample.
+
+    ``known`` are the links of all deals of ``abnormal``, if they were made before.
+    """
+    rows = np.flatnonzero(abnormal.complete(window, share_of_days))
+    kept = abnormal.take(rows)
+    link = dependence(kept, window, known.take(rows) if known else None)
     std_dev = np.sqrt(kept.car_variance(window))
     car = kept.car(window)
-    return CarSample(
-        window, car, car / std_dev, std_dev, kept.degrees_of_freedom, dependence(kept, window)
-    )
+    return CarSample(window, car, car / std_dev, std_dev, kept.degrees_of_freedom, link)

@@ -10,6 +10,7 @@ from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import Tested, TestResult, t_reach
 from pipeline.core.results import WindowTests
 from pipeline.core.window import Window
+from pipeline.significance.dependence import links
 from pipeline.significance.sample import CarSample, car_sample
 
 TestFunction = Callable[[CarSample], Tested]
@@ -29,8 +30,9 @@ def all_windows(
     """
     found: list[WindowTests] = []
     for model, measured in abnormal.items():
+        known = links(measured)
         samples = [
-            car_sample(measured, window, 1.0 if at == 0 else share_of_days)
+            car_sample(measured, window, 1.0 if at == 0 else share_of_days, known)
             for at, window in enumerate(windows)
         ]
         results = [{key: test(sample) for key, test in tests.items()} for sample in samples]
