@@ -36,6 +36,7 @@ def _known(table: str) -> AfterValidator:
             raise ValueError(f"must be one of {', '.join(names)}")
         return value
 
+    check.names = names  # type: ignore[attr-defined]
     return AfterValidator(check)
 
 
@@ -194,6 +195,8 @@ class Characteristic(Part):
             raise ValueError(f"needs exactly one source of {', '.join(SOURCES)}; has {given}")
         if (self.window is not None) and self.price is None:
             raise ValueError("window belongs to a price measure")
+        if self.window is not None and self.window[1] < self.window[0]:
+            raise ValueError(f"window {self.window} ends before it starts")
         if self.lag and self.column is None:
             raise ValueError("lag needs a column of the candidates")
         return self
@@ -266,7 +269,9 @@ class Study(Part):
     regression: Regression | None = None
     selection: Selection | None = None
     instruments: Instruments | None = None
-    labels: dict[str, str] = Field(default_factory=dict)
+    labels: dict[str, str] = Field(
+        default_factory=dict, description="Words for variables: paid_in_shares = 'Paid in shares'."
+    )
     report: Report = Field(default_factory=Report)
 
     @property
