@@ -137,7 +137,7 @@ def impossible(
     recipe: Recipe, table: pd.DataFrame, values: Floats, key: str, file: str
 ) -> list[Finding]:
     """An error when a log or ratio has no finite value although its inputs are filled."""
-    if recipe.source == "price" or not recipe.columns:
+    if recipe.source in ("price", "indicator") or not recipe.columns:
         return []
     inputs = table[list(recipe.columns)]
     filled = inputs.notna().all(axis=1).to_numpy() if not recipe.lag else np.zeros(len(table), bool)

@@ -133,8 +133,9 @@ class AbnormalReturns:
         return np.asarray(self.residual_variance * (traded.sum(axis=1) + estimation))
 
     def standardised(self, window: Window) -> Floats:
-        """(N,) SCAR, the CAR over its forecast standard deviation."""
-        return np.asarray(self.car(window) / np.sqrt(self.car_variance(window)))
+        """(N,) SCAR, the CAR over its forecast standard deviation; NaN without a traded day."""
+        with np.errstate(invalid="ignore"):
+            return np.asarray(self.car(window) / np.sqrt(self.car_variance(window)))
 
     def select(self, keep: Booleans) -> AbnormalReturns:
         """The events where ``keep`` (N,) is true."""

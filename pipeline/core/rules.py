@@ -68,6 +68,20 @@ RULES: Mapping[str, Rule] = _catalogue(
         "Add the column, or say under [inputs.columns] what yours is called.",
     ),
     Rule(
+        "ambiguous_column",
+        "Two columns of one name",
+        "Two columns of a table have the same name, but for case and spaces.",
+        "Nothing tells which of them holds the right values.",
+        "Rename or delete one, or name yours under [inputs.columns].",
+    ),
+    Rule(
+        "error_cell",
+        "Formula that failed",
+        "A cell holds a spreadsheet's error, such as #DIV/0!.",
+        "Reading it as missing would drop the deal without a word.",
+        "Correct the formula, or empty the cell.",
+    ),
+    Rule(
         "empty_table",
         "Table without rows",
         "A table holds a header and nothing else.",

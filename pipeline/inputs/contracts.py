@@ -2,8 +2,10 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from typing import Final
 
 import numpy as np
 import pandas as pd
@@ -12,19 +14,21 @@ from pipeline.core.findings import Finding, Severity
 from pipeline.inputs.files import ROW, Source
 
 MISSING_WORDS = {"", "n/a", "na", "#n/a", "nan", "none", "null", "-", ".", "nat"}
-TRUE_WORDS = {"1", "1.0", "true", "yes", "y"}
-FALSE_WORDS = {"0", "0.0", "false", "no", "n"}
+ERROR_WORDS = {"#DIV/0!", "#REF!", "#VALUE!", "#NAME?", "#NUM!", "#NULL!", "#SPILL!", "#CALC!"}
+YES_OR_NO = {"true": 1.0, "yes": 1.0, "false": 0.0, "no": 0.0}
+ISO = re.compile(r"\d{4}-\d{2}-\d{2}([T ]\d{2}:\d{2}(:\d{2}(\.\d+)?)?(Z|[+-]\d{2}:?\d{2})?)?")
 EARLIEST, LATEST = pd.Timestamp("1950-01-01"), pd.Timestamp("2100-01-01")
 EXAMPLES = 5
+DAY: Final = "datetime64[s]"
 
 
 @dataclass(frozen=True, slots=True)
 class Column:
     """One column of a contract.
 
-    ``kind`` is ``text``, ``number``, ``flag``, ``date`` or ``stamp`` (kept as written, read by
-    :mod:`pipeline.inputs.moments`); a ``filled`` column may have no empty cell; an optional
-    column may be absent, and is then made with missing values.
+    ``kind`` is ``text``, ``number`` (yes and no are 1 and 0), ``date`` or ``stamp`` (kept as
+    written, read by :mod:`pipeline.inputs.moments`); a ``filled`` column may have no empty cell;
+    an optional column may be absent, and is then made with missing values.
     """
 
     name: str
@@ -41,8 +45,8 @@ def apply_contract(
 
     Returns:
         A frame of the contracted columns and ``_row``, in the order of the contract: text as
-        ``str`` with '' for missing, numbers and flags as float64 with NaN, dates as
-        ``datetime64`` at midnight with NaT, stamps untouched.
+        ``str`` with '' for missing, numbers as float64 with NaN, dates as ``datetime64[s]``
+        at midnight with NaT, stamps untouched.
     """
     findings: list[Finding] = []
     typed: dict[str, pd.Series] = {}
@@ -53,11 +57,14 @@ def apply_contract(
             typed[column.name] = _nothing(column.kind, table.index)
             continue
         raw = table[column.name]
+        broken = _is_error(raw)
+        findings += _error_cells(raw[broken], table.loc[broken, ROW], source, column)
+        raw = raw.mask(broken) if broken.any() else raw
         values, bad = _read(raw, column.kind, date_format)
         typed[column.name] = values
         findings += _bad_cells(raw[bad], table.loc[bad, ROW], source, column)
         if column.filled:
-            empty = _is_missing(raw)
+            empty = is_missing(raw) & ~broken
             findings += _empty_cells(table.loc[empty, ROW], source, column)
         if column.kind == "date":
             wrong = values.notna() & ~values.between(EARLIEST, LATEST)
@@ -75,10 +82,20 @@ def _read(raw: pd.Series, kind: str, date_format: str) -> tuple[pd.Series, pd.Se
     return READ[kind](raw)
 
 
-def _is_missing(raw: pd.Series) -> pd.Series:
-    if not pd.api.types.is_object_dtype(raw) and not pd.api.types.is_string_dtype(raw):
+def is_missing(raw: pd.Series) -> pd.Series:
+    """Cells without a value, and those with a word for none."""
+    if not _may_hold_text(raw):
         return raw.isna()
     return raw.isna() | raw.astype(str).str.strip().str.lower().isin(MISSING_WORDS)
+
+
+def _is_error(raw: pd.Series) -> pd.Series:
+    """Cells that hold what a spreadsheet writes where a formula failed."""
+    return raw.isin(ERROR_WORDS) if _may_hold_text(raw) else pd.Series(False, index=raw.index)
+
+
+def _may_hold_text(raw: pd.Series) -> bool:
+    return bool(pd.api.types.is_object_dtype(raw) or pd.api.types.is_string_dtype(raw))
 
 
 def _read_text(raw: pd.Series) -> tuple[pd.Series, pd.Series]:
@@ -87,43 +104,47 @@ def _read_text(raw: pd.Series) -> tuple[pd.Series, pd.Series]:
             return str(int(cell))
         return str(cell).strip()
 
-    missing = _is_missing(raw)
+    missing = is_missing(raw)
     values = raw.map(word) if raw.dtype == object or raw.dtype.kind == "f" else raw.astype(str)
     values = values.str.strip().where(~missing, "").astype("str")
     return values, pd.Series(False, index=raw.index)
 
 
 def _read_number(raw: pd.Series) -> tuple[pd.Series, pd.Series]:
+    if pd.api.types.is_datetime64_any_dtype(raw):  # would pass as nanoseconds since 1970
+        return pd.Series(np.nan, index=raw.index), raw.notna()
     values = pd.to_numeric(raw, errors="coerce").astype(np.float64)
-    bad = values.isna() & ~_is_missing(raw)
+    bad = values.isna() & ~is_missing(raw)
+    if bad.any() and _may_hold_text(raw):
+        words = raw[bad].astype(str).str.strip().str.lower().map(YES_OR_NO)
+        values[bad] = words.astype(np.float64)
+        bad &= values.isna()
     return values, bad | np.isinf(values)
-
-
-def _read_flag(raw: pd.Series) -> tuple[pd.Series, pd.Series]:
-    words = raw.astype(str).str.strip().str.lower()
-    values = pd.Series(np.nan, index=raw.index)
-    values[words.isin(TRUE_WORDS)] = 1.0
-    values[words.isin(FALSE_WORDS)] = 0.0
-    return values, values.isna() & ~_is_missing(raw)
 
 
 def read_dates(raw: pd.Series, date_format: str = "") -> tuple[pd.Series, pd.Series]:
     """Calendar dates, and which cells are none.
 
-    A cell must be a date already, or text in ISO 8601 or the declared format. Bare numbers are
-    refused: a spreadsheet's serial day has two origins, and nothing tells which.
+    A cell must be a date already, or text in ISO 8601 or the declared format; a time of day is
+    left off. Bare numbers are refused: a spreadsheet's serial day has two origins, and nothing
+    tells which. So are stored instants other than midnight UTC, whose date depends on a zone.
     """
     if pd.api.types.is_datetime64_any_dtype(raw):
-        return raw.dt.tz_localize(None).dt.normalize(), pd.Series(False, index=raw.index)
-    missing = _is_missing(raw)
-    texts = raw.where(~missing).map(_date_text, na_action="ignore")
-    if date_format:
-        values = pd.to_datetime(texts, format=date_format, errors="coerce")
-        plain = pd.to_datetime(texts, format="%Y-%m-%d", errors="coerce")
-        values = values.fillna(plain)
-    else:
-        values = pd.to_datetime(texts.str.slice(0, 10), format="%Y-%m-%d", errors="coerce")
-    return values.dt.normalize(), values.isna() & ~missing
+        return _stored_dates(raw)
+    missing = is_missing(raw)
+    texts = raw.where(~missing).map(_date_text, na_action="ignore").astype(object)
+    plain = texts.where(texts.str.fullmatch(ISO, na=False).astype(bool)).str.slice(0, 10)
+    values = pd.to_datetime(plain, format="%Y-%m-%d", errors="coerce")
+    if date_format and "%z" not in date_format:
+        values = pd.to_datetime(texts, format=date_format, errors="coerce").fillna(values)
+    return values.dt.normalize().astype(DAY), values.isna() & ~missing
+
+
+def _stored_dates(raw: pd.Series) -> tuple[pd.Series, pd.Series]:
+    clock = raw.dt.tz_localize(None)
+    days = clock.dt.normalize()
+    doubtful = raw.notna() & (clock != days) & (raw.dt.tz is not None)
+    return days.mask(doubtful).astype(DAY), doubtful
 
 
 def _date_text(cell: object) -> str:
@@ -135,17 +156,14 @@ def _date_text(cell: object) -> str:
 READ: dict[str, Callable[[pd.Series], tuple[pd.Series, pd.Series]]] = {
     "text": _read_text,
     "number": _read_number,
-    "flag": _read_flag,
 }
 EXPECTED = {
     "number": "a number with a decimal point, or an empty cell",
-    "flag": "1 or 0 (yes or no), or an empty cell",
     "date": "a date as YYYY-MM-DD",
 }
-RULE = {"number": "unparseable_number", "flag": "unparseable_number", "date": "unparseable_date"}
+RULE = {"number": "unparseable_number", "date": "unparseable_date"}
 REMEDY = {
     "number": "Correct the cells; leave them empty if the value is not known.",
-    "flag": "Write 1 for yes and 0 for no.",
     "date": "Write YYYY-MM-DD, or declare your format in inputs.date_format.",
 }
 
@@ -154,7 +172,7 @@ def _nothing(kind: str, index: pd.Index) -> pd.Series:
     if kind in ("text", "stamp"):
         return pd.Series("", index=index, dtype="str")
     if kind == "date":
-        return pd.Series(pd.NaT, index=index, dtype="datetime64[ns]")
+        return pd.Series(pd.NaT, index=index, dtype=DAY)
     return pd.Series(np.nan, index=index)
 
 
@@ -190,6 +208,25 @@ def _bad_cells(cells: pd.Series, rows: pd.Series, source: Source, column: Column
             got=examples,
             expected=EXPECTED[column.kind],
             remedy=REMEDY[column.kind],
+            row=row_list(rows),
+            column=source.columns.get(column.name, column.name),
+        )
+    ]
+
+
+def _error_cells(
+    cells: pd.Series, rows: pd.Series, source: Source, column: Column
+) -> list[Finding]:
+    if cells.empty:
+        return []
+    return [
+        Finding(
+            "error_cell",
+            Severity.ERROR,
+            source.file,
+            got=", ".join(f"'{cell}'" for cell in dict.fromkeys(cells)),
+            expected="a value, or an empty cell",
+            remedy="Correct the formulas, or empty the cells.",
             row=row_list(rows),
             column=source.columns.get(column.name, column.name),
         )

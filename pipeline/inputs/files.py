@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
+from zipfile import BadZipFile
 
 import duckdb
 import pandas as pd
@@ -13,6 +14,7 @@ from pipeline.core.findings import problem
 
 ROW = "_row"
 READERS = {".parquet": "read_parquet(?)", ".csv": "read_csv(?, all_varchar=true, header=true)"}
+FIRST_ROW = "SELECT * FROM read_csv(?, all_varchar=true, header=false) LIMIT 1"
 KINDS = (".csv", ".parquet", ".xlsx")
 
 
@@ -46,7 +48,8 @@ def read_table(
         only: one of our columns and the values to keep (parquet and csv only read those rows).
 
     Returns:
-        The table. ``_row`` counts from the header as row 1, as a spreadsheet does.
+        The table. ``_row`` counts from the header as row 1, as a spreadsheet does; blank lines of
+        a csv do not count.
 
     Raises:
         InputProblem: if the file is absent, of an unknown kind, unreadable or empty.
@@ -70,8 +73,9 @@ def read_table(
             remedy="Save the table as one of these.",
         )
     try:
+        _refuse_repeats(source, _header(source, kind))
         raw = _excel(source) if kind == ".xlsx" else _query(source, kind, wanted, only)
-    except (duckdb.Error, ValueError, KeyError, OSError) as fault:
+    except (duckdb.Error, BadZipFile, ValueError, KeyError, OSError) as fault:
         raise problem(
             "unreadable_file",
             source.file,
@@ -79,7 +83,8 @@ def read_table(
             expected="a table with a header in its first row",
             remedy="Open the file, check the sheet and its first row, and save it again.",
         ) from None
-    table = raw.rename(columns=_ours(source, list(raw.columns)))
+    ours = _ours(source, list(raw.columns))
+    table = raw[[*ours, ROW]].rename(columns=ours)
     if table.empty and only is None:
         raise problem(
             "empty_table",
@@ -92,18 +97,70 @@ def read_table(
 
 
 def _ours(source: Source, names: list[str]) -> dict[str, str]:
-    """File name -> our name: declared ones first, then the same but for case and spaces."""
+    """File name -> our name: declared ones first, then the same but for case and spaces.
+
+    A column whose own name was declared to be another's is left out.
+    """
+    declared = {theirs: ours for ours, theirs in source.columns.items() if theirs in names}
+    ours = {name: declared.get(name, _loose(name)) for name in names if name != ROW}
+    return {
+        name: our for name, our in ours.items() if name in declared or our not in declared.values()
+    }
+
+
+def _loose(name: str) -> str:
+    return str(name).strip().lower().replace(" ", "_")
+
+
+def _header(source: Source, kind: str) -> list[str]:
+    """The names in the first row, before a reader makes repeated ones differ."""
+    if kind == ".xlsx":
+        with pd.ExcelFile(source.path, engine="openpyxl") as book:
+            sheet = _sheet(source, book)
+            first = pd.read_excel(book, sheet_name=sheet, header=None, nrows=1, dtype=object)
+        return [str(name) for name in first.to_numpy().ravel() if pd.notna(name)]
+    with duckdb.connect() as base:
+        if kind == ".csv":
+            base.execute(FIRST_ROW, [str(source.path)])
+            return [str(name) for name in base.fetchone() or () if name is not None]
+        shape = base.execute(f"SELECT * FROM {READERS[kind]} LIMIT 0", [str(source.path)])
+        return [column[0] for column in shape.description or ()]
+
+
+def _refuse_repeats(source: Source, header: list[str]) -> None:
+    """Refuse two columns that are one but for case and spaces, unless one was declared."""
     declared = {theirs: ours for ours, theirs in source.columns.items()}
-    loose = {str(name): str(name).strip().lower().replace(" ", "_") for name in names}
-    return {name: declared.get(name, loose[str(name)]) for name in names if name != ROW}
+    alike: dict[str, list[str]] = {}
+    for name in header:
+        alike.setdefault(declared.get(name, _loose(name)), []).append(name)
+    for ours, names in alike.items():
+        chosen = [name for name in names if name == source.columns.get(ours)] or names
+        if len(chosen) > 1:
+            raise problem(
+                "ambiguous_column",
+                source.file,
+                column=ours,
+                got="columns " + " and ".join(f"'{name}'" for name in chosen),
+                expected=f"one column that reads '{ours}', whatever its case and spaces",
+                remedy="Rename or delete one of them.",
+            )
+
+
+def _sheet(source: Source, book: pd.ExcelFile) -> str:
+    sheet = source.sheet or str(book.sheet_names[0])
+    if sheet not in book.sheet_names:
+        raise ValueError(f"no sheet '{sheet}'; it has {', '.join(map(str, book.sheet_names))}")
+    return sheet
 
 
 def _excel(source: Source) -> pd.DataFrame:
     with pd.ExcelFile(source.path, engine="openpyxl") as book:
-        sheet = source.sheet or str(book.sheet_names[0])
-        if sheet not in book.sheet_names:
-            raise ValueError(f"no sheet '{sheet}'; it has {', '.join(map(str, book.sheet_names))}")
-        table = book.parse(sheet, dtype=object, keep_default_na=False)
+        sheet = _sheet(source, book)
+        table = pd.read_excel(book, sheet_name=sheet, dtype=object, keep_default_na=False)
+        if table.isna().any(axis=None):  # the reader turns every error cell into NaN
+            written = pd.DataFrame(book.book[sheet].iter_rows(min_row=2, values_only=True))
+            written = written.iloc[: len(table), : table.shape[1]].set_axis(table.columns, axis=1)
+            table = table.where(table.notna(), written)
     table[ROW] = range(2, len(table) + 2)
     blank = table.drop(columns=ROW).map(lambda cell: cell is None or cell == "").all(axis=1)
     return table[~blank].reset_index(drop=True)

@@ -10,10 +10,11 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import EARLIEST, LATEST
+from pipeline.inputs.contracts import DAY, EARLIEST, LATEST, is_missing
 from pipeline.inputs.files import ROW, Source
 
 ISO_DATE = re.compile(r"^\d{4}-\d{2}-\d{2}$")
+MIDNIGHT = "T00:00:00+00:00"
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,10 +52,11 @@ OUT_OF_RANGE = Refusal(
 
 
 def read_moment(cell: object, zone: str, date_format: str = "") -> datetime | date | Refusal:
-    """The UTC instant of an announcement, its date if no time was given, or a refusal.
+    """The instant of an announcement, its date if no time was given, or a refusal.
 
     A local time that the change of clocks skipped, or made twice, is refused unless it carries
-    its offset. Midnight without a zone counts as a date alone.
+    its offset. Midnight without an offset counts as a date alone. The instant keeps the zone it
+    was written in.
 
     Args:
         cell: as read from the file.
@@ -73,7 +75,7 @@ def read_moment(cell: object, zone: str, date_format: str = "") -> datetime | da
     if bare:
         return moment.date()
     if moment.tzinfo is not None:
-        return moment.astimezone(UTC)
+        return moment
     if not zone:
         return NO_ZONE
     return _localise(moment, zone)
@@ -107,11 +109,10 @@ def _localise(moment: datetime, zone: str) -> datetime | Refusal:
         return BAD_ZONE
     first = moment.replace(tzinfo=clock, fold=0)
     second = moment.replace(tzinfo=clock, fold=1)
-    instant = first.astimezone(UTC)
-    exists = instant.astimezone(clock).replace(tzinfo=None) == moment
+    exists = first.astimezone(UTC).astimezone(clock).replace(tzinfo=None) == moment
     if not exists or first.utcoffset() != second.utcoffset():
         return IMPOSSIBLE
-    return instant
+    return first
 
 
 def read_moments(
@@ -120,27 +121,28 @@ def read_moments(
     """The deals with ``announced_utc`` (NaT when only a date is known) and ``announced_date``.
 
     ``announced_date`` is the date as written, in the announcement's own zone when it has one.
-    Findings name each row that gives no moment.
+    A column of nothing but midnights UTC holds dates. Findings name each row that gives no
+    moment, empty cells apart.
     """
-    instants: list[datetime | None] = []
-    dates: list[date | None] = []
+    found: list[datetime | date | None] = []
     findings: list[Finding] = []
     rows = zip(deals["announced_at"], deals["timestamp_zone"], deals[ROW], strict=True)
     for cell, own_zone, row in rows:
         moment = read_moment(cell, own_zone or default_zone, date_format)
         if isinstance(moment, Refusal):
-            instants.append(None)
-            dates.append(None)
-            findings.append(_finding(moment, cell, own_zone, int(row), source))
-        elif isinstance(moment, datetime):
-            instants.append(moment)
-            dates.append(moment.date())
+            found.append(None)
+            if not is_missing(pd.Series([cell], dtype=object)).any():
+                findings.append(_finding(moment, cell, own_zone, int(row), source))
         else:
-            instants.append(None)
-            dates.append(moment)
+            found.append(moment)
+    timed = [moment for moment in found if isinstance(moment, datetime)]
+    midnights = len(timed) > 1 and all(moment.isoformat().endswith(MIDNIGHT) for moment in timed)
+    instants = [m if isinstance(m, datetime) and not midnights else None for m in found]
+    dates = [m.date() if isinstance(m, datetime) else m for m in found]
+    utc = pd.to_datetime(pd.Series(instants, index=deals.index), utc=True)
     moments = deals.assign(
-        announced_utc=pd.to_datetime(pd.Series(instants, index=deals.index), utc=True),
-        announced_date=pd.to_datetime(pd.Series(dates, index=deals.index)),
+        announced_utc=utc.dt.as_unit("s"),
+        announced_date=pd.Series(dates, index=deals.index, dtype=DAY),
     )
     return moments, findings
 

@@ -119,10 +119,7 @@ def _read_deals(
         Column("year", "number", optional="year" not in wanted.deal_numbers),
     ]
     columns = fixed + _extra(fixed, wanted.deal_numbers, wanted.deal_texts)
-    raw = read_table(source)
-    typed, findings = apply_contract(raw, source, columns, date_format)
-    if any(finding.rule == "missing_column" for finding in findings):
-        raise InputProblem(findings)
+    typed, findings = _typed(read_table(source), source, columns, date_format)
     moments, more = read_moments(typed, source, zone, date_format)
     findings += more
     deals, ledger, more = _one_row_a_deal(moments, source)
@@ -130,6 +127,16 @@ def _read_deals(
     no_year = deals["year"].isna()
     deals["year"] = deals["year"].where(~no_year, deals["announced_date"].dt.year)
     return (deals.drop(columns="announced_at"), ledger), findings
+
+
+def _typed(
+    raw: pd.DataFrame, source: Source, columns: list[Column], date_format: str
+) -> tuple[pd.DataFrame, list[Finding]]:
+    """The contracted columns; without one of them no further check of the file makes sense."""
+    typed, findings = apply_contract(raw, source, columns, date_format)
+    if any(finding.rule == "missing_column" for finding in findings):
+        raise InputProblem(findings)
+    return typed, findings
 
 
 def _extra(fixed: list[Column], numbers: tuple[str, ...], texts: tuple[str, ...]) -> list[Column]:
@@ -205,22 +212,34 @@ def _read_candidates(
         Column("deal_id", "text", why="the year's first deal of the company, empty if none"),
     ]
     columns = fixed + _extra(fixed, wanted.candidate_numbers, wanted.candidate_texts)
-    typed, findings = apply_contract(read_table(source), source, columns, date_format)
-    repeated = typed[typed.duplicated(["security", "year"], keep=False)]
-    if not repeated.empty:
-        findings.append(
-            Finding(
-                "conflicting_deal",
-                Severity.ERROR,
-                source.file,
-                got="several rows for one company and year",
-                expected="one row a company and year",
-                remedy="Keep one row.",
-                row=row_list(repeated[ROW]),
-                column="security, year",
-            )
+    typed, findings = _typed(read_table(source), source, columns, date_format)
+    years = typed[typed.duplicated(["security", "year"], keep=False)]
+    named = typed[typed["deal_id"] != ""]
+    deals = named[named.duplicated("deal_id", keep=False)]
+    findings += _repeats(years, source, ("security", "year"), "company and year")
+    return typed, findings + _repeats(deals, source, ("deal_id",), "deal")
+
+
+def _repeats(rows: pd.DataFrame, source: Source, key: tuple[str, ...], words: str) -> list[Finding]:
+    if rows.empty:
+        return []
+    return [
+        Finding(
+            "conflicting_deal",
+            Severity.ERROR,
+            source.file,
+            got=f"several rows for one {words}",
+            expected=f"one row a {words}",
+            remedy="Keep one row.",
+            row=row_list(rows[ROW]),
+            column=_theirs(source, key),
         )
-    return typed, findings
+    ]
+
+
+def _theirs(source: Source, names: tuple[str, ...]) -> str:
+    """Our names as the file has them."""
+    return ", ".join(source.columns.get(name, name) for name in names)
 
 
 def _read_prices(
@@ -233,12 +252,27 @@ def _read_prices(
         Column("volume", "number", optional=True),
     ]
     raw = read_table(source, [column.name for column in columns], only)
-    typed, findings = apply_contract(raw, source, columns, date_format)
+    typed, findings = _typed(raw, source, columns, date_format)
+    if typed.empty:
+        findings.append(_none_priced(source, only))
     bad = typed["close"] <= 0
     if bad.any():
         findings.append(_nonpositive(typed.loc[bad], source))
-    once, more = _one_row_a_date(typed, source, ["security", "date"])
+    once, more = _one_row_a_date(typed, source, ("security", "date"))
     return once, findings + more
+
+
+def _none_priced(source: Source, only: tuple[str, list[str]] | None) -> Finding:
+    named = only[1] if only else []
+    return Finding(
+        "no_prices",
+        Severity.ERROR,
+        source.file,
+        got=f"no price of {', '.join(named[:4])}" + (" or the others" if len(named) > 4 else ""),
+        expected="prices of the securities that deals and candidates name",
+        remedy="Compare the codes of the two tables.",
+        column=_theirs(source, ("security",)),
+    )
 
 
 def _nonpositive(rows: pd.DataFrame, source: Source) -> Finding:
@@ -260,11 +294,11 @@ def _read_benchmarks(source: Source, date_format: str) -> tuple[pd.DataFrame, li
         Column("date", "date", filled=True),
         Column("close", "number", why="the index level, dividends included if prices are"),
     ]
-    typed, findings = apply_contract(read_table(source), source, columns, date_format)
+    typed, findings = _typed(read_table(source), source, columns, date_format)
     bad = typed["close"] <= 0
     if bad.any():
         findings.append(_nonpositive(typed.loc[bad], source))
-    once, more = _one_row_a_date(typed, source, ["exchange", "date"])
+    once, more = _one_row_a_date(typed, source, ("exchange", "date"))
     return once, findings + more
 
 
@@ -276,7 +310,7 @@ def _read_factors(source: Source, date_format: str) -> tuple[pd.DataFrame, list[
         Column("date", "date", filled=True),
         *(Column(name, "number") for name in named),
     ]
-    typed, findings = apply_contract(raw, source, columns, date_format)
+    typed, findings = _typed(raw, source, columns, date_format)
     for name in named:
         spread = float(typed[name].std())
         if spread > 0.2:
@@ -291,17 +325,17 @@ def _read_factors(source: Source, date_format: str) -> tuple[pd.DataFrame, list[
                     column=name,
                 )
             )
-    once, more = _one_row_a_date(typed, source, ["exchange", "date"])
+    once, more = _one_row_a_date(typed, source, ("exchange", "date"))
     return once, findings + more
 
 
 def _one_row_a_date(
-    table: pd.DataFrame, source: Source, key: list[str]
+    table: pd.DataFrame, source: Source, key: tuple[str, str]
 ) -> tuple[pd.DataFrame, list[Finding]]:
     """Equal repeats are merged; values that differ on one date are an error."""
     content = [name for name in table.columns if name != ROW]
     once = table[~table.duplicated(content)].reset_index(drop=True)
-    conflict = once.duplicated(key, keep=False) & once["date"].notna()
+    conflict = once.duplicated(list(key), keep=False) & once["date"].notna()
     if not conflict.any():
         return once.drop(columns=ROW), []
     first = once[conflict].iloc[0]
@@ -313,6 +347,6 @@ def _one_row_a_date(
         expected=f"one row a {key[0]} and date",
         remedy="Keep the right one.",
         row=row_list(once.loc[conflict, ROW]),
-        column="close",
+        column=_theirs(source, key),
     )
     return once.drop(columns=ROW), [finding]

@@ -13,6 +13,7 @@ def cross_checks(study: Study, file: str) -> list[Finding]:
     """All findings about how the parts of a study fit together."""
     return [
         *_windows(study, file),
+        *_circles(study, file),
         *_roles(study, file),
         *_needs(study, file),
         *_zone(study, file),
@@ -54,6 +55,28 @@ def _windows(study: Study, file: str) -> Iterator[Finding]:
                 f"sessions {item.window[0]} to {item.window[1]}",
                 f"sessions that end before {min(first, 0)}, where the event windows begin",
                 "A control measured during the event would absorb the reaction: end it earlier.",
+            )
+
+
+def _circles(study: Study, file: str) -> Iterator[Finding]:
+    """Interactions that lead back to themselves."""
+    made_of = {name: item.interaction or [] for name, item in study.characteristics.items()}
+    for name in made_of:
+        reached: set[str] = set()
+        waiting = list(made_of[name])
+        while waiting:
+            part = waiting.pop()
+            if part not in reached:
+                reached.add(part)
+                waiting += made_of.get(part, [])
+        if name in reached:
+            yield _error(
+                "bad_value",
+                file,
+                f"characteristics.{name}.interaction",
+                f"{made_of[name]}, which lead back to '{name}'",
+                "columns, or characteristics made of others",
+                "Give the characteristic another name than what it multiplies.",
             )
 
 

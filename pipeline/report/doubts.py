@@ -1,0 +1,207 @@
+"""What would overturn the finding: diagnostics, sensitivity, the size in money, and limits."""
+
+from __future__ import annotations
+
+import math
+
+import pandas as pd
+
+from pipeline.core.estimate import Estimate
+from pipeline.report.document import (
+    Block,
+    Bullets,
+    Column,
+    Interval,
+    Paragraph,
+    Row,
+    Section,
+    Table,
+    Text,
+)
+from pipeline.report.graphs import sensitivity_figure, variant_digits
+from pipeline.report.headline import sensitivity_targets
+from pipeline.report.material import Material, capital, effect_digits, prose, taken
+from pipeline.report.numerals import BP, bp, bp_digits, count, digits_for, plain
+from pipeline.report.wording import any_cell, level_words, set_cell, set_words
+
+
+def diagnostics_section(material: Material) -> Section:
+    """Counts of verdicts and the table of checks."""
+    frame = material.results.diagnostics
+    if frame.empty:
+        return Section("Diagnostics", (prose("The run made no diagnostics."),))
+    passed, warned, failed = (
+        material.number(f"diagnostics_{verdict}") for verdict in ("pass", "warn", "fail")
+    )
+    opening = prose("Checks that pass: ", passed, "; that warn: ", warned, "; that fail: ",
+                    failed, ".")  # fmt: skip
+    return Section("Diagnostics", (opening, diagnostics_table(frame)))
+
+
+def diagnostics_table(frame: pd.DataFrame) -> Table:
+    """One row a check, its verdict in words, worst first."""
+    columns = (
+        Column("Verdict"), Column("Subject"), Column("Check"), Column("Value"),
+        Column("Threshold"), Column("What it means", prose=True), Column("Source", prose=True),
+    )  # fmt: skip
+    order = {"fail": 0, "warn": 1, "pass": 2}
+    ranked = frame.assign(rank=frame["verdict"].map(order).fillna(3))
+    ranked = ranked.sort_values("rank", kind="stable")
+    names = ("verdict", "subject", "check", "value", "threshold", "meaning", "source")
+    rows = tuple(tuple(any_cell(row[name]) for name in names) for _, row in ranked.iterrows())
+    return Table("diagnostics", prose("Diagnostics, the worst first"), columns, rows)
+
+
+def sensitivity_section(material: Material) -> Section | None:
+    """The numbers asked about under other choices; None if the run made no variants."""
+    blocks: list[Block] = []
+    for target in sensitivity_targets(material.results):
+        blocks += [_variants_sentence(material, target), sensitivity_figure(material, target)]
+    if not blocks:
+        return None
+    return Section("Sensitivity", (*blocks, sensitivity_table(material)))
+
+
+def _variants_sentence(material: Material, target: str) -> Paragraph:
+    digits = variant_digits(material, target)
+    low, high = (
+        material.number(f"sensitivity_{end}: {target}", scale=BP, digits=digits)
+        for end in ("low", "high")
+    )
+    variants = material.number(f"sensitivity_variants: {target}")
+    return prose("Over ", variants, " variants the ", taken(target, "check"), " runs from ", low,
+                 " to ", high, " bp.")  # fmt: skip
+
+
+def sensitivity_table(material: Material) -> Table:
+    """One row a variant, in basis points."""
+    level = level_words(material.study.level)
+    columns = (
+        Column("Number"), Column("What was varied"), Column("Variant"),
+        Column(f"Estimate with {level} interval", "bp"), Column("Deals", "n"),
+    )  # fmt: skip
+    rows = tuple(
+        _variant_row(target, row)
+        for target, variants in sensitivity_targets(material.results).items()
+        for _, row in variants.iterrows()
+    )
+    return Table("sensitivity", prose("Each variant"), columns, rows)
+
+
+def _variant_row(target: str, row: pd.Series[float]) -> Row:
+    estimate, low, high = (float(row[name]) for name in ("estimate", "ci_low", "ci_high"))
+    digits = bp_digits(BP * (high - low) / 4)
+    deals = float(row["n"])
+    return (
+        Text(target), any_cell(row["dimension"]), any_cell(row["variant"]),
+        Interval(bp(estimate, digits), bp(low, digits), bp(high, digits)),
+        count(int(deals)) if math.isfinite(deals) else None,
+    )  # fmt: skip
+
+
+def size_section(material: Material) -> Section | None:
+    """The effect in money and against the spread; None without anything to scale it by."""
+    tables = [t for t in (money_table(material), spread_table(material)) if t.rows]
+    return Section("Economic size", tuple(tables)) if tables else None
+
+
+def money_table(material: Material) -> Table:
+    """The mean reaction and the feature's effect in money at three market values."""
+    unit = material.study.currency
+    lead = material.lead
+    columns = [Column("At a market value of"), Column("Market value", unit),
+               Column("Mean reaction", unit)]  # fmt: skip
+    columns += [Column(f"Effect: {material.feature}", unit)] if lead else []
+    names = {"quarter": "lower quartile", "median": "median", "three_quarter": "upper quartile"}
+    rows: list[Row] = []
+    for key, words in names.items():
+        if material.known(f"{key}_market_value"):
+            value = material.number(f"{key}_market_value").value
+            start = (Text(f"the {words} deal"), plain(value, 0, unit))
+            rows.append((*start, *_money_cells(material, value)))
+    note = prose("The effect in basis points times the market value of the company; the interval "
+                 "likewise. A reaction over a few sessions is not a yearly return and is not "
+                 "scaled to one.")  # fmt: skip
+    return Table("money", prose("In money"), tuple(columns), tuple(rows), (note,))
+
+
+def _money_cells(material: Material, by: float) -> tuple[Interval, ...]:
+    unit, (low, high) = material.study.currency, material.tests.interval
+    digits = digits_for(by * (high - low) / 4, 2)
+    ends = (plain(by * low, digits, unit), plain(by * high, digits, unit))
+    cells = [Interval(plain(by * material.tests.mean, digits, unit), *ends)]
+    if material.lead is not None:
+        cells.append(_money_set(material.lead, by, unit))
+    return tuple(cells)
+
+
+def _money_set(lead: Estimate, by: float, unit: str) -> Interval:
+    term, found = lead.term(lead.treatment), lead.interval
+    digits = digits_for(by * term["std_error"], 2)
+    estimate = plain(by * term["coefficient"], digits, unit)
+    if set_cell(0.0, found, 0).words:
+        return Interval(estimate, None, None, set_words(found, digits, by, unit))
+    return Interval(estimate, plain(by * found.low, digits), plain(by * found.high, digits))
+
+
+def spread_table(material: Material) -> Table:
+    """What one standard deviation of each variable goes with, by the lead column."""
+    lead, deals = material.lead, material.results.deals
+    columns = (
+        Column("Variable"), Column("Standard deviation"),
+        Column("One standard deviation goes with", "bp"),
+        Column("As a share of the spread of reactions", "%"),
+    )  # fmt: skip
+    names = [n for n in lead.names if n in deals] if lead else []
+    rows = [_spread_row(material, lead, name) for name in names if lead is not None]
+    title = prose("By one standard deviation, in the lead column")
+    return Table("spread", title, columns, tuple(row for row in rows if row is not None))
+
+
+def _spread_row(material: Material, lead: Estimate, name: str) -> Row | None:
+    values = pd.to_numeric(material.results.deals[name], errors="coerce").astype(float)
+    deviation = float(values.std())
+    if not math.isfinite(deviation) or deviation == 0:
+        return None
+    term = lead.term(name)
+    error = deviation * term["std_error"]
+    digits = effect_digits(lead) if name == lead.treatment else bp_digits(BP * error)
+    move = deviation * term["coefficient"]
+    spread = material.tests.std_dev
+    return (
+        Text(capital(material.study.words(name))), plain(deviation), bp(move, digits),
+        plain(100 * move / spread, 0, "%") if spread > 0 else None,
+    )  # fmt: skip
+
+
+def limits_section(material: Material) -> Section:
+    """What the design cannot say."""
+    return Section("Limits", (Bullets(limits(material)),))
+
+
+def limits(material: Material) -> tuple[Paragraph, ...]:
+    """The limits that follow from the results, then those of any such study."""
+    found = [
+        prose("A price reaction is what investors thought at the time, less what they had "
+              "expected. News that had leaked is not in it.", lead="Anticipation."),
+        prose("A reaction around the announcement says nothing of how the deal turned out.",
+              lead="Horizon."),
+    ]  # fmt: skip
+    if material.study.treatment:
+        found.append(prose("The feature was chosen. Reasons for the choice that no column "
+                           "controls for stand in the number.", lead="Choice."))  # fmt: skip
+    if len(material.study.windows) > 1:
+        found.append(prose("Several windows were looked at; only the headline one was declared "
+                           "to lead.", lead="Many looks."))  # fmt: skip
+    if material.number("deals_dropped").value:
+        found.append(prose("Deals dropped: ", material.number("deals_dropped"), " of ",
+                           material.number("deals_read"), ". They may differ from those kept.",
+                           lead="Lost deals."))  # fmt: skip
+    found.append(prose("The finding is an average of the deals in the sample. Other markets, "
+                       "years and kinds of deal may differ.", lead="Reach."))  # fmt: skip
+    found.append(prose("An interval that holds zero does not show that there is no effect; it "
+                       "shows what the sample could not tell apart from none.",
+                       lead="No effect."))  # fmt: skip
+    warnings = [f for f in material.results.findings if f.severity != "note"]
+    found += [prose(taken(f"{f.where}: {f.got}", "check"), lead="Input.") for f in warnings[:3]]
+    return tuple(found)

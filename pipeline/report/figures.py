@@ -1,0 +1,252 @@
+"""Drawing: figure values to SVG and PNG, the same bytes every time.
+
+Groups differ by line, marker and colour at once, so that the pictures read in grey. Nothing of
+the plotting library's global state is used.
+"""
+
+from __future__ import annotations
+
+import io
+import textwrap
+from collections.abc import Callable, Mapping
+from typing import TYPE_CHECKING, Any
+
+import matplotlib as mpl
+import numpy as np
+import pandas as pd
+from matplotlib.backends.backend_agg import FigureCanvasAgg
+from matplotlib.backends.backend_svg import FigureCanvasSVG
+from matplotlib.figure import Figure as Canvas
+
+from pipeline.report.document import Figure
+from pipeline.report.numerals import clean, show
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+
+# Blue and vermilion of the Okabe-Ito palette: apart for every kind of colour vision, and of
+# different lightness.
+COLOURS = ("#0072b2", "#d55e00", "#333333", "#009e73")
+LINES = ("-", (0, (6, 2)), (0, (2, 1.5)), "-.")
+MARKERS = ("o", "s", "^", "D")
+INK, FAINT, STRIP = "#222222", "#8a8a8a", "#ececec"
+WIDTH = 7.2
+LABELLED = 40
+
+STYLE: dict[Any, Any] = {
+    "svg.hashsalt": "dealwake",
+    "svg.fonttype": "none",
+    "text.parse_math": False,
+    "axes.unicode_minus": True,
+    "font.family": "DejaVu Sans",
+    "font.size": 9.5,
+    "axes.edgecolor": FAINT,
+    "axes.labelcolor": INK,
+    "text.color": INK,
+    "xtick.color": INK,
+    "ytick.color": INK,
+    "axes.spines.top": False,
+    "axes.spines.right": False,
+    "axes.linewidth": 0.8,
+    "axes.facecolor": "none",
+}
+
+
+def svg(figure: Figure, *, titled: bool = False) -> str:
+    """The figure as an SVG document, without dates; text stays text."""
+    with mpl.rc_context(STYLE):
+        canvas = _draw(figure, titled)
+        FigureCanvasSVG(canvas)
+        buffer = io.StringIO()
+        metadata: dict[str, Any] = dict.fromkeys(("Date", "Creator", "Format", "Type"))
+        canvas.savefig(buffer, format="svg", metadata=metadata, facecolor="none")
+    lines = (line.rstrip() for line in buffer.getvalue().splitlines())
+    return "\n".join(lines) + "\n"
+
+
+def png(figure: Figure, *, dpi: int = 200) -> bytes:
+    """The figure as a PNG picture, without its title, which the page prints as words."""
+    with mpl.rc_context(STYLE):
+        canvas = _draw(figure, False)
+        FigureCanvasAgg(canvas)
+        buffer = io.BytesIO()
+        canvas.savefig(buffer, format="png", dpi=dpi, metadata={"Software": None})
+    return buffer.getvalue()
+
+
+def csv(data: pd.DataFrame) -> bytes:
+    """The drawn data; words that a spreadsheet would run as a formula get an apostrophe."""
+
+    def safe(value: object) -> object:
+        risky = isinstance(value, str) and value.lstrip()[:1] in ("=", "+", "-", "@")
+        return f"'{value}" if risky else value
+
+    return data.map(safe).to_csv(index=False, lineterminator="\n").encode()
+
+
+def _draw(figure: Figure, titled: bool) -> Canvas:
+    height = DRAWINGS[figure.kind][0](figure.data)
+    title = _wrapped(figure.title.text, 78, 4) if titled else ""
+    lines = title.count("\n") + 1 if title else 0
+    canvas = Canvas(figsize=(WIDTH, height + 0.24 * lines), layout="constrained")
+    DRAWINGS[figure.kind][1](canvas, figure)
+    if title:
+        canvas.suptitle(title, x=0.02, ha="left", fontsize=11, fontweight="bold")
+    return canvas
+
+
+def _path(canvas: Canvas, figure: Figure) -> None:
+    axes = canvas.subplots()
+    axes.axvspan(figure.marks["from"] - 0.5, figure.marks["to"] + 0.5, color=STRIP, lw=0)
+    axes.axhline(0, color=FAINT, lw=0.8)
+    axes.axvline(0, color=FAINT, lw=0.8, ls=(0, (1, 2)))
+    ends = []
+    for at, (group, path) in enumerate(figure.data.groupby("group", sort=False)):
+        colour, marker = COLOURS[at % 4], MARKERS[at % 4]
+        x, y = path["session"], path["mean_bp"]
+        axes.fill_between(x, path["low_bp"], path["high_bp"], color=colour, alpha=0.13, lw=0)
+        every = max(1, len(path) // 8)
+        axes.plot(
+            x, y, color=colour, ls=LINES[at % 4], lw=1.8, marker=marker, ms=4.5, markevery=every
+        )
+        ends.append((str(group), float(x.iloc[-1]), float(y.iloc[-1]), colour))
+    axes.set_xlabel("Sessions from the announcement")
+    axes.set_ylabel("Mean cumulative abnormal return (bp)")
+    _ticks(axes)
+    axes.set_xlim(figure.data["session"].min() - 0.5, figure.data["session"].max() + 0.5)
+    _end_labels(axes, ends)
+
+
+def _end_labels(axes: Axes, ends: list[tuple[str, float, float, str]]) -> None:
+    """Name the lines at their ends, pushed apart where they would meet."""
+    low, high = axes.get_ylim()
+    texts = [_wrapped(name, 18, 3) for name, *_ in ends]
+    heights = [(high - low) * 0.055 * (text.count("\n") + 1) for text in texts]
+    order = sorted(range(len(ends)), key=lambda i: ends[i][2])
+    places: dict[int, float] = {}
+    for before, at in zip([None, *order], order, strict=False):
+        y = ends[at][2]
+        if before is not None:
+            y = max(y, places[before] + (heights[before] + heights[at]) / 2)
+        places[at] = y
+    for at, (_, x, _, colour) in enumerate(ends):
+        axes.annotate(texts[at], (x, places[at]), (7, 0), textcoords="offset points",
+                      color=colour, va="center", annotation_clip=False)  # fmt: skip
+
+
+def _distribution(canvas: Canvas, figure: Figure) -> None:
+    groups = list(dict.fromkeys(figure.data["group"]))
+    panels = canvas.subplots(len(groups), 1, sharex=True, sharey=True, squeeze=False)[:, 0]
+    for at, (axes, group) in enumerate(zip(panels, groups, strict=True)):
+        bars = figure.data[figure.data["group"] == group]
+        colour = COLOURS[at % 4]
+        width = bars["to_bp"] - bars["from_bp"]
+        axes.bar(bars["from_bp"], bars["share_percent"], width, align="edge", color=colour,
+                 alpha=0.55, edgecolor="white", lw=0.6, hatch="" if at == 0 else "///")  # fmt: skip
+        axes.axvline(0, color=FAINT, lw=0.8)
+        median = figure.marks[f"median: {group}"]
+        axes.axvline(median, color=INK, lw=1.4, ls=(0, (4, 2)))
+        facts = f"{int(bars['deals'].sum()):,} deals, median {show(median)} bp"
+        words = f"{_wrapped(str(group), 60, 2)}\n{facts}"
+        axes.text(0.99, 0.95, words, transform=axes.transAxes, ha="right", va="top", color=colour)
+        axes.set_ylabel("Share of deals (%)")
+        _ticks(axes)
+    panels[-1].set_xlabel("Cumulative abnormal return in the headline window (bp)")
+
+
+def _intervals(canvas: Canvas, figure: Figure) -> None:
+    data = figure.data.reset_index(drop=True)
+    crowded = len(data) > LABELLED
+    if crowded:
+        data = data.sort_values("estimate_bp", ascending=False, ignore_index=True)
+    axes = canvas.subplots()
+    axes.axvline(0, color=FAINT, lw=0.8)
+    if "estimate" in figure.marks:
+        axes.axvline(figure.marks["estimate"], color=INK, lw=0.9, ls=(0, (4, 2)))
+    left, right = _reach(data)
+    for at, row in data.iterrows():
+        _interval_row(axes, -float(str(at)), row, left, right, crowded)
+    axes.set_xlim(left, right)
+    axes.set_ylim(-len(data) + 0.4, 0.6)
+    axes.set_yticks([] if crowded else [-float(i) for i in range(len(data))])
+    axes.set_yticklabels([] if crowded else [_label(row) for _, row in data.iterrows()])
+    axes.tick_params(axis="y", length=0, pad=10)
+    axes.spines["left"].set_visible(False)
+    axes.set_xlabel(_wrapped(figure.axis, 70, 2))
+    if crowded:
+        axes.set_ylabel("Variants in order of size; names in the table")
+    _ticks(axes, y=False)
+
+
+def _label(row: pd.Series[Any]) -> str:
+    parts = (clean(str(row["dimension"])), clean(str(row["label"])))
+    return _wrapped(": ".join(part for part in parts if part), 38, 3)
+
+
+def _wrapped(text: str, width: int, lines: int) -> str:
+    """``text`` on at most ``lines`` lines, an ellipsis where it was cut."""
+    return "\n".join(textwrap.wrap(clean(text), width, max_lines=lines, placeholder=" …"))
+
+
+def _reach(data: pd.DataFrame) -> tuple[float, float]:
+    """The span of the axis: all estimates and ends, odd ends far away left to arrows."""
+    every = data[["estimate_bp", "low_bp", "high_bp"]].to_numpy(dtype=np.float64).ravel()
+    found = np.append(every[np.isfinite(every)], 0.0)
+    middle = data["estimate_bp"].to_numpy(dtype=np.float64)
+    bounded = data[data["shape"] == "interval"]
+    spread = float((bounded["high_bp"] - bounded["low_bp"]).max()) if len(bounded) else 1.0
+    low = max(found.min(), middle.min() - 3 * spread)
+    high = min(found.max(), middle.max() + 3 * spread)
+    low, high = min(low, 0.0), max(high, 0.0)
+    margin = 0.06 * (high - low) or 1.0
+    return low - margin, high + margin
+
+
+def _interval_row(
+    axes: Axes, y: float, row: pd.Series[Any], left: float, right: float, crowded: bool
+) -> None:
+    style: dict[str, Any] = {"color": COLOURS[0], "lw": 1.0 if crowded else 1.8}
+    for low, high in _segments(row, left, right):
+        axes.plot([low, high], [y, y], solid_capstyle="butt", **style)
+        for end, edge, marker in ((low, left, "<"), (high, right, ">")):
+            if end == edge:
+                axes.plot([end], [y], marker=marker, ms=6, clip_on=False, color=COLOURS[0])
+    face = COLOURS[1] if row["lead"] else "white"
+    axes.plot([row["estimate_bp"]], [y], marker="s" if row["lead"] else "o", mfc=face,
+              mec=COLOURS[1] if row["lead"] else COLOURS[0], mew=1.4,
+              ms=3.5 if crowded else 6.5, ls="")  # fmt: skip
+    if row["shape"] == "empty":
+        axes.annotate("empty set", (row["estimate_bp"], y), (8, 0), textcoords="offset points",
+                      va="center", fontsize=8.5)  # fmt: skip
+
+
+def _segments(row: pd.Series[Any], left: float, right: float) -> list[tuple[float, float]]:
+    """What of the axis the set covers, cut at the axis's ends."""
+    low, high = float(row["low_bp"]), float(row["high_bp"])
+    spans = {
+        "interval": [(low, high)],
+        "two rays": [(left, low), (high, right)],
+        "the whole line": [(left, right)],
+        "empty": [],
+    }[str(row["shape"])]
+    cut = [(max(a, left), min(b, right)) for a, b in spans]
+    return [(a, b) for a, b in cut if a <= b]
+
+
+def _ticks(axes: Axes, *, y: bool = True) -> None:
+    """Tick labels with thousands separated and a true minus sign."""
+    for axis in (axes.xaxis, axes.yaxis) if y else (axes.xaxis,):
+        axis.set_major_locator(mpl.ticker.MaxNLocator(7, steps=[1, 2, 2.5, 5, 10]))
+        axis.set_major_formatter(mpl.ticker.FuncFormatter(_tick))
+
+
+def _tick(value: float, _: int | None) -> str:
+    return show(value, 0 if float(value).is_integer() else 1)
+
+
+Drawing = tuple[Callable[[pd.DataFrame], float], Callable[[Canvas, Figure], None]]
+DRAWINGS: Mapping[str, Drawing] = {
+    "path": (lambda data: 4.0, _path),
+    "distribution": (lambda data: 1.0 + 1.6 * data["group"].nunique(), _distribution),
+    "intervals": (lambda data: 1.0 + min(0.34 * len(data), 7.0), _intervals),
+}

@@ -1,0 +1,96 @@
+"""Renderer of the report: one self-contained page that asks for nothing from anywhere."""
+
+from __future__ import annotations
+
+import re
+from functools import cache
+
+from jinja2 import Environment, PackageLoader, StrictUndefined, Template
+from markupsafe import Markup
+
+from pipeline.core.results import Results
+from pipeline.report.content import report
+from pipeline.report.document import Cell, Document, Figure, Interval, Number, Quote, Table, Text
+from pipeline.report.figures import svg
+from pipeline.report.numerals import clean, lines, slug
+
+_PROLOGUE = re.compile(r"<\?xml.*?\?>\s*<!DOCTYPE.*?>\s*", re.DOTALL)
+_METADATA = re.compile(r"\s*<metadata>.*?</metadata>", re.DOTALL)
+_STYLE = re.compile(r"\s*<defs>\s*<style.*?</style>\s*</defs>", re.DOTALL)
+_ROOT = re.compile(r"<svg (?:[^>]*?)viewBox=\"([^\"]+)\"[^>]*>", re.DOTALL)
+
+
+def render(results: Results) -> dict[str, bytes]:
+    """``report.html``."""
+    return {"report.html": page(report(results)).encode()}
+
+
+def page(document: Document) -> str:
+    """The document as well-formed HTML, style and pictures inside.
+
+    Words are escaped; the page's own policy forbids scripts and requests.
+    """
+    return _template().render(document=document) + "\n"
+
+
+@cache
+def _template() -> Template:
+    environment = Environment(
+        loader=PackageLoader("pipeline.report", ""),
+        autoescape=True,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        undefined=StrictUndefined,
+    )
+    environment.filters |= {
+        "kind": lambda value: type(value).__name__.lower(),
+        "clean": clean,
+        "slug": slug,
+        "lines": lines,
+        "picture": picture,
+        "source": source,
+        "numeric": numeric,
+        "column_class": column_class,
+    }
+    css = environment.loader.get_source(environment, "page.css")[0] if environment.loader else ""
+    environment.globals["css"] = Markup(css)
+    return environment.get_template("page.html.j2")
+
+
+def numeric(cell: Cell) -> bool:
+    """Whether a cell's content lines up as a number and stays on one line."""
+    worded = isinstance(cell, Text) or (isinstance(cell, Interval) and bool(cell.words))
+    return cell is not None and not worded
+
+
+def column_class(table: Table, at: int) -> str:
+    """What a column holds: plain numbers, sentences, or other."""
+    cells = [row[at] for row in table.rows if row[at] is not None]
+    if table.columns[at].prose:
+        return "prose"
+    if at and cells and all(isinstance(cell, Number) for cell in cells):
+        return "figures"
+    return "words"
+
+
+def source(quote: Quote) -> str:
+    """Where a quoted number stands, for the person who points at it."""
+    where = clean(", ".join(f"{name} {value}" for name, value in quote.where))
+    return f"data/{quote.table}.parquet: {quote.column} where {where}"
+
+
+def picture(figure: Figure) -> Markup:
+    """The figure's SVG to stand inside a page: no prologue, ids of its own, named for readers."""
+    text = svg(figure)
+    for pattern in (_PROLOGUE, _METADATA, _STYLE):
+        text = pattern.sub("", text)
+    prefix = f"{figure.name}-"
+    text = re.sub(r'\bid="', f'id="{prefix}', text)
+    text = re.sub(r'href="#', f'href="#{prefix}', text)
+    text = re.sub(r"url\(#", f"url(#{prefix}", text)
+    label = Markup("{}").format(clean(figure.alt))
+    opening = (
+        '<svg xmlns="http://www.w3.org/2000/svg" xmlns:xlink="http://www.w3.org/1999/xlink" '
+        rf'viewBox="\1" role="img" aria-label="{label}">'
+    )
+    return Markup(_ROOT.sub(lambda m: opening.replace(r"\1", m.group(1)), text, count=1).strip())

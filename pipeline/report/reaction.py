@@ -1,0 +1,141 @@
+"""Is the reaction real: the average path, the spread over deals, windows and their tests."""
+
+from __future__ import annotations
+
+import math
+
+from pipeline.core.estimate import NotApplicable, TestResult
+from pipeline.core.results import WindowTests
+from pipeline.report.document import (
+    Block,
+    Cell,
+    Column,
+    Interval,
+    Paragraph,
+    Section,
+    Statistic,
+    Table,
+    Text,
+)
+from pipeline.report.finding import agreement_sentence, reaction_sentence
+from pipeline.report.graphs import distribution_figure, path_figure
+from pipeline.report.material import Material, prose, taken
+from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, percent, plain
+from pipeline.report.wording import distribution_words, level_words, window_label
+
+
+def reaction_section(material: Material) -> Section:
+    """Figures of the path and of the spread, and the tables of windows and tests."""
+    opening = prose(reaction_sentence(material), agreement_sentence(material))
+    figures = [path_figure(material), distribution_figure(material)]
+    tables = [windows_table(material), *(tests_table(material, m) for m in models(material))]
+    blocks: list[Block] = [opening, *(f for f in figures if f is not None), *tables]
+    return Section("Is the reaction real", (*blocks, assumptions_table(material)))
+
+
+def models(material: Material) -> tuple[str, ...]:
+    """The expected-return models that were tested, the headline one first."""
+    return tuple(dict.fromkeys(entry.model for entry in material.results.window_tests))
+
+
+def windows_table(material: Material) -> Table:
+    """One row a window and expected-return model."""
+    level = level_words(material.study.level)
+    columns = (
+        Column("Window", "sessions"), Column("Expected return"), Column("Declared as"),
+        Column("Deals", "n"), Column(f"Mean with {level} interval", "bp"), Column("Median", "bp"),
+        Column("Standard deviation", "bp"), Column("Share above zero", "%"),
+    )  # fmt: skip
+    rows = tuple(_window_row(material, entry) for entry in material.results.window_tests)
+    notes = (
+        prose("Cumulative abnormal returns, in basis points of the share price, over the sessions "
+              "stated, counted from the session that could first react."),
+        prose("The headline window and model were declared before looking; the others are "
+              "secondary."),
+    )  # fmt: skip
+    return Table("windows", prose("The reaction by window"), columns, rows, notes)
+
+
+def is_headline(material: Material, entry: WindowTests) -> bool:
+    """Whether an entry is the one declared before looking."""
+    return entry is material.tests
+
+
+def _window_row(material: Material, entry: WindowTests) -> tuple[Cell, ...]:
+    low, high = entry.interval
+    digits = bp_digits(BP * (high - low) / 4)
+    return (
+        Text(window_label(entry.window.label)),
+        Text(material.study.words(entry.model)),
+        Text("headline" if is_headline(material, entry) else "secondary"),
+        count(entry.n),
+        Interval(bp(entry.mean, digits), bp(low, digits), bp(high, digits)),
+        bp(entry.median, digits),
+        bp(entry.std_dev),
+        percent(entry.share_positive),
+    )
+
+
+def tests_table(material: Material, model: str) -> Table:
+    """One row a test and one column a window, under one expected-return model."""
+    entries = [entry for entry in material.results.window_tests if entry.model == model]
+    titles = test_titles(entries)
+    columns = [Column("Test")]
+    for entry in entries:
+        mark = ", headline" if is_headline(material, entry) else ""
+        columns.append(Column(f"{window_label(entry.window.label)}{mark}", "statistic, p"))
+    rows = tuple(
+        (Text(title), *(_test_cell(entry, key) for entry in entries))
+        for key, title in titles.items()
+    )
+    title = prose("Tests of a zero mean, ", taken(material.study.words(model), "study"))
+    name = "tests" if model == models(material)[0] else f"tests_{model}"
+    return Table(name, title, tuple(columns), rows, _test_notes(material, entries))
+
+
+def test_titles(entries: list[WindowTests]) -> dict[str, str]:
+    """Test key -> its title, in the order met."""
+    return {key: test.name for entry in entries for key, test in entry.tests.items()}
+
+
+def _test_cell(entry: WindowTests, key: str) -> Cell:
+    test = entry.tests.get(key)
+    if test is None:
+        return None
+    if isinstance(test, NotApplicable):
+        return Text("no answer")
+    statistic = plain(test.statistic, 2)
+    if statistic is None:
+        return Text("no answer")
+    return Statistic(statistic, p_value(test.p_value), p_value(entry.p_holm.get(key, math.nan)))
+
+
+def _test_notes(material: Material, entries: list[WindowTests]) -> tuple[Paragraph, ...]:
+    notes = [
+        prose("Each cell: the statistic, its p-value, and the p-value adjusted for the number of "
+              "secondary windows (Holm) where there is one. All p-values are two-sided.")
+    ]  # fmt: skip
+    silent: dict[tuple[str, str], list[str]] = {}
+    for entry in entries:
+        for test in entry.tests.values():
+            if isinstance(test, NotApplicable):
+                label = window_label(entry.window.label)
+                silent.setdefault((test.name, test.reason), []).append(label)
+    for (name, reason), windows in silent.items():
+        where = "" if len(windows) == len(entries) else f", {' '.join(windows)}"
+        notes.append(prose("No answer: ", taken(f"{name}{where}: {reason}", "test")))
+    return tuple(notes)
+
+
+def assumptions_table(material: Material) -> Table:
+    """What each test supposes: its null, its distribution in the headline window, its caution."""
+    columns = (
+        Column("Test"), Column("Null hypothesis", prose=True), Column("Distribution"),
+        Column("Where it does not hold", prose=True), Column("Source", prose=True),
+    )  # fmt: skip
+    made = [t for t in material.tests.tests.values() if isinstance(t, TestResult)]
+    rows = tuple(
+        (Text(t.name), Text(t.null), Text(distribution_words(t)), Text(t.caution), Text(t.citation))
+        for t in made
+    )
+    return Table("test_assumptions", prose("What each test supposes"), columns, rows)

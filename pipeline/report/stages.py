@@ -1,0 +1,138 @@
+"""What stands behind the columns: the tests of each, first stages, and the argued part."""
+
+from __future__ import annotations
+
+from pipeline.core.estimate import Estimate, NotApplicable, TestResult
+from pipeline.report.document import (
+    Block,
+    Cell,
+    Column,
+    Interval,
+    Paragraph,
+    Row,
+    Section,
+    Table,
+    Text,
+    Verbatim,
+)
+from pipeline.report.material import Material, capital, prose, taken
+from pipeline.report.numerals import (
+    BP,
+    bp_digits,
+    count,
+    digits_for,
+    p_value,
+    plain,
+    shown,
+)
+from pipeline.report.wording import df_words, distribution_words, level_words
+
+
+def identification_section(material: Material) -> Section:
+    """The analyst's arguments, then tests and first stages column by column."""
+    blocks: list[Block] = []
+    if material.study.rationales:
+        blocks.append(prose("No test replaces these arguments. They are the analyst's, printed "
+                            "as written."))  # fmt: skip
+        blocks += [
+            Paragraph((Verbatim(text, "study"),), lead=heading, quotation=True)
+            for heading, text in material.study.rationales.items()
+        ]
+    else:
+        blocks.append(prose("The study file holds no argument for how the effect is identified."))
+    tests = column_tests_table(material)
+    blocks += [tests] if tests.rows else []
+    for position, estimate in enumerate(material.results.columns):
+        if isinstance(estimate, Estimate):
+            blocks += [
+                stage_table(material, estimate, stage, f"stage_{position + 1}_{at + 1}")
+                for at, stage in enumerate(estimate.stages)
+            ]
+    return Section("First stages and identification", tuple(blocks))
+
+
+def column_tests_table(material: Material) -> Table:
+    """One row a test a column: null, statistic, distribution, p, caution, source."""
+    columns = (
+        Column("Column"), Column("Test"), Column("Null hypothesis", prose=True),
+        Column("Statistic"), Column("Distribution"), Column("p"),
+        Column("Caution", prose=True), Column("Source", prose=True),
+    )  # fmt: skip
+    named = [
+        (parent.title if source is parent else f"{parent.title}: {source.title}", test)
+        for parent in material.estimates
+        for source in (parent, *parent.stages)
+        for test in source.tests.values()
+    ]
+    rows = tuple(_test_row(material, title, test) for title, test in named)
+    return Table("column_tests", prose("Tests of each column and its stages"), columns, rows)
+
+
+def _test_row(material: Material, title: str, test: TestResult | NotApplicable) -> Row:
+    if isinstance(test, NotApplicable):
+        reason = Text(material.in_words(f"no answer: {test.reason}"))
+        return (Text(title), Text(test.name), None, None, None, None, reason, None)
+    facts = "; ".join(f"{key.replace('_', ' ')}: {_fact(v)}" for key, v in test.facts.items())
+    caution = ". ".join(part.rstrip(".") for part in (test.caution, facts) if part)
+    return (
+        Text(title), Text(test.name), Text(material.in_words(test.null)),
+        plain(test.statistic, 2), Text(distribution_words(test)), p_value(test.p_value),
+        Text(material.in_words(caution)), Text(test.citation),
+    )  # fmt: skip
+
+
+def _fact(value: float) -> str:
+    return shown(plain(float(value)))
+
+
+def stage_table(material: Material, parent: Estimate, stage: Estimate, name: str) -> Table:
+    """One stage's coefficients; in basis points where it explains what its column explains."""
+    same = stage.outcome == parent.outcome
+    scale, unit = (BP, "bp per unit") if same else (1.0, "per unit")
+    level = level_words(stage.level)
+    columns = (
+        Column("Variable"), Column(f"Coefficient with {level} interval", unit),
+        Column("Standard error", unit), Column("Statistic"), Column("p"),
+    )  # fmt: skip
+    rows = [_term_row(material, stage, term, scale, same) for term in stage.names]
+    footer = _stage_footer(material, stage)
+    title = prose(taken(f"{parent.title}: {stage.title}", "estimate"))
+    notes = _stage_notes(material, stage)
+    return Table(name, title, columns, (*rows, *footer), notes, footer=len(rows))
+
+
+def _stage_footer(material: Material, stage: Estimate) -> list[Row]:
+    facts: list[tuple[str, Cell]] = [("Rows (n)", count(stage.n, "rows"))]
+    facts += [
+        (f"Clusters: {material.study.words(name)}", count(number, "clusters"))
+        for name, number in stage.clusters.items()
+    ]
+    facts.append(("Covariance", Text(material.in_words(stage.covariance_name))))
+    facts.append(("Degrees of freedom", Text(df_words(stage.df))))
+    return [(Text(title), cell, None, None, None) for title, cell in facts]
+
+
+def _term_row(material: Material, stage: Estimate, name: str, scale: float, same: bool) -> Row:
+    term = {key: float(value) for key, value in stage.term(name).items()}
+    error = scale * term["std_error"]
+    digits = bp_digits(error) if same else digits_for(error, 6)
+    unit = "bp" if same else ""
+
+    def cell(key: str) -> Cell:
+        return plain(scale * term[key], digits, unit)
+
+    low, high = plain(scale * term["ci_low"], digits), plain(scale * term["ci_high"], digits)
+    return (
+        Text(capital(material.study.words(name))),
+        Interval(plain(scale * term["coefficient"], digits), low, high),
+        cell("std_error"),
+        plain(term["statistic"], 2),
+        p_value(term["p_value"]),
+    )
+
+
+def _stage_notes(material: Material, stage: Estimate) -> tuple[Paragraph, ...]:
+    explained = prose("Explained: ", taken(material.in_words(stage.outcome), "estimate"), ".")
+    facts = (stage.df_rule, *stage.notes)
+    words = (capital(material.in_words(fact)).rstrip(".") for fact in facts if fact.strip())
+    return (explained, *(prose(taken(f"{text}.", "estimate")) for text in words))

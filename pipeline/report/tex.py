@@ -1,0 +1,118 @@
+"""Renderer of the tables for LaTeX: one file a table, for the packages booktabs and array."""
+
+from __future__ import annotations
+
+import re
+from itertools import zip_longest
+
+from pipeline.core.results import Results
+from pipeline.report.content import report
+from pipeline.report.document import Cell, Number, Table
+from pipeline.report.numerals import MINUS, clean, lines
+
+_ESCAPES = {
+    "\\": r"\textbackslash{}",
+    "{": r"\{",
+    "}": r"\}",
+    "$": r"\$",
+    "&": r"\&",
+    "#": r"\#",
+    "%": r"\%",
+    "_": r"\_",
+    "^": r"\textasciicircum{}",
+    "~": r"\textasciitilde{}",
+    "<": r"\textless{}",
+    ">": r"\textgreater{}",
+    "|": r"\textbar{}",
+    '"': r"\textquotedbl{}",
+    "[": "{[}",
+    "]": "{]}",
+    MINUS: "$-$",
+    "–": "--",
+    "—": "---",
+    "’": "'",
+    "‘": "`",
+    "“": "``",
+    "”": "''",
+    "…": r"\ldots{}",
+    "≤": r"$\leq$",
+    "≥": r"$\geq$",
+    "±": r"$\pm$",
+    "×": r"$\times$",
+    "²": r"\textsuperscript{2}",
+    "§": r"\S{}",
+    "χ": r"$\chi$",
+    "α": r"$\alpha$",
+    "β": r"$\beta$",
+    "δ": r"$\delta$",
+    "λ": r"$\lambda$",
+    "ρ": r"$\rho$",
+    "σ": r"$\sigma$",
+    "τ": r"$\tau$",
+    "ω": r"$\omega$",
+}  # fmt: skip
+_SPECIAL = re.compile("|".join(re.escape(mark) for mark in _ESCAPES))
+# Characters of the small type that fit beside one another in an ordinary text width.
+ROOM = 84
+
+
+def render(results: Results) -> dict[str, bytes]:
+    """``tables/<name>.tex`` for every table that is not to be filled in by hand."""
+    tables = (table for table in report(results).tables if not table.form)
+    return {f"tables/{table.name}.tex": tabular(table).encode() for table in tables}
+
+
+def tabular(table: Table) -> str:
+    """A table environment to be read with ``\\input``; needs booktabs and array."""
+    size = r"\centering\footnotesize" if len(table.columns) < 7 else r"\centering\scriptsize"
+    body = [line for at, row in enumerate(table.page_rows) for line in _row(table, at, row)]
+    head = " & ".join(escape(column.heading) for column in table.columns)
+    notes = [rf"\par\footnotesize {escape(note.text)}" for note in table.notes]
+    return "\n".join(
+        [
+            r"\begin{table}[htbp]", size, r"\setlength{\tabcolsep}{4pt}",
+            rf"\caption{{{escape(table.title.text)}}}", rf"\label{{tab:{table.name}}}",
+            rf"\begin{{tabular}}{{@{{}}{_alignment(table)}@{{}}}}", r"\toprule",
+            rf"{head} \\", r"\midrule", *body, r"\bottomrule", r"\end{tabular}",
+            *notes, r"\end{table}", "",
+        ]
+    )  # fmt: skip
+
+
+def escape(text: str) -> str:
+    """``text`` as LaTeX prints it: every command character disarmed, on one line."""
+    flat = " ".join(clean(text).split())
+    return _SPECIAL.sub(lambda found: _ESCAPES[found.group()], flat)
+
+
+def _alignment(table: Table) -> str:
+    """Natural columns where the table fits; columns of a share of the text width where not."""
+    needs = [_need(table, at) for at in range(len(table.columns))]
+    if sum(needs) + 2 * len(needs) <= ROOM:
+        return "".join("r" if _figures(table, at) else "l" for at in range(len(needs)))
+    narrow = [float(min(need, 26)) for need in needs]
+    shares = (need / sum(narrow) for need in narrow)
+    return "".join(_paragraphs(share) for share in shares)
+
+
+def _paragraphs(share: float) -> str:
+    width = rf"\dimexpr {share:.4f}\textwidth-2\tabcolsep\relax"
+    return rf">{{\raggedright\arraybackslash}}p{{{width}}}"
+
+
+def _need(table: Table, at: int) -> int:
+    """Characters a column would like to have."""
+    cells = (line for row in table.page_rows for line in lines(row[at]))
+    return max((len(text) for text in (table.columns[at].heading, *cells)), default=1) or 1
+
+
+def _figures(table: Table, at: int) -> bool:
+    cells = [row[at] for row in table.page_rows if row[at] is not None]
+    return at > 0 and bool(cells) and all(isinstance(cell, Number) for cell in cells)
+
+
+def _row(table: Table, at: int, row: tuple[Cell, ...]) -> list[str]:
+    """The lines of one row: a second and third line where a cell has them."""
+    stacked = zip_longest(*(lines(cell) or ("",) for cell in row), fillvalue="")
+    found = [" & ".join(escape(text) for text in line) + r" \\" for line in stacked]
+    return [r"\midrule", *found] if at == table.footer and at else found
