@@ -2,7 +2,7 @@
 
 Source of the numbers: Huntington-Klein, The Effect, ch. 17 (event study of the Google share on
 2015-08-10, data in the package causaldata), recomputed with statsmodels; see
-tests/reference/events.json, case E1.
+tests/reference/events.json, case textbook_reorganisation.
 """
 
 from __future__ import annotations
@@ -40,7 +40,8 @@ also = ["market_adjusted", "constant_mean"]
 headline = "single_event"
 use = ["single_event"]
 """
-CASE = json.loads((ROOT / "tests" / "reference" / "events.json").read_text())["E1"]
+CASES = json.loads((ROOT / "tests" / "reference" / "events.json").read_text())["cases"]
+CASE = CASES["textbook_reorganisation"]
 MODELS = {"AR_risk": "market_model", "AR_market": "market_adjusted", "AR_mean": "constant_mean"}
 
 
