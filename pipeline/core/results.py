@@ -102,7 +102,8 @@ class Results:
         paths: ``group, day, n, mean, low, high`` of the cumulative average abnormal return.
         diagnostics: ``subject, check, value, threshold, verdict, meaning, source``; verdict is
             ``pass``, ``warn`` or ``fail``.
-        sensitivity: ``dimension, variant, estimate, ci_low, ci_high, n`` (decimal).
+        sensitivity: ``dimension, variant, estimate, ci_low, ci_high, n`` (decimal); a column
+            ``target`` names the number varied, which is the mean reaction without it.
         tables: name -> the frame written to ``data/<name>.parquet``.
         ledger, findings: as collected.
     """

@@ -135,9 +135,15 @@ def read_dates(raw: pd.Series, date_format: str = "") -> tuple[pd.Series, pd.Ser
     texts = raw.where(~missing).map(_date_text, na_action="ignore").astype(object)
     plain = texts.where(texts.str.fullmatch(ISO, na=False).astype(bool)).str.slice(0, 10)
     values = pd.to_datetime(plain, format="%Y-%m-%d", errors="coerce")
-    if date_format and "%z" not in date_format:
-        values = pd.to_datetime(texts, format=date_format, errors="coerce").fillna(values)
+    for declared in (date_part(date_format), date_format):
+        if declared and "%z" not in declared:
+            values = pd.to_datetime(texts, format=declared, errors="coerce").fillna(values)
     return values.dt.normalize().astype(DAY), values.isna() & ~missing
+
+
+def date_part(date_format: str) -> str:
+    """A declared format up to its time of day."""
+    return re.split(r"[T ,]*%[HIXz]", date_format, maxsplit=1)[0]
 
 
 def _stored_dates(raw: pd.Series) -> tuple[pd.Series, pd.Series]:

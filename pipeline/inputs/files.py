@@ -11,6 +11,7 @@ import duckdb
 import pandas as pd
 
 from pipeline.core.findings import problem
+from pipeline.inputs.faults import MARKS, csv_fault
 
 ROW = "_row"
 READERS = {".parquet": "read_parquet(?)", ".csv": "read_csv(?, all_varchar=true, header=true)"}
@@ -76,13 +77,18 @@ def read_table(
         _refuse_repeats(source, _header(source, kind))
         raw = _excel(source) if kind == ".xlsx" else _query(source, kind, wanted, only)
     except (duckdb.Error, BadZipFile, ValueError, KeyError, OSError) as fault:
-        raise problem(
+        found = csv_fault(source.path, source.file) if kind == ".csv" else None
+        raise found or problem(
             "unreadable_file",
             source.file,
             got=str(fault).splitlines()[0],
             expected="a table with a header in its first row",
             remedy="Open the file, check the sheet and its first row, and save it again.",
         ) from None
+    if kind == ".csv" and (raw.empty or _one_cell_a_row(raw)):
+        found = csv_fault(source.path, source.file)
+        if found is not None:
+            raise found
     ours = _ours(source, list(raw.columns))
     table = raw[[*ours, ROW]].rename(columns=ours)
     if table.empty and only is None:
@@ -94,6 +100,12 @@ def read_table(
             remedy="Export the table again with its rows.",
         )
     return table
+
+
+def _one_cell_a_row(raw: pd.DataFrame) -> bool:
+    """Whether no mark fitted all rows, so that each became one cell."""
+    names = [name for name in raw.columns if name != ROW]
+    return len(names) == 1 and any(mark in names[0] for mark in MARKS)
 
 
 def _ours(source: Source, names: list[str]) -> dict[str, str]:

@@ -10,7 +10,7 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import DAY, EARLIEST, LATEST, is_missing
+from pipeline.inputs.contracts import DAY, EARLIEST, LATEST, date_part, is_missing
 from pipeline.inputs.files import ROW, Source
 
 ISO_DATE = re.compile(r"^\d{4}-\d{2}-\d{2}$")
@@ -61,7 +61,8 @@ def read_moment(cell: object, zone: str, date_format: str = "") -> datetime | da
     Args:
         cell: as read from the file.
         zone: IANA name for times without an offset; '' if none is known.
-        date_format: the format declared in the study, tried before ISO 8601.
+        date_format: the format declared in the study, with or without its time of day; it is tried
+            before ISO 8601.
     """
     moment = _parse(cell, date_format)
     if isinstance(moment, Refusal):
@@ -89,11 +90,12 @@ def _parse(cell: object, date_format: str) -> datetime | Refusal:
     if isinstance(cell, date):
         return datetime(cell.year, cell.month, cell.day)
     text = str(cell).strip()
-    if date_format:
+    for declared in (date_format, date_part(date_format)):
         try:
-            return datetime.strptime(text, date_format)
+            if declared:
+                return datetime.strptime(text, declared)
         except ValueError:
-            pass
+            continue
     if not re.match(r"^\d{4}-\d{2}-\d{2}([T ]\d{2}:\d{2}|$)", text):
         return BAD_FORMAT
     try:

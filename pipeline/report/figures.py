@@ -31,7 +31,7 @@ LINES = ("-", (0, (6, 2)), (0, (2, 1.5)), "-.")
 MARKERS = ("o", "s", "^", "D")
 INK, FAINT, STRIP = "#222222", "#8a8a8a", "#ececec"
 WIDTH = 7.2
-LABELLED = 40
+LABELLED = 30
 
 STYLE: dict[Any, Any] = {
     "svg.hashsalt": "dealwake",
@@ -178,6 +178,14 @@ def _intervals(canvas: Canvas, figure: Figure) -> None:
     _ticks(axes, y=False)
 
 
+def _interval_height(data: pd.DataFrame) -> float:
+    """Inches: room for each label, or a fixed picture where there are too many to name."""
+    if len(data) > LABELLED:
+        return 7.0
+    deepest = max(_label(row).count("\n") for _, row in data.iterrows())
+    return 1.0 + (0.34 + 0.16 * deepest) * len(data)
+
+
 def _label(row: pd.Series[Any]) -> str:
     parts = (clean(str(row["dimension"])), clean(str(row["label"])))
     return _wrapped(": ".join(part for part in parts if part), 38, 3)
@@ -248,5 +256,5 @@ Drawing = tuple[Callable[[pd.DataFrame], float], Callable[[Canvas, Figure], None
 DRAWINGS: Mapping[str, Drawing] = {
     "path": (lambda data: 4.0, _path),
     "distribution": (lambda data: 1.0 + 1.6 * data["group"].nunique(), _distribution),
-    "intervals": (lambda data: 1.0 + min(0.34 * len(data), 7.0), _intervals),
+    "intervals": (_interval_height, _intervals),
 }

@@ -67,7 +67,7 @@ def tabular(table: Table) -> str:
     size = r"\centering\footnotesize" if len(table.columns) < 7 else r"\centering\scriptsize"
     body = [line for at, row in enumerate(table.page_rows) for line in _row(table, at, row)]
     head = " & ".join(escape(column.heading) for column in table.columns)
-    notes = [rf"\par\footnotesize {escape(note.text)}" for note in table.notes]
+    notes = [rf"{{\par\footnotesize\raggedright {escape(note.text)}\par}}" for note in table.notes]
     return "\n".join(
         [
             r"\begin{table}[htbp]", size, r"\setlength{\tabcolsep}{4pt}",
@@ -85,12 +85,19 @@ def escape(text: str) -> str:
     return _SPECIAL.sub(lambda found: _ESCAPES[found.group()], flat)
 
 
+def _wraps(table: Table) -> bool:
+    """Whether the table is too wide for columns of their natural width."""
+    needs = [_need(table, at) for at in range(len(table.columns))]
+    return sum(needs) + 2 * len(needs) > ROOM
+
+
 def _alignment(table: Table) -> str:
     """Natural columns where the table fits; columns of a share of the text width where not."""
     needs = [_need(table, at) for at in range(len(table.columns))]
-    if sum(needs) + 2 * len(needs) <= ROOM:
+    if not _wraps(table):
         return "".join("r" if _figures(table, at) else "l" for at in range(len(needs)))
-    narrow = [float(min(need, 26)) for need in needs]
+    words = [_longest_word(table, at) + 4 for at in range(len(needs))]
+    narrow = [float(max(word, min(need + 3, 28))) for word, need in zip(words, needs, strict=True)]
     shares = (need / sum(narrow) for need in narrow)
     return "".join(_paragraphs(share) for share in shares)
 
@@ -106,13 +113,23 @@ def _need(table: Table, at: int) -> int:
     return max((len(text) for text in (table.columns[at].heading, *cells)), default=1) or 1
 
 
+def _longest_word(table: Table, at: int) -> int:
+    cells = (line for row in table.page_rows for line in lines(row[at]))
+    texts = (table.columns[at].heading, *cells)
+    return max((len(word) for text in texts for word in text.split()), default=1)
+
+
 def _figures(table: Table, at: int) -> bool:
     cells = [row[at] for row in table.page_rows if row[at] is not None]
     return at > 0 and bool(cells) and all(isinstance(cell, Number) for cell in cells)
 
 
 def _row(table: Table, at: int, row: tuple[Cell, ...]) -> list[str]:
-    """The lines of one row: a second and third line where a cell has them."""
-    stacked = zip_longest(*(lines(cell) or ("",) for cell in row), fillvalue="")
-    found = [" & ".join(escape(text) for text in line) + r" \\" for line in stacked]
+    """The lines of one row; the second line of a cell inside it, or below where cells are flat."""
+    if _wraps(table):
+        cells = (r" \newline ".join(escape(line) for line in lines(cell)) for cell in row)
+        found = [" & ".join(cells) + r" \\"]
+    else:
+        stacked = zip_longest(*(lines(cell) or ("",) for cell in row), fillvalue="")
+        found = [" & ".join(escape(text) for text in line) + r" \\" for line in stacked]
     return [r"\midrule", *found] if at == table.footer and at else found

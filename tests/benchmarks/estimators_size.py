@@ -150,7 +150,7 @@ def instruments(
             own = rng.normal(size=(n, *shape))
             if not groups:
                 return own
-            return np.sqrt(0.5) * (own + rng.normal(size=(groups, *shape))[firm])
+            return np.asarray(np.sqrt(0.5) * (own + rng.normal(size=(groups, *shape))[firm]))
 
         Z = shock(L)
         v = shock()

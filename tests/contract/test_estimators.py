@@ -39,7 +39,8 @@ Fit = Callable[[Design, FitOptions], Estimate]
 @pytest.fixture(params=PATHS, ids=[path.partition(":")[2] for path in PATHS])
 def fit(request: pytest.FixtureRequest) -> Fit:
     module, _, name = request.param.partition(":")
-    return getattr(import_module(module), name)
+    found: Fit = getattr(import_module(module), name)
+    return found
 
 
 @pytest.fixture(params=OPTIONS, ids=list(OPTIONS))

@@ -25,9 +25,8 @@ def deals(seed: int = 11, candidates: int = 520) -> Design:
     leverage, size = rng.normal(size=(2, A))
     firm = rng.integers(0, A // 5, size=A)
     firm_shock = rng.normal(size=A // 5)
-    W = np.column_stack(
-        [np.ones(A), size, leverage, rng.normal(size=A), rng.integers(0, 2, size=A)]
-    ).astype(float)
+    columns = [np.ones(A), size, leverage, rng.normal(size=A), rng.integers(0, 2, size=A)]
+    W = np.column_stack(columns).astype(float)
     v = rng.normal(size=A)
     selected = W @ np.array([-0.1, 0.3, -0.2, 0.8, 0.2]) + v > 0
     n = int(selected.sum())
@@ -108,7 +107,8 @@ def shuffled(design: Design, seed: int = 5) -> Design:
 
 def arrays(design: Design) -> list[np.ndarray]:
     """Every array the design holds."""
-    found = [design.y, design.X, design.Z, *design.effects.values(), *design.clusters.values()]
+    found: list[np.ndarray] = [design.y, design.X, design.Z]
+    found += [*design.effects.values(), *design.clusters.values()]
     if design.selection is not None:
         s = design.selection
         found += [s.W, s.selected, s.outcome_row, *s.clusters.values()]

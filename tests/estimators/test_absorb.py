@@ -16,7 +16,7 @@ def indicators(*effects: np.ndarray) -> np.ndarray:
 
 def by_indicators(Y: np.ndarray, *effects: np.ndarray) -> np.ndarray:
     D = indicators(*effects)
-    return Y - D @ np.linalg.lstsq(D, Y, rcond=None)[0]
+    return np.asarray(Y - D @ np.linalg.lstsq(D, Y, rcond=None)[0])
 
 
 @pytest.mark.parametrize("how_many", [1, 2, 3])

@@ -34,7 +34,7 @@ def two_steps(design: Design, keep: np.ndarray) -> np.ndarray:
     a = W[chosen] @ fit.coefficients
     ratio = stats.norm.pdf(a) / stats.norm.cdf(a)
     X = np.column_stack([design.X[row[chosen]], ratio])
-    return np.linalg.lstsq(X, design.y[row[chosen]], rcond=None)[0]
+    return np.asarray(np.linalg.lstsq(X, design.y[row[chosen]], rcond=None)[0])
 
 
 def test_coefficients_by_a_plain_reading(design: Design) -> None:

@@ -88,7 +88,9 @@ def read_frames(folder: Path, tables: Frames, wanted: Wanted = WANTED) -> Tables
     return read_inputs(write_all(folder, tables), wanted)
 
 
-def refused(folder: Path, spoil: Callable[[Frames], None], wanted: Wanted = WANTED) -> list[Finding]:
+def refused(
+    folder: Path, spoil: Callable[[Frames], None], wanted: Wanted = WANTED
+) -> list[Finding]:
     """The findings that stop the tables once ``spoil`` has changed them."""
     tables = frames()
     spoil(tables)

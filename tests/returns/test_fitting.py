@@ -60,9 +60,7 @@ def by_statsmodels(
 
 @pytest.mark.parametrize("model", ["market_model", "constant_mean", "factor_model"])
 @pytest.mark.parametrize(("column", "at"), [(0, 205), (1, 200), (2, 205), (3, 250)])
-def test_parameters_errors_and_returns(
-    model: str, column: int, at: int, gappy: PricePanel
-) -> None:
+def test_parameters_errors_and_returns(model: str, column: int, at: int, gappy: PricePanel) -> None:
     """statsmodels OLS, the same rows; sums centred first agree to 1e-10."""
     masked = np.zeros((1, len(ESTIMATION)), dtype=np.bool_)
     masked[0, 40:51] = True
@@ -229,9 +227,7 @@ def test_reproduces_the_expected_plus_abnormal_return(
     masked = np.zeros((len(located), len(ESTIMATION)), dtype=np.bool_)
     for key in ("market_model", "market_adjusted", "constant_mean", "factor_model"):
         model = entry(EXPECTED_RETURNS, key).load()
-        found: AbnormalReturns = measure(
-            key, model, located, masked, panels, ESTIMATION, SPAN
-        )
+        found: AbnormalReturns = measure(key, model, located, masked, panels, ESTIMATION, SPAN)
         for row, event in enumerate(located.itertuples()):
             days = np.arange(event.position + SPAN.start, event.position + SPAN.end + 1)
             days = days[days < 320]

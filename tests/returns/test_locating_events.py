@@ -53,9 +53,7 @@ def prices(calendar: Sessions, seed: int = 4) -> PricePanel:
     days = calendar.days[:-20]
     market = stream.normal(0, 0.008, len(days))
     moves = market[:, None] + stream.normal(0, 0.01, (len(days), len(CODES)))
-    return panel_of_closes(
-        days, CODES, 100 * np.cumprod(1 + moves, axis=0), np.cumprod(1 + market)
-    )
+    return panel_of_closes(days, CODES, 100 * np.cumprod(1 + moves, axis=0), np.cumprod(1 + market))
 
 
 @pytest.fixture(scope="module")
@@ -78,9 +76,9 @@ def deals(calendar: Sessions, *rows: tuple[str, str, int]) -> pd.DataFrame:
     )
 
 
-def found(table: pd.DataFrame, panel: PricePanel, calendar: Sessions) -> tuple[
-    pd.DataFrame, StageLedger
-]:
+def found(
+    table: pd.DataFrame, panel: PricePanel, calendar: Sessions
+) -> tuple[pd.DataFrame, StageLedger]:
     return locate(table, {"XLON": panel}, {"XLON": calendar}, OPTIONS)
 
 
@@ -125,9 +123,7 @@ def test_two_exchanges_keep_the_order_of_the_list(calendar: Sessions) -> None:
         assert panels[exchange].sessions[position] == np.datetime64(day, "D")
 
 
-def test_moved_and_dateless_announcements_are_noted(
-    panel: PricePanel, calendar: Sessions
-) -> None:
+def test_moved_and_dateless_announcements_are_noted(panel: PricePanel, calendar: Sessions) -> None:
     table = deals(calendar, ("D1", "A", 100), ("D2", "B", 100))
     table.loc[0, "announced_utc"] += pd.Timedelta(hours=9)
     table["announced_utc"] = table["announced_utc"].where(table["deal_id"] != "D2")
@@ -158,9 +154,7 @@ def test_the_first_of_two_deals_whose_windows_meet(
     apart: int, kept: list[str], panel: PricePanel, calendar: Sessions
 ) -> None:
     """Windows of three sessions meet when day zeros are fewer than three apart."""
-    table = deals(
-        calendar, ("D2", "A", 200 + apart), ("D4", "B", 201), ("D1", "A", 200)
-    )
+    table = deals(calendar, ("D2", "A", 200 + apart), ("D4", "B", 201), ("D1", "A", 200))
     located, _ = found(table, panel, calendar)
     left, ledger = keep_first_of_overlapping(located, HEADLINE)
     assert sorted(left["deal_id"]) == kept
@@ -194,9 +188,7 @@ def test_sessions_around_another_deal_are_masked(panel: PricePanel, calendar: Se
 def screened(
     panel: PricePanel, calendar: Sessions, *rows: tuple[str, str, int], masked: bool = False
 ) -> tuple[Booleans, StageLedger, AbnormalReturns]:
-    located, _ = locate(
-        deals(calendar, *rows), {"XLON": panel}, {"XLON": calendar}, OPTIONS
-    )
+    located, _ = locate(deals(calendar, *rows), {"XLON": panel}, {"XLON": calendar}, OPTIONS)
     mask = masked_sessions(located, located, OPTIONS.estimation, 5)
     if not masked:
         mask = np.zeros_like(mask)
@@ -235,9 +227,7 @@ def test_estimation_windows_that_will_not_do(panel: PricePanel, calendar: Sessio
     assert ledger.rows_kept == keep.sum()
 
 
-def test_a_split_far_from_the_windows_does_no_harm(
-    panel: PricePanel, calendar: Sessions
-) -> None:
+def test_a_split_far_from_the_windows_does_no_harm(panel: PricePanel, calendar: Sessions) -> None:
     close = panel.close.copy()
     close[215:, 0] *= 0.5
     keep, ledger, _ = screened(with_closes(panel, close), calendar, ("D1", "A", 200))

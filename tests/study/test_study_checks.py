@@ -60,9 +60,7 @@ def test_a_control_measured_during_the_event(window: str, tmp_path: Path) -> Non
         ('use = ["spare"]', 'use = ["shares"]'),
     ],
 )
-def test_an_instrument_that_also_explains_the_outcome(
-    old: str, new: str, tmp_path: Path
-) -> None:
+def test_an_instrument_that_also_explains_the_outcome(old: str, new: str, tmp_path: Path) -> None:
     finding = one_refusal(tmp_path, (old, new))
     assert (finding.rule, finding.column) == ("instrument_is_control", "instruments.use")
 

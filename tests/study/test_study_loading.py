@@ -100,7 +100,9 @@ def test_a_study_file_that_is_not_there(tmp_path: Path) -> None:
     assert (finding.rule, finding.file) == ("missing_file", "none.toml")
 
 
-@pytest.mark.parametrize("content", [b"title = [1, 2\n", b"title = \xff\n", b'title = "a"\ntitle = 1'])
+@pytest.mark.parametrize(
+    "content", [b"title = [1, 2\n", b"title = \xff\n", b'title = "a"\ntitle = 1']
+)
 def test_a_file_that_is_no_toml(content: bytes, tmp_path: Path) -> None:
     path = tmp_path / "study.toml"
     path.write_bytes(content)

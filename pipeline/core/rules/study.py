@@ -1,0 +1,57 @@
+"""Rules about the study file."""
+
+from __future__ import annotations
+
+from pipeline.core.rules.rule import Rule
+
+RULES = (
+    Rule(
+        "unknown_key",
+        "Unknown key in the study file",
+        "The study file holds a key that no part of the run reads.",
+        "A misspelt key would otherwise be ignored and the default used without a word.",
+        "Correct the key to the nearest known one, or delete it.",
+    ),
+    Rule(
+        "bad_value",
+        "Value of the wrong kind in the study file",
+        "A key of the study file holds a value outside what the key allows.",
+        "A guess at what was meant could change the numbers.",
+        "Write a value of the kind and range stated.",
+    ),
+    Rule(
+        "overlapping_windows",
+        "Event window overlaps the estimation window",
+        "A window of the study shares sessions with the estimation window.",
+        "The normal return would be estimated from days the announcement moved.",
+        "End the estimation window earlier, or shorten the window named.",
+    ),
+    Rule(
+        "instrument_is_control",
+        "Instrument listed as a control",
+        "A variable is both an instrument and a regressor of the outcome.",
+        "An instrument must move the outcome through the treatment alone.",
+        "Take it out of one of the two lists.",
+    ),
+    Rule(
+        "excluded_is_control",
+        "Excluded variable listed as a control",
+        "A variable excluded from the outcome stands among its controls.",
+        "The exclusion is what identifies the selection model.",
+        "Take it out of one of the two lists.",
+    ),
+    Rule(
+        "selection_lacks_control",
+        "Company variable missing from the selection equation",
+        "A control known for every candidate is not in selection.explained_by.",
+        "Leaving it out makes the correction absorb its effect.",
+        "Add it to selection.explained_by.",
+    ),
+    Rule(
+        "unknown_variable",
+        "Variable that nothing defines",
+        "The study names a variable that is neither a column nor a characteristic.",
+        "It cannot enter a regression.",
+        "Correct its name, or define it under [characteristics].",
+    ),
+)

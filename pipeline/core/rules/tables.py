@@ -1,0 +1,148 @@
+"""Rules about files, columns and cells."""
+
+from __future__ import annotations
+
+from pipeline.core.rules.rule import Rule
+
+RULES = (
+    Rule(
+        "missing_file",
+        "File not found",
+        "A file named in the study does not exist at the place stated.",
+        "Nothing can be measured without it.",
+        "Correct the path; paths count from the folder of the study file.",
+    ),
+    Rule(
+        "unreadable_file",
+        "File cannot be read",
+        "The file exists, and is not a table of the kind its name says.",
+        "Reading on could lose rows without a trace.",
+        "Save it again as csv (UTF-8), parquet or xlsx.",
+    ),
+    Rule(
+        "missing_column",
+        "Column not found",
+        "A table lacks a column the study needs.",
+        "The quantity named in the study cannot be made without it.",
+        "Add the column, or say under [inputs.columns] what yours is called.",
+    ),
+    Rule(
+        "ambiguous_column",
+        "Two columns of one name",
+        "Two columns of a table have the same name, but for case and spaces.",
+        "Nothing tells which of them holds the right values.",
+        "Rename or delete one, or name yours under [inputs.columns].",
+    ),
+    Rule(
+        "error_cell",
+        "Formula that failed",
+        "A cell holds a spreadsheet's error, such as #DIV/0!.",
+        "Reading it as missing would drop the deal without a word.",
+        "Correct the formula, or empty the cell.",
+    ),
+    Rule(
+        "empty_table",
+        "Table without rows",
+        "A table holds a header and nothing else.",
+        "There is nothing to measure.",
+        "Export the table again with its rows.",
+    ),
+    Rule(
+        "unparseable_date",
+        "Date or time that cannot be read",
+        "A cell that should hold a date holds something else.",
+        "A date guessed wrong by a day moves the whole reaction out of the window.",
+        "Write dates as YYYY-MM-DD, times as YYYY-MM-DD HH:MM.",
+    ),
+    Rule(
+        "date_out_of_range",
+        "Date outside any plausible range",
+        "A date lies in the future, or before the price history could begin.",
+        "Such dates are mostly fill values of a data base.",
+        "Correct the date, or delete the row.",
+    ),
+    Rule(
+        "unparseable_number",
+        "Number that cannot be read",
+        "A cell that should hold a number holds something else.",
+        "Reading it as missing would drop the deal without a word.",
+        "Write plain numbers with a decimal point, and leave unknown cells empty.",
+    ),
+    Rule(
+        "missing_zone",
+        "Time of day without a time zone",
+        "An announcement has a time of day, and neither an offset nor a zone.",
+        "The same clock time is a different session in another zone.",
+        "Fill the column timestamp_zone (for example America/New_York).",
+    ),
+    Rule(
+        "impossible_local_time",
+        "Local time that does not exist or exists twice",
+        "The clocks changed that night: the local time was skipped or repeated.",
+        "The instant cannot be told from the wall clock.",
+        "Write the time with its offset, for example 2021-11-07T01:30:00-05:00.",
+    ),
+    Rule(
+        "unknown_exchange",
+        "Unknown exchange code",
+        "A listing names an exchange for which no calendar is known.",
+        "Day zero cannot be placed without the exchange's sessions.",
+        "Use the ISO 10383 code of the listing, for example XNYS or XLON.",
+    ),
+    Rule(
+        "missing_value",
+        "Required cell is empty",
+        "A column that must be filled has an empty cell.",
+        "The deal cannot be placed in time or on an exchange.",
+        "Fill the cell, or delete the row.",
+    ),
+    Rule(
+        "conflicting_deal",
+        "Two different rows with one deal identifier",
+        "An identifier stands on two rows that differ.",
+        "One of them is wrong, and no rule can tell which.",
+        "Keep one row an identifier.",
+    ),
+    Rule(
+        "mixed_currencies",
+        "Money in more than one currency",
+        "A money column holds more than one currency.",
+        "Sizes in different currencies cannot stand in one regression.",
+        "Convert all money to one currency at the rate before the announcement.",
+    ),
+    Rule(
+        "conflicting_price",
+        "Two different prices on one date",
+        "A security has two closes on one date that differ.",
+        "One of them is wrong.",
+        "Keep one row a security and date.",
+    ),
+    Rule(
+        "nonpositive_price",
+        "Price of zero or below",
+        "A close is zero or negative.",
+        "No return can be made from it.",
+        "Leave the cell empty when there was no price.",
+    ),
+    Rule(
+        "price_off_session",
+        "Price on a day the exchange was closed",
+        "The price file holds dates that are no sessions of the exchange.",
+        "Many of them mean that the exchange code is wrong.",
+        "Check the exchange of the listing; single dates are left out.",
+    ),
+    Rule(
+        "session_without_prices",
+        "Session on which most securities have no price",
+        "The calendar says the exchange was open, and most prices are missing.",
+        "The exchange may have closed that day without notice.",
+        "Check the date with the exchange.",
+    ),
+    Rule(
+        "benchmark_gap",
+        "Benchmark missing",
+        "The benchmark has no level on a session the study needs.",
+        "An abnormal return needs the market's return of the same day.",
+        "Complete the benchmark file.",
+    ),
+)

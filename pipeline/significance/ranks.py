@@ -1,0 +1,156 @@
+"""Rank and sign tests, which need no normal returns."""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy import stats
+
+from pipeline.core.estimate import NotApplicable, Tested, t_test, z_test
+from pipeline.core.prices import Floats
+from pipeline.significance.sample import CarSample
+
+NULL = "the mean cumulative abnormal return is zero"
+MEDIAN_NULL = "abnormal returns are as often above zero as before the announcement"
+NO_SERIES = "needs the daily series of the estimation windows"
+FEW = "needs at least two deals"
+
+
+def rank(sample: CarSample) -> Tested:
+    """Corrado's rank test, summed over the window (Corrado 1989, JFE 23; Cowan 1992, RQFA 2).
+
+    K_it is the rank of AR_it among the deal's estimation and window days over (T_i + 1), mid-ranks
+    for ties; U_t = mean_i (K_it - 1/2); Z = sum over the window of U_t / (sqrt(L) S) with
+    S² = mean over all days of (n_t / n) U_t². Standard normal.
+    """
+    name = "Rank Z"
+    if sample.series is None or sample.n < 2:
+        return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
+    pooled = np.hstack([sample.series.estimation, sample.series.event])
+    mean, weight = _mean_rank(pooled)
+    length = sample.series.event.shape[1]
+    spread = np.sqrt(np.nansum(weight * mean**2) / np.isfinite(mean).sum())
+    statistic = float(np.nansum(mean[-length:]) / (np.sqrt(length) * spread))
+    return z_test(
+        name,
+        NULL,
+        statistic,
+        caution="loses power as the window grows",
+        citation="Corrado 1989; Cowan 1992",
+    )
+
+
+def _mean_rank(returns: Floats) -> tuple[Floats, Floats]:
+    """(T,) mean over deals of the centred rank, and (T,) share of deals with a return that day."""
+    ranks = stats.rankdata(returns, axis=1, nan_policy="omit")
+    valid = np.isfinite(returns).sum(axis=1, keepdims=True)
+    centred = ranks / (valid + 1) - 0.5
+    present = np.isfinite(centred)
+    count = present.sum(axis=0)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        mean = np.where(present, centred, 0.0).sum(axis=0) / count
+    return np.where(count > 0, mean, np.nan), count / len(returns)
+
+
+def generalised_rank(sample: CarSample) -> Tested:
+    """GRANK-T: the window's cumulated return ranked among the estimation days.
+
+    Kolari and Pynnönen 2011, JEF 18. z_i = SCAR_i / s(SCAR) stands as one more day beside the
+    standardised estimation returns; U_it = rank / (T + 1) - 1/2 with T = L1 + 1;
+    Z = mean U_0 / S, S² = mean over the T days of (n_t / n) U_t²;
+    t = Z sqrt((T - 2) / (T - 1 - Z²)), t(T - 2).
+    """
+    name = "Generalised rank t"
+    if sample.series is None or sample.n < 2:
+        return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
+    if not sample.scar.std(ddof=1) > 0:
+        return NotApplicable(name, "needs deals whose returns differ")
+    standardised = sample.series.estimation / sample.series.residual_sd[:, None]
+    cumulated = (sample.scar / sample.scar.std(ddof=1))[:, None]
+    mean, weight = _mean_rank(np.hstack([standardised, cumulated]))
+    days = int(np.isfinite(mean).sum())
+    spread = np.sqrt(np.nansum(weight * mean**2) / days)
+    z = float(mean[-1] / spread)
+    room = days - 1 - z**2
+    if room <= 0:
+        return NotApplicable(name, "every deal ranks at the end of its estimation days")
+    return t_test(
+        name,
+        NULL,
+        z * float(np.sqrt((days - 2) / room)),
+        days - 2,
+        caution="rejects too often when returns are skewed and the window has several days",
+        citation="Kolari and Pynnönen 2011",
+    )
+
+
+def generalised_sign(sample: CarSample) -> Tested:
+    """Z = (w - n p) / sqrt(n p (1 - p)), w deals above zero (Cowan 1992, RQFA 2).
+
+    p is the mean share of estimation-window returns above zero; for a window of L days, of
+    rolling L-day sums, so that skewness of daily returns does not enter.
+    """
+    name = "Generalised sign Z"
+    if sample.series is None:
+        return NotApplicable(name, NO_SERIES)
+    if sample.n < 2:
+        return NotApplicable(name, FEW)
+    sums = rolling_sums(sample.series.estimation, sample.series.event.shape[1])
+    used = np.isfinite(sums)
+    share = float(((sums > 0) & used).sum(axis=1).__truediv__(used.sum(axis=1)).mean())
+    if not 0 < share < 1:
+        return NotApplicable(name, "the estimation windows hold returns of one sign only")
+    above = float((sample.car > 0).sum())
+    statistic = (above - sample.n * share) / np.sqrt(sample.n * share * (1 - share))
+    return z_test(
+        name,
+        MEDIAN_NULL,
+        float(statistic),
+        caution="assumes that deals are independent of one another",
+        citation="Cowan 1992",
+        facts={"above_zero": above, "share_before": share},
+    )
+
+
+def rolling_sums(returns: Floats, length: int) -> Floats:
+    """(n, E - L + 1) sums over L consecutive days; NaN where a day is missing."""
+    windows = np.lib.stride_tricks.sliding_window_view(returns, length, axis=1)
+    return np.asarray(windows.sum(axis=2))
+
+
+def signed_rank(sample: CarSample) -> Tested:
+    """Wilcoxon's signed-rank test of the CARs, zeros left out, ties with mid-ranks.
+
+    Wilcoxon 1945, Biometrics Bulletin 1. Exact up to 25 deals without ties, else normal with the
+    correction of the variance for ties.
+    """
+    name = "Signed-rank test"
+    car = sample.car[sample.car != 0]
+    if len(car) < 2:
+        return NotApplicable(name, FEW)
+    ties = len(np.unique(np.abs(car))) < len(car)
+    exact = len(car) <= 25 and not ties
+    found = stats.wilcoxon(car, method="exact" if exact else "asymptotic", correction=False)
+    n = len(car)
+    ranks = stats.rankdata(np.abs(car))
+    positive = float(ranks[car > 0].sum())
+    _, counts = np.unique(ranks, return_counts=True)
+    variance = n * (n + 1) * (2 * n + 1) / 24 - ((counts**3 - counts).sum()) / 48
+    z = (positive - n * (n + 1) / 4) / np.sqrt(variance)
+    result = z_test(
+        name,
+        "cumulative abnormal returns are symmetric about zero",
+        float(z),
+        caution="rejects too often when returns are skewed; assumes independent deals",
+        citation="Wilcoxon 1945",
+        facts={"positive_rank_sum": positive},
+    )
+    return with_p(result, float(found.pvalue), "exact") if exact else result
+
+
+def with_p(result: Tested, p: float, distribution: str) -> Tested:
+    """The result with a p-value from another distribution than its z."""
+    from dataclasses import replace
+
+    if isinstance(result, NotApplicable):
+        return result
+    return replace(result, p_value=p, distribution=distribution)

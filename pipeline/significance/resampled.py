@@ -1,0 +1,126 @@
+"""Tests whose distribution comes from the sample itself."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from pipeline.core.estimate import NotApplicable, Tested, TestResult
+from pipeline.core.prices import Floats
+from pipeline.significance.ranks import rolling_sums
+from pipeline.significance.sample import CarSample
+
+NULL = "the mean cumulative abnormal return is zero"
+DRAWS = 1999
+SEED = 20260301
+
+
+def skewness_adjusted(sample: CarSample) -> Tested:
+    """Johnson's t with bootstrapped critical values (Lyon, Barber and Tsai 1999, JF 54).
+
+    S = mean / s, g the skewness: t = sqrt(n) (S + g S²/3 + g/(6n)). Draws of n/4 deals give the
+    distribution of the same statistic about the sample's own mean; p is twice the smaller tail.
+    """
+    name = "Skewness-adjusted t"
+    n = sample.n
+    if n < 20:
+        return NotApplicable(name, "needs at least 20 deals, so that a quarter of them is a sample")
+    if not sample.car.std(ddof=1) > 0:
+        return NotApplicable(name, "needs deals whose returns differ")
+    statistic = float(_johnson(sample.car[None, :], 0.0)[0])
+    stream = np.random.default_rng(SEED)
+    draws = sample.car[stream.integers(0, n, (DRAWS, max(n // 4, 5)))]
+    usable = draws.std(axis=1, ddof=1) > 0
+    null = _johnson(draws[usable], float(sample.car.mean()))
+    below = (1 + (null <= statistic).sum()) / (len(null) + 1)
+    above = (1 + (null >= statistic).sum()) / (len(null) + 1)
+    return TestResult(
+        name,
+        NULL,
+        statistic,
+        "bootstrap",
+        float(min(1.0, 2 * min(below, above))),
+        caution="assumes that deals are independent of one another",
+        citation="Johnson 1978; Lyon, Barber and Tsai 1999",
+        facts={"draws": float(len(null))},
+    )
+
+
+def _johnson(samples: Floats, centre: float) -> Floats:
+    """(B,) Johnson's statistic of (B, m) samples about ``centre``."""
+    m = samples.shape[1]
+    mean = samples.mean(axis=1)
+    spread = samples.std(axis=1, ddof=1)
+    skew = ((samples - mean[:, None]) ** 3).sum(axis=1) / (m * spread**3)
+    ratio = (mean - centre) / spread
+    return np.asarray(np.sqrt(m) * (ratio + skew * ratio**2 / 3 + skew / (6 * m)))
+
+
+def date_bootstrap(sample: CarSample) -> Tested:
+    """Studentised bootstrap that resamples event dates with all their deals.
+
+    Cameron, Gelbach and Miller 2008, REStat 90 (pairs cluster bootstrap-t): t* of each draw is
+    about the sample's mean, with a cluster-robust error by date.
+    """
+    name = "Bootstrap t by date"
+    if sample.n < 2 or sample.dates is None:
+        return NotApplicable(name, "needs at least two deals with dates")
+    codes = np.unique(sample.dates, return_inverse=True)[1]
+    groups = int(codes.max()) + 1
+    if groups < 6:
+        return NotApplicable(name, f"needs at least six dates; the deals share {groups}")
+    total = np.bincount(codes, sample.car, groups)
+    size = np.bincount(codes, minlength=groups).astype(np.float64)
+    statistic = float(_cluster_t(total[None, :], size[None, :], 0.0)[0])
+    stream = np.random.default_rng(SEED)
+    drawn = stream.integers(0, groups, (DRAWS, groups))
+    null = _cluster_t(total[drawn], size[drawn], float(sample.car.mean()))
+    null = null[np.isfinite(null)]
+    p = (1 + (np.abs(null) >= abs(statistic) - 1e-12).sum()) / (len(null) + 1)
+    return TestResult(
+        name,
+        NULL,
+        statistic,
+        "bootstrap",
+        float(p),
+        caution="deals of different dates are taken as independent",
+        citation="Cameron, Gelbach and Miller 2008",
+        facts={"draws": float(len(null)), "dates": float(groups)},
+    )
+
+
+def _cluster_t(total: Floats, size: Floats, centre: float) -> Floats:
+    """(B,) t of the mean about ``centre`` from (B, G) cluster sums and sizes, CR1 error."""
+    groups = size.shape[1]
+    n = size.sum(axis=1)
+    mean = total.sum(axis=1) / n
+    score = total - size * mean[:, None]
+    error = np.sqrt(groups / (groups - 1) * (score**2).sum(axis=1)) / n
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray((mean - centre) / error)
+
+
+def sample_quantile(sample: CarSample) -> Tested:
+    """One deal's return among its own estimation window's (Gelbach, Helland and Klick 2013).
+
+    p = (1 + number of estimation returns at least as large in size) / (M + 1); for a window of L
+    days, of rolling L-day sums. American Law and Economics Review 15.
+    """
+    name = "Sample-quantile test"
+    if sample.n != 1 or sample.series is None:
+        return NotApplicable(name, f"is for one deal; this sample has {sample.n}")
+    sums = rolling_sums(sample.series.estimation, sample.series.event.shape[1])[0]
+    sums = sums[np.isfinite(sums)]
+    if sums.size == 0:
+        return NotApplicable(name, "the estimation window has no run of days as long as the window")
+    car = float(sample.car[0])
+    p = (1 + int((np.abs(sums) >= abs(car)).sum())) / (sums.size + 1)
+    return TestResult(
+        name,
+        "the deal's return is drawn from the same distribution as those before",
+        car,
+        "empirical",
+        float(min(p, 1.0)),
+        caution="rolling sums of several days overlap",
+        citation="Gelbach, Helland and Klick 2013",
+        facts={"compared_with": float(sums.size)},
+    )
