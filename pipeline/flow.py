@@ -17,7 +17,7 @@ from pipeline.characteristics.design import Prepared, prepare, price_measures
 from pipeline.characteristics.outcomes import deals_frame, group_names, with_outcomes
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.design import FitOptions
-from pipeline.core.estimate import Column, EstimationFailed, Withheld
+from pipeline.core.estimate import Column, Estimate, EstimationFailed, Withheld
 from pipeline.core.findings import Finding, findings_frame, problem, raise_errors
 from pipeline.core.ledger import Ledger
 from pipeline.core.parquet import parquet_bytes
@@ -30,6 +30,7 @@ from pipeline.core.tables import (
     estimates_frame,
     event_tests_frame,
 )
+from pipeline.estimators.checks import with_checks
 from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
     ESTIMATORS,
@@ -40,6 +41,7 @@ from pipeline.registry import (
     entry,
     keys,
 )
+from pipeline.report.headline import headline_frame
 from pipeline.returns.events import (
     keep_first_of_overlapping,
     locate,
@@ -208,10 +210,10 @@ def _with_outcomes(study: Study, measured: Measured) -> Any:
 def _fit(study: Study, key: str, prepared: Prepared) -> Column:
     options = FitOptions(level=study.level)
     try:
-        column: Column = entry(ESTIMATORS, key).load()(prepared.design, options)
+        estimate: Estimate = entry(ESTIMATORS, key).load()(prepared.design, options)
     except EstimationFailed as failure:
         return Withheld(key, key.replace("_", " "), failure.reason)
-    return column
+    return with_checks(estimate)
 
 
 def _results(
@@ -228,7 +230,8 @@ def _results(
     groups = group_names(deals, facts.treatment, facts.groups)
     table = deals_frame(deals, groups)
     checks = sample_checks(lead, study.event_time.headline_window, deals)
-    checks += tuple(check for column in columns for check in getattr(column, "checks", ()))
+    for column in columns:
+        checks += () if isinstance(column, Withheld) else column.checks
     ledger = measured.ledger.then(prepared.ledger) if prepared else measured.ledger
     findings = measured.findings + (prepared.findings if prepared else ())
     results = Results(
@@ -256,7 +259,7 @@ def _results(
         "findings": findings_frame(findings),
         "paths": results.paths,
     }
-    return replace(results, tables=tables)
+    return replace(results, tables={**tables, "headline": headline_frame(results)})
 
 
 def _lead(columns: tuple[Column, ...]) -> int:

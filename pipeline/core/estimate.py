@@ -203,6 +203,7 @@ class Estimate:
         tests: name -> result or why there is none.
         stages: first stages and selection equations, each an Estimate.
         robust_set: a confidence set for the treatment that replaces the t interval when set.
+        checks: what was checked before this column may be believed.
         sets: further confidence sets for the treatment, by how they are made.
         scores: (n, k) influence of each row on the coefficients, or None.
         notes: sentences a reader must see.
@@ -233,6 +234,7 @@ class Estimate:
     notes: tuple[str, ...] = ()
     citation: str = ""
     level: float = 0.95
+    checks: tuple[Diagnostic, ...] = ()
 
     def __post_init__(self) -> None:
         k = len(self.names)

@@ -119,12 +119,17 @@ def refuse_absorbed(before: Floats, after: Floats, names: tuple[str, ...]) -> No
     for at, name in enumerate(names):
         if had[at] <= 1e-12 * size[at]:
             raise refusal(
-                "no_variation", name, "the same value in every deal", "a variable that varies",
+                "no_variation",
+                name,
+                "the same value in every deal",
+                "a variable that varies",
                 "drop it or widen the sample",
             )
         if left[at] <= ABSORBED * had[at]:
             raise refusal(
-                "absorbed", name, "absorbed by the fixed effects",
+                "absorbed",
+                name,
+                "absorbed by the fixed effects",
                 "variation within the groups of the effects",
                 "drop the variable or the fixed effect that holds it constant",
             )

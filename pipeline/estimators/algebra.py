@@ -88,15 +88,21 @@ def refuse_dependent(X: Floats, names: Sequence[str], rule: str = "collinear") -
     n, k = X.shape
     if n <= k:
         raise refusal(
-            "few_rows", "", f"{n} rows for {k} coefficients", "more rows than coefficients",
+            "few_rows",
+            "",
+            f"{n} rows for {k} coefficients",
+            "more rows than coefficients",
             "use fewer regressors or a wider sample",
         )
     guilty = dependent(X, names)
     if guilty:
         listed = ", ".join(guilty)
         raise refusal(
-            rule, listed, f"linearly dependent: {listed}",
-            "regressors of which none is a combination of the others", "drop one of them",
+            rule,
+            listed,
+            f"linearly dependent: {listed}",
+            "regressors of which none is a combination of the others",
+            "drop one of them",
         )
 
 

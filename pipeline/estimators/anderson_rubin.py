@@ -59,8 +59,11 @@ def anderson_rubin_test(forms: ReducedForms, value: float = 0.0) -> TestResult:
     """H0: the coefficient of the treatment is ``value``; F(L, df) whatever the first stage."""
     L = len(forms.outcome)
     return f_test(
-        "Anderson-Rubin", f"the coefficient of the treatment is {value:g}",
-        statistic(forms, 1.0, value) / L, L, forms.df,
+        "Anderson-Rubin",
+        f"the coefficient of the treatment is {value:g}",
+        statistic(forms, 1.0, value) / L,
+        L,
+        forms.df,
         caution="rejects also when the instruments act on the outcome by another way",
         citation=CITATION,
     )
@@ -135,9 +138,7 @@ def _several(forms: ReducedForms, bound: float, level: float) -> ConfidenceSet:
     # Infinity is in the set: the widest gap between pieces is what the rays leave out.
     following = np.append(starts[1:], starts[0] + np.pi)
     gap = int(np.argmax(following - ends))
-    return _set(
-        Shape.RAYS, scale * np.tan(ends[gap]), scale * np.tan(following[gap]), level, more
-    )
+    return _set(Shape.RAYS, scale * np.tan(ends[gap]), scale * np.tan(following[gap]), level, more)
 
 
 def _in_own_units(forms: ReducedForms) -> tuple[ReducedForms, float]:
@@ -147,8 +148,10 @@ def _in_own_units(forms: ReducedForms) -> tuple[ReducedForms, float]:
     y, d = float(np.linalg.norm(size[:L])), float(np.linalg.norm(size[L:]))
     weight = np.repeat([1 / y, 1 / d], L)
     unit = ReducedForms(
-        forms.outcome / y, forms.treatment / d,
-        forms.covariance * np.outer(weight, weight), forms.df,
+        forms.outcome / y,
+        forms.treatment / d,
+        forms.covariance * np.outer(weight, weight),
+        forms.df,
     )
     return unit, y / d
 

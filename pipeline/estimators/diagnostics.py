@@ -64,8 +64,11 @@ def breusch_pagan(X: Floats, residuals: Floats) -> TestResult:
     left = solve(X, squares)[1]
     r2 = 1 - float(left @ left) / float(np.sum((squares - squares.mean()) ** 2))
     return chi2_test(
-        "Breusch-Pagan", "the variance does not depend on the regressors",
-        len(squares) * r2, X.shape[1] - 1, citation="Breusch and Pagan (1979); Koenker (1981)",
+        "Breusch-Pagan",
+        "the variance does not depend on the regressors",
+        len(squares) * r2,
+        X.shape[1] - 1,
+        citation="Breusch and Pagan (1979); Koenker (1981)",
     )
 
 
@@ -77,7 +80,10 @@ def jarque_bera(residuals: Floats) -> TestResult:
     kurtosis = float(np.mean(e**4)) / variance**2
     statistic = len(e) / 6 * (skew**2 + (kurtosis - 3) ** 2 / 4)
     return chi2_test(
-        "Jarque-Bera", "the residuals are normal", statistic, 2,
+        "Jarque-Bera",
+        "the residuals are normal",
+        statistic,
+        2,
         caution="informational: the robust errors do not need normal residuals",
         citation="Jarque and Bera (1987)",
     )

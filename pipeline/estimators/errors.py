@@ -71,7 +71,10 @@ def choose_errors(
     kind = otherwise if asked == "auto" else asked
     if kind not in supported:
         raise refusal(
-            "covariance_option", "covariance", f"'{kind}'", f"one of {', '.join(supported)}",
+            "covariance_option",
+            "covariance",
+            f"'{kind}'",
+            f"one of {', '.join(supported)}",
             "this estimator has no such covariance: choose another or leave it on auto",
         )
     return ErrorRule(kind, {}, n)
@@ -80,23 +83,35 @@ def choose_errors(
 def _check_clusters(clusters: dict[str, Integers]) -> None:
     if not clusters:
         raise refusal(
-            "no_clusters", "clusters", "no cluster dimension", "one or two dimensions",
+            "no_clusters",
+            "clusters",
+            "no cluster dimension",
+            "one or two dimensions",
             "declare the dimension in which the deals share shocks",
         )
     if len(clusters) > MOST_DIMENSIONS:
         raise refusal(
-            "cluster_dimensions", ", ".join(clusters), f"{len(clusters)} dimensions",
-            "one or two dimensions", "keep the two in which the deals share shocks",
+            "cluster_dimensions",
+            ", ".join(clusters),
+            f"{len(clusters)} dimensions",
+            "one or two dimensions",
+            "keep the two in which the deals share shocks",
         )
     for name, codes in clusters.items():
         if (codes < 0).any():
             raise refusal(
-                "cluster_missing", name, f"{int((codes < 0).sum())} deals without a cluster",
-                "a cluster for every deal", "fill the identifier or drop the deals",
+                "cluster_missing",
+                name,
+                f"{int((codes < 0).sum())} deals without a cluster",
+                "a cluster for every deal",
+                "fill the identifier or drop the deals",
             )
         if cov.groups_of(codes) < 2:
             raise refusal(
-                "one_cluster", name, "one cluster", "at least two, better forty",
+                "one_cluster",
+                name,
+                "one cluster",
+                "at least two, better forty",
                 "cluster by a finer dimension or not at all",
             )
 

@@ -166,7 +166,10 @@ def _sets(
     reach = t_reach(options.level, second.df)
     sets = {
         "wald": ConfidenceSet(
-            Shape.INTERVAL, estimate - reach * error, estimate + reach * error, options.level,
+            Shape.INTERVAL,
+            estimate - reach * error,
+            estimate + reach * error,
+            options.level,
             second.df_rule,
         ),
         "anderson_rubin": anderson_rubin_set(forms, options.level),
@@ -180,8 +183,12 @@ def _tests(parts: Parts, forms: ReducedForms, second: Second) -> dict[str, Teste
     L = len(parts.instruments)
     return {
         "robust_f": wald(
-            "First-stage F", "the instruments do not move the treatment",
-            forms.treatment, forms.covariance[L:, L:], forms.df, "Kleibergen and Paap (2006)",
+            "First-stage F",
+            "the instruments do not move the treatment",
+            forms.treatment,
+            forms.covariance[L:, L:],
+            forms.df,
+            "Kleibergen and Paap (2006)",
         ),
         "homoskedastic_f": _homoskedastic_f(parts),
         "anderson_rubin": anderson_rubin_test(forms),
@@ -199,8 +206,11 @@ def _homoskedastic_f(parts: Parts) -> TestResult:
     statistic = (float(parts.D @ parts.D) - noise) / L / (noise / free)
     sizes = dict(zip((10, 15, 20, 25), STOCK_YOGO_SIZE.get(L, ()), strict=False))
     return f_test(
-        "First-stage F, equal variances", "the instruments do not move the treatment",
-        statistic, L, free,
+        "First-stage F, equal variances",
+        "the instruments do not move the treatment",
+        statistic,
+        L,
+        free,
         caution="holds under equal variances and independent deals only; kept for comparison",
         citation="Cragg and Donald (1993); Stock and Yogo (2005)",
         facts={f"stock_yogo_size_{size}": value for size, value in sizes.items()},
@@ -217,8 +227,10 @@ def _wu_hausman(parts: Parts) -> TestResult:
     errors = sandwich(sample.rule, wide, bread, e[:, None], k + sample.counted)
     df, _ = degrees_of_freedom(sample.rule, k + sample.absorbed)
     return t_test(
-        "Wu-Hausman", "least squares and two stages estimate the same coefficient",
-        float(b[-1] / np.sqrt(errors.covariance[-1, -1])), df,
+        "Wu-Hausman",
+        "least squares and two stages estimate the same coefficient",
+        float(b[-1] / np.sqrt(errors.covariance[-1, -1])),
+        df,
         caution="has little power when the instruments are weak",
         citation="Wu (1973); Hausman (1978); Wooldridge (2010), sec. 6.3.1",
     )
@@ -247,16 +259,17 @@ def _overidentification(parts: Parts, second: Second) -> Tested:
         v = parts.y - parts.D * float(weighted @ y) / float(weighted @ d)
     g = parts.Z.T @ v
     return chi2_test(
-        name, "the instruments agree on one coefficient", float(g @ np.linalg.solve(S, g)), L - 1,
+        name,
+        "the instruments agree on one coefficient",
+        float(g @ np.linalg.solve(S, g)),
+        L - 1,
         caution="a flaw that all instruments share goes unseen, and treatment effects that differ "
         "between deals can reject too",
         citation="Sargan (1958)" if rule.kind == "classical" else "Hansen (1982)",
     )
 
 
-def _facts(
-    design: Design, parts: Parts, forms: ReducedForms, second: Second
-) -> dict[str, float]:
+def _facts(design: Design, parts: Parts, forms: ReducedForms, second: Second) -> dict[str, float]:
     sample, k = parts.sample, len(second.coefficients)
     plain = float(parts.D @ parts.y) / float(parts.D @ parts.D)
     left = solve(parts.Z, parts.D)[1]

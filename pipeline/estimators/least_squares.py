@@ -110,9 +110,7 @@ def fixed_effects(design: Design, options: FitOptions) -> Estimate:
     )
 
 
-def _estimate(
-    design: Design, options: FitOptions, sample: Sample, fitted: Fitted
-) -> Estimate:
+def _estimate(design: Design, options: FitOptions, sample: Sample, fitted: Fitted) -> Estimate:
     df, sentence = degrees_of_freedom(sample.rule, len(sample.names) + sample.absorbed)
     return Estimate(
         estimator="",
@@ -155,7 +153,9 @@ def fit_sample(sample: Sample, design: Design) -> Fitted:
     if hat is not None and sample.rule.kind in ("hc2", "hc3") and hat.max() > 1 - 1e-9:
         guilty = np.array(design.rows)[sample.kept][int(hat.argmax())]
         raise refusal(
-            "fitted_exactly", "", f"deal {guilty} alone decides a coefficient",
+            "fitted_exactly",
+            "",
+            f"deal {guilty} alone decides a coefficient",
             "at least two deals behind every coefficient",
             "drop the regressor that marks this deal only, or choose HC1 errors",
         )
@@ -175,20 +175,23 @@ def check_rows(sample: Sample) -> None:
     k = len(sample.names) + sample.absorbed
     if sample.n <= k:
         raise refusal(
-            "few_rows", ", ".join(sample.levels),
+            "few_rows",
+            ", ".join(sample.levels),
             f"{sample.n} deals for {k} coefficients, effects included",
-            "more deals than coefficients", "use coarser fixed effects",
+            "more deals than coefficients",
+            "use coarser fixed effects",
         )
 
 
 def _joint_controls(design: Design, sample: Sample, fitted: Fitted, df: float) -> Tested:
     varies = np.ptp(sample.X, axis=0) > 0
-    chosen = [
-        at for at, name in enumerate(sample.names) if varies[at] and name != design.treatment
-    ]
+    chosen = [at for at, name in enumerate(sample.names) if varies[at] and name != design.treatment]
     return diagnostics.wald(
-        "Joint test of the controls", "the controls' coefficients are all zero",
-        fitted.coefficients[chosen], fitted.covariance[np.ix_(chosen, chosen)], df,
+        "Joint test of the controls",
+        "the controls' coefficients are all zero",
+        fitted.coefficients[chosen],
+        fitted.covariance[np.ix_(chosen, chosen)],
+        df,
     )
 
 
@@ -229,7 +232,10 @@ def _row_facts(design: Design, sample: Sample, fitted: Fitted) -> dict[str, floa
     if fitted.hat is None or sample.n <= len(sample.names) + 1:
         return {}
     moves = diagnostics.dfbetas(
-        fitted.bread, fitted.errors.influence, fitted.residuals, fitted.hat,
+        fitted.bread,
+        fitted.errors.influence,
+        fitted.residuals,
+        fitted.hat,
         sample.names.index(design.treatment),
     )
     return {

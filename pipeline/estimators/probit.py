@@ -92,7 +92,9 @@ def fit_probit(equation: Equation) -> ProbitFit:
     chosen, W, names = equation.chosen, equation.W, equation.names
     if chosen.all() or not chosen.any():
         raise refusal(
-            "one_outcome", "selection", "every candidate chose alike",
+            "one_outcome",
+            "selection",
+            "every candidate chose alike",
             "candidates that announced and candidates that did not",
             "add candidates without a deal",
         )
@@ -176,7 +178,10 @@ def _refuse_separation(signs: Floats, W: Floats, names: tuple[str, ...]) -> None
     """
     signed = W * signs[:, None] * np.sqrt(len(signs))
     found = optimize.linprog(
-        -signed.sum(axis=0), A_ub=-signed, b_ub=np.zeros(len(signs)), bounds=(-1, 1),
+        -signed.sum(axis=0),
+        A_ub=-signed,
+        b_ub=np.zeros(len(signs)),
+        bounds=(-1, 1),
         method="highs",
     )
     if found.status != 0 or found.x is None:
@@ -185,15 +190,15 @@ def _refuse_separation(signs: Floats, W: Floats, names: tuple[str, ...]) -> None
     size = np.abs(found.x)
     if size.max() > 0.5:
         varies = np.ptp(W, axis=0) > 0
-        raise _separated(
-            [name for at, name in enumerate(names) if varies[at] and size[at] > 1e-6]
-        )
+        raise _separated([name for at, name in enumerate(names) if varies[at] and size[at] > 1e-6])
 
 
 def _separated(guilty: list[str]) -> InputProblem:
     listed = ", ".join(guilty)
     return refusal(
-        "separation", listed, f"{listed} splits candidates that announced from those that did not",
+        "separation",
+        listed,
+        f"{listed} splits candidates that announced from those that did not",
         "a variable whose values both kinds of candidate share",
         "drop it, group its levels, or leave out the candidates it decides",
     )
@@ -252,7 +257,8 @@ def probit_estimate(
         df=df,
         df_rule=sentence,
         covariance_name="inverse of the observed information"
-        if rule.kind == "classical" else words(rule),
+        if rule.kind == "classical"
+        else words(rule),
         n=len(equation.chosen),
         treatment=equation.key,
         outcome=equation.outcome,
@@ -269,8 +275,11 @@ def probit_estimate(
 def _all_variables(fit: ProbitFit, equation: Equation, V: Floats, df: float) -> Tested:
     varies = np.flatnonzero(np.ptp(equation.W, axis=0) > 0)
     return wald(
-        "Wald test of the selection equation", "no variable matters",
-        fit.coefficients[varies], V[np.ix_(varies, varies)], df,
+        "Wald test of the selection equation",
+        "no variable matters",
+        fit.coefficients[varies],
+        V[np.ix_(varies, varies)],
+        df,
     )
 
 

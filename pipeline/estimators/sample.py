@@ -67,15 +67,23 @@ def plain(design: Design, rule: ErrorRule) -> Sample:
         listed = " and ".join(design.effects)
         notes = (f"The fixed effects ({listed}) are not in this column.",)
     return Sample(
-        y=design.y, X=design.X, names=design.names, Z=_instruments(design), rule=rule,
-        counted=0, absorbed=0, hat=np.zeros(design.n), levels={}, total=_about_mean(design.y),
-        outside=0, kept=np.ones(design.n, dtype=np.bool_), notes=notes,
+        y=design.y,
+        X=design.X,
+        names=design.names,
+        Z=_instruments(design),
+        rule=rule,
+        counted=0,
+        absorbed=0,
+        hat=np.zeros(design.n),
+        levels={},
+        total=_about_mean(design.y),
+        outside=0,
+        kept=np.ones(design.n, dtype=np.bool_),
+        notes=notes,
     )
 
 
-def within(
-    design: Design, options: FitOptions, supported: tuple[str, ...] | None = None
-) -> Sample:
+def within(design: Design, options: FitOptions, supported: tuple[str, ...] | None = None) -> Sample:
     """The design's effects taken out of every column, singletons dropped first.
 
     The errors are clustered if the design has clusters and no other covariance is asked for,
@@ -89,20 +97,30 @@ def within(
     """
     if not design.effects:
         raise refusal(
-            "no_effects", "fixed_effects", "no fixed effect", "at least one",
+            "no_effects",
+            "fixed_effects",
+            "no fixed effect",
+            "at least one",
             "declare an effect or use least squares",
         )
     keep = absorb.without_singletons(design.effects)
     if keep.sum() <= design.X.shape[1]:
         raise refusal(
-            "few_rows", ", ".join(design.effects), f"{int(keep.sum())} deals in groups of two or "
-            "more", "more deals than coefficients", "use a coarser fixed effect",
+            "few_rows",
+            ", ".join(design.effects),
+            f"{int(keep.sum())} deals in groups of two or more",
+            "more deals than coefficients",
+            "use a coarser fixed effect",
         )
     effects = {name: codes[keep] for name, codes in design.effects.items()}
     clusters = {name: codes[keep] for name, codes in design.clusters.items()}
     every = ("classical", "hc0", "hc1", *(("hc2", "hc3") if len(effects) == 1 else ()))
     rule = choose_errors(
-        clusters, int(keep.sum()), options, otherwise="hc1", cluster_by_default=True,
+        clusters,
+        int(keep.sum()),
+        options,
+        otherwise="hc1",
+        cluster_by_default=True,
         supported=supported or every,
     )
     return _demeaned(design, keep, effects, rule)
@@ -125,10 +143,19 @@ def _demeaned(
     absorb.refuse_absorbed(y[:, None], left[:, :1], (design.outcome,))
     free = {n: c for n, c in effects.items() if not absorb.nested(c, rule.clusters)}
     return Sample(
-        y=left[:, 0], X=left[:, 1 : 1 + k], names=names, Z=left[:, 1 + k :], rule=rule,
-        counted=absorb.coefficients_of(free), absorbed=absorb.coefficients_of(effects),
-        hat=_group_leverage(effects), levels={n: groups_of(c) for n, c in effects.items()},
-        total=_about_mean(y), outside=int((~keep).sum()), kept=keep, notes=_notes(keep, effects),
+        y=left[:, 0],
+        X=left[:, 1 : 1 + k],
+        names=names,
+        Z=left[:, 1 + k :],
+        rule=rule,
+        counted=absorb.coefficients_of(free),
+        absorbed=absorb.coefficients_of(effects),
+        hat=_group_leverage(effects),
+        levels={n: groups_of(c) for n, c in effects.items()},
+        total=_about_mean(y),
+        outside=int((~keep).sum()),
+        kept=keep,
+        notes=_notes(keep, effects),
     )
 
 
@@ -167,14 +194,20 @@ def _check_treatment(design: Design) -> None:
     column = design.X[:, design.names.index(design.treatment)]
     if np.ptp(column) == 0:
         raise refusal(
-            "no_variation", design.treatment, "the same value in every deal",
-            "a treatment that differs between deals", "widen the sample or ask another question",
+            "no_variation",
+            design.treatment,
+            "the same value in every deal",
+            "a treatment that differs between deals",
+            "widen the sample or ask another question",
         )
 
 
 def _check_outcome(y: Floats) -> None:
     if np.ptp(y) == 0:
         raise refusal(
-            "no_variation", "outcome", "the same outcome in every deal", "outcomes that differ",
+            "no_variation",
+            "outcome",
+            "the same outcome in every deal",
+            "outcomes that differ",
             "check the returns",
         )

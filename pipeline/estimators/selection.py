@@ -84,7 +84,10 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     """
     selection = _checked(design, options)
     rule = choose_errors(
-        selection.clusters, len(selection.selected), options, otherwise="classical",
+        selection.clusters,
+        len(selection.selected),
+        options,
+        otherwise="classical",
         supported=("classical", "hc0", "hc1"),
     )
     notes = plain(design, rule).notes
@@ -96,7 +99,13 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     V, floored = _covariance(step, first, selection, rule)
     stage = probit_estimate(first, equation, rule, options)
     return _estimate(
-        design, options, rule, step, positive(V, names), stage, selection,
+        design,
+        options,
+        rule,
+        step,
+        positive(V, names),
+        stage,
+        selection,
         (*notes, *cautions(rule, floored)),
     )
 
@@ -105,24 +114,35 @@ def _checked(design: Design, options: FitOptions) -> SelectionRows:
     selection = design.selection
     if selection is None:
         raise refusal(
-            "no_selection", "selection", "no candidates", "a table of candidates",
+            "no_selection",
+            "selection",
+            "no candidates",
+            "a table of candidates",
             "declare which companies could have announced a deal",
         )
     unknown = [name for name in selection.excluded if name not in selection.names]
     if unknown:
         raise refusal(
-            "unknown_exclusion", ", ".join(unknown), "not in the selection equation",
-            "excluded variables among those that explain announcing", "add it there",
+            "unknown_exclusion",
+            ", ".join(unknown),
+            "not in the selection equation",
+            "excluded variables among those that explain announcing",
+            "add it there",
         )
     both = [name for name in selection.excluded if name in design.names]
     if both:
         raise refusal(
-            "excluded_is_control", ", ".join(both), "excluded, yet a regressor of the outcome",
-            "a variable that moves announcing and not the outcome", "take it out of one of the two",
+            "excluded_is_control",
+            ", ".join(both),
+            "excluded, yet a regressor of the outcome",
+            "a variable that moves announcing and not the outcome",
+            "take it out of one of the two",
         )
     if not selection.excluded and not options.allow_functional_form:
         raise refusal(
-            "no_exclusion", "selection", "no variable moves announcing alone",
+            "no_exclusion",
+            "selection",
+            "no variable moves announcing alone",
             "at least one excluded variable",
             "name one and say why it does not move the outcome, or set allow_functional_form",
         )
@@ -137,9 +157,11 @@ def _check_rows(design: Design, selection: SelectionRows) -> None:
     if stray or (found != 1).any():
         lost, twice = int((found == 0).sum()), int((found > 1).sum())
         raise refusal(
-            "selection_rows", "candidates",
+            "selection_rows",
+            "candidates",
             f"{lost} deals without a candidate, {twice} with several, {stray} without a deal",
-            "one selected candidate a deal", "match the candidates to the deals",
+            "one selected candidate a deal",
+            "match the candidates to the deals",
         )
 
 
@@ -190,9 +212,7 @@ def corrected_covariance(step: SecondStep, information: Floats) -> Floats:
     return np.asarray(V)
 
 
-def stacked_influence(
-    step: SecondStep, first: ProbitFit, selection: SelectionRows
-) -> Floats:
+def stacked_influence(step: SecondStep, first: ProbitFit, selection: SelectionRows) -> Floats:
     """(A, k + 1) influence of every candidate on the outcome coefficients, through both steps.
 
     (X*'X*)⁻¹(x*_i e_i + G₂₁ψ_i), ψ_i (q,) the candidate's influence on γ and G₂₁ (k + 1, q) the
@@ -229,7 +249,8 @@ def _estimate(
         df=df,
         df_rule=sentence,
         covariance_name="two-step, counting the error of the selection equation"
-        if rule.kind == "classical" else f"stacked moments of both steps, {words(rule)}",
+        if rule.kind == "classical"
+        else f"stacked moments of both steps, {words(rule)}",
         n=design.n,
         treatment=design.treatment,
         outcome=design.outcome,
@@ -249,7 +270,8 @@ def _estimate(
 def _estimand(design: Design, selection: SelectionRows) -> str:
     identified = (
         f"the exclusion of {', '.join(selection.excluded)} from the outcome"
-        if selection.excluded else "the curvature of the inverse Mills ratio alone"
+        if selection.excluded
+        else "the curvature of the inverse Mills ratio alone"
     )
     return (
         f"difference in mean {design.outcome} associated with {design.treatment} among all "
@@ -282,7 +304,9 @@ def _excluded(stage: Estimate, selection: SelectionRows) -> Tested:
     return diagnostics.wald(
         "Excluded variables in the selection equation",
         "the excluded variables do not move announcing",
-        stage.coefficients[at], stage.covariance[np.ix_(at, at)], stage.df,
+        stage.coefficients[at],
+        stage.covariance[np.ix_(at, at)],
+        stage.df,
         "Wald (1943)",
     )
 
@@ -335,12 +359,14 @@ def _equation_notes(design: Design, selection: SelectionRows) -> list[str]:
     """Where the two equations differ beyond the declared exclusions."""
     constant = np.ptp(design.X, axis=0) == 0
     missing = [
-        name for name, fixed in zip(design.names, constant, strict=True)
+        name
+        for name, fixed in zip(design.names, constant, strict=True)
         if name not in selection.names and not fixed
     ]
     varies = np.ptp(selection.W, axis=0) > 0
     undeclared = [
-        name for name, moves in zip(selection.names, varies, strict=True)
+        name
+        for name, moves in zip(selection.names, varies, strict=True)
         if moves and name not in design.names and name not in selection.excluded
     ]
     notes = []

@@ -71,8 +71,11 @@ def parts_of(design: Design, options: FitOptions) -> Parts:
     """
     if not design.instruments:
         raise refusal(
-            "under_identified", "instruments", f"no instrument for {design.treatment}",
-            "at least one", "declare an instrument or use least squares",
+            "under_identified",
+            "instruments",
+            f"no instrument for {design.treatment}",
+            "at least one",
+            "declare an instrument or use least squares",
         )
     _check_names(design)
     sample = _sample(design, options)
@@ -82,9 +85,15 @@ def parts_of(design: Design, options: FitOptions) -> Parts:
     controls = np.delete(sample.X, at, axis=1)
     left = partial_out(np.column_stack([sample.y, sample.X[:, at], sample.Z]), controls)
     parts = Parts(
-        sample=sample, at=at, instruments=design.instruments, controls=controls,
+        sample=sample,
+        at=at,
+        instruments=design.instruments,
+        controls=controls,
         control_names=tuple(np.delete(np.array(sample.names, dtype=object), at)),
-        y=left[:, 0], D=left[:, 1], Z=left[:, 2:], spread=np.column_stack([sample.Z, controls]),
+        y=left[:, 0],
+        D=left[:, 1],
+        Z=left[:, 2:],
+        spread=np.column_stack([sample.Z, controls]),
     )
     _check_same(design, parts)
     return parts
@@ -94,7 +103,11 @@ def _sample(design: Design, options: FitOptions) -> Sample:
     if design.effects:
         return within(design, options, SUPPORTED)
     rule = choose_errors(
-        design.clusters, design.n, options, otherwise="hc1", cluster_by_default=True,
+        design.clusters,
+        design.n,
+        options,
+        otherwise="hc1",
+        cluster_by_default=True,
         supported=SUPPORTED,
     )
     return plain(design, rule)
@@ -103,14 +116,20 @@ def _sample(design: Design, options: FitOptions) -> Sample:
 def _check_names(design: Design) -> None:
     if design.treatment in design.instruments:
         raise refusal(
-            "instrument_is_treatment", design.treatment, "the treatment among its instruments",
-            "an instrument other than the treatment", "take it out of the instruments",
+            "instrument_is_treatment",
+            design.treatment,
+            "the treatment among its instruments",
+            "an instrument other than the treatment",
+            "take it out of the instruments",
         )
     both = [name for name in design.instruments if name in design.names]
     if both:
         raise refusal(
-            "instrument_is_control", ", ".join(both), "an instrument that is also a control",
-            "an instrument excluded from the outcome", "take it out of one of the two",
+            "instrument_is_control",
+            ", ".join(both),
+            "an instrument that is also a control",
+            "an instrument excluded from the outcome",
+            "take it out of one of the two",
         )
 
 
@@ -119,21 +138,27 @@ def _check_instruments(design: Design, sample: Sample, at: int) -> None:
     controls = np.delete(sample.X, at, axis=1)
     names = tuple(name for column, name in enumerate(sample.names) if column != at)
     refuse_dependent(
-        np.column_stack([controls, sample.Z]), (*names, *design.instruments),
+        np.column_stack([controls, sample.Z]),
+        (*names, *design.instruments),
         "instrument_collinear",
     )
     free = sample.n - len(names) - len(design.instruments) - sample.absorbed
     if free < 1:
         raise refusal(
-            "few_rows", ", ".join(design.instruments), f"{sample.n} deals, {free} to spare",
-            "more deals than coefficients in the first stage", "use fewer instruments",
+            "few_rows",
+            ", ".join(design.instruments),
+            f"{sample.n} deals, {free} to spare",
+            "more deals than coefficients in the first stage",
+            "use fewer instruments",
         )
     fewest = min(sample.rule.counts.values(), default=sample.n)
     if len(design.instruments) > fewest - 1:
         raise refusal(
-            "too_many_instruments", ", ".join(design.instruments),
+            "too_many_instruments",
+            ", ".join(design.instruments),
             f"{len(design.instruments)} instruments, {fewest} clusters",
-            "fewer instruments than clusters less one", "use fewer instruments or finer clusters",
+            "fewer instruments than clusters less one",
+            "use fewer instruments or finer clusters",
         )
 
 
@@ -144,7 +169,8 @@ def _check_same(design: Design, parts: Parts) -> None:
         return
     alone = (parts.Z.T @ parts.D) ** 2 / np.sum(parts.Z**2, axis=0) / total
     raise refusal(
-        "instrument_is_treatment", parts.instruments[int(alone.argmax())],
+        "instrument_is_treatment",
+        parts.instruments[int(alone.argmax())],
         f"the instruments reproduce {design.treatment} (partial R² above {SAME_VARIABLE})",
         "instruments that move the treatment without being it",
         "an instrument that is the treatment under another name removes no bias: replace it",
@@ -169,9 +195,7 @@ def reduced_forms(parts: Parts) -> ReducedForms:
     size = np.linalg.norm(turned, axis=0)
     size = np.where(size > 0, size, 1.0)
     basis = np.asarray(Q, dtype=np.float64)
-    errors = sandwich(
-        sample.rule, basis, np.eye(L), np.asarray(turned / size), k, unit_free=False
-    )
+    errors = sandwich(sample.rule, basis, np.eye(L), np.asarray(turned / size), k, unit_free=False)
     back = np.kron(
         np.array([[size[0], alpha * size[1]], [0.0, size[1]]]),
         linalg.solve_triangular(R, np.eye(L)),
@@ -182,9 +206,7 @@ def reduced_forms(parts: Parts) -> ReducedForms:
     return ReducedForms(both[:, 0], both[:, 1], positive(V, names), df, errors.floored)
 
 
-def stage(
-    design: Design, options: FitOptions, parts: Parts, *, of_treatment: bool
-) -> Estimate:
+def stage(design: Design, options: FitOptions, parts: Parts, *, of_treatment: bool) -> Estimate:
     """The first stage (treatment) or the reduced form (outcome) on instruments and controls.
 
     Same rows, covariance and degrees-of-freedom rule as the second stage. ``fit``: r_squared
@@ -205,17 +227,26 @@ def stage(
         title="First stage" if of_treatment else "Reduced form",
         estimand=f"difference in mean {outcome} associated with one more unit of each instrument, "
         "holding the controls fixed",
-        names=names, coefficients=b, covariance=positive(errors.covariance, names),
-        df=df, df_rule=sentence, covariance_name=words(sample.rule), n=sample.n,
-        treatment=parts.instruments[0], outcome=outcome,
-        clusters=sample.rule.counts, effects=sample.levels,
+        names=names,
+        coefficients=b,
+        covariance=positive(errors.covariance, names),
+        df=df,
+        df_rule=sentence,
+        covariance_name=words(sample.rule),
+        n=sample.n,
+        treatment=parts.instruments[0],
+        outcome=outcome,
+        clusters=sample.rule.counts,
+        effects=sample.levels,
         fit={
             "r_squared": 1 - squares / float(np.sum((target - target.mean()) ** 2)),
             "partial_r_squared": 1 - squares / float(partial @ partial),
             **multiplier(sample, k),
         },
-        scores=errors.influence, citation="Angrist and Pischke (2009), ch. 4",
-        notes=(*sample.notes, *cautions(sample.rule, errors.floored)), level=options.level,
+        scores=errors.influence,
+        citation="Angrist and Pischke (2009), ch. 4",
+        notes=(*sample.notes, *cautions(sample.rule, errors.floored)),
+        level=options.level,
     )
 
 

@@ -11,7 +11,7 @@ MARKS = ",;\t|"
 
 
 def csv_fault(path: Path, file: str) -> InputProblem | None:
-    """The first byte that is not UTF-8, or the first row with more or fewer cells than the header.
+    """The first row that is not UTF-8, or that has more or fewer cells than the header.
 
     Args:
         path: the csv file.
@@ -36,14 +36,25 @@ def csv_fault(path: Path, file: str) -> InputProblem | None:
                         remedy=f"Complete the row, or put text that holds a '{mark}' in quotes.",
                         row=str(number),
                     )
-    except UnicodeDecodeError as fault:
+    except UnicodeDecodeError:
         return problem(
             "unreadable_file",
             file,
-            got=f"byte {fault.start + 1} of the file, or of a part of it, is not UTF-8",
+            got="a character of another encoding",
             expected="text in UTF-8",
             remedy="Save the table again as CSV in UTF-8.",
+            row=str(_first_undecodable(path)),
         )
     except csv.Error:
         return None
     return None
+
+
+def _first_undecodable(path: Path) -> int:
+    with path.open("rb") as lines:
+        for number, line in enumerate(lines, start=1):
+            try:
+                line.decode("utf-8")
+            except UnicodeDecodeError:
+                return number
+    return 1

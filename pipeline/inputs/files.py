@@ -49,8 +49,8 @@ def read_table(
         only: one of our columns and the values to keep (parquet and csv only read those rows).
 
     Returns:
-        The table. ``_row`` counts from the header as row 1, as a spreadsheet does; blank lines of
-        a csv do not count.
+        The table. ``_row`` counts from the header as row 1, as a spreadsheet does; lines above
+        the header of a csv, and its blank lines, do not count.
 
     Raises:
         InputProblem: if the file is absent, of an unknown kind, unreadable or empty.

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from scipy import stats
 
@@ -96,7 +98,7 @@ def generalised_sign(sample: CarSample) -> Tested:
         return NotApplicable(name, FEW)
     sums = rolling_sums(sample.series.estimation, sample.series.event.shape[1])
     used = np.isfinite(sums)
-    share = float(((sums > 0) & used).sum(axis=1).__truediv__(used.sum(axis=1)).mean())
+    share = float((((sums > 0) & used).sum(axis=1) / used.sum(axis=1)).mean())
     if not 0 < share < 1:
         return NotApplicable(name, "the estimation windows hold returns of one sign only")
     above = float((sample.car > 0).sum())
@@ -129,7 +131,6 @@ def signed_rank(sample: CarSample) -> Tested:
         return NotApplicable(name, FEW)
     ties = len(np.unique(np.abs(car))) < len(car)
     exact = len(car) <= 25 and not ties
-    found = stats.wilcoxon(car, method="exact" if exact else "asymptotic", correction=False)
     n = len(car)
     ranks = stats.rankdata(np.abs(car))
     positive = float(ranks[car > 0].sum())
@@ -144,13 +145,7 @@ def signed_rank(sample: CarSample) -> Tested:
         citation="Wilcoxon 1945",
         facts={"positive_rank_sum": positive},
     )
-    return with_p(result, float(found.pvalue), "exact") if exact else result
-
-
-def with_p(result: Tested, p: float, distribution: str) -> Tested:
-    """The result with a p-value from another distribution than its z."""
-    from dataclasses import replace
-
-    if isinstance(result, NotApplicable):
+    if not exact:
         return result
-    return replace(result, p_value=p, distribution=distribution)
+    found = stats.wilcoxon(car, method="exact")
+    return replace(result, p_value=float(found.pvalue), distribution="exact")

@@ -68,7 +68,7 @@ def date_bootstrap(sample: CarSample) -> Tested:
     groups = int(codes.max()) + 1
     if groups < 6:
         return NotApplicable(name, f"needs at least six dates; the deals share {groups}")
-    total = np.bincount(codes, sample.car, groups)
+    total = np.asarray(np.bincount(codes, sample.car, groups), dtype=np.float64)
     size = np.bincount(codes, minlength=groups).astype(np.float64)
     statistic = float(_cluster_t(total[None, :], size[None, :], 0.0)[0])
     stream = np.random.default_rng(SEED)

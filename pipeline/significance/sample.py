@@ -7,9 +7,26 @@ from dataclasses import dataclass
 import numpy as np
 
 from pipeline.core.abnormal import AbnormalReturns
-from pipeline.core.prices import Floats, Integers
+from pipeline.core.prices import Dates, Floats, Integers
 from pipeline.core.window import Window
 from pipeline.significance.dependence import Dependence, Links, dependence
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Series:
+    """The daily abnormal returns behind n CARs.
+
+    Attributes:
+        event: (n, L) the window's, decimal; NaN where the share did not trade.
+        estimation: (n, E) the estimation window's; NaN where unused.
+        residual_sd: (n,) s of each estimation.
+        days: (n, E) ``datetime64[D]`` dates of ``estimation``.
+    """
+
+    event: Floats
+    estimation: Floats
+    residual_sd: Floats
+    days: Dates
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -23,6 +40,8 @@ class CarSample:
         std_dev: (n,) that standard deviation.
         df: (n,) M - d of each estimation window.
         dependence: correlation and overlap among the deals.
+        series: the daily returns behind them; tests that need them do without an answer if absent.
+        dates: (n,) ``datetime64[D]`` dates of the window's first day, or None.
     """
 
     window: Window
@@ -31,6 +50,8 @@ class CarSample:
     std_dev: Floats
     df: Integers
     dependence: Dependence
+    series: Series | None = None
+    dates: Dates | None = None
 
     @property
     def n(self) -> int:
@@ -50,4 +71,20 @@ def car_sample(
     link = dependence(kept, window, known.take(rows) if known else None)
     std_dev = np.sqrt(kept.car_variance(window))
     car = kept.car(window)
-    return CarSample(window, car, car / std_dev, std_dev, kept.degrees_of_freedom, link)
+    where = kept.columns(window)
+    series = Series(
+        kept.returns[:, where],
+        kept.estimation_returns,
+        np.sqrt(kept.residual_variance),
+        kept.estimation_days,
+    )
+    return CarSample(
+        window=window,
+        car=car,
+        scar=car / std_dev,
+        std_dev=std_dev,
+        df=kept.degrees_of_freedom,
+        dependence=link,
+        series=series,
+        dates=kept.days[:, where.start],
+    )

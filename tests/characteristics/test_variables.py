@@ -60,7 +60,7 @@ def test_sources_and_steps_before_the_sample(
 
 @pytest.mark.parametrize("share", [0.01, 0.05, 0.2])
 def test_winsorising_sets_to_quantiles_of_the_rows_used(share: float) -> None:
-    """pandas' clip at its quantiles; on 101 values scipy's own winsorising agrees at whole ranks."""
+    """pandas' clip at its quantiles; scipy's winsorising, whose ranks are whole on 101 values."""
     stream = np.random.default_rng(1)
     values = stream.standard_t(2, 120)
     used = np.arange(120) < 101

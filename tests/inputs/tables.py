@@ -6,6 +6,7 @@ from collections.abc import Callable
 from pathlib import Path
 
 import pandas as pd
+import pytest
 
 from pipeline.core.findings import Finding, InputProblem
 from pipeline.inputs.files import Source
@@ -88,14 +89,10 @@ def read_frames(folder: Path, tables: Frames, wanted: Wanted = WANTED) -> Tables
     return read_inputs(write_all(folder, tables), wanted)
 
 
-def refused(
-    folder: Path, spoil: Callable[[Frames], None], wanted: Wanted = WANTED
-) -> list[Finding]:
+def refused(folder: Path, spoil: Callable[[Frames], None]) -> list[Finding]:
     """The findings that stop the tables once ``spoil`` has changed them."""
     tables = frames()
     spoil(tables)
-    try:
-        read_frames(folder, tables, wanted)
-    except InputProblem as fault:
-        return list(fault.findings)
-    raise AssertionError("the tables were accepted")
+    with pytest.raises(InputProblem) as caught:
+        read_frames(folder, tables)
+    return list(caught.value.findings)

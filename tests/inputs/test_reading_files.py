@@ -153,20 +153,36 @@ def test_a_declared_column_wins_over_one_of_our_name(tmp_path: Path) -> None:
     assert table["deal_id"].tolist() == ["new"]
 
 
-@pytest.mark.parametrize(
-    ("content", "rule", "words"),
-    [
-        (b"", "empty_table", "no rows"),
-        (b"deal_id,security\n", "empty_table", "no rows"),
-        ("deal_id,name\nD1,Caf\xe9\n".encode("cp1252"), "unreadable_file", "CSV Error"),
-        (TEXT.encode("utf-16"), "unreadable_file", "CSV Error"),
-    ],
-    ids=["empty", "header only", "latin", "utf-16"],
-)
-def test_files_without_a_table(content: bytes, rule: str, words: str, tmp_path: Path) -> None:
+@pytest.mark.parametrize("content", [b"", b"deal_id,security\n"], ids=["empty", "header only"])
+def test_files_without_rows(content: bytes, tmp_path: Path) -> None:
     finding = refusal(csv(tmp_path, content))
-    assert (finding.rule, finding.file) == (rule, "deals.csv")
-    assert words in finding.got
+    assert (finding.rule, finding.file) == ("empty_table", "deals.csv")
+
+
+@pytest.mark.parametrize(
+    ("content", "row"),
+    [
+        ("deal_id,name\nD1,Jam\nD2,Caf\xe9\n".encode("cp1252"), "3"),
+        (TEXT.encode("utf-16"), "1"),
+    ],
+    ids=["latin", "utf-16"],
+)
+def test_files_in_another_encoding(content: bytes, row: str, tmp_path: Path) -> None:
+    finding = refusal(csv(tmp_path, content))
+    assert (finding.rule, finding.file, finding.row) == ("unreadable_file", "deals.csv", row)
+    assert "UTF-8" in finding.expected
+
+
+@pytest.mark.parametrize("at", [0, 20, 40])
+@pytest.mark.parametrize(("odd", "cells"), [("D,A,1,9", "4 cells"), ("D,A", "2 cells")])
+def test_a_row_of_another_length_is_named_and_never_lost(
+    odd: str, cells: str, at: int, tmp_path: Path
+) -> None:
+    rows = [f"D{number},A,1" for number in range(40)]
+    rows.insert(at, odd)
+    finding = refusal(csv(tmp_path, "\n".join(["deal_id,security,x", *rows]) + "\n"))
+    assert (finding.rule, finding.row, finding.got) == ("unreadable_file", str(at + 2), cells)
+    assert finding.expected == "3 cells, as the header has"
 
 
 @pytest.mark.parametrize("name", ["deals.parquet", "deals.xlsx"])
@@ -191,16 +207,3 @@ def test_a_file_that_is_not_there(tmp_path: Path) -> None:
         "missing_file", "none.csv", "inputs.prices",
     )  # fmt: skip
     assert str(tmp_path / "none.csv") in finding.got
-
-
-def test_a_row_with_a_cell_too_many_is_never_cut(tmp_path: Path) -> None:
-    """The file is refused, or the row stands out for the contract; no row disappears."""
-    lines = [f"D{at},A,1" for at in range(40)]
-    source = csv(tmp_path, "\n".join(["deal_id,security,x", *lines, "D40,A,1,9"]) + "\n")
-    try:
-        table = read_table(source)
-    except InputProblem as fault:
-        assert fault.findings[0].rule in ("unreadable_file", "empty_table")
-    else:
-        assert len(table) == 41
-        assert "security" not in table.columns

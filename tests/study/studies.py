@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from pathlib import Path
 
+import pytest
+
 from pipeline.core.findings import Finding, InputProblem, Severity
 from pipeline.study.load import load_study
 from pipeline.study.schema import Study
@@ -78,12 +80,11 @@ def loaded(folder: Path, *pairs: tuple[str, str]) -> Study:
 
 def refused(path: Path) -> tuple[Finding, ...]:
     """The findings that keep a study file from loading."""
-    try:
+    with pytest.raises(InputProblem) as caught:
         load_study(path)
-    except InputProblem as fault:
-        assert all(finding.severity is Severity.ERROR for finding in fault.findings)
-        return fault.findings
-    raise AssertionError(f"{path.name} was accepted")
+    found: tuple[Finding, ...] = caught.value.findings
+    assert all(finding.severity is Severity.ERROR for finding in found)
+    return found
 
 
 def one_refusal(folder: Path, *pairs: tuple[str, str]) -> Finding:
