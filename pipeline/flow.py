@@ -47,11 +47,10 @@ from pipeline.returns.events import (
     locate,
     locate_candidates,
     masked_sessions,
-    screen_estimation,
-    screen_event,
 )
 from pipeline.returns.measure import measure
 from pipeline.returns.panel import build_panels
+from pipeline.returns.screens import screen_estimation, screen_event
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.paths import average_paths
 from pipeline.significance.variants import mean_variants

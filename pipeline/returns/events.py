@@ -8,17 +8,11 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
-from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
 from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
 from pipeline.returns.day_zero import ledger_entry, place, sentence
-from pipeline.returns.panel import suspected_splits
 from pipeline.returns.sessions import Sessions
-
-ZERO_RETURNS_DROP = 0.5
-ZERO_RETURNS_FLAG = 0.2
-LARGE_RETURN = 0.5
 
 
 @dataclass(frozen=True, slots=True)
@@ -185,144 +179,6 @@ def masked_sessions(
             if other != position:
                 masked[row] |= np.abs(position + days - other) <= around
     return masked
-
-
-def screen_estimation(
-    located: pd.DataFrame,
-    abnormal: AbnormalReturns,
-    panels: Mapping[str, PricePanel],
-    masked: Booleans,
-    options: EventOptions,
-) -> tuple[Booleans, StageLedger]:
-    """Which events have a usable estimation window, by the first rule each fails.
-
-    The rules in order: suspected split, too few returns, no fit, too many zero returns.
-    """
-    splits = {exchange: suspected_splits(panel) for exchange, panel in panels.items()}
-    entries: list[LedgerEntry] = []
-    keep = np.ones(len(located), dtype=np.bool_)
-    for row, event in enumerate(located_events(located)):
-        panel = panels[event.exchange]
-        verdict = _split_verdict(event, splits[event.exchange], panel, options) or (
-            _estimation_verdict(event, abnormal, row, panel, options)
-        )
-        if verdict is not None:
-            entries.append(verdict)
-            keep[row] = verdict.action is not Action.DROPPED
-        if keep[row] and masked[row].any():
-            entries.append(
-                LedgerEntry(
-                    event.deal,
-                    "masked_sessions",
-                    Action.CHANGED,
-                    f"{int(masked[row].sum())} sessions left out",
-                    f"{options.mask_sessions} sessions around another deal",
-                )
-            )
-    return keep, StageLedger("estimation window", len(located), tuple(entries))
-
-
-def _split_verdict(
-    event: Located,
-    splits: Mapping[str, list[np.datetime64]],
-    panel: PricePanel,
-    options: EventOptions,
-) -> LedgerEntry | None:
-    dates = splits.get(event.security, [])
-    first = max(event.position + options.estimation.start, 0)
-    last = min(event.position + options.span.end, len(panel.sessions) - 1)
-    inside = [day for day in dates if panel.sessions[first] <= day <= panel.sessions[last]]
-    if not inside:
-        return None
-    return LedgerEntry(
-        event.deal,
-        "suspected_split",
-        Action.DROPPED,
-        ", ".join(map(str, inside)),
-        "no whole-factor jump",
-    )
-
-
-def _estimation_verdict(
-    event: Located,
-    abnormal: AbnormalReturns,
-    row: int,
-    panel: PricePanel,
-    options: EventOptions,
-) -> LedgerEntry | None:
-    deal = event.deal
-    observations = int(abnormal.observations[row])
-    if observations < options.minimum_observations:
-        return LedgerEntry(
-            deal,
-            "short_estimation",
-            Action.DROPPED,
-            f"{observations} returns",
-            f"{options.minimum_observations} returns",
-        )
-    if not np.isfinite(abnormal.residual_variance[row]):
-        return LedgerEntry(
-            deal, "benchmark_gap", Action.DROPPED, "no fit", "a benchmark that moves"
-        )
-    used = np.isfinite(abnormal.estimation_returns[row])
-    at = event.position + np.arange(options.estimation.start, options.estimation.end + 1)
-    raw = panel.returns[np.clip(at, 0, len(panel.sessions) - 1)[used], event.column]
-    zero = float(np.mean(raw == 0))
-    if zero > ZERO_RETURNS_FLAG:
-        drop = zero > ZERO_RETURNS_DROP
-        return LedgerEntry(
-            deal,
-            "thin_trading",
-            Action.DROPPED if drop else Action.FLAGGED,
-            f"{zero:.0%} unchanged prices",
-            f"{ZERO_RETURNS_DROP if drop else ZERO_RETURNS_FLAG:.0%}",
-        )
-    return None
-
-
-def screen_event(abnormal: AbnormalReturns, headline: Window) -> tuple[Booleans, StageLedger]:
-    """Which events traded on every day of the headline window; flags on what follows it."""
-    keep = abnormal.complete(headline)
-    entries: list[LedgerEntry] = []
-    traded = np.isfinite(abnormal.returns)
-    realised = abnormal.returns + abnormal.expected
-    for row, deal in enumerate(abnormal.deals):
-        if not keep[row]:
-            missing = int((~traded[row, abnormal.columns(headline)]).sum())
-            entries.append(
-                LedgerEntry(
-                    deal,
-                    "event_missing",
-                    Action.DROPPED,
-                    f"{missing} sessions without a return",
-                    f"all of {headline.label}",
-                )
-            )
-            continue
-        last = int(np.flatnonzero(traded[row]).max())
-        in_history = int(np.flatnonzero(~np.isnat(abnormal.days[row])).max())
-        if last < in_history:
-            day = abnormal.span.start + last
-            entries.append(
-                LedgerEntry(
-                    deal,
-                    "delisted",
-                    Action.FLAGGED,
-                    f"last return on day {day:+d}",
-                    f"prices to day {abnormal.span.start + in_history:+d}",
-                )
-            )
-        if np.nanmax(np.abs(realised[row])) > LARGE_RETURN:
-            entries.append(
-                LedgerEntry(
-                    deal,
-                    "large_return",
-                    Action.FLAGGED,
-                    f"{np.nanmax(np.abs(realised[row])):.0%}",
-                    f"{LARGE_RETURN:.0%}",
-                )
-            )
-    return keep, StageLedger("headline window", len(abnormal.deals), tuple(entries))
 
 
 def locate_candidates(candidates: pd.DataFrame, panels: Mapping[str, PricePanel]) -> pd.DataFrame:

@@ -38,8 +38,13 @@ def design_of(y: np.ndarray, D: np.ndarray, controls: np.ndarray, **parts: objec
     X = np.column_stack([np.ones(n), D, controls])
     names = ("constant", "treatment", *(f"control {at}" for at in range(controls.shape[1])))
     return Design(
-        y=y, X=X, names=names, treatment="treatment", rows=tuple(map(str, range(n))),
-        outcome="CAR", **parts,  # type: ignore[arg-type]
+        y=y,
+        X=X,
+        names=names,
+        treatment="treatment",
+        rows=tuple(map(str, range(n))),
+        outcome="CAR",
+        **parts,  # type: ignore[arg-type]
     )
 
 
@@ -85,9 +90,7 @@ def clustered(groups: int, two_way: bool) -> Callable[[np.random.Generator], Out
         return {
             "clustered, t": rejected(column),
             "clustered, normal (not offered)": bool(z > 1.959964),
-            "hc1, clusters ignored": rejected(
-                fixed_effects(design, FitOptions(covariance="hc1"))
-            ),
+            "hc1, clusters ignored": rejected(fixed_effects(design, FitOptions(covariance="hc1"))),
         }
 
     return draw
@@ -104,8 +107,12 @@ def candidates(rng: np.random.Generator) -> Design:
     row[selected] = np.arange(selected.sum())
     clusters = {"acquirer": np.arange(A) // 8}
     rows = SelectionRows(
-        W=np.column_stack([np.ones(A), x, w]), names=("constant", "treatment", "wave"),
-        excluded=("wave",), selected=selected, outcome_row=row, clusters=clusters,
+        W=np.column_stack([np.ones(A), x, w]),
+        names=("constant", "treatment", "wave"),
+        excluded=("wave",),
+        selected=selected,
+        outcome_row=row,
+        clusters=clusters,
     )
     y = (TRUTH * x + u)[selected]
     return design_of(y, x[selected], np.empty((len(y), 0)), selection=rows)
@@ -130,7 +137,8 @@ def selection(rng: np.random.Generator) -> Outcome:
         "second step alone (not offered)": bool(abs(b[1] - TRUTH) > 1.959964 * naive),
         "least squares on deals": rejected(ols(design, FitOptions())),
         "coefficient of the ratio": not mills["ci_low"] <= 0.6 <= mills["ci_high"],
-        "_estimate": float(column.coefficients[1]), "_error": float(column.std_errors[1]),
+        "_estimate": float(column.coefficients[1]),
+        "_error": float(column.std_errors[1]),
     }
 
 
@@ -159,7 +167,11 @@ def instruments(
         D = strength * Z.sum(axis=1) + spread * v
         x = rng.normal(size=(n, 1))
         design = design_of(
-            TRUTH * D + x[:, 0] + u, D, x, Z=Z, instruments=tuple(f"z{at}" for at in range(L)),
+            TRUTH * D + x[:, 0] + u,
+            D,
+            x,
+            Z=Z,
+            instruments=tuple(f"z{at}" for at in range(L)),
             clusters={"acquirer": firm} if groups else {},
         )
         column = two_stage_least_squares(design, FitOptions())
@@ -199,17 +211,21 @@ def measure(name: str, draws: int) -> list[dict[str, object]]:
             found[procedure].append(float(value))
     error = float(np.sqrt(0.05 * 0.95 / draws))
     rows: list[dict[str, object]] = [
-        {"design": name, "procedure": procedure, "nominal": 0.05,
-         "rate": round(float(np.mean(values)), 4), "monte_carlo_se": round(error, 4),
-         "draws": draws}
-        for procedure, values in found.items() if not procedure.startswith("_")
+        {
+            "design": name,
+            "procedure": procedure,
+            "nominal": 0.05,
+            "rate": round(float(np.mean(values)), 4),
+            "monte_carlo_se": round(error, 4),
+            "draws": draws,
+        }
+        for procedure, values in found.items()
+        if not procedure.startswith("_")
     ]
     return rows + list(_means(name, found, draws))
 
 
-def _means(
-    name: str, found: dict[str, list[float]], draws: int
-) -> Iterable[dict[str, object]]:
+def _means(name: str, found: dict[str, list[float]], draws: int) -> Iterable[dict[str, object]]:
     if "_effective_f" in found:
         median = float(np.median(found["_effective_f"]))
         yield {"design": name, "figure": "median effective F", "value": round(median, 2)}
@@ -217,8 +233,10 @@ def _means(
         spread = float(np.std(found["_estimate"], ddof=1))
         ratio = float(np.mean(found["_error"])) / spread
         yield {
-            "design": name, "figure": "mean reported error over the estimates' spread",
-            "value": round(ratio, 4), "monte_carlo_se": round(ratio / np.sqrt(2 * draws), 4),
+            "design": name,
+            "figure": "mean reported error over the estimates' spread",
+            "value": round(ratio, 4),
+            "monte_carlo_se": round(ratio / np.sqrt(2 * draws), 4),
         }
 
 

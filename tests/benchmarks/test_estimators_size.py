@@ -14,7 +14,8 @@ DRAWS = 300
 def rates(design: str) -> dict[str, float]:
     return {
         str(row["procedure"]): float(row["rate"])  # type: ignore[arg-type]
-        for row in measure(design, DRAWS) if "procedure" in row
+        for row in measure(design, DRAWS)
+        if "procedure" in row
     }
 
 
@@ -37,8 +38,11 @@ def test_nominal_size(design: str, valid: str, invalid: str) -> None:
 def test_committed_figures_are_those_of_the_designs() -> None:
     rows = json.loads(FIGURES.read_text(encoding="utf-8"))
     assert {row["draws"] for row in rows if "draws" in row} == {4000}
-    chosen = {row["procedure"]: row for row in rows if row["design"] == "one strong instrument"
-              and "procedure" in row}
+    chosen = {
+        row["procedure"]: row
+        for row in rows
+        if row["design"] == "one strong instrument" and "procedure" in row
+    }
     live = rates("one strong instrument")
     assert set(live) == set(chosen)
     # 300 draws against 4,000 of the same design: four standard errors of the difference.

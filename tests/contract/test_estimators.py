@@ -105,8 +105,13 @@ def test_fields_are_filled(fit: Fit, options: FitOptions, design: Design) -> Non
     assert column.df > 0
     assert column.treatment == "paid_in_shares" in column.names
     for text in (
-        column.estimator, column.title, column.estimand, column.df_rule, column.covariance_name,
-        column.citation, column.outcome,
+        column.estimator,
+        column.title,
+        column.estimand,
+        column.df_rule,
+        column.covariance_name,
+        column.citation,
+        column.outcome,
     ):
         assert text.strip()
     assert bool(column.clusters) == ("clustered" in column.covariance_name)

@@ -44,14 +44,23 @@ def deals(seed: int = 11, candidates: int = 520) -> Design:
     y = y + 0.02 * reason + 0.01 * v[back] + 0.02 * firm_shock[firm[back]]
     y = y + 0.03 * rng.normal(size=n) * (1 + shares)
     return Design(
-        y=y, X=x, names=NAMES, treatment="paid_in_shares",
-        rows=tuple(f"deal {at}" for at in range(n)), outcome="CAR[-1, +1]",
+        y=y,
+        X=x,
+        names=NAMES,
+        treatment="paid_in_shares",
+        rows=tuple(f"deal {at}" for at in range(n)),
+        outcome="CAR[-1, +1]",
         effects={"industry": industry, "year": year},
         clusters={"acquirer": firm[back], "month": year * 12 + rng.integers(0, 12, size=n)},
-        Z=Z, instruments=("treasury_shares", "fast_placement"),
+        Z=Z,
+        instruments=("treasury_shares", "fast_placement"),
         selection=SelectionRows(
-            W=W, names=SELECTION_NAMES, excluded=("divisions_for_sale", "listed_for"),
-            selected=selected, outcome_row=outcome_row, clusters={"acquirer": firm},
+            W=W,
+            names=SELECTION_NAMES,
+            excluded=("divisions_for_sale", "listed_for"),
+            selected=selected,
+            outcome_row=outcome_row,
+            clusters={"acquirer": firm},
         ),
     )
 
@@ -70,16 +79,15 @@ def without(design: Design, *parts: str) -> Design:
 def with_instruments(design: Design, *columns: int) -> Design:
     """The design with these of its instruments only."""
     return replace(
-        design, Z=design.Z[:, list(columns)],
+        design,
+        Z=design.Z[:, list(columns)],
         instruments=tuple(design.instruments[at] for at in columns),
     )
 
 
 def with_column(design: Design, name: str, values: Floats) -> Design:
     """The design with one more control."""
-    return replace(
-        design, X=np.column_stack([design.X, values]), names=(*design.names, name)
-    )
+    return replace(design, X=np.column_stack([design.X, values]), names=(*design.names, name))
 
 
 def shuffled(design: Design, seed: int = 5) -> Design:
@@ -94,14 +102,21 @@ def shuffled(design: Design, seed: int = 5) -> Design:
         row = selection.outcome_row
         moved = np.where(row >= 0, place[np.maximum(row, 0)], -1)
         selection = replace(
-            selection, W=selection.W[turn], selected=selection.selected[turn],
-            outcome_row=moved[turn], clusters={k: c[turn] for k, c in selection.clusters.items()},
+            selection,
+            W=selection.W[turn],
+            selected=selection.selected[turn],
+            outcome_row=moved[turn],
+            clusters={k: c[turn] for k, c in selection.clusters.items()},
         )
     return replace(
-        design, y=design.y[order], X=design.X[order], Z=design.Z[order],
+        design,
+        y=design.y[order],
+        X=design.X[order],
+        Z=design.Z[order],
         rows=tuple(design.rows[at] for at in order),
         effects={k: c[order] for k, c in design.effects.items()},
-        clusters={k: c[order] for k, c in design.clusters.items()}, selection=selection,
+        clusters={k: c[order] for k, c in design.clusters.items()},
+        selection=selection,
     )
 
 

@@ -26,8 +26,9 @@ def test_demeaning_is_the_projection_off_the_indicators(how_many: int) -> None:
     Y = rng.normal(size=(300, 3)) * [1e-3, 1.0, 1e6] + [5.0, 0.0, 1e7]
     left = absorb.demean(Y, {str(at): codes for at, codes in enumerate(effects)})
     # Against numpy's least squares on the indicators; 1e-9 of a column's spread is demanded.
-    np.testing.assert_allclose(left / Y.std(axis=0), by_indicators(Y, *effects) / Y.std(axis=0),
-                               atol=1e-9)
+    np.testing.assert_allclose(
+        left / Y.std(axis=0), by_indicators(Y, *effects) / Y.std(axis=0), atol=1e-9
+    )
 
 
 def test_demeaning_a_chain_of_movers_converges() -> None:

@@ -19,8 +19,9 @@ def test_least_squares_in_wild_units() -> None:
     np.testing.assert_allclose(b, expected, rtol=1e-10)
     np.testing.assert_allclose(e, Y - X @ b, atol=1e-12)
     size = np.linalg.norm(X, axis=0)
-    np.testing.assert_allclose(bread * np.outer(size, size), np.linalg.inv(unit.T @ unit),
-                               rtol=1e-10)
+    np.testing.assert_allclose(
+        bread * np.outer(size, size), np.linalg.inv(unit.T @ unit), rtol=1e-10
+    )
 
 
 def test_leverages_sum_to_the_number_of_columns() -> None:
@@ -47,7 +48,10 @@ def test_dummy_trap_is_a_dependence_with_the_constant() -> None:
     kind = np.arange(30) % 3
     X = np.column_stack([np.ones(30), *(kind == level for level in range(3))]).astype(float)
     assert algebra.dependent(X, ("one", "cash", "shares", "mixed")) == (
-        "one", "cash", "shares", "mixed",
+        "one",
+        "cash",
+        "shares",
+        "mixed",
     )
 
 

@@ -71,8 +71,10 @@ def test_a_set_in_pieces_is_covered_and_said() -> None:
         rng = np.random.default_rng(seed)
         root = rng.normal(size=(4, 4))
         forms = ar.ReducedForms(
-            rng.uniform(1, 4) * rng.normal(size=2), rng.uniform(1, 4) * rng.normal(size=2),
-            root @ root.T / 4, 40.0,
+            rng.uniform(1, 4) * rng.normal(size=2),
+            rng.uniform(1, 4) * rng.normal(size=2),
+            root @ root.T / 4,
+            40.0,
         )
         found = ar.anderson_rubin_set(forms, 0.95)
         assert check(found, forms) == 2
@@ -111,8 +113,10 @@ def test_units_of_outcome_and_treatment() -> None:
     forms = random_forms(3, 2, 4.0)
     weight = np.repeat([1e-6, 1e5], 2)
     other = ar.ReducedForms(
-        forms.outcome * 1e-6, forms.treatment * 1e5,
-        forms.covariance * np.outer(weight, weight), forms.df,
+        forms.outcome * 1e-6,
+        forms.treatment * 1e5,
+        forms.covariance * np.outer(weight, weight),
+        forms.df,
     )
     one, scaled = ar.anderson_rubin_set(forms, 0.9), ar.anderson_rubin_set(other, 0.9)
     assert scaled.shape is one.shape

@@ -130,8 +130,8 @@ def test_covariances_a_study_cannot_have() -> None:
 
 
 @pytest.mark.parametrize(
-    "wrong", [{"level": 1.0}, {"level": 0.4}, {"covariance": "HC3"},
-              {"covariance": "hc1", "cluster": True}],
+    "wrong",
+    [{"level": 1.0}, {"level": 0.4}, {"covariance": "HC3"}, {"covariance": "hc1", "cluster": True}],
 )
 def test_options_out_of_range(wrong: dict[str, object]) -> None:
     with pytest.raises(ValueError, match=r"level|covariance"):

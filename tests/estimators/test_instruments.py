@@ -17,7 +17,9 @@ from tests.estimators.designs import deals, with_instruments, without
 from tests.estimators.test_least_squares import dummies
 
 COVARIANCES = (
-    FitOptions(), FitOptions(covariance="classical"), FitOptions(covariance="hc0"),
+    FitOptions(),
+    FitOptions(covariance="classical"),
+    FitOptions(covariance="hc0"),
     FitOptions(covariance="hc1"),
 )
 
@@ -78,8 +80,8 @@ def test_treatment_as_good_as_its_own_instrument_is_least_squares(design: Design
     column = two_stage_least_squares(close, FitOptions())
     plain = ols(close, FitOptions(covariance="hc1"))
     assert column.term("paid_in_shares")["coefficient"] == pytest.approx(
-        plain.term("paid_in_shares")["coefficient"], abs=0.1 * plain.term("paid_in_shares")[
-            "std_error"]
+        plain.term("paid_in_shares")["coefficient"],
+        abs=0.1 * plain.term("paid_in_shares")["std_error"],
     )
     assert column.fit["least_squares"] == pytest.approx(plain.coefficients[1])
     assert column.robust_set is None
@@ -95,9 +97,9 @@ def test_rule_of_the_headline_set(design: Design) -> None:
         assert ("tf" in column.sets) == (len(rows) == 1)
         assert ("liml" in column.fit) == (len(rows) == 2)
         assert ("tf_critical_value" in column.fit) == (len(rows) == 1)
-    assert "tf" not in two_stage_least_squares(
-        with_instruments(design, 0), FitOptions(level=0.9)
-    ).sets
+    assert (
+        "tf" not in two_stage_least_squares(with_instruments(design, 0), FitOptions(level=0.9)).sets
+    )
 
 
 def test_no_first_stage_bounds_nothing(design: Design) -> None:
@@ -141,17 +143,29 @@ def test_instruments_that_cannot_identify_are_refused(design: Design) -> None:
 
     assert rule_of(instruments=(), Z=np.empty((0, 0)))[0] == "under_identified"
     assert rule_of(Z=pair(D), instruments=("treasury_shares", "paid_in_shares")) == (
-        "instrument_is_treatment", "paid_in_shares")
+        "instrument_is_treatment",
+        "paid_in_shares",
+    )
     assert rule_of(Z=pair(D + 1e-4 * rng.normal(size=design.n)), instruments=two) == (
-        "instrument_is_treatment", "other")
+        "instrument_is_treatment",
+        "other",
+    )
     assert rule_of(Z=pair(design.Z[:, 1]), instruments=("treasury_shares", "run_up")) == (
-        "instrument_is_control", "run_up")
+        "instrument_is_control",
+        "run_up",
+    )
     assert rule_of(Z=pair(2 * run_up), instruments=two, effects={}) == (
-        "instrument_collinear", "run_up, other")
+        "instrument_collinear",
+        "run_up, other",
+    )
     assert rule_of(Z=pair(3 * z[:, 0]), instruments=two) == (
-        "instrument_collinear", "treasury_shares, other")
+        "instrument_collinear",
+        "treasury_shares, other",
+    )
     assert rule_of(Z=pair(design.effects["year"].astype(float)), instruments=two) == (
-        "absorbed", "other")
+        "absorbed",
+        "other",
+    )
     assert rule_of(Z=pair(np.ones(design.n)), instruments=two)[0] == "no_variation"
     few = {"region": np.arange(design.n) % 2}
     assert rule_of(clusters=few)[0] == "too_many_instruments"
@@ -167,8 +181,14 @@ def test_too_many_instruments_for_the_deals(design: Design) -> None:
     rows = slice(0, 12)
     rng = np.random.default_rng(2)
     small = replace(
-        design, y=design.y[rows], X=design.X[rows], rows=design.rows[rows], effects={},
-        clusters={}, selection=None, Z=rng.normal(size=(12, 8)),
+        design,
+        y=design.y[rows],
+        X=design.X[rows],
+        rows=design.rows[rows],
+        effects={},
+        clusters={},
+        selection=None,
+        Z=rng.normal(size=(12, 8)),
         instruments=tuple(f"z{at}" for at in range(8)),
     )
     with pytest.raises(InputProblem) as caught:
@@ -185,7 +205,8 @@ def test_exact_outcome_is_withheld(design: Design) -> None:
 def test_complier_share_of_a_binary_instrument(design: Design) -> None:
     column = two_stage_least_squares(with_instruments(design, 1), FitOptions())
     assert column.fit["complier_share"] == pytest.approx(
-        column.stages[0].term("fast_placement")["coefficient"])
+        column.stages[0].term("fast_placement")["coefficient"]
+    )
     other = two_stage_least_squares(with_instruments(design, 0), FitOptions())
     assert "complier_share" not in other.fit
 

@@ -70,15 +70,14 @@ def test_effects_not_nested_in_the_clusters_are_counted(design: Design) -> None:
 
 def test_effects_nested_in_the_clusters_are_not_counted(design: Design) -> None:
     nested = replace(
-        design, effects={"acquirer": design.clusters["acquirer"]},
+        design,
+        effects={"acquirer": design.clusters["acquirer"]},
         clusters={"acquirer": design.clusters["acquirer"]},
     )
     within = fixed_effects(nested, FitOptions())
     assert within.fit["counted"] == 1
     n, k, G = within.n, 4, within.clusters["acquirer"]
-    assert within.fit["small_sample_factor"] == pytest.approx(
-        G / (G - 1) * (n - 1) / (n - k - 1)
-    )
+    assert within.fit["small_sample_factor"] == pytest.approx(G / (G - 1) * (n - 1) / (n - k - 1))
 
 
 def test_singletons_are_set_aside_and_counted(design: Design) -> None:
@@ -87,8 +86,14 @@ def test_singletons_are_set_aside_and_counted(design: Design) -> None:
     odd = replace(design, effects={"industry": codes})
     column = fixed_effects(odd, FitOptions())
     rest = replace(
-        odd, y=odd.y[3:], X=odd.X[3:], Z=odd.Z[3:], rows=odd.rows[3:], selection=None,
-        effects={"industry": codes[3:]}, clusters={k: c[3:] for k, c in odd.clusters.items()},
+        odd,
+        y=odd.y[3:],
+        X=odd.X[3:],
+        Z=odd.Z[3:],
+        rows=odd.rows[3:],
+        selection=None,
+        effects={"industry": codes[3:]},
+        clusters={k: c[3:] for k, c in odd.clusters.items()},
     )
     fewer = fixed_effects(rest, FitOptions())
     assert column.fit["singletons"] == 3
@@ -108,9 +113,7 @@ def test_a_control_fixed_within_groups_is_refused(design: Design) -> None:
 
 
 def test_an_effect_within_another_is_said(design: Design) -> None:
-    coarse = replace(
-        design, effects={**design.effects, "sector": design.effects["industry"] // 3}
-    )
+    coarse = replace(design, effects={**design.effects, "sector": design.effects["industry"] // 3})
     column = fixed_effects(coarse, FitOptions())
     assert any("sector is fixed within industry" in note for note in column.notes)
     plain = fixed_effects(design, FitOptions())
@@ -130,8 +133,14 @@ def test_no_effects_and_all_singletons(design: Design) -> None:
 def test_effects_that_leave_no_degrees_of_freedom(design: Design) -> None:
     pairs = np.arange(design.n) // 2
     small = replace(
-        design, y=design.y[:8], X=design.X[:8], Z=design.Z[:8], rows=design.rows[:8],
-        effects={"pair": pairs[:8]}, clusters={}, selection=None,
+        design,
+        y=design.y[:8],
+        X=design.X[:8],
+        Z=design.Z[:8],
+        rows=design.rows[:8],
+        effects={"pair": pairs[:8]},
+        clusters={},
+        selection=None,
     )
     with pytest.raises(InputProblem) as caught:
         fixed_effects(small, FitOptions())
@@ -159,8 +168,7 @@ def test_an_exact_fit_is_withheld(design: Design) -> None:
 def test_words_of_the_estimands(design: Design) -> None:
     column = ols(design, FitOptions())
     assert column.estimand == (
-        "difference in mean CAR[-1, +1] associated with paid_in_shares, "
-        "holding the controls fixed"
+        "difference in mean CAR[-1, +1] associated with paid_in_shares, holding the controls fixed"
     )
     slope = ols(replace(design, treatment="run_up"), FitOptions())
     assert "one more unit of run_up" in slope.estimand
@@ -189,8 +197,14 @@ def test_collinearity_is_noted() -> None:
 def test_few_spare_deals_are_noted(design: Design) -> None:
     rows = slice(0, 9)
     small = replace(
-        design, y=design.y[rows], X=design.X[rows], Z=design.Z[rows], rows=design.rows[rows],
-        effects={}, clusters={}, selection=None,
+        design,
+        y=design.y[rows],
+        X=design.X[rows],
+        Z=design.Z[rows],
+        rows=design.rows[rows],
+        effects={},
+        clusters={},
+        selection=None,
     )
     assert any("Only 4 deals more" in note for note in ols(small, FitOptions()).notes)
 

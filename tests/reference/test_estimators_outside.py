@@ -30,9 +30,21 @@ CASES: Mapping[str, Any] = json.loads(
     (Path(__file__).parent / "estimators.json").read_text(encoding="utf-8")
 )["cases"]
 NOT_OURS = (
-    "se_naive", "se_lambda_if_probit_cov", "durbin", "CLR", "basmann", "wooldridge_robust",
-    "gmm_2step.coef", "gmm_2step.se", "liml.se", "FamaMacBeth", "stock_yogo_LIML",
-    "stock_yogo_TSLS_bias", "own_size_check", "i.se_industry_CR2", "i.CR2_df",
+    "se_naive",
+    "se_lambda_if_probit_cov",
+    "durbin",
+    "CLR",
+    "basmann",
+    "wooldridge_robust",
+    "gmm_2step.coef",
+    "gmm_2step.se",
+    "liml.se",
+    "FamaMacBeth",
+    "stock_yogo_LIML",
+    "stock_yogo_TSLS_bias",
+    "own_size_check",
+    "i.se_industry_CR2",
+    "i.CR2_df",
 )
 """Estimators, tests and covariances the package does not offer, by the start of their key."""
 
@@ -41,8 +53,7 @@ def compare(case: str, found: Mapping[str, Any]) -> None:
     """Each value of the case within its tolerance, and none left unlooked at."""
     expected = CASES[case]["expected"]
     unseen = [
-        key for key in expected
-        if key not in found and not any(mark in key for mark in NOT_OURS)
+        key for key in expected if key not in found and not any(mark in key for mark in NOT_OURS)
     ]
     assert not unseen, f"{case}: no value compared for {unseen}"
     for key, value in found.items():
@@ -79,8 +90,10 @@ def two_steps(design: Design, *, form: bool = False) -> tuple[Estimate, dict[str
         **terms("se", column, "std_error", inverse_mills="lambda"),
         **terms("probit", probit, "coefficient"),
         **terms("probit_se", probit, "std_error"),
-        "rho": column.fit["rho"], "sigma": column.fit["sigma"],
-        "n": column.fit["candidates"], "n_selected": column.n,
+        "rho": column.fit["rho"],
+        "sigma": column.fit["sigma"],
+        "n": column.fit["candidates"],
+        "n_selected": column.n,
     }
 
 
@@ -111,8 +124,7 @@ def test_heckman_two_step_on_the_wage_level() -> None:
 # estimator; both are consistent, so they may not lie more than two standard errors apart.
 @pytest.mark.parametrize(
     ("case", "build"),
-    [("mroz_likelihood", data.mroz_log_wage),
-     ("mroz_wage_level_likelihood", data.mroz_wage_level)],
+    [("mroz_likelihood", data.mroz_log_wage), ("mroz_wage_level_likelihood", data.mroz_wage_level)],
 )
 def test_two_steps_agree_with_the_likelihood(case: str, build: Any) -> None:
     column, found = two_steps(build())
@@ -155,8 +167,11 @@ def second_stage(case: str) -> dict[str, Any]:
     plain = ols(design, FitOptions(covariance="classical")).term(treatment)
     term = classical.term(treatment)
     return {
-        "n": classical.n, "ols.coef": plain["coefficient"], "ols.se": plain["std_error"],
-        "2sls.coef": term["coefficient"], "2sls.se_iid_df(n-k)": term["std_error"],
+        "n": classical.n,
+        "ols.coef": plain["coefficient"],
+        "ols.se": plain["std_error"],
+        "2sls.coef": term["coefficient"],
+        "2sls.se_iid_df(n-k)": term["std_error"],
         # Divisor n instead of n - k.
         "2sls.se_iid_n": term["std_error"] * np.sqrt(classical.df / classical.n),
         "2sls.se_HC0": hc0.term(treatment)["std_error"],
@@ -164,7 +179,8 @@ def second_stage(case: str) -> dict[str, Any]:
         "2sls.coef.(Intercept)": classical.term("const")["coefficient"],
         **{
             f"2sls.coef.{name}": classical.term(name)["coefficient"]
-            for name in ("exper", "expersq") if f"2sls.coef.{name}" in CASES[case]["expected"]
+            for name in ("exper", "expersq")
+            if f"2sls.coef.{name}" in CASES[case]["expected"]
         },
     }
 
@@ -189,8 +205,11 @@ def weak_and_endogenous(case: str) -> dict[str, Any]:
     endogeneity, ar = result(classical, "wu_hausman"), result(classical, "anderson_rubin")
     robust = classical.sets["anderson_rubin"]
     found: dict[str, Any] = {
-        "wu_hausman.F": endogeneity.statistic**2, "wu_hausman.p": endogeneity.p_value,
-        "AR.F_at_0": ar.statistic, "AR.p_at_0": ar.p_value, "AR.set_kind": KINDS[robust.shape],
+        "wu_hausman.F": endogeneity.statistic**2,
+        "wu_hausman.p": endogeneity.p_value,
+        "AR.F_at_0": ar.statistic,
+        "AR.p_at_0": ar.p_value,
+        "AR.set_kind": KINDS[robust.shape],
     }
     if robust.shape is Shape.INTERVAL:
         found["AR.set95"] = [robust.low, robust.high]
@@ -201,9 +220,12 @@ def several(case: str) -> dict[str, Any]:
     classical, hc0, hc1 = (instrumented(case, kind) for kind in ("classical", "hc0", "hc1"))
     sargan, hansen = (result(column, "overidentification") for column in (classical, hc0))
     return {
-        "sargan": sargan.statistic, "sargan.p": sargan.p_value,
-        "gmm_2step.HansenJ": hansen.statistic, "gmm_2step.J_p": hansen.p_value,
-        "liml.coef": classical.fit["liml"], "liml.kappa": classical.fit["liml_kappa"],
+        "sargan": sargan.statistic,
+        "sargan.p": sargan.p_value,
+        "gmm_2step.HansenJ": hansen.statistic,
+        "gmm_2step.J_p": hansen.p_value,
+        "liml.coef": classical.fit["liml"],
+        "liml.kappa": classical.fit["liml_kappa"],
         "fuller1.coef": classical.fit["fuller"],
         "effF_MOP_HC0": result(hc0, "effective_f").statistic,
         "effF_MOP_HC1": result(hc1, "effective_f").statistic,
@@ -222,29 +244,36 @@ def test_instruments(case: str) -> None:
         column = instrumented(case, kind)
         if len(INSTRUMENTS[case][1]) == 1:
             assert result(column, "effective_f").statistic == pytest.approx(
-                result(column, "robust_f").statistic, rel=1e-10)
+                result(column, "robust_f").statistic, rel=1e-10
+            )
 
 
 # Sources: gretl's print of Stock and Yogo (2005); scipy for Montiel Olea and Pflueger (2013);
 # table 3 and abstract of Lee, McCrary, Moreira and Porter (2022).
 def test_weak_instrument_constants() -> None:
     single = np.eye(1)
-    compare("weak_instrument_constants", {
-        "stock_yogo_TSLS_size_K1": STOCK_YOGO_SIZE[1],
-        "stock_yogo_TSLS_size_K2": STOCK_YOGO_SIZE[2],
-        "MOP_crit_Keff1": {
-            f"tau{share}%": strength.critical_value(single, share / 100)
-            for share in strength.BIAS_SHARES
+    compare(
+        "weak_instrument_constants",
+        {
+            "stock_yogo_TSLS_size_K1": STOCK_YOGO_SIZE[1],
+            "stock_yogo_TSLS_size_K2": STOCK_YOGO_SIZE[2],
+            "MOP_crit_Keff1": {
+                f"tau{share}%": strength.critical_value(single, share / 100)
+                for share in strength.BIAS_SHARES
+            },
+            "tF_crit_by_sqrtF": critical_ts("weak_instrument_constants"),
+            "F_for_valid_5pct_at_1.96": strength.STRONG,
+            "t_crit_if_F_threshold_10": strength.size_corrected_critical(10.0),
         },
-        "tF_crit_by_sqrtF": critical_ts("weak_instrument_constants"),
-        "F_for_valid_5pct_at_1.96": strength.STRONG,
-        "t_crit_if_F_threshold_10": strength.size_corrected_critical(10.0),
-    })
-    compare("weak_instrument_constants_second", {
-        "stock_yogo_TSLS_size_K3": STOCK_YOGO_SIZE[3],
-        "tF_crit_by_sqrtF": critical_ts("weak_instrument_constants_second"),
-        "tF_se_multiplier_at_F=10.24": strength.size_corrected_critical(10.24) / 1.96,
-    })
+    )
+    compare(
+        "weak_instrument_constants_second",
+        {
+            "stock_yogo_TSLS_size_K3": STOCK_YOGO_SIZE[3],
+            "tF_crit_by_sqrtF": critical_ts("weak_instrument_constants_second"),
+            "tF_se_multiplier_at_F=10.24": strength.size_corrected_critical(10.24) / 1.96,
+        },
+    )
 
 
 def critical_ts(case: str) -> dict[str, float]:
@@ -257,8 +286,13 @@ def critical_ts(case: str) -> dict[str, float]:
 def test_clusters_of_a_firm_year_panel() -> None:
     design = data.firm_year_panel()
     found = terms("coef", ols(design, FitOptions(covariance="classical")), "coefficient")
-    labels = {"classical": "se_iid", "hc0": "se_HC0", "hc1": "se_HC1_white", "hc2": "se_HC2",
-              "hc3": "se_HC3"}
+    labels = {
+        "classical": "se_iid",
+        "hc0": "se_HC0",
+        "hc1": "se_HC1_white",
+        "hc2": "se_HC2",
+        "hc3": "se_HC3",
+    }
     for kind, label in labels.items():
         found |= terms(label, ols(design, FitOptions(covariance=kind)), "std_error")
     for name in ("firm", "year"):
@@ -294,17 +328,18 @@ def smallest_count_error(design: Design, column: Estimate, at: int, k: int) -> f
 def test_effects_and_clusters_of_grunfeld() -> None:
     one, two = data.grunfeld("firm"), data.grunfeld("firm", "year")
     clustered, iid = fixed_effects(one, FitOptions()), FitOptions(covariance="classical")
-    found = {**terms("coef", clustered, "coefficient"),
-             **terms("se_iid", fixed_effects(one, iid), "std_error"),
-             **terms("se_cluster_firm_FE_nested_not_counted(pyfixest/reghdfe)", clustered,
-                     "std_error"),
-             **terms("tw_coef", fixed_effects(two, FitOptions()), "coefficient"),
-             **terms("tw_se_iid", fixed_effects(two, iid), "std_error"),
-             **other_counts("se_cluster_firm_CR0", clustered, None),
-             **other_counts("se_cluster_firm_dummies_counted(LSDV Stata regress)", clustered, 12),
-             **terms_scaled("se_cluster_firm_linearmodels_debiased", clustered, 200 / 198),
-             # This source leaves the year effects out of k although no firm contains them.
-             **other_counts("tw_se_cluster_firm", fixed_effects(two, FitOptions()), 3)}
+    found = {
+        **terms("coef", clustered, "coefficient"),
+        **terms("se_iid", fixed_effects(one, iid), "std_error"),
+        **terms("se_cluster_firm_FE_nested_not_counted(pyfixest/reghdfe)", clustered, "std_error"),
+        **terms("tw_coef", fixed_effects(two, FitOptions()), "coefficient"),
+        **terms("tw_se_iid", fixed_effects(two, iid), "std_error"),
+        **other_counts("se_cluster_firm_CR0", clustered, None),
+        **other_counts("se_cluster_firm_dummies_counted(LSDV Stata regress)", clustered, 12),
+        **terms_scaled("se_cluster_firm_linearmodels_debiased", clustered, 200 / 198),
+        # This source leaves the year effects out of k although no firm contains them.
+        **other_counts("tw_se_cluster_firm", fixed_effects(two, FitOptions()), 3),
+    }
     compare("grunfeld_effects", found)
 
 
@@ -325,12 +360,15 @@ def terms_scaled(prefix: str, column: Estimate, factor: float) -> dict[str, floa
 # G/(G-1)), R plm (no factor).
 def test_effects_and_clusters_of_a_wage_panel() -> None:
     column = fixed_effects(data.wage_panel(), FitOptions())
-    compare("wage_panel_effects", {
-        **terms("coef", column, "coefficient"),
-        **other_counts("se_cluster_pyfixest", column, 4 + 1),
-        **terms_scaled("se_cluster_linearmodels", column, column.n / (column.n - 4 - 552)),
-        **other_counts("se_cluster_CR0", column, None),
-    })
+    compare(
+        "wage_panel_effects",
+        {
+            **terms("coef", column, "coefficient"),
+            **other_counts("se_cluster_pyfixest", column, 4 + 1),
+            **terms_scaled("se_cluster_linearmodels", column, column.n / (column.n - 4 - 552)),
+            **other_counts("se_cluster_CR0", column, None),
+        },
+    )
     assert column.fit["counted"] == 8
 
 
@@ -349,26 +387,35 @@ def test_clusters_of_innovation() -> None:
     single = fixed_effects(replace_clusters(design, "company"), FitOptions())
     deep = fixed_effects(data.innovation(["company", "year"], ["company"]), FitOptions())
     assert both.fit["counted"] == 136
-    compare("innovation_clusters", {
-        "i.coef.institutions": plain.term(treatment)["coefficient"],
-        "i.se_industry_CR1": error(["industry"]), "i.se_firm_CR1": error(["company"]),
-        "i.se_industry_year_twoway": error(["industry", "year"]),
-        "ii.coef": both.term(treatment)["coefficient"],
-        "ii.se_company": single.term(treatment)["std_error"],
-        # This source counts no effect at all once years are clusters; we count the industries.
-        "ii.se_company_year(min G)": smallest_count_error(design, both, 0, k=3 + 1),
-        "iii.coef": deep.term(treatment)["coefficient"],
-        "iii.se_company": deep.term(treatment)["std_error"],
-        "iii.N_after_singletons": deep.n,
-    })
+    compare(
+        "innovation_clusters",
+        {
+            "i.coef.institutions": plain.term(treatment)["coefficient"],
+            "i.se_industry_CR1": error(["industry"]),
+            "i.se_firm_CR1": error(["company"]),
+            "i.se_industry_year_twoway": error(["industry", "year"]),
+            "ii.coef": both.term(treatment)["coefficient"],
+            "ii.se_company": single.term(treatment)["std_error"],
+            # This source counts no effect at all once years are clusters; we count the industries.
+            "ii.se_company_year(min G)": smallest_count_error(design, both, 0, k=3 + 1),
+            "iii.coef": deep.term(treatment)["coefficient"],
+            "iii.se_company": deep.term(treatment)["std_error"],
+            "iii.N_after_singletons": deep.n,
+        },
+    )
 
 
 # Source: R sandwich 3.0.2 and R lm.
 def test_robust_errors_of_takeover_bids() -> None:
     design = data.takeover_bids()
     found: dict[str, float] = {}
-    for kind, label in (("classical", "iid"), ("hc0", "HC0"), ("hc1", "HC1"), ("hc2", "HC2"),
-                        ("hc3", "HC3")):
+    for kind, label in (
+        ("classical", "iid"),
+        ("hc0", "HC0"),
+        ("hc1", "HC1"),
+        ("hc2", "HC2"),
+        ("hc3", "HC3"),
+    ):
         column = ols(design, FitOptions(covariance=kind))
         found |= terms(label, column, "std_error", const="(Intercept)")
     found |= terms("coef", column, "coefficient", const="(Intercept)")

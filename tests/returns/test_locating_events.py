@@ -22,11 +22,10 @@ from pipeline.returns.events import (
     locate_candidates,
     located_events,
     masked_sessions,
-    screen_estimation,
-    screen_event,
 )
 from pipeline.returns.expected import market_model
 from pipeline.returns.measure import measure
+from pipeline.returns.screens import screen_estimation, screen_event
 from pipeline.returns.sessions import Sessions, sessions_between
 from tests.returns.panels import panel_of_closes
 
@@ -90,7 +89,7 @@ def test_deals_are_placed_and_losses_are_named(panel: PricePanel, calendar: Sess
     last = len(panel.sessions) - 1
     table = deals(
         calendar, ("D1", "B", 200), ("D2", "Z", 210), ("D3", "C", 0), ("D4", "C", last),
-        ("D5", "A", last - 1), ("D6", "A", 2),
+        ("D5", "A", last - 1), ("D6", "A", 2), ("D7", "A", 1),
     )  # fmt: skip
     located, ledger = found(table, panel, calendar)
     assert located["deal_id"].tolist() == ["D1", "D5", "D6"]
@@ -103,8 +102,9 @@ def test_deals_are_placed_and_losses_are_named(panel: PricePanel, calendar: Sess
         ("D2", "no_prices", Action.DROPPED),
         ("D3", "outside_history", Action.DROPPED),
         ("D4", "outside_history", Action.DROPPED),
+        ("D7", "outside_history", Action.DROPPED),  # the first session has no return
     ]
-    assert ledger.rows_in == 6
+    assert ledger.rows_in == 7
     assert ledger.rows_kept == len(located)
     assert [event.deal for event in located_events(located)] == ["D1", "D5", "D6"]
 

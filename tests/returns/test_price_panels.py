@@ -167,6 +167,14 @@ def test_a_session_on_which_most_have_no_price() -> None:
     assert str(DAYS[90]) not in finding.got
 
 
+def test_a_few_securities_do_not_close_an_exchange() -> None:
+    """Of fewer than five, most may miss a day by chance."""
+    close, codes = walk(4)
+    close[80, :3] = np.nan
+    _, findings = built(long_prices(close, codes), codes)
+    assert findings == []
+
+
 def test_listings_that_begin_and_end_are_no_closed_sessions() -> None:
     close, codes = walk(12)
     close[:120, :6] = np.nan

@@ -95,6 +95,18 @@ def test_one_date_for_all_weighs_every_pair_fully() -> None:
     assert found.mean == pytest.approx(closed, abs=1e-12)
 
 
+def test_a_pair_with_few_common_dates_counts_with_the_mean_of_the_others() -> None:
+    same = clustered(days=1, gaps=0, deals=6)
+    estimation = same.estimation_returns.copy()
+    estimation[0, COMMON_DAYS - 1 :] = np.nan
+    short = replace(same, estimation_returns=estimation)
+    others = dependence(same.take(np.arange(1, 6)), WINDOW).mean
+    found = dependence(short, WINDOW)
+    assert found.pairs == 10
+    assert found.mean == pytest.approx(others, abs=1e-12)
+    assert found.weighted == pytest.approx(others, abs=1e-12)
+
+
 def test_deals_far_apart_have_no_weight() -> None:
     days = np.array([["2020-01-06", "2020-01-07"], ["2020-02-03", "2020-02-04"]], "datetime64[D]")
     np.testing.assert_array_equal(overlap(days), np.eye(2))

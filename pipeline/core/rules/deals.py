@@ -41,6 +41,13 @@ RULES = (
         "Extend the price history, or lower minimum_observations with a reason.",
     ),
     Rule(
+        "gaps_in_estimation",
+        "Gaps in the estimation window",
+        "More than a twentieth of the estimation window's sessions have no return.",
+        "The share was not traded, or the price file has a hole.",
+        "Complete the prices if the share traded; the deal is kept.",
+    ),
+    Rule(
         "thin_trading",
         "Too many unchanged prices before the deal",
         "More than half of the estimation window's returns are exactly zero.",

@@ -1,0 +1,65 @@
+"""Make ``reports/sample/`` again from the demo: the committed sample of its documents.
+
+Run from the project's root after a change of the numbers or the documents:
+
+    .venv/bin/python -m tests.refresh_sample
+
+A browser (chromium) makes the picture that the README shows; without one the old picture stays.
+"""
+
+from __future__ import annotations
+
+import shutil
+import subprocess
+import sys
+import tempfile
+from pathlib import Path
+
+ROOT = Path(__file__).resolve().parents[1]
+SAMPLE = ROOT / "reports" / "sample"
+DATA = ("estimates", "event_tests", "headline", "diagnostics", "sensitivity", "ledger", "findings")
+DOCUMENTS = ("report.html", "memo.docx", "tables.xlsx")
+PICTURE = "first_screen.png"
+
+
+def main() -> None:
+    """Run the demo and keep the small part of it."""
+    with tempfile.TemporaryDirectory() as base:
+        out = Path(base) / "demo"
+        command = [sys.executable, "-m", "pipeline", "run", "configs/demo.toml", "--out", str(out)]
+        subprocess.run(command, cwd=ROOT, check=True)
+        kept = SAMPLE / PICTURE
+        picture = kept.read_bytes() if kept.exists() else b""
+        shutil.rmtree(SAMPLE, ignore_errors=True)
+        for folder in ("tables", "figures"):
+            shutil.copytree(out / folder, SAMPLE / folder)
+        for name in DOCUMENTS:
+            shutil.copy(out / name, SAMPLE / name)
+        (SAMPLE / "data").mkdir()
+        for name in DATA:
+            shutil.copy(out / "data" / f"{name}.parquet", SAMPLE / "data")
+        if picture:
+            kept.write_bytes(picture)
+    _photograph()
+
+
+def _photograph() -> None:
+    browser = shutil.which("chromium")
+    if browser is None:
+        return
+    options = ["--headless", "--no-sandbox", "--disable-gpu", "--hide-scrollbars"]
+    subprocess.run(
+        [
+            browser,
+            *options,
+            "--window-size=1100,1250",
+            f"--screenshot={SAMPLE / PICTURE}",
+            (SAMPLE / "report.html").as_uri(),
+        ],
+        check=True,
+        capture_output=True,
+    )
+
+
+if __name__ == "__main__":
+    main()
