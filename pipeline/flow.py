@@ -52,6 +52,7 @@ from pipeline.returns.measure import measure
 from pipeline.returns.panel import build_panels
 from pipeline.returns.screens import screen_estimation, screen_event
 from pipeline.significance.checks import sample_checks
+from pipeline.significance.choice import leading_test
 from pipeline.significance.paths import average_paths
 from pipeline.significance.variants import mean_variants
 from pipeline.significance.windows import all_windows
@@ -102,10 +103,11 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     clock = Clock(progress)
     measured = measure_deals(study, clock)
     with clock.stage("tests"):
-        tests = {key: entry(TESTS, key).load() for key in _tests(study)}
+        tests = {key: entry(TESTS, key).load() for key in _tests(study, len(measured.deals))}
         windows = study.event_time.all_windows
+        assumes = {key: entry(TESTS, key).assumes for key in tests}
         found = all_windows(
-            measured.abnormal, windows, tests, study.event_time.share_of_days, study.level
+            measured.abnormal, windows, tests, assumes, study.event_time.share_of_days, study.level
         )
     with clock.stage("characteristics"):
         prepared = _prepare(study, measured)
@@ -166,8 +168,9 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
     return Measured(deals, abnormal, panels, ledger, tables.findings + tuple(found), tables)
 
 
-def _tests(study: Study) -> tuple[str, ...]:
-    return tuple(dict.fromkeys([study.tests.headline, *study.tests.use]))
+def _tests(study: Study, deals: int) -> tuple[str, ...]:
+    """The test that leads, then the others."""
+    return tuple(dict.fromkeys([leading_test(study.tests.headline, deals), *study.tests.use]))
 
 
 def _refuse_empty(kept: int, ledger: Ledger) -> None:
@@ -222,7 +225,7 @@ def _results(
     prepared: Prepared | None,
     columns: tuple[Column, ...],
 ) -> Results:
-    facts = plan.facts(study)
+    facts = plan.facts(study, leading_test(study.tests.headline, len(measured.deals)))
     lead_model = study.expected_returns.headline
     lead = measured.abnormal[lead_model]
     deals = prepared.deals if prepared else _with_outcomes(study, measured)

@@ -25,7 +25,8 @@ class Entry:
     ``needs`` lists parts of the study without which the entry makes no sense (estimators:
     ``effects``, ``selection``, ``instruments``; models: factor columns). ``answers`` ranks the
     estimators by how much of the choice they account for: the highest one leads the finding.
-    ``why`` says in a clause what a test is chosen for, to follow "chosen because it".
+    ``why`` says in a clause what a test is chosen for, to follow "chosen because it"; ``assumes``
+    names what the test takes for granted, checked against each sample.
     """
 
     key: str
@@ -33,6 +34,7 @@ class Entry:
     needs: tuple[str, ...] = ()
     answers: int = 0
     why: str = ""
+    assumes: tuple[str, ...] = ()
 
     def load(self) -> Callable[..., Any]:
         """Import the function the entry names."""
@@ -50,29 +52,78 @@ TABLE: dict[str, tuple[Entry, ...]] = {
     ),
     TESTS: (
         Entry(
-            "cross_sectional",
-            "pipeline.significance.parametric:cross_sectional",
-            why="uses the deals' own spread, so a rise of variance at the event does no harm",
-        ),
-        Entry(
-            "patell",
-            "pipeline.significance.parametric:patell",
-            why="weighs each deal by how precisely its return is forecast",
-        ),
-        Entry(
-            "standardised",
-            "pipeline.significance.parametric:standardised_cross_sectional",
-            why="weighs deals by precision and stays right when variance rises at the event",
-        ),
-        Entry(
             "dependence_adjusted",
             "pipeline.significance.parametric:dependence_adjusted",
             why="allows for deals that move together and for variance that rises at the event",
         ),
         Entry(
+            "standardised",
+            "pipeline.significance.parametric:standardised_cross_sectional",
+            why="weighs deals by precision and stays right when variance rises at the event",
+            assumes=("independent",),
+        ),
+        Entry(
+            "cross_sectional",
+            "pipeline.significance.parametric:cross_sectional",
+            why="uses the deals' own spread, so a rise of variance at the event does no harm",
+            assumes=("independent",),
+        ),
+        Entry(
+            "patell",
+            "pipeline.significance.parametric:patell",
+            why="weighs each deal by how precisely its return is forecast",
+            assumes=("independent", "constant_variance"),
+        ),
+        Entry(
+            "time_series",
+            "pipeline.significance.parametric:time_series",
+            why="takes dependence from the portfolio's own daily series",
+            assumes=("one_date", "constant_variance"),
+        ),
+        Entry(
+            "rank",
+            "pipeline.significance.ranks:rank",
+            why="needs no normal returns",
+            assumes=("constant_variance",),
+        ),
+        Entry(
+            "generalised_rank",
+            "pipeline.significance.ranks:generalised_rank",
+            why="needs no normal returns and allows for variance that rises at the event",
+            assumes=("symmetric_before",),
+        ),
+        Entry(
+            "generalised_sign",
+            "pipeline.significance.ranks:generalised_sign",
+            why="asks how many deals rise, whatever the size",
+            assumes=("independent",),
+        ),
+        Entry(
+            "signed_rank",
+            "pipeline.significance.ranks:signed_rank",
+            why="needs no normal returns",
+            assumes=("independent", "symmetric"),
+        ),
+        Entry(
+            "skewness_adjusted",
+            "pipeline.significance.resampled:skewness_adjusted",
+            why="allows for skewed returns",
+            assumes=("independent",),
+        ),
+        Entry(
+            "date_bootstrap",
+            "pipeline.significance.resampled:date_bootstrap",
+            why="resamples whole dates, so that deals of one date may move together",
+        ),
+        Entry(
             "single_event",
             "pipeline.significance.parametric:single_event",
-            why="is made for one deal",
+            why="is made for one deal with normal returns",
+        ),
+        Entry(
+            "sample_quantile",
+            "pipeline.significance.resampled:sample_quantile",
+            why="compares a handful of deals with their own past, whatever the distribution",
         ),
     ),
     PRICE_MEASURES: (

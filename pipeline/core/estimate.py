@@ -40,6 +40,7 @@ class TestResult:
     caution: str = ""
     citation: str = ""
     facts: Mapping[str, float] = field(default_factory=dict)
+    doubt: str = ""
 
 
 @dataclass(frozen=True, slots=True)

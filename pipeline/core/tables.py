@@ -34,6 +34,8 @@ TEST_COLUMNS = {
     "p_holm": "float64",
     "status": "str",
     "reason": "str",
+    "valid": "str",
+    "doubt": "str",
     "headline": "bool",
 }
 ESTIMATE_COLUMNS = {
@@ -100,14 +102,14 @@ def _test_rows(item: WindowTests, headline: bool) -> Iterator[dict[str, Any]]:
             yield {
                 **shared, "test": key, "title": test.name, "statistic": np.nan,
                 "distribution": "", "df": np.nan, "p_value": np.nan, "p_holm": np.nan,
-                "status": "not applicable", "reason": test.reason,
+                "status": "not applicable", "reason": test.reason, "valid": "", "doubt": "",
             }  # fmt: skip
         else:
             yield {
                 **shared, "test": key, "title": test.name, "statistic": test.statistic,
                 "distribution": test.distribution, "df": test.df[0] if test.df else np.nan,
                 "p_value": test.p_value, "p_holm": item.p_holm.get(key, np.nan), "status": "ok",
-                "reason": "",
+                "reason": "", "valid": "no" if test.doubt else "yes", "doubt": test.doubt,
             }  # fmt: skip
 
 

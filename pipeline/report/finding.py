@@ -141,13 +141,21 @@ def agreement_sentence(material: Material) -> Pieces:
     if not made.value:
         return ()
     if tests_disagree(material):
-        return ("Tests disagree: ", rejecting, " of ", made, " reject a zero mean", *at, ". ")
+        return (
+            "Tests disagree: ",
+            rejecting,
+            " of the ",
+            made,
+            " valid here reject a zero mean",
+            *at,
+            ". ",
+        )
     if made.value == 1:
         verb = "rejects" if rejecting.value else "does not reject"
-        return (f"The one test with an answer {verb} a zero mean", *at, ". ")
+        return (f"The one test valid here {verb} a zero mean", *at, ". ")
     if rejecting.value:
-        return ("All ", made, " tests reject a zero mean", *at, ". ")
-    return ("None of ", made, " tests rejects a zero mean", *at, ". ")
+        return ("All ", made, " tests valid here reject a zero mean", *at, ". ")
+    return ("None of ", made, " tests valid here rejects a zero mean", *at, ". ")
 
 
 def feature_sentence(material: Material, *, with_estimand: bool = True) -> Pieces:

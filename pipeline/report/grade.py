@@ -11,9 +11,9 @@ from pipeline.report.material import Material, embedded, named, prose
 
 RULE = (
     "The grade is the worst that applies, and says nothing of the size of the effect. "
-    "D: the tests of the headline window disagree, or the lead column gives no number, or its "
-    "confidence set is not a bounded interval. C: a diagnostic fails, or the columns differ in "
-    "sign, or fewer than two tests of the headline window have an answer. B: a diagnostic warns, "
+    "D: the tests valid in the headline window disagree, or the lead column gives no number, or "
+    "its confidence set is not a bounded interval. C: a diagnostic fails, or the columns differ "
+    "in sign, or fewer than two tests are valid in the headline window. B: a diagnostic warns, "
     "or a sensitivity variant changes the sign, or fewer than two columns stand side by side. "
     "A: none of these."
 )
@@ -57,7 +57,7 @@ def signs_differ(material: Material) -> bool:
 def _ruin(material: Material) -> list[Paragraph]:
     reasons = []
     if tests_disagree(material):
-        reasons.append(prose("The tests of the headline window disagree."))
+        reasons.append(prose("The tests valid in the headline window disagree."))
     if material.study.treatment and material.results.columns and material.lead is None:
         reasons.append(prose("The lead column gives no number."))
     if material.lead is not None and material.lead.interval.shape is not Shape.INTERVAL:
@@ -71,7 +71,7 @@ def _doubt(material: Material) -> list[Paragraph]:
     if signs_differ(material):
         reasons.append(prose("The columns differ in sign."))
     if material.number("tests_made").value <= 1:
-        reasons.append(prose("Fewer than two tests of the headline window have an answer."))
+        reasons.append(prose("Fewer than two tests are valid in the headline window."))
     return reasons
 
 

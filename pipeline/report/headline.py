@@ -103,6 +103,9 @@ def _reaction(results: Results) -> Iterator[Line]:
     yield Line("mean_reaction", tests.mean, "decimal", low, high, level, Shape.INTERVAL)
     answered = [t for t in tests.tests.values() if isinstance(t, TestResult)]
     answered = [t for t in answered if math.isfinite(t.p_value)]
+    yield Line("tests_not_holding", sum(bool(t.doubt) for t in answered), "tests")
+    # A test that does not hold in this sample has no say in whether the tests agree.
+    answered = [t for t in answered if not t.doubt]
     yield Line("tests_made", len(answered), "tests")
     yield Line("tests_rejecting", sum(t.p_value < significance(results) for t in answered), "tests")
 

@@ -80,12 +80,12 @@ def tests_table(material: Material, model: str) -> Table:
     """One row a test and one column a window, under one expected-return model."""
     entries = [entry for entry in material.results.window_tests if entry.model == model]
     titles = test_titles(entries)
-    columns = [Column("Test")]
+    columns = [Column("Test"), Column("Holds here")]
     for entry in entries:
         mark = ", headline" if is_headline(material, entry) else ""
         columns.append(Column(f"{window_label(entry.window.label)}{mark}", "statistic, p"))
     rows = tuple(
-        (Text(title), *(_test_cell(entry, key) for entry in entries))
+        (Text(title), _holds_cell(entries[0], key), *(_test_cell(entry, key) for entry in entries))
         for key, title in titles.items()
     )
     title = prose("Tests of a zero mean, ", taken(material.study.words(model), "study"))
@@ -93,9 +93,19 @@ def tests_table(material: Material, model: str) -> Table:
     return Table(name, title, tuple(columns), rows, _test_notes(material, entries))
 
 
+def holds(test: TestResult) -> Text:
+    """Whether a test holds in this sample, and if not why."""
+    return Text(f"no: {test.doubt}" if test.doubt else "yes")
+
+
 def test_titles(entries: list[WindowTests]) -> dict[str, str]:
     """Test key -> its title, in the order met."""
     return {key: test.name for entry in entries for key, test in entry.tests.items()}
+
+
+def _holds_cell(entry: WindowTests, key: str) -> Cell:
+    test = entry.tests.get(key)
+    return Text("no" if test.doubt else "yes") if isinstance(test, TestResult) else None
 
 
 def _test_cell(entry: WindowTests, key: str) -> Cell:
@@ -113,7 +123,9 @@ def _test_cell(entry: WindowTests, key: str) -> Cell:
 def _test_notes(material: Material, entries: list[WindowTests]) -> tuple[Paragraph, ...]:
     notes = [
         prose("Each cell: the statistic, its p-value, and the p-value adjusted for the number of "
-              "secondary windows (Holm) where there is one. All p-values are two-sided.")
+              "secondary windows (Holm) where there is one. All p-values are two-sided. Whether a "
+              "test holds is told of the first window; a test that does not hold has no say in the "
+              "finding.")
     ]  # fmt: skip
     silent: dict[tuple[str, str], list[str]] = {}
     for entry in entries:
@@ -131,11 +143,19 @@ def assumptions_table(material: Material) -> Table:
     """What each test supposes: its null, its distribution in the headline window, its caution."""
     columns = (
         Column("Test"), Column("Null hypothesis", prose=True), Column("Distribution"),
+        Column("Holds in this sample", prose=True),
         Column("Where it does not hold", prose=True), Column("Source", prose=True),
     )  # fmt: skip
     made = [t for t in material.tests.tests.values() if isinstance(t, TestResult)]
     rows = tuple(
-        (Text(t.name), Text(t.null), Text(distribution_words(t)), Text(t.caution), Text(t.citation))
+        (
+            Text(t.name),
+            Text(t.null),
+            Text(distribution_words(t)),
+            holds(t),
+            Text(t.caution),
+            Text(t.citation),
+        )
         for t in made
     )
     return Table("test_assumptions", prose("What each test supposes"), columns, rows)

@@ -125,3 +125,29 @@ def single_event(sample: CarSample) -> Tested:
         caution="assumes normal returns; one deal is no average",
         citation="MacKinlay 1997",
     )
+
+
+def time_series(sample: CarSample) -> Tested:
+    """t = mean CAR / (sqrt(L) s), s from the portfolio's own estimation days, t(M - 1).
+
+    s² = sum over estimation days of (AAR_t - mean)² / (M - 1) (Brown and Warner 1980, JFE 8, sec.
+    3: crude dependence adjustment).
+    """
+    name = "Portfolio time-series t"
+    if sample.series is None:
+        return NotApplicable(name, "needs the daily series of the estimation windows")
+    known = np.isfinite(sample.series.estimation)
+    count = known.sum(axis=0)
+    total = np.where(known, sample.series.estimation, 0.0).sum(axis=0)
+    daily = total[count > 0] / count[count > 0]
+    if len(daily) < 2:
+        return NotApplicable(name, "needs two estimation days")
+    spread = float(daily.std(ddof=1)) * np.sqrt(len(sample.window))
+    return t_test(
+        name,
+        NULL,
+        float(sample.car.mean()) / float(spread),
+        len(daily) - 1,
+        caution="rejects too often when variance rises at the event",
+        citation="Brown and Warner 1980",
+    )

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
+from dataclasses import replace
 
 import numpy as np
 
@@ -12,6 +13,7 @@ from pipeline.core.results import WindowTests
 from pipeline.core.window import Window
 from pipeline.significance.dependence import links
 from pipeline.significance.sample import CarSample, car_sample
+from pipeline.significance.validity import doubt
 
 TestFunction = Callable[[CarSample], Tested]
 
@@ -20,10 +22,13 @@ def all_windows(
     abnormal: Mapping[str, AbnormalReturns],
     windows: Sequence[Window],
     tests: Mapping[str, TestFunction],
+    assumes: Mapping[str, Sequence[str]],
     share_of_days: float,
     level: float,
 ) -> tuple[WindowTests, ...]:
     """Test every window under every model; the first window is the headline.
+
+    ``assumes`` names what each test takes for granted, held against each sample.
 
     The headline window needs all its days; the others ``share_of_days`` of them. p-values of the
     secondary windows are also given after Holm's correction within a model and a test.
@@ -35,13 +40,26 @@ def all_windows(
             car_sample(measured, window, 1.0 if at == 0 else share_of_days, known)
             for at, window in enumerate(windows)
         ]
-        results = [{key: test(sample) for key, test in tests.items()} for sample in samples]
+        results = [_tested(sample, tests, assumes) for sample in samples]
         adjusted: list[dict[str, float]] = [{} for _ in results[:1]] + holm_by_test(results[1:])
         found += [
             _summary(model, sample, result, p_holm, level)
             for sample, result, p_holm in zip(samples, results, adjusted, strict=True)
         ]
     return tuple(found)
+
+
+def _tested(
+    sample: CarSample, tests: Mapping[str, TestFunction], assumes: Mapping[str, Sequence[str]]
+) -> dict[str, Tested]:
+    """Every test of a sample, each with the reason why it does not hold there, if any."""
+    found: dict[str, Tested] = {}
+    for key, test in tests.items():
+        result = test(sample)
+        if isinstance(result, TestResult):
+            result = replace(result, doubt=doubt(assumes.get(key, ()), sample))
+        found[key] = result
+    return found
 
 
 def _summary(

@@ -154,8 +154,8 @@ def path_days(study: Study) -> Window:
     return Window(min(first, headline.start), max(PATH_DAYS.end, headline.end))
 
 
-def facts(study: Study) -> StudyFacts:
-    """What the report may know of the study."""
+def facts(study: Study, leading_test: str) -> StudyFacts:
+    """What the report may know of the study, and of the test that leads."""
     parts = roles(study)
     arguments = {
         "What moves the decision to bid and nothing else": study.selection,
@@ -171,8 +171,8 @@ def facts(study: Study) -> StudyFacts:
         estimation=study.event_time.estimation_window,
         minimum_observations=study.event_time.minimum_observations,
         models=study.expected_returns.all_models,
-        headline_test=study.tests.headline,
-        headline_test_reason=entry(TESTS, study.tests.headline).why,
+        headline_test=leading_test,
+        headline_test_reason=entry(TESTS, leading_test).why,
         treatment=parts.treatment if parts else "",
         groups=(study.report.groups[0], study.report.groups[1]),
         regressors=(parts.treatment, *parts.controls) if parts else (),

@@ -21,6 +21,8 @@ from pipeline.registry import (
     keys,
 )
 
+BY_RULE = "by_rule"
+
 
 class Part(BaseModel):
     """A table of the study file: strict, frozen, no unknown key."""
@@ -28,8 +30,8 @@ class Part(BaseModel):
     model_config = ConfigDict(extra="forbid", frozen=True, strict=True, populate_by_name=True)
 
 
-def _known(table: str) -> AfterValidator:
-    names = keys(table)
+def _known(table: str, *also: str) -> AfterValidator:
+    names = (*also, *keys(table))
 
     def check(value: str) -> str:
         if value not in names:
@@ -42,6 +44,7 @@ def _known(table: str) -> AfterValidator:
 
 Model = Annotated[str, _known(EXPECTED_RETURNS)]
 Test = Annotated[str, _known(TESTS)]
+LeadingTest = Annotated[str, _known(TESTS, BY_RULE)]
 Estimator = Annotated[str, _known(ESTIMATORS)]
 Format = Annotated[str, _known(FORMATS)]
 Measure = Annotated[str, _known(PRICE_MEASURES)]
@@ -141,8 +144,10 @@ class ExpectedReturns(Part):
 class Tests(Part):
     """Tests of the mean abnormal return."""
 
-    headline: Test = Field(
-        "dependence_adjusted", description="The test that leads; declared before looking."
+    headline: LeadingTest = Field(
+        BY_RULE,
+        description="The test that leads; declared before looking. By rule: the sample-quantile "
+        "test for up to five deals, else the dependence-adjusted one.",
     )
     use: list[Test] = Field(
         default_factory=lambda: list(keys(TESTS)), description="Tests shown, in this order."

@@ -5,8 +5,8 @@ residuals whose standard deviations differ between companies. *Real prices*: ran
 dates out of twenty shares, 1990 to 2022 (skfolio), day 0 alone; the figures that other code gave
 for the same draws, and their bands, are in ``tests/reference/events.json``.
 
-Rates come with their Monte-Carlo standard errors. Run again from the project's folder, in under
-two minutes, with::
+Rates come with their Monte-Carlo standard errors. Run again from the project's folder, in about
+ten minutes, with::
 
     python -m tests.benchmarks.event_tests_size
 
@@ -29,7 +29,7 @@ from pipeline.core.prices import Floats, Integers, PricePanel
 from pipeline.core.window import Window
 from pipeline.registry import TABLE, TESTS, entry
 from pipeline.significance.dependence import Dependence
-from pipeline.significance.sample import CarSample, car_sample
+from pipeline.significance.sample import CarSample, Series, car_sample
 from tests.returns.panels import fitted, panel_of_closes, panel_of_returns, weekdays
 
 FIGURES = Path(__file__).with_name("figures") / "event_tests_size.json"
@@ -37,7 +37,14 @@ REPLICATIONS = 2000
 LEVEL = 0.05
 SEED = 20260301
 ALONE = Dependence(np.nan, 0.0, 0, 0.0, np.nan, 0, 0)
-KEYS = {"cross_t": "cross_sectional", "patell": "patell", "bmp": "standardised"}
+KEYS = {
+    "cross_t": "cross_sectional",
+    "patell": "patell",
+    "bmp": "standardised",
+    "crude_dep": "time_series",
+    "corrado": "rank",
+    "gsign": "generalised_sign",
+}
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,7 +53,8 @@ class World:
 
     ``dates`` is how many sessions the announcements spread over (1: all on one day);
     ``correlation`` that of any two companies' residuals on a day; ``variance`` multiplies the
-    residual variance inside the window; ``effect`` is added to day 0, decimal.
+    residual variance inside the window; ``effect`` is added to day 0, decimal; ``skewed`` residuals
+    are exponential instead of normal.
     """
 
     dates: int = 400
@@ -54,6 +62,7 @@ class World:
     variance: float = 1.0
     effect: float = 0.0
     deals: int = 50
+    skewed: bool = False
 
 
 WORLDS = {
@@ -63,6 +72,7 @@ WORLDS = {
     "same day, r = .1": World(dates=1, correlation=0.1),
     "same day, r = .1, event variance x2": World(dates=1, correlation=0.1, variance=2.0),
     "within 40 sessions, r = .1": World(dates=40, correlation=0.1),
+    "skewed residuals": World(skewed=True),
     "effect of 0.5%": World(effect=0.005),
     "effect of 1%": World(effect=0.01),
     "effect of 1%, same day, r = .1": World(dates=1, correlation=0.1, effect=0.01),
@@ -78,7 +88,8 @@ def simulated(world: World, stream: np.random.Generator) -> AbnormalReturns:
     deviation = stream.uniform(0.01, 0.03, n)
     market = stream.normal(0.0003, 0.01, sessions)
     common = stream.normal(size=(sessions, 1))
-    own = stream.normal(size=(sessions, n))
+    shape = (sessions, n)
+    own = stream.exponential(size=shape) - 1 if world.skewed else stream.normal(size=shape)
     noise = np.sqrt(world.correlation) * common + np.sqrt(1 - world.correlation) * own
     for day in range(WINDOW.start, WINDOW.end + 1):
         noise[position + day, np.arange(n)] *= np.sqrt(world.variance)
@@ -137,13 +148,20 @@ def drawn_rates(
     """
     day = Window(0, 0)
     car: Floats = events.car(day) * np.sqrt(variance) + effect
+    residual_sd = np.sqrt(events.residual_variance)
     std_dev = np.sqrt(events.car_variance(day))
     df = events.degrees_of_freedom
     hits: dict[str, list[bool]] = {key: [] for key in KEYS}
     for at in range(0, len(car), deals):
         own = slice(at, at + deals)
         scar = car[own] / std_dev[own]
-        sample = CarSample(day, car[own], scar, std_dev[own], df[own], ALONE)
+        series = Series(
+            car[own][:, None],
+            events.estimation_returns[own],
+            residual_sd[own],
+            events.estimation_days[own],
+        )
+        sample = CarSample(day, car[own], scar, std_dev[own], df[own], ALONE, series)
         for key, name in KEYS.items():
             found = entry(TESTS, name).load()(sample)
             hits[key].append(found.p_value < LEVEL)

@@ -152,6 +152,18 @@ def test_thirteen_events_tests(thirteen: dict[str, AbnormalReturns]) -> None:
     close_to(case["p_bmp_tN1"], standardised.p_value)
 
 
+def test_thirteen_events_rank_sign_and_portfolio(thirteen: dict[str, AbnormalReturns]) -> None:
+    """Rank, generalised sign and portfolio t of day 0 (events.json, independent numpy)."""
+    case = CASES["thirteen_events_tests"]["expected"]
+    sample = car_sample(thirteen["market_model"], Window(0, 0), 1.0)
+    close_to(case["corrado_t"], result(entry(TESTS, "rank").load()(sample)).statistic)
+    close_to(case["crude_dep_t"], result(entry(TESTS, "time_series").load()(sample)).statistic)
+    sign = result(entry(TESTS, "generalised_sign").load()(sample))
+    close_to(case["gsign_Z"], sign.statistic)
+    close_to(case["phat"], sign.facts["share_before"])
+    close_to(case["n_pos"], sign.facts["above_zero"])
+
+
 def test_five_returns_by_hand() -> None:
     """Five returns worked out on paper; the forecast variance is s² (1 + 1/5 + .01²/.001)."""
     case = CASES["five_returns_by_hand"]["expected"]

@@ -78,11 +78,11 @@ def test_columns_that_differ_in_sign_are_said_first() -> None:
 @pytest.mark.parametrize(
     "p_values, words",
     [
-        ((0.001, 0.2), "Tests disagree: 1 of 2 reject"),
-        ((0.001, 0.002), "All 2 tests reject"),
-        ((0.3, 0.2), "None of 2 tests rejects"),
-        ((0.3,), "The one test with an answer does not reject"),
-        ((0.05, 0.04), "Tests disagree: 1 of 2 reject"),
+        ((0.001, 0.2), "Tests disagree: 1 of the 2 valid here reject"),
+        ((0.001, 0.002), "All 2 tests valid here reject"),
+        ((0.3, 0.2), "None of 2 tests valid here rejects"),
+        ((0.3,), "The one test valid here does not reject"),
+        ((0.05, 0.04), "Tests disagree: 1 of the 2 valid here reject"),
     ],
 )
 def test_agreement_of_the_tests(p_values: tuple[float, ...], words: str) -> None:

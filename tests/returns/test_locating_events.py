@@ -227,6 +227,20 @@ def test_estimation_windows_that_will_not_do(panel: PricePanel, calendar: Sessio
     assert ledger.rows_kept == keep.sum()
 
 
+@pytest.mark.parametrize(("missing", "flagged"), [(4, False), (5, True)])
+def test_gaps_of_an_estimation_window_are_flagged(
+    missing: int, flagged: bool, panel: PricePanel, calendar: Sessions
+) -> None:
+    """More than a twentieth; a missing price costs its own return and the next."""
+    close = panel.close.copy()
+    close[100 : 100 + missing, 0] = np.nan
+    keep, ledger, abnormal = screened(with_closes(panel, close), calendar, ("D1", "A", 200))
+    assert keep.all()
+    assert abnormal.observations.tolist() == [100 - missing - 1]
+    wanted = [("D1", "gaps_in_estimation", Action.FLAGGED)] if flagged else []
+    assert said(ledger) == wanted
+
+
 def test_a_split_far_from_the_windows_does_no_harm(panel: PricePanel, calendar: Sessions) -> None:
     close = panel.close.copy()
     close[215:, 0] *= 0.5

@@ -62,7 +62,7 @@ def test_holm_goes_by_test_and_skips_those_without_a_p() -> None:
 
 def test_every_window_and_model(abnormal: AbnormalReturns) -> None:
     models = {"market_model": abnormal, "again": replace(abnormal, model="again")}
-    found = all_windows(models, WINDOWS, TEST_FUNCTIONS, 0.6, 0.95)
+    found = all_windows(models, WINDOWS, TEST_FUNCTIONS, {}, 0.6, 0.95)
     assert [(item.model, item.window) for item in found] == [
         (model, window) for model in models for window in WINDOWS
     ]
@@ -79,8 +79,8 @@ def test_every_window_and_model(abnormal: AbnormalReturns) -> None:
 
 
 def test_secondary_windows_pay_for_their_number(abnormal: AbnormalReturns) -> None:
-    found = all_windows({"m": abnormal}, WINDOWS, TEST_FUNCTIONS, 0.8, 0.95)
-    for key in ("cross_sectional", "patell", "standardised", "dependence_adjusted"):
+    found = all_windows({"m": abnormal}, WINDOWS, TEST_FUNCTIONS, {}, 0.8, 0.95)
+    for key in ("cross_sectional", "patell", "standardised", "dependence_adjusted", "rank"):
         tests = [item.tests[key] for item in found[1:]]
         raw = [test.p_value for test in tests if isinstance(test, TestResult)]
         known = multipletests(raw, method="holm")[1]
@@ -90,7 +90,7 @@ def test_secondary_windows_pay_for_their_number(abnormal: AbnormalReturns) -> No
 
 def test_a_window_without_deals_has_no_number(abnormal: AbnormalReturns) -> None:
     silent = replace(abnormal, returns=np.full_like(abnormal.returns, np.nan))
-    (found,) = all_windows({"m": silent}, WINDOWS[:1], TEST_FUNCTIONS, 0.8, 0.95)
+    (found,) = all_windows({"m": silent}, WINDOWS[:1], TEST_FUNCTIONS, {}, 0.8, 0.95)
     assert found.n == 0
     assert np.isnan([found.mean, found.median, found.std_dev, *found.interval]).all()
     assert all(isinstance(test, NotApplicable) for test in found.tests.values())

@@ -21,7 +21,7 @@ def test_a_file_becomes_a_study_with_its_defaults(tmp_path: Path) -> None:
     assert study.event_time.cutoff_minutes == 0
     assert study.expected_returns.all_models == ("market_model",)
     assert study.level == 0.95
-    assert study.tests.headline == "dependence_adjusted"
+    assert study.tests.headline == "by_rule"
     assert study.inputs.deals == tmp_path / "tables" / "deals.xlsx"
     with pytest.raises(ValidationError):
         study.title = "Another"  # type: ignore[misc]

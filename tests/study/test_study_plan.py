@@ -103,7 +103,7 @@ def test_a_study_of_the_mean_alone_wants_no_more_than_the_fixed_columns(tmp_path
     study = load_study(write(tmp_path / "study.toml", text))
     assert plan.roles(study) is None
     assert plan.wanted(study).deal_numbers == ()
-    assert plan.facts(study).treatment == ""
+    assert plan.facts(study, "dependence_adjusted").treatment == ""
 
 
 @pytest.mark.parametrize(
@@ -138,7 +138,7 @@ def test_event_options_repeat_the_study(study: Study) -> None:
 
 
 def test_facts_for_the_report(study: Study) -> None:
-    facts = plan.facts(study)
+    facts = plan.facts(study, "dependence_adjusted")
     assert facts.windows == study.event_time.all_windows
     assert facts.regressors == ("shares", "relative_size", "leverage")
     assert facts.words("relative_size") == "Relative size"
