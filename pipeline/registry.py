@@ -26,7 +26,8 @@ class Entry:
     ``effects``, ``selection``, ``instruments``; models: factor columns). ``answers`` ranks the
     estimators by how much of the choice they account for: the highest one leads the finding.
     ``why`` says in a clause what a test is chosen for, to follow "chosen because it"; ``assumes``
-    names what the test takes for granted, checked against each sample.
+    names what the test takes for granted, checked against each sample. An entry that is not
+    ``default`` is used only when the study names it.
     """
 
     key: str
@@ -35,6 +36,7 @@ class Entry:
     answers: int = 0
     why: str = ""
     assumes: tuple[str, ...] = ()
+    default: bool = True
 
     def load(self) -> Callable[..., Any]:
         """Import the function the entry names."""

@@ -292,5 +292,7 @@ class Study(Part):
             "instruments": self.instruments is not None,
         }
         return tuple(
-            entry.key for entry in TABLE[ESTIMATORS] if all(has[need] for need in entry.needs)
+            entry.key
+            for entry in TABLE[ESTIMATORS]
+            if entry.default and all(has[need] for need in entry.needs)
         )
