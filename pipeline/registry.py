@@ -51,6 +51,11 @@ TABLE: dict[str, tuple[Entry, ...]] = {
         Entry("market_adjusted", "pipeline.returns.expected:market_adjusted"),
         Entry("constant_mean", "pipeline.returns.expected:constant_mean"),
         Entry("factor_model", "pipeline.returns.expected:factor_model", needs=("factors",)),
+        Entry("excess_return", "pipeline.returns.expected:excess_return", needs=("factors",)),
+        Entry("local_and_global", "pipeline.returns.expected:local_and_global", needs=("factors",)),
+        Entry("scholes_williams", "pipeline.returns.expected:scholes_williams"),
+        Entry("dimson", "pipeline.returns.expected:dimson"),
+        Entry("huber", "pipeline.returns.expected:huber"),
     ),
     TESTS: (
         Entry(

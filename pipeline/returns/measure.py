@@ -7,12 +7,13 @@ from collections.abc import Callable, Mapping
 import numpy as np
 import pandas as pd
 
-from pipeline.core.abnormal import AbnormalReturns, concatenate
-from pipeline.core.prices import Booleans, Floats, PricePanel
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
-from pipeline.returns.fit import Events, fit_events
+from pipeline.returns.expected import MeanModel
+from pipeline.returns.fit import Events, blank, fit_into
 
-ModelFunction = Callable[[PricePanel], tuple[Floats, Floats]]
+ModelFunction = Callable[[PricePanel], MeanModel]
 
 
 def measure(
@@ -28,7 +29,7 @@ def measure(
 
     Args:
         model: the model's key.
-        function: panel -> (offset, regressors).
+        function: panel -> the model on its sessions.
         located: deal_id, exchange, column, position; N rows.
         masked: (N, E) estimation sessions not to use.
         panels: exchange -> prices.
@@ -37,24 +38,22 @@ def measure(
     Returns:
         Abnormal returns in the order of ``located``.
     """
-    parts: list[AbnormalReturns] = []
-    rows: list[np.ndarray] = []
     exchanges = located["exchange"].to_numpy()
-    for exchange in sorted(set(exchanges)):
+    models = {exchange: function(panels[exchange]) for exchange in sorted(set(exchanges))}
+    arrays = blank(len(located), next(iter(models.values())), estimation, span)
+    for exchange, mean_model in models.items():
         here = np.flatnonzero(exchanges == exchange)
         own = located.iloc[here]
         # Neighbours in memory first: events of one security read the same column.
         order = np.lexsort((own["position"].to_numpy(), own["column"].to_numpy()))
         own, here = own.iloc[order], here[order]
-        panel = panels[exchange]
-        offset, regressors = function(panel)
         events = Events(
             deals=tuple(own["deal_id"]),
             column=own["column"].to_numpy(),
             position=own["position"].to_numpy(),
             masked=masked[here],
         )
-        parts.append(fit_events(model, offset, regressors, panel, events, estimation, span))
-        rows.append(here)
-    together = concatenate(parts)
-    return together.take(np.argsort(np.concatenate(rows)))
+        fit_into(arrays, here, mean_model, panels[exchange], events, estimation, span)
+    return AbnormalReturns(
+        model=model, deals=tuple(located["deal_id"].astype(str)), span=span, **arrays
+    )

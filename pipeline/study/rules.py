@@ -6,6 +6,7 @@ from collections.abc import Iterator
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from pipeline.core.findings import Finding, Severity
+from pipeline.registry import EXPECTED_RETURNS, entry
 from pipeline.study.schema import Study
 
 
@@ -139,15 +140,16 @@ def _needs(study: Study, file: str) -> Iterator[Finding]:
             "the table of companies that could have announced, needed by [selection]",
             "Name the file, or delete [selection].",
         )
-    if "factor_model" in study.expected_returns.all_models and study.inputs.factors is None:
-        yield _error(
-            "bad_value",
-            file,
-            "inputs.factors",
-            "nothing",
-            "the factor returns, needed by the factor model",
-            "Name the file, or take factor_model out of [expected_returns].",
-        )
+    for key in study.expected_returns.all_models:
+        if "factors" in entry(EXPECTED_RETURNS, key).needs and study.inputs.factors is None:
+            yield _error(
+                "bad_value",
+                file,
+                "inputs.factors",
+                "nothing",
+                f"the factor returns, needed by {key}",
+                f"Name the file, or take {key} out of [expected_returns].",
+            )
 
 
 def _zone(study: Study, file: str) -> Iterator[Finding]:

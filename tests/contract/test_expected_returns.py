@@ -26,14 +26,16 @@ def model(request: pytest.FixtureRequest) -> Entry:
 
 
 def test_an_offset_and_regressors_on_every_session(model: Entry, panel: PricePanel) -> None:
-    offset, regressors = model.load()(panel)
+    made = model.load()(panel)
+    offset, regressors = made.offset, made.regressors
     sessions = len(panel.sessions)
     assert offset.shape == (sessions,)
     assert regressors.ndim == 2
     assert regressors.shape[0] == sessions
     assert offset.dtype == regressors.dtype == np.float64
-    if regressors.shape[1]:
-        assert (regressors[:, 0] == 1).all(), "the constant comes first"
+    constant = (regressors == 1).all(axis=0)
+    assert not constant[1:].any(), "a constant comes first"
+    assert made.constant == (bool(regressors.shape[1]) and bool(constant[0]))
 
 
 def test_the_registry_says_what_it_is_for(model: Entry) -> None:
@@ -44,14 +46,18 @@ def test_the_registry_says_what_it_is_for(model: Entry) -> None:
 
 
 def test_residuals_and_abnormal_returns_add_up(model: Entry, panel: PricePanel) -> None:
-    """Residuals are orthogonal to the regressors, and AR + E[R] is the return itself."""
+    """Residuals are orthogonal to the regressors, and AR + E[R] is the return itself.
+
+    A model that makes one slope of several gives up orthogonality to each of them.
+    """
     found = fitted(model.key, panel, COLUMNS, POSITIONS)
-    _, regressors = model.load()(panel)
+    made = model.load()(panel)
+    regressors = np.ones((len(panel.sessions), 0)) if made.aggregate else made.regressors
     for row, (column, position) in enumerate(zip(COLUMNS, POSITIONS, strict=True)):
         rows = np.arange(position + ESTIMATION.start, position + ESTIMATION.end + 1)
         residual = found.estimation_returns[row]
         assert np.abs(regressors[rows].T @ residual).max(initial=0.0) < 1e-12
-        d = found.mean_parameters
+        d = made.regressors.shape[1]
         variance = np.sum(residual**2) / (len(rows) - d)
         np.testing.assert_allclose(found.residual_variance[row], variance, rtol=1e-10)
         days = np.arange(position + SPAN.start, position + SPAN.end + 1)
@@ -67,7 +73,7 @@ def test_the_forecast_error_is_never_below_the_residual_one(
         simple = found.residual_variance * len(window)
         ratio = found.car_variance(window) / simple
         assert (ratio >= 1 - 1e-12).all()
-        if found.mean_parameters == 0:
+        if found.mean_parameters == 0 or model.load()(panel).aggregate:
             np.testing.assert_allclose(ratio, 1.0, rtol=1e-12)
         else:
             assert (ratio > 1).all()

@@ -73,7 +73,12 @@ def invented_panel(sessions: int = 320, securities: int = 6, seed: int = 3) -> P
         [f"S{at:02d}" for at in range(securities)],
         100 * np.cumprod(1 + moves, axis=0),
         1000 * np.cumprod(1 + market),
-        {"market": market - 0.0001, "size": size, "risk_free": np.full(sessions, 0.0001)},
+        {
+            "market": market - 0.0001,
+            "size": size,
+            "risk_free": np.full(sessions, 0.0001),
+            "global_market": 0.5 * market + stream.normal(0, 0.005, sessions),
+        },
     )
 
 
@@ -87,7 +92,7 @@ def fitted(
     masked: Booleans | None = None,
 ) -> AbnormalReturns:
     """Abnormal returns of the events at ``columns`` and ``positions`` under a registered model."""
-    offset, regressors = entry(EXPECTED_RETURNS, model).load()(panel)
+    mean_model = entry(EXPECTED_RETURNS, model).load()(panel)
     n = len(columns)
     none = np.zeros((n, len(estimation)), dtype=np.bool_)
     events = Events(
@@ -96,4 +101,4 @@ def fitted(
         position=np.asarray(positions, dtype=np.int64),
         masked=none if masked is None else masked,
     )
-    return fit_events(model, offset, regressors, panel, events, estimation, span)
+    return fit_events(model, mean_model, panel, events, estimation, span)
