@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import signal
 from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, TypeVar
@@ -37,7 +38,10 @@ def _root() -> None:
 def run(
     study: StudyFile,
     out: Annotated[
-        Path | None, typer.Option(help="Folder to write; reports/<study name> if absent.")
+        Path | None,
+        typer.Option(
+            help="Folder to write; reports/<study name> if absent, with --window its own."
+        ),
     ] = None,
     window: Annotated[
         str, typer.Option(help="Another headline window, as first:last session, e.g. -3:3.")
@@ -51,13 +55,15 @@ def run(
     screen = Screen(quiet=quiet, as_json=as_json)
 
     def work() -> None:
+        from pipeline.core.store import refuse_foreign
         from pipeline.flow import Clock, save
         from pipeline.flow import run as run_stages
 
         with screen.progress() as tell:
             plan = _load(study, window)
+            folder = out or Path("reports") / _folder(plan.name, window)
+            refuse_foreign(folder)
             results, seconds = run_stages(plan, tell)
-            folder = out or Path("reports") / plan.name
             written = save(plan, results, seconds, folder, Clock(tell))
         screen.finished(results, folder, written)
 
@@ -72,11 +78,11 @@ def check(study: StudyFile, as_json: AsJson = False) -> None:
     screen = Screen(quiet=False, as_json=as_json)
 
     def work() -> None:
-        from pipeline.flow import Clock, measure_deals
+        from pipeline.flow import check as check_stages
 
         with screen.progress() as tell:
-            measured = measure_deals(_load(study, ""), Clock(tell))
-        screen.checked(measured.ledger, measured.findings)
+            ledger, findings = check_stages(_load(study, ""), tell)
+        screen.checked(ledger, findings)
 
     _guard(work, screen.problem)
 
@@ -103,6 +109,11 @@ def _load(path: Path, window: str) -> Study:
     return load_study(path, overrides)
 
 
+def _folder(name: str, window: str) -> str:
+    """The study's own folder; a window of the command line gets one beside it."""
+    return f"{name}_{window.replace(':', '_').replace('-', 'm')}" if window else name
+
+
 def _span(text: str) -> list[int]:
     """``-3:3`` as two sessions."""
     from pipeline.core.findings import problem
@@ -121,10 +132,16 @@ def _span(text: str) -> list[int]:
         ) from None
 
 
+def _stop(*_: object) -> None:
+    """A request to end is treated like the person's own, so that nothing half-written stays."""
+    raise KeyboardInterrupt
+
+
 def _guard(work: Callable[[], None], show: Callable[[InputProblem], None]) -> None:
     """Run; a problem of the input becomes one screen and exit code 2."""
     from pipeline.core.findings import InputProblem
 
+    signal.signal(signal.SIGTERM, _stop)
     try:
         work()
     except InputProblem as fault:

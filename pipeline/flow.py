@@ -120,6 +120,21 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     return results, clock.seconds
 
 
+def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tuple[Finding, ...]]:
+    """Everything up to the arrays of the regression; nothing is estimated.
+
+    Raises:
+        InputProblem: as :func:`run` would.
+    """
+    clock = Clock(progress)
+    measured = measure_deals(study, clock)
+    with clock.stage("characteristics"):
+        prepared = _prepare(study, measured)
+    if prepared is None:
+        return measured.ledger, measured.findings
+    return measured.ledger.then(prepared.ledger), measured.findings + prepared.findings
+
+
 def measure_deals(study: Study, clock: Clock) -> Measured:
     """Inputs, day zero, abnormal returns and the screens between them."""
     options = plan.event_options(study)

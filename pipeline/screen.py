@@ -68,7 +68,7 @@ class Screen:
             }
             print(json.dumps(content, ensure_ascii=False))
             return
-        console = Console(highlight=False, soft_wrap=False)
+        console = Console(highlight=False, markup=False)
         console.print()
         console.print(text)
         console.print()
@@ -87,7 +87,7 @@ class Screen:
             }
             print(json.dumps(content, ensure_ascii=False))
             return
-        console = Console(highlight=False)
+        console = Console(highlight=False, markup=False)
         for finding in findings:
             _show(console, finding)
         _ledger_totals(console, ledger)
@@ -97,7 +97,7 @@ class Screen:
         if self.as_json:
             print(json.dumps({"findings": [_as_dict(f) for f in fault.findings]}))
             return
-        console = Console(stderr=True, highlight=False)
+        console = Console(stderr=True, highlight=False, markup=False)
         count = len(fault.findings)
         noun = "problem" if count == 1 else "problems"
         console.print(f"{count} {noun} in the input; nothing was written.\n")
@@ -111,7 +111,7 @@ def _as_dict(finding: Finding) -> dict[str, str]:
 
 
 def _show(console: Console, finding: Finding) -> None:
-    console.print(f"{rule_title(finding.rule)} [{finding.rule}]", markup=False)
+    console.print(f"{rule_title(finding.rule)} [{finding.rule}]")
     lines = (
         ("where", finding.where),
         ("found", finding.got),
@@ -119,7 +119,7 @@ def _show(console: Console, finding: Finding) -> None:
         ("do", finding.remedy),
     )
     for label, text in lines:
-        console.print(f"  {label:<9}{text}", markup=False, soft_wrap=True)
+        console.print(f"  {label:<9}{text}", soft_wrap=True)
     console.print()
 
 
@@ -138,14 +138,14 @@ def _ledger_totals(console: Console, ledger: Ledger) -> None:
 
 def explain_rule(key: str) -> bool:
     """Print a rule, or all keys if ``key`` is empty; False if there is no such rule."""
-    console = Console(highlight=False)
+    console = Console(highlight=False, markup=False)
     if not key:
         for rule in RULES.values():
-            console.print(f"{rule.key:<26}{rule.title}", markup=False)
+            console.print(f"{rule.key:<26}{rule.title}")
         return True
     rule_found: Rule | None = RULES.get(key)
     if rule_found is None:
-        console.print(f"No rule '{key}'. dealwake explain lists all of them.", markup=False)
+        console.print(f"No rule '{key}'. dealwake explain lists all of them.")
         return False
     for label, text in (
         ("", rule_found.title),
@@ -153,5 +153,5 @@ def explain_rule(key: str) -> bool:
         ("Why it matters", rule_found.why),
         ("What to do", rule_found.remedy),
     ):
-        console.print(f"{label}\n  {text}" if label else text, markup=False)
+        console.print(f"{label}\n  {text}" if label else text)
     return True

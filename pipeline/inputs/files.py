@@ -32,6 +32,11 @@ class Source:
     sheet: str = ""
 
     @property
+    def kind(self) -> str:
+        """The ending of the file's name, in lower case."""
+        return self.path.suffix.lower()
+
+    @property
     def file(self) -> str:
         """The file as named in findings."""
         return self.path.name + (f", sheet {self.sheet}" if self.sheet else "")
@@ -55,40 +60,8 @@ def read_table(
     Raises:
         InputProblem: if the file is absent, of an unknown kind, unreadable or empty.
     """
-    kind = source.path.suffix.lower()
-    if not source.path.is_file():
-        raise problem(
-            "missing_file",
-            source.path.name,
-            column=f"inputs.{source.table}",
-            got=f"no file at {source.path}",
-            expected="an existing file",
-            remedy="Correct the path; it counts from the folder of the study file that names it.",
-        )
-    if kind not in KINDS:
-        raise problem(
-            "unreadable_file",
-            source.file,
-            got=f"a file ending in '{kind}'",
-            expected="one of " + ", ".join(KINDS),
-            remedy="Save the table as one of these.",
-        )
-    try:
-        _refuse_repeats(source, _header(source, kind))
-        raw = _excel(source) if kind == ".xlsx" else _query(source, kind, wanted, only)
-    except (duckdb.Error, BadZipFile, ValueError, KeyError, OSError) as fault:
-        found = csv_fault(source.path, source.file) if kind == ".csv" else None
-        raise found or problem(
-            "unreadable_file",
-            source.file,
-            got=str(fault).splitlines()[0],
-            expected="a table with a header in its first row",
-            remedy="Open the file, check the sheet and its first row, and save it again.",
-        ) from None
-    if kind == ".csv" and (raw.empty or _one_cell_a_row(raw)):
-        found = csv_fault(source.path, source.file)
-        if found is not None:
-            raise found
+    _refuse_path(source)
+    raw = _raw(source, wanted, only)
     ours = _ours(source, list(raw.columns))
     table = raw[[*ours, ROW]].rename(columns=ours)
     if table.empty and only is None:
@@ -100,6 +73,50 @@ def read_table(
             remedy="Export the table again with its rows.",
         )
     return table
+
+
+def _refuse_path(source: Source) -> None:
+    if not source.path.is_file():
+        raise problem(
+            "missing_file",
+            source.path.name,
+            column=f"inputs.{source.table}",
+            got=f"no file at {source.path}",
+            expected="an existing file",
+            remedy="Correct the path; it counts from the folder of the study file that names it.",
+        )
+    if source.kind not in KINDS:
+        raise problem(
+            "unreadable_file",
+            source.file,
+            got=f"a file ending in '{source.kind}'",
+            expected="one of " + ", ".join(KINDS),
+            remedy="Save the table as one of these.",
+        )
+
+
+def _raw(
+    source: Source, wanted: Sequence[str] | None, only: tuple[str, list[str]] | None
+) -> pd.DataFrame:
+    """The cells under the file's own names; what is wrong with a csv is said by row."""
+    is_csv = source.kind == ".csv"
+    try:
+        _refuse_repeats(source, _header(source))
+        raw = _excel(source) if source.kind == ".xlsx" else _query(source, wanted, only)
+    except (duckdb.Error, BadZipFile, ValueError, KeyError, OSError) as fault:
+        found = csv_fault(source.path, source.file) if is_csv else None
+        raise found or problem(
+            "unreadable_file",
+            source.file,
+            got=str(fault).splitlines()[0],
+            expected="a table with a header in its first row",
+            remedy="Open the file, check the sheet and its first row, and save it again.",
+        ) from None
+    if is_csv and (raw.empty or _one_cell_a_row(raw)):
+        found = csv_fault(source.path, source.file)
+        if found is not None:
+            raise found
+    return raw
 
 
 def _one_cell_a_row(raw: pd.DataFrame) -> bool:
@@ -124,18 +141,18 @@ def _loose(name: str) -> str:
     return str(name).strip().lower().replace(" ", "_")
 
 
-def _header(source: Source, kind: str) -> list[str]:
+def _header(source: Source) -> list[str]:
     """The names in the first row, before a reader makes repeated ones differ."""
-    if kind == ".xlsx":
+    if source.kind == ".xlsx":
         with pd.ExcelFile(source.path, engine="openpyxl") as book:
             sheet = _sheet(source, book)
             first = pd.read_excel(book, sheet_name=sheet, header=None, nrows=1, dtype=object)
         return [str(name) for name in first.to_numpy().ravel() if pd.notna(name)]
     with duckdb.connect() as base:
-        if kind == ".csv":
+        if source.kind == ".csv":
             base.execute(FIRST_ROW, [str(source.path)])
             return [str(name) for name in base.fetchone() or () if name is not None]
-        shape = base.execute(f"SELECT * FROM {READERS[kind]} LIMIT 0", [str(source.path)])
+        shape = base.execute(f"SELECT * FROM {READERS[source.kind]} LIMIT 0", [str(source.path)])
         return [column[0] for column in shape.description or ()]
 
 
@@ -180,19 +197,18 @@ def _excel(source: Source) -> pd.DataFrame:
 
 def _query(
     source: Source,
-    kind: str,
     wanted: Sequence[str] | None,
     only: tuple[str, list[str]] | None,
 ) -> pd.DataFrame:
     with duckdb.connect() as base:
         base.execute("SET TimeZone = 'UTC'")
-        shape = base.execute(f"SELECT * FROM {READERS[kind]} LIMIT 0", [str(source.path)])
+        shape = base.execute(f"SELECT * FROM {READERS[source.kind]} LIMIT 0", [str(source.path)])
         ours = _ours(source, [column[0] for column in shape.description or ()])
         kept = [name for name in ours if wanted is None or ours[name] in wanted]
         chosen = ", ".join(_quoted(name) for name in kept)
         query = (
             f"SELECT {chosen + ', ' if chosen else ''}{ROW} FROM (SELECT *, "
-            f"row_number() OVER () + 1 AS {ROW} FROM {READERS[kind]})"
+            f"row_number() OVER () + 1 AS {ROW} FROM {READERS[source.kind]})"
         )
         parameters: list[object] = [str(source.path)]
         by_our_name = {our: name for name, our in ours.items()}

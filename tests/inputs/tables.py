@@ -23,20 +23,7 @@ WANTED = Wanted(
 def frames() -> Frames:
     """Three deals, their prices, a benchmark, candidates and factors; all as text."""
     return {
-        "deals": pd.DataFrame(
-            {
-                "deal_id": ["D1", "D2", "D3"],
-                "security": ["A", "B", "A"],
-                "exchange": ["XLON", "XNYS", "XLON"],
-                "announced_at": ["2021-03-01 08:00", "2021-03-02T10:00+01:00", "2021-06-01"],
-                "timestamp_zone": ["Europe/London", "", ""],
-                "currency": ["GBP", "GBP", "GBP"],
-                "market_value": ["100.5", "", "300"],
-                "shares": ["1", "0", "1"],
-                "industry": ["jam", "tin", "jam"],
-                "notes": ["=SUM(1)", "x", ""],
-            }
-        ),
+        "deals": _deals(),
         "prices": pd.DataFrame(
             {
                 "security": ["A", "A", "B", "C"],
@@ -70,6 +57,23 @@ def frames() -> Frames:
             }
         ),
     }
+
+
+def _deals() -> pd.DataFrame:
+    return pd.DataFrame(
+        {
+            "deal_id": ["D1", "D2", "D3"],
+            "security": ["A", "B", "A"],
+            "exchange": ["XLON", "XNYS", "XLON"],
+            "announced_at": ["2021-03-01 08:00", "2021-03-02T10:00+01:00", "2021-06-01"],
+            "timestamp_zone": ["Europe/London", "", ""],
+            "currency": ["GBP", "GBP", "GBP"],
+            "market_value": ["100.5", "", "300"],
+            "shares": ["1", "0", "1"],
+            "industry": ["jam", "tin", "jam"],
+            "notes": ["=SUM(1)", "x", ""],
+        }
+    )
 
 
 def write_csv(table: pd.DataFrame, path: Path) -> Path:

@@ -269,23 +269,27 @@ def test_power_to_two_decimals(effect: float, std_dev: float, n: int, printed: f
     assert round(z_test_power(effect, std_dev, n), 2) == printed
 
 
+FIFTY = [key for key in REAL if key.endswith("N50")]
+
+
 @pytest.fixture(scope="module")
-def few_draws(prices: PricePanel) -> AbnormalReturns:
+def few_rates(prices: PricePanel) -> dict[str, dict[str, float]]:
     """400 times 50 random events; the 2,000 of the reference are left to the benchmark."""
-    return drawn(prices, 50, 400, seed=11)
+    events = drawn(prices, 50, 400, seed=11)
+    return {name: drawn_rates(events, 50, *REAL[name][1:]) for name in FIFTY}
 
 
 @pytest.mark.parametrize("test", KEYS)
-@pytest.mark.parametrize("name", [key for key in REAL if key.endswith("N50")])
-def test_size_and_power_on_real_prices(name: str, test: str, few_draws: AbnormalReturns) -> None:
+@pytest.mark.parametrize("name", FIFTY)
+def test_size_and_power_on_real_prices(
+    name: str, test: str, few_rates: dict[str, dict[str, float]]
+) -> None:
     """The rates of independent code over 2,000 draws (events.json), within four standard errors
     of the difference between its draws and these."""
     cases = {
         **CASES["size_random_dates"]["expected"],
         **CASES["size_event_variance"]["expected"],
     }
-    _, effect, variance = REAL[name]
     known = cases[f"{name}.{test}"]["value"]
     error = np.sqrt(known * (1 - known) * (1 / 400 + 1 / 2000))
-    found = drawn_rates(few_draws, 50, effect, variance)[test]
-    assert abs(found - known) <= 4 * error
+    assert abs(few_rates[name][test] - known) <= 4 * error

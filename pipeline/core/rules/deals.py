@@ -117,4 +117,11 @@ RULES = (
         "There is nothing to test.",
         "Read the ledger from the top; the stage that drops most is the place to look.",
     ),
+    Rule(
+        "two_exchanges",
+        "One security on two exchanges",
+        "A security code stands with two exchange codes.",
+        "Its sessions and its benchmark would be another market's.",
+        "Give each listing its own code, or correct the exchange.",
+    ),
 )

@@ -118,6 +118,13 @@ RULES = (
         "Fill the column.",
     ),
     Rule(
+        "cluster_decides",
+        "Coefficient that one cluster decides",
+        "The deal feature varies in one cluster alone, once the other regressors are out.",
+        "The residuals of that cluster cannot tell how far its shock moved the coefficient.",
+        "Cluster by a finer dimension, or do not read the coefficient.",
+    ),
+    Rule(
         "covariance_option",
         "Covariance that this column does not offer",
         "The covariance named does not exist for the estimator.",
@@ -186,5 +193,19 @@ RULES = (
         "All candidates announced, or none did.",
         "There is no decision to model.",
         "Complete the table of candidates.",
+    ),
+    Rule(
+        "singleton",
+        "Deal alone in a fixed effect",
+        "No other deal has the same value of a fixed effect.",
+        "Its effect fits it exactly, so it says nothing and makes errors look too small.",
+        "None needed: it leaves all columns, so that they stand on the same rows.",
+    ),
+    Rule(
+        "lag_without_history",
+        "Lag without a table of candidates",
+        "A lagged variable needs the candidates, company by year.",
+        "A deal list does not know the year before.",
+        "Name the candidates under [inputs] with a [selection], or leave the lag out.",
     ),
 )

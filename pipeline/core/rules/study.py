@@ -54,4 +54,25 @@ RULES = (
         "It cannot enter a regression.",
         "Correct its name, or define it under [characteristics].",
     ),
+    Rule(
+        "output_folder",
+        "Folder that cannot take the run",
+        "The folder to write to is a file, holds other things, or cannot be written.",
+        "A run replaces its folder whole; it must never replace anything else.",
+        "Name a new folder, or one that holds an earlier run.",
+    ),
+    Rule(
+        "treatment_not_binary",
+        "Treatment that is not yes or no",
+        "The treatment has other values than 0 and 1.",
+        "Groups, instruments and words all speak of two values.",
+        "Make an indicator under [characteristics], or set regression.continuous = true.",
+    ),
+    Rule(
+        "duplicate_variable",
+        "Variable named twice",
+        "A variable stands twice among the regressors.",
+        "It would repeat itself.",
+        "Name it once.",
+    ),
 )
