@@ -50,7 +50,7 @@ from pipeline.returns.events import (
 )
 from pipeline.returns.measure import measure
 from pipeline.returns.panel import build_panels
-from pipeline.returns.screens import screen_estimation, screen_event
+from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.choice import leading_test
 from pipeline.significance.paths import average_paths
@@ -107,7 +107,13 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
         windows = study.event_time.all_windows
         assumes = {key: entry(TESTS, key).assumes for key in tests}
         found = all_windows(
-            measured.abnormal, windows, tests, assumes, study.event_time.share_of_days, study.level
+            measured.abnormal,
+            windows,
+            tests,
+            assumes,
+            study.event_time.share_of_days,
+            study.level,
+            study.seed,
         )
     with clock.stage("characteristics"):
         prepared = _prepare(study, measured)
@@ -155,6 +161,7 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
         )
         raise_errors(found)
         located, at_zero = locate(tables.deals, panels, calendars, options)
+        raise_errors(jumps_near_events(located, panels, options))
         first, repeats = keep_first_of_overlapping(located, options.headline)
     ledger = Ledger((tables.ledger, at_zero, repeats))
     _refuse_empty(len(first), ledger)

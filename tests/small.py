@@ -39,7 +39,7 @@ formats = ["tex"]
 """
 
 
-def write_small_study(folder: Path, deals: int = 24, seed: int = 7) -> Path:
+def write_small_study(folder: Path, deals: int = 40, seed: int = 7) -> Path:
     """Write tables and study file into ``folder``; gives the study file's path."""
     folder.mkdir(parents=True, exist_ok=True)
     stream = np.random.default_rng(seed)

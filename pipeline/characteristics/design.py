@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -32,12 +32,18 @@ class Roles:
     outcome: str
     outcome_label: str
     treatment: str
+    continuous: bool = False
     controls: tuple[str, ...] = ()
     effects: tuple[str, ...] = ()
     clusters: tuple[str, ...] = ()
     instruments: tuple[str, ...] = ()
     selection: tuple[str, ...] = ()
     excluded: tuple[str, ...] = ()
+
+    @property
+    def regressors(self) -> tuple[str, ...]:
+        """Treatment and controls."""
+        return (self.treatment, *self.controls)
 
     @property
     def numbers(self) -> tuple[str, ...]:
@@ -107,7 +113,9 @@ def prepare(
         InputProblem: a variable nothing defines, an impossible transform, a treatment without
             variation, a company control missing from the selection equation.
     """
-    raw, findings = raw_variables(deals, recipes, roles.numbers, measured, "deal_id", "deals")
+    raw, findings = raw_variables(
+        deals, recipes, roles.numbers, measured, "deal_id", "deals", candidates
+    )
     universe = None
     if candidates is not None and roles.selection:
         names = (*roles.selection, *roles.excluded)
@@ -116,7 +124,8 @@ def prepare(
     raise_errors(findings)
     used, ledger = _mask(deals, raw, roles, universe)
     finished = finish(makeable(recipes, raw), raw, used) if used.any() else dict(raw)
-    _refuse_without_variation(finished[roles.treatment][used], roles.treatment)
+    _refuse_treatment(finished[roles.treatment][used], roles)
+    _refuse_few(int(used.sum()), 1 + len(roles.regressors), ledger)
     selection = None
     if universe is not None:
         kept = tuple(deals.loc[used, "deal_id"].astype(str))
@@ -160,25 +169,74 @@ def _mask(
             if verdict is not None:
                 used[row] = False
                 entries.append(_drop(ids[row], *verdict))
+    for alone, effect in _singletons(deals, roles.effects, used):
+        used[alone] = False
+        value = f"alone in {effect} {deals[effect].iloc[alone]}"
+        entries.append(_drop(ids[alone], "singleton", value, "two deals a group"))
     return used, StageLedger("regression", len(deals), tuple(entries))
+
+
+def _singletons(
+    deals: pd.DataFrame, effects: Sequence[str], used: Booleans
+) -> Iterator[tuple[int, str]]:
+    """Rows alone in a group of a fixed effect, until no group of one is left.
+
+    They fit themselves and leave every column, so that all columns stand on the same rows.
+    """
+    left = used.copy()
+    found = True
+    while found:
+        found = False
+        for name in effects:
+            values = deals[name].where(left)
+            alone = left & values.map(values.value_counts()).eq(1).to_numpy()
+            for row in np.flatnonzero(alone):
+                left[row] = False
+                found = True
+                yield int(row), name
 
 
 def _drop(deal: str, rule: str, value: str, threshold: str) -> LedgerEntry:
     return LedgerEntry(deal, rule, Action.DROPPED, value, threshold)
 
 
-def _refuse_without_variation(treatment: Floats, name: str) -> None:
+def _refuse_treatment(treatment: Floats, roles: Roles) -> None:
     values, counts = np.unique(treatment, return_counts=True)
-    if len(values) > 1 and (len(values) > 2 or counts.min() >= FEWEST_A_GROUP):
+    yes_or_no = set(values) <= {0.0, 1.0}
+    if len(values) > 1 and not yes_or_no and not roles.continuous:
+        raise problem(
+            "treatment_not_binary",
+            "deals",
+            column=roles.treatment,
+            got=", ".join(f"{value:g}" for value in values[:5]),
+            expected="0 or 1 in every row",
+            remedy="Make an indicator under [characteristics], or set regression.continuous = true "
+            "if the feature is a degree.",
+        )
+    if len(values) > 1 and (not yes_or_no or counts.min() >= FEWEST_A_GROUP):
         return
     found = ", ".join(f"{n} deals with {v:g}" for v, n in zip(values, counts, strict=True))
     raise problem(
         "no_variation",
         "deals",
-        column=name,
+        column=roles.treatment,
         got=found or "no deal left for the regression",
         expected=f"at least {FEWEST_A_GROUP} deals with each of two values",
         remedy="Widen the sample, or ask about another feature; the ledger says what was lost.",
+    )
+
+
+def _refuse_few(rows: int, coefficients: int, ledger: StageLedger) -> None:
+    """At least 10 + 5 k deals for k coefficients: common practice, no source."""
+    needed = 10 + 5 * coefficients
+    if rows >= needed:
+        return
+    raise problem(
+        "few_rows",
+        "deals",
+        got=f"{rows} deals ({ledger.rows_in} were measured) for {coefficients} coefficients",
+        expected=f"at least {needed} deals",
+        remedy="Take controls out, widen the sample, or delete [regression] and test the mean.",
     )
 
 
@@ -190,7 +248,7 @@ def _design(
     selection: SelectionRows | None,
 ) -> Design:
     kept = deals[used]
-    regressors = [roles.treatment, *roles.controls]
+    regressors = roles.regressors
     columns = [np.ones(int(used.sum()))] + [finished[name][used] for name in regressors]
     instruments = [finished[name][used] for name in roles.instruments]
     return Design(
@@ -205,4 +263,14 @@ def _design(
         Z=np.column_stack(instruments) if instruments else np.empty((len(kept), 0)),
         instruments=roles.instruments,
         selection=selection,
+        outcome_variance=_outcome_variance(kept, roles.outcome),
     )
+
+
+def _outcome_variance(kept: pd.DataFrame, outcome: str) -> Floats | None:
+    """(n,) squares of the column ``<outcome>_std_dev``; None unless every deal has one."""
+    column = f"{outcome}_std_dev"
+    if column not in kept:
+        return None
+    spread = pd.to_numeric(kept[column], errors="coerce").to_numpy(np.float64)
+    return np.asarray(spread**2) if np.isfinite(spread).all() else None

@@ -41,13 +41,19 @@ class Recipe:
     standardise: bool = False
 
 
-def raw_values(recipe: Recipe, table: pd.DataFrame, measured: Mapping[str, Floats]) -> Floats:
+def raw_values(
+    recipe: Recipe,
+    table: pd.DataFrame,
+    measured: Mapping[str, Floats],
+    history: pd.DataFrame | None = None,
+) -> Floats:
     """(n,) values after source, lag and log; NaN where an input is missing.
 
     Args:
         recipe: anything but an interaction, which is made of finished variables.
         table: the rows, with the recipe's columns; a lag needs ``security`` and ``year``.
         measured: price measures by variable name.
+        history: the candidates, one row a ``security`` and ``year``, for lags.
     """
     if recipe.source == "price":
         values = measured[recipe.name]
@@ -59,8 +65,8 @@ def raw_values(recipe: Recipe, table: pd.DataFrame, measured: Mapping[str, Float
         values = _indicator(recipe, table[recipe.columns[0]])
     else:
         values = table[recipe.columns[0]].to_numpy(np.float64)
-    if recipe.lag:
-        values = _lagged(values, table, recipe.lag)
+    if recipe.lag and history is not None:
+        values = _lagged(recipe, table, history)
     if recipe.log:
         with np.errstate(divide="ignore", invalid="ignore"):
             values = np.log(values)
@@ -76,11 +82,13 @@ def _indicator(recipe: Recipe, column: pd.Series) -> Floats:
     return np.where(missing, np.nan, hit.astype(np.float64))
 
 
-def _lagged(values: Floats, table: pd.DataFrame, years: int) -> Floats:
-    keys = table[["security", "year"]].assign(value=values)
-    earlier = keys.assign(year=keys["year"] + years)
-    joined = keys[["security", "year"]].merge(earlier, on=["security", "year"], how="left")
-    return joined["value"].to_numpy(np.float64)
+def _lagged(recipe: Recipe, table: pd.DataFrame, history: pd.DataFrame) -> Floats:
+    """The candidate's value ``lag`` years before each row's year; NaN where there is none."""
+    column = recipe.columns[0]
+    known = history[["security", "year", column]].rename(columns={column: "_value"})
+    keys = table[["security", "year"]].assign(year=table["year"] - recipe.lag)
+    joined = keys.merge(known, on=["security", "year"], how="left", validate="m:1")
+    return joined["_value"].to_numpy(np.float64)
 
 
 def finish(
@@ -189,6 +197,7 @@ def raw_variables(
     measured: Mapping[str, Floats],
     key: str,
     file: str,
+    history: pd.DataFrame | None = None,
 ) -> tuple[dict[str, Floats], list[Finding]]:
     """Raw values of all names but interactions, and a finding for each that cannot be made."""
     raw: dict[str, Floats] = {}
@@ -197,13 +206,29 @@ def raw_variables(
         recipe = recipes.get(name) or Recipe(name, "column", (name,))
         if recipe.source == "interaction":
             continue
-        lacking = [column for column in recipe.columns if column not in table.columns]
+        if recipe.lag and history is None:
+            findings.append(_no_history(recipe))
+            continue
+        where = table if not recipe.lag or history is None else history
+        lacking = [column for column in recipe.columns if column not in where.columns]
         if lacking:
             findings.append(_unknown(name, lacking, file))
             continue
-        raw[name] = raw_values(recipe, table, measured)
+        raw[name] = raw_values(recipe, table, measured, history)
         findings += impossible(recipe, table, raw[name], key, file)
     return raw, findings
+
+
+def _no_history(recipe: Recipe) -> Finding:
+    return Finding(
+        "lag_without_history",
+        Severity.ERROR,
+        "study",
+        got=f"a lag of {recipe.lag} year(s), and no table of candidates",
+        expected="candidates, company by year",
+        remedy="Name the candidates in a study with [selection], or leave the lag out.",
+        column=f"characteristics.{recipe.name}.lag",
+    )
 
 
 def _unknown(name: str, lacking: list[str], file: str) -> Finding:

@@ -51,7 +51,7 @@ def read_universe(
     names: Sequence[str],
 ) -> tuple[Universe, list[Finding]]:
     """The candidates' raw variables, and a finding for each that cannot be made."""
-    raw, findings = raw_variables(table, recipes, names, measured, "security", "candidates")
+    raw, findings = raw_variables(table, recipes, names, measured, "security", "candidates", table)
     values = np.column_stack(list(raw.values())) if raw else np.ones((len(table), 1))
     complete = np.asarray(np.isfinite(values).all(axis=1), dtype=np.bool_)
     return Universe(table, tuple(names), raw, complete), findings

@@ -46,6 +46,8 @@ class Design:
         selection: the candidates, if the study models who announces.
         rows: n deal identifiers.
         outcome: how the outcome is called on a page, e.g. ``CAR[-1, +1]``.
+        outcome_variance: (n,) variance of the error with which each outcome was measured, the
+            outcome's unit squared, or None where it is not known.
 
     Raises:
         ValueError: if a shape disagrees or a value is not finite.
@@ -62,6 +64,7 @@ class Design:
     Z: Floats = field(default_factory=lambda: np.empty((0, 0)))
     instruments: tuple[str, ...] = ()
     selection: SelectionRows | None = None
+    outcome_variance: Floats | None = None
 
     def __post_init__(self) -> None:
         n = len(self.y)
@@ -76,6 +79,9 @@ class Design:
             raise ValueError(f"treatment {self.treatment} is not a regressor")
         if not all(np.isfinite(array).all() for array in (self.y, self.X, self.Z)):
             raise ValueError("y, X and Z must be finite: rows with gaps are dropped before")
+        variance = self.outcome_variance
+        if variance is not None and (variance.shape != (n,) or not (variance >= 0).all()):
+            raise ValueError("outcome_variance needs one value a row, none negative")
 
     @property
     def n(self) -> int:
@@ -83,8 +89,13 @@ class Design:
         return len(self.y)
 
 
-COVARIANCES = ("auto", "classical", "hc0", "hc1", "hc2", "hc3")
-"""What a study may ask for; ``auto`` leaves the choice to the estimator."""
+COVARIANCES = ("auto", "classical", "hc0", "hc1", "hc2", "hc3", "cr2", "cr3")
+"""What a study may ask for; ``auto`` leaves the choice to the estimator. ``cr2`` and ``cr3``
+cluster by the design's one dimension."""
+
+
+LEARNERS = ("parametric", "penalised", "forest")
+"""Straight lines and a logit; the same with squares and products, penalised; random forests."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -97,6 +108,10 @@ class FitOptions:
         cluster: whether to cluster by the design's one or two dimensions.
         allow_functional_form: accept a selection model without an excluded variable, identified
             by the curvature of the inverse Mills ratio alone.
+        learner: how nuisance functions are learnt, one of :data:`LEARNERS`.
+        folds: parts of the sample for cross-fitting, 2 to 20; 1 fits and predicts on the same rows.
+        matches: nearest deals a deal is compared with in matching, at least 1.
+        seed: of every random choice inside a fit.
 
     Raises:
         ValueError: if a value is none of these, or both kinds of covariance are asked for.
@@ -106,6 +121,10 @@ class FitOptions:
     covariance: str = "auto"
     cluster: bool = False
     allow_functional_form: bool = False
+    learner: str = "penalised"
+    folds: int = 5
+    matches: int = 1
+    seed: int = 20260301
 
     def __post_init__(self) -> None:
         if not 0.5 <= self.level < 1:
@@ -114,3 +133,9 @@ class FitOptions:
             raise ValueError(f"covariance must be one of {COVARIANCES}. Got {self.covariance}.")
         if self.cluster and self.covariance != "auto":
             raise ValueError(f"cluster and covariance {self.covariance} exclude each other")
+        if self.learner not in LEARNERS:
+            raise ValueError(f"learner must be one of {LEARNERS}. Got {self.learner} instead.")
+        if not 1 <= self.folds <= 20:
+            raise ValueError(f"folds must be from 1 to 20. Got {self.folds} instead.")
+        if self.matches < 1:
+            raise ValueError(f"matches must be at least 1. Got {self.matches} instead.")

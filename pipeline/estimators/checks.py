@@ -33,7 +33,7 @@ LIMITS = (
         "Condition number of the regressors",
         30.0,
         float("inf"),
-        "Above it the coefficients are hard to tell apart.",
+        "Too high, it leaves the coefficients hard to tell apart.",
         "Belsley, Kuh and Welsch 1980",
     ),
     Limit(
@@ -41,7 +41,7 @@ LIMITS = (
         "Variance inflation of the feature",
         10.0,
         float("inf"),
-        "Above it the controls nearly determine the feature.",
+        "Too high, the controls nearly determine the feature.",
         HOUSE,
     ),
     Limit(
@@ -49,7 +49,7 @@ LIMITS = (
         "Variance inflation of the selection term",
         10.0,
         30.0,
-        "Above it the correction rests on the shape of the normal curve.",
+        "Too high, the correction rests on the shape of the normal curve.",
         "Leung and Yu 1996, thresholds common practice",
     ),
     Limit(
@@ -57,7 +57,7 @@ LIMITS = (
         "Instrumented over least-squares estimate, size",
         5.0,
         float("inf"),
-        "Above it the instruments may move more than the feature.",
+        "Too high, the instruments may move more than the feature.",
         "Lal, Lockhart, Xu and Zu 2024",
     ),
 )
@@ -78,20 +78,25 @@ TESTS = (
         "breusch_pagan",
         "Equal variances, p",
         False,
-        "If rejected, only robust or clustered errors hold; these are used.",
+        "Unequal variances leave only robust or clustered errors; these are used.",
     ),
-    Wanted("reset", "Straight-line form, p", False, "If rejected, a curve is missing."),
+    Wanted(
+        "reset",
+        "Straight-line form, p",
+        False,
+        "A low p hints at a curve that a straight line misses.",
+    ),
     Wanted(
         "excluded_variables",
         "Excluded variables move the decision, p",
         True,
-        "If not, nothing but the shape of the normal curve identifies the correction.",
+        "Without it nothing but the shape of the normal curve identifies the correction.",
     ),
     Wanted(
         "overidentification",
         "Instruments agree with one another, p",
         False,
-        "If rejected, at least one does not move the feature alone; a common flaw goes unseen.",
+        "A low p says that one of them does not move the feature alone; a common flaw goes unseen.",
     ),
 )
 
@@ -146,7 +151,7 @@ def _strength(estimate: Estimate) -> Iterator[Diagnostic]:
         test.statistic,
         f"above {needed:.1f}",
         "pass" if test.statistic > needed else "warn",
-        "Below it the t interval misleads; read the Anderson–Rubin set.",
+        "Too weak, the t interval misleads; read the Anderson–Rubin set.",
         "Montiel Olea and Pflueger 2013",
     )
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
+from difflib import get_close_matches
 from typing import Final
 
 import numpy as np
@@ -105,7 +106,8 @@ def _read_text(raw: pd.Series) -> tuple[pd.Series, pd.Series]:
         return str(cell).strip()
 
     missing = is_missing(raw)
-    values = raw.map(word) if raw.dtype == object or raw.dtype.kind == "f" else raw.astype(str)
+    mixed = raw.dtype == object or raw.dtype.kind == "f"
+    values = (raw.map(word) if mixed else raw.astype(str)).astype("str")
     values = values.str.strip().where(~missing, "").astype("str")
     return values, pd.Series(False, index=raw.index)
 
@@ -180,6 +182,24 @@ def _nothing(kind: str, index: pd.Index) -> pd.Series:
     if kind == "date":
         return pd.Series(pd.NaT, index=index, dtype=DAY)
     return pd.Series(np.nan, index=index)
+
+
+def unknown_names(source: Source, columns: Sequence[Column]) -> list[Finding]:
+    """An error for each name under [inputs.columns] that the table's contract does not know."""
+    known = [column.name for column in columns]
+    return [
+        Finding(
+            "unknown_key",
+            Severity.ERROR,
+            "study file",
+            got=f"'{name}', which the table {source.table} does not have",
+            expected="one of " + ", ".join(known),
+            remedy=f"Did you mean '{get_close_matches(name, known, 1, 0.0)[0]}'?",
+            column=f"inputs.columns.{source.table}.{name}",
+        )
+        for name in source.columns
+        if name not in known
+    ]
 
 
 def _absent(table: pd.DataFrame, source: Source, column: Column) -> Finding:

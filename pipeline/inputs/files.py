@@ -64,6 +64,8 @@ def read_table(
     raw = _raw(source, wanted, only)
     ours = _ours(source, list(raw.columns))
     table = raw[[*ours, ROW]].rename(columns=ours)
+    if wanted is None:
+        table = table[~_blank(table)].reset_index(drop=True)
     if table.empty and only is None:
         raise problem(
             "empty_table",
@@ -73,6 +75,12 @@ def read_table(
             remedy="Export the table again with its rows.",
         )
     return table
+
+
+def _blank(table: pd.DataFrame) -> pd.Series:
+    """Rows without a single filled cell, as spreadsheets leave below a table."""
+    cells = table.drop(columns=ROW)
+    return (cells.isna() | cells.map(lambda cell: cell == "")).all(axis=1)
 
 
 def _refuse_path(source: Source) -> None:
@@ -130,11 +138,23 @@ def _ours(source: Source, names: list[str]) -> dict[str, str]:
 
     A column whose own name was declared to be another's is left out.
     """
-    declared = {theirs: ours for ours, theirs in source.columns.items() if theirs in names}
+    declared = _declared(source, names)
     ours = {name: declared.get(name, _loose(name)) for name in names if name != ROW}
     return {
         name: our for name, our in ours.items() if name in declared or our not in declared.values()
     }
+
+
+def _declared(source: Source, names: list[str]) -> dict[str, str]:
+    """File name -> our name for declared columns, case and spaces aside where that is unique."""
+    found: dict[str, str] = {}
+    for ours, theirs in source.columns.items():
+        alike = [name for name in names if name != ROW and _loose(name) == _loose(theirs)]
+        if theirs in names:
+            found[theirs] = ours
+        elif len(alike) == 1:
+            found[alike[0]] = ours
+    return found
 
 
 def _loose(name: str) -> str:
@@ -191,8 +211,7 @@ def _excel(source: Source) -> pd.DataFrame:
             written = written.iloc[: len(table), : table.shape[1]].set_axis(table.columns, axis=1)
             table = table.where(table.notna(), written)
     table[ROW] = range(2, len(table) + 2)
-    blank = table.drop(columns=ROW).map(lambda cell: cell is None or cell == "").all(axis=1)
-    return table[~blank].reset_index(drop=True)
+    return table
 
 
 def _query(
@@ -213,9 +232,9 @@ def _query(
         parameters: list[object] = [str(source.path)]
         by_our_name = {our: name for name, our in ours.items()}
         if only is not None and only[0] in by_our_name:
-            query += (
-                f" WHERE CAST({_quoted(by_our_name[only[0]])} AS VARCHAR) IN (SELECT unnest(?))"
-            )
+            # Codes compare as the contract reads them: without spaces around, 5.0 as 5.
+            code = f"trim(CAST({_quoted(by_our_name[only[0]])} AS VARCHAR))"
+            query += f" WHERE regexp_replace({code}, '^(\\d+)\\.0$', '\\1') IN (SELECT unnest(?))"
             parameters.append(only[1])
         return base.execute(query, parameters).df()
 

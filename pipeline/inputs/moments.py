@@ -10,7 +10,7 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import DAY, EARLIEST, LATEST, date_part, is_missing
+from pipeline.inputs.contracts import DAY, EARLIEST, EXAMPLES, date_part, is_missing, row_list
 from pipeline.inputs.files import ROW, Source
 
 ISO_DATE = re.compile(r"^\d{4}-\d{2}-\d{2}$")
@@ -46,8 +46,8 @@ IMPOSSIBLE = Refusal(
 )
 OUT_OF_RANGE = Refusal(
     "date_out_of_range",
-    f"a date from {EARLIEST:%Y-%m-%d} to {LATEST:%Y-%m-%d}",
-    "Correct the date.",
+    f"a date from {EARLIEST:%Y-%m-%d} to today",
+    "Correct the date; a deal not yet announced has no reaction.",
 )
 
 
@@ -67,7 +67,9 @@ def read_moment(cell: object, zone: str, date_format: str = "") -> datetime | da
     moment = _parse(cell, date_format)
     if isinstance(moment, Refusal):
         return moment
-    if not EARLIEST <= pd.Timestamp(moment.replace(tzinfo=None)) <= LATEST:
+    # A day of grace: it may already be tomorrow where the deal was announced.
+    tomorrow = pd.Timestamp.now() + pd.Timedelta(days=1)
+    if not EARLIEST <= pd.Timestamp(moment.replace(tzinfo=None)) <= tomorrow:
         return OUT_OF_RANGE
     text = str(cell).strip()
     bare = ISO_DATE.match(text) or (
@@ -127,14 +129,14 @@ def read_moments(
     moment, empty cells apart.
     """
     found: list[datetime | date | None] = []
-    findings: list[Finding] = []
+    refused: dict[Refusal, list[tuple[object, str, int]]] = {}
     rows = zip(deals["announced_at"], deals["timestamp_zone"], deals[ROW], strict=True)
     for cell, own_zone, row in rows:
         moment = read_moment(cell, own_zone or default_zone, date_format)
         if isinstance(moment, Refusal):
             found.append(None)
             if not is_missing(pd.Series([cell], dtype=object)).any():
-                findings.append(_finding(moment, cell, own_zone, int(row), source))
+                refused.setdefault(moment, []).append((cell, own_zone, int(row)))
         else:
             found.append(moment)
     timed = [moment for moment in found if isinstance(moment, datetime)]
@@ -146,11 +148,13 @@ def read_moments(
         announced_utc=utc.dt.as_unit("s"),
         announced_date=pd.Series(dates, index=deals.index, dtype=DAY),
     )
-    return moments, findings
+    return moments, [_finding(why, cells, source) for why, cells in refused.items()]
 
 
-def _finding(refusal: Refusal, cell: object, zone: str, row: int, source: Source) -> Finding:
-    got = f"'{cell}'" + (f" in zone '{zone}'" if zone else "")
+def _finding(refusal: Refusal, cells: list[tuple[object, str, int]], source: Source) -> Finding:
+    """One finding for all cells refused for one reason, the first few by name."""
+    named = [f"'{cell}'" + (f" in zone '{zone}'" if zone else "") for cell, zone, _ in cells]
+    got = ", ".join(named[:EXAMPLES]) + (" and more" if len(named) > EXAMPLES else "")
     return Finding(
         refusal.rule,
         Severity.ERROR,
@@ -158,6 +162,6 @@ def _finding(refusal: Refusal, cell: object, zone: str, row: int, source: Source
         got=got,
         expected=refusal.expected,
         remedy=refusal.remedy,
-        row=str(row),
+        row=row_list(pd.Series([row for _, _, row in cells])),
         column=source.columns.get("announced_at", "announced_at"),
     )

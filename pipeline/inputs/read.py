@@ -10,11 +10,12 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, Severity, raise_errors
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
-from pipeline.inputs.contracts import Column, apply_contract, row_list
+from pipeline.inputs.contracts import Column, apply_contract, row_list, unknown_names
 from pipeline.inputs.files import ROW, Source, read_table
 from pipeline.inputs.moments import read_moments
 
 T = TypeVar("T")
+FEWEST_MATCHED = 0.5
 MONEY = ("market_value", "deal_value")
 
 
@@ -89,6 +90,8 @@ def read_inputs(
     listed = attempt("deals", lambda file: _read_deals(file, wanted, zone, date_format))
     candidates = attempt("candidates", lambda file: _read_candidates(file, wanted, date_format))
     only = _securities(listed[0] if listed else None, candidates)
+    if listed is not None:
+        found += _across(listed[0], candidates, sources)
     prices = attempt("prices", lambda file: _read_prices(file, only, date_format))
     benchmarks = attempt("benchmarks", lambda file: _read_benchmarks(file, date_format))
     factors = attempt("factors", lambda file: _read_factors(file, date_format))
@@ -96,6 +99,45 @@ def read_inputs(
     if listed is None or prices is None or benchmarks is None:
         raise KeyError("deals, prices and benchmarks must each have a source")
     return Tables(*listed, prices, benchmarks, candidates, factors, tuple(found))
+
+
+def _across(
+    deals: pd.DataFrame, candidates: pd.DataFrame | None, sources: Mapping[str, Source]
+) -> list[Finding]:
+    """What deals and candidates say together: one exchange a security, candidates that match."""
+    tables = [deals] if candidates is None else [deals, candidates]
+    pairs = pd.concat([table[["security", "exchange"]] for table in tables]).drop_duplicates()
+    pairs = pairs[(pairs["security"] != "") & (pairs["exchange"] != "")]
+    several = pairs[pairs.duplicated("security", keep=False)]
+    findings = []
+    for security, rows in several.groupby("security", sort=True):
+        findings.append(
+            Finding(
+                "two_exchanges",
+                Severity.ERROR,
+                " and ".join(sources[n].file for n in ("deals", "candidates") if n in sources),
+                got=f"security '{security!s}' on {' and '.join(sorted(rows['exchange']))}",
+                expected="one exchange a security code",
+                remedy="Correct the exchange, or give each listing a code of its own.",
+                column="exchange",
+            )
+        )
+    if candidates is None:
+        return findings
+    matched = deals["deal_id"].isin(candidates["deal_id"]).mean()
+    if matched < FEWEST_MATCHED:
+        findings.append(
+            Finding(
+                "candidate_missing",
+                Severity.ERROR,
+                sources["candidates"].file,
+                got=f"{matched:.0%} of the deals are named by a candidate",
+                expected=f"at least {FEWEST_MATCHED:.0%}: the deal_id of each year's first deal",
+                remedy="Fill deal_id as in the deal list, and add the companies that are missing.",
+                column="deal_id",
+            )
+        )
+    return findings
 
 
 def _securities(*tables: pd.DataFrame | None) -> tuple[str, list[str]] | None:
@@ -134,8 +176,11 @@ def _typed(
 ) -> tuple[pd.DataFrame, list[Finding]]:
     """The contracted columns; without one of them no further check of the file makes sense."""
     typed, findings = apply_contract(raw, source, columns, date_format)
-    if any(finding.rule == "missing_column" for finding in findings):
+    findings = unknown_names(source, columns) + findings
+    if any(finding.rule in ("missing_column", "unknown_key") for finding in findings):
         raise InputProblem(findings)
+    if "exchange" in typed:
+        typed["exchange"] = typed["exchange"].str.upper()
     return typed, findings
 
 

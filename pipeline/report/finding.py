@@ -75,6 +75,12 @@ def _rest(material: Material, moved: tuple[str, ...]) -> tuple[Paragraph, ...]:
     if "reason" in moved and material.study.headline_test_reason:
         reason = taken(material.study.headline_test_reason, "study")
         items.append(prose("Chosen because it ", _sentence_of(reason), lead="The test."))
+    if material.tests.n > 1:
+        items.append(prose(
+            "It is the interval of the plain mean, from the deals' own spread; a test that weighs "
+            "deals by how precisely they are measured need not agree with it.",
+            lead="The interval.",
+        ))  # fmt: skip
     if "estimand" in moved and material.lead is not None:
         estimand = taken(capital(material.in_words(material.lead.estimand)), "estimate")
         items.append(prose(_sentence_of(estimand), lead="What the lead column estimates."))
@@ -225,28 +231,30 @@ def money_sentence(material: Material) -> Pieces:
 
 
 def threat(material: Material) -> Piece:
-    """The main threat: a failed check, the lead column's own warning, or the choice itself."""
+    """The main threat: a check of the lead column that fails, or else the choice itself."""
     frame = material.results.diagnostics
     lead = material.lead.title if material.lead else ""
-    for verdict, subject in (("fail", lead), ("fail", ""), ("warn", lead)):
-        meaning = _meaning(frame, verdict, subject)
-        if meaning and (subject or verdict == "fail"):
-            return taken(material.in_words(meaning), "check")
+    for subject in (lead, ""):
+        check = _failed(frame, subject)
+        if check:
+            return taken(material.in_words(check), "check")
     if material.study.treatment:
         return "companies choose the feature, and reasons nobody recorded may move the price."
-    meaning = _meaning(frame, "warn", "")
-    if meaning:
-        return taken(material.in_words(meaning), "check")
     return "other news of the same sessions cannot be told from the announcement."
 
 
-def _meaning(frame: pd.DataFrame, verdict: str, subject: str) -> str:
-    """What the first check with that verdict, on that subject if one is named, means."""
+def _failed(frame: pd.DataFrame, subject: str) -> str:
+    """The first check that fails, of a subject if one is named, as a clause; '' if none does."""
     if frame.empty:
         return ""
-    rows = frame[frame["verdict"] == verdict]
-    rows = rows[rows["subject"] == subject] if subject else rows
-    return str(rows["meaning"].iloc[0]) if len(rows) else ""
+    rows = frame[(frame["verdict"] == "fail") & (frame["subject"].eq(subject) | (not subject))]
+    if rows.empty:
+        return ""
+    first = rows.iloc[0]
+    meaning = str(first["meaning"])
+    return (
+        f"a check fails ({first['subject']}, {first['check']}): {meaning[:1].lower()}{meaning[1:]}"
+    )
 
 
 def _sentence_of(piece: Piece) -> Pieces:

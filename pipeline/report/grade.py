@@ -9,13 +9,14 @@ from pipeline.report.document import Callout, Paragraph
 from pipeline.report.headline import sensitivity_targets
 from pipeline.report.material import Material, embedded, named, prose
 
+FEWEST, FEW = 5, 10
 RULE = (
     "The grade is the worst that applies, and says nothing of the size of the effect. "
-    "D: the tests valid in the headline window disagree, or the lead column gives no number, or "
-    "its confidence set is not a bounded interval. C: a diagnostic fails, or the columns differ "
-    "in sign, or fewer than two tests are valid in the headline window. B: a diagnostic warns, "
-    "or a sensitivity variant changes the sign, or fewer than two columns stand side by side. "
-    "A: none of these."
+    "D: fewer than five deals, or the tests valid in the headline window disagree, or the "
+    "lead column gives no number, or its confidence set is not a bounded interval. "
+    "C: fewer than ten deals, or a diagnostic fails, or the columns differ in sign, or fewer "
+    "than two tests are valid in the headline window. B: a diagnostic warns, or a sensitivity "
+    "variant changes the sign, or fewer than two columns stand side by side. A: none of these."
 )
 
 
@@ -56,6 +57,8 @@ def signs_differ(material: Material) -> bool:
 
 def _ruin(material: Material) -> list[Paragraph]:
     reasons = []
+    if material.tests.n < FEWEST:
+        reasons.append(prose("There are fewer than five deals."))
     if tests_disagree(material):
         reasons.append(prose("The tests valid in the headline window disagree."))
     if material.study.treatment and material.results.columns and material.lead is None:
@@ -68,6 +71,8 @@ def _ruin(material: Material) -> list[Paragraph]:
 
 def _doubt(material: Material) -> list[Paragraph]:
     reasons = _checks(material, "fail", "A check fails: ")
+    if FEWEST <= material.tests.n < FEW:
+        reasons.append(prose("There are fewer than ten deals."))
     if signs_differ(material):
         reasons.append(prose("The columns differ in sign."))
     if material.number("tests_made").value <= 1:

@@ -7,6 +7,7 @@ begin with, so that no cell can become a formula.
 from __future__ import annotations
 
 import io
+import math
 import re
 from datetime import datetime
 from itertools import zip_longest
@@ -201,6 +202,9 @@ def _write(
         case None:
             if rule:
                 sheet.write_blank(row, column, None, _format(book, formats, **rule))
+        case Number(value, _) if not math.isfinite(value):
+            look = _format(book, formats, valign="top", align="right", **rule)
+            sheet.write_string(row, column, "no bound" if math.isinf(value) else "", look)
         case Number(value, digits):
             pattern = "#,##0" + (f".{'0' * digits}" if digits else "")
             look = _format(book, formats, num_format=pattern, valign="top", **rule)

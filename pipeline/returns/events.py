@@ -26,6 +26,7 @@ class EventOptions:
     cutoff_minutes: int
     mask_sessions: int
     confounding_days: int
+    real_jumps: frozenset[str] = frozenset()
 
 
 @dataclass(frozen=True, slots=True)

@@ -128,10 +128,13 @@ def _align(days: Dates, dates: pd.Series, values: Floats) -> Floats:
 
 
 def _benchmark_gaps(exchange: str, days: Dates, level: Floats) -> list[Finding]:
-    missing = days[np.isnan(level)]
+    """Gaps between the benchmark's first and last level; a shorter history costs deals later."""
+    known = np.flatnonzero(np.isfinite(level))
+    inside = slice(known[0], known[-1] + 1) if known.size else slice(None)
+    missing = days[inside][np.isnan(level[inside])]
     if missing.size == 0:
         return []
-    share = missing.size / days.size
+    share = missing.size / days[inside].size
     return [
         Finding(
             "benchmark_gap",
@@ -176,10 +179,10 @@ def _alive(close: Floats) -> np.ndarray:
 def suspected_splits(panel: PricePanel) -> dict[str, list[np.datetime64]]:
     """Security -> sessions whose close moved by a whole factor while the benchmark was calm.
 
-    A ratio within 3% of 2, 3, 4, 5, 10, 20 or an inverse, benchmark below 5%: common practice,
-    no source.
+    A ratio to the benchmark's within 3% of 2, 3, 4, 5, 10, 20 or an inverse, benchmark below 5%:
+    common practice, no source.
     """
-    ratio = 1 + panel.returns
+    ratio = (1 + panel.returns) / (1 + panel.benchmark)[:, None]
     jumps = (np.abs(panel.returns) > 0.3) & (np.abs(panel.benchmark) < CALM_BENCHMARK)[:, None]
     found: dict[str, list[np.datetime64]] = {}
     for row, column in np.argwhere(jumps):

@@ -8,6 +8,7 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.findings import Finding, Severity
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
 from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
@@ -65,10 +66,8 @@ def _split_verdict(
     panel: PricePanel,
     options: EventOptions,
 ) -> LedgerEntry | None:
-    dates = splits.get(event.security, [])
-    first = max(event.position + options.estimation.start, 0)
-    last = min(event.position + options.span.end, len(panel.sessions) - 1)
-    inside = [day for day in dates if panel.sessions[first] <= day <= panel.sessions[last]]
+    """Drop a deal whose estimation window holds a jump; one near the event is an error before."""
+    inside = jumps_inside(event, splits, panel, options.estimation, options)
     if not inside:
         return None
     return LedgerEntry(
@@ -78,6 +77,55 @@ def _split_verdict(
         ", ".join(map(str, inside)),
         "no whole-factor jump",
     )
+
+
+def jumps_inside(
+    event: Located,
+    splits: Mapping[str, list[np.datetime64]],
+    panel: PricePanel,
+    window: Window,
+    options: EventOptions,
+) -> list[np.datetime64]:
+    """Suspected splits of the event's security in a window, unless declared to be real."""
+    if event.deal in options.real_jumps:
+        return []
+    first = max(event.position + window.start, 0)
+    last = min(event.position + window.end, len(panel.sessions) - 1)
+    if last < first:
+        return []
+    dates = splits.get(event.security, [])
+    return [day for day in dates if panel.sessions[first] <= day <= panel.sessions[last]]
+
+
+def jumps_near_events(
+    located: pd.DataFrame, panels: Mapping[str, PricePanel], options: EventOptions
+) -> list[Finding]:
+    """An error for each deal with a jump of a whole factor between estimation and the last day.
+
+    Dropping such a deal would choose the sample by its outcome, keeping a real split would swamp
+    the mean: the analyst must say which it is.
+    """
+    splits = {exchange: suspected_splits(panel) for exchange, panel in panels.items()}
+    near = Window(options.estimation.end + 1, options.span.end)
+    found = []
+    for event in located_events(located):
+        panel = panels[event.exchange]
+        days = jumps_inside(event, splits[event.exchange], panel, near, options)
+        if days:
+            found.append(
+                Finding(
+                    "suspected_split",
+                    Severity.ERROR,
+                    "prices",
+                    got=f"{event.security} moved by a whole factor on {', '.join(map(str, days))},"
+                    f" in the windows of {event.deal}",
+                    expected="closes adjusted for splits",
+                    remedy="Adjust the closes; if the move is news, add the deal to "
+                    "event_time.real_jumps.",
+                    column="close",
+                )
+            )
+    return found
 
 
 def _estimation_verdict(

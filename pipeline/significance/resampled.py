@@ -11,7 +11,6 @@ from pipeline.significance.sample import CarSample
 
 NULL = "the mean cumulative abnormal return is zero"
 DRAWS = 1999
-SEED = 20260301
 HANDFUL = 5
 
 
@@ -32,7 +31,7 @@ def skewness_adjusted(sample: CarSample) -> Tested:
     side = 1.0 if sample.car.mean() >= 0 else -1.0
     car = np.sort(side * sample.car)
     statistic = float(_johnson(car[None, :], 0.0)[0])
-    stream = np.random.default_rng(SEED)
+    stream = np.random.default_rng(sample.seed)
     draws = car[stream.integers(0, n, (DRAWS, max(n // 4, 5)))]
     usable = draws.std(axis=1, ddof=1) > 0
     null = _johnson(draws[usable], float(car.mean()))
@@ -76,7 +75,7 @@ def date_bootstrap(sample: CarSample) -> Tested:
     total = np.asarray(np.bincount(codes, sample.car, groups), dtype=np.float64)
     size = np.bincount(codes, minlength=groups).astype(np.float64)
     statistic = float(_cluster_t(total[None, :], size[None, :], 0.0)[0])
-    stream = np.random.default_rng(SEED)
+    stream = np.random.default_rng(sample.seed)
     drawn = stream.integers(0, groups, (DRAWS, groups))
     null = _cluster_t(total[drawn], size[drawn], float(sample.car.mean()))
     null = null[np.isfinite(null)]

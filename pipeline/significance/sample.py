@@ -42,6 +42,7 @@ class CarSample:
         dependence: correlation and overlap among the deals.
         series: the daily returns behind them; tests that need them do without an answer if absent.
         dates: (n,) ``datetime64[D]`` dates of the window's first day, or None.
+        seed: of the tests that resample.
     """
 
     window: Window
@@ -52,6 +53,7 @@ class CarSample:
     dependence: Dependence
     series: Series | None = None
     dates: Dates | None = None
+    seed: int = 20260301
 
     @property
     def n(self) -> int:
@@ -60,7 +62,11 @@ class CarSample:
 
 
 def car_sample(
-    abnormal: AbnormalReturns, window: Window, share_of_days: float, known: Links | None = None
+    abnormal: AbnormalReturns,
+    window: Window,
+    share_of_days: float,
+    known: Links | None = None,
+    seed: int = 20260301,
 ) -> CarSample:
     """The deals that traded on enough days of ``window``, as a sample.
 
@@ -87,4 +93,5 @@ def car_sample(
         dependence=link,
         series=series,
         dates=kept.days[:, where.start],
+        seed=seed,
     )

@@ -26,6 +26,15 @@ def independent(sample: CarSample) -> str:
     return f"{sample.n} deals move together and are worth {worth:.0f} independent ones"
 
 
+def aligned(sample: CarSample) -> str:
+    """Why dependence reaches beyond deals of one date here, or ''.
+
+    Daily series, and dates drawn whole, carry the dependence of deals that share all their days;
+    deals whose windows overlap in part escape them.
+    """
+    return independent(sample) if sample.dependence.dates > 1 else ""
+
+
 def constant_variance(sample: CarSample) -> str:
     """Why the variance at the event is not that of the estimation window, or ''.
 
@@ -71,6 +80,7 @@ def several_dates(sample: CarSample) -> str:
 
 CHECKS: dict[str, Callable[[CarSample], str]] = {
     "independent": independent,
+    "aligned": aligned,
     "constant_variance": constant_variance,
     "symmetric": symmetric,
     "symmetric_before": symmetric_before,

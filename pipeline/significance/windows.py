@@ -25,6 +25,7 @@ def all_windows(
     assumes: Mapping[str, Sequence[str]],
     share_of_days: float,
     level: float,
+    seed: int = 20260301,
 ) -> tuple[WindowTests, ...]:
     """Test every window under every model; the first window is the headline.
 
@@ -37,7 +38,7 @@ def all_windows(
     for model, measured in abnormal.items():
         known = links(measured)
         samples = [
-            car_sample(measured, window, 1.0 if at == 0 else share_of_days, known)
+            car_sample(measured, window, 1.0 if at == 0 else share_of_days, known, seed)
             for at, window in enumerate(windows)
         ]
         results = [_tested(sample, tests, assumes) for sample in samples]

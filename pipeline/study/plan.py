@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import replace
 
 from pipeline.characteristics.design import Roles
@@ -28,15 +28,13 @@ def sources(study: Study) -> dict[str, Source]:
         "candidates": study.inputs.candidates,
         "factors": study.inputs.factors,
     }
+    names: Mapping[str, Mapping[str, str]] = {str(k): v for k, v in study.inputs.columns.items()}
+    sheets: Mapping[str, str] = {str(k): v for k, v in study.inputs.sheets.items()}
+    by_year = study.selection is not None or any(c.lag for c in study.characteristics.values())
     return {
-        table: Source(
-            table,
-            path,
-            study.inputs.columns.get(table, {}),
-            study.inputs.sheets.get(table, ""),
-        )
+        table: Source(table, path, names.get(table, {}), sheets.get(table, ""))
         for table, path in paths.items()
-        if path is not None and (table != "candidates" or study.selection is not None)
+        if path is not None and (table != "candidates" or by_year)
     }
 
 
@@ -83,6 +81,7 @@ def roles(study: Study) -> Roles | None:
         outcome=car_column(study.event_time.headline_window),
         outcome_label=f"CAR{study.event_time.headline_window.label}",
         treatment=regression.treatment,
+        continuous=regression.continuous,
         controls=tuple(regression.controls),
         effects=tuple(regression.fixed_effects),
         clusters=tuple(regression.clusters),
@@ -98,8 +97,11 @@ def wanted(study: Study) -> Wanted:
     if parts is None:
         return Wanted()
     book = recipes(study)
-    numbers, texts = _columns(parts.numbers, book)
-    c_numbers, c_texts = _columns((*parts.selection, *parts.excluded), book)
+    past = tuple(
+        name for name in needed(list(parts.numbers), book) if name in book and book[name].lag
+    )
+    numbers, texts = _columns([name for name in parts.numbers if name not in past], book)
+    c_numbers, c_texts = _columns((*parts.selection, *parts.excluded, *past), book)
     return Wanted(
         deal_numbers=numbers,
         deal_texts=(*texts, *parts.effects, *parts.clusters),
@@ -134,6 +136,7 @@ def event_options(study: Study) -> EventOptions:
         cutoff_minutes=time.cutoff_minutes,
         mask_sessions=time.mask_sessions,
         confounding_days=time.confounding_days,
+        real_jumps=frozenset(time.real_jumps),
     )
 
 

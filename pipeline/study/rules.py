@@ -86,6 +86,34 @@ def _roles(study: Study, file: str) -> Iterator[Finding]:
     if regression is None:
         return
     outcome = [regression.treatment, *regression.controls]
+    for name in sorted({name for name in outcome if outcome.count(name) > 1}):
+        yield _error(
+            "duplicate_variable",
+            file,
+            "regression.controls",
+            f"'{name}' twice among treatment and controls",
+            "each variable once",
+            f"Take one '{name}' out.",
+        )
+    for name in (*regression.fixed_effects, *regression.clusters):
+        if name in study.characteristics:
+            yield _error(
+                "bad_value",
+                file,
+                "regression.fixed_effects",
+                f"'{name}', a characteristic",
+                "columns of the deals, whose values are groups",
+                f"Name a column of the deals in place of '{name}'.",
+            )
+    if study.report.groups[0] == study.report.groups[1]:
+        yield _error(
+            "bad_value",
+            file,
+            "report.groups",
+            f"'{study.report.groups[0]}' for both groups",
+            "two different words: untreated, treated",
+            "Name the two values of the treatment.",
+        )
     if study.instruments is not None:
         for name in study.instruments.use:
             if name in outcome or name in regression.fixed_effects:

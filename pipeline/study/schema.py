@@ -6,7 +6,7 @@ The models are strict and frozen: an unknown key or a value of another kind is a
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Literal
 
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validator
 
@@ -52,6 +52,9 @@ Span = Annotated[list[int], Field(min_length=2, max_length=2)]
 Rationale = Annotated[str, Field(min_length=20)]
 
 
+TableName = Literal["deals", "prices", "benchmarks", "candidates", "factors"]
+
+
 class Inputs(Part):
     """Where the tables are. Paths count from the folder of the study file that names them."""
 
@@ -64,11 +67,11 @@ class Inputs(Part):
     factors: Path | None = Field(
         None, description="Daily factor returns, decimal: exchange, date, one column a factor."
     )
-    columns: dict[str, dict[str, str]] = Field(
+    columns: dict[TableName, dict[str, str]] = Field(
         default_factory=dict,
         description="Your column names: [inputs.columns.deals] announced_at = 'Announced'.",
     )
-    sheets: dict[str, str] = Field(
+    sheets: dict[TableName, str] = Field(
         default_factory=dict, description="Sheet of an xlsx file, by table; the first if absent."
     )
     timestamp_zone: str = Field(
@@ -101,6 +104,11 @@ class EventTime(Part):
     )
     confounding_days: int = Field(
         1, ge=0, description="Sessions within which an earnings release is flagged."
+    )
+
+    real_jumps: list[str] = Field(
+        default_factory=list,
+        description="Deals whose price moved by a whole factor for real, not by a split.",
     )
 
     @model_validator(mode="after")
@@ -214,6 +222,9 @@ class Regression(Part):
     """The cross-section of abnormal returns in the headline window."""
 
     treatment: str = Field(description="The deal feature the committee can choose: 0 or 1.")
+    continuous: bool = Field(
+        False, description="Whether the treatment may have other values than 0 and 1."
+    )
     controls: list[str] = Field(default_factory=list, description="Held fixed in every column.")
     fixed_effects: list[str] = Field(default_factory=list, description="Absorbed effects.")
     clusters: Annotated[list[str], Field(max_length=2)] = Field(
@@ -261,7 +272,10 @@ class Report(Part):
 class Study(Part):
     """A study file, resolved: base files merged, paths absolute, defaults filled in."""
 
-    name: str = Field(description="Name of the folder under reports/; the file's own name.")
+    name: str = Field(
+        pattern=r"^[A-Za-z0-9][A-Za-z0-9_.-]*$",
+        description="Name of the folder under reports/; the file's own name.",
+    )
     title: str = Field(description="Title of the documents.")
     question: str = Field(description="What the committee wants to know.")
     seed: int = Field(20260301, ge=0, description="Seed of every random stream.")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
@@ -20,7 +21,7 @@ from pipeline.core.findings import Finding, InputProblem, Severity
 from pipeline.core.window import Window
 from tests.significance.samples import clustered
 
-N = 30
+N = 60
 ROLES = Roles(
     outcome="car_m1_1",
     outcome_label="CAR[-1, +1]",
@@ -145,7 +146,7 @@ def test_candidates_stand_beside_the_deals() -> None:
     assert rows.clusters["security"].shape == (N + 20,)
     (note,) = found.findings
     assert (note.rule, note.severity) == ("candidates_used", Severity.NOTE)
-    assert note.got.startswith("50 of 50")
+    assert note.got.startswith("80 of 80")
 
 
 def test_deals_without_a_candidate_row_leave_and_say_why() -> None:
@@ -192,8 +193,8 @@ def test_without_candidates_there_is_no_selection() -> None:
 @pytest.mark.parametrize(
     ("values", "words"),
     [
-        ([1.0] * N, "30 deals with 1"),
-        ([1.0] * (N - 4) + [0.0] * 4, "4 deals with 0, 26 deals with 1"),
+        ([1.0] * N, "60 deals with 1"),
+        ([1.0] * (N - 4) + [0.0] * 4, "4 deals with 0, 56 deals with 1"),
         ([np.nan] * N, "no deal left for the regression"),
     ],
 )
@@ -210,7 +211,26 @@ def test_a_treatment_of_many_values_is_no_group() -> None:
     def spoil(table: pd.DataFrame) -> None:
         table["shares"] = np.linspace(0, 1, N)
 
-    assert made(spoil).design.n == N
+    (finding,) = refusal(change=spoil)
+    assert (finding.rule, finding.column) == ("treatment_not_binary", "shares")
+    assert made(spoil, roles=replace(ROLES, continuous=True)).design.n == N
+
+
+def test_a_deal_alone_in_an_effect_leaves_every_column() -> None:
+    def spoil(table: pd.DataFrame) -> None:
+        table.loc[4, ROLES.effects[0]] = "a class of its own"
+
+    found = made(spoil)
+    assert found.design.n == N - 1
+    (entry,) = found.ledger.dropped
+    assert (entry.rule, entry.deal) == ("singleton", str(deals()["deal_id"].iloc[4]))
+
+
+def test_too_few_deals_for_the_coefficients() -> None:
+    listed = deals().iloc[:25]
+    with pytest.raises(InputProblem) as caught:
+        prepare(listed, None, RECIPES, {"run_up": np.linspace(-0.2, 0.2, 25)}, {}, ROLES)
+    assert caught.value.findings[0].rule == "few_rows"
 
 
 def test_faults_of_deals_and_candidates_together() -> None:

@@ -55,7 +55,7 @@ def test_sources_and_steps_before_the_sample(
     recipe: Recipe, wanted: list[float], table: pd.DataFrame
 ) -> None:
     measured = {"v": np.array([1.0, 2.0, 3.0, 4.0])}
-    np.testing.assert_allclose(raw_values(recipe, table, measured), wanted)
+    np.testing.assert_allclose(raw_values(recipe, table, measured, table), wanted)
 
 
 @pytest.mark.parametrize("share", [0.01, 0.05, 0.2])

@@ -13,9 +13,10 @@ import pytest
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import Diagnostic, Estimate, NotApplicable, Withheld, t_test
+from pipeline.core.findings import InputProblem
 from pipeline.core.parquet import parquet_bytes
 from pipeline.core.results import StudyFacts, WindowTests
-from pipeline.core.store import write_folder
+from pipeline.core.store import MARK, write_folder
 from pipeline.core.tables import (
     DIAGNOSTIC_COLUMNS,
     ESTIMATE_COLUMNS,
@@ -120,7 +121,7 @@ def test_parquet_bytes_depend_on_the_numbers_alone(abnormal: AbnormalReturns) ->
 
 def test_a_folder_is_replaced_whole(tmp_path: Path) -> None:
     folder = tmp_path / "runs" / "one"
-    write_folder(folder, {"a.txt": b"1", "data/b.txt": b"2"})
+    write_folder(folder, {"a.txt": b"1", "data/b.txt": b"2", MARK: b""})
     write_folder(folder, {"c/d/e.txt": b"3"})
     files = [path.relative_to(folder).as_posix() for path in folder.rglob("*") if path.is_file()]
     assert files == ["c/d/e.txt"]
@@ -131,13 +132,13 @@ def test_a_failure_leaves_the_folder_as_it_was(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     folder = tmp_path / "one"
-    write_folder(folder, {"a.txt": b"old"})
+    write_folder(folder, {"a.txt": b"old", MARK: b""})
 
     def full(path: Path, content: bytes) -> int:
         raise OSError(f"no space for {len(content)} bytes")
 
     monkeypatch.setattr(Path, "write_bytes", full)
-    with pytest.raises(OSError, match="no space"):
+    with pytest.raises(InputProblem, match="no space"):
         write_folder(folder, {"a.txt": b"new"})
     assert (folder / "a.txt").read_bytes() == b"old"
     assert [path.name for path in tmp_path.iterdir()] == ["one"]

@@ -11,6 +11,7 @@ from typer.testing import CliRunner
 
 from pipeline.cli import app
 from pipeline.core import store
+from pipeline.core.findings import InputProblem
 from tests.small import write_small_study
 
 Spoil = Callable[[Path], None]
@@ -77,7 +78,7 @@ CASES: dict[str, tuple[Spoil, str, tuple[str, ...]]] = {
     "treatment without variation": (
         whole_column("shares", "1"),
         "no_variation",
-        ("shares", "24 deals with 1"),
+        ("shares", "40 deals with 1"),
     ),
     "instrument as control": (
         edit("study.toml", 'controls = ["size"]', 'controls = ["size", "spare"]'),
@@ -113,6 +114,38 @@ CASES: dict[str, tuple[Spoil, str, tuple[str, ...]]] = {
         edit("study.toml", 'controls = ["size"]', 'controls = ["weight"]'),
         "missing_column",
         ("'weight'", "deals.csv"),
+    ),
+    "a treatment of degrees": (
+        lambda folder: whole_column("shares", "0.5")(folder) or cell(0, "shares", "0.7")(folder),
+        "treatment_not_binary",
+        ("shares", "regression.continuous"),
+    ),
+    "an announcement to come": (
+        cell(2, "announced_at", "2097-05-05 10:00"),
+        "date_out_of_range",
+        ("row 4", "2097-05-05"),
+    ),
+    "one code on two exchanges": (
+        lambda folder: cell(0, "security", "S01")(folder) or cell(0, "exchange", "XNYS")(folder),
+        "two_exchanges",
+        ("'S01'", "XLON and XNYS"),
+    ),
+    "a misspelt column of ours": (
+        edit(
+            "study.toml", "[event_time]", "[inputs.columns.deals]\nanounced_at = 'x'\n[event_time]"
+        ),
+        "unknown_key",
+        ("inputs.columns.deals.anounced_at", "Did you mean 'announced_at'"),
+    ),
+    "a table nobody reads": (
+        edit("study.toml", "[event_time]", "[inputs.columns.delas]\na = 'x'\n[event_time]"),
+        "bad_value",
+        ("inputs.columns.delas",),
+    ),
+    "a name that climbs": (
+        edit("study.toml", 'title = "Small"', 'title = "Small"\nname = "../../away"'),
+        "bad_value",
+        ("name", "../../away"),
     ),
     "window in words": (
         edit("study.toml", "headline = [-1, 1]", 'headline = "three days"'),
@@ -217,7 +250,7 @@ def test_a_failed_swap_puts_the_last_run_back(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     folder = tmp_path / "run"
-    store.write_folder(folder, {"a.txt": b"old"})
+    store.write_folder(folder, {"a.txt": b"old", store.MARK: b"{}"})
     original = Path.rename
 
     def refuse_new(path: Path, target: Path) -> Path:
@@ -226,10 +259,48 @@ def test_a_failed_swap_puts_the_last_run_back(
         return original(path, target)
 
     monkeypatch.setattr(Path, "rename", refuse_new)
-    with pytest.raises(OSError, match="full"):
+    with pytest.raises(InputProblem, match="full"):
         store.write_folder(folder, {"a.txt": b"new"})
     assert (folder / "a.txt").read_bytes() == b"old"
     assert [path.name for path in tmp_path.iterdir()] == ["run"]
+
+
+def test_a_folder_of_other_things_is_never_replaced(study: Path, tmp_path: Path) -> None:
+    mine = tmp_path / "mydocs"
+    mine.mkdir()
+    (mine / "thesis.txt").write_text("years of work")
+    code, text = invoke("run", study, "--out", mine, "--quiet")
+    assert code == 2
+    assert "[output_folder]" in text
+    assert (mine / "thesis.txt").read_text() == "years of work"
+    (tmp_path / "note").write_text("kept")
+    code, text = invoke("run", study, "--out", tmp_path / "note")
+    assert code == 2
+    assert (tmp_path / "note").read_text() == "kept"
+
+
+def test_what_a_killed_run_left_is_swept(study: Path, tmp_path: Path) -> None:
+    out = tmp_path / "out"
+    invoke("run", study, "--out", out, "--quiet")
+    dead = 2_000_000_000  # no process has this number
+    (tmp_path / f".out.{dead}.new").mkdir()
+    out.rename(tmp_path / f".out.{dead}.old")
+    store.write_folder(tmp_path / "out", {"manifest.json": b"{}"})
+    assert sorted(path.name for path in tmp_path.iterdir()) == ["mine", "out"]
+
+
+def test_brackets_in_labels_are_words(study: Path, tmp_path: Path) -> None:
+    study.write_text(study.read_text() + "\n[labels]\nshares = 'Paid [/b] in [red] shares'\n")
+    code, text = invoke("run", study, "--out", tmp_path / "out")
+    assert code == 0
+    assert "Paid [/b] in [red] shares" in plain(text)
+
+
+def test_check_finds_what_run_would(study: Path) -> None:
+    whole_column("shares", "1")(study.parent)
+    code, text = invoke("check", study)
+    assert code == 2
+    assert "[no_variation]" in text
 
 
 def test_explain_says_what_a_rule_means() -> None:

@@ -10,7 +10,7 @@ import pytest
 from pipeline.core.estimate import Shape, Withheld
 from pipeline.core.results import Results
 from pipeline.report.document import Callout
-from pipeline.report.finding import LIMIT, finding, finding_section, finding_text
+from pipeline.report.finding import LIMIT, finding, finding_section, finding_text, threat
 from pipeline.report.grade import RULE, grade
 from pipeline.report.material import Material
 from tests.report.runs import estimate, full_run, shaped, with_columns, with_frames, with_tests
@@ -125,7 +125,10 @@ def test_a_withheld_lead_is_said_with_its_reason() -> None:
 
 
 def test_the_main_threat_is_the_failed_check_in_words() -> None:
-    assert "Main threat: The instrument is weak: “treasury shares”" in finding_text(full_run())
+    found = threat(Material.of(full_run()))
+    assert "the instrument is weak: “treasury shares”" in (
+        found if isinstance(found, str) else found.text
+    )
     assert "Main threat: companies choose the feature" in finding_text(calm())
 
 

@@ -12,6 +12,7 @@ import pandas as pd
 import pytest
 
 from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.findings import Severity
 from pipeline.core.ledger import Action, StageLedger
 from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
@@ -25,7 +26,7 @@ from pipeline.returns.events import (
 )
 from pipeline.returns.expected import market_model
 from pipeline.returns.measure import measure
-from pipeline.returns.screens import screen_estimation, screen_event
+from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
 from pipeline.returns.sessions import Sessions, sessions_between
 from tests.returns.panels import panel_of_closes
 
@@ -205,10 +206,23 @@ def with_closes(panel: PricePanel, close: np.ndarray) -> PricePanel:
     return panel_of_closes(panel.sessions, panel.securities, close, level)
 
 
+def test_a_jump_near_the_event_must_be_declared(panel: PricePanel, calendar: Sessions) -> None:
+    """A split or the news itself: neither is dropped without a word."""
+    close = panel.close.copy()
+    close[200:, 1] *= 0.5
+    panels = {"XLON": with_closes(panel, close)}
+    located, _ = locate(deals(calendar, ("DB", "B", 200)), panels, {"XLON": calendar}, OPTIONS)
+    (finding,) = jumps_near_events(located, panels, OPTIONS)
+    assert (finding.rule, finding.severity) == ("suspected_split", Severity.ERROR)
+    assert str(panel.sessions[200]) in finding.got
+    real = replace(OPTIONS, real_jumps=frozenset({"DB"}))
+    assert jumps_near_events(located, panels, real) == []
+
+
 def test_estimation_windows_that_will_not_do(panel: PricePanel, calendar: Sessions) -> None:
     close = panel.close.copy()
     close[:130, 0] = np.nan  # 50 returns before the deal at 200
-    close[205:, 1] *= 0.5  # an unadjusted split inside the windows
+    close[150:, 1] *= 0.5  # an unadjusted split in the estimation window
     close[100:170, 2] = close[100, 2]  # 69 unchanged prices of 100
     close[150:175, 3] = close[150, 3]  # 24 of 100
     stale = with_closes(panel, close)
@@ -222,7 +236,7 @@ def test_estimation_windows_that_will_not_do(panel: PricePanel, calendar: Sessio
         ("DD", "thin_trading", Action.FLAGGED),
     ]
     values = [entry.value for entry in ledger.entries]
-    assert values == ["49 returns", str(panel.sessions[205]), "69% unchanged prices",
+    assert values == ["49 returns", str(panel.sessions[150]), "69% unchanged prices",
                       "24% unchanged prices"]  # fmt: skip
     assert ledger.rows_kept == keep.sum()
 

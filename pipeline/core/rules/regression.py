@@ -132,6 +132,13 @@ RULES = (
         "Choose one of those listed.",
     ),
     Rule(
+        "no_outcome_variance",
+        "Outcome without its measurement error",
+        "The column weighs deals by how precisely their return is measured; that is not known.",
+        "Weights made up in its place would be no better than equal ones.",
+        "Use a return that dealwake measured, add its <outcome>_std_dev, or take the column out.",
+    ),
+    Rule(
         "fitted_exactly",
         "Deal that its own regressor fits exactly",
         "A row has leverage one: a regressor is there for it alone.",
@@ -207,5 +214,19 @@ RULES = (
         "A lagged variable needs the candidates, company by year.",
         "A deal list does not know the year before.",
         "Name the candidates under [inputs] with a [selection], or leave the lag out.",
+    ),
+    Rule(
+        "treatment_not_binary",
+        "Treatment that is not yes or no",
+        "The column compares deals with the feature to deals without, and it has other values.",
+        "Cutting a measured feature in two here would hide where the cut was made.",
+        "State the feature as 0 and 1, or use a column for a measured one.",
+    ),
+    Rule(
+        "no_overlap",
+        "Treated deals without a counterpart",
+        "No weights of the untreated deals reach the means of the treated ones.",
+        "There is nobody to compare them with.",
+        "Leave out the control, or the deals that have no counterpart.",
     ),
 )

@@ -1,0 +1,87 @@
+"""Rules about the doubts a study asks to be gone through."""
+
+from __future__ import annotations
+
+from pipeline.core.rules.rule import Rule
+
+RULES = (
+    Rule(
+        "benchmark_not_control",
+        "Benchmark that is not a control",
+        "A hidden confounder is to be likened to a variable that is not a varying control.",
+        "Only what the regression holds fixed has a known strength.",
+        "Name a control, or add the variable to the controls.",
+    ),
+    Rule(
+        "violation_range",
+        "Range of violations without an order",
+        "The direct effects allowed to the instruments have a lower end above the upper one, too "
+        "few ends, or too many combinations.",
+        "The union of intervals runs over every value between the ends.",
+        "Give a lower and an upper end for each instrument.",
+    ),
+    Rule(
+        "reliability_variable",
+        "Reliability of something that is not a regressor",
+        "A reliability is given for a variable the column does not hold.",
+        "There is no coefficient to correct.",
+        "Name a regressor of the study.",
+    ),
+    Rule(
+        "reliability_range",
+        "Reliability out of range",
+        "A reliability is not above 0 and at most 1.",
+        "It is the share of the recorded variance that is true.",
+        "Give a share, for example the correlation of two independent records.",
+    ),
+    Rule(
+        "reliability_too_low",
+        "Reliability that leaves nothing",
+        "With the errors taken out the regressors would vary less than not at all.",
+        "A variable that the others predict this well cannot be recorded this badly.",
+        "Raise the reliability above the R² of the variable on the other regressors.",
+    ),
+    Rule(
+        "misclassification_range",
+        "Misclassification beyond what was recorded",
+        "The rates given would classify more deals wrongly than there are, or leave no choice.",
+        "The true shares follow from the recorded ones and the rates.",
+        "Give smaller rates.",
+    ),
+    Rule(
+        "grid_too_large",
+        "Grid of too many cells",
+        "The declared choices combine to more cells than allowed without asking.",
+        "A grid this large takes long and is read by nobody.",
+        "Declare fewer choices, or set allow to true.",
+    ),
+    Rule(
+        "grid_control",
+        "Control of the grid that is not in the study",
+        "A set of controls names a variable that is not among the study's controls.",
+        "All cells stand on the variables the study prepared.",
+        "Add it to the controls, or take it out of the grid.",
+    ),
+    Rule(
+        "winsorise_range",
+        "Winsorising out of range",
+        "The share of each tail is not between 0 and a quarter.",
+        "Beyond it the middle of the sample is what is made up.",
+        "Give a share from 0 to .25.",
+    ),
+    Rule(
+        "probability_range",
+        "Probability out of range",
+        "What investors expected is not a chance from 0 to below 1, or the completion is not above "
+        "0 and at most 1.",
+        "News that was certain moves no price, so nothing could be learned from it.",
+        "Give probabilities.",
+    ),
+    Rule(
+        "suspect_sign",
+        "Sign that is none",
+        "A suspected factor has a sign other than + - 0 or ?.",
+        "The direction of the bias is the product of two signs.",
+        "Give one of + - 0 ?, as a text.",
+    ),
+)

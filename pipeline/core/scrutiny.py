@@ -1,0 +1,121 @@
+"""What it would take to overturn the finding: one answer under every assumption, with names."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field
+
+import pandas as pd
+
+from pipeline.core.estimate import Diagnostic
+from pipeline.core.prices import Floats
+from pipeline.core.tables import typed_frame
+
+SENSITIVITY_COLUMNS = {
+    "target": "str",
+    "dimension": "str",
+    "variant": "str",
+    "estimate": "float64",
+    "ci_low": "float64",
+    "ci_high": "float64",
+    "n": "int64",
+}
+DIRECTION_COLUMNS = {
+    "factor": "str",
+    "on_outcome": "str",
+    "on_treatment": "str",
+    "bias": "str",
+    "true_effect": "str",
+    "evidence": "str",
+}
+
+
+@dataclass(frozen=True, slots=True)
+class Variant:
+    """One number of the study under one assumption.
+
+    Attributes:
+        target: what the number is, in words, e.g. ``effect of paid in shares``.
+        dimension: the kind of doubt, e.g. ``omitted variable``.
+        variant: the assumption, in words.
+        estimate: decimal, in the outcome's unit per unit of the treatment.
+        ci_low, ci_high: interval at the study's level, decimal; infinite when unbounded, NaN when
+            the assumption gives a number without an interval.
+        n: deals behind it.
+    """
+
+    target: str
+    dimension: str
+    variant: str
+    estimate: float
+    ci_low: float
+    ci_high: float
+    n: int
+
+
+@dataclass(frozen=True, slots=True)
+class Direction:
+    """Which way one suspected flaw pushes the least-squares effect.
+
+    Signs are ``+``, ``-``, ``0`` or ``?``; ``bias`` likewise. ``true_effect`` says in words
+    whether the true effect is larger or smaller than the estimate; ``evidence`` is the analyst's.
+    """
+
+    factor: str
+    on_outcome: str
+    on_treatment: str
+    bias: str
+    true_effect: str
+    evidence: str
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Contour:
+    """The adjusted effect for confounders of every strength, and where named controls lie.
+
+    Attributes:
+        with_treatment: (a,) partial R² of the confounder with the treatment.
+        with_outcome: (b,) partial R² with the outcome.
+        estimates: (b, a) adjusted effect, decimal.
+        statistics: (b, a) its t statistic.
+        points: words -> (with treatment, with outcome, adjusted effect).
+    """
+
+    with_treatment: Floats
+    with_outcome: Floats
+    estimates: Floats
+    statistics: Floats
+    points: Mapping[str, tuple[float, float, float]]
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Scrutiny:
+    """Everything the scrutiny of one run found.
+
+    Attributes:
+        variants: the answer under every assumption.
+        checks: what was found against what was hoped for.
+        facts: name -> number, for prose.
+        directions: suspected flaws and the way each pushes.
+        contour: confounders of every strength.
+        notes: sentences a reader must see.
+    """
+
+    variants: tuple[Variant, ...]
+    checks: tuple[Diagnostic, ...]
+    facts: Mapping[str, float]
+    directions: tuple[Direction, ...] = ()
+    contour: Contour | None = None
+    notes: tuple[str, ...] = field(default=())
+
+
+def sensitivity_frame(variants: Iterable[Variant]) -> pd.DataFrame:
+    """One row an assumption: ``target, dimension, variant, estimate, ci_low, ci_high, n``."""
+    rows = [{name: getattr(item, name) for name in SENSITIVITY_COLUMNS} for item in variants]
+    return typed_frame(rows, SENSITIVITY_COLUMNS)
+
+
+def direction_frame(directions: Iterable[Direction]) -> pd.DataFrame:
+    """One row a suspected flaw: ``factor, on_outcome, on_treatment, bias, ...``."""
+    rows = [{name: getattr(item, name) for name in DIRECTION_COLUMNS} for item in directions]
+    return typed_frame(rows, DIRECTION_COLUMNS)
