@@ -6,7 +6,7 @@ import hashlib
 import json
 import platform
 import time
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from importlib.metadata import version
@@ -50,10 +50,14 @@ from pipeline.returns.events import (
 )
 from pipeline.returns.measure import measure
 from pipeline.returns.panel import build_panels
+from pipeline.returns.placebo import pseudo_events
 from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.choice import leading_test
+from pipeline.significance.dependence import links
 from pipeline.significance.paths import average_paths
+from pipeline.significance.placebo import placebo_sizes
+from pipeline.significance.power import power_of
 from pipeline.significance.variants import mean_variants
 from pipeline.significance.windows import all_windows
 from pipeline.study import plan
@@ -115,6 +119,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
             study.level,
             study.seed,
         )
+    placebo = _placebo(study, measured, found[0].mean, clock)
     with clock.stage("characteristics"):
         prepared = _prepare(study, measured)
     columns: tuple[Column, ...] = ()
@@ -122,7 +127,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
         with clock.stage("estimators"):
             columns = tuple(_fit(study, key, prepared) for key in study.columns)
     with clock.stage("results"):
-        results = _results(study, measured, found, prepared, columns)
+        results = _results(study, measured, found, prepared, columns, placebo)
     return results, clock.seconds
 
 
@@ -225,6 +230,34 @@ def _prepare(study: Study, measured: Measured) -> Prepared | None:
     return prepare(deals, candidates, book, on_deals, on_candidates, roles)
 
 
+def _placebo(study: Study, measured: Measured, mean: float, clock: Clock) -> Any:
+    """The tests on dates without an announcement, if the study asks for them."""
+    asked, window = study.placebo, study.event_time.headline_window
+    model = study.expected_returns.headline
+    lead = measured.abnormal[model]
+    samples: Iterable[AbnormalReturns] = ()
+    if asked.draws and len(lead.deals) > 1:
+        samples = pseudo_events(
+            model,
+            entry(EXPECTED_RETURNS, model).load(),
+            measured.deals,
+            measured.panels,
+            study.event_time.estimation_window,
+            window,
+            draws=asked.draws,
+            distance=asked.distance,
+            minimum_observations=study.event_time.minimum_observations,
+            seed=study.seed,
+        )
+    tests = {
+        key: entry(TESTS, key).load()
+        for key in _tests(study, len(lead.deals))
+        if not entry(TESTS, key).resamples
+    }
+    with clock.stage("placebo dates"):
+        return placebo_sizes(samples, window, tests, links(lead), lead.deals, mean, 1 - study.level)
+
+
 def _with_outcomes(study: Study, measured: Measured) -> Any:
     time = study.event_time
     lead = measured.abnormal[study.expected_returns.headline]
@@ -246,6 +279,7 @@ def _results(
     found: Any,
     prepared: Prepared | None,
     columns: tuple[Column, ...],
+    placebo: Any,
 ) -> Results:
     facts = plan.facts(study, leading_test(study.tests.headline, len(measured.deals)))
     lead_model = study.expected_returns.headline
@@ -271,6 +305,8 @@ def _results(
         ledger=ledger,
         findings=findings,
         tables={},
+        placebo=placebo,
+        power=power_of(lead, facts.headline),
     )
     tables = {
         "abnormal_returns": abnormal_returns_frame(measured.abnormal),
@@ -282,6 +318,8 @@ def _results(
         "ledger": ledger.frame(),
         "findings": findings_frame(findings),
         "paths": results.paths,
+        "placebo": results.placebo,
+        "power": results.power,
     }
     return replace(results, tables={**tables, "headline": headline_frame(results)})
 

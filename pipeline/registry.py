@@ -24,10 +24,12 @@ class Entry:
 
     ``needs`` lists parts of the study without which the entry makes no sense (estimators:
     ``effects``, ``selection``, ``instruments``; models: factor columns). ``answers`` ranks the
-    estimators by how much of the choice they account for: the highest one leads the finding.
+    estimators by how much of the choice of the treatment they account for (who announces is
+    another choice): the highest one leads the finding.
     ``why`` says in a clause what a test is chosen for, to follow "chosen because it"; ``assumes``
     names what the test takes for granted, checked against each sample. An entry that is not
-    ``default`` is used only when the study names it.
+    ``default`` is used only when the study names it; one that ``resamples`` is left out where a
+    test is repeated many times.
     """
 
     key: str
@@ -37,6 +39,7 @@ class Entry:
     why: str = ""
     assumes: tuple[str, ...] = ()
     default: bool = True
+    resamples: bool = False
 
     def load(self) -> Callable[..., Any]:
         """Import the function the entry names."""
@@ -91,13 +94,13 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "rank",
             "pipeline.significance.ranks:rank",
             why="needs no normal returns",
-            assumes=("constant_variance",),
+            assumes=("aligned", "constant_variance"),
         ),
         Entry(
             "generalised_rank",
             "pipeline.significance.ranks:generalised_rank",
             why="needs no normal returns and allows for variance that rises at the event",
-            assumes=("symmetric_before",),
+            assumes=("aligned", "symmetric_before"),
         ),
         Entry(
             "generalised_sign",
@@ -116,11 +119,14 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "pipeline.significance.resampled:skewness_adjusted",
             why="allows for skewed returns",
             assumes=("independent",),
+            resamples=True,
         ),
         Entry(
             "date_bootstrap",
             "pipeline.significance.resampled:date_bootstrap",
             why="resamples whole dates, so that deals of one date may move together",
+            assumes=("aligned",),
+            resamples=True,
         ),
         Entry(
             "single_event",
@@ -151,13 +157,142 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "heckman_two_step",
             "pipeline.estimators.selection:heckman_two_step",
             needs=("selection",),
-            answers=3,
+            answers=1,
         ),
         Entry(
             "two_stage_least_squares",
             "pipeline.estimators.instruments:two_stage_least_squares",
             needs=("instruments",),
             answers=4,
+        ),
+        Entry(
+            "heckman_likelihood",
+            "pipeline.estimators.selection_ml:heckman_likelihood",
+            needs=("selection",),
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "weighting",
+            "pipeline.estimators.weighting:weighting",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "weighting_treated",
+            "pipeline.estimators.weighting:weighting_treated",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "entropy_balancing",
+            "pipeline.estimators.weighting:entropy_balancing",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "matching",
+            "pipeline.estimators.matching:matching",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "matching_treated",
+            "pipeline.estimators.matching:matching_treated",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "doubly_robust",
+            "pipeline.estimators.doubly_robust:doubly_robust",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "doubly_robust_treated",
+            "pipeline.estimators.doubly_robust:doubly_robust_treated",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "partially_linear",
+            "pipeline.estimators.doubly_robust:partially_linear",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "treatment_two_step",
+            "pipeline.estimators.treatment:treatment_two_step",
+            needs=("instruments",),
+            answers=3,
+            default=False,
+        ),
+        Entry(
+            "treatment_likelihood",
+            "pipeline.estimators.treatment_ml:treatment_likelihood",
+            needs=("instruments",),
+            answers=3,
+            default=False,
+        ),
+        Entry(
+            "switching_regression",
+            "pipeline.estimators.switching:switching_regression",
+            needs=("instruments",),
+            answers=3,
+            default=False,
+        ),
+        Entry(
+            "fitted_probability_instrument",
+            "pipeline.estimators.treatment:fitted_probability_instrument",
+            needs=("instruments",),
+            answers=4,
+            default=False,
+        ),
+        Entry(
+            "selection_two_stage",
+            "pipeline.estimators.selection_iv:selection_two_stage",
+            needs=("selection", "instruments"),
+            answers=5,
+            default=False,
+        ),
+        Entry(
+            "variance_weighted",
+            "pipeline.estimators.variance_weighted:variance_weighted",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "median",
+            "pipeline.estimators.robust_location:median",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "huber",
+            "pipeline.estimators.robust_location:huber",
+            answers=1,
+            default=False,
+        ),
+        Entry(
+            "limited_information",
+            "pipeline.estimators.k_class:limited_information",
+            needs=("instruments",),
+            answers=4,
+            default=False,
+        ),
+        Entry(
+            "fuller",
+            "pipeline.estimators.k_class:fuller",
+            needs=("instruments",),
+            answers=4,
+            default=False,
+        ),
+        Entry(
+            "two_step_gmm",
+            "pipeline.estimators.gmm:two_step_gmm",
+            needs=("instruments",),
+            answers=4,
+            default=False,
         ),
     ),
     FORMATS: (

@@ -106,6 +106,10 @@ class Results:
             ``target`` names the number varied, which is the mean reaction without it.
         tables: name -> the frame written to ``data/<name>.parquet``.
         ledger, findings: as collected.
+        placebo: ``test, title, rejected, draws, rate, std_error, nominal``: what the tests do on
+            dates without an announcement; empty if not asked for. The row ``mean`` holds the
+            share of draws whose mean is as far from zero as the sample's.
+        power: ``effect, power, deals_needed``; effect decimal.
     """
 
     study: StudyFacts
@@ -120,6 +124,8 @@ class Results:
     ledger: Ledger
     findings: tuple[Finding, ...]
     tables: Mapping[str, pd.DataFrame]
+    placebo: pd.DataFrame = field(default_factory=pd.DataFrame)
+    power: pd.DataFrame = field(default_factory=pd.DataFrame)
 
     @property
     def headline(self) -> WindowTests:

@@ -13,6 +13,8 @@ from pipeline.estimators import covariance as cov
 from pipeline.estimators.algebra import refusal
 
 CLUSTER = "cluster"
+CR2, CR3 = "cr2", "cr3"
+FEW = (CR2, CR3)
 MOST_DIMENSIONS = 2
 FEW_CLUSTERS = 40
 VERY_FEW_CLUSTERS = 10
@@ -22,8 +24,9 @@ VERY_FEW_CLUSTERS = 10
 class ErrorRule:
     """How the errors of ``n`` rows are treated.
 
-    ``kind`` is ``classical``, ``hc0`` to ``hc3`` or ``cluster``; ``clusters`` holds one or two
-    dimensions, name -> (n,) codes, and is empty unless the kind is ``cluster``.
+    ``kind`` is ``classical``, ``hc0`` to ``hc3``, ``cluster``, ``cr2`` or ``cr3``; ``clusters``
+    holds one or two dimensions (one for ``cr2`` and ``cr3``), name -> (n,) codes, and is empty
+    for the first five.
     """
 
     kind: str
@@ -77,7 +80,22 @@ def choose_errors(
             f"one of {', '.join(supported)}",
             "this estimator has no such covariance: choose another or leave it on auto",
         )
+    if kind in FEW:
+        _check_clusters(clusters)
+        _check_one_dimension(clusters, kind)
+        return ErrorRule(kind, dict(clusters), n)
     return ErrorRule(kind, {}, n)
+
+
+def _check_one_dimension(clusters: dict[str, Integers], kind: str) -> None:
+    if len(clusters) > 1:
+        raise refusal(
+            "cluster_dimensions",
+            ", ".join(clusters),
+            f"{len(clusters)} dimensions",
+            f"one dimension for {kind.upper()}",
+            "keep the dimension with fewer clusters, or cluster by both with CR1",
+        )
 
 
 def _check_clusters(clusters: dict[str, Integers]) -> None:
@@ -201,7 +219,7 @@ def degrees_of_freedom(rule: ErrorRule, k: int) -> tuple[float, str]:
     n - k without clusters; the smaller number of clusters less one with them, because the
     normal rejects too often (Cameron and Miller 2015, sec. VI).
     """
-    if rule.kind != CLUSTER:
+    if not rule.clusters:
         df = rule.n - k
         return float(df), f"Student t with n − k = {rule.n} − {k} = {df} degrees of freedom"
     counts = rule.counts
@@ -218,12 +236,12 @@ def words(rule: ErrorRule) -> str:
     """The covariance in words."""
     if rule.kind == "classical":
         return "classical, equal variances"
-    if rule.kind != CLUSTER:
+    if not rule.clusters:
         return f"{rule.kind.upper()}, robust to unequal variances"
     names = " and ".join(rule.clusters)
     if len(rule.clusters) > 1:
         return f"two-way clustered by {names}, each part with its own G/(G − 1)"
-    return f"clustered by {names} (CR1)"
+    return f"clustered by {names} ({'CR1' if rule.kind == CLUSTER else rule.kind.upper()})"
 
 
 def cautions(rule: ErrorRule, floored: bool) -> tuple[str, ...]:
@@ -232,7 +250,8 @@ def cautions(rule: ErrorRule, floored: bool) -> tuple[str, ...]:
     Forty clusters is the usual rule of thumb (Angrist and Pischke 2009, sec. 8.2.3).
     """
     notes = []
-    for name, groups in rule.counts.items():
+    counts = rule.counts if rule.kind == CLUSTER else {}
+    for name, groups in counts.items():
         if groups < VERY_FEW_CLUSTERS:
             notes.append(
                 f"Only {groups} clusters by {name}: clustered errors are too small here, and a "

@@ -91,7 +91,17 @@ def two_stage_least_squares(design: Design, options: FitOptions) -> Estimate:
             not positive.
     """
     parts = parts_of(design, options)
-    second = _second_stage(parts)
+    return with_weak_instrument_checks(design, options, parts, _second_stage(parts))
+
+
+def with_weak_instrument_checks(
+    design: Design, options: FitOptions, parts: Parts, second: Second
+) -> Estimate:
+    """A column around a second stage, however it weighs the instruments.
+
+    Everything beside the second stage's own coefficients and errors is as in
+    :func:`two_stage_least_squares`, whose names and citation it carries too.
+    """
     forms = reduced_forms(parts)
     L = len(parts.instruments)
     effective = strength.effective_f(parts.D, parts.Z, forms.treatment, forms.covariance[L:, L:])
@@ -193,7 +203,7 @@ def _tests(parts: Parts, forms: ReducedForms, second: Second) -> dict[str, Teste
         "homoskedastic_f": _homoskedastic_f(parts),
         "anderson_rubin": anderson_rubin_test(forms),
         "wu_hausman": _wu_hausman(parts),
-        "overidentification": _overidentification(parts, second),
+        "overidentification": overidentification(parts, second),
     }
 
 
@@ -236,9 +246,10 @@ def _wu_hausman(parts: Parts) -> TestResult:
     )
 
 
-def _overidentification(parts: Parts, second: Second) -> Tested:
+def overidentification(parts: Parts, second: Second) -> Tested:
     """Hansen's J at the two-step efficient estimate; Sargan's nR² with classical errors.
 
+    The weights are those of ``second``'s residuals (Hansen 1982; Sargan 1958).
     The controls' moments are met exactly, so the instruments' own suffice, controls taken out.
     """
     L, rule = len(parts.instruments), parts.sample.rule
@@ -301,15 +312,24 @@ def _binary(column: Floats) -> bool:
     return set(np.unique(column).tolist()) == {0.0, 1.0}
 
 
-def _other_weights(parts: Parts) -> dict[str, float]:
-    """Limited-information maximum likelihood, Fuller's (a = 1), and each instrument alone.
+def smallest_root(parts: Parts) -> float:
+    """κ, the smallest root of |Y'Y - κ Y'M_Z Y| = 0, Y = [y, D]; at least one.
 
-    κ is the smallest root of |Y'Y - κ Y'M_Z Y| = 0, Y = [y, D] (Anderson and Rubin 1949; Fuller
-    1977). Far from two-stage least squares, they point to weak instruments.
+    Anderson and Rubin (1949); Fuller (1977).
     """
     Y = np.column_stack([parts.y, parts.D])
     rest = solve(parts.Z, Y)[1]
-    kappa = float(linalg.eigh(Y.T @ Y, rest.T @ rest, eigvals_only=True)[0])
+    return float(linalg.eigh(Y.T @ Y, rest.T @ rest, eigvals_only=True)[0])
+
+
+def _other_weights(parts: Parts) -> dict[str, float]:
+    """Limited-information maximum likelihood, Fuller's (a = 1), and each instrument alone.
+
+    Far from two-stage least squares, they point to weak instruments.
+    """
+    Y = np.column_stack([parts.y, parts.D])
+    rest = solve(parts.Z, Y)[1]
+    kappa = smallest_root(parts)
     free = parts.sample.n - parts.k_first - parts.sample.absorbed
 
     def k_class(weight: float) -> float:

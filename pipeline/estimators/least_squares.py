@@ -9,11 +9,14 @@ import numpy as np
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import Estimate, EstimationFailed, Tested
 from pipeline.core.prices import Floats
-from pipeline.estimators import diagnostics
+from pipeline.estimators import diagnostics, few_clusters
 from pipeline.estimators.algebra import leverage, refusal, refuse_dependent, solve
 from pipeline.estimators.covariance import CAMERON_GELBACH_MILLER, LONG_ERVIN
 from pipeline.estimators.errors import (
     CLUSTER,
+    CR2,
+    FEW,
+    ErrorRule,
     Sandwich,
     cautions,
     choose_errors,
@@ -28,11 +31,15 @@ from pipeline.estimators.sample import Sample, plain, within
 WHITE = "White (1980)"
 LIANG_ZEGER = "Liang and Zeger (1986)"
 EXACT = 1e-20
+SUPPORTED = ("classical", "hc0", "hc1", "hc2", "hc3", *FEW)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Fitted:
-    """Coefficients (k,), residuals (n,), bread (k, k), leverage (n,) or None, and the sandwich."""
+    """Coefficients (k,), residuals (n,), bread (k, k), leverage (n,) or None, and the sandwich.
+
+    ``few`` is what CR2 and CR3 add, None for the other covariances.
+    """
 
     coefficients: Floats
     residuals: Floats
@@ -40,6 +47,7 @@ class Fitted:
     hat: Floats | None
     errors: Sandwich
     covariance: Floats
+    few: few_clusters.FewClusters | None = None
 
 
 def ols(design: Design, options: FitOptions) -> Estimate:
@@ -48,26 +56,27 @@ def ols(design: Design, options: FitOptions) -> Estimate:
     X is (n, k); the coefficient of the treatment is in the outcome's unit (decimal) per unit of
     the treatment. HC3 errors unless told otherwise (Long and Ervin 2000), t with n - k degrees
     of freedom; CR1 or two-way clustered errors when the options ask, t with the smaller number
-    of clusters less one. ``scores`` (n, k) are the influences (X'X)⁻¹x_i e_i.
+    of clusters less one; CR2 with Satterthwaite's degrees of freedom or CR3 by name, for one
+    dimension. ``scores`` (n, k) are the influences (X'X)⁻¹x_i e_i.
 
     ``fit``: r_squared, adjusted_r_squared, sigma, condition_number, vif_treatment, vif_largest,
     leverage_largest, dfbetas_largest, small_sample_factor (where one number makes the covariance
-    from the scores), intraclass_correlation (clustered). ``tests``: joint_controls,
-    breusch_pagan, reset, jarque_bera.
+    from the scores), intraclass_correlation (clustered), df.<name> (CR2). ``tests``:
+    joint_controls, breusch_pagan, reset, jarque_bera.
 
     Raises:
         InputProblem: ``few_rows``, ``collinear``, ``no_variation``, ``fitted_exactly`` (HC2, HC3),
             or a problem of clusters or covariance.
         EstimationFailed: if the regressors fit the outcome exactly.
     """
-    rule = choose_errors(design.clusters, design.n, options, otherwise="hc3")
+    rule = choose_errors(design.clusters, design.n, options, otherwise="hc3", supported=SUPPORTED)
     sample = plain(design, rule)
     refuse_dependent(sample.X, sample.names)
     fitted = fit_sample(sample, design)
     column = _estimate(design, options, sample, fitted)
     more = {
         "breusch_pagan": diagnostics.breusch_pagan(sample.X, fitted.residuals),
-        "reset": diagnostics.reset(sample.X, sample.y, rule, column.df),
+        "reset": diagnostics.reset(sample.X, sample.y, *_joint(rule, column.df)),
     }
     return replace(
         column,
@@ -112,6 +121,10 @@ def fixed_effects(design: Design, options: FitOptions) -> Estimate:
 
 def _estimate(design: Design, options: FitOptions, sample: Sample, fitted: Fitted) -> Estimate:
     df, sentence = degrees_of_freedom(sample.rule, len(sample.names) + sample.absorbed)
+    joint = df
+    if fitted.few is not None:
+        df = float(fitted.few.df[sample.names.index(design.treatment)])
+        sentence = few_clusters.df_sentence(sample.rule, design.treatment, df)
     return Estimate(
         estimator="",
         title="",
@@ -129,11 +142,11 @@ def _estimate(design: Design, options: FitOptions, sample: Sample, fitted: Fitte
         effects=sample.levels,
         fit=_facts(design, sample, fitted),
         tests={
-            "joint_controls": _joint_controls(design, sample, fitted, df),
+            "joint_controls": _joint_controls(design, sample, fitted, joint),
             "jarque_bera": diagnostics.jarque_bera(fitted.residuals),
         },
         scores=fitted.errors.influence,
-        notes=_notes(sample, fitted),
+        notes=_notes(design, sample, fitted),
         citation=_citation(sample),
         level=options.level,
     )
@@ -159,8 +172,21 @@ def fit_sample(sample: Sample, design: Design) -> Fitted:
             "at least two deals behind every coefficient",
             "drop the regressor that marks this deal only, or choose HC1 errors",
         )
+    if sample.rule.kind in FEW:
+        few = few_clusters.of_sample(sample, design, e)
+        influence = np.asarray((sample.X @ bread) * e[:, None])
+        covariance = positive(few.covariance, sample.names)
+        return Fitted(b, e, bread, hat, Sandwich(covariance, influence), covariance, few)
     errors = sandwich(sample.rule, sample.X, bread, e[:, None], len(b) + sample.counted, hat)
     return Fitted(b, e, bread, hat, errors, positive(errors.covariance, sample.names))
+
+
+def _joint(rule: ErrorRule, df: float) -> tuple[ErrorRule, float]:
+    """The rule and degrees of freedom of tests that add regressors: CR1 in place of CR2 or CR3."""
+    if rule.kind not in FEW:
+        return rule, df
+    plain_clusters = ErrorRule(CLUSTER, rule.clusters, rule.n)
+    return plain_clusters, degrees_of_freedom(plain_clusters, 0)[0]
 
 
 def _difference(design: Design) -> str:
@@ -216,6 +242,8 @@ def _facts(design: Design, sample: Sample, fitted: Fitted) -> dict[str, float]:
     if len(sample.rule.clusters) == 1:
         (codes,) = sample.rule.clusters.values()
         facts["intraclass_correlation"] = diagnostics.intraclass(fitted.residuals, codes)
+    if fitted.few is not None and sample.rule.kind == CR2:
+        facts |= {f"df.{n}": float(v) for n, v in zip(sample.names, fitted.few.df, strict=True)}
     return {name: value for name, value in facts.items() if not np.isnan(value)}
 
 
@@ -244,8 +272,11 @@ def _row_facts(design: Design, sample: Sample, fitted: Fitted) -> dict[str, floa
     }
 
 
-def _notes(sample: Sample, fitted: Fitted) -> tuple[str, ...]:
+def _notes(design: Design, sample: Sample, fitted: Fitted) -> tuple[str, ...]:
     notes = [*sample.notes, *cautions(sample.rule, fitted.errors.floored)]
+    if fitted.few is not None:
+        at = sample.names.index(design.treatment)
+        notes += few_clusters.notes(sample.rule, sample.names, fitted.few, at)
     condition = diagnostics.condition_number(sample.X)
     if condition > diagnostics.CONDITION_LIMIT:
         notes.append(
@@ -258,6 +289,9 @@ def _notes(sample: Sample, fitted: Fitted) -> tuple[str, ...]:
 
 
 def _citation(sample: Sample) -> str:
+    if sample.rule.kind in FEW:
+        cr2 = sample.rule.kind == CR2
+        return few_clusters.PUSTEJOVSKY_TIPTON if cr2 else few_clusters.JACKKNIFE
     if sample.rule.kind == CLUSTER:
         return CAMERON_GELBACH_MILLER if len(sample.rule.clusters) > 1 else LIANG_ZEGER
     return LONG_ERVIN if sample.rule.kind == "hc3" else WHITE

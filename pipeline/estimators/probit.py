@@ -99,12 +99,12 @@ def fit_probit(equation: Equation) -> ProbitFit:
             "add candidates without a deal",
         )
     refuse_dependent(W, names)
-    _refuse_single_separation(chosen, W, names)
+    refuse_single_separation(chosen, W, names)
     unit, length = scaled(W)
     signs = np.where(chosen, 1.0, -1.0)
     gamma, steps, converged = _newton(signs, unit)
     if not converged or float((signs * (unit @ gamma)).max()) > SUSPICIOUS_INDEX:
-        _refuse_separation(signs, unit, names)
+        refuse_separation(signs, unit, names)
     if not converged:
         raise EstimationFailed("the selection equation did not converge")
     return _at_maximum(signs, W, gamma / length, steps)
@@ -160,7 +160,7 @@ def _newton(signs: Floats, W: Floats) -> tuple[Floats, int, bool]:
     return gamma, MOST_STEPS, False
 
 
-def _refuse_single_separation(chosen: Booleans, W: Floats, names: tuple[str, ...]) -> None:
+def refuse_single_separation(chosen: Booleans, W: Floats, names: tuple[str, ...]) -> None:
     """Raise if one variable alone splits those who chose from those who did not."""
     yes, no = W[chosen], W[~chosen]
     above = no.max(axis=0) <= yes.min(axis=0)
@@ -171,7 +171,7 @@ def _refuse_single_separation(chosen: Booleans, W: Floats, names: tuple[str, ...
         raise _separated(guilty)
 
 
-def _refuse_separation(signs: Floats, W: Floats, names: tuple[str, ...]) -> None:
+def refuse_separation(signs: Floats, W: Floats, names: tuple[str, ...]) -> None:
     """Raise if a combination b has q_i w_i'b ≥ 0 in all rows and > 0 in one.
 
     Linear programme of Albert and Anderson (1984): maximise Σ q_i w_i'b in the box |b| ≤ 1.
@@ -198,9 +198,9 @@ def _separated(guilty: list[str]) -> InputProblem:
     return refusal(
         "separation",
         listed,
-        f"{listed} splits candidates that announced from those that did not",
-        "a variable whose values both kinds of candidate share",
-        "drop it, group its levels, or leave out the candidates it decides",
+        f"{listed} tells those who chose from those who did not without error",
+        "a variable whose values both share",
+        "drop it, group its levels, or leave out the rows it decides",
     )
 
 

@@ -11,7 +11,7 @@ from pipeline.core.prices import Booleans, Floats, Integers
 from pipeline.estimators import absorb
 from pipeline.estimators.algebra import refusal
 from pipeline.estimators.covariance import groups_of, recoded
-from pipeline.estimators.errors import ErrorRule, choose_errors
+from pipeline.estimators.errors import FEW, ErrorRule, choose_errors
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -114,7 +114,7 @@ def within(design: Design, options: FitOptions, supported: tuple[str, ...] | Non
         )
     effects = {name: codes[keep] for name, codes in design.effects.items()}
     clusters = {name: codes[keep] for name, codes in design.clusters.items()}
-    every = ("classical", "hc0", "hc1", *(("hc2", "hc3") if len(effects) == 1 else ()))
+    every = ("classical", "hc0", "hc1", *FEW, *(("hc2", "hc3") if len(effects) == 1 else ()))
     rule = choose_errors(
         clusters,
         int(keep.sum()),

@@ -82,7 +82,7 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
             problem of clusters or covariance.
         EstimationFailed: if the probit does not converge or the covariance is not positive.
     """
-    selection = _checked(design, options)
+    selection = checked_selection(design, options)
     rule = choose_errors(
         selection.clusters,
         len(selection.selected),
@@ -95,7 +95,7 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     equation = Equation(selection.selected, selection.W, selection.names, "announcing a deal", key)
     first = fit_probit(equation)
     names = (*design.names, LAMBDA)
-    step = _second_step(design, selection, first, names)
+    step = second_step(design, selection, first, names)
     V, floored = _covariance(step, first, selection, rule)
     stage = probit_estimate(first, equation, rule, options)
     return _estimate(
@@ -110,7 +110,7 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     )
 
 
-def _checked(design: Design, options: FitOptions) -> SelectionRows:
+def checked_selection(design: Design, options: FitOptions) -> SelectionRows:
     selection = design.selection
     if selection is None:
         raise refusal(
@@ -146,11 +146,11 @@ def _checked(design: Design, options: FitOptions) -> SelectionRows:
             "at least one excluded variable",
             "name one and say why it does not move the outcome, or set allow_functional_form",
         )
-    _check_rows(design, selection)
+    check_rows(design, selection)
     return selection
 
 
-def _check_rows(design: Design, selection: SelectionRows) -> None:
+def check_rows(design: Design, selection: SelectionRows) -> None:
     rows = selection.outcome_row[selection.selected]
     found = np.bincount(rows[(rows >= 0) & (rows < design.n)], minlength=design.n)
     stray = int((rows < 0).sum() + (rows >= design.n).sum())
@@ -165,7 +165,7 @@ def _check_rows(design: Design, selection: SelectionRows) -> None:
         )
 
 
-def _second_step(
+def second_step(
     design: Design, selection: SelectionRows, first: ProbitFit, names: tuple[str, ...]
 ) -> SecondStep:
     chosen = selection.selected
@@ -242,7 +242,7 @@ def _estimate(
     return Estimate(
         estimator="heckman_two_step",
         title="Heckman two-step",
-        estimand=_estimand(design, selection),
+        estimand=estimand(design, selection),
         names=(*design.names, LAMBDA),
         coefficients=step.coefficients,
         covariance=V,
@@ -257,7 +257,7 @@ def _estimate(
         clusters=rule.counts,
         fit=facts,
         tests={
-            "excluded_variables": _excluded(stage, selection),
+            "excluded_variables": excluded_test(stage, selection),
             "no_selection": _no_selection(step, V, df, facts["lambda_vif"]),
         },
         stages=(stage,),
@@ -267,7 +267,7 @@ def _estimate(
     )
 
 
-def _estimand(design: Design, selection: SelectionRows) -> str:
+def estimand(design: Design, selection: SelectionRows) -> str:
     identified = (
         f"the exclusion of {', '.join(selection.excluded)} from the outcome"
         if selection.excluded
@@ -299,7 +299,7 @@ def _facts(
     }
 
 
-def _excluded(stage: Estimate, selection: SelectionRows) -> Tested:
+def excluded_test(stage: Estimate, selection: SelectionRows) -> Tested:
     at = [selection.names.index(name) for name in selection.excluded]
     return diagnostics.wald(
         "Excluded variables in the selection equation",
@@ -352,10 +352,10 @@ def _notes(
             f"The implied correlation of the errors is {step.rho:.2f}, outside [-1, 1]: "
             "the model and the data disagree."
         )
-    return notes + _equation_notes(design, selection)
+    return notes + equation_notes(design, selection)
 
 
-def _equation_notes(design: Design, selection: SelectionRows) -> list[str]:
+def equation_notes(design: Design, selection: SelectionRows) -> list[str]:
     """Where the two equations differ beyond the declared exclusions."""
     constant = np.ptp(design.X, axis=0) == 0
     missing = [

@@ -16,6 +16,7 @@ from pipeline.estimators.anderson_rubin import ReducedForms
 from pipeline.estimators.covariance import cluster_sums, intersection
 from pipeline.estimators.errors import (
     CLUSTER,
+    ErrorRule,
     cautions,
     choose_errors,
     degrees_of_freedom,
@@ -77,7 +78,7 @@ def parts_of(design: Design, options: FitOptions) -> Parts:
             "at least one",
             "declare an instrument or use least squares",
         )
-    _check_names(design)
+    check_names(design)
     sample = _sample(design, options)
     at = sample.names.index(design.treatment)
     refuse_dependent(sample.X, sample.names)
@@ -113,7 +114,7 @@ def _sample(design: Design, options: FitOptions) -> Sample:
     return plain(design, rule)
 
 
-def _check_names(design: Design) -> None:
+def check_names(design: Design) -> None:
     if design.treatment in design.instruments:
         raise refusal(
             "instrument_is_treatment",
@@ -258,15 +259,21 @@ def multiplier(sample: Sample, k: int) -> dict[str, float]:
 
 def moment_covariance(parts: Parts, residuals: Floats) -> Floats:
     """(L, L) Σ z̃z̃'u² or its cluster sums, no small-sample factor; two-way by V₁ + V₂ - V₁₂."""
-    moments = parts.Z * residuals[:, None]
-    rule = parts.sample.rule
+    return moments_product(parts.sample.rule, parts.Z * residuals[:, None])
+
+
+def moments_product(rule: ErrorRule, moments: Floats) -> Floats:
+    """(m, m) sum of the products of ``moments`` (n, m) over rows, or over clusters of their sums.
+
+    No small-sample factor; two dimensions by V₁ + V₂ - V₁₂, which need not be positive.
+    """
     if rule.kind != CLUSTER:
         return np.asarray(moments.T @ moments)
     codes = list(rule.clusters.values())
     signed = [(1.0, c) for c in codes]
     if len(codes) > 1:
         signed.append((-1.0, intersection(codes[0], codes[1])))
-    total = np.zeros((len(parts.instruments),) * 2)
+    total = np.zeros((moments.shape[1],) * 2)
     for sign, code in signed:
         sums = cluster_sums(moments, code)
         total += sign * (sums.T @ sums)

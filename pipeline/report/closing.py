@@ -18,6 +18,7 @@ from pipeline.report.document import (
 )
 from pipeline.report.material import Material, capital, prose, taken
 from pipeline.report.numerals import plain, true_minus
+from pipeline.report.reaction import other_models_section
 from pipeline.report.wording import joined, spoken
 
 LEDGER_SHOWN = 40
@@ -56,6 +57,7 @@ def appendix(material: Material) -> tuple[Section, ...]:
     facts, variables = fit_facts_table(material), variables_table(material)
     sources = Bullets(tuple(prose(taken(text, "source")) for text in citations(material)))
     parts = [
+        other_models_section(material),
         Section("Variables", (variables,), 3) if variables.rows else None,
         Section("Sources of the formulas", (sources,), 3) if sources.items else None,
         Section("Facts of each fit", (facts,), 3) if facts.rows else None,

@@ -117,6 +117,19 @@ def _path(canvas: Canvas, figure: Figure) -> None:
     _end_labels(axes, ends)
 
 
+def _curve(canvas: Canvas, figure: Figure) -> None:
+    axes = canvas.subplots()
+    x, y = figure.data["effect_bp"], figure.data["power_percent"]
+    axes.axhline(80, color=FAINT, lw=0.8, ls=(0, (1, 2)))
+    axes.axvline(figure.marks["detectable"], color=FAINT, lw=0.8, ls=(0, (1, 2)))
+    axes.plot(x, y, color=COLOURS[0], lw=1.8, marker=MARKERS[0], ms=4)
+    axes.set_ylim(0, 103)
+    axes.set_xlim(0, float(min(x.max(), 4 * figure.marks["detectable"])))
+    axes.set_xlabel("True mean abnormal return (bp)")
+    axes.set_ylabel("Chance that a test finds it (%)")
+    _ticks(axes)
+
+
 def _end_labels(axes: Axes, ends: list[tuple[str, float, float, str]]) -> None:
     """Name the lines at their ends, pushed apart where they would meet."""
     low, high = axes.get_ylim()
@@ -257,4 +270,5 @@ DRAWINGS: Mapping[str, Drawing] = {
     "path": (lambda data: 4.0, _path),
     "distribution": (lambda data: 1.0 + 1.6 * data["group"].nunique(), _distribution),
     "intervals": (_interval_height, _intervals),
+    "curve": (lambda data: 3.2, _curve),
 }

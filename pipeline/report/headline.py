@@ -18,6 +18,7 @@ from pipeline.core.prices import Floats
 from pipeline.core.results import Results
 
 MEAN_REACTION = "mean reaction"
+POWER = 0.8
 COLUMNS = ("name", "value", "unit", "ci_low", "ci_high", "level", "shape")
 
 
@@ -40,7 +41,7 @@ def headline_frame(results: Results) -> pd.DataFrame:
     Returns and effects are decimal; money is in the study's currency and scale. Two rays are
     everything outside (ci_low, ci_high); the line and the empty set have no ends.
     """
-    parts = (_counts, _reaction, _effects, _range, _money, _paths, _distribution, _verdicts)
+    parts = (_counts, _reaction, _effects, _range, _money, _paths, _distribution, _proof, _verdicts)
     rows = [line for part in parts for line in part(results)]
     frame = pd.DataFrame([[getattr(r, c) for c in COLUMNS] for r in rows], columns=list(COLUMNS))
     numbers = dict.fromkeys(("value", "ci_low", "ci_high", "level"), "float64")
@@ -196,6 +197,19 @@ def _group_of(results: Results) -> pd.Series[str]:
     if not treated.dropna().isin([0, 1]).all():
         return pd.Series(dtype="str")
     return treated.map({0: study.groups[0], 1: study.groups[1]})
+
+
+def _proof(results: Results) -> Iterator[Line]:
+    """The drawn samples, and the mean that these deals find four times in five."""
+    power, placebo = results.power, results.placebo
+    if len(power) and power["power"].max() >= POWER:
+        found = float(np.interp(POWER, power["power"], power["effect"]))
+        yield Line("detectable_mean", found, "decimal")
+    drawn = placebo[placebo["test"] == "mean"] if len(placebo) else placebo
+    for _, row in drawn.iterrows():
+        yield Line("placebo_draws", float(row["draws"]), "samples")
+        yield Line("placebo_farther", float(row["rejected"]), "samples")
+        yield Line("placebo_p", float(row["rate"]), "fraction")
 
 
 def _verdicts(results: Results) -> Iterator[Line]:

@@ -127,6 +127,11 @@ class Material:
         return column if isinstance(column, Estimate) else None
 
     @property
+    def headline_names(self) -> frozenset[str]:
+        """The names of the numbers in the headline frame."""
+        return frozenset(self.frames["headline"]["name"].astype(str))
+
+    @property
     def feature(self) -> str:
         """The deal feature asked about, in words; empty if the study asks about the mean."""
         return self.study.words(self.study.treatment) if self.study.treatment else ""

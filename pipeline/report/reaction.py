@@ -21,6 +21,7 @@ from pipeline.report.finding import agreement_sentence, reaction_sentence
 from pipeline.report.graphs import distribution_figure, path_figure
 from pipeline.report.material import Material, prose, taken
 from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, percent, plain
+from pipeline.report.proof import proof_blocks
 from pipeline.report.wording import distribution_words, level_words, window_label
 
 
@@ -28,9 +29,19 @@ def reaction_section(material: Material) -> Section:
     """Figures of the path and of the spread, and the tables of windows and tests."""
     opening = prose(reaction_sentence(material), agreement_sentence(material))
     figures = [path_figure(material), distribution_figure(material)]
-    tables = [windows_table(material), *(tests_table(material, m) for m in models(material))]
+    tables = [windows_table(material), tests_table(material, models(material)[0])]
     blocks: list[Block] = [opening, *(f for f in figures if f is not None), *tables]
-    return Section("Is the reaction real", (*blocks, assumptions_table(material)))
+    proof = proof_blocks(material)
+    return Section("Is the reaction real", (*blocks, assumptions_table(material), *proof))
+
+
+def other_models_section(material: Material) -> Section | None:
+    """Windows and tests under the other expected-return models; None without one."""
+    others = models(material)[1:]
+    if not others:
+        return None
+    tables = [windows_table(material, others), *(tests_table(material, m) for m in others)]
+    return Section("Other expected-return models", tuple(tables), 3)
 
 
 def models(material: Material) -> tuple[str, ...]:
@@ -38,22 +49,25 @@ def models(material: Material) -> tuple[str, ...]:
     return tuple(dict.fromkeys(entry.model for entry in material.results.window_tests))
 
 
-def windows_table(material: Material) -> Table:
-    """One row a window and expected-return model."""
+def windows_table(material: Material, which: tuple[str, ...] = ()) -> Table:
+    """One row a window and expected-return model, of the headline model unless others are named."""
+    chosen = which or models(material)[:1]
     level = level_words(material.study.level)
     columns = (
         Column("Window", "sessions"), Column("Expected return"), Column("Declared as"),
         Column("Deals", "n"), Column(f"Mean with {level} interval", "bp"), Column("Median", "bp"),
         Column("Standard deviation", "bp"), Column("Share above zero", "%"),
     )  # fmt: skip
-    rows = tuple(_window_row(material, entry) for entry in material.results.window_tests)
+    entries = [entry for entry in material.results.window_tests if entry.model in chosen]
+    rows = tuple(_window_row(material, entry) for entry in entries)
     notes = (
         prose("Cumulative abnormal returns, in basis points of the share price, over the sessions "
               "stated, counted from the session that could first react."),
         prose("The headline window and model were declared before looking; the others are "
               "secondary."),
     )  # fmt: skip
-    return Table("windows", prose("The reaction by window"), columns, rows, notes)
+    name = "windows_other_models" if which else "windows"
+    return Table(name, prose("The reaction by window"), columns, rows, notes)
 
 
 def is_headline(material: Material, entry: WindowTests) -> bool:
@@ -87,6 +101,7 @@ def tests_table(material: Material, model: str) -> Table:
     rows = tuple(
         (Text(title), _holds_cell(entries[0], key), *(_test_cell(entry, key) for entry in entries))
         for key, title in titles.items()
+        if any(isinstance(entry.tests.get(key), TestResult) for entry in entries)
     )
     title = prose("Tests of a zero mean, ", taken(material.study.words(model), "study"))
     name = "tests" if model == models(material)[0] else f"tests_{model}"

@@ -3,9 +3,16 @@
 from __future__ import annotations
 
 import numpy as np
+import pandas as pd
 from scipy import special
 
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.window import Window
 from pipeline.significance.dependence import Dependence
+from pipeline.significance.sample import car_sample
+
+EFFECTS = np.array([5, 10, 15, 20, 25, 30, 40, 50, 60, 80, 100, 125, 150, 200, 250, 300]) / 1e4
+POWER = 0.8
 
 
 def z_test_power(effect: float, std_dev: float, n: float, size: float = 0.05) -> float:
@@ -34,3 +41,37 @@ def detectable(
     """
     reach = -float(special.ndtri(size / 2)) + float(special.ndtri(power))
     return reach * std_dev / float(np.sqrt(link.effective_n(n)))
+
+
+def power_frame(std_dev: float, n: int, link: Dependence, size: float = 0.05) -> pd.DataFrame:
+    """Power over effects, and the deals each effect needs for power of four fifths.
+
+    Args:
+        std_dev: cross-sectional standard deviation of the CARs, decimal.
+        n: deals of the sample.
+        link: their dependence; deals to be added are taken to be as dependent as these.
+        size: nominal level.
+
+    Returns:
+        ``effect`` (decimal), ``power`` with the sample's deals, ``deals_needed`` for power 0.8 if
+        deals were independent.
+    """
+    effects = EFFECTS
+    worth = link.effective_n(n)
+    reach = -float(special.ndtri(size / 2)) + float(special.ndtri(POWER))
+    needed = np.ceil(np.nan_to_num((reach * std_dev / effects) ** 2))
+    return pd.DataFrame(
+        {
+            "effect": effects,
+            "power": [z_test_power(float(e), std_dev, worth, size) for e in effects],
+            "deals_needed": needed.astype(np.int64),
+        }
+    )
+
+
+def power_of(abnormal: AbnormalReturns, window: Window, size: float = 0.05) -> pd.DataFrame:
+    """:func:`power_frame` of the deals that traded on every day of ``window``."""
+    sample = car_sample(abnormal, window, 1.0)
+    if sample.n < 2:
+        return power_frame(np.nan, max(sample.n, 1), sample.dependence, size).iloc[:0]
+    return power_frame(float(sample.car.std(ddof=1)), sample.n, sample.dependence, size)

@@ -162,6 +162,15 @@ class Tests(Part):
     )
 
 
+class Placebo(Part):
+    """Pseudo-events on dates without an announcement: what the tests do when nothing happened."""
+
+    draws: int = Field(0, ge=0, le=100_000, description="Samples drawn; 0 leaves the check out.")
+    distance: int = Field(
+        60, ge=10, le=200, description="Sessions a pseudo-event keeps from the company's deals."
+    )
+
+
 class Indicator(Part):
     """One where the column meets the condition, zero elsewhere."""
 
@@ -284,6 +293,7 @@ class Study(Part):
     event_time: EventTime = Field(default_factory=EventTime)
     expected_returns: ExpectedReturns = Field(default_factory=ExpectedReturns)
     tests: Tests = Field(default_factory=Tests)
+    placebo: Placebo = Field(default_factory=Placebo)
     characteristics: dict[str, Characteristic] = Field(default_factory=dict)
     regression: Regression | None = None
     selection: Selection | None = None

@@ -90,13 +90,27 @@ def with_column(design: Design, name: str, values: Floats) -> Design:
     return replace(design, X=np.column_stack([design.X, values]), names=(*design.names, name))
 
 
+def measured(design: Design, seed: int = 12) -> Design:
+    """The design with a known and uneven measurement error of each outcome."""
+    spread = np.random.default_rng(seed).uniform(0.01, 0.04, size=design.n)
+    return replace(design, outcome_variance=spread**2)
+
+
+def in_percent(design: Design) -> Design:
+    """The same deals with the outcome, and its measurement error, in percent."""
+    variance = design.outcome_variance
+    return replace(
+        design, y=100 * design.y, outcome_variance=None if variance is None else 1e4 * variance
+    )
+
+
 def shuffled(design: Design, seed: int = 5) -> Design:
     """The same deals and the same candidates, each in another order."""
     rng = np.random.default_rng(seed)
     order = rng.permutation(design.n)
     place = np.empty(design.n, dtype=int)
     place[order] = np.arange(design.n)
-    selection = design.selection
+    selection, variance = design.selection, design.outcome_variance
     if selection is not None:
         turn = rng.permutation(len(selection.selected))
         row = selection.outcome_row
@@ -113,6 +127,7 @@ def shuffled(design: Design, seed: int = 5) -> Design:
         y=design.y[order],
         X=design.X[order],
         Z=design.Z[order],
+        outcome_variance=None if variance is None else variance[order],
         rows=tuple(design.rows[at] for at in order),
         effects={k: c[order] for k, c in design.effects.items()},
         clusters={k: c[order] for k, c in design.clusters.items()},
@@ -124,6 +139,8 @@ def arrays(design: Design) -> list[np.ndarray]:
     """Every array the design holds."""
     found: list[np.ndarray] = [design.y, design.X, design.Z]
     found += [*design.effects.values(), *design.clusters.values()]
+    if design.outcome_variance is not None:
+        found.append(design.outcome_variance)
     if design.selection is not None:
         s = design.selection
         found += [s.W, s.selected, s.outcome_row, *s.clusters.values()]

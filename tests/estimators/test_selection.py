@@ -51,7 +51,7 @@ def test_sandwich_predicts_leaving_a_candidate_out(design: Design) -> None:
     s = candidates(design)
     column = heckman_two_step(design, FitOptions(covariance="hc0"))
     first = probit.fit_probit(probit.Equation(s.selected, s.W, s.names, "a", s.names[-1]))
-    step = selection._second_step(design, s, first, column.names)
+    step = selection.second_step(design, s, first, column.names)
     influence = selection.stacked_influence(step, first, s)
     np.testing.assert_allclose(influence.T @ influence, column.covariance, rtol=1e-10)
     scale = column.std_errors
@@ -77,7 +77,7 @@ def test_corrected_errors_are_the_naive_ones_without_selection() -> None:
     design = deals()
     s = candidates(design)
     first = probit.fit_probit(probit.Equation(s.selected, s.W, s.names, "a", s.names[-1]))
-    step = selection._second_step(design, s, first, (*design.names, "inverse_mills"))
+    step = selection.second_step(design, s, first, (*design.names, "inverse_mills"))
     still = replace(step, rho=0.0)
     V = selection.corrected_covariance(still, first.information)
     np.testing.assert_allclose(V, step.sigma**2 * step.bread, rtol=1e-8)
@@ -87,7 +87,7 @@ def test_covariance_that_is_not_positive_is_withheld() -> None:
     design = deals()
     s = candidates(design)
     first = probit.fit_probit(probit.Equation(s.selected, s.W, s.names, "a", s.names[-1]))
-    step = selection._second_step(design, s, first, (*design.names, "inverse_mills"))
+    step = selection.second_step(design, s, first, (*design.names, "inverse_mills"))
     with pytest.raises(EstimationFailed, match=r"errors is 9\.00; robust"):
         selection.corrected_covariance(replace(step, rho=9.0), 1e-9 * first.information)
 

@@ -46,7 +46,8 @@ NOT_OURS = (
     "i.se_industry_CR2",
     "i.CR2_df",
 )
-"""Estimators, tests and covariances the package does not offer, by the start of their key."""
+"""What the package does not offer, or what ``test_weights_and_clusters_outside`` compares, by a
+part of its key."""
 
 
 def compare(case: str, found: Mapping[str, Any]) -> None:
@@ -120,8 +121,8 @@ def test_heckman_two_step_on_the_wage_level() -> None:
     compare("mroz_wage_level_two_step", {key: found[key] for key in wanted if key in found})
 
 
-# Sources: R sampleSelection, gretl and scipy, full maximum likelihood. The package has no such
-# estimator; both are consistent, so they may not lie more than two standard errors apart.
+# Sources: R sampleSelection, gretl and scipy, full maximum likelihood. Both are consistent, so
+# they may not lie more than two standard errors apart.
 @pytest.mark.parametrize(
     ("case", "build"),
     [("mroz_likelihood", data.mroz_log_wage), ("mroz_wage_level_likelihood", data.mroz_wage_level)],

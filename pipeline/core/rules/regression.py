@@ -229,4 +229,18 @@ RULES = (
         "There is nobody to compare them with.",
         "Leave out the control, or the deals that have no counterpart.",
     ),
+    Rule(
+        "treatment_not_known",
+        "Treatment known for deals only",
+        "The column needs the feature of every candidate, announced or not.",
+        "It asks what the feature does to announcing.",
+        "Add it to the selection variables, or take the column out.",
+    ),
+    Rule(
+        "no_controls",
+        "Matching without a control",
+        "No control that varies says which deals are alike.",
+        "Every deal is then as near as any other.",
+        "Name controls, or use least squares.",
+    ),
 )

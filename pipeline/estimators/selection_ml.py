@@ -1,0 +1,153 @@
+"""Heckman's selection model by maximum likelihood: both equations at once."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from pipeline.core.design import Design, FitOptions, SelectionRows
+from pipeline.core.estimate import Estimate
+from pipeline.core.prices import Floats
+from pipeline.estimators import joint_normal
+from pipeline.estimators.algebra import refuse_dependent
+from pipeline.estimators.errors import ErrorRule, cautions, choose_errors, words
+from pipeline.estimators.joint_normal import Joint, Maximum
+from pipeline.estimators.likelihood_report import (
+    correlation_tests,
+    facts,
+    likelihood_covariance,
+    likelihood_notes,
+    likelihood_words,
+    multiplier,
+)
+from pipeline.estimators.probit import Equation, fit_probit, limits
+from pipeline.estimators.sample import plain
+from pipeline.estimators.selection import (
+    LAMBDA,
+    checked_selection,
+    equation_notes,
+    estimand,
+    excluded_test,
+    second_step,
+)
+
+CITATION = "Heckman (1974); Olsen (1982); Maddala (1983), sec. 9.2"
+
+
+def heckman_likelihood(design: Design, options: FitOptions) -> Estimate:
+    """Maximum likelihood of announcing (all A candidates) and of the outcome (the n deals).
+
+    ln L = Σ_unselected ln Φ(-w'γ) + Σ_selected {ln Φ[(w'γ + ρe)/√(1 - ρ²)] + ln φ(e) - ln σ},
+    e = (y - x'β)/σ, over (γ, β, ln σ, atanh ρ) (Heckman 1974; Maddala 1983, sec. 9.2). Errors:
+    inverse of the observed information by default; ``hc0``, ``hc1`` (n/(n - 1)) or ``cluster``
+    (G/(G - 1)) give the sandwich, which does not repair a wrong likelihood. Read against the
+    normal, t(G - 1) with clusters. ``n`` counts deals.
+
+    ``fit``: sigma, rho, lambda (ρσ), each with se_; atanh_rho, log_likelihood,
+    log_likelihood_independent, profile.<ρ> (log-likelihood less its maximum), starts,
+    starts_agreeing, gradient (in standard errors), information_condition, candidates, selected.
+    ``tests``: no_selection (Wald on atanh ρ), likelihood_ratio, excluded_variables. ``stages``:
+    the selection equation.
+
+    Raises:
+        InputProblem: as :func:`~pipeline.estimators.selection.heckman_two_step`.
+        EstimationFailed: if the likelihood has no interior maximum, does not converge, or its
+            information is singular.
+    """
+    selection = checked_selection(design, options)
+    rule = choose_errors(
+        selection.clusters,
+        len(selection.selected),
+        options,
+        otherwise="classical",
+        supported=("classical", "hc0", "hc1"),
+    )
+    notes = plain(design, rule).notes
+    refuse_dependent(design.X, design.names)
+    found = _maximum(design, selection)
+    names = (*selection.names, *design.names, "ln sigma", "atanh rho")
+    V, floored = likelihood_covariance(found, rule, names)
+    q = selection.W.shape[1]
+    stage = _stage(selection, found, V[:q, :q], rule, options)
+    df, sentence = limits(rule)
+    return Estimate(
+        estimator="heckman_likelihood",
+        title="Heckman maximum likelihood",
+        estimand=estimand(design, selection),
+        names=design.names,
+        coefficients=found.beta,
+        covariance=V[q:-2, q:-2],
+        df=df,
+        df_rule=sentence,
+        covariance_name=likelihood_words(rule, words(rule)),
+        n=design.n,
+        treatment=design.treatment,
+        outcome=design.outcome,
+        clusters=rule.counts,
+        fit={
+            **facts(found, V),
+            "candidates": float(len(selection.selected)),
+            "selected": float(selection.selected.sum()),
+        },
+        tests={
+            "excluded_variables": excluded_test(stage, selection),
+            **correlation_tests(found, V, df, rule, CITATION),
+        },
+        stages=(stage,),
+        notes=(
+            *notes,
+            *cautions(rule, floored),
+            *likelihood_notes(found),
+            *equation_notes(design, selection),
+        ),
+        citation=CITATION,
+        level=options.level,
+    )
+
+
+def _maximum(design: Design, selection: SelectionRows) -> Maximum:
+    equation = Equation(
+        selection.selected, selection.W, selection.names, "announcing a deal", _key(selection)
+    )
+    first = fit_probit(equation)
+    step = second_step(design, selection, first, (*design.names, LAMBDA))
+    at = np.flatnonzero(selection.selected)
+    rows = selection.outcome_row[at]
+    model = Joint(
+        signs=np.where(selection.selected, 1.0, -1.0),
+        W=selection.W,
+        at=at,
+        y=design.y[rows],
+        X=design.X[rows],
+    )
+    start = (step.coefficients[:-1], step.sigma, step.rho)
+    return joint_normal.maximise(model, first.coefficients, start)
+
+
+def _key(selection: SelectionRows) -> str:
+    return (*selection.excluded, *selection.names[::-1])[0]
+
+
+def _stage(
+    selection: SelectionRows, found: Maximum, V: Floats, rule: ErrorRule, options: FitOptions
+) -> Estimate:
+    df, sentence = limits(rule)
+    return Estimate(
+        estimator="selection_equation",
+        title="Selection equation, jointly with the outcome",
+        estimand="change in the normal index of announcing a deal associated with one more unit "
+        "of a variable, holding the others fixed",
+        names=selection.names,
+        coefficients=found.gamma,
+        covariance=V,
+        df=df,
+        df_rule=sentence,
+        covariance_name=likelihood_words(rule, words(rule)),
+        n=len(selection.selected),
+        treatment=_key(selection),
+        outcome="announcing a deal",
+        clusters=rule.counts,
+        fit=multiplier(rule),
+        scores=found.influence[:, : selection.W.shape[1]],
+        citation=CITATION,
+        level=options.level,
+    )

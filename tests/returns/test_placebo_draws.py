@@ -1,0 +1,80 @@
+"""Pseudo-events: far from every announcement, deals of one date together, the same every time."""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from pipeline.core.prices import PricePanel
+from pipeline.core.window import Window
+from pipeline.returns.expected import market_model
+from pipeline.returns.placebo import draw_shifts, free_to_move, pseudo_events
+from tests.returns.panels import invented_panel
+
+WINDOW, ESTIMATION = Window(-1, 1), Window(-100, -11)
+
+
+@pytest.fixture(scope="module")
+def panels() -> dict[str, PricePanel]:
+    return {"XLON": invented_panel(sessions=900)}
+
+
+@pytest.fixture(scope="module")
+def located(panels: dict[str, PricePanel]) -> pd.DataFrame:
+    days = panels["XLON"].sessions
+    position = np.array([400, 400, 450, 500, 700])
+    return pd.DataFrame(
+        {
+            "deal_id": [f"D{at}" for at in range(5)],
+            "security": ["S00", "S01", "S02", "S00", "S03"],
+            "exchange": "XLON",
+            "column": [0, 1, 2, 0, 3],
+            "position": position,
+            "day_zero": days[position],
+        }
+    )
+
+
+def test_deals_of_one_date_move_together(located: pd.DataFrame) -> None:
+    shifts = draw_shifts(located["day_zero"], 300, 60, 1)
+    assert shifts.shape == (300, 5)
+    assert (shifts[:, 0] == shifts[:, 1]).all()
+    assert (shifts[:, 0] != shifts[:, 2]).any()
+    assert (np.abs(shifts) >= 60).all()
+    assert {-1, 1} == set(np.sign(shifts).ravel())
+
+
+def test_no_draw_comes_near_an_announcement_of_the_company(
+    located: pd.DataFrame, panels: dict[str, PricePanel]
+) -> None:
+    shifts = draw_shifts(located["day_zero"], 300, 60, 1)
+    free = free_to_move(located, shifts, 60, panels, WINDOW)
+    target = located["position"].to_numpy() + shifts
+    for row, security in enumerate(located["security"]):
+        own = located.loc[located["security"] == security, "position"].to_numpy()
+        near = (np.abs(target[:, row, None] - own) < 60).any(axis=1)
+        inside = (target[:, row] >= 2) & (target[:, row] + 1 < 900)
+        np.testing.assert_array_equal(free[:, row], inside & ~near)
+    assert not free[:, 0].all(), "the company's other deal must stand in the way of some draws"
+
+
+def test_samples_are_the_returns_of_the_moved_dates(
+    located: pd.DataFrame, panels: dict[str, PricePanel]
+) -> None:
+    how = {"draws": 6, "distance": 60, "minimum_observations": 60, "seed": 5}
+    drawn = list(
+        pseudo_events("m", market_model, located, panels, ESTIMATION, WINDOW, **how)  # type: ignore[arg-type]
+    )
+    assert len(drawn) == 6
+    again = list(
+        pseudo_events("m", market_model, located, panels, ESTIMATION, WINDOW, **how)  # type: ignore[arg-type]
+    )
+    shifts = draw_shifts(located["day_zero"], 6, 60, 5)
+    days = panels["XLON"].sessions
+    for at, (one, other) in enumerate(zip(drawn, again, strict=True)):
+        np.testing.assert_array_equal(one.returns, other.returns)
+        for row, deal in enumerate(one.deals):
+            place = int(deal[1:])
+            moved = located["position"].iloc[place] + shifts[at, place]
+            assert one.days[row, 1] == days[moved]

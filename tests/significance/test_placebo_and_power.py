@@ -1,0 +1,66 @@
+"""Sizes on dates without an announcement, and power."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from statsmodels.stats.power import NormalIndPower
+
+from pipeline.core.window import Window
+from pipeline.registry import TABLE, TESTS
+from pipeline.significance.dependence import links
+from pipeline.significance.placebo import placebo_sizes
+from pipeline.significance.power import detectable, power_frame, power_of
+from pipeline.significance.sample import car_sample
+from tests.significance.samples import WINDOW, clustered
+
+TEST_FUNCTIONS = {entry.key: entry.load() for entry in TABLE[TESTS] if not entry.resamples}
+
+
+def test_rates_are_counted_over_the_samples() -> None:
+    """Twenty samples of the same deals in other order: every test rejects in all or in none."""
+    abnormal = clustered(deals=20, gaps=0)
+    known = links(abnormal)
+    stream = np.random.default_rng(1)
+    samples = [abnormal.take(stream.permutation(20)) for _ in range(20)]
+    own = car_sample(abnormal, WINDOW, 1.0)
+    frame = placebo_sizes(
+        samples, WINDOW, TEST_FUNCTIONS, known, abnormal.deals, float(own.car.mean()), 0.05
+    ).set_index("test")
+    assert (frame.loc[frame.index != "mean", "rejected"].isin([0, 20])).all()
+    for key in ("cross_sectional", "patell", "dependence_adjusted"):
+        expected = TEST_FUNCTIONS[key](own).p_value < 0.05
+        assert frame.loc[key, "rate"] == float(expected)
+    assert frame.loc["mean", "rejected"] in (0, 20)
+    assert frame.loc["mean", "rate"] == pytest.approx((1 + frame.loc["mean", "rejected"]) / 21)
+
+
+def test_no_sample_gives_an_empty_frame() -> None:
+    abnormal = clustered(deals=5, gaps=0)
+    frame = placebo_sizes([], WINDOW, TEST_FUNCTIONS, links(abnormal), abnormal.deals, 0.0, 0.05)
+    assert frame.empty
+    assert "rate" in frame
+
+
+def test_power_and_deals_needed_against_statsmodels() -> None:
+    """statsmodels' normal power of a two-sided test of one mean (ratio 0), at 5%."""
+    alone = car_sample(clustered(deals=2, gaps=0), Window(0, 0), 1.0).dependence
+    frame = power_frame(0.03, 100, type(alone)(np.nan, 0.0, 0, 0.0, np.nan, 100, 1))
+    known = NormalIndPower(ddof=0)
+    for _, row in frame.iterrows():
+        size = row["effect"] / 0.03
+        power = known.power(size, 100, 0.05, ratio=0)
+        assert row["power"] == pytest.approx(power, abs=1e-8)
+        if row["deals_needed"] > 20:
+            needed = known.solve_power(size, None, 0.05, 0.8, ratio=0)
+            assert abs(row["deals_needed"] - needed) <= 1.0
+
+
+def test_the_smallest_effect_found_lies_where_power_is_four_fifths() -> None:
+    abnormal = clustered(deals=20, gaps=0)
+    sample = car_sample(abnormal, WINDOW, 1.0)
+    frame = power_of(abnormal, WINDOW)
+    smallest = detectable(float(sample.car.std(ddof=1)), sample.n, sample.dependence)
+    assert (frame.loc[frame["effect"] >= smallest, "power"] >= 0.8 - 1e-6).all()
+    assert (frame.loc[frame["effect"] < smallest, "power"] < 0.8).all()
+    assert power_of(abnormal.take(np.array([0])), WINDOW).empty
