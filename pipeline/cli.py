@@ -88,6 +88,23 @@ def check(study: StudyFile, as_json: AsJson = False) -> None:
 
 
 @app.command()
+def power(study: StudyFile, as_json: AsJson = False) -> None:
+    """Say how small a mean reaction the study's deals can find, and how many deals others need."""
+    from pipeline.screen import Screen
+
+    screen = Screen(quiet=False, as_json=as_json)
+
+    def work() -> None:
+        from pipeline.flow import power as power_stages
+
+        with screen.progress() as tell:
+            frame, deals = power_stages(_load(study, ""), tell)
+        screen.power(frame, deals)
+
+    _guard(work, screen.problem)
+
+
+@app.command()
 def explain(
     rule: Annotated[
         str, typer.Argument(help="A rule's key as shown in brackets; empty: all.")

@@ -30,6 +30,7 @@ from pipeline.core.tables import (
     estimates_frame,
     event_tests_frame,
 )
+from pipeline.core.window import Window
 from pipeline.estimators.checks import with_checks
 from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
@@ -93,6 +94,7 @@ class Measured:
     ledger: Ledger
     findings: tuple[Finding, ...]
     tables: Tables
+    windows: tuple[Window, ...]
 
 
 def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Mapping[str, float]]:
@@ -108,7 +110,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     measured = measure_deals(study, clock)
     with clock.stage("tests"):
         tests = {key: entry(TESTS, key).load() for key in _tests(study, len(measured.deals))}
-        windows = study.event_time.all_windows
+        windows = measured.windows
         assumes = {key: entry(TESTS, key).assumes for key in tests}
         found = all_windows(
             measured.abnormal,
@@ -146,6 +148,17 @@ def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tu
     return measured.ledger.then(prepared.ledger), measured.findings + prepared.findings
 
 
+def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, int]:
+    """The chance of finding a mean of a given size with the study's deals, and their number.
+
+    Returns:
+        ``effect, power, deals_needed`` (effect decimal), and the deals measured.
+    """
+    measured = measure_deals(study, Clock(progress))
+    lead = measured.abnormal[study.expected_returns.headline]
+    return power_of(lead, study.event_time.headline_window), len(lead.deals)
+
+
 def measure_deals(study: Study, clock: Clock) -> Measured:
     """Inputs, day zero, abnormal returns and the screens between them."""
     options = plan.event_options(study)
@@ -163,6 +176,7 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
             tables.benchmarks,
             tables.factors,
             tables.factor_names,
+            plan.calendar_changes(study),
         )
         raise_errors(found)
         located, at_zero = locate(tables.deals, panels, calendars, options)
@@ -192,7 +206,9 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
     ledger = ledger.then(at_estimation, at_event)
     _refuse_empty(ledger.rows_kept, ledger)
     deals = first[usable][traded].reset_index(drop=True)
-    return Measured(deals, abnormal, panels, ledger, tables.findings + tuple(found), tables)
+    windows = plan.windows(study, bool(deals["timing"].str.startswith("date only").any()))
+    findings = tables.findings + tuple(found)
+    return Measured(deals, abnormal, panels, ledger, findings, tables, windows)
 
 
 def _tests(study: Study, deals: int) -> tuple[str, ...]:
@@ -261,7 +277,7 @@ def _placebo(study: Study, measured: Measured, mean: float, clock: Clock) -> Any
 def _with_outcomes(study: Study, measured: Measured) -> Any:
     time = study.event_time
     lead = measured.abnormal[study.expected_returns.headline]
-    return with_outcomes(measured.deals, lead, time.all_windows, time.share_of_days)
+    return with_outcomes(measured.deals, lead, measured.windows, time.share_of_days)
 
 
 def _fit(study: Study, key: str, prepared: Prepared) -> Column:
@@ -281,7 +297,8 @@ def _results(
     columns: tuple[Column, ...],
     placebo: Any,
 ) -> Results:
-    facts = plan.facts(study, leading_test(study.tests.headline, len(measured.deals)))
+    leading = leading_test(study.tests.headline, len(measured.deals))
+    facts = plan.facts(study, leading, measured.windows)
     lead_model = study.expected_returns.headline
     lead = measured.abnormal[lead_model]
     deals = prepared.deals if prepared else _with_outcomes(study, measured)

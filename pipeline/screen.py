@@ -15,6 +15,8 @@ from rich.table import Table
 from pipeline.core.rules import RULES, Rule, rule_title
 
 if TYPE_CHECKING:
+    import pandas as pd
+
     from pipeline.core.findings import Finding, InputProblem
     from pipeline.core.ledger import Ledger
     from pipeline.core.results import Results
@@ -91,6 +93,24 @@ class Screen:
         for finding in findings:
             _show(console, finding)
         _ledger_totals(console, ledger)
+
+    def power(self, frame: pd.DataFrame, deals: int) -> None:
+        """Power by size of the true mean."""
+        if self.as_json:
+            print(json.dumps({"deals": deals, "power": frame.to_dict("records")}))
+            return
+        console = Console(highlight=False, markup=False)
+        if frame.empty:
+            console.print("Power needs at least two deals.")
+            return
+        console.print(f"{deals} deals, those that move together counted for less; 5% two-sided.\n")
+        table = Table(box=None, pad_edge=False, header_style="")
+        for name in ("true mean, bp", "chance of finding it", "deals needed for 80%"):
+            table.add_column(name, justify="right")
+        columns = (frame[name].astype(float) for name in ("effect", "power", "deals_needed"))
+        for effect, chance, needed in zip(*columns, strict=True):
+            table.add_row(f"{effect * 1e4:.0f}", f"{chance:.0%}", f"{needed:,.0f}")
+        console.print(table)
 
     def problem(self, fault: InputProblem) -> None:
         """Every finding on one screen."""

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import optimize, special
@@ -11,6 +11,7 @@ from pipeline.core.design import Design, FitOptions, SelectionRows
 from pipeline.core.estimate import ConfidenceSet, Estimate, EstimationFailed, Shape
 from pipeline.core.prices import Booleans, Floats
 from pipeline.estimators.algebra import refusal
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import (
     ErrorRule,
     cautions,
@@ -19,7 +20,6 @@ from pipeline.estimators.errors import (
     positive,
     words,
 )
-from pipeline.estimators.probit import limits
 from pipeline.estimators.sample import plain
 from pipeline.estimators.selection import check_rows
 from pipeline.estimators.treatment import binary_treatment
@@ -202,27 +202,14 @@ def _estimate(
     candidates: int,
     notes: tuple[str, ...],
 ) -> Estimate:
-    df, sentence = limits(rule)
     se = np.sqrt(np.diag(V))
     ends = imbens_manski(found.lower, found.upper, float(se[1]), float(se[2]), options.level)
     interval = ConfidenceSet(Shape.INTERVAL, *ends, options.level, f"{INTERVAL} around {LEE}")
     arm = "with" if found.treated_trimmed else "without"
-    return Estimate(
-        estimator="lee_bounds",
-        title="Trimming bounds",
-        estimand=f"bounds on the average effect of {design.treatment} on {design.outcome} among "
-        "candidates that announce with or without it, if it is as good as random among candidates "
-        "and moves announcing in one direction only",
-        names=(design.treatment,),
-        coefficients=np.array([found.difference]),
-        covariance=V[:1, :1],
-        df=df,
-        df_rule=sentence,
-        covariance_name=words(rule),
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+    plain_difference = Found((design.treatment,), np.array([found.difference]), V[:1, :1])
+    column = large_sample(design, options, rule, _labels(design, rule), plain_difference)
+    return replace(
+        column,
         fit={
             "lower": found.lower,
             "upper": found.upper,
@@ -240,6 +227,16 @@ def _estimate(
             f"deals {arm} the feature are set aside, lowest for one bound and highest for the "
             "other. The coefficient shown is the plain difference between them.",
         ),
+    )
+
+
+def _labels(design: Design, rule: ErrorRule) -> Labels:
+    return Labels(
+        estimator="lee_bounds",
+        title="Trimming bounds",
+        estimand=f"bounds on the average effect of {design.treatment} on {design.outcome} among "
+        "candidates that announce with or without it, if it is as good as random among candidates "
+        "and moves announcing in one direction only",
+        covariance=words(rule),
         citation=f"{LEE}; {INTERVAL}",
-        level=options.level,
     )

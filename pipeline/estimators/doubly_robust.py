@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from pipeline.core.design import Design, FitOptions
@@ -9,12 +11,12 @@ from pipeline.core.estimate import Estimate, EstimationFailed
 from pipeline.core.prices import Floats
 from pipeline.estimators.algebra import refuse_dependent
 from pipeline.estimators.balance import balance_facts, overlap
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import (
     ErrorRule,
     cautions,
     choose_errors,
     of_influence,
-    positive,
     words,
 )
 from pipeline.estimators.learners import (
@@ -26,7 +28,6 @@ from pipeline.estimators.learners import (
     probability_learner,
 )
 from pipeline.estimators.likelihood_report import multiplier
-from pipeline.estimators.probit import limits
 from pipeline.estimators.propensity import SUPPORTED, Observed, observed
 from pipeline.estimators.sample import plain
 from pipeline.estimators.weighting import estimand
@@ -91,35 +92,31 @@ def _doubly_robust(design: Design, options: FitOptions, *, on_treated: bool) -> 
         effect = float(psi.mean())
         influence = (psi - effect) / len(D)
         weights = np.where(D, 1 / p, 1 / (1 - p))
-    facts, warned = overlap(p, D)
-    balance, unbalanced = balance_facts(rows.X, rows.names, D, weights)
     clipped = float(np.mean(raw != p))
-    fitted = np.where(D, m1, m0) if not on_treated else m0
+    seen = ~D | (not on_treated)
+    facts, said = _diagnosed(rows, p, weights, np.where(D, m1, m0), seen)
+    facts |= {"clipped": clipped, "folds": float(folds.count)}
+    suffix, who = ("_treated", ", treated deals") if on_treated else ("", "")
+    meaning = estimand(design, on_treated=on_treated)
+    notes = (*rows.notes, folds.note, _learner_note(options), *_clip_note(clipped), *said)
+    labels = (f"doubly_robust{suffix}", f"Doubly robust{who}", AIPW, meaning)
+    return _estimate(design, options, rows.rule, labels, effect, influence, facts, notes)
+
+
+def _diagnosed(
+    rows: Observed, p: Floats, weights: Floats, fitted: Floats, seen: np.ndarray
+) -> tuple[dict[str, float], tuple[str, ...]]:
+    """Overlap, balance and how well the outcome was predicted where it is ``seen``."""
+    thin, warned = overlap(p, rows.D)
+    balance, unbalanced = balance_facts(rows.X, rows.names, rows.D, weights)
     facts = {
-        **facts,
+        **thin,
         **balance,
-        "clipped": clipped,
-        "outcome_r_squared": _explained(
-            rows.y, fitted, ~D if on_treated else np.ones(len(D), bool)
-        ),
-        "raw_difference": float(rows.y[D].mean() - rows.y[~D].mean()),
-        "treated": float(D.sum()),
-        "folds": float(folds.count),
+        "outcome_r_squared": _explained(rows.y, fitted, seen),
+        "raw_difference": float(rows.y[rows.D].mean() - rows.y[~rows.D].mean()),
+        "treated": float(rows.D.sum()),
     }
-    notes = (*rows.notes, folds.note, _learner_note(options), *_clip_note(clipped))
-    key, title = "doubly_robust", "Doubly robust"
-    if on_treated:
-        key, title = key + "_treated", title + ", treated deals"
-    return _estimate(
-        design,
-        options,
-        rows.rule,
-        (key, title, AIPW, estimand(design, on_treated=on_treated)),
-        effect,
-        influence,
-        facts,
-        (*notes, *warned, *unbalanced),
-    )
+    return facts, (*warned, *unbalanced)
 
 
 def _check_arms(rows: Observed, folds: Folds) -> None:
@@ -196,20 +193,17 @@ def partially_linear(design: Design, options: FitOptions) -> Estimate:
         "treatment_r_squared": _explained(D, D - v, every),
         "folds": float(folds.count),
     }
-    meaning = (
+    labels = ("partially_linear", "Partially linear", LINEAR, _partial_meaning(design))
+    influence = v * (u - effect * v) / left
+    notes = (*notes, folds.note, _learner_note(options))
+    return _estimate(design, options, rule, labels, effect, influence, facts, notes)
+
+
+def _partial_meaning(design: Design) -> str:
+    return (
         f"average effect of one more unit of {design.treatment} on {design.outcome}, weighted "
         "towards deals whose treatment the controls leave open, if nothing that moves both is "
         "missing from the controls"
-    )
-    return _estimate(
-        design,
-        options,
-        rule,
-        ("partially_linear", "Partially linear", LINEAR, meaning),
-        effect,
-        v * (u - effect * v) / left,
-        facts,
-        (*notes, folds.note, _learner_note(options)),
     )
 
 
@@ -223,26 +217,21 @@ def _estimate(
     facts: dict[str, float],
     notes: tuple[str, ...],
 ) -> Estimate:
-    df, sentence = limits(rule)
     errors = of_influence(rule, influence[:, None], 1)
     names = (design.treatment,)
-    return Estimate(
+    called = Labels(
         estimator=labels[0],
         title=labels[1],
         estimand=labels[3],
-        names=names,
-        coefficients=np.array([effect]),
-        covariance=positive(errors.covariance, names),
-        df=df,
-        df_rule=sentence,
-        covariance_name=f"of the mean of orthogonal scores, {words(rule)}",
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+        covariance=f"of the mean of orthogonal scores, {words(rule)}",
+        citation=labels[2],
+    )
+    column = large_sample(
+        design, options, rule, called, Found(names, np.array([effect]), errors.covariance)
+    )
+    return replace(
+        column,
         fit={**facts, **multiplier(rule)},
         scores=influence[:, None],
         notes=(*notes, *cautions(rule, errors.floored)),
-        citation=labels[2],
-        level=options.level,
     )

@@ -19,6 +19,7 @@ from pipeline.estimators.probit import LOG_ROOT_TWO_PI, mills
 GRID = (0.0, 0.2, 0.4, 0.6, 0.8, 0.9, 0.95, 0.99, 0.999)
 MOST_STEPS = 200
 CONVERGED = 1e-16
+ON_THE_WAY = 1e-9
 EDGE = 0.998
 FLAT = 1e-6
 WORST_CONDITION = 1e13
@@ -188,7 +189,7 @@ class _Ascent:
     converged: bool
 
 
-def _ascend(model: Joint, theta: Floats, free: Booleans) -> _Ascent:
+def _ascend(model: Joint, theta: Floats, free: Booleans, enough: float = CONVERGED) -> _Ascent:
     """Newton's steps with the curvature's sign put right, halved while they overshoot."""
     theta = theta.copy()
     at = np.flatnonzero(free)
@@ -202,14 +203,14 @@ def _ascend(model: Joint, theta: Floats, free: Booleans) -> _Ascent:
         decrement = float(slope @ move)
         if not np.isfinite(decrement):
             break
-        if decrement <= CONVERGED and values[0] > 0:
+        if decrement <= enough and values[0] > 0:
             theta[at] += move
             return _Ascent(theta, here.value, decrement, True)
         moved = _halved(model, theta, at, move, here.value)
         if moved is None:
             break
         theta, here = moved
-    return _Ascent(theta, here.value, decrement, decrement <= 1e4 * CONVERGED)
+    return _Ascent(theta, here.value, decrement, decrement <= 1e4 * enough)
 
 
 def _halved(
@@ -304,7 +305,7 @@ def _profile(unit: Joint, gamma: Floats) -> dict[float, _Ascent]:
         for rho in GRID[1:]:
             theta = theta.copy()
             theta[-1] = np.arctanh(side * rho)
-            found[side * rho] = _ascend(unit, theta, free)
+            found[side * rho] = _ascend(unit, theta, free, ON_THE_WAY)
             theta = found[side * rho].theta
     return dict(sorted(found.items()))
 

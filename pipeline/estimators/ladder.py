@@ -11,7 +11,7 @@ from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import EstimationFailed, Shape
 from pipeline.core.findings import InputProblem
 from pipeline.estimators import wild
-from pipeline.estimators.errors import CLUSTER, ErrorRule
+from pipeline.estimators.errors import choose_errors
 from pipeline.estimators.least_squares import fixed_effects, ols
 from pipeline.estimators.sample import Sample, plain, within
 
@@ -163,7 +163,8 @@ def _bootstraps(design: Design, name: str, level: float, draws: int) -> Iterator
 def _clustered(design: Design) -> Sample:
     if design.effects:
         return within(design, FitOptions(cluster=True))
-    return plain(design, ErrorRule(CLUSTER, dict(design.clusters), design.n))
+    rule = choose_errors(design.clusters, design.n, FitOptions(cluster=True), otherwise="hc1")
+    return plain(design, rule)
 
 
 def _rung(title: str, found: wild.Bootstrapped) -> Rung:

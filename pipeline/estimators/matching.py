@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import sparse
@@ -13,9 +13,9 @@ from pipeline.core.estimate import Estimate
 from pipeline.core.prices import Booleans, Floats
 from pipeline.estimators.algebra import refusal
 from pipeline.estimators.balance import balance_facts
-from pipeline.estimators.errors import cautions, of_influence, positive, words
+from pipeline.estimators.column import Found, Labels, large_sample
+from pipeline.estimators.errors import Sandwich, cautions, of_influence, words
 from pipeline.estimators.likelihood_report import multiplier
-from pipeline.estimators.probit import limits
 from pipeline.estimators.propensity import SUPPORTED, Observed, observed
 from pipeline.estimators.weighting import estimand
 
@@ -89,42 +89,45 @@ def _matching(design: Design, options: FitOptions, *, on_treated: bool) -> Estim
     effect = float(each[matched].mean())
     plain = float((sign * (rows.y - stand_in))[matched].mean())
     influence = _influence(rows, found, m1, m0, effect, on_treated=on_treated)[:, None]
-    names = (design.treatment,)
-    floored = False
     if rows.rule.kind == OWN:
         V = np.array([[_variance(rows, Z, found, each, effect, on_treated=on_treated)]])
+        errors = Sandwich(V, influence)
     else:
         errors = of_influence(rows.rule, influence, 1)
-        V, floored = errors.covariance, errors.floored
     weights = np.where(matched, 1.0, 0.0) + found.K
-    balance, unbalanced = balance_facts(rows.X, rows.names, rows.D, weights)
-    df, sentence = limits(rows.rule)
-    suffix = "_treated" if on_treated else ""
-    return Estimate(
+    facts = _facts(rows, found, Z, options, plain)
+    return _column(design, options, rows, errors, effect, weights, facts, on_treated=on_treated)
+
+
+def _column(
+    design: Design,
+    options: FitOptions,
+    rows: Observed,
+    errors: Sandwich,
+    effect: float,
+    weights: Floats,
+    facts: dict[str, float],
+    *,
+    on_treated: bool,
+) -> Estimate:
+    own = rows.rule.kind == OWN
+    suffix, who = ("_treated", ", treated deals") if on_treated else ("", "")
+    labels = Labels(
         estimator=f"matching{suffix}",
-        title="Nearest-neighbour matching" + (", treated deals" if on_treated else ""),
+        title=f"Nearest-neighbour matching{who}",
         estimand=estimand(design, on_treated=on_treated),
-        names=names,
-        coefficients=np.array([effect]),
-        covariance=positive(V, names),
-        df=df,
-        df_rule=sentence,
-        covariance_name="Abadie-Imbens, robust to unequal variances, deals independent"
-        if rows.rule.kind == OWN
+        covariance="Abadie-Imbens, robust to unequal variances, deals independent"
+        if own
         else f"linear representation of the matching estimator, {words(rows.rule)}",
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rows.rule.counts,
-        fit={
-            **_facts(rows, found, Z, options, plain),
-            **balance,
-            **(multiplier(rows.rule) if rows.rule.kind != OWN else {}),
-        },
-        scores=influence if rows.rule.kind != OWN else None,
-        notes=(*rows.notes, *cautions(rows.rule, floored), *unbalanced),
         citation=CITATION,
-        level=options.level,
+    )
+    balance, unbalanced = balance_facts(rows.X, rows.names, rows.D, weights)
+    found = Found((design.treatment,), np.array([effect]), errors.covariance)
+    return replace(
+        large_sample(design, options, rows.rule, labels, found),
+        fit={**facts, **balance, **({} if own else multiplier(rows.rule))},
+        scores=None if own else errors.influence,
+        notes=(*rows.notes, *cautions(rows.rule, errors.floored), *unbalanced),
     )
 
 

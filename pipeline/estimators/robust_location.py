@@ -122,13 +122,6 @@ def _column(
     found = solver(sample, design.outcome)
     k = len(sample.names)
     df, sentence = degrees_of_freedom(rule, k)
-    least = solve(sample.X, sample.y)[0][sample.names.index(design.treatment)]
-    facts = {
-        **found.facts,
-        "least_squares": float(least),
-        "condition_number": diagnostics.condition_number(sample.X),
-        "small_sample_factor": factor(rule, k),
-    }
     return Estimate(
         estimator=estimator,
         title=title,
@@ -144,11 +137,22 @@ def _column(
         treatment=design.treatment,
         outcome=design.outcome,
         clusters=rule.counts,
-        fit={name: value for name, value in facts.items() if not np.isnan(value)},
+        fit=_facts(design, sample, found),
         scores=found.errors.influence,
         notes=(*sample.notes, *cautions(rule, found.errors.floored), *found.notes),
         level=options.level,
     )
+
+
+def _facts(design: Design, sample: Sample, found: Robust) -> dict[str, float]:
+    least = solve(sample.X, sample.y)[0][sample.names.index(design.treatment)]
+    facts = {
+        **found.facts,
+        "least_squares": float(least),
+        "condition_number": diagnostics.condition_number(sample.X),
+        "small_sample_factor": factor(sample.rule, len(sample.names)),
+    }
+    return {name: value for name, value in facts.items() if not np.isnan(value)}
 
 
 def _median(sample: Sample, outcome: str) -> Robust:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -14,7 +14,6 @@ from pipeline.core.estimate import (
     Shape,
     Tested,
     TestResult,
-    t_reach,
     t_test,
     z_test,
 )
@@ -27,6 +26,7 @@ from pipeline.estimators.anderson_rubin import (
     anderson_rubin_set,
     anderson_rubin_test,
 )
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import (
     ErrorRule,
     cautions,
@@ -241,7 +241,6 @@ def _estimate(
     selection: SelectionRows,
     notes: tuple[str, ...],
 ) -> Estimate:
-    df, sentence = limits(rule)
     L = len(design.instruments)
     left = partial_out(
         np.column_stack([columns.X[:, columns.at], columns.Z]), columns.spread[:, L:]
@@ -249,35 +248,38 @@ def _estimate(
     effective = strength.effective_f(
         left[:, 0], left[:, 1:], forms.treatment, forms.covariance[L:, L:]
     )
-    sets = _sets(options, step, V, forms, columns.at, df, sentence)
     weak = effective.statistic < strength.STRONG
-    return Estimate(
-        estimator="selection_two_stage",
-        title="Selection and instruments",
-        estimand=_estimand(design, selection),
-        names=(*design.names, LAMBDA),
-        coefficients=step.coefficients,
-        covariance=V,
-        df=df,
-        df_rule=sentence,
-        covariance_name=f"stacked moments of both steps, {words(rule)}",
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+    column = large_sample(
+        design,
+        options,
+        rule,
+        _labels(design, selection, rule),
+        Found((*design.names, LAMBDA), step.coefficients, V),
+    )
+    sets = _sets(column, forms)
+    return replace(
+        column,
         fit=_facts(columns, step, left, selection),
         tests={
             "effective_f": effective,
             "anderson_rubin": anderson_rubin_test(forms),
-            "no_selection": _no_selection(step, V, df),
+            "no_selection": _no_selection(step, V, column.df),
             "excluded_variables": excluded_test(stage, selection),
         },
         stages=(stage,),
         robust_set=sets["anderson_rubin"] if weak else None,
         sets=sets,
         notes=(*notes, *_notes(design, selection, effective), *equation_notes(design, selection)),
+    )
+
+
+def _labels(design: Design, selection: SelectionRows, rule: ErrorRule) -> Labels:
+    return Labels(
+        estimator="selection_two_stage",
+        title="Selection and instruments",
+        estimand=_estimand(design, selection),
+        covariance=f"stacked moments of both steps, {words(rule)}",
         citation=CITATION,
-        level=options.level,
     )
 
 
@@ -291,20 +293,13 @@ def _estimand(design: Design, selection: SelectionRows) -> str:
     )
 
 
-def _sets(
-    options: FitOptions,
-    step: SecondStep,
-    V: Floats,
-    forms: ReducedForms,
-    at: int,
-    df: float,
-    sentence: str,
-) -> dict[str, ConfidenceSet]:
-    half = t_reach(options.level, df) * float(np.sqrt(V[at, at]))
-    point = float(step.coefficients[at])
+def _sets(column: Estimate, forms: ReducedForms) -> dict[str, ConfidenceSet]:
+    term = column.term(column.treatment)
     return {
-        "wald": ConfidenceSet(Shape.INTERVAL, point - half, point + half, options.level, sentence),
-        "anderson_rubin": anderson_rubin_set(forms, options.level),
+        "wald": ConfidenceSet(
+            Shape.INTERVAL, term["ci_low"], term["ci_high"], column.level, column.df_rule
+        ),
+        "anderson_rubin": anderson_rubin_set(forms, column.level),
     }
 
 

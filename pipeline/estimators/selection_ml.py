@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 
 from pipeline.core.design import Design, FitOptions, SelectionRows
@@ -9,6 +11,7 @@ from pipeline.core.estimate import Estimate
 from pipeline.core.prices import Floats
 from pipeline.estimators import joint_normal
 from pipeline.estimators.algebra import refuse_dependent
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import ErrorRule, cautions, choose_errors, words
 from pipeline.estimators.joint_normal import Joint, Maximum
 from pipeline.estimators.likelihood_report import (
@@ -30,6 +33,7 @@ from pipeline.estimators.selection import (
     second_step,
 )
 
+SUPPORTED = ("classical", "hc0", "hc1")
 CITATION = "Heckman (1974); Olsen (1982); Maddala (1983), sec. 9.2"
 
 
@@ -54,12 +58,9 @@ def heckman_likelihood(design: Design, options: FitOptions) -> Estimate:
             information is singular.
     """
     selection = checked_selection(design, options)
+    candidates = len(selection.selected)
     rule = choose_errors(
-        selection.clusters,
-        len(selection.selected),
-        options,
-        otherwise="classical",
-        supported=("classical", "hc0", "hc1"),
+        selection.clusters, candidates, options, otherwise="classical", supported=SUPPORTED
     )
     notes = plain(design, rule).notes
     refuse_dependent(design.X, design.names)
@@ -68,29 +69,18 @@ def heckman_likelihood(design: Design, options: FitOptions) -> Estimate:
     V, floored = likelihood_covariance(found, rule, names)
     q = selection.W.shape[1]
     stage = _stage(selection, found, V[:q, :q], rule, options)
-    df, sentence = limits(rule)
-    return Estimate(
-        estimator="heckman_likelihood",
-        title="Heckman maximum likelihood",
-        estimand=estimand(design, selection),
-        names=design.names,
-        coefficients=found.beta,
-        covariance=V[q:-2, q:-2],
-        df=df,
-        df_rule=sentence,
-        covariance_name=likelihood_words(rule, words(rule)),
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+    outcome = Found(design.names, found.beta, V[q:-2, q:-2])
+    column = large_sample(design, options, rule, _labels(design, selection, rule), outcome)
+    return replace(
+        column,
         fit={
             **facts(found, V),
-            "candidates": float(len(selection.selected)),
+            "candidates": float(candidates),
             "selected": float(selection.selected.sum()),
         },
         tests={
             "excluded_variables": excluded_test(stage, selection),
-            **correlation_tests(found, V, df, rule, CITATION),
+            **correlation_tests(found, V, column.df, rule, CITATION),
         },
         stages=(stage,),
         notes=(
@@ -99,8 +89,16 @@ def heckman_likelihood(design: Design, options: FitOptions) -> Estimate:
             *likelihood_notes(found),
             *equation_notes(design, selection),
         ),
+    )
+
+
+def _labels(design: Design, selection: SelectionRows, rule: ErrorRule) -> Labels:
+    return Labels(
+        estimator="heckman_likelihood",
+        title="Heckman maximum likelihood",
+        estimand=estimand(design, selection),
+        covariance=likelihood_words(rule, words(rule)),
         citation=CITATION,
-        level=options.level,
     )
 
 

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy import special
@@ -13,6 +13,7 @@ from pipeline.core.prices import Booleans, Floats
 from pipeline.estimators import diagnostics
 from pipeline.estimators.algebra import refuse_dependent, solve
 from pipeline.estimators.balance import overlap
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import (
     ErrorRule,
     cautions,
@@ -87,34 +88,30 @@ def switching_regression(design: Design, options: FitOptions) -> Estimate:
     errors = of_influence(rule, influence, 1)
     V = positive(errors.covariance, names)
     stage = probit_estimate(first, chosen.equation, rule, options)
-    df, sentence = limits(rule)
     facts, warned = overlap(np.asarray(special.ndtr(first.index)), chosen.D)
-    return Estimate(
-        estimator="switching_regression",
-        title="Switching regression",
-        estimand=f"average effect of {design.treatment} on {design.outcome} over all deals (ATE), "
-        "over the deals that chose it (ATT) and over the others (ATU), under joint normality of "
-        f"choice and both outcomes and {_moved(design)}",
-        names=names,
-        coefficients=effects,
-        covariance=V,
-        df=df,
-        df_rule=sentence,
-        covariance_name=f"stacked moments of all steps, {words(rule)}",
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+    column = large_sample(design, options, rule, _labels(design, rule), Found(names, effects, V))
+    return replace(
+        column,
         fit={**_facts(design, chosen, regimes), **facts, **multiplier(rule)},
         tests={
-            "equal_effects": _equal_effects(influence, effects, rule, df),
+            "equal_effects": _equal_effects(influence, effects, rule, column.df),
             "excluded_variables": excluded_from_outcome(design, stage),
         },
         stages=(stage, *_arms(design, chosen, regimes, rule, options)),
         scores=influence,
         notes=(*notes, *cautions(rule, errors.floored), *warned),
+    )
+
+
+def _labels(design: Design, rule: ErrorRule) -> Labels:
+    return Labels(
+        estimator="switching_regression",
+        title="Switching regression",
+        estimand=f"average effect of {design.treatment} on {design.outcome} over all deals (ATE), "
+        "over the deals that chose it (ATT) and over the others (ATU), under joint normality of "
+        f"choice and both outcomes and {_moved(design)}",
+        covariance=f"stacked moments of all steps, {words(rule)}",
         citation=CITATION,
-        level=options.level,
     )
 
 

@@ -13,6 +13,7 @@ from pipeline.core.prices import Booleans, Floats
 from pipeline.estimators import diagnostics
 from pipeline.estimators.algebra import refusal, refuse_dependent, solve
 from pipeline.estimators.balance import overlap
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import (
     ErrorRule,
     cautions,
@@ -27,7 +28,6 @@ from pipeline.estimators.probit import (
     Equation,
     ProbitFit,
     fit_probit,
-    limits,
     mills,
     probit_estimate,
 )
@@ -149,34 +149,32 @@ def treatment_two_step(design: Design, options: FitOptions) -> Estimate:
     V, influence, floored = _covariance(step, first, chosen, rule)
     V = positive(V, names)
     stage = probit_estimate(first, chosen.equation, rule, options)
-    df, sentence = limits(rule)
     facts, warned = overlap(np.asarray(special.ndtr(first.index)), chosen.D)
-    return Estimate(
-        estimator="treatment_two_step",
-        title="Control function",
-        estimand=joint_estimand(design),
-        names=names,
-        coefficients=step.coefficients,
-        covariance=V,
-        df=df,
-        df_rule=sentence,
-        covariance_name="two-step, counting the error of the treatment equation"
-        if rule.kind == "classical"
-        else f"stacked moments of both steps, {words(rule)}",
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+    column = large_sample(
+        design, options, rule, _labels(design, rule), Found(names, step.coefficients, V)
+    )
+    return replace(
+        column,
         fit={**_facts(design, step, chosen), **facts, **multiplier(rule)},
         tests={
-            "exogeneity": _exogeneity(step, V, df),
+            "exogeneity": _exogeneity(step, V, column.df),
             "excluded_variables": excluded_from_outcome(design, stage),
         },
         stages=(stage,),
         scores=influence,
         notes=(*notes, *cautions(rule, floored), *warned, *_notes(design, step)),
+    )
+
+
+def _labels(design: Design, rule: ErrorRule) -> Labels:
+    return Labels(
+        estimator="treatment_two_step",
+        title="Control function",
+        estimand=joint_estimand(design),
+        covariance="two-step, counting the error of the treatment equation"
+        if rule.kind == "classical"
+        else f"stacked moments of both steps, {words(rule)}",
         citation=CITATION,
-        level=options.level,
     )
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from scipy import special
 
@@ -11,6 +13,7 @@ from pipeline.core.prices import Floats
 from pipeline.estimators import joint_normal
 from pipeline.estimators.algebra import solve
 from pipeline.estimators.balance import overlap
+from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import ErrorRule, cautions, choose_errors, words
 from pipeline.estimators.joint_normal import Joint, Maximum
 from pipeline.estimators.likelihood_report import (
@@ -60,23 +63,12 @@ def treatment_likelihood(design: Design, options: FitOptions) -> Estimate:
     names = (*chosen.equation.names, *design.names, "ln sigma", "atanh rho")
     V, floored = likelihood_covariance(found, rule, names)
     stage = _stage(chosen, found, V[:q, :q], rule, options)
-    df, sentence = limits(rule)
     thin, warned = overlap(np.asarray(special.ndtr(chosen.equation.W @ found.gamma)), chosen.D)
     alone = solve(design.X, design.y)[0]
-    return Estimate(
-        estimator="treatment_likelihood",
-        title="Endogenous treatment, maximum likelihood",
-        estimand=joint_estimand(design),
-        names=design.names,
-        coefficients=found.beta,
-        covariance=V[q:-2, q:-2],
-        df=df,
-        df_rule=sentence,
-        covariance_name=likelihood_words(rule, words(rule)),
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rule.counts,
+    outcome = Found(design.names, found.beta, V[q:-2, q:-2])
+    column = large_sample(design, options, rule, _labels(design, rule), outcome)
+    return replace(
+        column,
         fit={
             **facts(found, V),
             **thin,
@@ -86,13 +78,21 @@ def treatment_likelihood(design: Design, options: FitOptions) -> Estimate:
         },
         tests={
             "excluded_variables": excluded_from_outcome(design, stage),
-            **correlation_tests(found, V, df, rule, CITATION),
+            **correlation_tests(found, V, column.df, rule, CITATION),
         },
         stages=(stage,),
         scores=found.influence[:, q:-2],
         notes=(*notes, *cautions(rule, floored), *likelihood_notes(found), *warned),
+    )
+
+
+def _labels(design: Design, rule: ErrorRule) -> Labels:
+    return Labels(
+        estimator="treatment_likelihood",
+        title="Endogenous treatment, maximum likelihood",
+        estimand=joint_estimand(design),
+        covariance=likelihood_words(rule, words(rule)),
         citation=CITATION,
-        level=options.level,
     )
 
 

@@ -66,9 +66,14 @@ def variance_weighted(design: Design, options: FitOptions) -> Estimate:
     weights = _weights(design, sample)
     root = np.sqrt(weights.values)
     weighed = replace(sample, y=root * sample.y, X=root[:, None] * sample.X)
-    fitted = fit_sample(weighed, design)
-    k, at = len(sample.names), sample.names.index(design.treatment)
-    df, sentence = degrees_of_freedom(rule, k)
+    return _estimate(design, options, weighed, fit_sample(weighed, design), weights)
+
+
+def _estimate(
+    design: Design, options: FitOptions, sample: Sample, fitted: Fitted, weights: Weights
+) -> Estimate:
+    rule, at = sample.rule, sample.names.index(design.treatment)
+    df, sentence = degrees_of_freedom(rule, len(sample.names))
     if fitted.few is not None:
         df = float(fitted.few.df[at])
         sentence = few_clusters.df_sentence(rule, design.treatment, df)
@@ -87,9 +92,9 @@ def variance_weighted(design: Design, options: FitOptions) -> Estimate:
         treatment=design.treatment,
         outcome=design.outcome,
         clusters=rule.counts,
-        fit=_facts(design, weighed, fitted, weights),
+        fit=_facts(design, sample, fitted, weights),
         scores=fitted.errors.influence,
-        notes=_notes(weighed, fitted, weights, at),
+        notes=_notes(sample, fitted, weights, at),
         citation=CITATION,
         level=options.level,
     )

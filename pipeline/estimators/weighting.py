@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 from scipy import special
 
@@ -11,9 +13,9 @@ from pipeline.core.findings import InputProblem
 from pipeline.core.prices import Floats
 from pipeline.estimators.algebra import refusal
 from pipeline.estimators.balance import balance_facts, overlap
-from pipeline.estimators.errors import cautions, of_influence, positive, words
+from pipeline.estimators.column import Found, Labels, large_sample
+from pipeline.estimators.errors import cautions, of_influence, words
 from pipeline.estimators.likelihood_report import multiplier
-from pipeline.estimators.probit import limits
 from pipeline.estimators.propensity import Logit, Observed, fit_logit, observed
 
 IPW = "Hirano, Imbens and Ridder (2003); Lunceford and Davidian (2004)"
@@ -121,22 +123,18 @@ def weighted_estimate(
     influence = found[2][:, None]
     errors = of_influence(rows.rule, influence, 1)
     balance, unbalanced = balance_facts(rows.X, rows.names, rows.D, weights)
-    df, sentence = limits(rows.rule)
-    names = (design.treatment,)
-    return Estimate(
+    called = Labels(
         estimator=labels[0],
         title=labels[1],
         estimand=meaning,
-        names=names,
-        coefficients=np.array([found[0] - found[1]]),
-        covariance=positive(errors.covariance, names),
-        df=df,
-        df_rule=sentence,
-        covariance_name=f"stacked moments of weights and means, {words(rows.rule)}",
-        n=design.n,
-        treatment=design.treatment,
-        outcome=design.outcome,
-        clusters=rows.rule.counts,
+        covariance=f"stacked moments of weights and means, {words(rows.rule)}",
+        citation=labels[2],
+    )
+    effect = np.array([found[0] - found[1]])
+    difference = Found((design.treatment,), effect, errors.covariance)
+    column = large_sample(design, options, rows.rule, called, difference)
+    return replace(
+        column,
         fit={
             "mean_treated": found[0],
             "mean_untreated": found[1],
@@ -148,8 +146,6 @@ def weighted_estimate(
         },
         scores=influence,
         notes=(*rows.notes, *cautions(rows.rule, errors.floored), *more[1], *unbalanced),
-        citation=labels[2],
-        level=options.level,
     )
 
 

@@ -17,7 +17,7 @@ from scipy import optimize
 from pipeline.core.design import Design
 from pipeline.core.estimate import ConfidenceSet, Shape
 from pipeline.core.prices import Floats, Integers
-from pipeline.estimators.algebra import partial_out
+from pipeline.estimators.algebra import partial_out, refusal
 from pipeline.estimators.covariance import cluster_factor, cluster_sums
 from pipeline.estimators.few_clusters import Basis, basis_of
 from pipeline.estimators.sample import Sample
@@ -29,6 +29,7 @@ FEW_FOR_SIGNS = 11
 SIX_POINTS = np.array([-np.sqrt(1.5), -1.0, -np.sqrt(0.5), np.sqrt(0.5), 1.0, np.sqrt(1.5)])
 """Webb's weights, equally likely."""
 TIES = 1e-9
+VANISHING = 1e-10
 BLOCK = 2048
 FARTHEST = 2.0**40
 UNIFORM_SEEN = 20
@@ -95,6 +96,9 @@ def scores_of(sample: Sample, basis: Basis, at: int) -> Scores:
 
     With d = X(X'X)⁻¹c, a cluster's score is d_g'M(v∘ũ) = v_g d_g'ũ_g - (Q_g'd_g)'Σ_h v_h Q_h'ũ_h
     and ũ moves along M₋ⱼxⱼ as the null moves (MacKinnon, Nielsen and Webb 2023, sec. 5).
+
+    Raises:
+        InputProblem: ``cluster_decides`` if the CR1 error is zero.
     """
     d = basis.loads[:, at]
     both = np.column_stack([sample.y, sample.X[:, at]])
@@ -109,7 +113,16 @@ def scores_of(sample: Sample, basis: Basis, at: int) -> Scores:
     k = len(sample.names) + sample.counted
     root = float(np.sqrt(cluster_factor(sample.n, basis.groups, k)))
     cut = cluster_sums(basis.Q * d[:, None], basis.codes)
-    return Scores(fit, world(x), cut, estimate, root * float(np.linalg.norm(fit.own)), root)
+    size = float(np.linalg.norm(fit.own))
+    if not size > VANISHING * float(np.linalg.norm(d * (y - estimate * x))):
+        raise refusal(
+            "cluster_decides",
+            sample.names[at],
+            f"the clusters' residuals say nothing about the coefficient of {sample.names[at]}",
+            f"{sample.names[at]} that varies in several clusters",
+            "cluster by a finer dimension, or do not read this coefficient",
+        )
+    return Scores(fit, world(x), cut, estimate, root * size, root)
 
 
 def weight_blocks(
@@ -265,7 +278,8 @@ def bootstrap(
     (2023). Same data and seed, same answer.
 
     Raises:
-        InputProblem: as :func:`~pipeline.estimators.few_clusters.basis_of`.
+        InputProblem: as :func:`~pipeline.estimators.few_clusters.basis_of` and
+            :func:`scores_of`.
     """
     basis = basis_of(sample, design, codes)
     scores = scores_of(sample, basis, sample.names.index(design.treatment))
@@ -273,21 +287,23 @@ def bootstrap(
     low_rank = _low_rank(scores, kind, enumerated)
     drawn = draw_signs(scores, blocks) if low_rank else draw(scores, blocks, enumerated)
     t = scores.estimate / scores.std_error
-    ends = [_end(scores, drawn, 1 - level, side) for side in (1.0, -1.0)]
-    low, high = (scores.estimate - end for end in ends)
-    unbounded = bool(np.isinf(low) and np.isinf(high))
-    shown = (float("nan"),) * 2 if unbounded else (low, high)
-    made = "all sign vectors" if enumerated else f"{draws} draws"
-    method = f"inversion of the wild cluster bootstrap test ({made})"
-    shape = Shape.LINE if unbounded else Shape.INTERVAL
     return Bootstrapped(
         statistic=t,
         std_error=scores.std_error,
         p_value=drawn.p_value(t, scores.root, scores.estimate),
-        set=ConfidenceSet(shape, *shown, level, method),
+        set=_set(scores, drawn, level),
         draws=len(drawn.top) * (2 if enumerated else 1),
         enumerated=enumerated,
     )
+
+
+def _set(scores: Scores, drawn: Draws, level: float) -> ConfidenceSet:
+    low, high = (scores.estimate - _end(scores, drawn, 1 - level, side) for side in (1.0, -1.0))
+    made = "all sign vectors" if drawn.enumerated else f"{len(drawn.top)} draws"
+    method = f"inversion of the wild cluster bootstrap test ({made})"
+    if np.isinf(low) and np.isinf(high):
+        return ConfidenceSet(Shape.LINE, float("nan"), float("nan"), level, method)
+    return ConfidenceSet(Shape.INTERVAL, low, high, level, method)
 
 
 def p_value(

@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 
 import numpy as np
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import Dates, Floats, PricePanel
-from pipeline.returns.sessions import Sessions, sessions_between
+from pipeline.returns.sessions import CalendarChange, Sessions, changed, sessions_between
 
 CLOSED_SHARE = 0.5
 OFF_SESSION_SHARE = 0.02
@@ -24,6 +24,7 @@ def build_panels(
     benchmarks: pd.DataFrame,
     factors: pd.DataFrame | None,
     factor_names: tuple[str, ...],
+    changes: Mapping[str, CalendarChange] | None = None,
 ) -> tuple[dict[str, PricePanel], dict[str, Sessions], list[Finding]]:
     """One panel an exchange, with findings about prices, benchmark and calendar.
 
@@ -33,6 +34,7 @@ def build_panels(
         benchmarks: exchange, date, close.
         factors: exchange, date, one column a factor; or None.
         factor_names: the factor columns to keep.
+        changes: exchange -> what the desk knows better than its calendar.
     """
     panels: dict[str, PricePanel] = {}
     calendars: dict[str, Sessions] = {}
@@ -44,6 +46,8 @@ def build_panels(
         sessions = sessions_between(
             name, f"{first:%Y-%m-%d}", f"{last + pd.Timedelta(days=10):%Y-%m-%d}"
         )
+        if changes and name in changes:
+            sessions = changed(sessions, changes[name])
         own = prices[prices["security"].isin(listed["security"])]
         panel, more = _panel(sessions, own, benchmarks, factors, factor_names)
         panels[name], calendars[name] = panel, sessions

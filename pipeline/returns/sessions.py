@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from datetime import UTC, date, datetime, time
 from functools import lru_cache
+from zoneinfo import ZoneInfo
 
 import numpy as np
 import pandas as pd
@@ -40,6 +42,43 @@ class Sessions:
     opens: Dates
     closes: Dates
     zone: str
+
+
+@dataclass(frozen=True, slots=True)
+class CalendarChange:
+    """What the desk knows better than the calendar of one exchange.
+
+    Attributes:
+        closed: dates without a session.
+        closes: date -> local closing time of a session, which may be one the calendar lacks.
+    """
+
+    closed: tuple[date, ...] = ()
+    closes: tuple[tuple[date, time], ...] = ()
+
+
+def changed(sessions: Sessions, change: CalendarChange) -> Sessions:
+    """The sessions with dates taken out, closing times moved and sessions added."""
+    away = np.array([str(day) for day in change.closed], dtype="datetime64[D]")
+    keep = ~np.isin(sessions.days, away)
+    days, opens, closes = sessions.days[keep], sessions.opens[keep], sessions.closes[keep]
+    for day, clock in change.closes:
+        instant = _instant(day, clock, sessions.zone)
+        at = int(np.searchsorted(days, np.datetime64(day, "D")))
+        if at < len(days) and days[at] == np.datetime64(day, "D"):
+            closes = closes.copy()
+            closes[at] = instant
+            continue
+        days = np.insert(days, at, np.datetime64(day, "D"))
+        # Nothing depends on the opening of an added session but that it comes before the close.
+        opens = np.insert(opens, at, instant - np.timedelta64(1, "h"))
+        closes = np.insert(closes, at, instant)
+    return Sessions(sessions.exchange, days, opens, closes, sessions.zone)
+
+
+def _instant(day: date, clock: time, zone: str) -> np.datetime64:
+    local = datetime.combine(day, clock, tzinfo=ZoneInfo(zone))
+    return np.datetime64(local.astimezone(UTC).replace(tzinfo=None), "s")
 
 
 @lru_cache(maxsize=32)

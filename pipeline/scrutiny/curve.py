@@ -93,7 +93,9 @@ def _cells(
     b = Y.T @ left / size
     # Σd²(y - bd)² without a third dimension: three products of the powers.
     squares = left**2
-    spread = (Y**2).T @ squares - 2 * b * (Y.T @ (squares * left)) + b**2 * np.sum(squares**2, axis=0)
+    spread = (
+        (Y**2).T @ squares - 2 * b * (Y.T @ (squares * left)) + b**2 * np.sum(squares**2, axis=0)
+    )
     m, k = Y.shape[0], controls.shape[1] + 1
     error = np.sqrt(np.maximum(spread, 0.0) * m / (m - k)) / size
     return np.asarray(b), np.asarray(b / np.where(error > 0, error, np.nan))

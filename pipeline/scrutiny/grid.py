@@ -85,7 +85,11 @@ class Block:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Grid:
-    """All cells, the blocks the fast ones came from, and (n, S) influences of the treatment."""
+    """All cells, the blocks the fast ones came from, and (n, S) influences on the treatment.
+
+    Influences of least-squares cells are at a coefficient of zero, of others at their estimate.
+    ``clusters`` (n,) are the first dimension's, or the rows.
+    """
 
     cells: tuple[Cell, ...]
     blocks: tuple[Block, ...]
@@ -234,8 +238,9 @@ def _block(
     )
     counted = absorbed = 0
     if effects:
-        X = X[:, np.ptp(X, axis=0) > 0]
-        at -= design.X.shape[1] - X.shape[1]
+        varies = np.ptp(X, axis=0) > 0
+        varies[at] = True
+        at, X = int(varies[:at].sum()), X[:, varies]
         both = absorb.demean(np.column_stack([X, outcomes]), effects)
         X, outcomes = both[:, : X.shape[1]], both[:, X.shape[1] :]
         free = {n: c for n, c in effects.items() if not absorb.nested(c, rule.clusters)}
@@ -259,7 +264,10 @@ def _block(
 def _numbers(
     rule: ErrorRule, d: Floats, e: Floats, k: int, df: float
 ) -> tuple[list[Numbers], Floats]:
-    """Each outcome (n, c) on the treatment (n,), both with the controls out; and influences."""
+    """Each outcome (n, c) on the treatment (n,), both with the controls out; and influences.
+
+    The influences (n, c) are those at a coefficient of zero.
+    """
     b = d @ e / float(d @ d)
     psi = d[:, None] * (e - np.outer(d, b)) / float(d @ d)
     numbers: list[Numbers] = []
@@ -267,7 +275,8 @@ def _numbers(
         V = of_influence(rule, psi[:, [column]], k, unit_free=False)
         error = float(np.sqrt(V.covariance[0, 0]))
         numbers.append((float(value), error, t_tail(float(value) / error, df), len(d), ""))
-    return numbers, psi
+    # What goes out has the null imposed: the outcome itself is the error when b is zero.
+    return numbers, d[:, None] * e / float(d @ d)
 
 
 def _fitted(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterator
+from datetime import date, time
 from pathlib import Path
 from typing import Any, get_args
 
@@ -27,6 +28,8 @@ EXAMPLES: dict[str, Any] = {
     "inputs.prices": "../data_demo/prices.parquet",
     "inputs.benchmarks": "../data_demo/benchmarks.parquet",
     "inputs.candidates": "../data_demo/candidates.parquet",
+    "calendars.closed": [date(2023, 9, 1)],
+    "calendars.closes": {"2024-12-24": time(12, 0)},
     "characteristics.column": "leverage",
     "characteristics.ratio": ["deal_value", "market_value"],
     "characteristics.interaction": ["relative_size", "target_listed"],
@@ -42,6 +45,8 @@ EXAMPLES: dict[str, Any] = {
     "instruments.rationale": "Why these move the form of payment and nothing else.",
 }
 TABLES_BY_NAME = {
+    "calendars": "One table an exchange, where you know better than its calendar.\n"
+    "[calendars.XHKG]",
     "characteristics": (
         "One table a variable, of exactly one source and any steps, taken in the order shown.\n"
         "[characteristics.your_name]"
@@ -117,6 +122,10 @@ def _toml(value: Any) -> str:
     if isinstance(value, dict):
         inner = ", ".join(f"{key} = {_toml(item)}" for key, item in value.items())
         return f"{{ {inner} }}" if inner else "{}"
+    if isinstance(value, list):
+        return "[" + ", ".join(_toml(item) for item in value) + "]"
+    if isinstance(value, date | time):
+        return value.isoformat()
     if isinstance(value, Path):
         value = str(value)
     return json.dumps(value, ensure_ascii=False)

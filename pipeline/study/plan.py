@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
 from dataclasses import replace
+from datetime import date
 
 from pipeline.characteristics.design import Roles
 from pipeline.characteristics.outcomes import car_column
@@ -14,6 +15,7 @@ from pipeline.inputs.files import Source
 from pipeline.inputs.read import Wanted
 from pipeline.registry import TESTS, entry
 from pipeline.returns.events import EventOptions
+from pipeline.returns.sessions import CalendarChange
 from pipeline.study.schema import Characteristic, Study
 
 PATH_DAYS = Window(-10, 10)
@@ -140,9 +142,31 @@ def event_options(study: Study) -> EventOptions:
     )
 
 
+def calendar_changes(study: Study) -> dict[str, CalendarChange]:
+    """The calendar changes of a study, by exchange."""
+    return {
+        exchange: CalendarChange(
+            tuple(item.closed),
+            tuple((date.fromisoformat(day), clock) for day, clock in item.closes.items()),
+        )
+        for exchange, item in study.calendars.items()
+    }
+
+
+def windows(study: Study, date_only: bool) -> tuple[Window, ...]:
+    """The study's windows, the headline first.
+
+    With announcements of an unknown time, day zero alone may miss the reaction: a window of that
+    one session gets [0, +1] beside it.
+    """
+    listed = study.event_time.all_windows
+    alone = Window(0, 0) in listed and not any(w.start <= 0 and w.end >= 1 for w in listed)
+    return (*listed, Window(0, 1)) if date_only and alone else listed
+
+
 def span(study: Study) -> Window:
     """The event days held: every window, and the days of the path that estimation leaves free."""
-    windows = study.event_time.all_windows
+    windows = (*study.event_time.all_windows, Window(0, 1))
     path = path_days(study)
     return Window(
         min(path.start, *(window.start for window in windows)),
@@ -157,8 +181,8 @@ def path_days(study: Study) -> Window:
     return Window(min(first, headline.start), max(PATH_DAYS.end, headline.end))
 
 
-def facts(study: Study, leading_test: str) -> StudyFacts:
-    """What the report may know of the study, and of the test that leads."""
+def facts(study: Study, leading_test: str, listed: tuple[Window, ...]) -> StudyFacts:
+    """What the report may know of the study, the test that leads and the windows tested."""
     parts = roles(study)
     arguments = {
         "What moves the decision to bid and nothing else": study.selection,
@@ -170,7 +194,7 @@ def facts(study: Study, leading_test: str) -> StudyFacts:
         title=study.title,
         question=study.question,
         headline=study.event_time.headline_window,
-        windows=study.event_time.all_windows,
+        windows=listed,
         estimation=study.event_time.estimation_window,
         minimum_observations=study.event_time.minimum_observations,
         models=study.expected_returns.all_models,

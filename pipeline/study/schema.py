@@ -5,10 +5,11 @@ The models are strict and frozen: an unknown key or a value of another kind is a
 
 from __future__ import annotations
 
+from datetime import date, time
 from pathlib import Path
 from typing import Annotated, Literal
 
-from pydantic import AfterValidator, BaseModel, ConfigDict, Field, model_validator
+from pydantic import AfterValidator, BaseModel, ConfigDict, Field, field_validator, model_validator
 
 from pipeline.core.window import Window
 from pipeline.registry import (
@@ -133,6 +134,25 @@ class EventTime(Part):
         """The headline window, then each secondary one once."""
         listed = [Window(*pair) for pair in (self.headline, *self.windows)]
         return tuple(dict.fromkeys(listed))
+
+
+class Calendar(Part):
+    """What you know better than the calendar of an exchange."""
+
+    closed: list[date] = Field(
+        default_factory=list, description="Dates on which it did not trade: [2023-09-01]."
+    )
+    closes: dict[str, time] = Field(
+        default_factory=dict,
+        description="Local closing times: { 2024-12-24 = 12:30:00 }; adds the session if need be.",
+    )
+
+    @field_validator("closes")
+    @classmethod
+    def _dates(cls, value: dict[str, time]) -> dict[str, time]:
+        for day in value:
+            date.fromisoformat(day)
+        return value
 
 
 class ExpectedReturns(Part):
@@ -291,6 +311,9 @@ class Study(Part):
     level: float = Field(0.95, gt=0.5, lt=1, description="Confidence level of intervals.")
     inputs: Inputs
     event_time: EventTime = Field(default_factory=EventTime)
+    calendars: dict[str, Calendar] = Field(
+        default_factory=dict, description="Changes of exchange calendars, by ISO 10383 code."
+    )
     expected_returns: ExpectedReturns = Field(default_factory=ExpectedReturns)
     tests: Tests = Field(default_factory=Tests)
     placebo: Placebo = Field(default_factory=Placebo)

@@ -85,6 +85,14 @@ def test_a_treatment_in_two_clusters_is_said_on_every_clustered_rung() -> None:
     assert not any("holds its level" in rung.note for rung in rungs(design).values())
 
 
+def test_one_cluster_leaves_its_rungs_empty() -> None:
+    design = without(small(4), "effects")
+    found = rungs(replace(design, clusters={"acquirer": np.zeros(design.n, dtype=int)}))
+    empty = [rung for name, rung in found.items() if "acquirer" in name]
+    assert len(empty) == 4
+    assert all(np.isnan(rung.p) and "one cluster" in rung.note for rung in empty)
+
+
 def test_no_coefficient_no_ladder() -> None:
     design = deals()
     with pytest.raises(InputProblem):

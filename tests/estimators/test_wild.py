@@ -12,6 +12,7 @@ from scipy import linalg
 
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import Shape
+from pipeline.core.findings import InputProblem
 from pipeline.estimators import wild
 from pipeline.estimators.errors import CLUSTER, ErrorRule
 from pipeline.estimators.few_clusters import basis_of
@@ -175,6 +176,23 @@ def test_few_columns_a_draw_do_what_one_a_cluster_does() -> None:
         one, other = getattr(short, name), getattr(long, name)
         np.testing.assert_allclose(one, other, rtol=1e-9, atol=1e-12 * np.abs(other).max())
     assert wild.p_value(sample, design, codes, draws=500) == boot(design, draws=500).p_value
+
+
+def test_clusters_that_say_nothing_are_refused() -> None:
+    """Each cluster has one deal of either kind and its own constant: residual sums are zero."""
+    group = np.repeat(np.arange(2), 2)
+    design = Design(
+        y=np.array([0.0, 1.0, 0.3, 1.7]),
+        X=np.column_stack([np.ones(4), group]).astype(float),
+        names=("constant", "treatment"),
+        treatment="treatment",
+        rows=tuple("abcd"),
+        outcome="CAR",
+        clusters={ACQUIRER: group},
+    )
+    with pytest.raises(InputProblem) as caught:
+        boot(design)
+    assert caught.value.findings[0].rule == "cluster_decides"
 
 
 # Source: Webb's points have mean 0, variance 1 and third moment 0 (MacKinnon, Nielsen and Webb

@@ -6,7 +6,7 @@ Opening hours: the exchanges' own; holidays and half days used here are those of
 
 from __future__ import annotations
 
-from datetime import datetime
+from datetime import date, datetime, time
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -15,7 +15,7 @@ import pytest
 from pipeline.core.findings import InputProblem
 from pipeline.core.ledger import Action
 from pipeline.returns.day_zero import Timing, ledger_entry, place, sentence
-from pipeline.returns.sessions import Sessions, sessions_between
+from pipeline.returns.sessions import CalendarChange, Sessions, changed, sessions_between
 
 NEW_YORK, LONDON, TOKYO = "America/New_York", "Europe/London", "Asia/Tokyo"
 
@@ -169,3 +169,22 @@ def test_an_exchange_without_a_calendar() -> None:
     (finding,) = caught.value.findings
     assert (finding.rule, finding.file, finding.column) == ("unknown_exchange", "deals", "exchange")
     assert "XQQQ" in finding.got
+
+
+def test_what_the_desk_knows_of_a_calendar() -> None:
+    """A closure, an early close and an added session, as an exchange may announce overnight."""
+    known = sessions_between("XHKG", "2023-08-28", "2023-09-08")
+    assert np.datetime64("2023-09-05") in known.days
+    change = CalendarChange(
+        closed=(date(2023, 9, 5),),
+        closes=((date(2023, 9, 4), time(12, 0)), (date(2023, 9, 3), time(16, 0))),
+    )
+    told = changed(known, change)
+    assert np.datetime64("2023-09-05") not in told.days
+    assert np.datetime64("2023-09-03") in told.days
+    assert (np.diff(told.days).astype(int) > 0).all()
+    early = told.closes[told.days == np.datetime64("2023-09-04")][0]
+    assert early == np.datetime64("2023-09-04T04:00:00")
+    instant = np.array(["2023-09-05T02:00:00"], dtype="datetime64[s]")
+    placed = place(instant, np.array(["2023-09-05"], dtype="datetime64[D]"), told)
+    assert told.days[placed.position[0]] == np.datetime64("2023-09-06")

@@ -37,9 +37,7 @@ def test_equals_a_fit_of_the_outcome_less_the_violation(
 ) -> None:
     """Fixed effects, clusters, two instruments and controls at once."""
     found = exclusion.at_violation(parts, np.array(gamma), 0.95)
-    refit = two_stage_least_squares(
-        replace(design, y=design.y - design.Z @ np.array(gamma)), PLAIN
-    )
+    refit = two_stage_least_squares(replace(design, y=design.y - design.Z @ np.array(gamma)), PLAIN)
     term = refit.term(design.treatment)
     assert found.estimate == pytest.approx(term["coefficient"], rel=1e-9)
     assert found.std_error == pytest.approx(term["std_error"], rel=1e-9)
@@ -177,9 +175,10 @@ def test_made_instruments_are_products_of_controls_and_residuals() -> None:
     design = lewbel_world(4, 200)
     Z, names, _ = exclusion.generated_instruments(design)
     x = design.X[:, 2]
-    left = design.X[:, 1] - design.X[:, [0, 2]] @ np.linalg.lstsq(
-        design.X[:, [0, 2]], design.X[:, 1]
-    )[0]
+    left = (
+        design.X[:, 1]
+        - design.X[:, [0, 2]] @ np.linalg.lstsq(design.X[:, [0, 2]], design.X[:, 1])[0]
+    )
     assert names == ("x × residual",)
     assert Z[:, 0] == pytest.approx((x - x.mean()) * left, abs=1e-10)
     with pytest.raises(InputProblem):

@@ -120,8 +120,10 @@ def test_the_true_correlation_gives_the_true_effect(rho: float) -> None:
     choice = correlation.treatment_choice(design)
     _, low, high = correlation.effect_at(ground, choice, rho, 0.999)
     assert low < worlds.EFFECT < high
-    assert not ground.estimate - 5 * ground.robust < worlds.EFFECT < (
-        ground.estimate + 5 * ground.robust
+    assert (
+        not ground.estimate - 5 * ground.robust
+        < worlds.EFFECT
+        < (ground.estimate + 5 * ground.robust)
     )
 
 

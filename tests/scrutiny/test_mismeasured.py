@@ -139,9 +139,7 @@ def test_no_misclassification_changes_nothing() -> None:
     ground = ground_of(without(deals(), "selection", "effects"), PLAIN)
     value, low, high = mismeasured.misclassified(ground, 0.0, 0.0, 0.95)
     assert value == pytest.approx(ground.estimate, rel=1e-10)
-    at_one = mismeasured.reliability_corrected(ground, {"run_up": 1.0}).term(
-        "paid_in_shares", 0.95
-    )
+    at_one = mismeasured.reliability_corrected(ground, {"run_up": 1.0}).term("paid_in_shares", 0.95)
     assert (low, high) == pytest.approx(at_one[1:], rel=1e-8)
 
 
@@ -196,7 +194,9 @@ def test_simulated_errors_lie_around_those_of_the_correction(noisy: Ground) -> N
 def test_curves_are_carried_back_exactly(a: float, b: float, gap: float) -> None:
     zeta = np.array([0.0, *ZETA])
     rational = a + b / (1 + gap + zeta)
-    assert extrapolated(zeta, rational, "rational") == pytest.approx(a + b / gap, rel=1e-3, abs=1e-3)
+    assert extrapolated(zeta, rational, "rational") == pytest.approx(
+        a + b / gap, rel=1e-3, abs=1e-3
+    )
     bent = a + b * zeta + gap * zeta**2
     assert extrapolated(zeta, bent, "quadratic") == pytest.approx(a - b + gap, abs=1e-9)
     assert extrapolated(zeta, a + b * zeta, "linear") == pytest.approx(a - b, abs=1e-9)

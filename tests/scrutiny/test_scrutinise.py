@@ -97,7 +97,9 @@ def test_facts_are_the_numbers_of_the_rows(
 ) -> None:
     frame = sensitivity_frame(found.variants)
     lead = columns[3].term(design.treatment)["coefficient"]
-    rows = frame[(frame["dimension"] == "one deal left out") & ~frame["target"].str.contains("least")]
+    rows = frame[
+        (frame["dimension"] == "one deal left out") & ~frame["target"].str.contains("least")
+    ]
     assert found.facts["lead_without_one_deal"] in rows["estimate"].tolist()
     assert found.facts["lead_without_one_deal"] - lead == pytest.approx(
         found.facts["lead_without_one_deal_change"], abs=1e-9
@@ -127,9 +129,7 @@ def test_nothing_is_changed_and_all_repeats(design: Design, columns: Sequence[Co
     second = scrutinise(design, columns, 3, OPTIONS)
     assert repr(first.variants) == repr(second.variants)
     assert repr(first.facts) == repr(second.facts)
-    assert all(
-        np.array_equal(a, b) for a, b in zip(before, arrays(design), strict=True)
-    )
+    assert all(np.array_equal(a, b) for a, b in zip(before, arrays(design), strict=True))
 
 
 @pytest.mark.parametrize("lead", [0, 1, 2, -1])
@@ -150,9 +150,7 @@ def test_withheld_columns_are_passed_over(design: Design) -> None:
 
 @pytest.mark.parametrize("asked", ["classical", "hc0", "hc3", "cr2", "cr3"])
 def test_any_errors_may_be_asked_for(design: Design, asked: str) -> None:
-    single = replace(
-        design, clusters={"acquirer": design.clusters["acquirer"]}, selection=None
-    )
+    single = replace(design, clusters={"acquirer": design.clusters["acquirer"]}, selection=None)
     options = FitOptions(covariance=asked)
     column = ols(single, options)
     made = scrutinise(single, (column,), 0, ScrutinyOptions(fit=options, resamples=30))

@@ -103,7 +103,7 @@ def test_a_study_of_the_mean_alone_wants_no_more_than_the_fixed_columns(tmp_path
     study = load_study(write(tmp_path / "study.toml", text))
     assert plan.roles(study) is None
     assert plan.wanted(study).deal_numbers == ()
-    assert plan.facts(study, "dependence_adjusted").treatment == ""
+    assert plan.facts(study, "dependence_adjusted", study.event_time.all_windows).treatment == ""
 
 
 @pytest.mark.parametrize(
@@ -138,7 +138,7 @@ def test_event_options_repeat_the_study(study: Study) -> None:
 
 
 def test_facts_for_the_report(study: Study) -> None:
-    facts = plan.facts(study, "dependence_adjusted")
+    facts = plan.facts(study, "dependence_adjusted", study.event_time.all_windows)
     assert facts.windows == study.event_time.all_windows
     assert facts.regressors == ("shares", "relative_size", "leverage")
     assert facts.words("relative_size") == "Relative size"
@@ -161,3 +161,15 @@ def test_columns_of_the_comparison(tmp_path: Path) -> None:
     assert loaded(tmp_path, named).columns == ("ols",)
     without = ('fixed_effects = ["industry"]', "")
     assert "fixed_effects" not in loaded(tmp_path, without).columns
+
+
+def test_a_date_alone_never_stands_on_day_zero_alone(study: Study) -> None:
+    def with_windows(headline: list[int], *others: list[int]) -> Study:
+        time = study.event_time.model_copy(update={"headline": headline, "windows": [*others]})
+        return study.model_copy(update={"event_time": time})
+
+    alone = with_windows([0, 0], [-2, -1])
+    assert plan.windows(alone, date_only=False) == (Window(0, 0), Window(-2, -1))
+    assert plan.windows(alone, date_only=True)[-1] == Window(0, 1)
+    covered = with_windows([0, 0], [-1, 1])
+    assert Window(0, 1) not in plan.windows(covered, date_only=True)
