@@ -17,21 +17,24 @@ from pipeline.characteristics.design import Prepared, prepare, price_measures
 from pipeline.characteristics.outcomes import deals_frame, group_names, with_outcomes
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.design import FitOptions
-from pipeline.core.estimate import Column, Estimate, EstimationFailed, Withheld
+from pipeline.core.estimate import Column, Diagnostic, Estimate, EstimationFailed, Withheld
 from pipeline.core.findings import Finding, findings_frame, problem, raise_errors
 from pipeline.core.ledger import Ledger
 from pipeline.core.parquet import parquet_bytes
 from pipeline.core.prices import PricePanel
 from pipeline.core.results import Results
+from pipeline.core.scrutiny import Direction, Variant, direction_frame, together
 from pipeline.core.store import write_folder
 from pipeline.core.tables import (
     abnormal_returns_frame,
     diagnostics_frame,
     estimates_frame,
     event_tests_frame,
+    ladder_frame,
 )
 from pipeline.core.window import Window
 from pipeline.estimators.checks import with_checks
+from pipeline.estimators.ladder import Rung, ladder
 from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
     ESTIMATORS,
@@ -53,6 +56,7 @@ from pipeline.returns.measure import measure
 from pipeline.returns.panel import build_panels
 from pipeline.returns.placebo import pseudo_events
 from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
+from pipeline.scrutiny.scrutinise import scrutinise
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.choice import leading_test
 from pipeline.significance.dependence import links
@@ -82,6 +86,17 @@ class Clock:
         begin = time.perf_counter()
         yield
         self.seconds[name] = round(time.perf_counter() - begin, 3)
+
+
+@dataclass(frozen=True, slots=True)
+class Doubts:
+    """What the scrutiny of the columns found; empty if there are none."""
+
+    rungs: tuple[Rung, ...] = ()
+    variants: tuple[Variant, ...] = ()
+    checks: tuple[Diagnostic, ...] = ()
+    directions: tuple[Direction, ...] = ()
+    notes: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -125,11 +140,13 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     with clock.stage("characteristics"):
         prepared = _prepare(study, measured)
     columns: tuple[Column, ...] = ()
+    doubts = Doubts()
     if prepared is not None:
         with clock.stage("estimators"):
             columns = tuple(_fit(study, key, prepared) for key in study.columns)
+        doubts = _scrutinise(study, prepared, columns, clock)
     with clock.stage("results"):
-        results = _results(study, measured, found, prepared, columns, placebo)
+        results = _results(study, measured, found, prepared, columns, placebo, doubts)
     return results, clock.seconds
 
 
@@ -274,6 +291,20 @@ def _placebo(study: Study, measured: Measured, mean: float, clock: Clock) -> Any
         return placebo_sizes(samples, window, tests, links(lead), lead.deals, mean, 1 - study.level)
 
 
+def _scrutinise(
+    study: Study, prepared: Prepared, columns: tuple[Column, ...], clock: Clock
+) -> Doubts:
+    """What would overturn the finding, and how much hangs on the errors."""
+    if not study.scrutiny.run or _lead(columns) < 0:
+        return Doubts()
+    design = prepared.design
+    with clock.stage("scrutiny"):
+        options = plan.scrutiny_options(study, prepared.groups)
+        found = scrutinise(design, columns, _lead(columns), options)
+        rungs = ladder(design, FitOptions(level=study.level))
+    return Doubts(rungs, found.variants, found.checks, found.directions, found.notes)
+
+
 def _with_outcomes(study: Study, measured: Measured) -> Any:
     time = study.event_time
     lead = measured.abnormal[study.expected_returns.headline]
@@ -281,7 +312,7 @@ def _with_outcomes(study: Study, measured: Measured) -> Any:
 
 
 def _fit(study: Study, key: str, prepared: Prepared) -> Column:
-    options = FitOptions(level=study.level)
+    options = plan.fit_options(study)
     try:
         estimate: Estimate = entry(ESTIMATORS, key).load()(prepared.design, options)
     except EstimationFailed as failure:
@@ -296,6 +327,7 @@ def _results(
     prepared: Prepared | None,
     columns: tuple[Column, ...],
     placebo: Any,
+    doubts: Doubts,
 ) -> Results:
     leading = leading_test(study.tests.headline, len(measured.deals))
     facts = plan.facts(study, leading, measured.windows)
@@ -307,6 +339,7 @@ def _results(
     checks = sample_checks(lead, study.event_time.headline_window, deals)
     for column in columns:
         checks += () if isinstance(column, Withheld) else column.checks
+    checks += doubts.checks
     ledger = measured.ledger.then(prepared.ledger) if prepared else measured.ledger
     findings = measured.findings + (prepared.findings if prepared else ())
     results = Results(
@@ -318,12 +351,17 @@ def _results(
         lead=_lead(columns),
         paths=average_paths(lead, groups, plan.path_days(study), study.level),
         diagnostics=diagnostics_frame(checks),
-        sensitivity=mean_variants(measured.abnormal, facts.headline, ledger, study.level),
+        sensitivity=together(
+            mean_variants(measured.abnormal, facts.headline, ledger, study.level), doubts.variants
+        ),
         ledger=ledger,
         findings=findings,
         tables={},
         placebo=placebo,
         power=power_of(lead, facts.headline),
+        ladder=ladder_frame(doubts.rungs),
+        directions=direction_frame(doubts.directions),
+        doubts=doubts.notes,
     )
     tables = {
         "abnormal_returns": abnormal_returns_frame(measured.abnormal),
@@ -337,6 +375,8 @@ def _results(
         "paths": results.paths,
         "placebo": results.placebo,
         "power": results.power,
+        "ladder": results.ladder,
+        "directions": results.directions,
     }
     return replace(results, tables={**tables, "headline": headline_frame(results)})
 

@@ -56,13 +56,14 @@ class Prepared:
     """A design with what was made on the way.
 
     ``deals`` holds the finished variables of all deals (NaN outside the regression rows) and
-    ``in_regression``.
+    ``in_regression``; ``groups`` the words behind the codes of each effect and cluster.
     """
 
     design: Design
     deals: pd.DataFrame
     ledger: StageLedger
     findings: tuple[Finding, ...]
+    groups: Mapping[str, tuple[str, ...]]
 
 
 def price_measures(
@@ -137,7 +138,14 @@ def prepare(
     table = deals.assign(
         **{name: variables[name] for name in shown}, in_regression=used.astype(np.int64)
     )
-    return Prepared(design, table, ledger, tuple(findings))
+    groups = {name: words(deals.loc[used, name]) for name in (*roles.effects, *roles.clusters)}
+    return Prepared(design, table, ledger, tuple(findings), groups)
+
+
+def words(values: pd.Series) -> tuple[str, ...]:
+    """The words behind a column's codes, in the order of the codes."""
+    levels = pd.factorize(values, sort=True)[1]
+    return tuple(f"{v:g}" if isinstance(v, float) else str(v) for v in levels)
 
 
 def _mask(

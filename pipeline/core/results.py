@@ -110,6 +110,11 @@ class Results:
             dates without an announcement; empty if not asked for. The row ``mean`` holds the
             share of draws whose mean is as far from zero as the sample's.
         power: ``effect, power, deals_needed``; effect decimal.
+        ladder: ``name, std_error, df, p, low, high, note``: the least-squares effect's error under
+            every treatment of it, decimal.
+        directions: ``factor, on_outcome, on_treatment, bias, true_effect, evidence`` of suspected
+            flaws.
+        doubts: sentences on what the scrutiny could not ask.
     """
 
     study: StudyFacts
@@ -126,6 +131,9 @@ class Results:
     tables: Mapping[str, pd.DataFrame]
     placebo: pd.DataFrame = field(default_factory=pd.DataFrame)
     power: pd.DataFrame = field(default_factory=pd.DataFrame)
+    ladder: pd.DataFrame = field(default_factory=pd.DataFrame)
+    directions: pd.DataFrame = field(default_factory=pd.DataFrame)
+    doubts: tuple[str, ...] = ()
 
     @property
     def headline(self) -> WindowTests:

@@ -115,6 +115,12 @@ def sensitivity_frame(variants: Iterable[Variant]) -> pd.DataFrame:
     return typed_frame(rows, SENSITIVITY_COLUMNS)
 
 
+def together(mean: pd.DataFrame, variants: Iterable[Variant]) -> pd.DataFrame:
+    """The variants of the mean reaction, then those of the feature's effect, as one frame."""
+    others = sensitivity_frame(variants)
+    return mean if others.empty else pd.concat([mean, others], ignore_index=True)
+
+
 def direction_frame(directions: Iterable[Direction]) -> pd.DataFrame:
     """One row a suspected flaw: ``factor, on_outcome, on_treatment, bias, ...``."""
     rows = [{name: getattr(item, name) for name in DIRECTION_COLUMNS} for item in directions]

@@ -153,6 +153,23 @@ def diagnostics_frame(diagnostics: Iterable[Diagnostic]) -> pd.DataFrame:
     return typed_frame(rows, DIAGNOSTIC_COLUMNS)
 
 
+LADDER_COLUMNS = {
+    "name": "str",
+    "std_error": "float64",
+    "df": "float64",
+    "p": "float64",
+    "low": "float64",
+    "high": "float64",
+    "note": "str",
+}
+
+
+def ladder_frame(rungs: Iterable[Any]) -> pd.DataFrame:
+    """One row a treatment of the errors."""
+    rows = [{name: getattr(rung, name) for name in LADDER_COLUMNS} for rung in rungs]
+    return typed_frame(rows, LADDER_COLUMNS)
+
+
 def abnormal_returns_frame(abnormal: Mapping[str, AbnormalReturns]) -> pd.DataFrame:
     """One row a deal a day a model: deal, expected_return, day, date, abnormal_return, expected."""
     parts = [_abnormal_rows(measured) for measured in abnormal.values()]

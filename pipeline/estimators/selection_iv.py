@@ -241,21 +241,10 @@ def _estimate(
     selection: SelectionRows,
     notes: tuple[str, ...],
 ) -> Estimate:
-    L = len(design.instruments)
-    left = partial_out(
-        np.column_stack([columns.X[:, columns.at], columns.Z]), columns.spread[:, L:]
-    )
-    effective = strength.effective_f(
-        left[:, 0], left[:, 1:], forms.treatment, forms.covariance[L:, L:]
-    )
+    left, effective = _strength(design, columns, forms)
     weak = effective.statistic < strength.STRONG
-    column = large_sample(
-        design,
-        options,
-        rule,
-        _labels(design, selection, rule),
-        Found((*design.names, LAMBDA), step.coefficients, V),
-    )
+    found = Found((*design.names, LAMBDA), step.coefficients, V)
+    column = large_sample(design, options, rule, _labels(design, selection, rule), found)
     sets = _sets(column, forms)
     return replace(
         column,
@@ -271,6 +260,15 @@ def _estimate(
         sets=sets,
         notes=(*notes, *_notes(design, selection, effective), *equation_notes(design, selection)),
     )
+
+
+def _strength(design: Design, columns: Columns, forms: ReducedForms) -> tuple[Floats, TestResult]:
+    """Treatment and instruments (n, 1 + L) with controls and λ taken out, and the effective F."""
+    L = len(design.instruments)
+    both = np.column_stack([columns.X[:, columns.at], columns.Z])
+    left = partial_out(both, columns.spread[:, L:])
+    D, Z = left[:, 0], left[:, 1:]
+    return left, strength.effective_f(D, Z, forms.treatment, forms.covariance[L:, L:])
 
 
 def _labels(design: Design, selection: SelectionRows, rule: ErrorRule) -> Labels:

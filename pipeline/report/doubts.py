@@ -21,7 +21,7 @@ from pipeline.report.document import (
 from pipeline.report.graphs import sensitivity_figure, variant_digits
 from pipeline.report.headline import sensitivity_targets
 from pipeline.report.material import Material, capital, effect_digits, prose, taken
-from pipeline.report.numerals import BP, bp, bp_digits, count, digits_for, plain
+from pipeline.report.numerals import BP, bp, bp_digits, count, digits_for, p_value, plain
 from pipeline.report.wording import any_cell, level_words, set_cell, set_words
 
 
@@ -59,7 +59,10 @@ def sensitivity_section(material: Material) -> Section | None:
         blocks += [_variants_sentence(material, target), sensitivity_figure(material, target)]
     if not blocks:
         return None
-    return Section("Sensitivity", (*blocks, sensitivity_table(material)))
+    more = [table for table in (ladder_table(material), directions_table(material)) if table.rows]
+    silent = Bullets(tuple(prose(taken(note, "check")) for note in material.results.doubts))
+    after = (*more, *((silent,) if silent.items else ()))
+    return Section("Sensitivity", (*blocks, sensitivity_table(material), *after))
 
 
 def _variants_sentence(material: Material, target: str) -> Paragraph:
@@ -71,6 +74,52 @@ def _variants_sentence(material: Material, target: str) -> Paragraph:
     variants = material.number(f"sensitivity_variants: {target}")
     return prose("Over ", variants, " variants the ", taken(target, "check"), " runs from ", low,
                  " to ", high, " bp.")  # fmt: skip
+
+
+def ladder_table(material: Material) -> Table:
+    """The least-squares effect's error under every treatment of it."""
+    frame = material.results.ladder
+    columns = (
+        Column("Errors"), Column("Standard error", "bp"), Column("Degrees of freedom"),
+        Column("Interval", "bp"), Column("p"), Column("Note", prose=True),
+    )  # fmt: skip
+    digits = bp_digits(BP * float(frame["std_error"].median())) if len(frame) else 0
+    rows = tuple(
+        (
+            Text(capital(material.in_words(str(row["name"])))), bp(row["std_error"], digits + 1),
+            plain(row["df"], 0),
+            Interval(None, bp(row["low"], digits), bp(row["high"], digits))
+            if math.isfinite(row["low"] + row["high"]) else None,
+            p_value(row["p"]), Text(material.in_words(str(row["note"]))),
+        )
+        for _, row in frame.iterrows()
+    )  # fmt: skip
+    note = prose("One coefficient, the least-squares effect with the study's fixed effects: how "
+                 "far its error hangs on who is taken to move with whom.")  # fmt: skip
+    title = prose("The same effect under other treatments of its errors")
+    return Table("ladder", title, columns, rows, (note,))
+
+
+SIGNS = {"+": "up", "-": "down", "0": "none", "?": "not known"}
+
+
+def directions_table(material: Material) -> Table:
+    """Suspected factors nobody recorded, and which way each pushes the least-squares effect."""
+    frame = material.results.directions
+    columns = (
+        Column("Suspected factor", prose=True), Column("Pushes the return"),
+        Column("Pushes the choice"), Column("Bias of least squares"),
+        Column("So the true effect is", prose=True), Column("The analyst's evidence", prose=True),
+    )  # fmt: skip
+    signs = ("on_outcome", "on_treatment", "bias")
+    rows = tuple(
+        (
+            Text(str(row["factor"])), *(Text(SIGNS[str(row[name])]) for name in signs),
+            Text(str(row["true_effect"])), Text(str(row["evidence"])),
+        )
+        for _, row in frame.iterrows()
+    )  # fmt: skip
+    return Table("directions", prose("Which way a suspected factor would push"), columns, rows)
 
 
 def sensitivity_table(material: Material) -> Table:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -158,26 +159,34 @@ def approximate_effect(m: Movement, r_max: float, strength: float = 1.0) -> floa
     return m.long - strength * (m.short - m.long) * (r_max - m.long_r2) / gained
 
 
-def r_max_grid(m: Movement) -> dict[str, float]:
-    """Values of R_max worth showing, in words: the convention and two harder ones, at most 1.
+R_MAX = {"1.3 times the R²": (1.3, 0.0), "twice the R²": (2.0, 0.0), "the R² plus .25": (1.0, 0.25)}
+"""Largest R² worth showing, in words: how many times the R² with the controls, and how much more.
 
-    1.3 times is Oster's (2019) convention; at the R² of return regressions it asks for little.
-    """
-    values = {
-        "1.3 times the R²": 1.3 * m.long_r2,
-        "twice the R²": 2.0 * m.long_r2,
-        "the R² plus .25": m.long_r2 + 0.25,
-    }
-    return {name: min(value, 1.0) for name, value in values.items()}
+1.3 times is Oster's (2019) convention; at the R² of return regressions it asks for little.
+"""
+
+
+def largest_r2(long_r2: float, rule: tuple[float, float]) -> float:
+    """The largest R² by a rule as in :data:`R_MAX`, at most 1."""
+    return min(rule[0] * long_r2 + rule[1], 1.0)
+
+
+def r_max_grid(m: Movement) -> dict[str, float]:
+    """The largest R² by each rule of :data:`R_MAX`."""
+    return {name: largest_r2(m.long_r2, rule) for name, rule in R_MAX.items()}
 
 
 def resampled_effects(
-    ground: Ground, codes: Integers, r_max_of: dict[str, float], draws: int, seed: int
+    ground: Ground,
+    codes: Integers,
+    rules: Mapping[str, tuple[float, float]],
+    draws: int,
+    seed: int,
 ) -> dict[str, Floats]:
-    """(draws,) adjusted effects at strength 1 for each R_max over its R², clusters resampled.
+    """(draws,) adjusted effects at strength 1 by each rule for the largest R², clusters resampled.
 
-    ``codes`` (n,) names the cluster of each row; ``r_max_of`` maps words to R_max less the R² of
-    the sample, kept fixed over draws. Pairs bootstrap by weights (Efron and Tibshirani 1993).
+    ``codes`` (n,) names the cluster of each row; ``rules`` are as in :data:`R_MAX` and applied to
+    the R² of each draw. Pairs bootstrap by weights (Efron and Tibshirani 1993).
     """
     changes = np.ptp(ground.W, axis=0) > 0
     fixed = ground.W[:, ~changes]
@@ -189,12 +198,12 @@ def resampled_effects(
     weights = rng.multinomial(groups, np.full(groups, 1 / groups), size=draws).astype(float)
     totals = np.tensordot(weights, products, axes=1)
     p = whole.shape[1] - fixed.shape[1]
-    found: dict[str, list[float]] = {name: [] for name in r_max_of}
+    found: dict[str, list[float]] = {name: [] for name in rules}
     for total in totals:
         inner = total[:p, :p]
         if p < len(total):
             inner = inner - total[:p, p:] @ np.linalg.solve(total[p:, p:], total[p:, :p])
         m = movement_from(inner / ground.n)
-        for name, more in r_max_of.items():
-            found[name].append(adjusted_effect(m, min(m.long_r2 + more, 1.0)).effect)
+        for name, rule in rules.items():
+            found[name].append(adjusted_effect(m, largest_r2(m.long_r2, rule)).effect)
     return {name: np.array(values) for name, values in found.items()}

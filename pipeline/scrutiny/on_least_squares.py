@@ -105,10 +105,9 @@ def proportional_selection(ground: Ground, target: Target, options: ScrutinyOpti
         return Part()
     movement = omitted.movement_of(ground)
     values = omitted.r_max_grid(movement)
-    more = {name: value - movement.long_r2 for name, value in values.items()}
     clusters = ground.sample.rule.clusters
     codes = next(iter(clusters.values()), np.arange(ground.n))
-    draws = omitted.resampled_effects(ground, codes, more, options.resamples, options.seed)
+    draws = omitted.resampled_effects(ground, codes, omitted.R_MAX, options.resamples, options.seed)
     tail = (1 - options.level) / 2
     variants: list[Variant] = []
     facts: dict[str, float] = {}

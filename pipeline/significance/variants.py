@@ -14,7 +14,9 @@ from pipeline.core.window import Window
 from pipeline.significance.sample import CarSample, car_sample
 from pipeline.significance.windows import mean_interval
 
+TARGET = "mean reaction"
 COLUMNS = {
+    "target": "str",
     "dimension": "str",
     "variant": "str",
     "estimate": "float64",
@@ -35,7 +37,8 @@ def mean_variants(
     """The mean CAR of ``window`` under each model, and without each kind of flagged deal.
 
     Returns:
-        ``dimension, variant, estimate, ci_low, ci_high, n``; decimal. The first model leads.
+        ``target, dimension, variant, estimate, ci_low, ci_high, n``; decimal, the first model
+        first.
     """
     rows = [
         _row("expected return", model.replace("_", " "), car_sample(item, window, 1.0), level)
@@ -63,6 +66,7 @@ def _row(dimension: str, variant: str, sample: CarSample, level: float) -> dict[
     low, high = mean_interval(sample, level)
     mean = float(sample.car.mean()) if sample.n else np.nan
     return {
+        "target": TARGET,
         "dimension": dimension,
         "variant": variant,
         "estimate": mean,

@@ -6,7 +6,7 @@ import json
 from collections.abc import Iterator
 from datetime import date, time
 from pathlib import Path
-from typing import Any, get_args
+from typing import Any, get_args, get_origin
 
 from pydantic import BaseModel
 from pydantic.fields import FieldInfo
@@ -95,7 +95,8 @@ def _keys(model: type[BaseModel], prefix: str, mark: bool = True) -> Iterator[st
 
 def _is_table(field: FieldInfo) -> bool:
     """Whether the key is a table of its own in the study file."""
-    return _model(field.annotation) is not None and not str(field.annotation).endswith("Indicator")
+    inline = get_origin(field.annotation) is list or "Indicator" in str(field.annotation)
+    return _model(field.annotation) is not None and not inline
 
 
 def _default(field: FieldInfo) -> Any:

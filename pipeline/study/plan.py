@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
 from datetime import date
 
 from pipeline.characteristics.design import Roles
 from pipeline.characteristics.outcomes import car_column
 from pipeline.characteristics.recipes import Recipe, needed
+from pipeline.core.design import FitOptions
 from pipeline.core.results import StudyFacts
 from pipeline.core.window import Window
 from pipeline.inputs.files import Source
@@ -16,6 +17,8 @@ from pipeline.inputs.read import Wanted
 from pipeline.registry import TESTS, entry
 from pipeline.returns.events import EventOptions
 from pipeline.returns.sessions import CalendarChange
+from pipeline.scrutiny.directions import Suspect
+from pipeline.scrutiny.options import ScrutinyOptions
 from pipeline.study.schema import Characteristic, Study
 
 PATH_DAYS = Window(-10, 10)
@@ -235,4 +238,38 @@ def conventions(study: Study) -> tuple[str, ...]:
         "estimation; of two deals whose headline windows meet, the first is kept.",
         "A deal within "
         f"{time.confounding_days} session(s) of an earnings release is kept and flagged.",
+    )
+
+
+def fit_options(study: Study) -> FitOptions:
+    """What the study chooses about every fit."""
+    chosen = study.fit
+    return FitOptions(
+        level=study.level,
+        covariance=chosen.covariance,
+        cluster=chosen.cluster_all and chosen.covariance == "auto",
+        allow_functional_form=chosen.curvature_only,
+        learner=chosen.learner,
+        folds=chosen.folds,
+        matches=chosen.matches,
+        seed=study.seed,
+    )
+
+
+def scrutiny_options(study: Study, groups: Mapping[str, Sequence[str]]) -> ScrutinyOptions:
+    """The doubts to go through; ``groups`` gives the words of each cluster's and effect's codes."""
+    asked = study.scrutiny
+    labels = {name: item.label for name, item in study.characteristics.items() if item.label}
+    return ScrutinyOptions(
+        fit=FitOptions(level=study.level),
+        suspects=tuple(
+            Suspect(item.factor, item.on_outcome, item.on_treatment, item.evidence)
+            for item in asked.suspects
+        ),
+        reliability=dict(asked.reliability),
+        benchmarks=tuple(asked.benchmarks),
+        simex=asked.simulate_errors,
+        seed=study.seed,
+        labels={**labels, **study.labels},
+        groups=groups,
     )

@@ -6,7 +6,7 @@ from collections.abc import Iterator
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.registry import EXPECTED_RETURNS, entry
+from pipeline.registry import ESTIMATORS, EXPECTED_RETURNS, entry
 from pipeline.study.schema import Study
 
 
@@ -148,6 +148,23 @@ def _roles(study: Study, file: str) -> Iterator[Finding]:
 
 
 def _needs(study: Study, file: str) -> Iterator[Finding]:
+    words = {
+        "effects": ("fixed effects", bool(study.regression and study.regression.fixed_effects)),
+        "selection": ("[selection]", study.selection is not None),
+        "instruments": ("[instruments]", study.instruments is not None),
+    }
+    for key in study.regression.columns if study.regression else ():
+        for need in entry(ESTIMATORS, key).needs:
+            name, there = words[need]
+            if not there:
+                yield _error(
+                    "bad_value",
+                    file,
+                    "regression.columns",
+                    f"'{key}' in a study without {name}",
+                    f"{name}, which that column is made of",
+                    f"Add {name}, or take '{key}' out.",
+                )
     parts = {"selection": study.selection, "instruments": study.instruments}
     for name, part in parts.items():
         if part is not None and study.regression is None:

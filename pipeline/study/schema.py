@@ -11,6 +11,7 @@ from typing import Annotated, Literal
 
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field, field_validator, model_validator
 
+from pipeline.core.design import COVARIANCES, LEARNERS
 from pipeline.core.window import Window
 from pipeline.registry import (
     ESTIMATORS,
@@ -265,6 +266,25 @@ class Regression(Part):
     )
 
 
+class Fit(Part):
+    """How estimators are fitted, where they leave a choice."""
+
+    covariance: Literal["auto", *COVARIANCES] = Field(  # type: ignore[valid-type]
+        "auto", description="Errors; auto is each column's own rule, printed with it."
+    )
+    cluster_all: bool = Field(
+        False, description="Cluster every column that can, not only those that do by rule."
+    )
+    learner: Literal[LEARNERS] = Field(  # type: ignore[valid-type]
+        "penalised", description="How cross-fitted columns learn outcome and choice."
+    )
+    folds: int = Field(5, ge=1, le=20, description="Parts of the sample for cross-fitting.")
+    matches: int = Field(1, ge=1, le=50, description="Nearest deals a deal is compared with.")
+    curvature_only: bool = Field(
+        False, description="Accept a selection model without an excluded variable."
+    )
+
+
 class Selection(Part):
     """Which companies announce at all."""
 
@@ -283,6 +303,39 @@ class Instruments(Part):
     treatment: str = Field(alias="for", description="The variable they move.")
     use: Annotated[list[str], Field(min_length=1)] = Field(description="The instruments.")
     rationale: Rationale = Field(description="The argument for the exclusion, printed verbatim.")
+
+
+Sign = Literal["+", "-", "0", "?"]
+
+
+class SuspectedFactor(Part):
+    """A factor nobody recorded, as you would argue it before a committee."""
+
+    factor: str = Field(description="What it is.")
+    on_outcome: Sign = Field(description="Sign of its effect on the return, all else equal.")
+    on_treatment: Sign = Field(description="Sign of its effect on the choice of the feature.")
+    evidence: str = Field("", description="Why you think so; printed verbatim.")
+
+
+class Scrutiny(Part):
+    """What it would take to overturn the finding."""
+
+    run: bool = Field(True, description="Whether to go through the doubts.")
+    suspects: list[SuspectedFactor] = Field(
+        default_factory=list,
+        description="Factors nobody recorded: { factor, on_outcome, on_treatment, evidence }.",
+    )
+    reliability: dict[str, float] = Field(
+        default_factory=dict,
+        description="Variable -> share of its variance that is not error of record, in (0, 1].",
+    )
+    benchmarks: list[str] = Field(
+        default_factory=list,
+        description="Controls a hidden factor is likened to; the strongest one if empty.",
+    )
+    simulate_errors: bool = Field(
+        False, description="Whether errors of record are simulated as well (slow)."
+    )
 
 
 class Report(Part):
@@ -321,6 +374,8 @@ class Study(Part):
     regression: Regression | None = None
     selection: Selection | None = None
     instruments: Instruments | None = None
+    fit: Fit = Field(default_factory=Fit)
+    scrutiny: Scrutiny = Field(default_factory=Scrutiny)
     labels: dict[str, str] = Field(
         default_factory=dict, description="Words for variables: paid_in_shares = 'Paid in shares'."
     )

@@ -133,14 +133,16 @@ def unequal_variances(rng: np.random.Generator) -> Held:
 
 
 def proportional(rng: np.random.Generator) -> Held:
-    """600 deals, hidden selection as strong as recorded, the true largest R²; resampled."""
+    """600 deals, hidden selection as strong as recorded, told how much R² it adds; resampled."""
     design = worlds.proportional(rng, 600)
     ground = ground_of(design, OPTIONS)
-    movement = omitted.movement_of(ground)
-    noise = 0.25 / (TRUTH**2 * 1.32 + 2 * TRUTH * 0.8 + 2.25)
-    more = {"true": 1 - noise - movement.long_r2}
+    yy = TRUTH**2 * 1.32 + 2 * TRUTH * 0.8 + 2.25
+    yd = TRUTH * 1.32 + 0.8
+    yw = TRUTH * 0.4 + 1
+    population = np.array([[yy, yd, yw], [yd, 1.32, 0.4], [yw, 0.4, 1.0]])
+    more = 1 - 0.25 / yy - omitted.movement_from(population).long_r2
     draws = omitted.resampled_effects(
-        ground, np.arange(ground.n), more, 199, int(rng.integers(2**31))
+        ground, np.arange(ground.n), {"true": (1.0, more)}, 199, int(rng.integers(2**31))
     )["true"]
     low, high = np.nanquantile(draws, [0.025, 0.975])
     return inside(float(low), float(high)), plain(ground)

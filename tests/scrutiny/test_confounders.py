@@ -189,8 +189,8 @@ def test_the_resampled_effects_gather_around_the_effect(design: Design) -> None:
     ground = ground_of(design, PLAIN)
     m = omitted.movement_of(ground)
     codes = next(iter(ground.sample.rule.clusters.values()))
-    draws = omitted.resampled_effects(ground, codes, {"some": 0.1}, 300, 7)["some"]
-    again = omitted.resampled_effects(ground, codes, {"some": 0.1}, 300, 7)["some"]
+    draws = omitted.resampled_effects(ground, codes, {"some": (1.0, 0.1)}, 300, 7)["some"]
+    again = omitted.resampled_effects(ground, codes, {"some": (1.0, 0.1)}, 300, 7)["some"]
     assert np.array_equal(draws, again)
     centre = omitted.adjusted_effect(m, m.long_r2 + 0.1).effect
     assert abs(np.median(draws) - centre) < 4 * np.std(draws) / np.sqrt(300) + 0.002
