@@ -105,6 +105,27 @@ def power(study: StudyFile, as_json: AsJson = False) -> None:
 
 
 @app.command()
+def deal(
+    study: StudyFile,
+    name: Annotated[str, typer.Argument(help="The deal's identifier in the deal list.")],
+    as_json: AsJson = False,
+) -> None:
+    """Tell one deal's whole story: day zero and why, its returns, its place, its ledger."""
+    from pipeline.screen import Screen
+
+    screen = Screen(quiet=False, as_json=as_json)
+
+    def work() -> None:
+        from pipeline.flow import deal as deal_stages
+
+        with screen.progress() as tell:
+            story, row, told = deal_stages(_load(study, ""), name, tell)
+        screen.deal(name, story, row, told)
+
+    _guard(work, screen.problem)
+
+
+@app.command()
 def explain(
     rule: Annotated[
         str, typer.Argument(help="A rule's key as shown in brackets; empty: all.")

@@ -19,7 +19,7 @@ from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.design import FitOptions
 from pipeline.core.estimate import Column, Diagnostic, Estimate, EstimationFailed, Withheld
 from pipeline.core.findings import Finding, findings_frame, problem, raise_errors
-from pipeline.core.ledger import Ledger
+from pipeline.core.ledger import Ledger, LedgerEntry
 from pipeline.core.parquet import parquet_bytes
 from pipeline.core.prices import PricePanel
 from pipeline.core.results import Results
@@ -63,6 +63,7 @@ from pipeline.significance.dependence import links
 from pipeline.significance.paths import average_paths
 from pipeline.significance.placebo import placebo_sizes
 from pipeline.significance.power import power_of
+from pipeline.significance.story import Story, story_of
 from pipeline.significance.variants import mean_variants
 from pipeline.significance.windows import all_windows
 from pipeline.study import plan
@@ -163,6 +164,34 @@ def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tu
     if prepared is None:
         return measured.ledger, measured.findings
     return measured.ledger.then(prepared.ledger), measured.findings + prepared.findings
+
+
+def deal(
+    study: Study, name: str, progress: Progress = lambda _: None
+) -> tuple[Story | None, Mapping[str, Any], list[tuple[str, LedgerEntry]]]:
+    """One deal: its story if it was measured, its row, and what the ledger says of it.
+
+    Raises:
+        InputProblem: as :func:`check` would, or if the deal list has no such deal.
+    """
+    measured = measure_deals(study, Clock(progress))
+    listed = measured.tables.deals
+    if name not in set(listed["deal_id"]):
+        raise problem(
+            "unknown_variable",
+            "deals",
+            column="deal_id",
+            got=f"'{name}'",
+            expected="an identifier of the deal list, such as " + ", ".join(listed["deal_id"][:3]),
+            remedy="Write it as in the deal list.",
+        )
+    told = [(stage, item) for stage, item in measured.ledger if item.deal.split(" (")[0] == name]
+    kept = measured.deals[measured.deals["deal_id"] == name]
+    source = kept if len(kept) else listed[listed["deal_id"] == name]
+    lead = measured.abnormal[study.expected_returns.headline]
+    window = study.event_time.headline_window
+    row = {str(key): value for key, value in source.iloc[0].items()}
+    return story_of(name, lead, window, study.level), row, told
 
 
 def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, int]:

@@ -3,11 +3,11 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from rich.console import Console
 from rich.table import Table
@@ -18,8 +18,9 @@ if TYPE_CHECKING:
     import pandas as pd
 
     from pipeline.core.findings import Finding, InputProblem
-    from pipeline.core.ledger import Ledger
+    from pipeline.core.ledger import Ledger, LedgerEntry
     from pipeline.core.results import Results
+    from pipeline.significance.story import Story
 
 STAGES = 8
 
@@ -94,6 +95,46 @@ class Screen:
             _show(console, finding)
         _ledger_totals(console, ledger)
 
+    def deal(
+        self,
+        name: str,
+        story: Story | None,
+        row: Mapping[str, Any],
+        told: Sequence[tuple[str, LedgerEntry]],
+    ) -> None:
+        """One deal: its placing, its returns day by day, and what the ledger says of it."""
+        if self.as_json:
+            ledger = [{"stage": stage, **asdict(entry)} for stage, entry in told]
+            content = {"deal": name, "story": asdict(story) if story else None, "ledger": ledger}
+            print(json.dumps(content, default=str))
+            return
+        console = Console(highlight=False, markup=False)
+        console.print(f"{name}: {row['security']} on {row['exchange']}")
+        if "day_zero_reason" in row:
+            console.print(f"Day zero {str(row['day_zero'])[:10]}: {row['day_zero_reason']}.")
+        for stage, entry in told:
+            title = rule_title(entry.rule)
+            limit = f" (limit: {entry.threshold})" if entry.threshold else ""
+            console.print(f"{stage}: {entry.action}, {title}: {entry.value}{limit}.")
+        if story is None:
+            console.print("It was not measured: the ledger lines above say why.")
+            return
+        window = story.window.label.replace("-", "−")
+        interval = f"{_bp(story.low)} to {_bp(story.high)} bp"
+        console.print(
+            f"CAR{window} {_bp(story.car)} bp, its own interval {interval}, standardised "
+            f"{story.scar:.2f}; rank {story.rank} of {story.deals}, 1 the largest. Estimated on "
+            f"{story.observations} returns."
+        )
+        table = Table(box=None, pad_edge=False, header_style="")
+        for head in ("day", "date", "abnormal, bp", "expected, bp", "band ±, bp", ""):
+            table.add_column(head, justify="right")
+        for day in story.days:
+            outside = "outside" if abs(day.abnormal) > day.reach else ""
+            cells = (_bp(day.abnormal), _bp(day.expected), _bp(day.reach))
+            table.add_row(f"{day.day:+d}" if day.day else "0", day.date, *cells, outside)
+        console.print(table)
+
     def power(self, frame: pd.DataFrame, deals: int) -> None:
         """Power by size of the true mean."""
         if self.as_json:
@@ -123,6 +164,11 @@ class Screen:
         console.print(f"{count} {noun} in the input; nothing was written.\n")
         for finding in fault.findings:
             _show(console, finding)
+
+
+def _bp(value: float) -> str:
+    """A decimal return in basis points, with a true minus sign; blank where there is none."""
+    return f"{value * 1e4:,.0f}".replace("-", "−") if value == value else ""
 
 
 def _as_dict(finding: Finding) -> dict[str, str]:

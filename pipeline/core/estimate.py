@@ -205,6 +205,7 @@ class Estimate:
         stages: first stages and selection equations, each an Estimate.
         robust_set: a confidence set for the treatment that replaces the t interval when set.
         checks: what was checked before this column may be believed.
+        claim: the strongest words the design allows between the treatment and its coefficient.
         sets: further confidence sets for the treatment, by how they are made.
         scores: (n, k) influence of each row on the coefficients, or None.
         notes: sentences a reader must see.
@@ -236,6 +237,7 @@ class Estimate:
     citation: str = ""
     level: float = 0.95
     checks: tuple[Diagnostic, ...] = ()
+    claim: str = "is associated with"
 
     def __post_init__(self) -> None:
         k = len(self.names)

@@ -20,6 +20,7 @@ class Labels:
     estimand: str
     covariance: str
     citation: str
+    claim: str = "is associated with"
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -44,6 +45,7 @@ def large_sample(
         estimator=labels.estimator,
         title=labels.title,
         estimand=labels.estimand,
+        claim=labels.claim,
         names=found.names,
         coefficients=found.coefficients,
         covariance=positive(found.covariance, found.names),

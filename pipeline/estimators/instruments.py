@@ -128,6 +128,7 @@ def _estimate(design: Design, options: FitOptions, parts: Parts, second: Second)
         estimator="two_stage_least_squares",
         title="Two-stage least squares",
         estimand=_estimand(design),
+        claim="has, under exclusion, an estimated effect of",
         names=sample.names,
         coefficients=second.coefficients,
         covariance=second.covariance,

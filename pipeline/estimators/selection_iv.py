@@ -276,6 +276,7 @@ def _labels(design: Design, selection: SelectionRows, rule: ErrorRule) -> Labels
         estimator="selection_two_stage",
         title="Selection and instruments",
         estimand=_estimand(design, selection),
+        claim="has, under exclusion, an estimated effect of",
         covariance=f"stacked moments of both steps, {words(rule)}",
         citation=CITATION,
     )

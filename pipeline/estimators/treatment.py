@@ -301,6 +301,7 @@ def fitted_probability_instrument(design: Design, options: FitOptions) -> Estima
         column,
         estimator="fitted_probability_instrument",
         title="Two-stage least squares, fitted probability as instrument",
+        claim="has, under exclusion, an estimated effect of",
         estimand=f"average effect of {design.treatment} on {design.outcome} among deals whose "
         f"{design.treatment} is moved by {moved} through the fitted probability, if they reach "
         f"the outcome through {design.treatment} alone",

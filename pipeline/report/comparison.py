@@ -209,7 +209,7 @@ def _reading(material: Material, column: Estimated, with_notes: bool) -> Paragra
     spaced = tuple(piece for note in notes for piece in (" ", note))
     return prose(
         taken(_variable_words(material, column.treatment), "study"),
-        " is associated with ", material.coefficient(column), " bp (",
+        f" {column.claim} ", material.coefficient(column), " bp (",
         material.percent(name, "level"), " set: ", set_pieces(material, name, digits),
         "). It estimates: ", embedded(material.in_words(column.estimand), "estimate"), ".",
         spaced, lead=f"{true_minus(column.title)}:",

@@ -178,7 +178,7 @@ def feature_sentence(material: Material, *, with_estimand: bool = True) -> Piece
         estimand = ("; it estimates: ", embedded(material.in_words(lead.estimand), "estimate"))
     name = "feature_effect"
     return (
-        feature, " is associated with ", material.coefficient(lead), " bp (",
+        feature, f" {lead.claim} ", material.coefficient(lead), " bp (",
         *material.percent(name, "level"), " set: ", *set_pieces(material, name, digits),
         ") in the column ",
         embedded(named(lead.title), "estimate"), *estimand, ". ",

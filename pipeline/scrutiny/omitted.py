@@ -6,7 +6,9 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import special
 
+from pipeline.core.estimate import t_reach
 from pipeline.core.prices import Floats, Integers
 from pipeline.estimators.algebra import partial_out, solve
 from pipeline.scrutiny.ground import Ground, varying
@@ -207,3 +209,17 @@ def resampled_effects(
         for name, rule in rules.items():
             found[name].append(adjusted_effect(m, largest_r2(m.long_r2, rule)).effect)
     return {name: np.array(values) for name, values in found.items()}
+
+
+def resampled_interval(
+    effect: float, draws: Floats, df: float, level: float
+) -> tuple[float, float]:
+    """``effect`` plus and minus t times the spread of its resampled values (B,).
+
+    The spread is half the distance between the 16th and 84th percentiles, which a draw whose root
+    jumps does not stretch. In simulations its coverage is nearer the nominal than that of
+    percentiles or bias-corrected percentiles, and a little below it.
+    """
+    low, high = np.nanquantile(draws, special.ndtr(np.array([-1.0, 1.0])))
+    half = t_reach(level, df) * float(high - low) / 2
+    return effect - half, effect + half

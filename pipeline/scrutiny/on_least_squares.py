@@ -108,14 +108,15 @@ def proportional_selection(ground: Ground, target: Target, options: ScrutinyOpti
     clusters = ground.sample.rule.clusters
     codes = next(iter(clusters.values()), np.arange(ground.n))
     draws = omitted.resampled_effects(ground, codes, omitted.R_MAX, options.resamples, options.seed)
-    tail = (1 - options.level) / 2
     variants: list[Variant] = []
     facts: dict[str, float] = {}
     for (name, r_max), key in zip(values.items(), ("1.3", "2", "plus_.25"), strict=True):
         found = omitted.adjusted_effect(movement, r_max)
-        low, high = np.nanquantile(draws[name], [tail, 1 - tail])
+        low, high = omitted.resampled_interval(
+            found.effect, draws[name], ground.robust_df, options.level
+        )
         words = f"what is hidden selects as strongly as the controls, largest R² {name}"
-        row = found.effect, float(low), float(high)
+        row = found.effect, low, high
         variants.append(target.variant("proportional selection", words, row))
         strength = omitted.delta(movement, r_max)
         facts |= {f"oster_delta_{key}": strength, f"oster_roots_{key}": float(len(found.roots))}

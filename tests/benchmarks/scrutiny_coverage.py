@@ -144,8 +144,11 @@ def proportional(rng: np.random.Generator) -> Held:
     draws = omitted.resampled_effects(
         ground, np.arange(ground.n), {"true": (1.0, more)}, 199, int(rng.integers(2**31))
     )["true"]
-    low, high = np.nanquantile(draws, [0.025, 0.975])
-    return inside(float(low), float(high)), plain(ground)
+    movement = omitted.movement_of(ground)
+    effect = omitted.adjusted_effect(movement, movement.long_r2 + more).effect
+    return inside(*omitted.resampled_interval(effect, draws, ground.robust_df, LEVEL)), plain(
+        ground
+    )
 
 
 def known_confounder(rng: np.random.Generator) -> Held:

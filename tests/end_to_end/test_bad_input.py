@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Callable
 from pathlib import Path
 
@@ -301,6 +302,27 @@ def test_check_finds_what_run_would(study: Path) -> None:
     code, text = invoke("check", study)
     assert code == 2
     assert "[no_variation]" in text
+
+
+def test_one_deals_story(study: Path) -> None:
+    code, text = invoke("deal", study, "D03")
+    assert code == 0
+    assert "Day zero" in text
+    assert "CAR[−1, +1]" in text
+    code, text = invoke("deal", study, "D03", "--json")
+    assert json.loads(text.splitlines()[-1])["story"]["deal"] == "D03"
+    code, text = invoke("deal", study, "nobody")
+    assert code == 2
+    assert "'nobody'" in text
+
+
+def test_power_of_the_deals_at_hand(study: Path) -> None:
+    code, text = invoke("power", study)
+    assert code == 0
+    assert "40 deals" in text
+    code, text = invoke("power", study, "--json")
+    power = [row["power"] for row in json.loads(text.splitlines()[-1])["power"]]
+    assert power == sorted(power)
 
 
 def test_explain_says_what_a_rule_means() -> None:

@@ -6,6 +6,7 @@ import json
 from pathlib import Path
 
 import pandas as pd
+import pytest
 
 from tests.end_to_end.conftest import ROOT, dealwake
 
@@ -29,28 +30,39 @@ def test_three_lines_change_the_headline_window(tmp_path: Path) -> None:
     assert manifest["study"]["name"] == "wider"
 
 
-def test_a_window_on_the_command_line(tmp_path: Path) -> None:
-    dealwake("run", DEMO, "--window", "-3:3", "--out", tmp_path / "out")
-    assert headline_windows(tmp_path / "out") == {(-3, 3)}
-    text = (tmp_path / "out" / "report.html").read_text()
-    assert "[−3, +3]" in text
+LIGHT = """
+[placebo]
+draws = 0
+[scrutiny]
+run = false
+[report]
+formats = ["html"]
+"""
 
 
-def test_the_car_of_a_new_window_is_the_sum_of_its_days(tmp_path: Path, demo: Path) -> None:
-    dealwake("run", DEMO, "--window", "-3:3", "--out", tmp_path / "out", "--quiet")
+@pytest.fixture(scope="module")
+def wider(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The demo with a window from the command line, without its slower proofs."""
+    base = tmp_path_factory.mktemp("window")
+    study = base / "light.toml"
+    study.write_text(f'base = "{DEMO.as_posix()}"\n{LIGHT}')
+    dealwake("run", study, "--window", "-3:3", cwd=base)
+    return base / "reports" / "light_m3_3"
+
+
+def test_a_window_on_the_command_line_gets_a_folder_of_its_own(wider: Path) -> None:
+    assert headline_windows(wider) == {(-3, 3)}
+    assert "[−3, +3]" in (wider / "report.html").read_text()
+    assert [path.name for path in wider.parent.iterdir()] == ["light_m3_3"]
+
+
+def test_the_car_of_a_new_window_is_the_sum_of_its_days(wider: Path, demo: Path) -> None:
     returns = pd.read_parquet(demo / "data" / "abnormal_returns.parquet")
     inside = returns[(returns["expected_return"] == "market_model") & returns["day"].between(-3, 3)]
     total = inside.groupby("deal")["abnormal_return"].sum()
-    deals = pd.read_parquet(tmp_path / "out" / "data" / "deals.parquet").set_index("deal")
+    deals = pd.read_parquet(wider / "data" / "deals.parquet").set_index("deal")
     shared = deals.index.intersection(total.index)
     assert len(shared) > 400
     pd.testing.assert_series_equal(
         deals.loc[shared, "car_m3_3"], total[shared], check_names=False, rtol=1e-9, atol=1e-12
     )
-
-
-def test_the_run_lands_under_reports_in_the_folder_one_works_in(tmp_path: Path) -> None:
-    study = tmp_path / "short.toml"
-    study.write_text(f'base = "{DEMO.as_posix()}"\n[report]\nformats = ["tex"]\n')
-    dealwake("run", study, cwd=tmp_path)
-    assert (tmp_path / "reports" / "short" / "manifest.json").is_file()

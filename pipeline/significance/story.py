@@ -1,0 +1,95 @@
+"""One deal's whole story, for the member who asks about it by name."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.estimate import t_reach
+from pipeline.core.window import Window
+
+
+@dataclass(frozen=True, slots=True)
+class Day:
+    """One event day: its session, abnormal and expected return (decimal) and half a band."""
+
+    day: int
+    date: str
+    abnormal: float
+    expected: float
+    reach: float
+
+
+@dataclass(frozen=True, slots=True)
+class Story:
+    """What was measured of one deal.
+
+    Attributes:
+        deal: identifier.
+        observations: returns in its estimation window.
+        parameters: mean parameters, the constant first.
+        residual_sd: per session, decimal.
+        days: the days around day zero.
+        window: the headline window.
+        car: decimal, with ``low`` and ``high`` of its own interval.
+        scar: standardised.
+        rank: of its CAR among ``deals``, 1 the largest.
+    """
+
+    deal: str
+    observations: int
+    parameters: tuple[float, ...]
+    residual_sd: float
+    days: tuple[Day, ...]
+    window: Window
+    car: float
+    low: float
+    high: float
+    scar: float
+    rank: int
+    deals: int
+
+
+def story_of(deal: str, abnormal: AbnormalReturns, window: Window, level: float) -> Story | None:
+    """The story of a measured deal, or None if it was not measured.
+
+    Bands and interval are the deal's own forecast errors with t(M - d) (MacKinlay 1997, JEL 35,
+    sec. 5); one deal's interval speaks of that deal alone.
+    """
+    if deal not in abnormal.deals:
+        return None
+    at = abnormal.deals.index(deal)
+    one = abnormal.take(np.array([at]))
+    reach = t_reach(level, float(one.degrees_of_freedom[0]))
+    cars = abnormal.car(window)
+    car, spread = float(one.car(window)[0]), float(np.sqrt(one.car_variance(window)[0]))
+    days = tuple(_day(one, day, reach) for day in range(one.span.start, one.span.end + 1))
+    return Story(
+        deal=deal,
+        observations=int(one.observations[0]),
+        parameters=tuple(float(value) for value in one.parameters[0]),
+        residual_sd=float(np.sqrt(one.residual_variance[0])),
+        days=days,
+        window=window,
+        car=car,
+        low=car - reach * spread,
+        high=car + reach * spread,
+        scar=car / spread,
+        rank=1 + int((cars > car).sum()),
+        deals=len(cars),
+    )
+
+
+def _day(one: AbnormalReturns, day: int, reach: float) -> Day:
+    where = one.columns(Window(day, day)).start
+    traded = bool(one.complete(Window(day, day))[0])
+    spread = float(np.sqrt(one.car_variance(Window(day, day))[0])) if traded else np.nan
+    return Day(
+        day=day,
+        date=str(one.days[0, where]),
+        abnormal=float(one.returns[0, where]),
+        expected=float(one.expected[0, where]),
+        reach=reach * spread,
+    )
