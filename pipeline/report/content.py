@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from functools import lru_cache
+
 from pipeline.core.results import Results
 from pipeline.report.closing import appendix, cautions_section
 from pipeline.report.comparison import comparison_table, reading
@@ -21,8 +23,9 @@ from pipeline.report.sample import attrition_section, question_section
 from pipeline.report.stages import identification_section
 
 
+@lru_cache(maxsize=1)
 def report(results: Results) -> Document:
-    """The full report of a run."""
+    """The full report of a run; built once for all formats."""
     material = Material.of(results)
     sections = (
         finding_section(material),

@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
+from scipy import sparse
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Dates, Floats, Integers
@@ -58,8 +60,9 @@ class Links:
         return Links(self.correlation[at], self.common[at])
 
 
+@lru_cache(maxsize=8)
 def links(abnormal: AbnormalReturns) -> Links:
-    """The links of all events of one model; made once and shared by its windows."""
+    """The links of all events of one model; made once and shared by its windows and checks."""
     return Links(*pairwise(abnormal.estimation_returns, abnormal.estimation_days))
 
 
@@ -79,19 +82,23 @@ def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = 
     if n < 2:
         return Dependence(np.nan, 0.0, 0, 0.0, np.nan, len(counts), int(counts.max(initial=0)))
     known = known or links(abnormal)
-    apart = ~np.eye(n, dtype=bool)
-    usable = apart & (known.common >= COMMON_DAYS) & np.isfinite(known.correlation)
-    mean = float(known.correlation[usable].mean()) if usable.any() else np.nan
-    filled = np.where(usable, known.correlation, mean if usable.any() else 0.0)
+    usable = (known.common >= COMMON_DAYS) & np.isfinite(known.correlation)
+    np.fill_diagonal(usable, False)
+    pairs = int(usable.sum())
+    mean = float(known.correlation[usable].mean()) if pairs else np.nan
     shared = overlap(abnormal.days[:, where])
-    weighted = float((filled * shared)[apart].sum() / (n * (n - 1)))
-    length = float(known.common[usable].mean()) if usable.any() else np.nan
+    first, second = shared.coords
+    meet = (first != second) & (shared.data > 0)
+    first, second, share = first[meet], second[meet], shared.data[meet]
+    alike = np.where(usable[first, second], known.correlation[first, second], mean)
+    possible = n * (n - 1)
+    length = float(known.common[usable].mean()) if pairs else np.nan
     return Dependence(
         mean=mean,
-        weighted=weighted,
-        pairs=int(usable.sum() // 2),
-        overlapping=float((shared[apart] > 0).mean()),
-        noise=float(np.sqrt(2 / (usable.sum() * length))) if usable.any() else np.nan,
+        weighted=float((np.nan_to_num(alike) * share).sum() / possible),
+        pairs=pairs // 2,
+        overlapping=len(share) / possible,
+        noise=float(np.sqrt(2 / (pairs * length))) if pairs else np.nan,
         dates=len(counts),
         largest=int(counts.max()),
     )
@@ -125,11 +132,14 @@ def pairwise(returns: Floats, days: Dates) -> tuple[Floats, Floats]:
     return np.clip(correlation, -1, 1), count
 
 
-def overlap(days: Dates) -> Floats:
-    """(N, N) share of L event dates that two deals have in common, from (N, L) dates."""
+def overlap(days: Dates) -> sparse.coo_array:
+    """(N, N) share of L event dates that two deals have in common, from (N, L) dates.
+
+    Sparse: most deals of a long sample never meet.
+    """
     n, length = days.shape
     known = ~np.isnat(days)
     dates, at = np.unique(days[known], return_inverse=True)
-    present = np.zeros((n, len(dates)))
-    present[np.nonzero(known)[0], at] = 1.0
-    return np.asarray(present @ present.T / length)
+    cells = (np.ones(len(at)), (np.nonzero(known)[0], at))
+    present = sparse.csr_array(cells, shape=(n, len(dates)))
+    return sparse.coo_array(present @ present.T / length)

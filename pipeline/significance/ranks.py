@@ -43,7 +43,7 @@ def rank(sample: CarSample) -> Tested:
 
 def _mean_rank(returns: Floats) -> tuple[Floats, Floats]:
     """(T,) mean over deals of the centred rank, and (T,) share of deals with a return that day."""
-    ranks = stats.rankdata(returns, axis=1, nan_policy="omit")
+    ranks = row_ranks(returns)
     valid = np.isfinite(returns).sum(axis=1, keepdims=True)
     centred = ranks / (valid + 1) - 0.5
     present = np.isfinite(centred)
@@ -51,6 +51,19 @@ def _mean_rank(returns: Floats) -> tuple[Floats, Floats]:
     with np.errstate(invalid="ignore", divide="ignore"):
         mean = np.where(present, centred, 0.0).sum(axis=0) / count
     return np.where(count > 0, mean, np.nan), count / len(returns)
+
+
+def row_ranks(returns: Floats) -> Floats:
+    """Ranks within each row from 1, mid-ranks for ties, NaN where a value is missing."""
+    order = np.argsort(returns, axis=1)  # missing values sort last
+    ordered = np.take_along_axis(returns, order, axis=1)
+    ranks = np.empty_like(returns)
+    places = np.broadcast_to(np.arange(1.0, returns.shape[1] + 1), returns.shape)
+    np.put_along_axis(ranks, order, places, axis=1)
+    tied = (ordered[:, 1:] == ordered[:, :-1]).any(axis=1)
+    if tied.any():
+        ranks[tied] = stats.rankdata(returns[tied], axis=1, nan_policy="omit")
+    return np.where(np.isfinite(returns), ranks, np.nan)
 
 
 def generalised_rank(sample: CarSample) -> Tested:

@@ -9,7 +9,7 @@ import numpy as np
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Dates, Floats, Integers
 from pipeline.core.window import Window
-from pipeline.significance.dependence import Dependence, Links, dependence
+from pipeline.significance.dependence import Dependence, Links, dependence, links
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -74,7 +74,7 @@ def car_sample(
     """
     rows = np.flatnonzero(abnormal.complete(window, share_of_days))
     kept = abnormal.take(rows)
-    link = dependence(kept, window, known.take(rows) if known else None)
+    link = dependence(kept, window, (known or links(abnormal)).take(rows))
     std_dev = np.sqrt(kept.car_variance(window))
     car = kept.car(window)
     where = kept.columns(window)

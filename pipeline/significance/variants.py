@@ -11,6 +11,7 @@ from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.ledger import Action, Ledger
 from pipeline.core.tables import typed_frame
 from pipeline.core.window import Window
+from pipeline.significance.dependence import links
 from pipeline.significance.sample import CarSample, car_sample
 from pipeline.significance.windows import mean_interval
 
@@ -46,7 +47,8 @@ def mean_variants(
     ]
     lead = next(iter(abnormal.values()))
     for variant, keep in _without(lead, ledger):
-        rows.append(_row("deals", variant, car_sample(lead.select(keep), window, 1.0), level))
+        some = links(lead).take(np.flatnonzero(keep))
+        rows.append(_row("deals", variant, car_sample(lead.select(keep), window, 1.0, some), level))
     return typed_frame(rows, COLUMNS)
 
 
