@@ -136,6 +136,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
             study.event_time.share_of_days,
             study.level,
             study.seed,
+            [key for key in tests if entry(TESTS, key).resamples],
         )
     placebo = _placebo(study, measured, found[0].mean, clock)
     with clock.stage("characteristics"):

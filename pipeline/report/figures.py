@@ -7,8 +7,11 @@ the plotting library's global state is used.
 from __future__ import annotations
 
 import io
+import re
 import textwrap
 from collections.abc import Callable, Mapping
+from functools import lru_cache
+from html import escape
 from typing import TYPE_CHECKING, Any
 
 import matplotlib as mpl
@@ -32,6 +35,7 @@ MARKERS = ("o", "s", "^", "D")
 INK, FAINT, STRIP = "#222222", "#8a8a8a", "#ececec"
 WIDTH = 7.2
 LABELLED = 30
+LINE = 15
 
 STYLE: dict[Any, Any] = {
     "svg.hashsalt": "dealwake",
@@ -52,10 +56,11 @@ STYLE: dict[Any, Any] = {
 }
 
 
-def svg(figure: Figure, *, titled: bool = False) -> str:
-    """The figure as an SVG document, without dates; text stays text."""
+@lru_cache(maxsize=64)
+def svg(figure: Figure) -> str:
+    """The figure as an SVG document, without dates; text stays text. Drawn once a figure."""
     with mpl.rc_context(STYLE):
-        canvas = _draw(figure, titled)
+        canvas = _draw(figure)
         FigureCanvasSVG(canvas)
         buffer = io.StringIO()
         metadata: dict[str, Any] = dict.fromkeys(("Date", "Creator", "Format", "Type"))
@@ -64,10 +69,35 @@ def svg(figure: Figure, *, titled: bool = False) -> str:
     return "\n".join(lines) + "\n"
 
 
+def titled_svg(figure: Figure) -> str:
+    """The same drawing under its title, as a document that stands alone."""
+    drawing = svg(figure)
+    root = drawing[drawing.index("<svg") :]
+    size = re.search(r'viewBox="0 0 ([\d.]+) ([\d.]+)"', root)
+    if size is None:
+        raise ValueError(f"the drawing of {figure.name} has no viewBox")
+    width, height = float(size[1]), float(size[2])
+    lines = _wrapped(figure.title.text, 78, 4).split("\n")
+    above = 10 + LINE * len(lines)
+    total = height + above
+    head = "".join(
+        f'<text x="10" y="{6 + LINE * (at + 1):g}" font-family="DejaVu Sans, sans-serif" '
+        f'font-size="11" font-weight="bold" fill="{INK}">{escape(line)}</text>\n'
+        for at, line in enumerate(lines)
+    )
+    # Inside, the drawing is measured in the units of the whole, not in points of its own.
+    inner = re.sub(r'(width|height)="([\d.]+)pt"', r'\1="\2"', root, count=2)
+    inner = inner.replace("<svg", f'<svg y="{above:g}"', 1)
+    return (
+        f'<svg xmlns="http://www.w3.org/2000/svg" width="{width:g}pt" height="{total:g}pt" '
+        f'viewBox="0 0 {width:g} {total:g}">\n{head}{inner}</svg>\n'
+    )
+
+
 def png(figure: Figure, *, dpi: int = 200) -> bytes:
     """The figure as a PNG picture, without its title, which the page prints as words."""
     with mpl.rc_context(STYLE):
-        canvas = _draw(figure, False)
+        canvas = _draw(figure)
         FigureCanvasAgg(canvas)
         buffer = io.BytesIO()
         canvas.savefig(buffer, format="png", dpi=dpi, metadata={"Software": None})
@@ -84,14 +114,10 @@ def csv(data: pd.DataFrame) -> bytes:
     return data.map(safe).to_csv(index=False, lineterminator="\n").encode()
 
 
-def _draw(figure: Figure, titled: bool) -> Canvas:
+def _draw(figure: Figure) -> Canvas:
     height = DRAWINGS[figure.kind][0](figure.data)
-    title = _wrapped(figure.title.text, 78, 4) if titled else ""
-    lines = title.count("\n") + 1 if title else 0
-    canvas = Canvas(figsize=(WIDTH, height + 0.24 * lines), layout="constrained")
+    canvas = Canvas(figsize=(WIDTH, height), layout="constrained")
     DRAWINGS[figure.kind][1](canvas, figure)
-    if title:
-        canvas.suptitle(title, x=0.02, ha="left", fontsize=11, fontweight="bold")
     return canvas
 
 

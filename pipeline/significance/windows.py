@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -26,10 +26,12 @@ def all_windows(
     share_of_days: float,
     level: float,
     seed: int = 20260301,
+    headline_only: Collection[str] = (),
 ) -> tuple[WindowTests, ...]:
     """Test every window under every model; the first window is the headline.
 
-    ``assumes`` names what each test takes for granted, held against each sample.
+    ``assumes`` names what each test takes for granted, held against each sample; tests of
+    ``headline_only`` are made under the first model alone.
 
     The headline window needs all its days; the others ``share_of_days`` of them. p-values of the
     secondary windows are also given after Holm's correction within a model and a test.
@@ -41,7 +43,8 @@ def all_windows(
             car_sample(measured, window, 1.0 if at == 0 else share_of_days, known, seed)
             for at, window in enumerate(windows)
         ]
-        results = [_tested(sample, tests, assumes) for sample in samples]
+        own = tests if not found else {k: t for k, t in tests.items() if k not in headline_only}
+        results = [_tested(sample, own, assumes) for sample in samples]
         adjusted: list[dict[str, float]] = [{} for _ in results[:1]] + holm_by_test(results[1:])
         found += [
             _summary(model, sample, result, p_holm, level)

@@ -12,6 +12,7 @@ import itertools
 import re
 import warnings
 from dataclasses import replace
+from xml.etree import ElementTree
 
 import numpy as np
 import pandas as pd
@@ -23,7 +24,17 @@ from pipeline.core.estimate import Shape
 from pipeline.core.results import Results
 from pipeline.report.content import report
 from pipeline.report.document import Figure, Paragraph
-from pipeline.report.figures import COLOURS, INK, LINES, MARKERS, _segments, csv, png, svg
+from pipeline.report.figures import (
+    COLOURS,
+    INK,
+    LINES,
+    MARKERS,
+    _segments,
+    csv,
+    png,
+    svg,
+    titled_svg,
+)
 from pipeline.report.graphs import columns_figure, distribution_figure, path_figure
 from pipeline.report.material import Material
 from tests.report.runs import DEALS, shaped, with_frames
@@ -67,9 +78,20 @@ def test_lines_are_named_at_their_ends(full: Results) -> None:
     assert "paid in shares" in text
 
 
+def test_the_drawing_fits_under_its_title(full: Results) -> None:
+    """The whole is as wide as the drawing and taller by the title; nothing is cut off."""
+    for figure in figures(full).values():
+        own = ElementTree.fromstring(svg(figure)).get("viewBox", "").split()
+        whole = ElementTree.fromstring(titled_svg(figure))
+        box = [float(part) for part in whole.get("viewBox", "").split()]
+        inner = next(part for part in whole if part.tag.endswith("svg"))
+        assert float(inner.get("width", 0)) == float(own[2]) == box[2]
+        assert float(inner.get("y", 0)) + float(inner.get("height", 0)) == pytest.approx(box[3])
+
+
 def test_the_file_carries_its_takeaway(full: Results) -> None:
     figure = figures(full)["columns"]
-    shown = words(svg(figure, titled=True)).replace("  ", " ")
+    shown = words(titled_svg(figure)).replace("  ", " ")
     for part in figure.title.text.split():
         assert part in shown
 
@@ -145,7 +167,7 @@ def test_labels_of_any_length_and_kind_are_drawn(full: Results) -> None:
     found = figures(with_frames(run))
     with warnings.catch_warnings():
         warnings.simplefilter("error")
-        texts = [words(svg(figure, titled=True)) for figure in found.values()]
+        texts = [words(titled_svg(figure)) for figure in found.values()]
         assert all(png(figure) for figure in found.values())
     assert "$x_1$" in texts[0]
 
