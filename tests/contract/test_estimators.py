@@ -37,18 +37,17 @@ WITHOUT_SCORES = ("heckman_two_step", "heckman_likelihood", "selection_two_stage
 """Their errors run over other rows than those they count: candidates, or both arms."""
 
 
-@pytest.fixture(params=PATHS, ids=[path.partition(":")[2] for path in PATHS])
-def fit(request: pytest.FixtureRequest) -> Fit:
-    module, _, name = request.param.partition(":")
+def loaded(path: str) -> Fit:
+    module, _, name = path.partition(":")
     found: Fit = getattr(import_module(module), name)
     return found
 
 
 @cache
-def has_classical(fit: Fit) -> bool:
+def has_classical(path: str) -> bool:
     """Whether the classical covariance exists; where not, the refusal names the key."""
     try:
-        fit(measured(deals()), OPTIONS["classical"])
+        loaded(path)(measured(deals()), OPTIONS["classical"])
     except InputProblem as refused:
         (finding,) = refused.findings
         assert (finding.rule, finding.column) == ("covariance_option", "covariance")
@@ -56,11 +55,19 @@ def has_classical(fit: Fit) -> bool:
     return True
 
 
-@pytest.fixture(params=OPTIONS, ids=list(OPTIONS))
-def options(request: pytest.FixtureRequest, fit: Fit) -> FitOptions:
-    if request.param == "classical" and not has_classical(fit):
-        pytest.skip("refuses the classical covariance, by name")
-    return OPTIONS[request.param]
+def pytest_generate_tests(metafunc: pytest.Metafunc) -> None:
+    """Every registered estimator, under every covariance it offers."""
+    if "options" in metafunc.fixturenames:
+        pairs = [
+            pytest.param(loaded(path), choice, id=f"{path.partition(':')[2]}-{name}")
+            for path in PATHS
+            for name, choice in OPTIONS.items()
+            if name != "classical" or has_classical(path)
+        ]
+        metafunc.parametrize(("fit", "options"), pairs)
+    elif "fit" in metafunc.fixturenames:
+        names = [path.partition(":")[2] for path in PATHS]
+        metafunc.parametrize("fit", [loaded(path) for path in PATHS], ids=names)
 
 
 @pytest.fixture(scope="module")
