@@ -55,9 +55,10 @@ def run(
     screen = Screen(quiet=quiet, as_json=as_json)
 
     def work() -> None:
+        from pipeline.core.clock import Clock
         from pipeline.core.store import refuse_foreign
-        from pipeline.flow import Clock, save
         from pipeline.flow import run as run_stages
+        from pipeline.saving import save
 
         with screen.progress() as tell:
             plan = _load(study, window)

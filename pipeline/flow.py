@@ -2,29 +2,21 @@
 
 from __future__ import annotations
 
-import hashlib
-import json
-import platform
-import time
-from collections.abc import Callable, Iterable, Iterator, Mapping
-from contextlib import contextmanager
-from dataclasses import dataclass, field, replace
-from importlib.metadata import version
-from pathlib import Path
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, replace
 from typing import Any
 
 from pipeline.characteristics.design import Prepared, prepare, price_measures
 from pipeline.characteristics.outcomes import deals_frame, group_names, with_outcomes
 from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.clock import Clock, Progress
 from pipeline.core.design import FitOptions
 from pipeline.core.estimate import Column, Diagnostic, Estimate, EstimationFailed, Withheld
 from pipeline.core.findings import Finding, findings_frame, problem, raise_errors
 from pipeline.core.ledger import Ledger, LedgerEntry
-from pipeline.core.parquet import parquet_bytes
 from pipeline.core.prices import PricePanel
 from pipeline.core.results import Results
 from pipeline.core.scrutiny import Direction, Variant, direction_frame, together
-from pipeline.core.store import write_folder
 from pipeline.core.tables import (
     abnormal_returns_frame,
     diagnostics_frame,
@@ -39,7 +31,6 @@ from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
     ESTIMATORS,
     EXPECTED_RETURNS,
-    FORMATS,
     PRICE_MEASURES,
     TESTS,
     entry,
@@ -57,6 +48,7 @@ from pipeline.returns.panel import build_panels
 from pipeline.returns.placebo import pseudo_events
 from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
 from pipeline.scrutiny.scrutinise import scrutinise
+from pipeline.significance.averages import averages_of, groups_of
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.choice import leading_test
 from pipeline.significance.dependence import links
@@ -68,25 +60,6 @@ from pipeline.significance.variants import mean_variants
 from pipeline.significance.windows import all_windows
 from pipeline.study import plan
 from pipeline.study.schema import Study
-
-Progress = Callable[[str], None]
-PACKAGES = ("dealwake", "numpy", "pandas", "scipy", "statsmodels", "pandas-market-calendars")
-
-
-@dataclass(slots=True)
-class Clock:
-    """Seconds spent in each stage, and who is told when one begins."""
-
-    progress: Progress
-    seconds: dict[str, float] = field(default_factory=dict)
-
-    @contextmanager
-    def stage(self, name: str) -> Iterator[None]:
-        """Time a stage."""
-        self.progress(name)
-        begin = time.perf_counter()
-        yield
-        self.seconds[name] = round(time.perf_counter() - begin, 3)
 
 
 @dataclass(frozen=True, slots=True)
@@ -379,7 +352,9 @@ def _results(
         window_tests=found,
         columns=columns,
         lead=_lead(columns),
-        paths=average_paths(lead, groups, plan.path_days(study), study.level),
+        paths=average_paths(lead, groups, plan.path_days(study), study.level, study.seed),
+        averages=averages_of(lead, facts.headline, deals, study.level),
+        groups=groups_of(lead, facts.headline, groups, facts.groups),
         diagnostics=diagnostics_frame(checks),
         sensitivity=together(
             mean_variants(measured.abnormal, facts.headline, ledger, study.level), doubts.variants
@@ -407,6 +382,8 @@ def _results(
         "power": results.power,
         "ladder": results.ladder,
         "directions": results.directions,
+        "averages": results.averages,
+        "groups": results.groups,
     }
     return replace(results, tables={**tables, "headline": headline_frame(results)})
 
@@ -418,43 +395,3 @@ def _lead(columns: tuple[Column, ...]) -> int:
         for column in columns
     ]
     return ranks.index(max(ranks)) if ranks and max(ranks) >= 0 else -1
-
-
-def save(
-    study: Study, results: Results, seconds: Mapping[str, float], folder: Path, clock: Clock
-) -> list[str]:
-    """Write documents, data and manifest to ``folder``, whole or not at all.
-
-    Returns:
-        The names of the files written.
-    """
-    files: dict[str, bytes] = {}
-    with clock.stage("documents"):
-        for key in study.report.formats:
-            files.update(entry(FORMATS, key).load()(results))
-        for name, frame in results.tables.items():
-            files[f"data/{name}.parquet"] = parquet_bytes(frame)
-    files["manifest.json"] = _manifest(study, {**seconds, **clock.seconds})
-    write_folder(folder, files)
-    return sorted(files)
-
-
-def _manifest(study: Study, seconds: Mapping[str, float]) -> bytes:
-    inputs = {
-        name: {"file": source.path.name, "sha256": _digest(source.path)}
-        for name, source in plan.sources(study).items()
-    }
-    content = {
-        "study": study.model_dump(mode="json", by_alias=True, exclude={"inputs"}),
-        "inputs": inputs,
-        "packages": {name: version(name) for name in PACKAGES},
-        "python": platform.python_version(),
-        "seed": study.seed,
-        "seconds": dict(seconds),
-    }
-    return (json.dumps(content, indent=2, ensure_ascii=False) + "\n").encode()
-
-
-def _digest(path: Path) -> str:
-    with path.open("rb") as file:
-        return hashlib.file_digest(file, "sha256").hexdigest()

@@ -99,7 +99,8 @@ class Results:
         window_tests: one entry a window and model, the headline window and model first.
         columns: the comparison table's columns, in order.
         lead: index in ``columns`` of the column that answers the question, -1 without one.
-        paths: ``group, day, n, mean, low, high`` of the cumulative average abnormal return.
+        paths: ``group, day, n, mean, low, high, low_path, high_path`` of the cumulative average
+            abnormal return.
         diagnostics: ``subject, check, value, threshold, verdict, meaning, source``; verdict is
             ``pass``, ``warn`` or ``fail``.
         sensitivity: ``dimension, variant, estimate, ci_low, ci_high, n`` (decimal); a column
@@ -114,6 +115,9 @@ class Results:
             every treatment of it, decimal.
         directions: ``factor, on_outcome, on_treatment, bias, true_effect, evidence`` of suspected
             flaws.
+        averages: ``average, value, std_error, ci_low, ci_high, n, meaning`` of the headline window.
+        groups: ``test, first, second, n_first, n_second, difference, statistic, df, p_value,
+            source``: treated deals against the others.
         doubts: sentences on what the scrutiny could not ask.
     """
 
@@ -134,6 +138,8 @@ class Results:
     ladder: pd.DataFrame = field(default_factory=pd.DataFrame)
     directions: pd.DataFrame = field(default_factory=pd.DataFrame)
     doubts: tuple[str, ...] = ()
+    averages: pd.DataFrame = field(default_factory=pd.DataFrame)
+    groups: pd.DataFrame = field(default_factory=pd.DataFrame)
 
     @property
     def headline(self) -> WindowTests:

@@ -131,6 +131,9 @@ def _path(canvas: Canvas, figure: Figure) -> None:
         colour, marker = COLOURS[at % 4], MARKERS[at % 4]
         x, y = path["session"], path["mean_bp"]
         axes.fill_between(x, path["low_bp"], path["high_bp"], color=colour, alpha=0.13, lw=0)
+        if "low_path_bp" in path:
+            for edge in ("low_path_bp", "high_path_bp"):
+                axes.plot(x, path[edge], color=colour, lw=0.7, ls=(0, (1, 2)))
         every = max(1, len(path) // 8)
         axes.plot(
             x, y, color=colour, ls=LINES[at % 4], lw=1.8, marker=marker, ms=4.5, markevery=every

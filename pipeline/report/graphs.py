@@ -38,13 +38,17 @@ def path_figure(material: Material) -> Figure | None:
             "high_bp": paths["high"].astype(float) * BP,
         }
     )
+    if "low_path" in paths:
+        data["low_path_bp"] = paths["low_path"].astype(float) * BP
+        data["high_path_bp"] = paths["high_path"].astype(float) * BP
     window = material.study.headline
     caption = prose(
         "Mean cumulative abnormal return from session ",
         material.number("path_first_session", signed=True),
         ", in basis points. Shaded: the ", material.percent("confidence_level"),
         " band of each session taken alone (pointwise); a whole path leaves such a band more "
-        "often. The grey strip is the headline window, session zero the first that could react.",
+        "often. Thin dots: the band that holds the whole path. The grey strip is the headline "
+        "window, session zero the first that could react.",
     )  # fmt: skip
     return Figure(
         "average_path", "path", prose(*_path_title(material)), caption, _path_words(data), data,

@@ -19,7 +19,7 @@ from pipeline.report.document import (
 )
 from pipeline.report.finding import agreement_sentence, reaction_sentence
 from pipeline.report.graphs import distribution_figure, path_figure
-from pipeline.report.material import Material, prose, taken
+from pipeline.report.material import Material, embedded, prose, taken
 from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, percent, plain
 from pipeline.report.proof import proof_blocks
 from pipeline.report.wording import distribution_words, level_words, window_label
@@ -31,8 +31,59 @@ def reaction_section(material: Material) -> Section:
     figures = [path_figure(material), distribution_figure(material)]
     tables = [windows_table(material), tests_table(material, models(material)[0])]
     blocks: list[Block] = [opening, *(f for f in figures if f is not None), *tables]
-    proof = proof_blocks(material)
-    return Section("Is the reaction real", (*blocks, assumptions_table(material), *proof))
+    more = (averages_table(material), groups_table(material))
+    after = [*(t for t in more if t.rows), assumptions_table(material), *proof_blocks(material)]
+    return Section("Is the reaction real", (*blocks, *after))
+
+
+def averages_table(material: Material) -> Table:
+    """The headline reaction under other averages."""
+    level = level_words(material.study.level)
+    columns = (
+        Column("Average"), Column("Deals", "n"), Column(f"Mean with {level} interval", "bp"),
+        Column("What it says", prose=True),
+    )  # fmt: skip
+    frame = material.results.averages
+    low, high = material.tests.interval
+    digits = bp_digits(BP * (high - low) / 4)
+    rows = tuple(
+        (
+            Text(str(row["average"])), count(int(row["n"])),
+            Interval(
+                bp(float(row["value"]), digits), bp(float(row["ci_low"]), digits),
+                bp(float(row["ci_high"]), digits),
+            ),
+            Text(str(row["meaning"])),
+        )
+        for _, row in frame.iterrows()
+    )  # fmt: skip
+    note = prose("An average in percent and one in money can differ in sign: a few large deals "
+                 "may lose what many small ones gain. Deals are taken as independent.")  # fmt: skip
+    return Table("averages", prose("The reaction under other averages"), columns, rows, (note,))
+
+
+def groups_table(material: Material) -> Table:
+    """One group of deals against the other, before anything is held fixed."""
+    columns = (
+        Column("Test"), Column("Deals", "n"), Column("Difference", "bp"), Column("Statistic"),
+        Column("p"), Column("Source", prose=True),
+    )  # fmt: skip
+    frame = material.results.groups
+    rows = tuple(
+        (
+            Text(str(row["test"])), count(int(row["n_first"] + row["n_second"])),
+            bp(float(row["difference"])) if "standardised" not in str(row["test"]) else None,
+            plain(float(row["statistic"]), 2), p_value(float(row["p_value"])),
+            Text(str(row["source"])),
+        )
+        for _, row in frame.iterrows()
+    )  # fmt: skip
+    words = material.study.groups
+    title = prose("Deals ", embedded(words[1], "study"), " against deals ",
+                  embedded(words[0], "study"))  # fmt: skip
+    note = prose("Nothing is held fixed here; deals of one date are taken as independent. The "
+                 "difference of the last test is that of the medians.")  # fmt: skip
+    return Table("groups", title, columns, rows, (note,))
 
 
 def other_models_section(material: Material) -> Section | None:

@@ -16,6 +16,7 @@ def cross_checks(study: Study, file: str) -> list[Finding]:
         *_windows(study, file),
         *_circles(study, file),
         *_roles(study, file),
+        *_columns(study, file),
         *_needs(study, file),
         *_zone(study, file),
     ]
@@ -114,7 +115,14 @@ def _roles(study: Study, file: str) -> Iterator[Finding]:
             "two different words: untreated, treated",
             "Name the two values of the treatment.",
         )
-    if study.instruments is not None:
+    yield from _instruments(study, file, outcome)
+    yield from _exclusions(study, file, outcome)
+
+
+def _instruments(study: Study, file: str, outcome: list[str]) -> Iterator[Finding]:
+    """Instruments that explain the outcome as well, or move another variable."""
+    regression = study.regression
+    if study.instruments is not None and regression is not None:
         for name in study.instruments.use:
             if name in outcome or name in regression.fixed_effects:
                 yield _error(
@@ -134,6 +142,10 @@ def _roles(study: Study, file: str) -> Iterator[Finding]:
                 f"'{regression.treatment}', the treatment of the regression",
                 "Name the same variable in both places.",
             )
+
+
+def _exclusions(study: Study, file: str, outcome: list[str]) -> Iterator[Finding]:
+    """Excluded variables that explain the outcome as well."""
     if study.selection is not None:
         for name in study.selection.excluded:
             if name in outcome:
@@ -147,7 +159,7 @@ def _roles(study: Study, file: str) -> Iterator[Finding]:
                 )
 
 
-def _needs(study: Study, file: str) -> Iterator[Finding]:
+def _columns(study: Study, file: str) -> Iterator[Finding]:
     words = {
         "effects": ("fixed effects", bool(study.regression and study.regression.fixed_effects)),
         "selection": ("[selection]", study.selection is not None),
@@ -165,6 +177,9 @@ def _needs(study: Study, file: str) -> Iterator[Finding]:
                     f"{name}, which that column is made of",
                     f"Add {name}, or take '{key}' out.",
                 )
+
+
+def _needs(study: Study, file: str) -> Iterator[Finding]:
     parts = {"selection": study.selection, "instruments": study.instruments}
     for name, part in parts.items():
         if part is not None and study.regression is None:
