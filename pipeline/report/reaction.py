@@ -126,13 +126,19 @@ def is_headline(material: Material, entry: WindowTests) -> bool:
     return entry is material.tests
 
 
+def _declared(material: Material, entry: WindowTests) -> str:
+    if is_headline(material, entry):
+        return "headline"
+    return "other model" if entry.window == material.study.headline else "secondary"
+
+
 def _window_row(material: Material, entry: WindowTests) -> tuple[Cell, ...]:
     low, high = entry.interval
     digits = bp_digits(BP * (high - low) / 4)
     return (
         Text(window_label(entry.window.label)),
         Text(material.study.words(entry.model)),
-        Text("headline" if is_headline(material, entry) else "secondary"),
+        Text(_declared(material, entry)),
         count(entry.n),
         Interval(bp(entry.mean, digits), bp(low, digits), bp(high, digits)),
         bp(entry.median, digits),

@@ -63,7 +63,10 @@ def settings_table(material: Material) -> Table:
         ("Its two values", joined(group for group in study.groups if group)),
         ("Controls", joined(study.words(n) for n in study.regressors if n != study.treatment)),
         ("Fixed effects", joined(study.words(n) for n in study.effects)),
-        ("Errors clustered by", joined(study.words(n) for n in study.clusters)),
+        (
+            "Errors clustered, where a column says so, by",
+            joined(study.words(n) for n in study.clusters),
+        ),
         ("Instruments", joined(study.words(n) for n in study.instruments)),
         ("Decision to announce explained by", joined(study.words(n) for n in study.selection)),
         ("In that decision alone", joined(study.words(n) for n in study.excluded)),

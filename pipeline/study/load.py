@@ -131,6 +131,16 @@ def _finding(error: Any, file: str) -> Finding:
             column=key,
         )
     message = str(error["msg"]).removeprefix("Value error, ")
+    if isinstance(error["input"], dict):  # the values of a table do not fit together
+        return Finding(
+            "bad_value",
+            Severity.ERROR,
+            file,
+            got="values that do not fit together",
+            expected=message,
+            remedy="Correct one of them; configs/every_key.toml says what each may be.",
+            column=key,
+        )
     return Finding(
         "bad_value",
         Severity.ERROR,

@@ -117,7 +117,9 @@ class EventTime(Part):
     def _ordered(self) -> EventTime:
         for start, end in (self.estimation, self.headline, *self.windows):
             if end < start:
-                raise ValueError(f"window [{start}, {end}] ends before it starts")
+                raise ValueError(
+                    f"a last session after the first: [{start}, {end}] ends before it starts"
+                )
         return self
 
     @property

@@ -215,3 +215,10 @@ def test_a_long_value_is_cut_short(tmp_path: Path) -> None:
     finding = one_refusal(tmp_path, ("[-150, -31]", f'"{"x" * 300}"'))
     assert finding.column == "event_time.estimation"
     assert len(finding.got) <= 80
+
+
+def test_a_window_that_ends_before_it_starts_says_so(tmp_path: Path) -> None:
+    finding = one_refusal(tmp_path, ("headline = [-1, 1]", "headline = [5, -5]"))
+    assert finding.column == "event_time"
+    assert "[5, -5] ends before it starts" in finding.expected
+    assert "{" not in finding.got
