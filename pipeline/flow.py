@@ -7,7 +7,13 @@ from dataclasses import dataclass, replace
 from typing import Any
 
 from pipeline.characteristics.design import Prepared, prepare, price_measures
-from pipeline.characteristics.outcomes import deals_frame, group_names, with_outcomes
+from pipeline.characteristics.outcomes import (
+    deals_frame,
+    group_names,
+    outcomes_by_choice,
+    samples_without,
+    with_outcomes,
+)
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.clock import Clock, Progress
 from pipeline.core.design import FitOptions
@@ -23,6 +29,7 @@ from pipeline.core.tables import (
     estimates_frame,
     event_tests_frame,
     ladder_frame,
+    no_frame,
 )
 from pipeline.core.window import Window
 from pipeline.estimators.checks import with_checks
@@ -48,6 +55,7 @@ from pipeline.returns.panel import build_panels
 from pipeline.returns.placebo import pseudo_events
 from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
 from pipeline.scrutiny.scrutinise import scrutinise
+from pipeline.scrutiny.specifications import specifications
 from pipeline.significance.averages import averages_of, groups_of
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.choice import leading_test
@@ -56,7 +64,7 @@ from pipeline.significance.paths import average_paths
 from pipeline.significance.placebo import placebo_sizes
 from pipeline.significance.power import power_of
 from pipeline.significance.story import Story, story_of
-from pipeline.significance.variants import mean_variants
+from pipeline.significance.variants import FLAGS, mean_variants
 from pipeline.significance.windows import all_windows
 from pipeline.study import plan
 from pipeline.study.schema import Study
@@ -71,6 +79,7 @@ class Doubts:
     checks: tuple[Diagnostic, ...] = ()
     directions: tuple[Direction, ...] = ()
     notes: tuple[str, ...] = ()
+    specifications: tuple[Any, Any] | None = None
 
 
 @dataclass(frozen=True, slots=True)
@@ -119,7 +128,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     if prepared is not None:
         with clock.stage("estimators"):
             columns = tuple(_fit(study, key, prepared) for key in study.columns)
-        doubts = _scrutinise(study, prepared, columns, clock)
+        doubts = _scrutinise(study, measured, prepared, columns, clock)
     with clock.stage("results"):
         results = _results(study, measured, found, prepared, columns, placebo, doubts)
     return results, clock.seconds
@@ -295,7 +304,11 @@ def _placebo(study: Study, measured: Measured, mean: float, clock: Clock) -> Any
 
 
 def _scrutinise(
-    study: Study, prepared: Prepared, columns: tuple[Column, ...], clock: Clock
+    study: Study,
+    measured: Measured,
+    prepared: Prepared,
+    columns: tuple[Column, ...],
+    clock: Clock,
 ) -> Doubts:
     """What would overturn the finding, and how much hangs on the errors."""
     if not study.scrutiny.run or _lead(columns) < 0:
@@ -305,7 +318,24 @@ def _scrutinise(
         options = plan.scrutiny_options(study, prepared.groups)
         found = scrutinise(design, columns, _lead(columns), options)
         rungs = ladder(design, FitOptions(level=study.level))
-    return Doubts(rungs, found.variants, found.checks, found.directions, found.notes)
+        cells = _specifications(study, measured, prepared) if study.scrutiny.grid.run else None
+    return Doubts(rungs, found.variants, found.checks, found.directions, found.notes, cells)
+
+
+def _specifications(study: Study, measured: Measured, prepared: Prepared) -> tuple[Any, Any]:
+    """The specification curve over the study's own windows, models and flags."""
+    asked, rows = study.scrutiny.grid, prepared.design.rows
+    share = study.event_time.share_of_days
+    return specifications(
+        prepared.design,
+        outcomes_by_choice(measured.abnormal, measured.windows, share, rows),
+        samples_without(measured.ledger, rows, FLAGS),
+        asked.control_sets,
+        asked.winsorise,
+        asked.permutations,
+        study.seed,
+        plan.fit_options(study),
+    )
 
 
 def _with_outcomes(study: Study, measured: Measured) -> Any:
@@ -367,6 +397,8 @@ def _results(
         ladder=ladder_frame(doubts.rungs),
         directions=direction_frame(doubts.directions),
         doubts=doubts.notes,
+        specifications=doubts.specifications[0] if doubts.specifications else no_frame(),
+        curve=doubts.specifications[1] if doubts.specifications else no_frame(),
     )
     tables = {
         "abnormal_returns": abnormal_returns_frame(measured.abnormal),
@@ -384,6 +416,8 @@ def _results(
         "directions": results.directions,
         "averages": results.averages,
         "groups": results.groups,
+        "specifications": results.specifications,
+        "curve": results.curve,
     }
     return replace(results, tables={**tables, "headline": headline_frame(results)})
 

@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
+from pipeline.core.ledger import Ledger
 from pipeline.core.window import Window
 
 HIDDEN = ("_row", "column", "position", "announced_utc")
@@ -35,6 +36,39 @@ def with_outcomes(
     added[f"{car_column(windows[0])}_std_dev"] = np.sqrt(abnormal.car_variance(windows[0]))
     added["estimation_returns"] = abnormal.observations
     return deals.assign(**added)
+
+
+def outcomes_by_choice(
+    abnormal: Mapping[str, AbnormalReturns],
+    windows: Sequence[Window],
+    share: float,
+    rows: Sequence[str],
+) -> dict[str, np.ndarray]:
+    """Window and model in words -> (n,) CARs of ``rows``, decimal, the headline's first.
+
+    A window needs ``share`` of its days, as in the deal table; NaN where fewer traded.
+    """
+    made: dict[str, np.ndarray] = {}
+    for model, measured in abnormal.items():
+        place = {deal: at for at, deal in enumerate(measured.deals)}
+        at = np.array([place[deal] for deal in rows], dtype=np.int64)
+        for window in windows:
+            car = np.where(measured.complete(window, share), measured.car(window), np.nan)
+            made[f"{window.label}, {model.replace('_', ' ')}"] = car[at]
+    return made
+
+
+def samples_without(
+    ledger: Ledger, rows: Sequence[str], rules: Mapping[str, str]
+) -> dict[str, np.ndarray]:
+    """All deals, and for each flag that some deal carries, the deals without it."""
+    made = {"all deals": np.ones(len(rows), dtype=np.bool_)}
+    for rule, words in rules.items():
+        flagged = {item.deal for _, item in ledger if item.rule == rule}
+        keep = np.array([deal not in flagged for deal in rows], dtype=np.bool_)
+        if keep.any() and not keep.all():
+            made[words] = keep
+    return made
 
 
 def group_names(deals: pd.DataFrame, treatment: str, words: tuple[str, str]) -> pd.Series:

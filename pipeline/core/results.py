@@ -118,6 +118,8 @@ class Results:
         averages: ``average, value, std_error, ci_low, ci_high, n, meaning`` of the headline window.
         groups: ``test, first, second, n_first, n_second, difference, statistic, df, p_value,
             source``: treated deals against the others.
+        specifications: one row a way to make the least-squares estimate, the headline's first;
+            ``curve`` is ``name, value`` of all of them together.
         doubts: sentences on what the scrutiny could not ask.
     """
 
@@ -140,6 +142,8 @@ class Results:
     doubts: tuple[str, ...] = ()
     averages: pd.DataFrame = field(default_factory=pd.DataFrame)
     groups: pd.DataFrame = field(default_factory=pd.DataFrame)
+    specifications: pd.DataFrame = field(default_factory=pd.DataFrame)
+    curve: pd.DataFrame = field(default_factory=pd.DataFrame)
 
     @property
     def headline(self) -> WindowTests:

@@ -75,6 +75,11 @@ def typed_frame(rows: Iterable[Mapping[str, Any]], columns: Mapping[str, str]) -
     return pd.DataFrame(list(rows), columns=list(columns)).astype(dict(columns))
 
 
+def no_frame() -> pd.DataFrame:
+    """A frame of nothing, for what a run was not asked for."""
+    return pd.DataFrame()
+
+
 def event_tests_frame(found: Sequence[WindowTests]) -> pd.DataFrame:
     """One row a test a window a model."""
     return typed_frame(

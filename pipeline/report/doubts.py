@@ -7,6 +7,7 @@ import math
 import pandas as pd
 
 from pipeline.core.estimate import Estimate
+from pipeline.report.curve import curve_blocks
 from pipeline.report.document import (
     Block,
     Bullets,
@@ -62,6 +63,7 @@ def sensitivity_section(material: Material) -> Section | None:
     more = [table for table in (ladder_table(material), directions_table(material)) if table.rows]
     silent = Bullets(tuple(prose(taken(note, "check")) for note in material.results.doubts))
     after = (*more, *((silent,) if silent.items else ()))
+    blocks += curve_blocks(material)
     return Section("Sensitivity", (*blocks, sensitivity_table(material), *after))
 
 

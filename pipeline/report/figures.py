@@ -159,6 +159,40 @@ def _curve(canvas: Canvas, figure: Figure) -> None:
     _ticks(axes)
 
 
+def _choices_height(data: pd.DataFrame) -> float:
+    return 2.6 + 0.17 * len(_choice_rows(data))
+
+
+def _choice_rows(data: pd.DataFrame) -> list[tuple[str, str]]:
+    """(column, choice) of every choice that some estimate makes and some does not."""
+    columns = [name for name in data.columns if data[name].dtype == "object" or
+               pd.api.types.is_string_dtype(data[name])]  # fmt: skip
+    return [(name, str(choice)) for name in columns if data[name].nunique() > 1
+            for choice in dict.fromkeys(sorted(data[name]))]  # fmt: skip
+
+
+def _choices(canvas: Canvas, figure: Figure) -> None:
+    data, rows = figure.data, _choice_rows(figure.data)
+    above, below = canvas.subplots(2, 1, sharex=True, height_ratios=[2.2, 0.17 * len(rows) + 0.2])
+    x = data["rank"]
+    above.vlines(x, data["low_bp"], data["high_bp"], color=STRIP, lw=1.2)
+    above.plot(x, data["estimate_bp"], ls="none", marker="o", ms=2.2, color=COLOURS[0])
+    above.axhline(0, color=FAINT, lw=0.8)
+    at = figure.marks["headline"]
+    if at:
+        value = data["estimate_bp"].iloc[int(at) - 1]
+        above.plot([at], [value], marker="s", ms=6, color=COLOURS[1], ls="none")
+    above.set_ylabel(figure.axis)
+    _ticks(above)
+    for place, (name, choice) in enumerate(rows):
+        made = x[data[name].astype(str) == choice]
+        below.plot(made, np.full(len(made), place), ls="none", marker="|", ms=4, color=INK)
+    below.set_yticks(range(len(rows)), [choice for _, choice in rows], fontsize=7.5)
+    below.set_ylim(len(rows) - 0.5, -0.5)
+    below.set_xlabel("Ways to make the estimate, sorted")
+    _ticks(below, y=False)
+
+
 def _end_labels(axes: Axes, ends: list[tuple[str, float, float, str]]) -> None:
     """Name the lines at their ends, pushed apart where they would meet."""
     low, high = axes.get_ylim()
@@ -300,4 +334,5 @@ DRAWINGS: Mapping[str, Drawing] = {
     "distribution": (lambda data: 1.0 + 1.6 * data["group"].nunique(), _distribution),
     "intervals": (_interval_height, _intervals),
     "curve": (lambda data: 3.2, _curve),
+    "choices": (_choices_height, _choices),
 }

@@ -41,7 +41,18 @@ def headline_frame(results: Results) -> pd.DataFrame:
     Returns and effects are decimal; money is in the study's currency and scale. Two rays are
     everything outside (ci_low, ci_high); the line and the empty set have no ends.
     """
-    parts = (_counts, _reaction, _effects, _range, _money, _paths, _distribution, _proof, _verdicts)
+    parts = (
+        _counts,
+        _reaction,
+        _effects,
+        _range,
+        _money,
+        _paths,
+        _distribution,
+        _proof,
+        _curve,
+        _verdicts,
+    )
     rows = [line for part in parts for line in part(results)]
     frame = pd.DataFrame([[getattr(r, c) for c in COLUMNS] for r in rows], columns=list(COLUMNS))
     numbers = dict.fromkeys(("value", "ci_low", "ci_high", "level"), "float64")
@@ -210,6 +221,18 @@ def _proof(results: Results) -> Iterator[Line]:
         yield Line("placebo_draws", float(row["draws"]), "samples")
         yield Line("placebo_farther", float(row["rejected"]), "samples")
         yield Line("placebo_p", float(row["rate"]), "fraction")
+
+
+UNITS = {"cells": "ways", "failed": "ways", "median": "decimal", "low": "decimal"}
+UNITS |= {"high": "decimal", "same_sign": "fraction", "significant": "fraction"}
+
+
+def _curve(results: Results) -> Iterator[Line]:
+    """The specification curve in numbers."""
+    for _, row in results.curve.iterrows():
+        if math.isfinite(row["value"]):
+            name = str(row["name"])
+            yield Line(f"curve_{name}", float(row["value"]), UNITS.get(name, "fraction"))
 
 
 def _verdicts(results: Results) -> Iterator[Line]:

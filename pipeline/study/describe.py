@@ -66,6 +66,10 @@ def every_key() -> str:
             lines += [f"# {line}" for line in _keys(model, f"{name}.", mark=False)]
             continue
         lines += ["", f"[{name}]", *_keys(model, f"{name}.")]
+        for inner, part in model.model_fields.items():
+            nested = _model(part.annotation)
+            if nested is not None and _is_table(part):
+                lines += ["", f"[{name}.{inner}]", *_keys(nested, f"{name}.{inner}.")]
     return "\n".join(lines) + "\n"
 
 

@@ -319,6 +319,21 @@ class SuspectedFactor(Part):
     evidence: str = Field("", description="Why you think so; printed verbatim.")
 
 
+class SpecificationGrid(Part):
+    """The specification curve: windows, models, controls, winsorising and samples, all combined."""
+
+    run: bool = Field(False, description="Whether to make it.")
+    control_sets: list[list[str]] = Field(
+        default_factory=list, description="Sets of controls beside all of them and none."
+    )
+    winsorise: list[float] = Field(
+        [0.0, 0.01], description="Shares of the outcome set to its quantile at either end."
+    )
+    permutations: int = Field(
+        199, ge=0, le=100_000, description="Draws of the test of the whole curve; 0 leaves it out."
+    )
+
+
 class Scrutiny(Part):
     """What it would take to overturn the finding."""
 
@@ -335,6 +350,7 @@ class Scrutiny(Part):
         default_factory=list,
         description="Controls a hidden factor is likened to; the strongest one if empty.",
     )
+    grid: SpecificationGrid = Field(default_factory=SpecificationGrid)
     simulate_errors: bool = Field(
         False, description="Whether errors of record are simulated as well (slow)."
     )
