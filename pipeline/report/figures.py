@@ -34,7 +34,7 @@ LINES = ("-", (0, (6, 2)), (0, (2, 1.5)), "-.")
 MARKERS = ("o", "s", "^", "D")
 INK, FAINT, STRIP = "#222222", "#8a8a8a", "#ececec"
 WIDTH = 7.2
-LABELLED = 30
+LABELLED = 45
 LINE = 15
 
 STYLE: dict[Any, Any] = {

@@ -17,10 +17,11 @@ from pipeline.report.material import (
     named,
     prose,
 )
-from pipeline.report.numerals import BP, PERCENT, bp_digits, show, slug
+from pipeline.report.numerals import BP, PERCENT, bp_digits, show, slug, true_minus
 from pipeline.report.wording import direction, set_words
 
 BINS = 30
+SORTED = 12
 
 
 def path_figure(material: Material) -> Figure | None:
@@ -185,7 +186,7 @@ def sensitivity_figure(material: Material, target: str) -> Figure:
     data = pd.DataFrame(
         {
             "dimension": frame["dimension"].astype("str"),
-            "label": frame["variant"].astype("str"),
+            "label": [true_minus(str(text)) for text in frame["variant"]],
             "shape": "interval",
             "estimate_bp": frame["estimate"].astype(float) * BP,
             "low_bp": frame["ci_low"].astype(float) * BP,
@@ -194,6 +195,8 @@ def sensitivity_figure(material: Material, target: str) -> Figure:
             "lead": False,
         }
     )
+    if len(data) > SORTED:  # a few stay in the order of their kinds
+        data = data.sort_values("estimate_bp", kind="stable", ignore_index=True)
     digits = variant_digits(material, target)
     low, high = (
         material.number(f"sensitivity_{end}: {target}", scale=BP, digits=digits)
