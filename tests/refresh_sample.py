@@ -1,4 +1,7 @@
-"""Make ``reports/sample/`` again from the demo: the committed sample of its documents.
+"""Make again what is committed and made from the code: the demo's sample and two study files.
+
+``reports/sample/`` is the committed sample of the demo's documents; ``configs/every_key.toml`` and
+``configs/study.schema.json`` say what a study file may hold.
 
 Run from the project's root after a change of the numbers or the documents:
 
@@ -15,7 +18,10 @@ import sys
 import tempfile
 from pathlib import Path
 
+from pipeline.study.describe import every_key, json_schema
+
 ROOT = Path(__file__).resolve().parents[1]
+CONFIGS = ROOT / "configs"
 SAMPLE = ROOT / "reports" / "sample"
 DATA = ("estimates", "event_tests", "headline", "diagnostics", "sensitivity", "ledger", "findings")
 DOCUMENTS = ("report.html", "memo.docx", "tables.xlsx")
@@ -23,7 +29,9 @@ PICTURE = "first_screen.png"
 
 
 def main() -> None:
-    """Run the demo and keep the small part of it."""
+    """Write the study files, run the demo and keep the small part of it."""
+    (CONFIGS / "every_key.toml").write_text(every_key(), encoding="utf-8")
+    (CONFIGS / "study.schema.json").write_text(json_schema(), encoding="utf-8")
     with tempfile.TemporaryDirectory() as base:
         out = Path(base) / "demo"
         command = [sys.executable, "-m", "pipeline", "run", "configs/demo.toml", "--out", str(out)]

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import cached_property
 
@@ -149,13 +148,3 @@ class AbnormalReturns:
             span=self.span,
             **{name: getattr(self, name)[rows] for name in ARRAYS},
         )
-
-
-def concatenate(parts: Sequence[AbnormalReturns]) -> AbnormalReturns:
-    """Events of several chunks or exchanges as one value, in the order given."""
-    return AbnormalReturns(
-        model=parts[0].model,
-        deals=tuple(deal for part in parts for deal in part.deals),
-        span=parts[0].span,
-        **{name: np.concatenate([getattr(part, name) for part in parts]) for name in ARRAYS},
-    )

@@ -12,7 +12,7 @@ import numpy as np
 import pytest
 import statsmodels.api as sm
 
-from pipeline.core.abnormal import AbnormalReturns, concatenate
+from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.window import Window
 from tests.returns.panels import ESTIMATION, SPAN, fitted, invented_panel
 
@@ -153,14 +153,12 @@ def test_shapes_that_disagree_are_refused(market_model: AbnormalReturns) -> None
         replace(market_model, bread=market_model.bread[1:])
 
 
-def test_taking_and_joining_events(market_model: AbnormalReturns) -> None:
+def test_taking_events(market_model: AbnormalReturns) -> None:
     rows = np.array([3, 0, 4])
     taken = market_model.take(rows)
     assert taken.deals == ("D003", "D000", "D004")
     np.testing.assert_array_equal(taken.returns, market_model.returns[rows])
     keep = np.array([True, False, False, True, False])
     assert market_model.select(keep).deals == ("D000", "D003")
-    joined = concatenate([taken, market_model.select(keep)])
-    assert joined.deals == ("D003", "D000", "D004", "D000", "D003")
-    assert joined.span == SPAN
-    np.testing.assert_array_equal(joined.bread[3], market_model.bread[0])
+    assert taken.span == SPAN
+    np.testing.assert_array_equal(taken.bread[1], market_model.bread[0])

@@ -13,7 +13,7 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from pipeline.characteristics.recipes import winsorised
-from pipeline.core.abnormal import ARRAYS, AbnormalReturns, concatenate
+from pipeline.core.abnormal import ARRAYS, AbnormalReturns
 from pipeline.core.estimate import TestResult
 from pipeline.core.ledger import Action, Ledger, LedgerEntry, StageLedger
 from pipeline.core.prices import PricePanel
@@ -168,15 +168,20 @@ def test_cumulation_adds_up_over_neighbouring_windows(split: int, panel: PricePa
     np.testing.assert_allclose(whole[:, at:, at:], found.forecast_covariance(right))
 
 
-@given(rows=st.lists(st.integers(0, 11), max_size=20), cut=st.integers(0, 20))
+@given(
+    rows=st.lists(st.integers(0, 11), min_size=1, max_size=20),
+    again=st.lists(st.integers(0, 100), max_size=20),
+)
 @FEW
-def test_take_and_concatenate(rows: list[int], cut: int, abnormal: AbnormalReturns) -> None:
-    parts = [np.array(rows[:cut], dtype=np.int64), np.array(rows[cut:], dtype=np.int64)]
-    joined = concatenate([abnormal.take(part) for part in parts])
-    whole = abnormal.take(np.array(rows, dtype=np.int64))
-    assert joined.deals == whole.deals
+def test_taking_twice_is_taking_once(
+    rows: list[int], again: list[int], abnormal: AbnormalReturns
+) -> None:
+    first = np.array(rows, dtype=np.int64)
+    second = np.array([at % len(rows) for at in again], dtype=np.int64)
+    twice, once = abnormal.take(first).take(second), abnormal.take(first[second])
+    assert twice.deals == once.deals
     for name in ARRAYS:
-        np.testing.assert_array_equal(getattr(joined, name), getattr(whole, name))
+        np.testing.assert_array_equal(getattr(twice, name), getattr(once, name))
 
 
 @given(
