@@ -53,7 +53,12 @@ from pipeline.returns.events import (
 from pipeline.returns.measure import measure
 from pipeline.returns.panel import build_panels
 from pipeline.returns.placebo import pseudo_events
-from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
+from pipeline.returns.screens import (
+    jumps_near_events,
+    refuse_empty,
+    screen_estimation,
+    screen_event,
+)
 from pipeline.scrutiny.scrutinise import scrutinise
 from pipeline.scrutiny.specifications import specifications
 from pipeline.significance.averages import averages_of, groups_of
@@ -212,7 +217,7 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
         raise_errors(jumps_near_events(located, panels, options))
         first, repeats = keep_first_of_overlapping(located, options.headline)
     ledger = Ledger((tables.ledger, at_zero, repeats))
-    _refuse_empty(len(first), ledger)
+    refuse_empty(len(first), ledger)
     with clock.stage("abnormal returns"):
         masked = masked_sessions(first, located, options.estimation, options.mask_sessions)
         abnormal = {
@@ -233,7 +238,7 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
         traded, at_event = screen_event(abnormal[lead], options.headline)
         abnormal = {key: item.select(traded) for key, item in abnormal.items()}
     ledger = ledger.then(at_estimation, at_event)
-    _refuse_empty(ledger.rows_kept, ledger)
+    refuse_empty(ledger.rows_kept, ledger)
     deals = first[usable][traded].reset_index(drop=True)
     windows = plan.windows(study, bool(deals["timing"].str.startswith("date only").any()))
     findings = tables.findings + tuple(found)
@@ -243,20 +248,6 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
 def _tests(study: Study, deals: int) -> tuple[str, ...]:
     """The test that leads, then the others."""
     return tuple(dict.fromkeys([leading_test(study.tests.headline, deals), *study.tests.use]))
-
-
-def _refuse_empty(kept: int, ledger: Ledger) -> None:
-    if kept:
-        return
-    worst = max(ledger.stages, key=lambda stage: len(stage.dropped))
-    raise problem(
-        "no_deals_left",
-        "deals",
-        got=f"no deal left; {len(worst.dropped)} of {worst.rows_in} left at '{worst.stage}': "
-        + ", ".join(sorted({e.rule.replace("_", " ") for e in worst.dropped})),
-        expected="at least one deal with prices around its announcement",
-        remedy="Compare the dates and codes of the deals with those of the prices.",
-    )
 
 
 def _prepare(study: Study, measured: Measured) -> Prepared | None:

@@ -8,8 +8,8 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
-from pipeline.core.findings import Finding, Severity
-from pipeline.core.ledger import Action, LedgerEntry, StageLedger
+from pipeline.core.findings import Finding, Severity, problem
+from pipeline.core.ledger import Action, Ledger, LedgerEntry, StageLedger
 from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
 from pipeline.returns.events import EventOptions, Located, located_events
@@ -221,3 +221,22 @@ def screen_event(abnormal: AbnormalReturns, headline: Window) -> tuple[Booleans,
                 )
             )
     return keep, StageLedger("headline window", len(abnormal.deals), tuple(entries))
+
+
+def refuse_empty(kept: int, ledger: Ledger) -> None:
+    """Refuse to go on without a deal, naming the stage that lost most.
+
+    Raises:
+        InputProblem: ``no_deals_left`` if ``kept`` is zero.
+    """
+    if kept:
+        return
+    worst = max(ledger.stages, key=lambda stage: len(stage.dropped))
+    raise problem(
+        "no_deals_left",
+        "deals",
+        got=f"no deal left; {len(worst.dropped)} of {worst.rows_in} left at '{worst.stage}': "
+        + ", ".join(sorted({e.rule.replace("_", " ") for e in worst.dropped})),
+        expected="at least one deal with prices around its announcement",
+        remedy="Compare the dates and codes of the deals with those of the prices.",
+    )
