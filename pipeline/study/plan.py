@@ -13,7 +13,7 @@ from pipeline.core.design import FitOptions
 from pipeline.core.results import StudyFacts
 from pipeline.core.window import Window
 from pipeline.inputs.files import Source
-from pipeline.inputs.read import Wanted
+from pipeline.inputs.wanted import Wanted
 from pipeline.registry import TESTS, entry
 from pipeline.returns.events import EventOptions
 from pipeline.returns.sessions import CalendarChange

@@ -10,7 +10,8 @@ import pytest
 
 from pipeline.core.findings import Finding, InputProblem
 from pipeline.inputs.files import Source
-from pipeline.inputs.read import Tables, Wanted, read_inputs
+from pipeline.inputs.read import Tables, read_inputs
+from pipeline.inputs.wanted import Wanted
 
 Frames = dict[str, pd.DataFrame]
 WANTED = Wanted(

@@ -13,7 +13,8 @@ from pipeline.core.findings import InputProblem, Severity
 from pipeline.core.ledger import Action
 from pipeline.core.rules import RULES
 from pipeline.inputs.files import Source
-from pipeline.inputs.read import Tables, Wanted, read_inputs
+from pipeline.inputs.read import Tables, read_inputs
+from pipeline.inputs.wanted import Wanted
 from tests.inputs.tables import WANTED, Frames, frames, read_frames, refused, write_all, write_csv
 
 Spoil = Callable[[Frames], None]

@@ -19,7 +19,8 @@ from pipeline.core.ledger import Action, Ledger, LedgerEntry, StageLedger
 from pipeline.core.prices import PricePanel
 from pipeline.core.window import Window
 from pipeline.inputs.files import Source
-from pipeline.inputs.read import Tables, Wanted, read_inputs
+from pipeline.inputs.read import Tables, read_inputs
+from pipeline.inputs.wanted import Wanted
 from pipeline.registry import TABLE, TESTS
 from pipeline.returns.day_zero import place
 from pipeline.returns.events import keep_first_of_overlapping, masked_sessions

@@ -10,10 +10,12 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from pipeline import flow
+from pipeline.core.clock import Clock
 from pipeline.core.design import Design, FitOptions
 from pipeline.estimators.instruments import two_stage_least_squares
 from pipeline.estimators.stages import parts_of
+from pipeline.flow.explained import prepared_of
+from pipeline.flow.measured import measure_deals
 from pipeline.scrutiny import confounder, exclusion
 from pipeline.scrutiny.ground import Ground, ground_of, partial_r_squared
 from pipeline.study.load import load_study
@@ -35,7 +37,7 @@ class Demo:
 @pytest.fixture(scope="module")
 def demo() -> Demo:
     study = load_study(ROOT / "configs" / "demo.toml")
-    prepared = flow._prepare(study, flow.measure_deals(study, flow.Clock(lambda _: None)))
+    prepared = prepared_of(study, measure_deals(study, Clock(lambda _: None)))
     assert prepared is not None
     sys.path.insert(0, str(ROOT / "data_demo"))
     script = importlib.import_module("make_demo")

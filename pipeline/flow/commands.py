@@ -1,0 +1,116 @@
+"""The stages in the order of each command."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+from pipeline.core.clock import Clock, Progress
+from pipeline.core.estimate import Column
+from pipeline.core.findings import Finding, problem
+from pipeline.core.ledger import Ledger, LedgerEntry
+from pipeline.core.results import Results
+from pipeline.flow.assembled import results_of
+from pipeline.flow.explained import Doubts, column_of, doubts_of, prepared_of
+from pipeline.flow.measured import measure_deals, placebo_of, tests_of
+from pipeline.registry import (
+    TESTS,
+    entry,
+)
+from pipeline.significance.power import power_of
+from pipeline.significance.story import Story, story_of
+from pipeline.significance.windows import all_windows
+from pipeline.study.schema import Study
+
+
+def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Mapping[str, float]]:
+    """All stages of a study.
+
+    Returns:
+        The results, and the seconds each stage took.
+
+    Raises:
+        InputProblem: with every finding of the stage that could not go on.
+    """
+    clock = Clock(progress)
+    measured = measure_deals(study, clock)
+    with clock.stage("tests"):
+        tests = {key: entry(TESTS, key).load() for key in tests_of(study, len(measured.deals))}
+        windows = measured.windows
+        assumes = {key: entry(TESTS, key).assumes for key in tests}
+        found = all_windows(
+            measured.abnormal,
+            windows,
+            tests,
+            assumes,
+            study.event_time.share_of_days,
+            study.level,
+            study.seed,
+            [key for key in tests if entry(TESTS, key).resamples],
+        )
+    placebo = placebo_of(study, measured, found[0].mean, clock)
+    with clock.stage("characteristics"):
+        prepared = prepared_of(study, measured)
+    columns: tuple[Column, ...] = ()
+    doubts = Doubts()
+    if prepared is not None:
+        with clock.stage("estimators"):
+            columns = tuple(column_of(study, key, prepared) for key in study.columns)
+        doubts = doubts_of(study, measured, prepared, columns, clock)
+    with clock.stage("results"):
+        results = results_of(study, measured, found, prepared, columns, placebo, doubts)
+    return results, clock.seconds
+
+
+def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tuple[Finding, ...]]:
+    """Everything up to the arrays of the regression; nothing is estimated.
+
+    Raises:
+        InputProblem: as :func:`run` would.
+    """
+    clock = Clock(progress)
+    measured = measure_deals(study, clock)
+    with clock.stage("characteristics"):
+        prepared = prepared_of(study, measured)
+    if prepared is None:
+        return measured.ledger, measured.findings
+    return measured.ledger.then(prepared.ledger), measured.findings + prepared.findings
+
+
+def deal(
+    study: Study, name: str, progress: Progress = lambda _: None
+) -> tuple[Story | None, Mapping[str, Any], list[tuple[str, LedgerEntry]]]:
+    """One deal: its story if it was measured, its row, and what the ledger says of it.
+
+    Raises:
+        InputProblem: as :func:`check` would, or if the deal list has no such deal.
+    """
+    measured = measure_deals(study, Clock(progress))
+    listed = measured.tables.deals
+    if name not in set(listed["deal_id"]):
+        raise problem(
+            "unknown_variable",
+            "deals",
+            column="deal_id",
+            got=f"'{name}'",
+            expected="an identifier of the deal list, such as " + ", ".join(listed["deal_id"][:3]),
+            remedy="Write it as in the deal list.",
+        )
+    told = [(stage, item) for stage, item in measured.ledger if item.deal.split(" (")[0] == name]
+    kept = measured.deals[measured.deals["deal_id"] == name]
+    source = kept if len(kept) else listed[listed["deal_id"] == name]
+    lead = measured.abnormal[study.expected_returns.headline]
+    window = study.event_time.headline_window
+    row = {str(key): value for key, value in source.iloc[0].items()}
+    return story_of(name, lead, window, study.level), row, told
+
+
+def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, int]:
+    """The chance of finding a mean of a given size with the study's deals, and their number.
+
+    Returns:
+        ``effect, power, deals_needed`` (effect decimal), and the deals measured.
+    """
+    measured = measure_deals(study, Clock(progress))
+    lead = measured.abnormal[study.expected_returns.headline]
+    return power_of(lead, study.event_time.headline_window), len(lead.deals)

@@ -1,0 +1,84 @@
+"""A file as a typed table, and the checks that every kind of table shares."""
+
+from __future__ import annotations
+
+import pandas as pd
+
+from pipeline.core.findings import Finding, InputProblem, Severity
+from pipeline.inputs.contracts import Column, apply_contract, row_list, unknown_names
+from pipeline.inputs.files import ROW, Source
+
+
+def typed(
+    raw: pd.DataFrame, source: Source, columns: list[Column], date_format: str
+) -> tuple[pd.DataFrame, list[Finding]]:
+    """The contracted columns; without one of them no further check of the file makes sense."""
+    table, findings = apply_contract(raw, source, columns, date_format)
+    findings = unknown_names(source, columns) + findings
+    if any(finding.rule in ("missing_column", "unknown_key") for finding in findings):
+        raise InputProblem(findings)
+    if "exchange" in table:
+        table["exchange"] = table["exchange"].str.upper()
+    return table, findings
+
+
+def extra_columns(
+    fixed: list[Column], numbers: tuple[str, ...], texts: tuple[str, ...]
+) -> list[Column]:
+    """The columns a study names beyond the fixed ones."""
+    taken = {column.name for column in fixed}
+    why = "named in the study"
+    return [
+        *(Column(name, "number", why=why) for name in numbers if name not in taken),
+        *(
+            Column(name, "text", why=why)
+            for name in texts
+            if name not in taken and name not in numbers
+        ),
+    ]
+
+
+def theirs(source: Source, names: tuple[str, ...]) -> str:
+    """Our names as the file has them."""
+    return ", ".join(source.columns.get(name, name) for name in names)
+
+
+def repeats(rows: pd.DataFrame, source: Source, key: tuple[str, ...], words: str) -> list[Finding]:
+    """An error for rows that share a key."""
+    if rows.empty:
+        return []
+    return [
+        Finding(
+            "conflicting_deal",
+            Severity.ERROR,
+            source.file,
+            got=f"several rows for one {words}",
+            expected=f"one row a {words}",
+            remedy="Keep one row.",
+            row=row_list(rows[ROW]),
+            column=theirs(source, key),
+        )
+    ]
+
+
+def one_row_a_date(
+    table: pd.DataFrame, source: Source, key: tuple[str, str]
+) -> tuple[pd.DataFrame, list[Finding]]:
+    """Equal repeats are merged; values that differ on one date are an error."""
+    content = [name for name in table.columns if name != ROW]
+    once = table[~table.duplicated(content)].reset_index(drop=True)
+    conflict = once.duplicated(list(key), keep=False) & once["date"].notna()
+    if not conflict.any():
+        return once.drop(columns=ROW), []
+    first = once[conflict].iloc[0]
+    finding = Finding(
+        "conflicting_price",
+        Severity.ERROR,
+        source.file,
+        got=f"two rows for {first[key[0]]} on {first['date']:%Y-%m-%d}",
+        expected=f"one row a {key[0]} and date",
+        remedy="Keep the right one.",
+        row=row_list(once.loc[conflict, ROW]),
+        column=theirs(source, key),
+    )
+    return once.drop(columns=ROW), [finding]
