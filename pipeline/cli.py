@@ -127,6 +127,35 @@ def deal(
 
 
 @app.command()
+def contrast(
+    first: Annotated[Path, typer.Argument(help="Folder of the earlier run.")],
+    second: Annotated[Path, typer.Argument(help="Folder of the later run.")],
+    out: Annotated[
+        Path | None, typer.Option(help="Folder to write; beside the later run if absent.")
+    ] = None,
+    quiet: Quiet = False,
+    as_json: AsJson = False,
+) -> None:
+    """Say what differs between two runs, what moved, and how much each difference explains."""
+    from pipeline.screen import Screen
+
+    screen = Screen(quiet=quiet, as_json=as_json)
+
+    def work() -> None:
+        from pipeline.core.store import refuse_foreign
+        from pipeline.flow import contrast as contrast_runs
+        from pipeline.saving import save_contrast
+
+        folder = out or second.resolve().parent / f"{first.name}_and_{second.name}"
+        refuse_foreign(folder)
+        with screen.progress() as tell:
+            found = contrast_runs(first, second, tell)
+        screen.contrasted(found, folder, save_contrast(found, folder))
+
+    _guard(work, screen.problem)
+
+
+@app.command()
 def explain(
     rule: Annotated[
         str, typer.Argument(help="A rule's key as shown in brackets; empty: all.")

@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import hashlib
 import json
+import os
 import platform
 from collections.abc import Mapping
 from importlib.metadata import version
 from pathlib import Path
 
 from pipeline.core.clock import Clock
+from pipeline.core.contrast import Contrast
 from pipeline.core.parquet import parquet_bytes
 from pipeline.core.results import Results
 from pipeline.core.store import write_folder
@@ -34,18 +36,45 @@ def save(
             files.update(entry(FORMATS, key).load()(results))
         for name, frame in results.tables.items():
             files[f"data/{name}.parquet"] = parquet_bytes(frame)
-    files["manifest.json"] = _manifest(study, {**seconds, **clock.seconds})
+    files["manifest.json"] = _manifest(study, folder, {**seconds, **clock.seconds})
     write_folder(folder, files)
     return sorted(files)
 
 
-def _manifest(study: Study, seconds: Mapping[str, float]) -> bytes:
+def save_contrast(found: Contrast, folder: Path) -> list[str]:
+    """Write the comparison of two runs: page, memo, workbook and the frames behind them.
+
+    Returns:
+        The names of the files written.
+    """
+    from pipeline.report import contrast, docx, html, xlsx
+
+    document = contrast.document(found)
+    files = {
+        "contrast.html": html.page(document).encode(),
+        "contrast.docx": docx.file(document),
+        "contrast.xlsx": xlsx.workbook(document),
+    }
+    for name, frame in contrast.frames(found).items():
+        files[f"data/{name}.parquet"] = parquet_bytes(frame)
+    files["manifest.json"] = (json.dumps({"runs": [found.first, found.second]}) + "\n").encode()
+    write_folder(folder, files)
+    return sorted(files)
+
+
+def _manifest(study: Study, folder: Path, seconds: Mapping[str, float]) -> bytes:
+    paths = {name: path for name, path in study.inputs if isinstance(path, Path)}
+    read = plan.sources(study)
     inputs = {
-        name: {"file": source.path.name, "sha256": _digest(source.path)}
-        for name, source in plan.sources(study).items()
+        name: {
+            "file": path.name,
+            "path": Path(os.path.relpath(path, folder)).as_posix(),
+            "sha256": digest(path) if name in read else "",
+        }
+        for name, path in paths.items()
     }
     content = {
-        "study": study.model_dump(mode="json", by_alias=True, exclude={"inputs"}),
+        "study": study.model_dump(mode="json", by_alias=True, exclude={"inputs": set(paths)}),
         "inputs": inputs,
         "packages": {name: version(name) for name in PACKAGES},
         "python": platform.python_version(),
@@ -55,6 +84,7 @@ def _manifest(study: Study, seconds: Mapping[str, float]) -> bytes:
     return (json.dumps(content, indent=2, ensure_ascii=False) + "\n").encode()
 
 
-def _digest(path: Path) -> str:
+def digest(path: Path) -> str:
+    """SHA-256 of a file, hexadecimal."""
     with path.open("rb") as file:
         return hashlib.file_digest(file, "sha256").hexdigest()

@@ -17,9 +17,11 @@ from pipeline.core.rules import RULES, Rule, rule_title
 if TYPE_CHECKING:
     import pandas as pd
 
+    from pipeline.core.contrast import Contrast
     from pipeline.core.findings import Finding, InputProblem
     from pipeline.core.ledger import Ledger, LedgerEntry
     from pipeline.core.results import Results
+    from pipeline.report.document import Table as DocumentTable
     from pipeline.significance.story import Story
 
 STAGES = 8
@@ -153,6 +155,30 @@ class Screen:
             table.add_row(f"{effect * 1e4:.0f}", f"{chance:.0%}", f"{needed:,.0f}")
         console.print(table)
 
+    def contrasted(self, found: Contrast, folder: Path, written: Sequence[str]) -> None:
+        """What moved between two runs, and what explains it."""
+        if self.as_json:
+            content = {
+                "differences": [asdict(item) for item in found.differences],
+                "numbers": _records(found.numbers),
+                "explained": _records(found.explained),
+                "notes": found.notes,
+                "folder": str(folder),
+                "files": list(written),
+            }
+            print(json.dumps(content, ensure_ascii=False))
+            return
+        from pipeline.report.contrast import document
+        from pipeline.report.document import Table as DocumentTable
+
+        console = Console(highlight=False, markup=False)
+        for section in document(found).sections[:3]:
+            console.print(f"\n{section.heading}")
+            for block in section.blocks:
+                shown = _plain_table(block) if isinstance(block, DocumentTable) else None
+                console.print(shown or getattr(block, "text", ""))
+        console.print(f"\nWritten to {folder}: start with contrast.html there", soft_wrap=True)
+
     def problem(self, fault: InputProblem) -> None:
         """Every finding on one screen."""
         if self.as_json:
@@ -164,6 +190,23 @@ class Screen:
         console.print(f"{count} {noun} in the input; nothing was written.\n")
         for finding in fault.findings:
             _show(console, finding)
+
+
+def _records(frame: pd.DataFrame) -> Any:
+    """A frame's rows for JSON, which knows no NaN."""
+    return json.loads(frame.to_json(orient="records", double_precision=15))
+
+
+def _plain_table(block: DocumentTable) -> Table:
+    """A document's table for the terminal."""
+    from pipeline.report.numerals import lines
+
+    table = Table(box=None, pad_edge=False, header_style="", title=None)
+    for at, column in enumerate(block.columns):
+        table.add_column(column.heading, justify="right" if at else "left")
+    for row in block.page_rows:
+        table.add_row(*("\n".join(lines(cell)) for cell in row))
+    return table
 
 
 def _bp(value: float) -> str:

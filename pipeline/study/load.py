@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import json
 import tomllib
 from collections.abc import Mapping
 from pathlib import Path
@@ -36,6 +37,21 @@ def load_study(path: Path, overrides: Mapping[str, Any] | None = None) -> Study:
     except ValidationError as refusal:
         raise InputProblem(_finding(error, path.name) for error in refusal.errors()) from None
     raise_errors(cross_checks(study, path.name))
+    return study
+
+
+def restored(raw: Mapping[str, Any], paths: Mapping[str, Path]) -> Study:
+    """A study from the plain values that a run's manifest holds, and where its tables are.
+
+    Raises:
+        InputProblem: if the values do not make a study.
+    """
+    inputs = {**raw.get("inputs", {}), **{name: str(path) for name, path in paths.items()}}
+    try:
+        study = Study.model_validate_json(json.dumps({**raw, "inputs": inputs}))
+    except ValidationError as refusal:
+        raise InputProblem(_finding(error, "manifest.json") for error in refusal.errors()) from None
+    raise_errors(cross_checks(study, "manifest.json"))
     return study
 
 

@@ -62,6 +62,13 @@ RULES = (
         "Name a new folder, or one that holds an earlier run.",
     ),
     Rule(
+        "no_run",
+        "Folder without a finished run",
+        "The folder holds no run that can be read back.",
+        "Two runs can only be held side by side if both are whole.",
+        "Name the folder of a finished run, such as reports/demo.",
+    ),
+    Rule(
         "treatment_not_binary",
         "Treatment that is not yes or no",
         "The treatment has other values than 0 and 1.",

@@ -1,0 +1,1 @@
+"""Two saved runs: what is not the same in them, and which numbers moved."""
