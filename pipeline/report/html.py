@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import base64
 import re
+from collections.abc import Iterable
 from functools import cache
 
 from jinja2 import Environment, PackageLoader, StrictUndefined, Template
@@ -10,8 +12,18 @@ from markupsafe import Markup
 
 from pipeline.core.results import Results
 from pipeline.report.content import report
-from pipeline.report.document import Cell, Document, Figure, Interval, Number, Quote, Table, Text
-from pipeline.report.figures import svg
+from pipeline.report.document import (
+    Cell,
+    Document,
+    Figure,
+    Interval,
+    Number,
+    Paragraph,
+    Quote,
+    Table,
+    Text,
+)
+from pipeline.report.figures import csv, svg
 from pipeline.report.numerals import clean, lines, slug
 
 _PROLOGUE = re.compile(r"<\?xml.*?\?>\s*<!DOCTYPE.*?>\s*", re.DOTALL)
@@ -49,6 +61,8 @@ def _template() -> Template:
         "lines": lines,
         "picture": picture,
         "source": source,
+        "sources": sources,
+        "drawn": drawn,
         "numeric": numeric,
         "column_class": column_class,
     }
@@ -77,6 +91,21 @@ def source(quote: Quote) -> str:
     """Where a quoted number stands, for the person who points at it."""
     where = clean(", ".join(f"{name} {value}" for name, value in quote.where))
     return f"data/{quote.table}.parquet: {quote.column} where {where}"
+
+
+def sources(paragraphs: Iterable[Paragraph]) -> tuple[str, ...]:
+    """For the margin: the tables that the quoted numbers stand in, and which numbers of each."""
+    found: dict[str, dict[str, None]] = {}
+    for quote in (quote for paragraph in paragraphs for quote in paragraph.quotes):
+        named = dict(quote.where).get("name", quote.column)
+        found.setdefault(quote.table, {})[clean(str(named)).replace("_", " ")] = None
+    return tuple(f"data/{table}: {', '.join(names)}" for table, names in found.items())
+
+
+def drawn(figure: Figure) -> Markup:
+    """The numbers behind a figure as a link that holds them itself."""
+    content = base64.b64encode(csv(figure.data)).decode()
+    return Markup("data:text/csv;charset=utf-8;base64,{}").format(content)
 
 
 def picture(figure: Figure) -> Markup:

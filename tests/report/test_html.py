@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import base64
 import re
 from dataclasses import replace
 
@@ -11,6 +12,7 @@ from lxml import etree
 from pipeline.core.results import Results
 from pipeline.report.content import report
 from pipeline.report.document import Table
+from pipeline.report.figures import csv
 from pipeline.report.html import page
 from pipeline.report.numerals import lines
 from tests.report.runs import with_frames
@@ -43,7 +45,7 @@ def test_the_page_asks_for_nothing(files: dict[str, bytes], tree: etree._Element
         for name, value in node.attrib.items():
             local = name.rsplit("}", 1)[-1]
             if local in ("src", "href", "data", "action", "poster", "srcset"):
-                assert value.startswith("#"), (local, value)
+                assert value.startswith(("#", "data:text/csv;")), (local, value)
     assert not {"script", "link", "iframe", "img", "object", "embed"} & set(all_tags(tree))
     assert not re.search(r"@import|@font-face", text)
     assert not [u for u in re.findall(r"url\(([^)]*)\)", text) if not u.startswith("#")]
@@ -61,8 +63,25 @@ def test_ids_are_unique_and_links_arrive(tree: etree._Element) -> None:
     assert len(ids) == len(set(ids))
     for node in tree.iter():
         for name, value in node.attrib.items():
-            if name.rsplit("}", 1)[-1] == "href":
+            if name.rsplit("}", 1)[-1] == "href" and value.startswith("#"):
                 assert value[1:] in ids
+
+
+def test_each_figure_hands_over_the_numbers_it_draws(full: Results, tree: etree._Element) -> None:
+    links = [node for node in tree.iter("{*}a") if node.get("download")]
+    for link, figure in zip(links, report(full).figures, strict=True):
+        content = base64.b64decode((link.get("href") or "").partition("base64,")[2])
+        assert content == csv(figure.data)
+
+
+def test_the_margin_names_the_table_of_every_quoted_number(tree: etree._Element) -> None:
+    notes = [
+        " ".join(node.itertext()) for node in tree.iter("{*}div") if node.get("role") == "note"
+    ]
+    tables = {(node.get("title") or "").split(".")[0] for node in tree.iter("{*}data")}
+    assert len(notes) > 5
+    for table in tables:
+        assert any(table in note for note in notes)
 
 
 def test_pictures_are_inside_and_described(tree: etree._Element) -> None:
