@@ -8,6 +8,7 @@ from functools import cached_property
 import numpy as np
 
 from pipeline.core.prices import Booleans, Dates, Floats, Integers
+from pipeline.core.sessions import SessionRuns
 from pipeline.core.window import Window
 
 ARRAYS = (
@@ -19,9 +20,11 @@ ARRAYS = (
     "residual_variance",
     "observations",
     "estimation_returns",
-    "estimation_days",
+    "estimation_sessions",
     "expected",
 )
+# None when every return covers one session, and when no session is left out.
+OPTIONAL = ("spans", "estimation_spans", "left_out")
 
 
 @dataclass(frozen=True, eq=False)
@@ -40,8 +43,12 @@ class AbnormalReturns:
         residual_variance: (N,) s² = e'e / (M - d), per session.
         observations: (N,) M, returns used in estimation.
         estimation_returns: (N, E) abnormal returns of the estimation window; NaN where unused.
-        estimation_days: (N, E) their dates.
+        estimation_sessions: where they lie; ``estimation_days`` lays out their dates.
         expected: (N, D) expected returns, decimal.
+        spans: (N, D) sessions each event-window return covers; None if each covers one.
+        estimation_spans: (N, E) the same of the estimation window.
+        left_out: (N, D) days that traded and whose abnormal return a dummy has taken up, so that
+            ``returns`` holds NaN; None without one.
     """
 
     model: str
@@ -55,8 +62,11 @@ class AbnormalReturns:
     residual_variance: Floats
     observations: Integers
     estimation_returns: Floats
-    estimation_days: Dates
+    estimation_sessions: SessionRuns
     expected: Floats
+    spans: Integers | None = None
+    estimation_spans: Integers | None = None
+    left_out: Booleans | None = None
 
     def __post_init__(self) -> None:
         n, width = len(self.deals), len(self.span)
@@ -75,6 +85,11 @@ class AbnormalReturns:
         """(N,) M - d."""
         return self.observations - self.mean_parameters
 
+    @property
+    def estimation_days(self) -> Dates:
+        """(N, E) ``datetime64[D]`` dates of the estimation windows; NaT outside the panel."""
+        return self.estimation_sessions.dates()
+
     def columns(self, window: Window) -> slice:
         """Where ``window`` lies among the D days.
 
@@ -89,13 +104,22 @@ class AbnormalReturns:
     def complete(self, window: Window, share: float = 1.0) -> Booleans:
         """(N,) whether at least ``share`` of the window's days traded, day 0 (if in it) among them.
 
-        A missing day is not a zero: methods, common practice, no source.
+        A missing day is not a zero: methods, common practice, no source. A day that was left out
+        did trade.
         """
-        inside = np.isfinite(self.returns[:, self.columns(window)])
+        inside = np.isfinite(self.counted(window))
         enough = inside.mean(axis=1) >= share - 1e-12
         if window.start <= 0 <= window.end:
             enough &= inside[:, -window.start]
+        if self.left_out is not None:
+            enough &= np.isfinite(self.returns[:, self.columns(window)]).any(axis=1)
         return np.asarray(enough, dtype=np.bool_)
+
+    def counted(self, window: Window) -> Floats:
+        """(N, L) abnormal returns of the window, zero on days left out, NaN on those missing."""
+        where = self.columns(window)
+        inside = self.returns[:, where]
+        return inside if self.left_out is None else np.where(self.left_out[:, where], 0.0, inside)
 
     def car(self, window: Window) -> Floats:
         """(N,) cumulative abnormal return, decimal: the sum over the window's traded days."""
@@ -113,14 +137,16 @@ class AbnormalReturns:
     def forecast_covariance(self, window: Window) -> Floats:
         """(N, L, L) forecast-error covariance of the window's abnormal returns.
 
-        V = s² [I + X* (X'X)⁻¹ X*'] (Patell 1976; Campbell, Lo and MacKinlay 1997, ch. 4). Rows
-        and columns of days that did not trade are zero.
+        V = s² [G + X* (X'X)⁻¹ X*'] (Patell 1976; Campbell, Lo and MacKinlay 1997, ch. 4). G is
+        diagonal, the sessions each return covers: ones, unless returns span sessions without a
+        close (Maynes and Rumsey 1993, JBF 17). Rows and columns of days that did not trade are
+        zero.
         """
         where = self.columns(window)
         traded = np.isfinite(self.returns[:, where])
         x = np.where(traded[:, :, None], self.regressors[:, where], 0.0)
         shape = np.einsum("nld,nde,nme->nlm", x, self.bread, x)
-        shape += traded[:, :, None] * np.eye(traded.shape[1])
+        shape += self._covered(window)[:, :, None] * np.eye(traded.shape[1])
         return np.asarray(self.residual_variance[:, None, None] * shape)
 
     def car_variance(self, window: Window) -> Floats:
@@ -128,23 +154,40 @@ class AbnormalReturns:
         where = self.columns(window)
         traded = np.isfinite(self.returns[:, where])
         total = np.where(traded[:, :, None], self.regressors[:, where], 0.0).sum(axis=1)
-        estimation = np.einsum("nd,nde,ne->n", total, self.bread, total)
-        return np.asarray(self.residual_variance * (traded.sum(axis=1) + estimation))
+        estimation = np.vecdot(np.matmul(self.bread, total[:, :, None])[..., 0], total)
+        own = self._covered(window).sum(axis=1)
+        return np.asarray(self.residual_variance * (own + estimation))
+
+    def _covered(self, window: Window) -> Integers:
+        """(N, L) sessions each return of the window covers; 0 on a day that did not trade."""
+        where = self.columns(window)
+        traded = np.isfinite(self.returns[:, where])
+        return np.asarray(traded * (1 if self.spans is None else self.spans[:, where]))
 
     def standardised(self, window: Window) -> Floats:
         """(N,) SCAR, the CAR over its forecast standard deviation; NaN without a traded day."""
         with np.errstate(invalid="ignore"):
             return np.asarray(self.car(window) / np.sqrt(self.car_variance(window)))
 
+    @property
+    def _held(self) -> tuple[str, ...]:
+        """Names of the arrays that are there, one row an event each."""
+        return ARRAYS + tuple(name for name in OPTIONAL if getattr(self, name) is not None)
+
     def select(self, keep: Booleans) -> AbnormalReturns:
         """The events where ``keep`` (N,) is true."""
         return self.take(np.flatnonzero(keep))
 
-    def take(self, rows: Integers) -> AbnormalReturns:
-        """The events at ``rows``, in that order."""
+    def take(self, rows: Integers | slice) -> AbnormalReturns:
+        """The events at ``rows``, in that order; a slice looks at them in place."""
+        deals = (
+            self.deals[rows]
+            if isinstance(rows, slice)
+            else tuple(self.deals[row] for row in rows.tolist())
+        )
         return AbnormalReturns(
             model=self.model,
-            deals=tuple(self.deals[row] for row in rows),
+            deals=deals,
             span=self.span,
-            **{name: getattr(self, name)[rows] for name in ARRAYS},
+            **{name: getattr(self, name)[rows] for name in self._held},
         )

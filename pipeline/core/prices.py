@@ -12,6 +12,10 @@ Floats = NDArray[np.float64]
 Integers = NDArray[np.int64]
 Booleans = NDArray[np.bool_]
 
+# Columns of the factor file that are no factors.
+RISK_FREE = "risk_free"
+GLOBAL = "global_market"
+
 
 @dataclass(frozen=True, slots=True, eq=False)
 class PricePanel:
@@ -27,6 +31,9 @@ class PricePanel:
             session after one, so that no return spans a gap unseen.
         benchmark: (T,) simple returns of the exchange's benchmark.
         factors: name -> (T,) simple daily returns, decimal.
+        spans: (T, S) sessions each return covers, from 1 on; None if every return covers one.
+        delisted: (S,) session that holds the return of the delisting, -1 where there is none; None
+            without a table of delistings.
     """
 
     exchange: str
@@ -37,6 +44,8 @@ class PricePanel:
     returns: Floats
     benchmark: Floats
     factors: dict[str, Floats]
+    spans: Integers | None = None
+    delisted: Integers | None = None
 
     def __post_init__(self) -> None:
         shape = (len(self.sessions), len(self.securities))
@@ -45,6 +54,8 @@ class PricePanel:
                 raise ValueError(f"{name} has shape {getattr(self, name).shape}, expected {shape}")
         if self.benchmark.shape != shape[:1]:
             raise ValueError(f"benchmark has shape {self.benchmark.shape}, expected {shape[:1]}")
+        if self.spans is not None and (self.spans.shape != shape or (self.spans < 1).any()):
+            raise ValueError(f"spans must be whole numbers from 1 on, of shape {shape}")
 
     def position(self, day: np.datetime64) -> int:
         """Index of the first session on or after ``day``; T if there is none."""

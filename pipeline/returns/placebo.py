@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterator, Mapping
 
 import numpy as np
@@ -10,11 +11,11 @@ import pandas as pd
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Booleans, Integers, PricePanel
 from pipeline.core.window import Window
-from pipeline.returns.measure import ModelFunction, measure
+from pipeline.returns.measure import ModelFunction, engines, fit_all, placed
 
 FARTHEST = 250
 # Enough events a batch to use the processor well, few enough to stay small in memory.
-BATCH_EVENTS = 20_000
+BATCH_EVENTS = 2_000
 
 
 def pseudo_events(
@@ -29,7 +30,7 @@ def pseudo_events(
     distance: int,
     minimum_observations: int,
     seed: int,
-) -> Iterator[AbnormalReturns]:
+) -> Iterator[tuple[Integers, AbnormalReturns]]:
     """One sample a draw: every deal moved to sessions where its company announced nothing.
 
     All deals of one date move together by one number of sessions, between ``distance`` and 250 to
@@ -43,20 +44,27 @@ def pseudo_events(
         window: the event days wanted.
         draws: number of samples.
         seed: of the stream of shifts.
+
+    Returns:
+        Of each draw, the (n,) rows of ``located`` that stay in it, and their abnormal returns.
     """
     shifts = draw_shifts(located["day_zero"], draws, distance, seed)
     free = free_to_move(located, shifts, distance, panels, window)
-    position = located["position"].to_numpy()
+    places = placed(located)
+    made = engines(function, places, panels, estimation, window)
     a_batch = max(1, BATCH_EVENTS // len(located))
     for first in range(0, draws, a_batch):
         batch = slice(first, first + a_batch)
         draw, deal = np.nonzero(free[batch])
-        moved = located.iloc[deal].assign(position=position[deal] + shifts[batch][draw, deal])
-        masked = np.zeros((len(moved), len(estimation)), dtype=np.bool_)
-        together = measure(model, function, moved, masked, panels, estimation, window)
+        moved = places.moved(deal, shifts[batch][draw, deal])
+        masked = np.zeros((len(deal), len(estimation)), dtype=np.bool_)
+        together = fit_all(model, made, moved, masked)
         enough = (together.observations >= minimum_observations) & together.complete(window)
-        for at in range(len(free[batch])):
-            yield together.take(np.flatnonzero(enough & (draw == at)))
+        if not enough.all():
+            together, draw, deal = together.select(enough), draw[enough], deal[enough]
+        ends = np.searchsorted(draw, np.arange(len(free[batch]) + 1))
+        for start, end in itertools.pairwise(ends.tolist()):
+            yield deal[start:end], together.take(slice(start, end))
 
 
 def draw_shifts(days: pd.Series, draws: int, distance: int, seed: int) -> Integers:

@@ -49,21 +49,56 @@ class Dependence:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Links:
-    """(N, N) correlations over common estimation dates, and how many dates each pair shares."""
+    """How alike the estimation windows of n deals are; a part looks into the tables of all N.
+
+    Attributes:
+        correlation: (N, N) over common dates; NaN for a pair that shares fewer than 30, and on
+            the diagonal.
+        common: (N, N) dates that a pair shares; zero likewise.
+        sums: (3, N) of each row: pairs, correlations and common dates.
+        rows: (n,) the deals meant, each once.
+    """
 
     correlation: Floats
     common: Floats
+    sums: Floats
+    rows: Integers
 
     def take(self, rows: Integers) -> Links:
-        """The links among the events at ``rows``."""
+        """The links among the deals at ``rows``."""
+        return Links(self.correlation, self.common, self.sums, self.rows[rows])
+
+    def totals(self) -> Floats:
+        """(3,) pairs, each counted from both sides, their correlations and common dates, summed.
+
+        From the deals left out where these are the fewer.
+        """
+        everyone = self.sums.shape[1]
+        if 2 * len(self.rows) < everyone:
+            return self._block(self.rows)
+        gone = np.delete(np.arange(everyone), self.rows)
+        total = self.sums.sum(axis=1) - 2 * self.sums[:, gone].sum(axis=1)
+        return np.asarray(total + self._block(gone))
+
+    def _block(self, rows: Integers) -> Floats:
         at = np.ix_(rows, rows)
-        return Links(self.correlation[at], self.common[at])
+        common = self.common[at]
+        return np.array([(common > 0).sum(), np.nansum(self.correlation[at]), common.sum()])
+
+    def between(self, first: Integers, second: Integers) -> Floats:
+        """Correlations of pairs, by their places in ``rows``; NaN where they share too little."""
+        return np.asarray(self.correlation[self.rows[first], self.rows[second]])
 
 
 @lru_cache(maxsize=8)
 def links(abnormal: AbnormalReturns) -> Links:
     """The links of all events of one model; made once and shared by its windows and checks."""
-    return Links(*pairwise(abnormal.estimation_returns, abnormal.estimation_days))
+    correlation, common = pairwise(abnormal.estimation_returns, abnormal.estimation_days)
+    usable = (common >= COMMON_DAYS) & np.isfinite(correlation)
+    np.fill_diagonal(usable, False)
+    correlation, common = np.where(usable, correlation, np.nan), np.where(usable, common, 0.0)
+    sums = np.stack([usable.sum(axis=1), np.nansum(correlation, axis=1), common.sum(axis=1)])
+    return Links(correlation, common, sums, np.arange(len(common)))
 
 
 def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = None) -> Dependence:
@@ -82,22 +117,23 @@ def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = 
     if n < 2:
         return Dependence(np.nan, 0.0, 0, 0.0, np.nan, len(counts), int(counts.max(initial=0)))
     known = known or links(abnormal)
-    usable = (known.common >= COMMON_DAYS) & np.isfinite(known.correlation)
-    np.fill_diagonal(usable, False)
-    pairs = int(usable.sum())
-    mean = float(known.correlation[usable].mean()) if pairs else np.nan
+    found, correlations, dates = known.totals()
+    pairs = round(float(found))
+    mean = float(correlations) / pairs if pairs else np.nan
     shared = overlap(abnormal.days[:, where])
-    first, second = shared.coords
-    meet = (first != second) & (shared.data > 0)
+    first = np.repeat(np.arange(n), np.diff(shared.indptr))
+    second = np.asarray(shared.indices, dtype=np.int64)
+    meet = (first < second) & (shared.data > 0)
     first, second, share = first[meet], second[meet], shared.data[meet]
-    alike = np.where(usable[first, second], known.correlation[first, second], mean)
+    alike = known.between(first, second)
+    alike = np.where(np.isfinite(alike), alike, mean)
     possible = n * (n - 1)
-    length = float(known.common[usable].mean()) if pairs else np.nan
+    length = float(dates) / pairs if pairs else np.nan
     return Dependence(
         mean=mean,
-        weighted=float((np.nan_to_num(alike) * share).sum() / possible),
+        weighted=2 * float((np.nan_to_num(alike) * share).sum()) / possible,
         pairs=pairs // 2,
-        overlapping=len(share) / possible,
+        overlapping=2 * len(share) / possible,
         noise=float(np.sqrt(2 / (pairs * length))) if pairs else np.nan,
         dates=len(counts),
         largest=int(counts.max()),
@@ -132,7 +168,7 @@ def pairwise(returns: Floats, days: Dates) -> tuple[Floats, Floats]:
     return np.clip(correlation, -1, 1), count
 
 
-def overlap(days: Dates) -> sparse.coo_array:
+def overlap(days: Dates) -> sparse.csr_array:
     """(N, N) share of L event dates that two deals have in common, from (N, L) dates.
 
     Sparse: most deals of a long sample never meet.
@@ -140,6 +176,6 @@ def overlap(days: Dates) -> sparse.coo_array:
     n, length = days.shape
     known = ~np.isnat(days)
     dates, at = np.unique(days[known], return_inverse=True)
-    cells = (np.ones(len(at)), (np.nonzero(known)[0], at))
-    present = sparse.csr_array(cells, shape=(n, len(dates)))
-    return sparse.coo_array(present @ present.T / length)
+    ends = np.concatenate([[0], np.cumsum(known.sum(axis=1))])
+    present = sparse.csr_array((np.ones(len(at)), at, ends), shape=(n, len(dates)))
+    return sparse.csr_array(present @ present.T / length)

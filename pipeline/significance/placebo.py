@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Mapping
 
 import numpy as np
 import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import TestResult
+from pipeline.core.prices import Integers
 from pipeline.core.tables import typed_frame
 from pipeline.core.window import Window
 from pipeline.significance.dependence import Links
@@ -25,24 +26,25 @@ COLUMNS = {
     "nominal": "float64",
 }
 MEAN = "mean"
+ROUNDING = 1e-12
 
 
 def placebo_sizes(
-    samples: Iterable[AbnormalReturns],
+    samples: Iterable[tuple[Integers, AbnormalReturns]],
     window: Window,
     tests: Mapping[str, TestFunction],
     known: Links,
-    deals: Sequence[str],
     mean: float,
     size: float,
 ) -> pd.DataFrame:
     """How often each test rejects a true null at ``size``, with its Monte-Carlo standard error.
 
     Args:
-        samples: pseudo-samples of deals, none of them announced.
+        samples: pseudo-samples of deals, none of them announced: the rows of the deals among
+            those of ``known``, and their abnormal returns.
         window: the headline window.
         tests: key -> test.
-        known: the links among ``deals``, measured once on the deals themselves: which companies
+        known: the links among all deals, measured once on the deals themselves: which companies
             move together is not drawn again.
         mean: the sample's own mean CAR, decimal.
         size: nominal level.
@@ -51,16 +53,14 @@ def placebo_sizes(
         One row a test, and the row ``mean``: the share of draws whose mean is at least as far from
         zero as the sample's own, which is an empirical p-value (Brown and Warner 1985, JFE 14).
     """
-    place = {deal: at for at, deal in enumerate(deals)}
     found: dict[str, list[bool]] = {}
     titles: dict[str, str] = {}
     far: list[bool] = []
-    for abnormal in samples:
-        rows_of = np.array([place[deal] for deal in abnormal.deals], dtype=np.int64)
+    for rows_of, abnormal in samples:
         sample = car_sample(abnormal, window, 1.0, known.take(rows_of))
         if sample.n < 2:
             continue
-        far.append(abs(float(sample.car.mean())) >= abs(mean))
+        far.append(abs(float(sample.car.mean())) >= abs(mean) * (1 - ROUNDING))
         for key, test in tests.items():
             result = test(sample)
             if isinstance(result, TestResult):

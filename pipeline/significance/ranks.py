@@ -8,13 +8,16 @@ import numpy as np
 from scipy import stats
 
 from pipeline.core.estimate import NotApplicable, Tested, t_test, z_test
-from pipeline.core.prices import Floats
+from pipeline.core.prices import Booleans, Floats, Integers
 from pipeline.significance.sample import CarSample
 
 NULL = "the mean cumulative abnormal return is zero"
 MEDIAN_NULL = "abnormal returns are as often above zero as before the announcement"
 NO_SERIES = "needs the daily series of the estimation windows"
 FEW = "needs at least two deals"
+# Few enough rows to stay in the processor's cache while they are sorted.
+ROWS = 256
+MISSING = np.finfo(np.float64).max
 
 
 def rank(sample: CarSample) -> Tested:
@@ -27,8 +30,7 @@ def rank(sample: CarSample) -> Tested:
     name = "Rank Z"
     if sample.series is None or sample.n < 2:
         return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
-    pooled = np.hstack([sample.series.estimation, sample.series.event])
-    mean, weight = _mean_rank(pooled)
+    mean, weight = mean_rank(*sample.series.alike())
     length = sample.series.event.shape[1]
     spread = np.sqrt(np.nansum(weight * mean**2) / np.isfinite(mean).sum())
     statistic = float(np.nansum(mean[-length:]) / (np.sqrt(length) * spread))
@@ -41,29 +43,70 @@ def rank(sample: CarSample) -> Tested:
     )
 
 
-def _mean_rank(returns: Floats) -> tuple[Floats, Floats]:
-    """(T,) mean over deals of the centred rank, and (T,) share of deals with a return that day."""
-    ranks = row_ranks(returns)
-    valid = np.isfinite(returns).sum(axis=1, keepdims=True)
-    centred = ranks / (valid + 1) - 0.5
-    present = np.isfinite(centred)
-    count = present.sum(axis=0)
+def mean_rank(*parts: Floats) -> tuple[Floats, Floats]:
+    """(T,) mean over deals of the centred rank, and (T,) share of deals with a return that day.
+
+    The rank of each return of a deal among all its returns, from 1, mid-ranks for ties, over
+    their number plus one, less a half; NaN returns have none. ``parts`` are (n, T1), (n, T2), ...
+    returns of the same n deals, T days in all.
+    """
+    n, days = len(parts[0]), sum(part.shape[1] for part in parts)
+    count, total = np.zeros(days), np.zeros(days)
+    for at in range(0, n, ROWS):
+        returns = np.hstack([part[at : at + ROWS] for part in parts])
+        present = np.isfinite(returns)
+        count += len(returns) if present.all() else present.sum(axis=0)
+        total += _summed_ranks(returns, present)
     with np.errstate(invalid="ignore", divide="ignore"):
-        mean = np.where(present, centred, 0.0).sum(axis=0) / count
-    return np.where(count > 0, mean, np.nan), count / len(returns)
+        return np.where(count > 0, total / count - 0.5, np.nan), count / n
 
 
-def row_ranks(returns: Floats) -> Floats:
-    """Ranks within each row from 1, mid-ranks for ties, NaN where a value is missing."""
-    order = np.argsort(returns, axis=1)  # missing values sort last
-    ordered = np.take_along_axis(returns, order, axis=1)
-    ranks = np.empty_like(returns)
-    places = np.broadcast_to(np.arange(1.0, returns.shape[1] + 1), returns.shape)
-    np.put_along_axis(ranks, order, places, axis=1)
-    tied = (ordered[:, 1:] == ordered[:, :-1]).any(axis=1)
-    if tied.any():
-        ranks[tied] = stats.rankdata(returns[tied], axis=1, nan_policy="omit")
-    return np.where(np.isfinite(returns), ranks, np.nan)
+def _summed_ranks(returns: Floats, present: Booleans) -> Floats:
+    """(T,) sum over the rows of the ranks, each over its row's number of returns plus one."""
+    days = returns.shape[1]
+    known = np.full((len(returns), 1), float(days))
+    if not present.all():
+        known = present.sum(axis=1, keepdims=True, dtype=np.float64)
+        returns = np.where(present, returns, MISSING)
+    order, close = _order(returns, known)
+    place = np.arange(1.0, days + 1)
+    ranks = place / (known + 1)
+    if not present.all():
+        ranks[place > known] = 0.0
+    ranks[close] = 0.0
+    total = np.bincount(order.ravel(), ranks.ravel(), days)
+    if close.any():
+        ranks = stats.rankdata(returns[close], axis=1) / (known[close] + 1)
+        total += np.where(present[close], ranks, 0.0).sum(axis=0)
+    return np.asarray(total)
+
+
+def _order(values: Floats, known: Floats) -> tuple[Integers, Booleans]:
+    """Each row's days from the smallest value to the greatest, and whether two are too close.
+
+    A value whose last bits give way to the number of its day carries the day along when the row
+    is sorted, which is twice as fast as sorting indices. Rows with two values that differ in those
+    last bits only, ties among them, must be ranked another way.
+
+    Args:
+        values: (n, T), the greatest there is where missing.
+        known: (n, 1) values that are not missing.
+
+    Returns:
+        (n, T) days and (n,) rows to rank another way.
+    """
+    days = values.shape[1]
+    last = (1 << days.bit_length()) - 1
+    # Adding zero makes one zero of the two.
+    packed = values + 0.0
+    bits = packed.view(np.int64)
+    bits &= ~last
+    bits |= np.arange(days)
+    packed.sort(axis=1)
+    same = (bits[:, 1:] ^ bits[:, :-1]).view(np.uint64) <= last
+    if (known < days).any():
+        same &= np.arange(1.0, days) < known
+    return bits & last, np.asarray(same.any(axis=1))
 
 
 def generalised_rank(sample: CarSample) -> Tested:
@@ -79,9 +122,9 @@ def generalised_rank(sample: CarSample) -> Tested:
         return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
     if not sample.scar.std(ddof=1) > 0:
         return NotApplicable(name, "needs deals whose returns differ")
-    standardised = sample.series.estimation / sample.series.residual_sd[:, None]
+    standardised = sample.series.alike()[0] / sample.series.residual_sd[:, None]
     cumulated = (sample.scar / sample.scar.std(ddof=1))[:, None]
-    mean, weight = _mean_rank(np.hstack([standardised, cumulated]))
+    mean, weight = mean_rank(standardised, cumulated)
     days = int(np.isfinite(mean).sum())
     spread = np.sqrt(np.nansum(weight * mean**2) / days)
     z = float(mean[-1] / spread)
@@ -128,8 +171,11 @@ def generalised_sign(sample: CarSample) -> Tested:
 
 def rolling_sums(returns: Floats, length: int) -> Floats:
     """(n, E - L + 1) sums over L consecutive days; NaN where a day is missing."""
-    windows = np.lib.stride_tricks.sliding_window_view(returns, length, axis=1)
-    return np.asarray(windows.sum(axis=2))
+    width = returns.shape[1] - length + 1
+    total = returns[:, :width].copy()
+    for at in range(1, length):
+        total += returns[:, at : at + width]
+    return total
 
 
 def signed_rank(sample: CarSample) -> Tested:

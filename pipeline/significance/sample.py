@@ -8,6 +8,7 @@ import numpy as np
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Dates, Floats, Integers
+from pipeline.core.sessions import SessionRuns
 from pipeline.core.window import Window
 from pipeline.significance.dependence import Dependence, Links, dependence, links
 
@@ -20,13 +21,27 @@ class Series:
         event: (n, L) the window's, decimal; NaN where the share did not trade.
         estimation: (n, E) the estimation window's; NaN where unused.
         residual_sd: (n,) s of each estimation.
-        days: (n, E) ``datetime64[D]`` dates of ``estimation``.
+        sessions: n runs of E sessions, where ``estimation`` lies.
+        event_spans: (n, L) sessions each return covers; None if each covers one.
+        estimation_spans: (n, E) likewise.
     """
 
     event: Floats
     estimation: Floats
     residual_sd: Floats
-    days: Dates
+    sessions: SessionRuns | None = None
+    event_spans: Integers | None = None
+    estimation_spans: Integers | None = None
+
+    def alike(self) -> tuple[Floats, Floats]:
+        """(n, E) and (n, L) returns of one variance a deal: over the root of what each covers.
+
+        Maynes and Rumsey 1993, JBF 17.
+        """
+        if self.event_spans is None or self.estimation_spans is None:
+            return self.estimation, self.event
+        before = self.estimation / np.sqrt(self.estimation_spans)
+        return before, self.event / np.sqrt(self.event_spans)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -72,9 +87,12 @@ def car_sample(
 
     ``known`` are the links of all deals of ``abnormal``, if they were made before.
     """
-    rows = np.flatnonzero(abnormal.complete(window, share_of_days))
-    kept = abnormal.take(rows)
-    link = dependence(kept, window, (known or links(abnormal)).take(rows))
+    enough = abnormal.complete(window, share_of_days)
+    known = known or links(abnormal)
+    kept = abnormal
+    if not enough.all():
+        kept, known = abnormal.select(enough), known.take(np.flatnonzero(enough))
+    link = dependence(kept, window, known)
     std_dev = np.sqrt(kept.car_variance(window))
     car = kept.car(window)
     where = kept.columns(window)
@@ -82,7 +100,9 @@ def car_sample(
         kept.returns[:, where],
         kept.estimation_returns,
         np.sqrt(kept.residual_variance),
-        kept.estimation_days,
+        kept.estimation_sessions,
+        None if kept.spans is None else kept.spans[:, where],
+        kept.estimation_spans,
     )
     return CarSample(
         window=window,

@@ -96,9 +96,9 @@ def fitted(
     n = len(columns)
     none = np.zeros((n, len(estimation)), dtype=np.bool_)
     events = Events(
-        deals=tuple(f"D{at:03d}" for at in range(n)),
         column=np.asarray(columns, dtype=np.int64),
         position=np.asarray(positions, dtype=np.int64),
         masked=none if masked is None else masked,
     )
-    return fit_events(model, mean_model, panel, events, estimation, span)
+    deals = tuple(f"D{at:03d}" for at in range(n))
+    return fit_events(model, deals, mean_model, panel, events, estimation, span)

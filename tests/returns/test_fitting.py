@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import warnings
+from dataclasses import replace
+from typing import Literal
 
 import numpy as np
 import pandas as pd
@@ -15,7 +17,8 @@ from pipeline.core.window import Window
 from pipeline.registry import EXPECTED_RETURNS, entry
 from pipeline.returns import fit as engine
 from pipeline.returns.expected import market_model
-from pipeline.returns.fit import least_squares
+from pipeline.returns.fit import Engine, Events
+from pipeline.returns.least_squares import least_squares
 from pipeline.returns.measure import measure
 from tests.returns.panels import (
     ESTIMATION,
@@ -173,6 +176,52 @@ def test_chunks_change_nothing(monkeypatch: pytest.MonkeyPatch) -> None:
     for row in (0, 7, 22):
         alone = fitted("market_model", panel, columns[[row]], positions[[row]])
         np.testing.assert_allclose(alone.returns[0], whole.returns[row], atol=1e-15)
+
+
+@pytest.mark.parametrize(
+    "model", ["market_model", "market_adjusted", "constant_mean", "excess_return", "factor_model"]
+)
+@pytest.mark.parametrize("order", ["F", "C"])
+def test_whole_windows_are_fitted_as_single_ones(model: str, order: Literal["F", "C"]) -> None:
+    """Equations solved once a session give what one regression an event gives, to 1e-12."""
+    panel = invented_panel(securities=9, seed=12)
+    panel = replace(panel, returns=np.array(panel.returns, order=order))
+    stream = np.random.default_rng(3)
+    columns, positions = stream.integers(0, 9, 60), stream.integers(130, 305, 60)
+    events = Events(columns, positions, np.zeros((60, len(ESTIMATION)), dtype=np.bool_))
+    made = entry(EXPECTED_RETURNS, model).load()(panel)
+    results = []
+    for whole in (True, False):
+        one = Engine(made, panel, ESTIMATION, SPAN)
+        assert one.shared is not None
+        assert one.shared.whole(positions).all()
+        one.shared = one.shared if whole else None
+        arrays = one.blank(60)
+        one.fit_into(arrays, np.arange(60), events)
+        results.append(arrays)
+    for name, values in results[0].items():
+        np.testing.assert_allclose(
+            values.astype(float), results[1][name].astype(float), rtol=1e-10, atol=1e-13
+        )
+
+
+def test_a_factor_far_from_its_mean_over_the_panel_keeps_its_digits() -> None:
+    """A factor that changes level by ten thousand times its movement, against numpy's lstsq."""
+    panel = invented_panel()
+    stream = np.random.default_rng(1)
+    level = np.where(np.arange(320) < 160, 0.05, -0.05)
+    factor = level + stream.normal(0, 1e-5, 320)
+    stepped = replace(panel, factors={"market": panel.factors["market"], "step": factor})
+    found = fitted("factor_model", stepped, [0, 1, 2], [150, 300, 310])
+    for row, (column, at) in enumerate([(0, 150), (1, 300), (2, 310)]):
+        rows = np.arange(at + ESTIMATION.start, at + ESTIMATION.end + 1)
+        moved = factor[rows] - factor[rows].mean()
+        x = np.column_stack([np.ones(len(rows)), stepped.factors["market"][rows], moved])
+        wanted, left = np.linalg.lstsq(x, panel.returns[rows, column])[:2]
+        np.testing.assert_allclose(found.parameters[row, 1:], wanted[1:], rtol=1e-9)
+        np.testing.assert_allclose(
+            found.residual_variance[row], left[0] / (len(rows) - 3), rtol=1e-10
+        )
 
 
 def test_far_from_zero_no_digit_is_lost() -> None:

@@ -8,7 +8,9 @@ import pytest
 
 from pipeline.core.prices import PricePanel
 from pipeline.core.window import Window
+from pipeline.returns import placebo
 from pipeline.returns.expected import market_model
+from pipeline.returns.measure import measure
 from pipeline.returns.placebo import draw_shifts, free_to_move, pseudo_events
 from tests.returns.panels import invented_panel
 
@@ -72,9 +74,33 @@ def test_samples_are_the_returns_of_the_moved_dates(
     )
     shifts = draw_shifts(located["day_zero"], 6, 60, 5)
     days = panels["XLON"].sessions
-    for at, (one, other) in enumerate(zip(drawn, again, strict=True)):
+    for at, ((rows, one), (_, other)) in enumerate(zip(drawn, again, strict=True)):
+        assert one.deals == tuple(located["deal_id"].iloc[rows])
         np.testing.assert_array_equal(one.returns, other.returns)
         for row, deal in enumerate(one.deals):
             place = int(deal[1:])
             moved = located["position"].iloc[place] + shifts[at, place]
             assert one.days[row, 1] == days[moved]
+
+
+def test_a_sample_is_the_fit_of_the_deals_moved(
+    located: pd.DataFrame, panels: dict[str, PricePanel], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Draw by draw through the ordinary fit; the same whatever the batch."""
+    how = {"draws": 7, "distance": 60, "minimum_observations": 60, "seed": 5}
+    position = located["position"].to_numpy()
+    shifts = draw_shifts(located["day_zero"], 7, 60, 5)
+    free = free_to_move(located, shifts, 60, panels, WINDOW)
+    for events in (1, 12, 4_000):
+        monkeypatch.setattr(placebo, "BATCH_EVENTS", events)
+        drawn = pseudo_events("m", market_model, located, panels, ESTIMATION, WINDOW, **how)  # type: ignore[arg-type]
+        for at, (_, sample) in enumerate(drawn):
+            moved = located.assign(position=position + shifts[at])[free[at]]
+            masked = np.zeros((len(moved), len(ESTIMATION)), dtype=np.bool_)
+            plain = measure("m", market_model, moved, masked, panels, ESTIMATION, WINDOW)
+            kept = plain.select((plain.observations >= 60) & plain.complete(WINDOW))
+            assert sample.deals == kept.deals
+            np.testing.assert_array_equal(sample.returns, kept.returns)
+            np.testing.assert_array_equal(sample.estimation_returns, kept.estimation_returns)
+            np.testing.assert_array_equal(sample.estimation_days, kept.estimation_days)
+        assert at == 6

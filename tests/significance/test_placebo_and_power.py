@@ -22,10 +22,11 @@ def test_rates_are_counted_over_the_samples() -> None:
     abnormal = clustered(deals=20, gaps=0)
     known = links(abnormal)
     stream = np.random.default_rng(1)
-    samples = [abnormal.take(stream.permutation(20)) for _ in range(20)]
+    orders = [stream.permutation(20) for _ in range(20)]
+    samples = [(rows, abnormal.take(rows)) for rows in orders]
     own = car_sample(abnormal, WINDOW, 1.0)
     frame = placebo_sizes(
-        samples, WINDOW, TEST_FUNCTIONS, known, abnormal.deals, float(own.car.mean()), 0.05
+        samples, WINDOW, TEST_FUNCTIONS, known, float(own.car.mean()), 0.05
     ).set_index("test")
     assert (frame.loc[frame.index != "mean", "rejected"].isin([0, 20])).all()
     for key in ("cross_sectional", "patell", "dependence_adjusted"):
@@ -37,7 +38,7 @@ def test_rates_are_counted_over_the_samples() -> None:
 
 def test_no_sample_gives_an_empty_frame() -> None:
     abnormal = clustered(deals=5, gaps=0)
-    frame = placebo_sizes([], WINDOW, TEST_FUNCTIONS, links(abnormal), abnormal.deals, 0.0, 0.05)
+    frame = placebo_sizes([], WINDOW, TEST_FUNCTIONS, links(abnormal), 0.0, 0.05)
     assert frame.empty
     assert "rate" in frame
 
