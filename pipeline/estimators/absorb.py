@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import dataclass
 
 import numpy as np
 from scipy import sparse
@@ -13,8 +14,10 @@ from pipeline.core.prices import Booleans, Floats, Integers
 from pipeline.estimators.algebra import refusal
 from pipeline.estimators.covariance import groups_of, intersection, recoded
 
-CONVERGED = 1e-13
 ORTHOGONAL = 1e-9
+CLOSE = (1e-10, 1e-13)
+"""How far the gradients of each round go, relative to the sums they begin with."""
+FLAT = 1e-13
 MOST_ITERATIONS = 5_000
 ABSORBED = 1e-7
 
@@ -38,68 +41,142 @@ def without_singletons(effects: Effects) -> Booleans:
             return keep
 
 
-def _centred(rows: Floats, codes: Integers, sizes: Floats) -> Floats:
-    """``rows`` (m, n), each less its group means. Variables lie in rows, whole for bincount."""
-    left = np.empty_like(rows)
-    for at, row in enumerate(rows):
-        left[at] = row - (np.bincount(codes, weights=row) / sizes)[codes]
-    return left
-
-
 def demean(Y: Floats, effects: Effects) -> Floats:
     """Y (n, m) less its projection on the effects' indicators.
 
-    One effect: exact. Several: the alternating projections of von Neumann and Halperin, swept
-    forth and back so that a sweep S is symmetric, and solved by conjugate gradients on
-    (I - S)u = (I - S)y (Hernández-Ramos, Escalante and Raydan 2011; Correia 2017). The result
-    is accepted only when every group's mean is zero to 1e-9 of the column's spread.
+    One effect: exact. Several: the normal equations of their levels, the largest effect
+    eliminated, by conjugate gradients, all m columns at once; an iteration passes over pairs of
+    levels that share a row and never over the rows (Gaure 2013; Correia 2017). What is left is
+    projected once more, so that rounding does not stay. The result is accepted only when every
+    group's mean is zero to 1e-9 of the column's spread.
 
     Raises:
-        EstimationFailed: if the projections do not converge.
+        EstimationFailed: if the gradients do not converge.
     """
-    groups = [recoded(codes) for codes in effects.values()]
-    pairs = [(codes, np.bincount(codes).astype(np.float64)) for codes in groups]
-
-    def sweep(block: Floats) -> Floats:
-        for codes, size in (*pairs, *pairs[-2::-1]):
-            block = _centred(block, codes, size)
-        return block
-
-    centred = np.ascontiguousarray(Y.T) - Y.mean(axis=0)[:, None]
-    spread = np.linalg.norm(centred, axis=1)[:, None]
-    unit = centred / np.where(spread > 0, spread, 1.0)
-    if len(pairs) == 1:
+    groups = sorted((recoded(codes) for codes in effects.values()), key=lambda c: -int(c.max()))
+    centred = Y - Y.mean(axis=0)
+    if len(groups) == 1:
         # Twice: the second pass takes out the rounding of the first.
-        return np.asarray((sweep(sweep(unit)) * spread).T)
-    left = _conjugate(unit, sweep)
-    worst = max(
-        float(np.abs(left - _centred(left, codes, size)).max(initial=0.0)) for codes, size in pairs
-    )
-    if not worst <= ORTHOGONAL:
+        return _centred(_centred(centred, groups[0]), groups[0])
+    spread = np.linalg.norm(centred, axis=0)
+    left = centred / np.where(spread > 0, spread, 1.0)
+    levels = Levels.of(groups)
+    whole = sums = levels.sums(left)
+    for close in CLOSE:
+        left = left - levels.spread(levels.solved(sums, close * levels.size(whole)))
+        sums = levels.sums(left)
+    if not levels.worst(sums) <= ORTHOGONAL:
         raise EstimationFailed("the fixed effects could not be absorbed: no convergence")
-    return np.asarray((left * spread).T)
+    return np.asarray(left * spread)
 
 
-def _conjugate(Y: Floats, sweep: Callable[[Floats], Floats]) -> Floats:
-    """Y (m, n) less the solution u of (I - S)u = (I - S)Y, all variables at once."""
-    residual = Y - sweep(Y)
-    solution = np.zeros_like(Y)
-    direction = residual.copy()
-    size = np.einsum("ij,ij->i", residual, residual)
+def _centred(Y: Floats, codes: Integers) -> Floats:
+    """Y (n, m) less its group means."""
+    sizes = np.bincount(codes)
+    means = [(np.bincount(codes, weights=column) / sizes)[codes] for column in Y.T]
+    return np.asarray(Y - np.column_stack(means))
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Levels:
+    """The P levels of all effects, those of the largest first, and the rows they share.
+
+    Attributes:
+        rows: (n, P) indicators; columns: (P, n), the same transposed.
+        sizes: (P,) rows of each level.
+        first: levels of the largest effect.
+        across: (first, P - first) rows that one of its levels shares with another's.
+        others: (P - first, P - first) the same among the other effects.
+    """
+
+    rows: sparse.csr_matrix
+    columns: sparse.csr_matrix
+    sizes: Floats
+    first: int
+    across: sparse.csr_matrix
+    others: sparse.csr_matrix
+
+    @classmethod
+    def of(cls, groups: list[Integers]) -> Levels:
+        """The levels of effects (n,) coded from 0 without gaps, the largest first."""
+        counts = [np.bincount(codes) for codes in groups]
+        starts = np.cumsum([0, *(len(c) for c in counts)])
+        n, P = len(groups[0]), int(starts[-1])
+        shifted = np.column_stack([c + at for c, at in zip(groups, starts, strict=False)])
+        ends = np.arange(0, shifted.size + 1, len(groups))
+        rows = sparse.csr_matrix((np.ones(shifted.size), shifted.ravel(), ends), shape=(n, P))
+        first = len(counts[0])
+        columns = rows.T.tocsr()
+        rest = rows[:, first:]
+        return cls(
+            rows,
+            columns,
+            np.concatenate(counts).astype(np.float64),
+            first,
+            (columns[:first] @ rest).tocsr(),
+            (columns[first:] @ rest).tocsr(),
+        )
+
+    def sums(self, Y: Floats) -> Floats:
+        """(P, m) sums of Y (n, m) within each level."""
+        return np.asarray(self.columns @ Y)
+
+    def spread(self, values: Floats) -> Floats:
+        """(n, m) sums over a row's levels of ``values`` (P, m)."""
+        return np.asarray(self.rows @ values)
+
+    def worst(self, sums: Floats) -> float:
+        """The largest mean of a level."""
+        return float(np.abs(sums / self.sizes[:, None]).max(initial=0.0))
+
+    def size(self, sums: Floats) -> Floats:
+        """(m,) root of the summed squares of ``sums`` (P, m) over the levels' sizes."""
+        return np.asarray(np.sqrt(np.einsum("ij,ij->j", sums, sums / self.sizes[:, None])))
+
+    def solved(self, sums: Floats, close: Floats) -> Floats:
+        """(P, m) values of the levels whose projection has these ``sums`` (P, m), to ``close``."""
+        n1 = self.sizes[: self.first, None]
+        top, rest = sums[: self.first], sums[self.first :]
+        back = self.across.T.tocsr()
+        weight = 1 / self.sizes[self.first :, None]
+
+        def schur(x: Floats) -> Floats:
+            return np.asarray(self.others @ x - back @ ((self.across @ x) / n1))
+
+        lower = _conjugate(rest - back @ (top / n1), schur, weight, close)
+        return np.concatenate([(top - self.across @ lower) / n1, lower])
+
+
+def _conjugate(
+    b: Floats, apply: Callable[[Floats], Floats], weight: Floats, close: Floats
+) -> Floats:
+    """(q, m) solutions of apply(x) = b, preconditioned by ``weight`` (q, 1), all at once.
+
+    Until the weighted residual of each column is at most ``close`` (m,).
+    """
+    x = np.zeros_like(b)
+    residual = b
+    scaled = weight * residual
+    direction = scaled
+    size = np.einsum("ij,ij->j", residual, scaled)
     for _ in range(MOST_ITERATIONS):
-        # A finished variable is left alone: more steps would only follow its rounding errors.
-        active = size > CONVERGED**2
+        # A finished column is left alone: more steps would only follow its rounding errors.
+        active = size > close**2
         if not active.any():
             break
-        direction *= active[:, None]
-        image = direction - sweep(direction)
-        step = _ratio(size, np.einsum("ij,ij->i", direction, image))
-        solution += step[:, None] * direction
-        residual -= step[:, None] * image
-        new = np.einsum("ij,ij->i", residual, residual)
-        direction = residual + _ratio(new, size)[:, None] * direction
+        direction = direction * active
+        image = apply(direction)
+        curvature = np.einsum("ij,ij->j", direction, image)
+        # Levels may shift against one another and leave the rows alone: no step is taken there.
+        flat = curvature <= FLAT * np.einsum("ij,ij->j", direction, direction / weight)
+        step = _ratio(size, np.where(flat, 0.0, curvature))
+        x = x + step * direction
+        residual = residual - step * image
+        scaled = weight * residual
+        new = np.where(flat, 0.0, np.einsum("ij,ij->j", residual, scaled))
+        direction = scaled + _ratio(new, size) * direction
         size = new
-    return sweep(Y - solution)
+    return x
 
 
 def _ratio(above: Floats, below: Floats) -> Floats:

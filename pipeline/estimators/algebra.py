@@ -46,6 +46,13 @@ def solve(X: Floats, Y: Floats) -> tuple[Floats, Floats, Floats]:
     )
 
 
+def orthonormal(X: Floats) -> Floats:
+    """(n, k) orthonormal columns that span X (n, k) of full column rank; X when k is 0."""
+    if X.shape[1] == 0:
+        return X
+    return np.asarray(linalg.qr(scaled(X)[0], mode="economic")[0], dtype=np.float64)
+
+
 def leverage(X: Floats, bread: Floats) -> Floats:
     """(n,) diagonal of X (X'X)⁻¹ X'."""
     return np.asarray(np.einsum("ij,jk,ik->i", X, bread, X), dtype=np.float64)

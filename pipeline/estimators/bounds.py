@@ -235,8 +235,8 @@ def _labels(design: Design, rule: ErrorRule) -> Labels:
         estimator="lee_bounds",
         title="Trimming bounds",
         estimand=f"bounds on the average effect of {design.treatment} on {design.outcome} among "
-        "candidates that announce with or without it, if it is as good as random among candidates "
-        "and moves announcing in one direction only",
+        "deals whose outcome is seen with or without it, if it is as good as random among all "
+        "deals and moves being seen in one direction only",
         covariance=words(rule),
         citation=f"{LEE}; {INTERVAL}",
     )

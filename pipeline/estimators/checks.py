@@ -53,6 +53,14 @@ LIMITS = (
         "Leung and Yu 1996, thresholds common practice",
     ),
     Limit(
+        "curvature_alone",
+        "Selection model without a variable that moves announcing alone",
+        0.5,
+        0.5,
+        "It rests on the shape of the normal curve alone and does not lead.",
+        "Lennox, Francis and Wang 2012",
+    ),
+    Limit(
         "ratio",
         "Instrumented over least-squares estimate, size",
         5.0,

@@ -46,7 +46,10 @@ def recoded(codes: Integers) -> Integers:
     top = int(codes.max(initial=0))
     if codes.min(initial=0) >= 0 and top < 32 * len(codes) + 1024:
         # Counting is linear in n; sorting, which np.unique does, is not.
-        return np.asarray((np.cumsum(np.bincount(codes) > 0) - 1)[codes], dtype=np.int64)
+        taken = np.bincount(codes) > 0
+        if taken.all():
+            return np.asarray(codes, dtype=np.int64)
+        return np.asarray((np.cumsum(taken) - 1)[codes], dtype=np.int64)
     return np.asarray(np.unique(codes, return_inverse=True)[1].reshape(-1), dtype=np.int64)
 
 

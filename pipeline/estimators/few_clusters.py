@@ -26,6 +26,8 @@ JACKKNIFE = "Bell and McCaffrey (2002); MacKinnon, Nielsen and Webb (2023)"
 SINGULAR = 1e-9
 LOADED = 1e-6
 FEWEST_DF = 4.0
+LEAST_DF = 0.01
+"""Where no residual tells an error: its p is near one and its interval has no end in sight."""
 LARGEST_BASIS = 40_000_000
 
 
@@ -75,16 +77,24 @@ def basis_of(sample: Sample, design: Design, codes: Integers) -> Basis:
     """
     Q, R = linalg.qr(scaled(sample.X)[0], mode="economic")
     inverse = linalg.solve_triangular(R, np.eye(len(R))) / scaled(sample.X)[1][:, None]
+    loads = np.asarray(Q @ inverse.T, dtype=np.float64)
     regressors = np.asarray(Q, dtype=np.float64)
-    loads = np.asarray(regressors @ inverse.T, dtype=np.float64)
+    return Basis(span_of(sample, design, codes, regressors), loads, recoded(codes))
+
+
+def span_of(sample: Sample, design: Design, codes: Integers, Q: Floats) -> Floats:
+    """(n, p) orthonormal columns: ``Q`` (n, k), and before them the effects across the clusters.
+
+    Q is orthonormal and free of the effects; the problem is that of :func:`basis_of`.
+    """
     effects = {name: design.effects[name][sample.kept] for name in sample.levels}
     inside = {name: c for name, c in effects.items() if absorb.nested(c, {"": codes})}
     across = [c for name, c in effects.items() if name not in inside]
-    if across:
-        _refuse_large(sample.n, across)
-        dummies = np.concatenate([np.eye(int(recoded(c).max()) + 1)[recoded(c)] for c in across], 1)
-        regressors = np.column_stack([_span(dummies, inside), regressors])
-    return Basis(regressors, loads, recoded(codes))
+    if not across:
+        return Q
+    _refuse_large(sample.n, across)
+    dummies = np.concatenate([np.eye(int(recoded(c).max()) + 1)[recoded(c)] for c in across], 1)
+    return np.column_stack([_span(dummies, inside), Q])
 
 
 def _refuse_large(n: int, across: list[Integers]) -> None:
@@ -127,17 +137,12 @@ def small_sample(basis: Basis, residuals: Floats, kind: str) -> FewClusters:
     alone = np.zeros(k, dtype=np.bool_)
     largest = np.linalg.norm(basis.loads, axis=0)
     for g, rows in enumerate(basis.rows()):
-        Q, loads = basis.Q[rows], basis.loads[rows]
-        U, s, _ = np.linalg.svd(Q, full_matrices=False)
-        free = 1 - np.minimum(s, 1.0) ** 2
-        kept = free > SINGULAR
-        weight = np.where(kept, np.where(kept, free, 1.0) ** -power, 0.0) - 1
-        turned = U.T @ loads
-        alone |= (np.abs(turned[~kept]) > LOADED * largest).any(axis=0)
-        adjusted = loads + U @ (weight[:, None] * turned)
-        scores[g] = adjusted.T @ residuals[rows]
-        squares[g] = np.einsum("ij,ij->j", adjusted, adjusted)
-        cross[g] = Q.T @ adjusted
+        Q = basis.Q[rows]
+        loads, lost = adjusted(Q, basis.loads[rows], power)
+        alone |= lost > LOADED * largest
+        scores[g] = loads.T @ residuals[rows]
+        squares[g] = np.einsum("ij,ij->j", loads, loads)
+        cross[g] = Q.T @ loads
     V = scores.T @ scores
     if kind == CR2:
         df = np.array([_satterthwaite(squares[:, j], cross[:, :, j]) for j in range(k)])
@@ -146,11 +151,25 @@ def small_sample(basis: Basis, residuals: Floats, kind: str) -> FewClusters:
     return FewClusters(np.asarray(V), df, alone)
 
 
+def adjusted(Q: Floats, loads: Floats, power: float) -> tuple[Floats, Floats]:
+    """One cluster's (I - QQ')^-power times ``loads`` (n_g, k), Q (n_g, p) its rows of the basis.
+
+    Directions with no residual left are dropped; second, (k,) the largest part a load had there.
+    """
+    U, s, _ = np.linalg.svd(Q, full_matrices=False)
+    free = 1 - np.minimum(s, 1.0) ** 2
+    kept = free > SINGULAR
+    weight = np.where(kept, np.where(kept, free, 1.0) ** -power, 0.0) - 1
+    turned = U.T @ loads
+    lost = np.abs(turned[~kept]).max(axis=0, initial=0.0)
+    return np.asarray(loads + U @ (weight[:, None] * turned)), np.asarray(lost)
+
+
 def _satterthwaite(squares: Floats, cross: Floats) -> float:
     """(tr P'P)²/‖P'P‖², P'P = diag(``squares`` (G,)) - ``cross`` (G, p) times its transpose."""
     gram = np.diag(squares) - cross @ cross.T
     trace, size = float(np.trace(gram)), float(np.sum(gram * gram))
-    return trace * trace / size if size > 0 else 0.0
+    return max(trace * trace / size, LEAST_DF) if size > 0 else LEAST_DF
 
 
 def of_sample(sample: Sample, design: Design, residuals: Floats) -> FewClusters:
@@ -207,8 +226,8 @@ def notes(rule: ErrorRule, names: tuple[str, ...], few: FewClusters, at: int) ->
         )
     elif rule.kind == CR2:
         found.append(
-            "Every interval uses the degrees of freedom of the feature asked about; those of the "
-            "other coefficients are kept beside the fit's facts."
+            "Every interval uses its own coefficient's degrees of freedom; those shown are of the "
+            "feature asked about."
         )
     guilty = [name for name, alone in zip(names, few.one_cluster, strict=True) if alone]
     if guilty:

@@ -1,4 +1,4 @@
-"""Two-step efficient generalised method of moments for one treatment, with Hansen's J."""
+"""Two-step efficient generalised method of moments, with Hansen's J."""
 
 from __future__ import annotations
 
@@ -20,12 +20,8 @@ from pipeline.estimators.errors import (
     of_influence,
     positive,
 )
-from pipeline.estimators.instruments import (
-    EXACT,
-    Second,
-    overidentification,
-    with_weak_instrument_checks,
-)
+from pipeline.estimators.instrument_tests import Second, overidentification
+from pipeline.estimators.instruments import EXACT, with_weak_instrument_checks
 from pipeline.estimators.k_class import second_stage
 from pipeline.estimators.stages import Parts, moments_product, parts_of
 
@@ -39,7 +35,8 @@ def two_step_gmm(design: Design, options: FitOptions) -> Estimate:
     X (n, k), Z (n, L), effects, sets, tests and stages as in
     :func:`~pipeline.estimators.instruments.two_stage_least_squares`. The weights and the errors
     allow for what the errors allow for: unequal variances, or one or two cluster dimensions, no
-    centring. With classical errors, or one instrument, it is two-stage least squares. The
+    centring. With classical errors, or as many instruments as endogenous variables, it is
+    two-stage least squares. The
     overidentification test is J at this estimate with the weights it used (Hansen 1982).
 
     The covariance is the sandwich at the final residuals, with the usual small-sample factor.
@@ -53,9 +50,14 @@ def two_step_gmm(design: Design, options: FitOptions) -> Estimate:
     """
     parts = parts_of(design, options)
     first = second_stage(parts, 1.0)
-    plain = parts.sample.rule.kind == "classical" or len(parts.instruments) == 1
-    second = first if plain else _efficient(design, parts, first.residuals)
-    column = with_weak_instrument_checks(design, options, parts, second)
+    exactly = len(parts.instruments) == len(parts.endogenous)
+    plain = parts.sample.rule.kind == "classical" or exactly
+
+    def fit(some: Parts) -> Second:
+        begun = second_stage(some, 1.0)
+        return begun if plain else _efficient(some, begun.residuals)
+
+    column = with_weak_instrument_checks(design, options, parts, fit, None)
     return replace(
         column,
         estimator="two_step_gmm",
@@ -79,29 +81,31 @@ def _notes(parts: Parts, plain: bool) -> tuple[str, ...]:
     return ()
 
 
-def _efficient(design: Design, parts: Parts, residuals: Floats) -> Second:
+def _efficient(parts: Parts, residuals: Floats) -> Second:
     """The estimate with the weights of ``residuals`` (n,), and its influence rows.
 
-    With z̃ free of the controls C, the treatment's coefficient needs the instruments' moments
-    alone; the controls' moments then take the value S_cz S_zz⁻¹ times those of the instruments.
+    With z̃ free of the controls C, the endogenous variables' coefficients need the instruments'
+    moments alone; the controls' moments then take the value S_cz S_zz⁻¹ times those of the
+    instruments.
     """
-    sample, at = parts.sample, parts.at
-    C, D = parts.controls, sample.X[:, at]
+    sample = parts.sample
+    C, E = parts.controls, sample.X[:, list(parts.places)]
     moments = np.column_stack([C, parts.Z]) * residuals[:, None]
     S = moments_product(sample.rule, moments)
     q = C.shape[1]
     W = _inverse(S[q:, q:])
-    d = parts.Z.T @ parts.D
-    alpha = float(d @ W @ (parts.Z.T @ parts.y)) / float(d @ W @ d)
-    g = parts.Z.T @ (parts.y - alpha * parts.D)
+    d = parts.Z.T @ parts.E
+    met = d.T @ (W @ (parts.Z.T @ parts.y))
+    alpha = np.asarray(np.linalg.solve(d.T @ W @ d, met), dtype=np.float64)
+    g = parts.Z.T @ (parts.y - parts.E @ alpha)
     carried = S[:q, q:] @ W
     bread = solve(C, sample.y)[2] if q else np.empty((0, 0))
-    gamma = bread @ (C.T @ (sample.y - alpha * D) - carried @ g)
-    b = np.insert(gamma, at, alpha)
+    gamma = np.asarray(bread @ (C.T @ (sample.y - E @ alpha) - carried @ g), dtype=np.float64)
+    b = _in_place(parts, alpha[None], gamma[None])[0]
     u = sample.y - sample.X @ b
     if float(u @ u) <= EXACT * sample.total:
         raise EstimationFailed("the regressors fit the outcome exactly: no error is left")
-    u = u + _left_in_effects(design, parts, residuals, parts.Z @ (W @ g))
+    u = u + _left_in_effects(parts, residuals, parts.Z @ (W @ g))
     influence = _influence(parts, u, d, W, carried, bread)
     k = len(b)
     errors = of_influence(sample.rule, influence, k + sample.counted)
@@ -110,7 +114,15 @@ def _efficient(design: Design, parts: Parts, residuals: Floats) -> Second:
     return Second(b, u, Sandwich(covariance, influence, errors.floored), covariance, df, sentence)
 
 
-def _left_in_effects(design: Design, parts: Parts, residuals: Floats, pull: Floats) -> Floats:
+def _in_place(parts: Parts, endogenous: Floats, controls: Floats) -> Floats:
+    """(m, k) columns in the order of X from those of the endogenous (m, p) and the controls."""
+    made = np.empty((len(endogenous), len(parts.sample.names)))
+    rest = [at for at in range(made.shape[1]) if at not in parts.places]
+    made[:, list(parts.places)], made[:, rest] = endogenous, controls
+    return made
+
+
+def _left_in_effects(parts: Parts, residuals: Floats, pull: Floats) -> Floats:
     """(n,) what the fit leaves in the effects, whose moments bend as those of the controls do.
 
     Effects' moments are E'h with h the residuals times the sums of residuals times ``pull`` (n,)
@@ -120,7 +132,7 @@ def _left_in_effects(design: Design, parts: Parts, residuals: Floats, pull: Floa
     if not sample.levels:
         return np.zeros(sample.n)
     h = residuals * _totals(sample.rule, residuals * pull)
-    effects = {name: design.effects[name][sample.kept] for name in sample.levels}
+    effects = {name: parts.design.effects[name][sample.kept] for name in sample.levels}
     return np.asarray(h - absorb.demean(h[:, None], effects)[:, 0])
 
 
@@ -140,16 +152,16 @@ def _total(rows: Floats, codes: Integers) -> Floats:
 def _influence(
     parts: Parts, u: Floats, d: Floats, W: Floats, carried: Floats, bread: Floats
 ) -> Floats:
-    """(n, k) what each row adds to the coefficients, the treatment's in its place.
+    """(n, k) what each row adds to the coefficients, each in its regressor's place.
 
-    The rows use z̃'u where the controls' fit has been taken out of z, so Z̃'u is Z̃'(y - αD).
+    The rows use z̃'u where the controls' fit has been taken out of z, so Z̃'u is Z̃'(y - Eα).
     """
     scores = parts.Z * u[:, None]
-    treatment = scores @ (W @ d) / float(d @ W @ d)
-    C, D = parts.controls, parts.sample.X[:, parts.at]
-    own = C * u[:, None] - np.outer(treatment, C.T @ D)
-    own -= (scores - np.outer(treatment, d)) @ carried.T
-    return np.insert(own @ bread, parts.at, treatment, axis=1)
+    endogenous = scores @ (W @ d @ np.linalg.inv(d.T @ W @ d))
+    C, E = parts.controls, parts.sample.X[:, list(parts.places)]
+    own = C * u[:, None] - endogenous @ (E.T @ C)
+    own -= (scores - endogenous @ d.T) @ carried.T
+    return _in_place(parts, endogenous, own @ bread)
 
 
 def _inverse(S: Floats) -> Floats:

@@ -1,4 +1,4 @@
-"""Limited-information maximum likelihood and Fuller's estimator for one treatment.
+"""Limited-information maximum likelihood and Fuller's estimator.
 
 Both solve X'(I - κM_Z)(y - Xb) = 0 with κ at or near the smallest root that makes the two
 reduced forms agree. κ = 1 is two-stage least squares, κ = 0 least squares (Theil 1958).
@@ -20,13 +20,10 @@ from pipeline.estimators.errors import (
     of_influence,
     positive,
 )
-from pipeline.estimators.instruments import (
-    EXACT,
-    Second,
-    smallest_root,
-    with_weak_instrument_checks,
-)
+from pipeline.estimators.instrument_tests import Second, smallest_root
+from pipeline.estimators.instruments import EXACT, with_weak_instrument_checks
 from pipeline.estimators.stages import Parts, parts_of
+from pipeline.estimators.wild_instruments import Weights
 
 ANDERSON_RUBIN = "Anderson and Rubin (1949)"
 FULLER = "Fuller (1977)"
@@ -43,8 +40,9 @@ def limited_information(design: Design, options: FitOptions) -> Estimate:
 
     X (n, k), Z (n, L), effects, errors, sets, tests and stages as in
     :func:`~pipeline.estimators.instruments.two_stage_least_squares`, with which it coincides when
-    L is one. Nearly median-unbiased when instruments are many or weak, at the price of heavier
-    tails: it has no mean (Anderson and Rubin 1949; Mariano and Sawa 1972).
+    there are as many instruments as endogenous variables. Nearly median-unbiased when instruments
+    are many or weak, at the price of heavier tails: it has no mean (Anderson and Rubin 1949;
+    Mariano and Sawa 1972).
 
     The covariance is the sandwich of the equations solved, rows (x - κ M_Z x)u; ``classical`` is
     s²(X'(I - κM_Z)X)⁻¹ with divisor n - k. ``fit`` adds kappa. df: as in two-stage least squares,
@@ -56,8 +54,9 @@ def limited_information(design: Design, options: FitOptions) -> Estimate:
             not positive or a variance is not.
     """
     parts = parts_of(design, options)
-    column = _column(design, options, parts, _root(parts))
-    sizes = STOCK_YOGO_LIML_SIZE.get(len(parts.instruments), ())
+    column = _column(design, options, parts, a=0)
+    one = len(parts.endogenous) == 1
+    sizes = STOCK_YOGO_LIML_SIZE.get(len(parts.instruments), ()) if one else ()
     named = zip((10, 15, 20, 25), sizes, strict=False)
     return replace(
         column,
@@ -76,23 +75,31 @@ def fuller(design: Design, options: FitOptions) -> Estimate:
     :func:`limited_information`; ``fit`` adds kappa.
     """
     parts = parts_of(design, options)
-    free = parts.sample.n - parts.k_first - parts.sample.absorbed
-    column = _column(design, options, parts, _root(parts) - 1 / free)
+    column = _column(design, options, parts, a=1)
     return replace(column, estimator="fuller", title="Fuller (a = 1)", citation=FULLER)
 
 
 def _root(parts: Parts) -> float:
-    if len(parts.instruments) == 1:
+    if len(parts.instruments) == len(parts.endogenous):
         return 1.0
     # An exact fit leaves the root without a value: two stages find it out first.
     second_stage(parts, 1.0)
     return smallest_root(parts)
 
 
-def _column(design: Design, options: FitOptions, parts: Parts, kappa: float) -> Estimate:
-    column = with_weak_instrument_checks(design, options, parts, second_stage(parts, kappa))
+def _less(parts: Parts, a: int) -> float:
+    return a / (parts.sample.n - parts.k_first - parts.sample.absorbed)
+
+
+def _column(design: Design, options: FitOptions, parts: Parts, a: int) -> Estimate:
+    def fit(some: Parts) -> Second:
+        return second_stage(some, _root(some) - _less(some, a))
+
+    weights = Weights(root=True, less=_less(parts, a))
+    kappa = _root(parts) - weights.less
+    column = with_weak_instrument_checks(design, options, parts, fit, weights)
     notes = column.notes
-    if len(parts.instruments) > 1:
+    if len(parts.instruments) > 1 and len(parts.endogenous) == 1:
         # Kolesár (2013), from memory.
         notes += (
             "Where effects differ between deals, this estimate need not be an average of them, "
@@ -104,7 +111,7 @@ def _column(design: Design, options: FitOptions, parts: Parts, kappa: float) -> 
 def second_stage(parts: Parts, kappa: float) -> Second:
     """Coefficients (k,) of the k-class estimator at ``kappa``, and their sandwich.
 
-    M_Z leaves nothing of the controls, so that only the treatment's column differs between
+    M_Z leaves nothing of the controls, so that only the endogenous columns differ between
     X and X - κM_Z X.
 
     Raises:
@@ -112,11 +119,12 @@ def second_stage(parts: Parts, kappa: float) -> Second:
             positive.
     """
     sample = parts.sample
-    rest = solve(parts.Z, parts.D)[1]
+    size = np.linalg.norm(parts.E, axis=0)
+    rest = solve(parts.Z, parts.E)[1]
     weighed = sample.X.copy()
-    weighed[:, parts.at] -= kappa * rest
-    moment = float(parts.D @ parts.D) - kappa * float(rest @ rest)
-    if not moment > 0:
+    weighed[:, list(parts.places)] -= kappa * rest
+    moments = (parts.E / size).T @ (parts.E / size) - kappa * (rest / size).T @ (rest / size)
+    if not np.linalg.eigvalsh(moments)[0] > 0:
         raise EstimationFailed(f"the equations at κ = {kappa:.6g} have no stable solution")
     b, bread = _solved(weighed, sample.X, sample.y)
     u = sample.y - sample.X @ b

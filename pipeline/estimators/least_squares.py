@@ -149,6 +149,7 @@ def _estimate(design: Design, options: FitOptions, sample: Sample, fitted: Fitte
         notes=_notes(design, sample, fitted),
         citation=_citation(sample),
         level=options.level,
+        df_each=None if fitted.few is None else fitted.few.df,
     )
 
 

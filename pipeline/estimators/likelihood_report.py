@@ -7,7 +7,7 @@ import numpy as np
 from pipeline.core.estimate import NotApplicable, Tested, chi2_test, t_test, z_test
 from pipeline.core.prices import Floats
 from pipeline.estimators.errors import ErrorRule, factor, of_influence, positive
-from pipeline.estimators.joint_normal import Maximum
+from pipeline.estimators.likelihood_maximum import Maximum
 
 NULL = "the errors of choice and outcome are uncorrelated"
 CAUTION = "a large p does not show that there is no selection on what was not recorded"
@@ -65,8 +65,8 @@ def facts(found: Maximum, V: Floats) -> dict[str, float]:
         "atanh_rho": float(np.arctanh(found.rho)),
         "log_likelihood": found.value,
         "log_likelihood_independent": found.value_independent,
-        "starts": float(found.starts),
-        "starts_agreeing": float(found.agreeing),
+        "starts": float(len(found.starts)),
+        "starts_agreeing": float(sum(start.agrees for start in found.starts)),
         "gradient": found.gradient,
         "information_condition": found.condition,
         **{f"profile.{rho:g}": value - found.value for rho, value in found.profile.items()},

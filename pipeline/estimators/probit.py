@@ -25,6 +25,7 @@ from pipeline.estimators.errors import (
 )
 
 LOG_ROOT_TWO_PI = 0.5 * float(np.log(2 * np.pi))
+ROOT_TWO_OVER_PI = float(np.sqrt(2 / np.pi))
 MOST_STEPS = 60
 CONVERGED = 1e-20
 SUSPICIOUS_INDEX = 5.0
@@ -73,9 +74,8 @@ class ProbitFit:
 
 
 def mills(index: Floats) -> Floats:
-    """φ(a)/Φ(a) at ``index`` (A,), by logarithms: exact far into both tails."""
-    log_density = -0.5 * index**2 - LOG_ROOT_TWO_PI
-    return np.asarray(np.exp(log_density - special.log_ndtr(index)), dtype=np.float64)
+    """φ(a)/Φ(a) at ``index``, as √(2/π)/erfcx(-a/√2): exact far into both tails."""
+    return np.asarray(ROOT_TWO_OVER_PI / special.erfcx(index * -np.sqrt(0.5)), dtype=np.float64)
 
 
 def fit_probit(equation: Equation) -> ProbitFit:
@@ -166,9 +166,24 @@ def refuse_single_separation(chosen: Booleans, W: Floats, names: tuple[str, ...]
     above = no.max(axis=0) <= yes.min(axis=0)
     below = yes.max(axis=0) <= no.min(axis=0)
     varies = np.ptp(W, axis=0) > 0
-    guilty = [name for at, name in enumerate(names) if varies[at] and (above[at] or below[at])]
+    guilty = [at for at in range(len(names)) if varies[at] and (above[at] or below[at])]
     if guilty:
-        raise _separated(guilty)
+        found = [_level(names[at], yes[:, at], no[:, at]) for at in guilty]
+        raise _separated([names[at] for at in guilty], "; ".join(found))
+
+
+def _level(name: str, yes: Floats, no: Floats) -> str:
+    """The values of a variable that decide, and for whom."""
+    if no.max() < yes.min() or yes.max() < no.min():
+        side, cut = ("from", yes.min()) if no.max() < yes.min() else ("up to", yes.max())
+        return f"all with {name} {side} {cut:g} chose it, and nobody else did"
+    sides = (
+        (yes[(yes > no.max()) | (yes < no.min())], "chose it"),
+        (no[(no > yes.max()) | (no < yes.min())], "did not choose it"),
+    )
+    values, who = next(side for side in sides if len(side[0]))
+    level = f"= {values[0]:g}" if np.ptp(values) == 0 else f"{values.min():g} to {values.max():g}"
+    return f"all with {name} {level} {who}"
 
 
 def refuse_separation(signs: Floats, W: Floats, names: tuple[str, ...]) -> None:
@@ -193,12 +208,12 @@ def refuse_separation(signs: Floats, W: Floats, names: tuple[str, ...]) -> None:
         raise _separated([name for at, name in enumerate(names) if varies[at] and size[at] > 1e-6])
 
 
-def _separated(guilty: list[str]) -> InputProblem:
+def _separated(guilty: list[str], found: str = "") -> InputProblem:
     listed = ", ".join(guilty)
     return refusal(
         "separation",
         listed,
-        f"{listed} tells those who chose from those who did not without error",
+        found or f"{listed} together tell those who chose from those who did not without error",
         "a variable whose values both share",
         "drop it, group its levels, or leave out the rows it decides",
     )

@@ -1,4 +1,4 @@
-"""Columns that a handful of extreme returns cannot carry: median regression and Huber's."""
+"""Columns that a handful of extreme outcomes cannot carry: median regression and Huber's."""
 
 from __future__ import annotations
 
@@ -101,7 +101,7 @@ def huber(design: Design, options: FitOptions) -> Estimate:
         estimator="huber",
         title="Huber regression",
         estimand=f"difference in {design.outcome} associated with {design.treatment} in the bulk "
-        "of the deals, holding the controls fixed, extreme returns counting for less",
+        "of the deals, holding the controls fixed, extreme outcomes counting for less",
         citation=HUBER,
     )
 

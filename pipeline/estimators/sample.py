@@ -209,5 +209,5 @@ def _check_outcome(y: Floats) -> None:
             "outcome",
             "the same outcome in every deal",
             "outcomes that differ",
-            "check the returns",
+            "check the outcome",
         )

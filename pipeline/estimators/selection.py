@@ -73,16 +73,18 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     ``fit``: sigma, rho, delta_mean, lambda_vif, condition_number, condition_number_without_lambda,
     pseudo_r_squared, auc, candidates, selected, without_lambda (the treatment's coefficient by
     least squares alone).
+    Without an excluded variable the column is identified by curvature alone, and says so;
+    ``curvature_alone`` is then 1 unless the options allow it.
     ``tests``: excluded_variables, no_selection. ``stages``: the probit.
 
     Raises:
-        InputProblem: ``no_selection``, ``selection_rows``, ``no_exclusion`` (unless the options
-            allow the functional form), ``excluded_is_control``, ``unknown_exclusion``,
+        InputProblem: ``no_selection``, ``selection_rows``, ``excluded_is_control``,
+            ``unknown_exclusion``,
             ``separation``, ``one_outcome``, ``few_rows``, ``collinear``, ``no_variation``, or a
             problem of clusters or covariance.
         EstimationFailed: if the probit does not converge or the covariance is not positive.
     """
-    selection = checked_selection(design, options)
+    selection = checked_selection(design)
     rule = choose_errors(
         selection.clusters,
         len(selection.selected),
@@ -110,7 +112,13 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     )
 
 
-def checked_selection(design: Design, options: FitOptions) -> SelectionRows:
+def checked_selection(design: Design) -> SelectionRows:
+    """The candidates, if a selection model may be made of them.
+
+    Raises:
+        InputProblem: ``no_selection``, ``unknown_exclusion``, ``excluded_is_control``,
+            ``selection_rows``.
+    """
     selection = design.selection
     if selection is None:
         raise refusal(
@@ -137,14 +145,6 @@ def checked_selection(design: Design, options: FitOptions) -> SelectionRows:
             "excluded, yet a regressor of the outcome",
             "a variable that moves announcing and not the outcome",
             "take it out of one of the two",
-        )
-    if not selection.excluded and not options.allow_functional_form:
-        raise refusal(
-            "no_exclusion",
-            "selection",
-            "no variable moves announcing alone",
-            "at least one excluded variable",
-            "name one and say why it does not move the outcome, or set allow_functional_form",
         )
     check_rows(design, selection)
     return selection
@@ -238,7 +238,7 @@ def _estimate(
     notes: tuple[str, ...],
 ) -> Estimate:
     df, sentence = limits(rule)
-    facts = _facts(design, step, stage, selection)
+    facts = {**_facts(design, step, stage, selection), **curvature_alone(selection, options)}
     return Estimate(
         estimator="heckman_two_step",
         title="Heckman two-step",
@@ -299,6 +299,13 @@ def _facts(
     }
 
 
+def curvature_alone(selection: SelectionRows, options: FitOptions) -> dict[str, float]:
+    """The fact that nothing but curvature identifies the model, unless the options allow it."""
+    if selection.excluded or options.allow_functional_form:
+        return {}
+    return {"curvature_alone": 1.0}
+
+
 def excluded_test(stage: Estimate, selection: SelectionRows) -> Tested:
     at = [selection.names.index(name) for name in selection.excluded]
     return diagnostics.wald(
@@ -326,11 +333,6 @@ def _notes(
     design: Design, step: SecondStep, selection: SelectionRows, facts: dict[str, float]
 ) -> list[str]:
     notes = []
-    if not selection.excluded:
-        notes.append(
-            "No variable moves announcing without moving the outcome: the correction rests on the "
-            "curvature of the inverse Mills ratio, that is on normality."
-        )
     if facts["lambda_vif"] > VIF_HOPELESS:
         notes.append(
             f"The inverse Mills ratio is all but a combination of the regressors (VIF "
@@ -370,6 +372,11 @@ def equation_notes(design: Design, selection: SelectionRows) -> list[str]:
         if moves and name not in design.names and name not in selection.excluded
     ]
     notes = []
+    if not selection.excluded:
+        notes.append(
+            "No variable moves announcing without moving the outcome: the correction rests on the "
+            "curvature of the inverse Mills ratio, that is on normality."
+        )
     if missing:
         notes.append(
             f"In the outcome but not in the selection equation: {', '.join(missing)}. They are "

@@ -48,6 +48,7 @@ from pipeline.estimators.selection import (
     LAMBDA,
     SecondStep,
     checked_selection,
+    curvature_alone,
     equation_notes,
     excluded_test,
     stacked_influence,
@@ -104,7 +105,7 @@ def selection_two_stage(design: Design, options: FitOptions) -> Estimate:
         EstimationFailed: if the probit does not converge, the fit is exact or a variance is not
             positive.
     """
-    selection = checked_selection(design, options)
+    selection = checked_selection(design)
     rule = choose_errors(
         selection.clusters,
         len(selection.selected),
@@ -248,7 +249,7 @@ def _estimate(
     sets = _sets(column, forms)
     return replace(
         column,
-        fit=_facts(columns, step, left, selection),
+        fit={**_facts(columns, step, left, selection), **curvature_alone(selection, options)},
         tests={
             "effective_f": effective,
             "anderson_rubin": anderson_rubin_test(forms),

@@ -9,11 +9,12 @@ import numpy as np
 from pipeline.core.design import Design, FitOptions, SelectionRows
 from pipeline.core.estimate import Estimate
 from pipeline.core.prices import Floats
-from pipeline.estimators import joint_normal
+from pipeline.estimators import likelihood_maximum
 from pipeline.estimators.algebra import refuse_dependent
 from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import ErrorRule, cautions, choose_errors, words
-from pipeline.estimators.joint_normal import Joint, Maximum
+from pipeline.estimators.joint_normal import Joint
+from pipeline.estimators.likelihood_maximum import Maximum
 from pipeline.estimators.likelihood_report import (
     correlation_tests,
     facts,
@@ -27,6 +28,7 @@ from pipeline.estimators.sample import plain
 from pipeline.estimators.selection import (
     LAMBDA,
     checked_selection,
+    curvature_alone,
     equation_notes,
     estimand,
     excluded_test,
@@ -57,7 +59,7 @@ def heckman_likelihood(design: Design, options: FitOptions) -> Estimate:
         EstimationFailed: if the likelihood has no interior maximum, does not converge, or its
             information is singular.
     """
-    selection = checked_selection(design, options)
+    selection = checked_selection(design)
     candidates = len(selection.selected)
     rule = choose_errors(
         selection.clusters, candidates, options, otherwise="classical", supported=SUPPORTED
@@ -77,6 +79,7 @@ def heckman_likelihood(design: Design, options: FitOptions) -> Estimate:
             **facts(found, V),
             "candidates": float(candidates),
             "selected": float(selection.selected.sum()),
+            **curvature_alone(selection, options),
         },
         tests={
             "excluded_variables": excluded_test(stage, selection),
@@ -103,6 +106,19 @@ def _labels(design: Design, selection: SelectionRows, rule: ErrorRule) -> Labels
 
 
 def _maximum(design: Design, selection: SelectionRows) -> Maximum:
+    model, gamma, start = joint_model(design, selection)
+    return likelihood_maximum.maximise(model, gamma, start)
+
+
+def joint_model(
+    design: Design, selection: SelectionRows
+) -> tuple[Joint, Floats, tuple[Floats, float, float]]:
+    """The likelihood's rows, the probit's coefficients (q,), and the two-step (β, σ, ρ).
+
+    Raises:
+        InputProblem: as :func:`~pipeline.estimators.probit.fit_probit`; ``collinear``.
+        EstimationFailed: if the probit does not converge or the outcome is fitted exactly.
+    """
     equation = Equation(
         selection.selected, selection.W, selection.names, "announcing a deal", _key(selection)
     )
@@ -117,8 +133,7 @@ def _maximum(design: Design, selection: SelectionRows) -> Maximum:
         y=design.y[rows],
         X=design.X[rows],
     )
-    start = (step.coefficients[:-1], step.sigma, step.rho)
-    return joint_normal.maximise(model, first.coefficients, start)
+    return model, first.coefficients, (step.coefficients[:-1], step.sigma, step.rho)
 
 
 def _key(selection: SelectionRows) -> str:

@@ -8,22 +8,24 @@ import numpy as np
 from scipy import linalg
 
 from pipeline.core.design import Design, FitOptions
-from pipeline.core.estimate import Estimate
 from pipeline.core.prices import Floats
 from pipeline.estimators import absorb
-from pipeline.estimators.algebra import partial_out, refusal, refuse_dependent, solve
+from pipeline.estimators.algebra import (
+    RANK_TOLERANCE,
+    partial_out,
+    refusal,
+    refuse_dependent,
+    solve,
+)
 from pipeline.estimators.anderson_rubin import ReducedForms
 from pipeline.estimators.covariance import cluster_sums, intersection
 from pipeline.estimators.errors import (
     CLUSTER,
     ErrorRule,
-    cautions,
     choose_errors,
     degrees_of_freedom,
-    factor,
     positive,
     sandwich,
-    words,
 )
 from pipeline.estimators.sample import Sample, plain, within
 
@@ -36,33 +38,44 @@ class Parts:
     """Columns of an instrumental-variables fit, fixed effects taken out of all of them.
 
     Attributes:
-        sample: the sample; its X (n, k) holds the treatment among the regressors.
-        at: the treatment's column in X.
+        design: what they are the columns of.
+        sample: the sample; its X (n, k) holds the p endogenous variables among the regressors.
+        endogenous: p names, the treatment first.
+        places: their columns in X.
         instruments: L names.
-        controls: (n, k - 1) the other columns of X.
+        controls: (n, k - p) the other columns of X.
         control_names: their names.
-        y: (n,) outcome, D: (n,) treatment and Z: (n, L) instruments, controls taken out of each.
-        spread: (n, L + k - 1) instruments and controls, the regressors of the first stage.
+        y: (n,) outcome, E: (n, p) endogenous and Z: (n, L) instruments, controls taken out.
+        D: (n,) the treatment, the first column of E.
+        spread: (n, L + k - p) instruments and controls, the regressors of the first stages.
     """
 
+    design: Design
     sample: Sample
-    at: int
+    endogenous: tuple[str, ...]
+    places: tuple[int, ...]
     instruments: tuple[str, ...]
     controls: Floats
     control_names: tuple[str, ...]
     y: Floats
+    E: Floats
     D: Floats
     Z: Floats
     spread: Floats
 
     @property
+    def at(self) -> int:
+        """The treatment's column in X."""
+        return self.places[0]
+
+    @property
     def k_first(self) -> int:
-        """Coefficients of the first stage, without fixed effects."""
+        """Coefficients of a first stage, without fixed effects."""
         return int(self.spread.shape[1])
 
 
 def parts_of(design: Design, options: FitOptions) -> Parts:
-    """The columns, refused if they cannot identify the treatment's coefficient.
+    """The columns, refused if they cannot identify the coefficients of the endogenous variables.
 
     Raises:
         InputProblem: ``under_identified``, ``instrument_is_treatment``, ``instrument_is_control``,
@@ -70,33 +83,43 @@ def parts_of(design: Design, options: FitOptions) -> Parts:
             ``absorbed``, ``no_variation``, ``collinear``, ``few_rows``, or a problem of
             clusters or covariance.
     """
-    if not design.instruments:
-        raise refusal(
-            "under_identified",
-            "instruments",
-            f"no instrument for {design.treatment}",
-            "at least one",
-            "declare an instrument or use least squares",
-        )
+    endogenous = design.endogenous
+    check_order(design.instruments, endogenous)
     check_names(design)
     sample = _sample(design, options)
-    at = sample.names.index(design.treatment)
     refuse_dependent(sample.X, sample.names)
-    _check_instruments(design, sample, at)
-    controls = np.delete(sample.X, at, axis=1)
-    left = partial_out(np.column_stack([sample.y, sample.X[:, at], sample.Z]), controls)
+    gone = [name for name in endogenous if name not in sample.names]
+    if gone:
+        raise refusal(
+            "no_variation",
+            ", ".join(gone),
+            "the same value in every deal",
+            "endogenous variables that vary",
+            "take it out of the variables the instruments move",
+        )
+    places = tuple(sample.names.index(name) for name in endogenous)
+    controls = np.delete(sample.X, places, axis=1)
+    control_names = tuple(name for name in sample.names if name not in endogenous)
+    _check_instruments(design, sample, controls, control_names)
+    whole = np.column_stack([sample.y, sample.X[:, places], sample.Z])
+    left = partial_out(whole, controls)
+    last = 1 + len(endogenous)
     parts = Parts(
+        design=design,
         sample=sample,
-        at=at,
+        endogenous=endogenous,
+        places=places,
         instruments=design.instruments,
         controls=controls,
-        control_names=tuple(np.delete(np.array(sample.names, dtype=object), at)),
+        control_names=control_names,
         y=left[:, 0],
+        E=left[:, 1:last],
         D=left[:, 1],
-        Z=left[:, 2:],
+        Z=left[:, last:],
         spread=np.column_stack([sample.Z, controls]),
     )
-    _check_same(design, parts)
+    _check_same(parts)
+    _check_rank(parts)
     return parts
 
 
@@ -114,12 +137,36 @@ def _sample(design: Design, options: FitOptions) -> Sample:
     return plain(design, rule)
 
 
+def check_order(instruments: tuple[str, ...], endogenous: tuple[str, ...]) -> None:
+    """The order condition: at least as many instruments as endogenous variables."""
+    L, p = len(instruments), len(endogenous)
+    if p <= L:
+        return
+    several = p > 1
+    raise refusal(
+        "under_identified",
+        "instruments",
+        f"{L} instrument{'' if L == 1 else 's'} for {p} endogenous variables "
+        f"({', '.join(endogenous)})"
+        if several
+        else f"no instrument for {endogenous[0]}",
+        f"at least {p} instruments" if several else "at least one",
+        "declare more instruments, or hold the other variables fixed as controls"
+        if several
+        else "declare an instrument or use least squares",
+    )
+
+
 def check_names(design: Design) -> None:
-    if design.treatment in design.instruments:
+    """Refuse an instrument that is a regressor too."""
+    own = [name for name in design.endogenous if name in design.instruments]
+    if own:
         raise refusal(
             "instrument_is_treatment",
-            design.treatment,
-            "the treatment among its instruments",
+            own[0],
+            "the treatment among its instruments"
+            if own[0] == design.treatment
+            else "an endogenous variable among the instruments",
             "an instrument other than the treatment",
             "take it out of the instruments",
         )
@@ -134,10 +181,10 @@ def check_names(design: Design) -> None:
         )
 
 
-def _check_instruments(design: Design, sample: Sample, at: int) -> None:
+def _check_instruments(
+    design: Design, sample: Sample, controls: Floats, names: tuple[str, ...]
+) -> None:
     absorb.refuse_absorbed(design.Z[sample.kept], sample.Z, design.instruments)
-    controls = np.delete(sample.X, at, axis=1)
-    names = tuple(name for column, name in enumerate(sample.names) if column != at)
     refuse_dependent(
         np.column_stack([controls, sample.Z]),
         (*names, *design.instruments),
@@ -163,98 +210,76 @@ def _check_instruments(design: Design, sample: Sample, at: int) -> None:
         )
 
 
-def _check_same(design: Design, parts: Parts) -> None:
-    left = solve(parts.Z, parts.D)[1]
-    total = float(parts.D @ parts.D)
-    if 1 - float(left @ left) / total <= SAME_VARIABLE:
+def _check_same(parts: Parts) -> None:
+    """Refuse instruments that reproduce an endogenous variable."""
+    left = solve(parts.Z, parts.E)[1]
+    for name, column, rest in zip(parts.endogenous, parts.E.T, left.T, strict=True):
+        total = float(column @ column)
+        if 1 - float(rest @ rest) / total <= SAME_VARIABLE:
+            continue
+        alone = (parts.Z.T @ column) ** 2 / np.sum(parts.Z**2, axis=0) / total
+        raise refusal(
+            "instrument_is_treatment",
+            parts.instruments[int(alone.argmax())],
+            f"the instruments reproduce {name} (partial R² above {SAME_VARIABLE})",
+            "instruments that move the treatment without being it",
+            "an instrument that is the treatment under another name removes no bias: replace it",
+        )
+
+
+def _check_rank(parts: Parts) -> None:
+    """Refuse when what the instruments predict of the endogenous variables is dependent."""
+    if len(parts.endogenous) == 1:
         return
-    alone = (parts.Z.T @ parts.D) ** 2 / np.sum(parts.Z**2, axis=0) / total
+    size = np.linalg.norm(parts.E, axis=0)
+    predicted = (parts.E - solve(parts.Z, parts.E)[1]) / size
+    if linalg.svdvals(predicted)[-1] > RANK_TOLERANCE:
+        return
     raise refusal(
-        "instrument_is_treatment",
-        parts.instruments[int(alone.argmax())],
-        f"the instruments reproduce {design.treatment} (partial R² above {SAME_VARIABLE})",
-        "instruments that move the treatment without being it",
-        "an instrument that is the treatment under another name removes no bias: replace it",
+        "under_identified",
+        ", ".join(parts.endogenous),
+        "the instruments move these variables in one proportion only",
+        f"{len(parts.endogenous)} independent movements",
+        "add an instrument that moves them in another proportion",
     )
 
 
 def reduced_forms(parts: Parts) -> ReducedForms:
-    """Outcome and treatment on the instruments, controls and effects out, with joint covariance.
+    """Outcome and endogenous on the instruments, controls and effects out, joint covariance.
 
     By Frisch and Waugh (1933) the blocks equal those of the full regressions. The covariance is
-    made for orthonormal instruments and for y - α̂D, α̂ the two-stage estimate, and then carried
+    made for orthonormal instruments and for y - Eα̂, α̂ the two-stage estimate, and then carried
     over: where a two-way covariance has to be repaired, the repair then depends neither on how
     the instruments are combined nor on a multiple of the treatment added to the outcome.
     """
     sample = parts.sample
     L, k = len(parts.instruments), parts.k_first + sample.counted
-    both, residuals, _ = solve(parts.Z, np.column_stack([parts.y, parts.D]))
+    both, residuals, _ = solve(parts.Z, np.column_stack([parts.y, parts.E]))
     Q, R = linalg.qr(parts.Z, mode="economic")
-    pi = R @ both
-    alpha = float(pi[:, 1] @ pi[:, 0]) / float(pi[:, 1] @ pi[:, 1])
-    turned = residuals @ np.array([[1.0, 0.0], [-alpha, 1.0]])
-    size = np.linalg.norm(turned, axis=0)
-    size = np.where(size > 0, size, 1.0)
+    turn, back = turned(R @ both, residuals)
     basis = np.asarray(Q, dtype=np.float64)
-    errors = sandwich(sample.rule, basis, np.eye(L), np.asarray(turned / size), k, unit_free=False)
-    back = np.kron(
-        np.array([[size[0], alpha * size[1]], [0.0, size[1]]]),
-        linalg.solve_triangular(R, np.eye(L)),
-    )
-    V = np.asarray(back @ errors.covariance @ back.T, dtype=np.float64)
+    errors = sandwich(sample.rule, basis, np.eye(L), residuals @ turn, k, unit_free=False)
+    carry = np.kron(back, linalg.solve_triangular(R, np.eye(L)))
+    V = np.asarray(carry @ errors.covariance @ carry.T, dtype=np.float64)
     df, _ = degrees_of_freedom(sample.rule, parts.k_first + sample.absorbed)
-    names = tuple(f"{of} {z}" for of in ("outcome on", "first stage") for z in parts.instruments)
-    return ReducedForms(both[:, 0], both[:, 1], positive(V, names), df, errors.floored)
-
-
-def stage(design: Design, options: FitOptions, parts: Parts, *, of_treatment: bool) -> Estimate:
-    """The first stage (treatment) or the reduced form (outcome) on instruments and controls.
-
-    Same rows, covariance and degrees-of-freedom rule as the second stage. ``fit``: r_squared
-    (within the effects if there are any, else about the mean), partial_r_squared of the
-    instruments, small_sample_factor.
-    """
-    sample = parts.sample
-    target = sample.X[:, parts.at] if of_treatment else sample.y
-    partial = parts.D if of_treatment else parts.y
-    outcome = design.treatment if of_treatment else design.outcome
-    names = (*parts.instruments, *parts.control_names)
-    b, e, bread = solve(parts.spread, target)
-    squares, k = float(e @ e), parts.k_first + sample.counted
-    errors = sandwich(sample.rule, parts.spread, bread, e[:, None], k)
-    df, sentence = degrees_of_freedom(sample.rule, parts.k_first + sample.absorbed)
-    return Estimate(
-        estimator="first_stage" if of_treatment else "reduced_form",
-        title="First stage" if of_treatment else "Reduced form",
-        estimand=f"difference in mean {outcome} associated with one more unit of each instrument, "
-        "holding the controls fixed",
-        names=names,
-        coefficients=b,
-        covariance=positive(errors.covariance, names),
-        df=df,
-        df_rule=sentence,
-        covariance_name=words(sample.rule),
-        n=sample.n,
-        treatment=parts.instruments[0],
-        outcome=outcome,
-        clusters=sample.rule.counts,
-        effects=sample.levels,
-        fit={
-            "r_squared": 1 - squares / float(np.sum((target - target.mean()) ** 2)),
-            "partial_r_squared": 1 - squares / float(partial @ partial),
-            **multiplier(sample, k),
-        },
-        scores=errors.influence,
-        citation="Angrist and Pischke (2009), ch. 4",
-        notes=(*sample.notes, *cautions(sample.rule, errors.floored)),
-        level=options.level,
+    heads = ("outcome on", *(f"first stage of {name}" for name in parts.endogenous))
+    names = tuple(f"{of} {z}" for of in heads for z in parts.instruments)
+    return ReducedForms(
+        both[:, 0], both[:, 1], positive(V, names), df, errors.floored, others=both[:, 2:]
     )
 
 
-def multiplier(sample: Sample, k: int) -> dict[str, float]:
-    """small_sample_factor, where one number makes the covariance from the scores."""
-    value = factor(sample.rule, k)
-    return {} if np.isnan(value) else {"small_sample_factor": value}
+def turned(moments: Floats, columns: Floats) -> tuple[Floats, Floats]:
+    """A (m, m) turn of the m = 1 + p columns (n, m), and what carries a covariance back.
+
+    The outcome becomes y - Eα̂, α̂ from ``moments`` (L, m), and every column unit length.
+    """
+    alpha = np.linalg.lstsq(moments[:, 1:], moments[:, 0])[0]
+    turn = np.eye(columns.shape[1])
+    turn[1:, 0] = -alpha
+    size = np.linalg.norm(columns @ turn, axis=0)
+    turn = turn / np.where(size > 0, size, 1.0)
+    return np.asarray(turn), np.asarray(np.linalg.inv(turn).T)
 
 
 def moment_covariance(parts: Parts, residuals: Floats) -> Floats:

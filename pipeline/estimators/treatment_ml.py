@@ -10,12 +10,13 @@ from scipy import special
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import Estimate
 from pipeline.core.prices import Floats
-from pipeline.estimators import joint_normal
+from pipeline.estimators import likelihood_maximum
 from pipeline.estimators.algebra import solve
 from pipeline.estimators.balance import overlap
 from pipeline.estimators.column import Found, Labels, large_sample
 from pipeline.estimators.errors import ErrorRule, cautions, choose_errors, words
-from pipeline.estimators.joint_normal import Joint, Maximum
+from pipeline.estimators.joint_normal import Joint
+from pipeline.estimators.likelihood_maximum import Maximum
 from pipeline.estimators.likelihood_report import (
     correlation_tests,
     facts,
@@ -102,7 +103,7 @@ def _maximum(design: Design, chosen: Chosen) -> Maximum:
     signs = np.where(chosen.D, 1.0, -1.0)
     model = Joint(signs, chosen.equation.W, np.arange(design.n), design.y, design.X)
     start = (step.coefficients[:-1], step.sigma, step.rho)
-    return joint_normal.maximise(model, first.coefficients, start)
+    return likelihood_maximum.maximise(model, first.coefficients, start)
 
 
 def _stage(

@@ -1,4 +1,4 @@
-"""Least squares that knows how precisely each deal's return was measured."""
+"""Least squares that knows how precisely each deal's outcome was measured."""
 
 from __future__ import annotations
 
@@ -97,6 +97,7 @@ def _estimate(
         notes=_notes(sample, fitted, weights, at),
         citation=CITATION,
         level=options.level,
+        df_each=None if fitted.few is None else fitted.few.df,
     )
 
 
@@ -108,7 +109,7 @@ def _weights(design: Design, sample: Sample) -> Weights:
             design.outcome,
             f"no measurement variance of {design.outcome}",
             "one for every deal",
-            "use a return measured from prices, or another column",
+            "use a return measured from prices, name outcome.standard_error, or use another column",
         )
     b, e, bread = solve(sample.X, sample.y)
     surplus = float(e @ e) - float(omega.sum()) + float(omega @ leverage(sample.X, bread))
@@ -146,7 +147,7 @@ def _notes(weighed: Sample, fitted: Fitted, weights: Weights, at: int) -> tuple[
         notes += few_clusters.notes(weighed.rule, weighed.names, fitted.few, at)
     if weights.floored:
         notes.append(
-            "The measurement errors alone would scatter the returns more than they scatter: the "
+            "The measurement errors alone would scatter the outcomes more than they scatter: the "
             "deals' own variance is set to zero and the weights are those of measurement alone."
         )
     return tuple(notes)

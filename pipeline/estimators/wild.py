@@ -157,7 +157,10 @@ def _random(rng: np.random.Generator, size: int, groups: int, kind: str) -> Floa
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Draws:
-    """Of each draw (B,): the numerator and its slope in δ, and the variance as a quadratic in δ."""
+    """Of each draw (B,): the numerator and its slope in δ, and the variance as a quadratic in δ.
+
+    The quadratics may be m rows (m, B), whose largest is the variance.
+    """
 
     top: Floats
     top_slope: Floats
@@ -173,6 +176,7 @@ class Draws:
         """
         top = self.top + delta * self.top_slope
         variance = self.constant + delta * (self.linear + delta * self.square)
+        variance = variance.reshape(-1, len(top)).max(axis=0)
         hits = int((top * top >= (t * root) ** 2 * (1 - TIES) * variance).sum())
         return hits / len(top) if self.enumerated else (1 + hits) / (1 + len(top))
 
@@ -286,14 +290,19 @@ def bootstrap(
     blocks, enumerated = weight_blocks(basis.groups, draws, kind, seed)
     low_rank = _low_rank(scores, kind, enumerated)
     drawn = draw_signs(scores, blocks) if low_rank else draw(scores, blocks, enumerated)
+    return told(scores, drawn, level)
+
+
+def told(scores: Scores, drawn: Draws, level: float) -> Bootstrapped:
+    """What the draws say of zero and of every other value."""
     t = scores.estimate / scores.std_error
     return Bootstrapped(
         statistic=t,
         std_error=scores.std_error,
         p_value=drawn.p_value(t, scores.root, scores.estimate),
         set=_set(scores, drawn, level),
-        draws=len(drawn.top) * (2 if enumerated else 1),
-        enumerated=enumerated,
+        draws=len(drawn.top) * (2 if drawn.enumerated else 1),
+        enumerated=drawn.enumerated,
     )
 
 

@@ -8,7 +8,7 @@ import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
-from scipy import linalg
+from scipy import linalg, stats
 
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.findings import InputProblem
@@ -223,3 +223,19 @@ def test_few_degrees_of_freedom_are_said() -> None:
     column = ols(design, CR2)
     assert column.df < 4
     assert any("fewer than four" in note for note in column.notes)
+
+
+def test_each_coefficient_has_its_own_degrees_of_freedom() -> None:
+    """The t tables of every coefficient, from scipy, at Satterthwaite's df for it."""
+    column = ols(small(5), CR2)
+    df = np.array([column.fit[f"df.{name}"] for name in column.names])
+    assert np.ptp(df) > 0.5
+    np.testing.assert_array_equal(column.dfs, df)
+    p = 2 * stats.t.sf(np.abs(column.statistics), df)
+    np.testing.assert_allclose(column.p_values, p, rtol=1e-9)
+    half = stats.t.ppf(0.975, df) * column.std_errors
+    np.testing.assert_allclose(column.intervals[:, 1] - column.coefficients, half, rtol=1e-9)
+    assert column.df == column.dfs[column.names.index("treatment")]
+    again = fixed_effects(dense(4, "year"), CR2)
+    assert again.df_each is not None
+    assert ols(small(5), FitOptions(cluster=True)).df_each is None

@@ -10,8 +10,9 @@ from scipy import stats
 
 from pipeline.core.design import FitOptions
 from pipeline.core.estimate import EstimationFailed
-from pipeline.estimators import joint_normal
-from pipeline.estimators.joint_normal import Joint, derivatives, maximise, scores
+from pipeline.estimators import likelihood_maximum
+from pipeline.estimators.joint_normal import Joint, derivatives, scores
+from pipeline.estimators.likelihood_maximum import maximise
 from pipeline.estimators.selection_ml import heckman_likelihood
 from tests.estimators.designs import deals
 
@@ -88,6 +89,6 @@ def test_an_edge_is_no_estimate() -> None:
 
 
 def test_no_convergence_is_no_estimate(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr(joint_normal, "MOST_STEPS", 1)
+    monkeypatch.setattr(likelihood_maximum, "MOST_STEPS", 1)
     with pytest.raises(EstimationFailed, match="did not converge from any of"):
         heckman_likelihood(deals(), FitOptions())

@@ -142,4 +142,4 @@ def test_weights_that_cannot_be_told_are_withheld() -> None:
     S = moment_covariance(parts, parts.sample.y - parts.sample.X @ np.array([0.0, 0.5]))
     assert S[1, 1] < 1e-20
     with pytest.raises(EstimationFailed, match="too few clusters"):
-        _efficient(design, parts, u)
+        _efficient(parts, u)

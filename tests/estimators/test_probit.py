@@ -101,6 +101,27 @@ def test_a_threshold_that_decides_is_named() -> None:
     assert caught.value.findings[0].column == "x2"
 
 
+@pytest.mark.parametrize(
+    ("chosen", "x", "said"),
+    [
+        ([0, 0, 1, 1, 0, 1], [0, 0, 0, 1, 0, 1], "all with x1 = 1 chose it"),
+        ([1, 1, 0, 0, 1, 0], [0, 0, 0, 1, 0, 1], "all with x1 = 1 did not choose it"),
+        ([1, 1, 0, 0, 1, 0], [0, 0, 1, 1, 1, 1], "all with x1 = 0 chose it"),
+        ([0, 0, 1, 1, 0, 1], [0, 0, 1, 1, 1, 1], "all with x1 = 0 did not choose it"),
+        ([0, 0, 1, 1, 0, 1], [1, 2, 3, 4, 2, 9], "all with x1 from 3 chose it, and nobody else"),
+        ([1, 1, 0, 0, 1, 0], [1, 2, 3, 4, 2, 9], "all with x1 up to 2 chose it, and nobody else"),
+        ([0, 0, 1, 1, 0, 1], [1, 2, 2, 4, 2, 9], "all with x1 4 to 9 chose it"),
+    ],
+)
+def test_the_level_that_decides_is_named(chosen: list[int], x: list[float], said: str) -> None:
+    e = equation(np.array(chosen, dtype=bool), np.array(x, dtype=float))
+    with pytest.raises(InputProblem) as caught:
+        probit.refuse_single_separation(e.chosen, e.W, e.names)
+    finding = caught.value.findings[0]
+    assert finding.rule == "separation"
+    assert said in finding.got
+
+
 @pytest.mark.parametrize("gap", [0.0, 0.3])
 def test_a_combination_that_decides_is_named(gap: float) -> None:
     rng = np.random.default_rng(3)

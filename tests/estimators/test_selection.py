@@ -119,7 +119,6 @@ def test_design_without_candidates_is_refused(design: Design) -> None:
 def test_exclusions_that_are_none_are_refused(design: Design) -> None:
     s = candidates(design)
     cases = {
-        "no_exclusion": replace(s, excluded=()),
         "unknown_exclusion": replace(s, excluded=("weather",)),
         "excluded_is_control": replace(s, excluded=("divisions_for_sale", "leverage")),
     }
