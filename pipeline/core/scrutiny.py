@@ -28,6 +28,112 @@ DIRECTION_COLUMNS = {
     "true_effect": "str",
     "evidence": "str",
 }
+TABLES: Mapping[str, Mapping[str, str]] = {
+    "reported": {
+        "target": "str",
+        "title": "str",
+        "lead": "bool",
+        "estimate": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+    },
+    "breakdowns": {
+        "key": "str",
+        "target": "str",
+        "statement": "str",
+        "assumption": "str",
+        "needed": "str",
+        "value": "float64",
+        "unit": "str",
+        "wanted": "float64",
+        "compared": "str",
+        "verdict": "str",
+        "source": "str",
+    },
+    "controls_left_out": {
+        "control": "str",
+        "short": "float64",
+        "long": "float64",
+        "gamma": "float64",
+        "delta": "float64",
+        "gap": "float64",
+    },
+    "hidden_strengths": {
+        "control": "str",
+        "multiple": "float64",
+        "with_treatment": "float64",
+        "with_outcome": "float64",
+        "estimate": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+        "note": "str",
+    },
+    "contour": {
+        "with_treatment": "float64",
+        "with_outcome": "float64",
+        "estimate": "float64",
+        "statistic": "float64",
+        "reach": "float64",
+        "label": "str",
+    },
+    "largest_r2": {
+        "rule": "str",
+        "largest_r2": "float64",
+        "strength_for_zero": "float64",
+        "estimate": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+        "approximation": "float64",
+        "roots": "str",
+        "note": "str",
+    },
+    "extrapolation": {
+        "variable": "str",
+        "curve": "str",
+        "zeta": "float64",
+        "estimate": "float64",
+    },
+    "violations": {
+        "kind": "str",
+        "share": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+    },
+    "expectations": {
+        "target": "str",
+        "known_before": "float64",
+        "completion": "float64",
+        "estimate": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+    },
+    "left_out": {
+        "target": "str",
+        "dimension": "str",
+        "group": "str",
+        "deals": "int64",
+        "estimate": "float64",
+        "change": "float64",
+    },
+    "both_ways": {
+        "equation": "str",
+        "method": "str",
+        "term": "str",
+        "coefficient": "float64",
+        "std_error": "float64",
+        "p_value": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+        "n": "int64",
+    },
+}
+"""Frames of a scrutiny beside its variants -> columns; effects are decimal, shares fractions.
+
+``reported`` holds the numbers put to the doubts as their columns report them, and which leads.
+``breakdowns`` says for each statement what would need to be true for it to fall: ``needed`` is a
+clause with ``{}`` where ``value`` belongs, in ``unit`` (``share``, ``times``,
+``correlation`` or ``odds``); ``verdict`` is ``holds`` if it lies beyond ``wanted``, else ``gives``.
+"""
 
 
 @dataclass(frozen=True, slots=True)
@@ -99,6 +205,7 @@ class Scrutiny:
         directions: suspected flaws and the way each pushes.
         contour: confounders of every strength.
         notes: sentences a reader must see.
+        tables: name -> frame, those of :data:`TABLES` that have rows.
     """
 
     variants: tuple[Variant, ...]
@@ -107,6 +214,7 @@ class Scrutiny:
     directions: tuple[Direction, ...] = ()
     contour: Contour | None = None
     notes: tuple[str, ...] = field(default=())
+    tables: Mapping[str, pd.DataFrame] = field(default_factory=dict)
 
 
 def sensitivity_frame(variants: Iterable[Variant]) -> pd.DataFrame:
@@ -115,9 +223,17 @@ def sensitivity_frame(variants: Iterable[Variant]) -> pd.DataFrame:
     return typed_frame(rows, SENSITIVITY_COLUMNS)
 
 
-def together(mean: pd.DataFrame, variants: Iterable[Variant]) -> pd.DataFrame:
-    """The variants of the mean reaction, then those of the feature's effect, as one frame."""
+def table_frames(rows: Mapping[str, Iterable[Mapping[str, object]]]) -> dict[str, pd.DataFrame]:
+    """The frames of :data:`TABLES` that have rows, in the order declared there."""
+    found = {name: list(rows.get(name, ())) for name in TABLES}
+    return {name: typed_frame(part, TABLES[name]) for name, part in found.items() if part}
+
+
+def together(mean: pd.DataFrame | None, variants: Iterable[Variant]) -> pd.DataFrame:
+    """The variants of the mean reaction, if there are any, then those of the feature's effect."""
     others = sensitivity_frame(variants)
+    if mean is None:
+        return others
     return mean if others.empty else pd.concat([mean, others], ignore_index=True)
 
 

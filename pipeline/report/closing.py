@@ -16,10 +16,11 @@ from pipeline.report.document import (
     Table,
     Text,
 )
+from pipeline.report.horizons import horizon_sources
 from pipeline.report.material import Material, capital, prose, taken
 from pipeline.report.numerals import plain, true_minus
 from pipeline.report.reaction import other_models_section
-from pipeline.report.wording import joined, spoken
+from pipeline.report.wording import axis_words, joined, spoken
 
 LEDGER_SHOWN = 40
 FACTS_SHOWN = 40
@@ -37,9 +38,20 @@ CAUTIONS = (
 )  # fmt: skip
 
 
+READY_CAUTIONS = (
+    ("Research, not advice.", "This is a study of past deals. It recommends no trade and offers "
+     "nothing for sale."),
+    ("The past.", "Averages of past deals do not predict the next one."),
+    ("Where the outcome comes from.", "It was computed elsewhere and taken over unchecked. Whoever "
+     "uses a number of this report should know how it was made."),
+    *CAUTIONS[-2:],
+)  # fmt: skip
+
+
 def cautions_section(material: Material) -> Section:
     """The cautions and the lines to sign."""
-    paragraphs = tuple(prose(text, lead=lead) for lead, text in CAUTIONS)
+    texts = READY_CAUTIONS if material.ready else CAUTIONS
+    paragraphs = tuple(prose(text, lead=lead) for lead, text in texts)
     return Section("Cautions", (Callout("Read before use", paragraphs), sign_off_table()))
 
 
@@ -57,7 +69,7 @@ def appendix(material: Material) -> tuple[Section, ...]:
     facts, variables = fit_facts_table(material), variables_table(material)
     sources = Bullets(tuple(prose(taken(text, "source")) for text in citations(material)))
     parts = [
-        other_models_section(material),
+        None if material.ready else other_models_section(material),
         Section("Variables", (variables,), 3) if variables.rows else None,
         Section("Sources of the formulas", (sources,), 3) if sources.items else None,
         Section("Facts of each fit", (facts,), 3) if facts.rows else None,
@@ -85,6 +97,8 @@ def fit_facts_table(material: Material) -> Table:
 
 def _fact_title(material: Material, key: str) -> str:
     stem, _, name = key.partition(".")
+    for cluster in material.study.clusters:
+        stem = stem.replace(f"_{cluster}_", f"_{material.study.words(cluster)}_")
     return f"{spoken(stem)}: {material.study.words(name)}" if name else spoken(stem)
 
 
@@ -115,26 +129,33 @@ def _roles(material: Material) -> dict[str, str]:
         for name in names:
             if name:
                 found.setdefault(name, []).append(role)
-    if "market_value" in material.results.deals:
-        found.setdefault("market_value", []).append("scale of the money figures")
+    base = study.outcome.base
+    if base in material.results.deals:
+        found.setdefault(base, []).append("scale of the money figures")
+    if material.ready:
+        found = {study.outcome.column: ["outcome"], **found}
     return {name: joined(roles) for name, roles in found.items()}
 
 
 def _variable_row(material: Material, name: str, role: str) -> Row:
+    outcome, unit = material.study.outcome, material.unit
+    if name == outcome.column:
+        start = (Text(axis_words(outcome.words, unit.heading)), Text(name), Text(role))
+        return (*start, *_moments(material.results.deals, name, unit.scale))
     start = (Text(capital(material.study.words(name))), Text(name), Text(role))
     if role in ("fixed effect", "cluster", "fixed effect and cluster"):
         return (*start, *(None,) * 5)  # the mean of a label means nothing
     return (*start, *_moments(material.results.deals, name))
 
 
-def _moments(deals: pd.DataFrame, name: str) -> tuple[Cell, ...]:
+def _moments(deals: pd.DataFrame, name: str, scale: float = 1.0) -> tuple[Cell, ...]:
     blank: tuple[Cell, ...] = (None,) * 5
     if name not in deals:
         return blank
     missing = plain(float(deals[name].isna().sum()), 0, "deals")
     if not pd.api.types.is_numeric_dtype(deals[name]):
         return (*blank[:4], missing)
-    values = deals[name].astype(float)
+    values = scale * deals[name].astype(float)
     return (*(plain(float(v)) for v in (values.mean(), values.std(), values.min(), values.max())),
             missing)  # fmt: skip
 
@@ -149,6 +170,7 @@ def citations(material: Material) -> tuple[str, ...]:
     found += [t.citation for t in tests if isinstance(t, TestResult)]
     if "source" in material.results.diagnostics:
         found += [str(s) for s in material.results.diagnostics["source"].dropna()]
+    found += horizon_sources(material)
     named = {text.strip() for text in found if text.strip()}
     return tuple(sorted(text for text in named if "no source" not in text))
 

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import pandas as pd
 
 from pipeline.core.estimate import Estimate
+from pipeline.core.outcome import Unit, money_in
 from pipeline.report.curve import curve_blocks
 from pipeline.report.document import (
     Block,
@@ -20,9 +22,9 @@ from pipeline.report.document import (
     Text,
 )
 from pipeline.report.graphs import sensitivity_figure, variant_digits
-from pipeline.report.headline import sensitivity_targets
-from pipeline.report.material import Material, capital, effect_digits, prose, taken
-from pipeline.report.numerals import BP, bp, bp_digits, count, digits_for, p_value, plain
+from pipeline.report.headline import MEAN_REACTION, sensitivity_targets
+from pipeline.report.material import Material, capital, effect_digits, embedded, prose, taken
+from pipeline.report.numerals import count, digits_for, in_unit, p_value, plain, unit_digits
 from pipeline.report.wording import any_cell, level_words, set_cell, set_words
 
 
@@ -36,11 +38,12 @@ def diagnostics_section(material: Material) -> Section:
     )
     opening = prose("Checks that pass: ", passed, "; that warn: ", warned, "; that fail: ",
                     failed, ".")  # fmt: skip
-    return Section("Diagnostics", (opening, diagnostics_table(frame)))
+    return Section("Diagnostics", (opening, diagnostics_table(material)))
 
 
-def diagnostics_table(frame: pd.DataFrame) -> Table:
+def diagnostics_table(material: Material) -> Table:
     """One row a check, its verdict in words, worst first."""
+    frame = material.results.diagnostics
     columns = (
         Column("Verdict"), Column("Subject"), Column("Check"), Column("Value"),
         Column("Threshold"), Column("What it means", prose=True), Column("Source", prose=True),
@@ -49,15 +52,24 @@ def diagnostics_table(frame: pd.DataFrame) -> Table:
     ranked = frame.assign(rank=frame["verdict"].map(order).fillna(3))
     ranked = ranked.sort_values("rank", kind="stable")
     names = ("verdict", "subject", "check", "value", "threshold", "meaning", "source")
-    rows = tuple(tuple(any_cell(row[name]) for name in names) for _, row in ranked.iterrows())
+    rows = tuple(
+        tuple(any_cell(_worded(material, row[name])) for name in names)
+        for _, row in ranked.iterrows()
+    )
     return Table("diagnostics", prose("Diagnostics, the worst first"), columns, rows)
+
+
+def _worded(material: Material, value: object) -> object:
+    return material.in_words(value) if isinstance(value, str) else value
 
 
 def sensitivity_section(material: Material) -> Section | None:
     """The numbers asked about under other choices; None if the run made no variants."""
     blocks: list[Block] = []
     for target in sensitivity_targets(material.results):
-        blocks += [_variants_sentence(material, target), sensitivity_figure(material, target)]
+        blocks.append(_variants_sentence(material, target))
+        if target == MEAN_REACTION or "breakdowns" not in material.frames:
+            blocks.append(sensitivity_figure(material, target))
     if not blocks:
         return None
     more = [table for table in (ladder_table(material), directions_table(material)) if table.rows]
@@ -68,29 +80,27 @@ def sensitivity_section(material: Material) -> Section | None:
 
 
 def _variants_sentence(material: Material, target: str) -> Paragraph:
-    digits = variant_digits(material, target)
-    low, high = (
-        material.number(f"sensitivity_{end}: {target}", scale=BP, digits=digits)
-        for end in ("low", "high")
-    )
+    ends = f"sensitivity_low: {target}", f"sensitivity_high: {target}"
+    reach = material.span(ends, variant_digits(material, target))
     variants = material.number(f"sensitivity_variants: {target}")
-    return prose("Over ", variants, " variants the ", taken(target, "check"), " runs from ", low,
-                 " to ", high, " bp.")  # fmt: skip
+    return prose("Over ", variants, " variants the ", taken(target, "check"), " runs from ", reach,
+                 ".")  # fmt: skip
 
 
 def ladder_table(material: Material) -> Table:
     """The least-squares effect's error under every treatment of it."""
-    frame = material.results.ladder
+    frame, unit = material.results.ladder, material.unit
     columns = (
-        Column("Errors"), Column("Standard error", "bp"), Column("Degrees of freedom"),
-        Column("Interval", "bp"), Column("p"), Column("Note", prose=True),
+        Column("Errors"), Column("Standard error", unit.short), Column("Degrees of freedom"),
+        Column("Interval", unit.short), Column("p"), Column("Note", prose=True),
     )  # fmt: skip
-    digits = bp_digits(BP * float(frame["std_error"].median())) if len(frame) else 0
+    digits = unit_digits(float(frame["std_error"].median()), unit) if len(frame) else 0
     rows = tuple(
         (
-            Text(capital(material.in_words(str(row["name"])))), bp(row["std_error"], digits + 1),
+            Text(capital(material.in_words(str(row["name"])))), 
+            in_unit(row["std_error"], unit, digits + 1),
             plain(row["df"], 0),
-            Interval(None, bp(row["low"], digits), bp(row["high"], digits))
+            Interval(None, in_unit(row["low"], unit, digits), in_unit(row["high"], unit, digits))
             if math.isfinite(row["low"] + row["high"]) else None,
             p_value(row["p"]), Text(material.in_words(str(row["note"]))),
         )
@@ -109,7 +119,7 @@ def directions_table(material: Material) -> Table:
     """Suspected factors nobody recorded, and which way each pushes the least-squares effect."""
     frame = material.results.directions
     columns = (
-        Column("Suspected factor", prose=True), Column("Pushes the return"),
+        Column("Suspected factor", prose=True), Column("Pushes the outcome"),
         Column("Pushes the choice"), Column("Bias of least squares"),
         Column("So the true effect is", prose=True), Column("The analyst's evidence", prose=True),
     )  # fmt: skip
@@ -121,31 +131,36 @@ def directions_table(material: Material) -> Table:
         )
         for _, row in frame.iterrows()
     )  # fmt: skip
-    return Table("directions", prose("Which way a suspected factor would push"), columns, rows)
+    note = prose("The bias has the sign of the two pushes multiplied. If companies choose the "
+                 "feature in answer to the outcome they expect, least squares is pushed the same "
+                 "way: up if they choose it for a good one, down if for a bad one.")  # fmt: skip
+    title = prose("Which way a suspected factor would push")
+    return Table("directions", title, columns, rows, (note,))
 
 
 def sensitivity_table(material: Material) -> Table:
-    """One row a variant, in basis points."""
+    """One row a variant, in the outcome's unit."""
     level = level_words(material.study.level)
     columns = (
         Column("Number"), Column("What was varied"), Column("Variant"),
-        Column(f"Estimate with {level} interval", "bp"), Column("Deals", "n"),
+        Column(f"Estimate with {level} interval", material.unit.short), Column("Deals", "n"),
     )  # fmt: skip
     rows = tuple(
-        _variant_row(target, row)
+        _variant_row(target, row, material.unit)
         for target, variants in sensitivity_targets(material.results).items()
         for _, row in variants.iterrows()
     )
     return Table("sensitivity", prose("Each variant"), columns, rows)
 
 
-def _variant_row(target: str, row: pd.Series[float]) -> Row:
+def _variant_row(target: str, row: pd.Series[float], unit: Unit) -> Row:
     estimate, low, high = (float(row[name]) for name in ("estimate", "ci_low", "ci_high"))
-    digits = bp_digits(BP * (high - low) / 4)
+    digits = unit_digits((high - low) / 4, unit)
+    middle, below, above = (in_unit(value, unit, digits) for value in (estimate, low, high))
     deals = float(row["n"])
     return (
         Text(target), any_cell(row["dimension"]), any_cell(row["variant"]),
-        Interval(bp(estimate, digits), bp(low, digits), bp(high, digits)),
+        Interval(middle, below, above),
         count(int(deals)) if math.isfinite(deals) else None,
     )  # fmt: skip
 
@@ -156,12 +171,18 @@ def size_section(material: Material) -> Section | None:
     return Section("Economic size", tuple(tables)) if tables else None
 
 
+MONEY_NOTE = prose(
+    "The effect in basis points times the market value of the company; the interval likewise. A "
+    "reaction over a few sessions is not a yearly return and is not scaled to one."
+)
+
+
 def money_table(material: Material) -> Table:
-    """The mean reaction and the feature's effect in money at three market values."""
+    """The mean outcome and the feature's effect in money at three sizes of deal."""
     unit = material.study.currency
-    lead = material.lead
-    columns = [Column("At a market value of"), Column("Market value", unit),
-               Column("Mean reaction", unit)]  # fmt: skip
+    lead, base = material.lead, material.study.words(material.study.outcome.base)
+    columns = [Column(f"At a {base} of"), Column(capital(base), unit),
+               Column(f"Mean {material.outcome}", unit)]  # fmt: skip
     columns += [Column(f"Effect: {material.feature}", unit)] if lead else []
     names = {"quarter": "lower quartile", "median": "median", "three_quarter": "upper quartile"}
     rows: list[Row] = []
@@ -170,17 +191,16 @@ def money_table(material: Material) -> Table:
             value = material.number(f"{key}_market_value").value
             start = (Text(f"the {words} deal"), plain(value, 0, unit))
             rows.append((*start, *_money_cells(material, value)))
-    note = prose("The effect in basis points times the market value of the company; the interval "
-                 "likewise. A reaction over a few sessions is not a yearly return and is not "
-                 "scaled to one.")  # fmt: skip
+    note = prose("The effect as a share times the ", taken(base, "study"), "; the interval "
+                 "likewise.") if material.ready else MONEY_NOTE  # fmt: skip
     return Table("money", prose("In money"), tuple(columns), tuple(rows), (note,))
 
 
 def _money_cells(material: Material, by: float) -> tuple[Interval, ...]:
-    unit, (low, high) = material.study.currency, material.tests.interval
+    unit, (mean, low, high) = material.study.currency, material.mean
     digits = digits_for(by * (high - low) / 4, 2)
     ends = (plain(by * low, digits, unit), plain(by * high, digits, unit))
-    cells = [Interval(plain(by * material.tests.mean, digits, unit), *ends)]
+    cells = [Interval(plain(by * mean, digits, unit), *ends)]
     if material.lead is not None:
         cells.append(_money_set(material.lead, by, unit))
     return tuple(cells)
@@ -191,7 +211,8 @@ def _money_set(lead: Estimate, by: float, unit: str) -> Interval:
     digits = digits_for(by * term["std_error"], 2)
     estimate = plain(by * term["coefficient"], digits, unit)
     if set_cell(0.0, found, 0).words:
-        return Interval(estimate, None, None, set_words(found, digits, by, unit))
+        words = set_words(found, digits, replace(money_in(unit), scale=by))
+        return Interval(estimate, None, None, words)
     return Interval(estimate, plain(by * found.low, digits), plain(by * found.high, digits))
 
 
@@ -200,8 +221,8 @@ def spread_table(material: Material) -> Table:
     lead, deals = material.lead, material.results.deals
     columns = (
         Column("Variable"), Column("Standard deviation"),
-        Column("One standard deviation goes with", "bp"),
-        Column("As a share of the spread of reactions", "%"),
+        Column("One standard deviation goes with", material.unit.short),
+        Column(f"As a share of the spread of the {material.outcome}", "%"),
     )  # fmt: skip
     names = [n for n in lead.names if n in deals] if lead else []
     rows = [_spread_row(material, lead, name) for name in names if lead is not None]
@@ -216,11 +237,13 @@ def _spread_row(material: Material, lead: Estimate, name: str) -> Row | None:
         return None
     term = lead.term(name)
     error = deviation * term["std_error"]
-    digits = effect_digits(lead) if name == lead.treatment else bp_digits(BP * error)
+    unit = material.unit
+    digits = effect_digits(lead, unit) if name == lead.treatment else unit_digits(error, unit)
     move = deviation * term["coefficient"]
-    spread = material.tests.std_dev
+    spread = material.spread
     return (
-        Text(capital(material.study.words(name))), plain(deviation), bp(move, digits),
+        Text(capital(material.study.words(name))), plain(deviation),
+        in_unit(move, unit, digits),
         plain(100 * move / spread, 0, "%") if spread > 0 else None,
     )  # fmt: skip
 
@@ -230,9 +253,18 @@ def limits_section(material: Material) -> Section:
     return Section("Limits", (Bullets(limits(material)),))
 
 
+def _ready_limits(material: Material) -> list[Paragraph]:
+    """What an outcome that was computed elsewhere leaves open."""
+    outcome = embedded(material.study.outcome.words, "study")
+    return [
+        prose("The ", outcome, " was computed elsewhere. Its errors, and what its makers chose, "
+              "are in every number here.", lead="The outcome."),
+    ]  # fmt: skip
+
+
 def limits(material: Material) -> tuple[Paragraph, ...]:
     """The limits that follow from the results, then those of any such study."""
-    found = [
+    found = _ready_limits(material) if material.ready else [
         prose("A price reaction is what investors thought at the time, less what they had "
               "expected. News that had leaked is not in it.", lead="Anticipation."),
         prose("A reaction around the announcement says nothing of how the deal turned out.",

@@ -7,6 +7,7 @@ import math
 import pandas as pd
 
 from pipeline.core.estimate import NotApplicable
+from pipeline.core.outcome import MONEY
 from pipeline.core.results import Results
 from pipeline.report.document import Bullets, Paragraph, Piece, Section
 from pipeline.report.grade import grade, grade_callout, signs_differ, tests_disagree
@@ -20,7 +21,7 @@ from pipeline.report.material import (
     prose,
     taken,
 )
-from pipeline.report.numerals import BP, bp_digits, digits_for
+from pipeline.report.numerals import BP, bp_digits, digits_for, unit_digits
 from pipeline.report.wording import money_pieces, set_pieces
 
 LIMIT = 120
@@ -58,8 +59,11 @@ def _sentences(material: Material, moved: tuple[str, ...]) -> list[Piece | Piece
     found: list[Piece | Pieces] = []
     if signs_differ(material):
         found.append("The columns differ in sign. ")
-    found.append(reaction_sentence(material, with_reason="reason" not in moved))
-    found.append(agreement_sentence(material))
+    if material.ready:
+        found.append(outcome_sentence(material))
+    else:
+        found.append(reaction_sentence(material, with_reason="reason" not in moved))
+        found.append(agreement_sentence(material))
     found.append(feature_sentence(material, with_estimand="estimand" not in moved))
     for name, sentence in (("others", others_sentence), ("money", money_sentence)):
         if name not in moved:
@@ -75,7 +79,7 @@ def _rest(material: Material, moved: tuple[str, ...]) -> tuple[Paragraph, ...]:
     if "reason" in moved and material.study.headline_test_reason:
         reason = taken(material.study.headline_test_reason, "study")
         items.append(prose("Chosen because it ", _sentence_of(reason), lead="The test."))
-    if material.tests.n > 1:
+    if not material.ready and material.tests.n > 1:
         items.append(prose(
             "It is the interval of the plain mean, from the deals' own spread; a test that weighs "
             "deals by how precisely they are measured need not agree with it.",
@@ -91,6 +95,25 @@ def _rest(material: Material, moved: tuple[str, ...]) -> tuple[Paragraph, ...]:
     if "threat" in moved:
         items.append(prose(_sentence_of(threat(material)), lead="Main threat."))
     return tuple(item for item in items if item.text.strip())
+
+
+def outcome_sentence(material: Material) -> Pieces:
+    """The mean of an outcome that the deal list held, with its interval and number of deals."""
+    unit, (_, low, high) = material.unit, material.mean
+    digits = unit_digits((high - low) / 4, unit)
+    middle, *ends = (
+        material.summary(name, scale=unit.scale, digits=digits)
+        for name in ("mean", "ci_low", "ci_high")
+    )
+    reach: Pieces = ("no interval",)
+    if math.isfinite(high - low):
+        level = material.percent("confidence_level")
+        reach = (*level, " interval ", unit.before, ends[0], " to ", unit.before, ends[1],
+                 unit.level)  # fmt: skip
+    return (
+        "The mean ", embedded(material.outcome, "study"), " was ", unit.before, middle, unit.level,
+        " (", *reach, "; ", material.summary("n"), " deals). ",
+    )  # fmt: skip
 
 
 def reaction_sentence(material: Material, *, with_reason: bool = True) -> Pieces:
@@ -172,13 +195,14 @@ def feature_sentence(material: Material, *, with_estimand: bool = True) -> Piece
     feature = embedded(capital(material.feature), "study")
     if lead is None:
         return _lead_missing(material)
-    digits = effect_digits(lead)
+    digits = effect_digits(lead, material.unit)
     estimand: Pieces = ()
     if with_estimand:
         estimand = ("; it estimates: ", embedded(material.in_words(lead.estimand), "estimate"))
     name = "feature_effect"
     return (
-        feature, f" {lead.claim} ", material.coefficient(lead), " bp (",
+        feature, f" {lead.claim} ", material.unit.before, material.coefficient(lead),
+        f"{material.unit.change} (",
         *material.percent(name, "level"), " set: ", *set_pieces(material, name, digits),
         ") in the column ",
         embedded(named(lead.title), "estimate"), *estimand, ". ",
@@ -202,13 +226,12 @@ def others_sentence(material: Material) -> Pieces:
     others = material.number("others_estimated")
     if not others.value:
         return ("No other column holds a number. ",)
-    digits = max(effect_digits(e) for e in material.estimates if e is not material.lead)
-    low, high = (
-        material.number(f"others_{end}", scale=BP, digits=digits) for end in ("low", "high")
-    )
+    rest = [e for e in material.estimates if e is not material.lead]
+    digits = max(effect_digits(e, material.unit) for e in rest)
     if others.value == 1:
-        return ("The one other column gives ", low, " bp. ")
-    return ("The ", others, " other columns run from ", low, " to ", high, " bp. ")
+        return ("The one other column gives ", *material.effect("others_low", digits), ". ")
+    reach = material.span(("others_low", "others_high"), digits)
+    return ("The ", others, " other columns run from ", *reach, ". ")
 
 
 def money_sentence(material: Material) -> Pieces:
@@ -222,11 +245,13 @@ def money_sentence(material: Material) -> Pieces:
     reach = (high - low) / 4 if math.isfinite(high - low) else abs(value) / 10
     digits = digits_for(abs(reach), 2)
     middle = material.number("median_market_value")
-    what = "the effect" if name == "feature_money" else "the mean reaction"
+    what = "the effect" if name == "feature_money" else f"the mean {material.outcome}"
+    base = material.study.words(material.study.outcome.base)
     return (
-        "At the median market value (", *money_pieces(middle, currency), f") {what} is ",
+        "At the median ", embedded(base, "study"), " (", *money_pieces(middle, currency),
+        f") {what} is ",
         *money_pieces(material.number(name, digits=digits), currency), " (",
-        *set_pieces(material, name, digits, 1.0, ""), "). ",
+        *set_pieces(material, name, digits, MONEY), "). ",
     )  # fmt: skip
 
 
@@ -239,7 +264,10 @@ def threat(material: Material) -> Piece:
         if check:
             return taken(material.in_words(check), "check")
     if material.study.treatment:
-        return "companies choose the feature, and reasons nobody recorded may move the price."
+        moved = material.outcome if material.ready else "price"
+        return f"companies choose the feature, and reasons nobody recorded may move the {moved}."
+    if material.ready:
+        return "an average says nothing of what it would have been otherwise."
     return "other news of the same sessions cannot be told from the announcement."
 
 

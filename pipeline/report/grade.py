@@ -18,6 +18,13 @@ RULE = (
     "than two tests are valid in the headline window. B: a diagnostic warns, or a sensitivity "
     "variant changes the sign, or fewer than two columns stand side by side. A: none of these."
 )
+READY_RULE = (
+    "The grade is the worst that applies, and says nothing of the size of the effect. "
+    "D: fewer than five deals, or the lead column gives no number, or its confidence set is not a "
+    "bounded interval. C: fewer than ten deals, or a diagnostic fails, or the columns differ in "
+    "sign. B: a diagnostic warns, or a sensitivity variant changes the sign, or fewer than two "
+    "columns stand side by side. A: none of these."
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,12 +46,14 @@ def grade_callout(material: Material) -> Callout:
     """The grade with its reasons and the rule."""
     given = grade(material)
     reasons = given.reasons or (prose("No rule below applies."),)
-    rule = prose(RULE, lead="The rule.")
+    rule = prose(READY_RULE if material.ready else RULE, lead="The rule.")
     return Callout(f"Confidence grade {given.letter}", (*reasons, rule))
 
 
 def tests_disagree(material: Material) -> bool:
     """Whether some tests of the headline window reject a zero mean and others do not."""
+    if material.ready:
+        return False
     made = material.number("tests_made").value
     return 0 < material.number("tests_rejecting").value < made
 
@@ -57,7 +66,7 @@ def signs_differ(material: Material) -> bool:
 
 def _ruin(material: Material) -> list[Paragraph]:
     reasons = []
-    if material.tests.n < FEWEST:
+    if material.deals < FEWEST:
         reasons.append(prose("There are fewer than five deals."))
     if tests_disagree(material):
         reasons.append(prose("The tests valid in the headline window disagree."))
@@ -71,11 +80,11 @@ def _ruin(material: Material) -> list[Paragraph]:
 
 def _doubt(material: Material) -> list[Paragraph]:
     reasons = _checks(material, "fail", "A check fails: ")
-    if FEWEST <= material.tests.n < FEW:
+    if FEWEST <= material.deals < FEW:
         reasons.append(prose("There are fewer than ten deals."))
     if signs_differ(material):
         reasons.append(prose("The columns differ in sign."))
-    if material.number("tests_made").value <= 1:
+    if not material.ready and material.number("tests_made").value <= 1:
         reasons.append(prose("Fewer than two tests are valid in the headline window."))
     return reasons
 

@@ -124,8 +124,8 @@ def benchmark(ground: Ground, control: str, multiple: float, level: float) -> Be
     if control not in varying(ground):
         raise refusal(
             "benchmark_not_control",
-            control,
-            "a benchmark that is not a control of this column",
+            "scrutiny.benchmarks",
+            f"'{control}', which is not a control of this column",
             f"one of {', '.join(varying(ground))}",
             "name a control, or add it to the controls",
         )

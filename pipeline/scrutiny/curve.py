@@ -6,11 +6,12 @@ from dataclasses import replace
 
 import numpy as np
 
+from pipeline.core.multiplicity import Adjusted, adjusted
 from pipeline.core.prices import Floats
 from pipeline.estimators.absorb import demean
 from pipeline.estimators.algebra import partial_out
 from pipeline.scrutiny.grid import Grid, Summary
-from pipeline.scrutiny.multiplicity import Adjusted, adjusted, score_draws
+from pipeline.scrutiny.multiplicity import score_draws
 
 SIGNIFICANCE = 0.05
 

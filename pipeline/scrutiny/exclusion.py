@@ -12,17 +12,17 @@ from dataclasses import dataclass, replace
 from itertools import product
 
 import numpy as np
-from scipy import optimize, special
 
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import ConfidenceSet, Estimate, Shape, TestResult, t_reach
 from pipeline.core.prices import Floats
 from pipeline.estimators.algebra import refusal, solve
-from pipeline.estimators.anderson_rubin import anderson_rubin_set, statistic
+from pipeline.estimators.anderson_rubin import ReducedForms, anderson_rubin_set
+from pipeline.estimators.clustered_forms import inverted_forms
 from pipeline.estimators.diagnostics import breusch_pagan
 from pipeline.estimators.errors import degrees_of_freedom, sandwich
 from pipeline.estimators.instruments import two_stage_least_squares
-from pipeline.estimators.stages import Parts, reduced_forms
+from pipeline.estimators.stages import Parts
 
 CITATION = "Conley, Hansen and Rossi (2012)"
 LEWBEL = "Lewbel (2012)"
@@ -102,19 +102,44 @@ def _points(parts: Parts, low: Floats, high: Floats, fewest: int = 2) -> list[tu
     return list(product(*(np.linspace(a, b, values) for a, b in zip(low, high, strict=True))))
 
 
-def union_of_anderson_rubin(parts: Parts, low: Floats, high: Floats, level: float) -> ConfidenceSet:
+@dataclass(frozen=True, slots=True, eq=False)
+class ViolatedForms:
+    """What the Anderson-Rubin test of y - Zγ is made of, for any γ (L,).
+
+    The forms' covariance comes from residuals on the instruments, from which Zγ is gone, so γ
+    only moves π_y, by ``moved`` (L, L) times γ in the forms' own basis.
+    """
+
+    forms: ReducedForms
+    moved: Floats
+
+    def at(self, gamma: Floats) -> ReducedForms:
+        """The forms at one violation."""
+        return replace(self.forms, outcome=self.forms.outcome - self.moved @ gamma)
+
+
+def violated_forms(parts: Parts) -> ViolatedForms:
+    """The forms that a fit's own Anderson-Rubin set inverts, and what a violation does to them."""
+    forms = inverted_forms(parts)
+    columns = [
+        forms.outcome - inverted_forms(replace(parts, y=parts.y - z)).outcome for z in parts.Z.T
+    ]
+    return ViolatedForms(forms, np.column_stack(columns))
+
+
+def union_of_anderson_rubin(
+    parts: Parts, low: Floats, high: Floats, level: float, made: ViolatedForms | None = None
+) -> ConfidenceSet:
     """Hull of the Anderson-Rubin sets of y - Zγ, which hold however weak the instruments.
 
-    Taking Zγ from the outcome takes γ from the reduced form and leaves its covariance. One
-    instrument: the corners are exact. Several: a lattice of five values each, so the hull is
+    ``made`` are :func:`violated_forms` of the same parts, for callers that ask for many unions.
+
+    One instrument: the corners are exact. Several: a lattice of five values each, so the hull is
     approximate. The line if any set is unbounded; empty sets are passed over.
     """
-    forms = reduced_forms(parts)
+    forms = made or violated_forms(parts)
     points = _points(parts, low, high, 2 if len(low) == 1 else LATTICE)
-    sets = [
-        anderson_rubin_set(replace(forms, outcome=forms.outcome - np.array(g)), level)
-        for g in points
-    ]
+    sets = [anderson_rubin_set(forms.at(np.array(g)), level) for g in points]
     method = "hull of Anderson-Rubin sets over the violations allowed"
     nan = float("nan")
     if any(item.shape in (Shape.RAYS, Shape.LINE) for item in sets):
@@ -138,39 +163,6 @@ def local_to_zero(parts: Parts, mean: Floats, spread: Floats, level: float) -> A
     error = float(np.sqrt(base.std_error**2 + A @ spread @ A))
     reach = (base.high - base.estimate) / base.std_error
     return Allowed(estimate, error, estimate - reach * error, estimate + reach * error)
-
-
-def breakdown_share(parts: Parts, level: float) -> float:
-    """Smallest share of the reduced form at which the two-stage interval holds zero.
-
-    With γ = sπ the estimate is (1 - s)α̂ exactly, for any number of instruments; the share is
-    where its interval first touches zero. Zero if it holds zero already.
-    """
-    pi = reduced_form(parts)
-
-    def margin(share: float) -> float:
-        found = at_violation(parts, share * pi, level)
-        return abs(found.estimate) - (found.high - found.estimate)
-
-    # The interval holds zero from the share on, but the error changes with it: take the first.
-    grid = np.linspace(0, 1, 41)
-    margins = [margin(float(share)) for share in grid]
-    first = next(at for at, value in enumerate(margins) if value <= 0)
-    if first == 0:
-        return 0.0
-    return float(optimize.brentq(margin, grid[first - 1], grid[first], xtol=1e-12))
-
-
-def breakdown_share_anderson_rubin(parts: Parts, level: float) -> float:
-    """Smallest share of the reduced form at which the Anderson-Rubin set holds zero.
-
-    At γ = sπ the test of α = 0 is (1 - s)² times that at s = 0, hence 1 - √(c/statistic), zero if
-    negative, c the critical value.
-    """
-    forms = reduced_forms(parts)
-    L = len(forms.outcome)
-    critical = L * float(special.fdtri(L, forms.df, level))
-    return max(0.0, 1 - float(np.sqrt(critical / statistic(forms, 1.0, 0.0))))
 
 
 def generated_instruments(

@@ -24,7 +24,11 @@ from pipeline.scrutiny.influence import rows_of
 CITATION = "Simonsohn, Simmons and Nelson (2020)"
 MOST_CELLS = 2_000
 LEAST_SQUARES = ("ols", "fixed_effects")
+TWO_STAGES = "two_stage_least_squares"
+LINEAR = (*LEAST_SQUARES, TWO_STAGES)
+"""Estimators whose cells are columns of a matrix product; the others are fitted cell by cell."""
 Fit = Callable[[Design, FitOptions], Estimate]
+Tell = Callable[[int, int], None]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -36,9 +40,10 @@ class Choices:
         controls: choice -> names of the controls; the constant and the treatment always stay.
         winsorise: choice -> share of the outcome set to its quantile at either end, 0 to .25.
         samples: choice -> (n,) deals used.
-        estimators: choice -> ``ols``, ``fixed_effects``, or a key of ``fits``.
+        estimators: choice -> one of :data:`LINEAR`, or a key of ``fits``.
         fits: further estimators, each a full fit a cell.
-        allow: let the grid have more than 2,000 cells.
+        most_cells: a larger grid is refused.
+        allow: let it be larger.
     """
 
     outcomes: Mapping[str, Floats]
@@ -47,7 +52,14 @@ class Choices:
     samples: Mapping[str, Booleans] = field(default_factory=dict)
     estimators: Mapping[str, str] = field(default_factory=lambda: {"least squares": "ols"})
     fits: Mapping[str, Fit] = field(default_factory=dict)
+    most_cells: int = MOST_CELLS
     allow: bool = False
+
+    @property
+    def cells(self) -> int:
+        """How many combinations there are."""
+        lists = (self.outcomes, self.controls, self.winsorise, self.estimators)
+        return int(np.prod([len(item) for item in lists])) * max(1, len(self.samples))
 
 
 @dataclass(frozen=True, slots=True)
@@ -117,15 +129,21 @@ class Summary:
     p_significant: float = float("nan")
 
 
-def specification_grid(design: Design, choices: Choices, options: FitOptions) -> Grid:
+def specification_grid(
+    design: Design,
+    choices: Choices,
+    options: FitOptions,
+    tell: Tell = lambda done, total: None,
+) -> Grid:
     """Every combination of the choices.
 
-    Least-squares cells use HC1 or the design's clusters and the degrees of freedom of the
-    estimators; others what their fit says. A cell that cannot be estimated holds the reason.
+    Linear cells use HC1 or the design's clusters, the degrees of freedom of the estimators and
+    t intervals; others what their fit says. A cell that cannot be estimated holds the reason.
+    ``tell`` hears how many cells of how many are done.
 
     Raises:
-        InputProblem: ``grid_too_large`` beyond 2,000 cells unless allowed, ``grid_control`` for a
-            control the design does not have.
+        InputProblem: ``grid_too_large`` beyond the most cells unless allowed, ``grid_control`` for
+            a control the design does not have.
     """
     _check(design, choices)
     samples = choices.samples or {"all deals": np.ones(design.n, dtype=np.bool_)}
@@ -137,8 +155,8 @@ def specification_grid(design: Design, choices: Choices, options: FitOptions) ->
             slim = _with_controls(design, controls)
             for sample_label, rows in samples.items():
                 head = (control_label, sample_label, label)
-                if estimator in LEAST_SQUARES:
-                    made = _least_squares(slim, choices, rows, estimator, options)
+                if estimator in LINEAR:
+                    made = _linear(slim, choices, rows, estimator, options)
                 else:
                     made = _fitted(slim, choices, rows, choices.fits[estimator], options)
                 for block, entries in made:
@@ -150,28 +168,27 @@ def specification_grid(design: Design, choices: Choices, options: FitOptions) ->
                     scores += [influence for _, _, influence in entries]
                     if block is not None:
                         blocks.append(replace(block, cells=tuple(range(at, at + len(entries)))))
+                    tell(len(cells), choices.cells)
     first = next(iter(design.clusters.values()), np.arange(design.n))
     return Grid(tuple(cells), tuple(blocks), np.column_stack(scores), first)
 
 
 def _check(design: Design, choices: Choices) -> None:
-    lists = (choices.outcomes, choices.controls, choices.winsorise, choices.estimators)
-    cells = int(np.prod([len(item) for item in lists])) * max(1, len(choices.samples))
-    if cells > MOST_CELLS and not choices.allow:
+    if choices.cells > choices.most_cells and not choices.allow:
         raise refusal(
             "grid_too_large",
-            "grid",
-            f"{cells} cells",
-            f"at most {MOST_CELLS}",
-            "declare fewer choices, or set allow to true",
+            "scrutiny.grid",
+            f"{choices.cells:,} cells",
+            f"at most {choices.most_cells:,}, the key most_cells",
+            "declare fewer choices, or set scrutiny.grid.allow = true",
         )
     for names in choices.controls.values():
         unknown = [name for name in names if name not in design.names]
         if unknown:
             raise refusal(
                 "grid_control",
-                ", ".join(unknown),
-                "not among the controls of the study",
+                "scrutiny.grid.control_sets",
+                f"{', '.join(unknown)}, not among the controls of the study",
                 f"some of {', '.join(design.names)}",
                 "add it to the controls or take it out of the grid",
             )
@@ -192,7 +209,7 @@ Numbers = tuple[float, float, float, int, str]
 Entry = tuple[tuple[str, str], Numbers, Floats]
 
 
-def _least_squares(
+def _linear(
     design: Design, choices: Choices, rows: Booleans, estimator: str, options: FitOptions
 ) -> Iterator[tuple[Block | None, list[Entry]]]:
     """Blocks of cells by which outcomes are there, so that each block shares rows."""
@@ -213,7 +230,7 @@ def _least_squares(
             yield None, [(key, _none(str(failure)), np.zeros(design.n)) for key in keys]
             continue
         entries = list(zip(keys, numbers, influence.T, strict=True))
-        yield block, entries
+        yield block if estimator in LEAST_SQUARES else None, entries
 
 
 def _none(reason: str) -> Numbers:
@@ -225,13 +242,18 @@ def _block(
     design: Design, keep: Booleans, Y: Floats, estimator: str, options: FitOptions
 ) -> tuple[Block, list[Numbers], Floats]:
     small = rows_of(design, keep)
-    effects = small.effects if estimator == "fixed_effects" else {}
+    effects = small.effects if estimator != "ols" else {}
     at = design.names.index(design.treatment)
     inside = np.ones(small.n, dtype=np.bool_)
     if effects:
         inside = absorb.without_singletons(effects)
         effects = {name: codes[inside] for name, codes in effects.items()}
-    X, outcomes = small.X[inside], Y[inside]
+    instrumented = estimator == TWO_STAGES
+    if instrumented and (not design.instruments or design.also_endogenous):
+        raise EstimationFailed("two stages here need instruments for the treatment alone")
+    L = len(design.instruments) if instrumented else 0
+    X = small.X[inside]
+    outcomes = np.column_stack([small.Z[inside], Y[inside]]) if L else Y[inside]
     clusters = {name: codes[inside] for name, codes in small.clusters.items()}
     rule = choose_errors(
         clusters, len(X), summed(options), otherwise="hc1", cluster_by_default=True
@@ -247,11 +269,12 @@ def _block(
         counted, absorbed = absorb.coefficients_of(free), absorb.coefficients_of(effects)
     D, controls = X[:, at], np.delete(X, at, axis=1)
     left = partial_out(np.column_stack([D, outcomes]), controls)
-    d, e = left[:, 0], left[:, 1:]
+    treatment, Z, e = left[:, 0], left[:, 1 : 1 + L], left[:, 1 + L :]
+    d = treatment - partial_out(treatment[:, None], Z)[:, 0] if L else treatment
     if float(d @ d) <= 1e-12 * float(D @ D) or len(X) <= X.shape[1] + absorbed:
         raise EstimationFailed("the treatment does not vary beside the controls")
     df, _ = degrees_of_freedom(rule, X.shape[1] + absorbed)
-    numbers, psi = _numbers(rule, d, e, X.shape[1] + counted, df)
+    numbers, psi = _numbers(rule, treatment, d, e, X.shape[1] + counted, df)
     place = np.flatnonzero(keep)[inside]
     influence = np.zeros((design.n, Y.shape[1]))
     influence[place] = psi
@@ -262,14 +285,15 @@ def _block(
 
 
 def _numbers(
-    rule: ErrorRule, d: Floats, e: Floats, k: int, df: float
+    rule: ErrorRule, treatment: Floats, d: Floats, e: Floats, k: int, df: float
 ) -> tuple[list[Numbers], Floats]:
     """Each outcome (n, c) on the treatment (n,), both with the controls out; and influences.
 
-    The influences (n, c) are those at a coefficient of zero.
+    ``d`` (n,) is the part of the treatment that decides: all of it, or what the instruments
+    predict of it. The influences (n, c) are those at a coefficient of zero.
     """
     b = d @ e / float(d @ d)
-    psi = d[:, None] * (e - np.outer(d, b)) / float(d @ d)
+    psi = d[:, None] * (e - np.outer(treatment, b)) / float(d @ d)
     numbers: list[Numbers] = []
     for column, value in enumerate(b):
         V = of_influence(rule, psi[:, [column]], k, unit_free=False)
@@ -310,7 +334,11 @@ def winsorised(y: Floats, share: float) -> Floats:
     """
     if not 0 <= share <= 0.25:
         raise refusal(
-            "winsorise_range", "winsorise", f"{share:g}", "a share from 0 to .25", "give a share"
+            "winsorise_range",
+            "scrutiny.grid.winsorise",
+            f"{share:g}",
+            "a share from 0 to .25",
+            "give a share",
         )
     low, high = np.quantile(y, [share, 1 - share])
     return np.asarray(np.clip(y, low, high)) if share else y

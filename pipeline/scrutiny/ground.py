@@ -9,7 +9,7 @@ import numpy as np
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.prices import Floats
 from pipeline.estimators.algebra import partial_out, refuse_dependent, solve
-from pipeline.estimators.errors import choose_errors, degrees_of_freedom, sandwich
+from pipeline.estimators.errors import ErrorRule, choose_errors, degrees_of_freedom, sandwich
 from pipeline.estimators.sample import Sample, plain, within
 
 
@@ -93,6 +93,11 @@ def summed(options: FitOptions) -> FitOptions:
     if options.covariance in ("cr2", "cr3"):
         return replace(options, covariance="auto", cluster=True)
     return options
+
+
+def row_sums(rule: ErrorRule) -> ErrorRule:
+    """The rule, HC1 in the place of equal variances, which no sum of rows gives."""
+    return replace(rule, kind="hc1") if rule.kind == "classical" else rule
 
 
 def varying(ground: Ground) -> tuple[str, ...]:

@@ -69,8 +69,11 @@ def moments_of(design: Design, *, effects: bool, instruments: bool) -> Moments:
     :func:`~pipeline.estimators.least_squares.fixed_effects`.
 
     Raises:
-        ValueError: if the effects have more than 400 levels, too many for columns: refit.
+        ValueError: if the effects have more than 400 levels, too many for columns: refit; or if
+            the instruments move other variables beside the treatment.
     """
+    if instruments and len(design.endogenous) > 1:
+        raise ValueError("the algebra is made for one chosen variable")
     kept = np.ones(design.n, dtype=np.bool_)
     at = design.names.index(design.treatment)
     controls = np.delete(design.X, at, axis=1)
@@ -224,10 +227,15 @@ def fewest_to_turn(moments: Moments, rows: Sequence[str], most: float = 0.2) -> 
     return Fewest(tuple(rows[i] for i in out), len(out) / n, effect, False)
 
 
-def dimensions(design: Design, kept: Booleans) -> Mapping[str, Integers]:
-    """What may be left out in turn: deals, clusters and levels of the effects, (n_kept,) codes."""
+def dimensions(
+    design: Design, kept: Booleans, further: Mapping[str, Integers]
+) -> Mapping[str, Integers]:
+    """What may be left out in turn: deals, clusters, levels of the effects and ``further``.
+
+    ``further`` holds (n,) codes a name; those found are of the rows ``kept`` (n,).
+    """
     found: dict[str, Integers] = {"deal": np.arange(int(kept.sum()))}
-    for name, codes in {**design.clusters, **design.effects}.items():
+    for name, codes in {**design.clusters, **design.effects, **further}.items():
         found[name] = codes[kept]
     return found
 

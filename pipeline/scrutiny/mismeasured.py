@@ -8,7 +8,7 @@ variance or the misclassification rates as known.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -16,8 +16,8 @@ from pipeline.core.estimate import t_reach
 from pipeline.core.findings import InputProblem
 from pipeline.core.prices import Floats
 from pipeline.estimators.algebra import partial_out, refusal, solve
-from pipeline.estimators.errors import ErrorRule, of_influence
-from pipeline.scrutiny.ground import Ground
+from pipeline.estimators.errors import of_influence
+from pipeline.scrutiny.ground import Ground, row_sums
 
 FULLER = "Fuller (1987)"
 KLEPPER_LEAMER = "Klepper and Leamer (1984)"
@@ -52,7 +52,7 @@ def error_variance(ground: Ground, name: str, reliability: float) -> float:
     if name not in ground.sample.names:
         raise refusal(
             "reliability_variable",
-            name,
+            f"scrutiny.reliability.{name}",
             "not a regressor of this column",
             f"one of {', '.join(ground.sample.names)}",
             "name a regressor",
@@ -60,7 +60,7 @@ def error_variance(ground: Ground, name: str, reliability: float) -> float:
     if not 0 < reliability <= 1:
         raise refusal(
             "reliability_range",
-            name,
+            f"scrutiny.reliability.{name}",
             f"{reliability:g}",
             "a share above 0 and at most 1",
             "give true over recorded variance, for example from two independent records",
@@ -92,7 +92,7 @@ def reliability_corrected(ground: Ground, reliability: Mapping[str, float]) -> C
     if np.linalg.eigvalsh(moments / np.outer(scale, scale))[0] <= 1e-10:
         raise refusal(
             "reliability_too_low",
-            ", ".join(reliability),
+            "scrutiny.reliability: " + ", ".join(reliability),
             "error variances that leave nothing of the regressors beside one another",
             "a reliability above the R² of the variable on the other regressors",
             f"raise it above {_least(ground, reliability):.2f}",
@@ -104,7 +104,7 @@ def reliability_corrected(ground: Ground, reliability: Mapping[str, float]) -> C
     spread = centred.mean(axis=0)
     share = np.divide(sigma, spread, out=np.zeros_like(sigma), where=spread > 0)
     influence = (scores + share * b * (centred - spread)) @ inverse
-    errors = of_influence(_summed(ground), influence, len(b) + sample.counted)
+    errors = of_influence(row_sums(ground.sample.rule), influence, len(b) + sample.counted)
     return Corrected(sample.names, b, errors.covariance, ground.robust_df)
 
 
@@ -208,7 +208,9 @@ def misclassified(
     by_m = by_v * ((1 - 2 * P) / q - (1 - 2 * m) / q**2)
     e = solve(ground.sample.X, ground.y)[1]
     influence = by_b * left * e / (r * n) + (by_r * (left**2 - r) + by_m * (D - m)) / n
-    spread = of_influence(_summed(ground), influence[:, None], ground.sample.X.shape[1])
+    spread = of_influence(
+        row_sums(ground.sample.rule), influence[:, None], ground.sample.X.shape[1]
+    )
     half = t_reach(level, ground.robust_df) * float(np.sqrt(spread.covariance[0, 0]))
     return value, value - half, value + half
 
@@ -235,12 +237,6 @@ def _bad_rates(missed: float, false: float) -> InputProblem:
         "rates below the recorded shares, with something left of the choice",
         "give smaller rates",
     )
-
-
-def _summed(ground: Ground) -> ErrorRule:
-    """The ground's rule, HC1 in the place of equal variances, which no sum of rows gives."""
-    rule = ground.sample.rule
-    return replace(rule, kind="hc1") if rule.kind == "classical" else rule
 
 
 def rescaled(estimate: float, low: float, high: float, kept: float) -> tuple[float, float, float]:

@@ -102,36 +102,46 @@ def _variance(ground: Ground, influence: Floats) -> float:
 
 
 def extrapolated(zeta: Floats, values: Floats, kind: str) -> float:
-    """``values`` (m,) at ``zeta`` (m,) carried to -1 by a ``linear``, ``quadratic`` or ``rational``
-    curve, a + b/(c + ζ) (Carroll, Ruppert, Stefanski and Crainiceanu 2006, sec. 5.3.2).
+    """``values`` (m,) at ``zeta`` (m,) carried to -1; see :func:`curve`."""
+    return float(curve(zeta, values, kind, np.array([-1.0]))[0])
+
+
+def curve(zeta: Floats, values: Floats, kind: str, at: Floats) -> Floats:
+    """A curve through ``values`` (m,) at ``zeta`` (m,), read at ``at`` (p,), all at least -1.
+
+    ``linear``, ``quadratic`` or ``rational``, a + b/(c + ζ) (Carroll, Ruppert, Stefanski and
+    Crainiceanu 2006, sec. 5.3.2).
 
     Raises:
-        EstimationFailed: if the rational curve has its pole right of -1 or does not converge.
+        EstimationFailed: if the search for the rational curve's pole left of -1 fails.
     """
     if kind != "rational":
         degree = 1 if kind == "linear" else 2
-        powers = np.vander(zeta, degree + 1, increasing=True)
-        signs = (-1.0) ** np.arange(degree + 1)
-        return float(np.dot(signs, solve(powers, values)[0]))
+        coefficients = solve(np.vander(zeta, degree + 1, increasing=True), values)[0]
+        return np.asarray(np.vander(at, degree + 1, increasing=True) @ coefficients)
     size = float(np.abs(values).max())
     if size == 0 or float(np.ptp(values)) <= 1e-9 * size:
-        return float(values.mean())
-    scaled = values / size
+        return np.full(len(at), float(values.mean()))
+    gap = _pole(zeta, values / size)
+    a, b = _misfit(zeta, values / size, gap)[1]
+    return np.asarray(size * (a + b / (1 + np.exp(gap) + at)))
 
-    def misfit(log_gap: float) -> tuple[float, Floats]:
-        basis = np.column_stack([np.ones_like(zeta), 1 / (1 + np.exp(log_gap) + zeta)])
-        coefficients = np.linalg.lstsq(basis, scaled, rcond=None)[0]
-        left = scaled - basis @ coefficients
-        return float(left @ left), coefficients
 
-    # For each pole left of -1 the rest is linear: one dimension is left to search.
+def _misfit(zeta: Floats, scaled: Floats, log_gap: float) -> tuple[float, Floats]:
+    """Sum of squares and coefficients (a, b) with the pole at -1 - exp(``log_gap``)."""
+    basis = np.column_stack([np.ones_like(zeta), 1 / (1 + np.exp(log_gap) + zeta)])
+    coefficients = np.linalg.lstsq(basis, scaled, rcond=None)[0]
+    left = scaled - basis @ coefficients
+    return float(left @ left), coefficients
+
+
+def _pole(zeta: Floats, scaled: Floats) -> float:
+    """For each pole left of -1 the rest is linear: one dimension is left to search."""
     grid = np.linspace(-6, 6, 49)
-    best = grid[int(np.argmin([misfit(float(g))[0] for g in grid]))]
+    best = grid[int(np.argmin([_misfit(zeta, scaled, float(g))[0] for g in grid]))]
     found = optimize.minimize_scalar(
-        lambda g: misfit(g)[0], bounds=(best - 0.25, best + 0.25), method="bounded"
+        lambda g: _misfit(zeta, scaled, g)[0], bounds=(best - 0.25, best + 0.25), method="bounded"
     )
     if not found.success:
         raise EstimationFailed("the rational curve of the extrapolation could not be fitted")
-    gap = float(found.x)
-    a, b = misfit(gap)[1]
-    return size * float(a + b / np.exp(gap))
+    return float(found.x)

@@ -2,7 +2,7 @@
 
 Rerun with ``python -m tests.benchmarks.scrutiny_coverage`` from the project's top level; add
 ``--draws N`` for another number of draws a row. Writes
-``tests/benchmarks/figures/scrutiny_coverage.json``. Same seed and draws, same figures. About two
+``tests/benchmarks/figures/scrutiny_coverage.json``. Same seed and draws, same figures. About three
 minutes on one core at the default.
 
 ``rate`` is how often the interval, bound or set holds the truth, or how often a true null is kept;
@@ -23,10 +23,21 @@ import numpy as np
 
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import t_reach
+from pipeline.core.multiplicity import romano_wolf
 from pipeline.estimators.stages import parts_of
-from pipeline.scrutiny import confounder, correlation, curve, exclusion, grid, mismeasured, omitted
+from pipeline.scrutiny import (
+    both_ways,
+    breakdown,
+    confounder,
+    correlation,
+    curve,
+    exclusion,
+    grid,
+    mismeasured,
+    omitted,
+)
 from pipeline.scrutiny.ground import Ground, ground_of, partial_r_squared
-from pipeline.scrutiny.multiplicity import romano_wolf, score_draws
+from pipeline.scrutiny.multiplicity import score_draws
 from pipeline.scrutiny.simex import simex
 from tests.scrutiny import worlds
 
@@ -125,6 +136,27 @@ def local(rng: np.random.Generator) -> Held:
     return inside(found.low, found.high), inside(bare.low, bare.high)
 
 
+def difference(rng: np.random.Generator) -> Held:
+    """400 deals, a clean instrument, least squares biased: the difference holds what it is."""
+    design = worlds.tainted_instrument(rng, 400, 0.0)
+    parts = parts_of(design, OPTIONS)
+    found = breakdown.difference_at(parts, np.zeros(1), LEVEL)
+    # D's variance beside x is .49 + 2, its covariance with the error -1: plim of least squares.
+    truth = 1 / 2.49
+    bare = exclusion.at_violation(parts, np.zeros(1), LEVEL)
+    other = breakdown.least_squares_of(parts)
+    return found.low <= truth <= found.high, bool(bare.low <= other <= bare.high)
+
+
+def both_equations(rng: np.random.Generator) -> Held:
+    """400 deals, return and choice answer one another: what return does to choice, three stages."""
+    design = worlds.simultaneous(rng, 400)
+    found = both_ways.both_ways(design, ("x1", "x2"), OPTIONS)
+    wanted = [t for t in found if t.equation == "choice" and t.term == design.outcome]
+    last = wanted[-1]
+    return last.ci_low <= worlds.ANSWER <= last.ci_high, plain(ground_of(design, OPTIONS))
+
+
 def unequal_variances(rng: np.random.Generator) -> Held:
     """800 deals, a common confounder, instruments made from unequal variances."""
     design = worlds.unequal_variances(rng, 800)
@@ -216,6 +248,8 @@ ROWS = (
     Row("union of intervals at the edge", 0.95, False, union),
     Row("union of Anderson-Rubin sets at the edge", 0.95, False, union_anderson_rubin),
     Row("local to zero", 0.95, True, local),
+    Row("difference of two stages and least squares", 0.95, True, difference),
+    Row("outcome in the equation of the choice, three stages", 0.95, True, both_equations),
     Row("instruments from unequal variances", 0.95, True, unequal_variances),
     Row("proportional selection, resampled", 0.95, True, proportional),
     Row("confounder of known strength", 0.95, True, known_confounder),

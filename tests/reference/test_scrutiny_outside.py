@@ -20,10 +20,10 @@ from scipy import special, stats
 from statsmodels.stats.multitest import multipletests
 
 from pipeline.core.design import FitOptions
+from pipeline.core.multiplicity import benjamini_hochberg, holm
 from pipeline.estimators.stages import parts_of
 from pipeline.scrutiny import confounder, exclusion, mismeasured, omitted, pairs
 from pipeline.scrutiny.ground import ground_of
-from pipeline.scrutiny.multiplicity import benjamini_hochberg, holm
 from tests.reference import public_data as data
 
 CASES: Mapping[str, Any] = json.loads(
@@ -131,6 +131,33 @@ def test_proportional_selection_in_a_population() -> None:
             "delta_for_true_beta": omitted.delta(found, 1.0, 0.5),
         },
     )
+
+
+def test_benchmarks_and_adjusted_estimates_on_wages() -> None:
+    """Formal benchmarks at three multiples, and estimate, error and t at three strengths."""
+    controls = ["educ", "exper", "expersq", "age", "kidslt6"]
+    design = data.design(mroz(), "lwage", controls)
+    ground = ground_of(design, FitOptions(covariance="classical"))
+    values = robustness(ground.estimate / ground.classical, ground.df)
+    found = {"b": ground.estimate, "se": ground.classical, **values}
+    for multiple in (1, 2, 3):
+        b = confounder.benchmark(ground, "exper", multiple, 0.95)
+        at = np.array([b.with_treatment]), np.array([b.with_outcome])
+        error = confounder.adjusted_error(ground.classical, ground.df, *at)[0]
+        found |= {
+            f"{multiple}x.with_treatment": b.with_treatment,
+            f"{multiple}x.with_outcome": b.with_outcome,
+            f"{multiple}x.estimate": b.estimate,
+            f"{multiple}x.std_error": error,
+        }
+    for d, y in ((0.05, 0.1), (0.2, 0.05), (0.3, 0.4)):
+        at = np.array([d]), np.array([y])
+        value = confounder.adjusted_estimate(ground, *at)[0]
+        error = confounder.adjusted_error(ground.classical, ground.df, *at)[0]
+        name = f"{d:g},{y:g}"
+        found |= {f"{name}.estimate": value, f"{name}.std_error": error}
+        found |= {f"{name}.t": value / error}
+    compare("S10", found)
 
 
 def test_union_of_intervals_on_wages() -> None:

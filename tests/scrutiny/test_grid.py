@@ -7,8 +7,6 @@ from itertools import product
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
-from hypothesis import strategies as st
 
 from pipeline.core.design import Design, FitOptions
 from pipeline.core.findings import InputProblem
@@ -173,43 +171,6 @@ def test_adjusted_cells_are_ordered(design: Design) -> None:
     order = np.argsort(told.raw)
     assert (np.diff(told.holm[order]) >= 0).all()
     assert told.romano_wolf.min() >= 1 / 500
-
-
-@given(p=st.lists(st.floats(0, 1), min_size=1, max_size=30))
-@settings(max_examples=60, deadline=None)
-def test_step_down_p_values_keep_order_and_bounds(p: list[float]) -> None:
-    raw = np.array(p)
-    for made in (multiplicity.holm(raw), multiplicity.benjamini_hochberg(raw)):
-        assert (made >= raw - 1e-15).all()
-        assert (made <= 1).all()
-        order = np.argsort(raw, kind="stable")
-        assert (np.diff(made[order]) >= -1e-15).all()
-
-
-def test_romano_wolf_by_hand() -> None:
-    """Three statistics, four draws: counts by the definition, step by step."""
-    t = np.array([1.0, -3.0, 2.0])
-    draws = np.array([[0.5, 2.5, 1.0], [3.5, 0.1, 0.2], [0.2, 0.3, 2.2], [1.5, 1.0, 0.4]])
-    by_hand = np.empty(3)
-    order, last = [1, 2, 0], 0.0
-    for step, at in enumerate(order):
-        left = order[step:]
-        beyond = sum(max(abs(row[left])) >= abs(t[at]) for row in draws)
-        last = max(last, (1 + beyond) / 5)
-        by_hand[at] = last
-    assert multiplicity.romano_wolf(t, draws) == pytest.approx(by_hand)
-    assert by_hand.tolist() == [0.6, 0.4, 0.6]
-
-
-def test_romano_wolf_uses_that_tests_move_together() -> None:
-    """Ten copies of one statistic cost nothing; ten independent ones cost as much as Holm."""
-    rng = np.random.default_rng(1)
-    one = rng.normal(size=(4999, 1))
-    t = np.full(10, 2.0)
-    copies = multiplicity.romano_wolf(t, np.repeat(one, 10, axis=1))
-    assert copies == pytest.approx(np.full(10, 0.0455), abs=0.012)
-    apart = multiplicity.romano_wolf(t, rng.normal(size=(4999, 10)))
-    assert apart[0] == pytest.approx(1 - (1 - 0.0455) ** 10, abs=0.03)
 
 
 def test_the_same_signs_serve_all_cells() -> None:

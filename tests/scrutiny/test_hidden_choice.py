@@ -20,7 +20,7 @@ from pipeline.scrutiny import correlation, pairs
 from pipeline.scrutiny.anticipation import Expected, unanticipated
 from pipeline.scrutiny.directions import Suspect, direction_of
 from pipeline.scrutiny.ground import ground_of
-from pipeline.scrutiny.on_lead import kept_rows
+from pipeline.scrutiny.on_expectations import kept_rows
 from tests.estimators.designs import deals, without
 from tests.scrutiny import worlds
 

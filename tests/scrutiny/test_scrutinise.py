@@ -15,6 +15,7 @@ from pipeline.core.findings import InputProblem
 from pipeline.core.scrutiny import (
     DIRECTION_COLUMNS,
     SENSITIVITY_COLUMNS,
+    TABLES,
     Scrutiny,
     direction_frame,
     sensitivity_frame,
@@ -181,12 +182,156 @@ def test_no_controls_leave_their_doubts_out() -> None:
         ({"benchmarks": ("unheard_of",)}, "benchmark_not_control"),
         ({"reliability": {"run_up": 1.2}}, "reliability_range"),
         ({"reliability": {"unheard_of": 0.9}}, "reliability_variable"),
+        ({"reliability": {"paid_in_shares": 0.9}}, "reliability_of_choice"),
+        ({"reliability": {"run_up": 1e-9}}, "reliability_too_low"),
         ({"suspects": (Suspect("x", "*", "+"),)}, "suspect_sign"),
+        ({"reverse": ("unheard_of",)}, "reverse_instrument"),
     ],
 )
 def test_options_without_an_answer(
     design: Design, columns: Sequence[Column], more: dict[str, Any], rule: str
 ) -> None:
     with pytest.raises(InputProblem) as caught:
-        scrutinise(design, columns, 0, replace(ScrutinyOptions(resamples=10), **more))
-    assert caught.value.findings[0].rule == rule
+        scrutinise(design, columns, 3, replace(ScrutinyOptions(resamples=10), **more))
+    (finding,) = caught.value.findings
+    assert finding.rule == rule
+    assert finding.remedy
+
+
+def test_every_table_has_its_columns_and_agrees_with_the_rows(
+    found: Scrutiny, design: Design, columns: tuple[Estimate, ...]
+) -> None:
+    assert set(found.tables) == set(TABLES) - {"both_ways"}
+    for name, frame in found.tables.items():
+        assert {column: str(kind) for column, kind in frame.dtypes.items()} == TABLES[name]
+    falls = found.tables["breakdowns"]
+    assert not falls.duplicated(["target", "key"]).any()
+    assert (falls["needed"].str.count(r"\{\}") == 1).all()
+    for _, row in falls.iterrows():
+        assert (row["verdict"] == "holds") == (abs(row["value"]) > row["wanted"])
+    values = falls.set_index(["target", "key"])["value"]
+    base = "least-squares effect of paying in shares"
+    assert values[base, "confounder_zero"] == found.facts["robustness_value"]
+    assert values[base, "confounder_interval"] == found.facts["robustness_value_significant"]
+    lead = "effect of paying in shares"
+    assert values[lead, "exclusion_zero"] in (
+        found.facts["lead_breakdown_share"],
+        found.facts["lead_breakdown_share_anderson_rubin"],
+    )
+
+
+def test_the_identity_is_shown_for_each_control(found: Scrutiny) -> None:
+    frame = found.tables["controls_left_out"]
+    product = frame["gamma"] * frame["delta"]
+    assert np.allclose(frame["short"], frame["long"] + product, rtol=0, atol=1e-12)
+    assert frame["control"].is_unique
+
+
+def test_the_largest_r2_goes_up_to_one(found: Scrutiny) -> None:
+    frame = found.tables["largest_r2"]
+    asked = frame[frame["rule"] == "as asked"]
+    assert asked["largest_r2"].max() == 1.0
+    assert (frame["largest_r2"] <= 1).all()
+    roots = [float(root) for text in frame["roots"] for root in text.split(", ")]
+    assert all(any(np.isclose(r, e) for r in roots) for e in frame["estimate"])
+
+
+def test_expectations_are_every_pair(found: Scrutiny, columns: tuple[Estimate, ...]) -> None:
+    frame = found.tables["expectations"]
+    for _, part in frame.groupby("target"):
+        assert len(part) == len(OPTIONS.known_before) * len(OPTIONS.completion)
+        own = part[(part["known_before"] == 0) & (part["completion"] == 1)]["estimate"].iloc[0]
+        kept = part["completion"] * (1 - part["known_before"])
+        assert np.allclose(part["estimate"] * kept, own, rtol=1e-12)
+
+
+def test_every_deal_and_group_is_left_out_once(design: Design, columns: Sequence[Column]) -> None:
+    codes = np.arange(design.n) % 4
+    options = replace(
+        OPTIONS,
+        simex=False,
+        dimensions={"quarter": codes},
+        groups={"quarter": ("first", "second", "third", "fourth")},
+    )
+    frame = scrutinise(design, columns, 0, options).tables["left_out"]
+    by = frame.groupby("dimension")
+    assert by["group"].nunique().equals(by.size())
+    assert set(by.get_group("quarter")["group"]) == {"first", "second", "third", "fourth"}
+    deals_out = by.get_group("deal")
+    assert len(deals_out) == design.n
+    sizes = deals_out["change"].abs().to_numpy()
+    assert (np.diff(sizes) <= 1e-15).all()
+    full = columns[0].term(design.treatment)["coefficient"]  # type: ignore[union-attr]
+    assert np.allclose(deals_out["estimate"] - full, deals_out["change"], atol=1e-12)
+
+
+def test_added_error_is_drawn_back_to_none(found: Scrutiny) -> None:
+    frame = found.tables["extrapolation"]
+    assert set(frame["curve"]) == {"simulated", "linear", "quadratic", "rational"}
+    ends = frame[frame["zeta"] == -1].groupby("curve")["estimate"].agg(list)
+    shown = {item.estimate for item in found.variants if "by simulation" in item.variant}
+    for values in ends:
+        assert all(np.isclose(list(shown), value, rtol=1e-9, atol=0).any() for value in values)
+
+
+def test_two_equations_on_request(design: Design, columns: Sequence[Column]) -> None:
+    options = replace(OPTIONS, simex=False, reliability={}, reverse=("run_up",))
+    made = scrutinise(design, columns, 3, options)
+    frame = made.tables["both_ways"]
+    assert set(frame["equation"]) == {"outcome", "choice"}
+    own = frame[
+        (frame["equation"] == "outcome")
+        & (frame["method"] == "two stages")
+        & (frame["term"] == design.treatment)
+    ]
+    lead = columns[3].term(design.treatment)  # type: ignore[union-attr]
+    assert own["coefficient"].iloc[0] == pytest.approx(lead["coefficient"], rel=1e-9)
+    assert own["std_error"].iloc[0] == pytest.approx(lead["std_error"], rel=1e-9)
+
+
+def test_words_follow_what_is_explained(design: Design, columns: Sequence[Column]) -> None:
+    options = replace(
+        OPTIONS, simex=False, outcome="bid premium", misplaced=(), expected=(), known_before=(),
+        completion=(),
+    )  # fmt: skip
+    made = scrutinise(design, columns, 3, options)
+    told = " ".join(made.tables["breakdowns"]["needed"])
+    assert "bid premium" in told
+    assert "return" not in told
+    assert "expectations" not in made.tables
+    dimensions = {item.dimension for item in made.variants}
+    assert not dimensions & {"anticipation", "announcement day"}
+
+
+def test_what_was_put_to_the_doubts_is_told_as_reported(
+    found: Scrutiny, design: Design, columns: tuple[Estimate, ...]
+) -> None:
+    frame = found.tables["reported"].set_index("lead")
+    assert frame["title"].to_dict() == {False: columns[0].title, True: columns[3].title}
+    lead = columns[3].interval
+    assert (frame.loc[True, "ci_low"], frame.loc[True, "ci_high"]) == (lead.low, lead.high)
+    assert frame.loc[False, "estimate"] == columns[0].term(design.treatment)["coefficient"]
+
+
+@pytest.mark.parametrize("spread", [0.0, 0.8])
+def test_generated_instruments_are_tested_three_ways_where_they_say_something(
+    spread: float,
+) -> None:
+    rng = np.random.default_rng(8)
+    x, w, z, u = rng.normal(size=(4, 900))
+    D = 0.5 * x + z + u + rng.normal(size=900) * np.exp(spread * x)
+    y = 0.5 * D + 0.3 * x + u + rng.normal(size=900)
+    design = worlds.made(y, D, np.column_stack([x, w]), Z=z[:, None], instruments=("z",))
+    column = two_stage_least_squares(design, FitOptions())
+    made = scrutinise(design, (column,), 0, ScrutinyOptions(resamples=30))
+    told = [c for c in made.checks if c.subject == "Instruments from unequal variances"]
+    assert "moves with the controls" in told[0].check
+    if spread:
+        assert [c.verdict for c in told] == ["pass", "pass", "pass"]
+        assert {c.check.split(",")[0] for c in told[1:]} == {
+            "Strength of instruments from unequal variances",
+            "Instruments from unequal variances agree with one another",
+        }
+        assert [item for item in made.variants if item.dimension == "other instruments"]
+    else:
+        assert [c.verdict for c in told] == ["warn"]

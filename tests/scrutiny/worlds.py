@@ -8,6 +8,8 @@ from pipeline.core.design import Design, SelectionRows
 
 EFFECT = 0.5
 RELIABILITY = 0.7
+ANSWER = 0.3
+"""What one unit of the outcome does to the choice in :func:`simultaneous`."""
 
 
 def made(y: np.ndarray, D: np.ndarray, controls: np.ndarray, **parts: object) -> Design:
@@ -99,3 +101,13 @@ def unequal_variances(rng: np.random.Generator, n: int) -> Design:
     x, u = rng.normal(size=(2, n))
     D = 0.5 * x + u + rng.normal(size=n) * np.exp(0.5 * x)
     return made(EFFECT * D + 0.3 * x + u + rng.normal(size=n), D, x)
+
+
+def simultaneous(rng: np.random.Generator, n: int) -> Design:
+    """y = .5D + .4x0 + .8x1 + .4x2 + ε and D = .3y + .4x0 + z + v, the errors correlated."""
+    x0, x1, x2, z = rng.normal(size=(4, n))
+    e, v = rng.multivariate_normal([0, 0], [[1, 0.5], [0.5, 1]], size=n).T
+    right_y, right_d = 0.4 * x0 + 0.8 * x1 + 0.4 * x2 + e, 0.4 * x0 + z + v
+    y = (right_y + EFFECT * right_d) / (1 - EFFECT * ANSWER)
+    D = ANSWER * y + right_d
+    return made(y, D, np.column_stack([x0, x1, x2]), Z=z[:, None], instruments=("z",))

@@ -53,7 +53,7 @@ RULES = (
         "Grid of too many cells",
         "The declared choices combine to more cells than allowed without asking.",
         "A grid this large takes long and is read by nobody.",
-        "Declare fewer choices, or set allow to true.",
+        "Declare fewer choices, raise scrutiny.grid.most_cells, or set scrutiny.grid.allow = true.",
     ),
     Rule(
         "grid_control",
@@ -61,6 +61,28 @@ RULES = (
         "A set of controls names a variable that is not among the study's controls.",
         "All cells stand on the variables the study prepared.",
         "Add it to the controls, or take it out of the grid.",
+    ),
+    Rule(
+        "grid_sample",
+        "Sample of the grid that is none",
+        "A sample declared for the grid keeps every deal or none.",
+        "It would repeat a choice that is there already, or leave nothing to estimate.",
+        "Change the condition, or take the sample out of the grid.",
+    ),
+    Rule(
+        "reverse_instrument",
+        "Reverse equation without something that moves the return alone",
+        "A variable named for the equation of the choice is not a varying control.",
+        "What the return does to the choice can only be told by something that moves the return "
+        "and not the choice, and what the choice does to the return only by instruments.",
+        "Name controls of the study, and declare instruments.",
+    ),
+    Rule(
+        "reliability_of_choice",
+        "Reliability of a feature that is 0 or 1",
+        "A reliability is given for the feature asked about, which has two values.",
+        "The error of such a record moves against the truth, which no reliability describes.",
+        "Give the rates of misclassification in its place.",
     ),
     Rule(
         "winsorise_range",
