@@ -13,11 +13,11 @@ from dataclasses import dataclass
 import numpy as np
 
 from pipeline.core.findings import problem
-from pipeline.core.prices import Booleans, Floats, PricePanel
+from pipeline.core.prices import GLOBAL, RISK_FREE, Booleans, Floats, Integers, PricePanel
+from pipeline.returns.peers import PeerBook, PeerReturns, everyone
 
-RISK_FREE = "risk_free"
-GLOBAL = "global_market"
 Aggregate = Callable[[Floats, Floats, Floats, Booleans], Floats]
+Own = Callable[[Integers, Integers, Integers], Floats]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -31,16 +31,25 @@ class MeanModel:
             (d - 1, n, E) regressors but the constant and the (n, E) days used, that gives (n, 2)
             alpha and beta on the benchmark of the same day. Its forecast error then leaves out
             that of the parameters.
+        own: None, or a function of (n,) columns, (n,) sessions of day zero and (n, L) sessions
+            that gives (n, L) values of one more regressor, the last, which differs between the
+            events of a session.
     """
 
     offset: Floats
     regressors: Floats
     aggregate: Aggregate | None = None
+    own: Own | None = None
 
     @property
     def constant(self) -> bool:
         """Whether the first regressor is a constant."""
         return bool(self.regressors.shape[1]) and bool((self.regressors[:, 0] == 1).all())
+
+    @property
+    def parameters(self) -> int:
+        """How many parameters are fitted."""
+        return int(self.regressors.shape[1]) + (self.own is not None)
 
 
 def market_model(panel: PricePanel) -> MeanModel:
@@ -87,6 +96,17 @@ def local_and_global(panel: PricePanel) -> MeanModel:
     world = _factor(panel, GLOBAL)
     regressors = _with_constant(panel.benchmark, *(_shifted(world, k) for k in (-1, 0, 1)))
     return MeanModel(_zero(panel), regressors)
+
+
+def peer_adjusted(panel: PricePanel, book: PeerBook | None = None) -> MeanModel:
+    """E[R] = alpha + beta R_m + gamma R_peers; d = 3 (King 1966, J. Business 39).
+
+    R_peers is the equal-weighted return of the event's own peers, less the company itself, the
+    deal's counterparty and companies with a deal within the event's windows. Without a ``book``
+    every other company of the panel is a peer.
+    """
+    peers = PeerReturns(panel, book or everyone(panel))
+    return MeanModel(_zero(panel), _with_constant(panel.benchmark), own=peers)
 
 
 def scholes_williams(panel: PricePanel) -> MeanModel:

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 
 import numpy as np
 import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.ledger import Action, Ledger
+from pipeline.core.reading import Reading
 from pipeline.core.tables import typed_frame
 from pipeline.core.window import Window
 from pipeline.significance.dependence import links
@@ -27,15 +28,24 @@ COLUMNS = {
 }
 FLAGS = {
     "confounded": "without deals next to an earnings release",
+    "other_news": "without deals next to other news",
+    "amended_offer": "without second offers between the same companies",
+    "overlapping_kept": "without deals that share a window with an earlier one",
     "time_unknown": "without deals whose time of day is unknown",
     "thin_trading": "without thinly traded shares",
+    "benchmark_dominated": "without companies that are much of their benchmark",
 }
 
 
 def mean_variants(
-    abnormal: Mapping[str, AbnormalReturns], window: Window, ledger: Ledger, level: float
+    abnormal: Mapping[str, AbnormalReturns],
+    window: Window,
+    ledger: Ledger,
+    level: float,
+    readings: Sequence[Reading] = (),
 ) -> pd.DataFrame:
-    """The mean CAR of ``window`` under each model, and without each kind of flagged deal.
+    """The mean CAR of ``window`` under each model, without each kind of flagged deal, and under
+    each other reading of the events.
 
     Returns:
         ``target, dimension, variant, estimate, ci_low, ci_high, n``; decimal, the first model
@@ -49,6 +59,10 @@ def mean_variants(
     for variant, keep in _without(lead, ledger):
         some = links(lead).take(np.flatnonzero(keep))
         rows.append(_row("deals", variant, car_sample(lead.select(keep), window, 1.0, some), level))
+    rows += [
+        _row(reading.dimension, reading.words, car_sample(reading.abnormal, window, 1.0), level)
+        for reading in readings
+    ]
     return typed_frame(rows, COLUMNS)
 
 

@@ -9,6 +9,7 @@ import numpy as np
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import Tested, TestResult, t_reach
+from pipeline.core.multiplicity import holm
 from pipeline.core.results import WindowTests
 from pipeline.core.window import Window
 from pipeline.significance.dependence import links
@@ -114,13 +115,3 @@ def holm_by_test(results: Sequence[Mapping[str, Tested]]) -> list[dict[str, floa
         for i, p in zip(at, holm(np.array(raw)), strict=True):
             adjusted[i][key] = float(p)
     return adjusted
-
-
-def holm(p: np.ndarray) -> np.ndarray:
-    """Step-down Holm adjustment of (m,) p-values, in their order."""
-    m = len(p)
-    order = np.argsort(p, kind="stable")
-    stepped = np.minimum(np.maximum.accumulate(p[order] * np.arange(m, 0, -1)), 1.0)
-    out = np.empty(m)
-    out[order] = stepped
-    return out

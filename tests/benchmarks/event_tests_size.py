@@ -159,7 +159,6 @@ def drawn_rates(
             car[own][:, None],
             events.estimation_returns[own],
             residual_sd[own],
-            events.estimation_days[own],
         )
         sample = CarSample(day, car[own], scar, std_dev[own], df[own], ALONE, series)
         for key, name in KEYS.items():

@@ -151,6 +151,21 @@ def test_adjustment_and_effective_number(n: int, r: float) -> None:
     assert link.effective_n(n) == pytest.approx(n / (1 + (n - 1) * r))
 
 
+@pytest.mark.parametrize("kept", [1, 2, 5, 9, 13, 14])
+def test_links_of_a_part_are_those_of_the_part_alone(kept: int, ragged: AbnormalReturns) -> None:
+    """Summed over the part, or from the whole less those left out: the same."""
+    rows = np.random.default_rng(kept).permutation(14)[:kept]
+    part = links(ragged).take(rows)
+    alone = links(ragged.take(rows))
+    np.testing.assert_allclose(part.totals(), alone.totals(), atol=1e-11)
+    again = part.take(np.arange(kept)[::-1])
+    np.testing.assert_allclose(again.totals(), alone.totals(), atol=1e-11)
+    first, second = np.triu_indices(kept, 1)
+    np.testing.assert_allclose(
+        part.between(first, second), alone.between(first, second), atol=1e-12
+    )
+
+
 def test_links_made_once_serve_every_window(ragged: AbnormalReturns) -> None:
     known = links(ragged)
     for window in (Window(0, 0), Window(-5, 5)):

@@ -20,7 +20,7 @@ from pipeline.significance.paths import average_paths
 from pipeline.significance.power import detectable, z_test_power
 from pipeline.significance.sample import car_sample
 from pipeline.significance.variants import mean_variants
-from pipeline.significance.windows import all_windows, holm, holm_by_test, mean_interval
+from pipeline.significance.windows import all_windows, holm_by_test, mean_interval
 from tests.significance.samples import WINDOW, clustered, linked, sample_of
 
 WINDOWS = (WINDOW, Window(0, 0), Window(0, 1), Window(-2, 2), Window(-5, 5))
@@ -35,14 +35,6 @@ def abnormal() -> AbnormalReturns:
     returns[3, 6] = np.nan
     returns[8, 4:9] = np.nan
     return replace(found, returns=returns)
-
-
-@pytest.mark.parametrize("m", [1, 2, 7, 40])
-@pytest.mark.parametrize("seed", [0, 1])
-def test_holm(m: int, seed: int) -> None:
-    """statsmodels multipletests; ties and ones included."""
-    p = np.random.default_rng(seed).beta(0.4, 2, m).round(2)
-    np.testing.assert_allclose(holm(p), multipletests(p, method="holm")[1], rtol=1e-12)
 
 
 def test_holm_goes_by_test_and_skips_those_without_a_p() -> None:
