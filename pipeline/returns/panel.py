@@ -2,20 +2,29 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import Dates, Floats, PricePanel
+from pipeline.returns.currency import Quotation, Rates, session_rates
+from pipeline.returns.jumps import dates, jumps_together, unit_jumps
+from pipeline.returns.limits import DEFAULT_LIMITS, ScreenLimits
+from pipeline.returns.policies import alive
 from pipeline.returns.sessions import CalendarChange, Sessions, changed, sessions_between
 
-CLOSED_SHARE = 0.5
-OFF_SESSION_SHARE = 0.02
-SPLIT_FACTORS = np.array([2, 3, 4, 5, 10, 20, 1 / 2, 1 / 3, 1 / 4, 1 / 5, 1 / 10, 1 / 20])
-SPLIT_TOLERANCE = 0.03
-CALM_BENCHMARK = 0.05
+RETURN = "return"
+
+
+@dataclass(frozen=True, slots=True)
+class InOneCurrency:
+    """The rates into the common currency, and what each price and benchmark is quoted in."""
+
+    rates: Rates
+    quoted: Quotation
 
 
 def build_panels(
@@ -25,66 +34,128 @@ def build_panels(
     factors: pd.DataFrame | None,
     factor_names: tuple[str, ...],
     changes: Mapping[str, CalendarChange] | None = None,
+    limits: ScreenLimits = DEFAULT_LIMITS,
+    money: InOneCurrency | None = None,
 ) -> tuple[dict[str, PricePanel], dict[str, Sessions], list[Finding]]:
     """One panel an exchange, with findings about prices, benchmark and calendar.
 
     Args:
         listings: security, exchange: one row a security.
-        prices: security, date, close, volume.
-        benchmarks: exchange, date, close.
+        prices: security, date, close or return (simple, decimal), volume.
+        benchmarks: exchange, date, close or return.
         factors: exchange, date, one column a factor; or None.
         factor_names: the factor columns to keep.
         changes: exchange -> what the desk knows better than its calendar.
+        limits: when the tables are doubted.
+        money: makes all prices and benchmarks ones of a common currency; None leaves them.
     """
     panels: dict[str, PricePanel] = {}
     calendars: dict[str, Sessions] = {}
     findings: list[Finding] = []
     first, last = prices["date"].min(), prices["date"].max()
+    # The first of given returns began on the session before it.
+    margin = pd.Timedelta(days=14 if RETURN in prices else 0)
     for exchange, listed in listings.groupby("exchange", sort=True):
         name = str(exchange)
         # A margin of days lets an announcement after the last price still be placed.
         sessions = sessions_between(
-            name, f"{first:%Y-%m-%d}", f"{last + pd.Timedelta(days=10):%Y-%m-%d}"
+            name, f"{first - margin:%Y-%m-%d}", f"{last + pd.Timedelta(days=10):%Y-%m-%d}"
         )
+        if margin:
+            sessions = _from_the_one_before(sessions, np.datetime64(first, "D"))
         if changes and name in changes:
             sessions = changed(sessions, changes[name])
         own = prices[prices["security"].isin(listed["security"])]
-        panel, more = _panel(sessions, own, benchmarks, factors, factor_names)
-        panels[name], calendars[name] = panel, sessions
+        level = benchmarks[benchmarks["exchange"] == exchange]
+        moves = None if factors is None else factors[factors["exchange"] == exchange]
+        panel, more = _panel(sessions, own, level, limits, money)
+        panels[name] = _with_factors(panel, moves, factor_names)
+        calendars[name] = sessions
         findings += more
     return panels, calendars, findings
+
+
+def _from_the_one_before(sessions: Sessions, first: np.datetime64) -> Sessions:
+    """The sessions from the last one before a date on."""
+    kept = slice(max(int(np.searchsorted(sessions.days, first)) - 1, 0), None)
+    return replace(
+        sessions,
+        days=sessions.days[kept],
+        opens=sessions.opens[kept],
+        closes=sessions.closes[kept],
+    )
 
 
 def _panel(
     sessions: Sessions,
     prices: pd.DataFrame,
     benchmarks: pd.DataFrame,
-    factors: pd.DataFrame | None,
-    factor_names: tuple[str, ...],
+    limits: ScreenLimits,
+    money: InOneCurrency | None,
 ) -> tuple[PricePanel, list[Finding]]:
     exchange, days = sessions.exchange, sessions.days
     last = prices["date"].max()
     if pd.notna(last):
         days = days[days <= np.datetime64(last, "D")]
-    close, volume, securities, findings = _lay(exchange, days, prices)
-    own = benchmarks[benchmarks["exchange"] == exchange]
-    level = _align(days, own["date"], own["close"].to_numpy())
-    findings += _benchmark_gaps(exchange, days, level)
-    moves = {name: np.full(len(days), np.nan) for name in factor_names}
-    if factors is not None:
-        mine = factors[factors["exchange"] == exchange]
-        moves = {name: _align(days, mine["date"], mine[name].to_numpy()) for name in factor_names}
+    value = RETURN if RETURN in prices else "close"
+    values, volume, securities, findings = _lay(exchange, days, prices, value, limits)
+    known = RETURN if RETURN in benchmarks else "close"
+    level = _align(days, benchmarks["date"], benchmarks[known].to_numpy())
+    findings += _benchmark_gaps(exchange, days, level, limits)
+    market = level[:, None]
+    rate, market_rate = None, None
+    if money is not None:
+        quoted_in = [money.quoted.securities[code] for code in securities]
+        rate, lost = session_rates(days, quoted_in, money.rates, np.isfinite(values), "prices")
+        own = [money.quoted.benchmarks.get(exchange, money.rates.common)]
+        market_rate, more = session_rates(
+            days, own, money.rates, np.isfinite(market), "the benchmark"
+        )
+        findings += lost + more
+    close, returns = _close_and_return(values, value == RETURN, rate)
     panel = PricePanel(
         exchange=exchange,
         sessions=days,
         securities=securities,
         close=close,
         volume=volume,
-        returns=simple_returns(close),
-        benchmark=simple_returns(level[:, None])[:, 0],
-        factors=moves,
+        returns=returns,
+        benchmark=_close_and_return(market, known == RETURN, market_rate)[1][:, 0],
+        factors={},
     )
-    return panel, findings + _closed_sessions(panel)
+    checks = (_closed_sessions, _sparse, unit_jumps, jumps_together)
+    return panel, findings + [found for check in checks for found in check(panel, limits)]
+
+
+def _with_factors(
+    panel: PricePanel, factors: pd.DataFrame | None, names: tuple[str, ...]
+) -> PricePanel:
+    if factors is None:
+        held = {name: np.full(len(panel.sessions), np.nan) for name in names}
+    else:
+        on = factors["date"]
+        held = {name: _align(panel.sessions, on, factors[name].to_numpy()) for name in names}
+    return replace(panel, factors=held)
+
+
+def _close_and_return(
+    values: Floats, are_returns: bool, rate: Floats | None
+) -> tuple[Floats, Floats]:
+    """(T, S) closes and simple returns from either; ``rate`` is the value of one unit of money.
+
+    Closes made of returns are an index of 100 on the session before the first one.
+    """
+    if not are_returns:
+        close = values if rate is None else values * rate
+        return close, simple_returns(close)
+    if rate is not None:
+        values = (1 + values) * (1 + simple_returns(rate)) - 1
+    known = np.isfinite(values)
+    close = np.where(known, 100 * np.cumprod(1 + np.where(known, values, 0.0), axis=0), np.nan)
+    first = np.argmax(known, axis=0)
+    starts = np.flatnonzero(known.any(axis=0) & (first > 0))
+    close[first[starts] - 1, starts] = 100.0
+    return np.asfortranarray(close), np.asfortranarray(values)
 
 
 def simple_returns(close: Floats) -> Floats:
@@ -95,43 +166,45 @@ def simple_returns(close: Floats) -> Floats:
 
 
 def _lay(
-    exchange: str, days: Dates, prices: pd.DataFrame
+    exchange: str, days: Dates, prices: pd.DataFrame, value: str, limits: ScreenLimits
 ) -> tuple[Floats, Floats, tuple[str, ...], list[Finding]]:
-    """Closes and volumes as columns; prices on no session are left out and reported."""
+    """Values and volumes as columns; those on no session are left out and reported."""
     codes, securities = pd.factorize(prices["security"], sort=True)
-    dates = prices["date"].to_numpy().astype("datetime64[D]")
-    row = np.searchsorted(days, dates)
+    on = prices["date"].to_numpy().astype("datetime64[D]")
+    row = np.searchsorted(days, on)
     inside = row < len(days)
-    inside[inside] = days[row[inside]] == dates[inside]
-    close = np.full((len(days), len(securities)), np.nan, order="F")
-    volume = np.full_like(close, np.nan, order="F")
-    close[row[inside], codes[inside]] = prices["close"].to_numpy()[inside]
+    inside[inside] = days[row[inside]] == on[inside]
+    laid = np.full((len(days), len(securities)), np.nan, order="F")
+    volume = np.full_like(laid, np.nan, order="F")
+    laid[row[inside], codes[inside]] = prices[value].to_numpy()[inside]
     volume[row[inside], codes[inside]] = prices["volume"].to_numpy()[inside]
     findings = []
-    priced = prices["close"].notna().to_numpy()  # an empty cell on a holiday is no price
-    off = dates[~inside & priced]
+    priced = prices[value].notna().to_numpy()  # an empty cell on a holiday is no price
+    off = on[~inside & priced]
     if off.size:
         share = off.size / priced.sum()
         findings.append(
             Finding(
                 "price_off_session",
-                Severity.ERROR if share > OFF_SESSION_SHARE else Severity.WARNING,
+                Severity.ERROR if share > limits.off_session_share else Severity.WARNING,
                 "prices",
-                got=f"{off.size} prices ({share:.1%}) on dates without a session: {_dates(off)}",
+                got=f"{off.size} prices ({share:.1%}) on dates without a session: {dates(off)}",
                 expected=f"dates on which {exchange} was open",
                 remedy="Check the exchange of the listing; single dates are left out.",
                 column="date",
             )
         )
-    return close, volume, tuple(map(str, securities)), findings
+    return laid, volume, tuple(map(str, securities)), findings
 
 
-def _align(days: Dates, dates: pd.Series, values: Floats) -> Floats:
-    series = pd.Series(values, index=dates.to_numpy().astype("datetime64[D]"))
+def _align(days: Dates, on: pd.Series, values: Floats) -> Floats:
+    series = pd.Series(values, index=on.to_numpy().astype("datetime64[D]"))
     return np.asarray(series.reindex(days).to_numpy(), dtype=np.float64)
 
 
-def _benchmark_gaps(exchange: str, days: Dates, level: Floats) -> list[Finding]:
+def _benchmark_gaps(
+    exchange: str, days: Dates, level: Floats, limits: ScreenLimits
+) -> list[Finding]:
     """Gaps between the benchmark's first and last level; a shorter history costs deals later."""
     known = np.flatnonzero(np.isfinite(level))
     inside = slice(known[0], known[-1] + 1) if known.size else slice(None)
@@ -142,9 +215,9 @@ def _benchmark_gaps(exchange: str, days: Dates, level: Floats) -> list[Finding]:
     return [
         Finding(
             "benchmark_gap",
-            Severity.ERROR if share > OFF_SESSION_SHARE else Severity.WARNING,
+            Severity.ERROR if share > limits.benchmark_gaps else Severity.WARNING,
             "benchmarks",
-            got=f"{exchange}: no level on {missing.size} sessions ({share:.1%}): {_dates(missing)}",
+            got=f"{exchange}: no level on {missing.size} sessions ({share:.1%}): {dates(missing)}",
             expected="a level on every session of the exchange",
             remedy="Complete the benchmark; returns of those sessions are not used.",
             column="close",
@@ -152,11 +225,10 @@ def _benchmark_gaps(exchange: str, days: Dates, level: Floats) -> list[Finding]:
     ]
 
 
-def _closed_sessions(panel: PricePanel) -> list[Finding]:
-    alive = _alive(panel.close)
-    listed = alive.sum(axis=1)
+def _closed_sessions(panel: PricePanel, limits: ScreenLimits) -> list[Finding]:
+    listed = alive(panel.close).sum(axis=1)
     quoted = np.isfinite(panel.close).sum(axis=1)
-    closed = panel.sessions[(listed >= 5) & (quoted < CLOSED_SHARE * listed)]
+    closed = panel.sessions[(listed >= 5) & (quoted < limits.closed_share * listed)]
     if closed.size == 0:
         return []
     return [
@@ -164,7 +236,7 @@ def _closed_sessions(panel: PricePanel) -> list[Finding]:
             "session_without_prices",
             Severity.WARNING,
             "prices",
-            got=f"{panel.exchange}: most securities have no price on {_dates(closed)}",
+            got=f"{panel.exchange}: most securities have no price on {dates(closed)}",
             expected="prices on every session of the calendar",
             remedy="Check with the exchange whether it was open.",
             column="date",
@@ -172,31 +244,23 @@ def _closed_sessions(panel: PricePanel) -> list[Finding]:
     ]
 
 
-def _alive(close: Floats) -> np.ndarray:
-    """(T, S) whether the security has been quoted before or on the session and will be later."""
-    quoted = np.isfinite(close)
-    started = np.maximum.accumulate(quoted, axis=0)
-    going = np.maximum.accumulate(quoted[::-1], axis=0)[::-1]
-    return np.asarray(started & going)
-
-
-def suspected_splits(panel: PricePanel) -> dict[str, list[np.datetime64]]:
-    """Security -> sessions whose close moved by a whole factor while the benchmark was calm.
-
-    A ratio to the benchmark's within 3% of 2, 3, 4, 5, 10, 20 or an inverse, benchmark below 5%:
-    common practice, no source.
-    """
-    ratio = (1 + panel.returns) / (1 + panel.benchmark)[:, None]
-    jumps = (np.abs(panel.returns) > 0.3) & (np.abs(panel.benchmark) < CALM_BENCHMARK)[:, None]
-    found: dict[str, list[np.datetime64]] = {}
-    for row, column in np.argwhere(jumps):
-        near = np.abs(ratio[row, column] / SPLIT_FACTORS - 1) < SPLIT_TOLERANCE
-        if near.any():
-            found.setdefault(panel.securities[column], []).append(panel.sessions[row])
-    return found
-
-
-def _dates(days: Iterable[np.datetime64], shown: int = 4) -> str:
-    listed = sorted(set(map(str, days)))
-    more = f" and {len(listed) - shown} more" if len(listed) > shown else ""
-    return ", ".join(listed[:shown]) + more
+def _sparse(panel: PricePanel, limits: ScreenLimits) -> list[Finding]:
+    """An error if half of the securities go a week between two prices: a weekly or monthly file."""
+    quoted = np.isfinite(panel.close)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        apart = (alive(panel.close).sum(axis=0) - 1) / (quoted.sum(axis=0) - 1)
+    several = quoted.sum(axis=0) > 2
+    if not several.any() or np.mean(apart[several] >= limits.sparse_sessions) <= 0.5:
+        return []
+    return [
+        Finding(
+            "not_daily",
+            Severity.ERROR,
+            "prices",
+            got=f"{panel.exchange}: {np.median(apart[several]):.1f} sessions from one price to the "
+            "next, in the middle security",
+            expected="a price a session",
+            remedy="Export daily prices; weekly or monthly ones cannot place a reaction.",
+            column="date",
+        )
+    ]

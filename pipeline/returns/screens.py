@@ -13,14 +13,9 @@ from pipeline.core.ledger import Action, Ledger, LedgerEntry, StageLedger
 from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
 from pipeline.returns.events import EventOptions, Located, located_events
-from pipeline.returns.panel import suspected_splits
-
-# Shares of unchanged prices, of missing sessions, and a daily return to look at: common practice,
-# no source.
-ZERO_RETURNS_DROP = 0.5
-ZERO_RETURNS_FLAG = 0.2
-GAPS_FLAG = 0.05
-LARGE_RETURN = 0.5
+from pipeline.returns.jumps import suspected_splits
+from pipeline.returns.limits import DEFAULT_LIMITS, ScreenLimits
+from pipeline.returns.trading import covered, stood_still
 
 
 def screen_estimation(
@@ -29,24 +24,36 @@ def screen_estimation(
     panels: Mapping[str, PricePanel],
     masked: Booleans,
     options: EventOptions,
+    limits: ScreenLimits = DEFAULT_LIMITS,
 ) -> tuple[Booleans, StageLedger]:
     """Which events have a usable estimation window, by the first rule each fails.
 
-    The rules in order: suspected split, too few returns, no fit, too many zero returns.
+    The rules in order: suspected split, too few returns, no fit, too many zero returns. A deal
+    that stays is flagged for a price that stood still, sessions without trade, and gaps.
+
+    Args:
+        located: N events.
+        abnormal: theirs, under the headline model.
+        panels: exchange -> the prices the returns were measured on.
+        masked: (N, E) estimation sessions not used.
+        options: windows and what is declared of events.
+        limits: thresholds.
     """
-    splits = {exchange: suspected_splits(panel) for exchange, panel in panels.items()}
+    splits = {exchange: suspected_splits(panel, limits) for exchange, panel in panels.items()}
     entries: list[LedgerEntry] = []
     keep = np.ones(len(located), dtype=np.bool_)
     for row, event in enumerate(located_events(located)):
         panel = panels[event.exchange]
         verdict = _split_verdict(event, splits[event.exchange], panel, options) or (
-            _estimation_verdict(event, abnormal, row, panel, options)
+            _estimation_verdict(event, abnormal, row, panel, options, limits)
         )
         if verdict is not None:
             entries.append(verdict)
             keep[row] = verdict.action is not Action.DROPPED
         if keep[row]:
-            entries += _gaps(event, abnormal, row, masked)
+            entries += _gaps(event, abnormal, row, masked, limits)
+            entries += stood_still(event, panel, options.estimation, limits)
+            entries += covered(event, panel, options)
         if keep[row] and masked[row].any():
             entries.append(
                 LedgerEntry(
@@ -98,14 +105,17 @@ def jumps_inside(
 
 
 def jumps_near_events(
-    located: pd.DataFrame, panels: Mapping[str, PricePanel], options: EventOptions
+    located: pd.DataFrame,
+    panels: Mapping[str, PricePanel],
+    options: EventOptions,
+    limits: ScreenLimits = DEFAULT_LIMITS,
 ) -> list[Finding]:
     """An error for each deal with a jump of a whole factor between estimation and the last day.
 
     Dropping such a deal would choose the sample by its outcome, keeping a real split would swamp
     the mean: the analyst must say which it is.
     """
-    splits = {exchange: suspected_splits(panel) for exchange, panel in panels.items()}
+    splits = {exchange: suspected_splits(panel, limits) for exchange, panel in panels.items()}
     near = Window(options.estimation.end + 1, options.span.end)
     found = []
     for event in located_events(located):
@@ -134,6 +144,7 @@ def _estimation_verdict(
     row: int,
     panel: PricePanel,
     options: EventOptions,
+    limits: ScreenLimits,
 ) -> LedgerEntry | None:
     deal = event.deal
     observations = int(abnormal.observations[row])
@@ -153,74 +164,88 @@ def _estimation_verdict(
     at = event.position + np.arange(options.estimation.start, options.estimation.end + 1)
     raw = panel.returns[np.clip(at, 0, len(panel.sessions) - 1)[used], event.column]
     zero = float(np.mean(raw == 0))
-    if zero > ZERO_RETURNS_FLAG:
-        drop = zero > ZERO_RETURNS_DROP
+    if zero > limits.zero_returns_flag:
+        drop = zero > limits.zero_returns_drop
         return LedgerEntry(
             deal,
             "thin_trading",
             Action.DROPPED if drop else Action.FLAGGED,
             f"{zero:.0%} unchanged prices",
-            f"{ZERO_RETURNS_DROP if drop else ZERO_RETURNS_FLAG:.0%}",
+            f"{limits.zero_returns_drop if drop else limits.zero_returns_flag:.0%}",
         )
     return None
 
 
 def _gaps(
-    event: Located, abnormal: AbnormalReturns, row: int, masked: Booleans
+    event: Located, abnormal: AbnormalReturns, row: int, masked: Booleans, limits: ScreenLimits
 ) -> list[LedgerEntry]:
     """A flag when many sessions of the estimation window have no return of their own accord."""
     sessions = int((~masked[row]).sum())
     missing = sessions - int(abnormal.observations[row])
-    if missing <= GAPS_FLAG * sessions:
+    if missing <= limits.gaps_flag * sessions:
         return []
     value = f"{missing} of {sessions} sessions without a return"
-    threshold = f"{GAPS_FLAG:.0%}"
+    threshold = f"{limits.gaps_flag:.0%}"
     return [LedgerEntry(event.deal, "gaps_in_estimation", Action.FLAGGED, value, threshold)]
 
 
-def screen_event(abnormal: AbnormalReturns, headline: Window) -> tuple[Booleans, StageLedger]:
-    """Which events traded on every day of the headline window; flags on what follows it."""
+def screen_event(
+    abnormal: AbnormalReturns,
+    headline: Window,
+    located: pd.DataFrame,
+    panels: Mapping[str, PricePanel],
+    limits: ScreenLimits = DEFAULT_LIMITS,
+) -> tuple[Booleans, StageLedger]:
+    """Which events traded on every day of the headline window; flags on what follows it.
+
+    Args:
+        abnormal: N events, under the headline model.
+        headline: the window declared before looking.
+        located: the same events.
+        panels: exchange -> prices, simple returns.
+        limits: thresholds.
+    """
     keep = abnormal.complete(headline)
     entries: list[LedgerEntry] = []
-    traded = np.isfinite(abnormal.returns)
-    realised = abnormal.returns + abnormal.expected
-    for row, deal in enumerate(abnormal.deals):
+    for row, event in enumerate(located_events(located)):
         if not keep[row]:
-            missing = int((~traded[row, abnormal.columns(headline)]).sum())
-            entries.append(
-                LedgerEntry(
-                    deal,
-                    "event_missing",
-                    Action.DROPPED,
-                    f"{missing} sessions without a return",
-                    f"all of {headline.label}",
-                )
-            )
-            continue
-        last = int(np.flatnonzero(traded[row]).max())
-        in_history = int(np.flatnonzero(~np.isnat(abnormal.days[row])).max())
-        if last < in_history:
-            day = abnormal.span.start + last
-            entries.append(
-                LedgerEntry(
-                    deal,
-                    "delisted",
-                    Action.FLAGGED,
-                    f"last return on day {day:+d}",
-                    f"prices to day {abnormal.span.start + in_history:+d}",
-                )
-            )
-        if np.nanmax(np.abs(realised[row])) > LARGE_RETURN:
-            entries.append(
-                LedgerEntry(
-                    deal,
-                    "large_return",
-                    Action.FLAGGED,
-                    f"{np.nanmax(np.abs(realised[row])):.0%}",
-                    f"{LARGE_RETURN:.0%}",
-                )
-            )
+            entries.append(_event_missing(abnormal, row, headline))
+        else:
+            panel = panels[event.exchange]
+            entries += _ends_inside(event, panel, abnormal.span)
+            entries += _large_return(event, panel, abnormal.span, limits.large_return)
     return keep, StageLedger("headline window", len(abnormal.deals), tuple(entries))
+
+
+def _event_missing(abnormal: AbnormalReturns, row: int, headline: Window) -> LedgerEntry:
+    missing = int((~np.isfinite(abnormal.returns[row, abnormal.columns(headline)])).sum())
+    value = f"{missing} sessions without a return"
+    deal, threshold = abnormal.deals[row], f"all of {headline.label}"
+    return LedgerEntry(deal, "event_missing", Action.DROPPED, value, threshold)
+
+
+def _ends_inside(event: Located, panel: PricePanel, span: Window) -> list[LedgerEntry]:
+    """A flag when the security's prices end before the last of the days held, its listing's not."""
+    quoted = np.flatnonzero(np.isfinite(panel.close[:, event.column]))
+    last = int(quoted[-1]) - event.position
+    history = len(panel.sessions) - 1 - event.position
+    end = min(span.end, history)
+    if last >= end:
+        return []
+    value, threshold = f"last price on day {last:+d}", f"prices to day {end:+d}"
+    return [LedgerEntry(event.deal, "delisted", Action.FLAGGED, value, threshold)]
+
+
+def _large_return(
+    event: Located, panel: PricePanel, span: Window, limit: float
+) -> list[LedgerEntry]:
+    first = max(event.position + span.start, 0)
+    moves = np.abs(panel.returns[first : event.position + span.end + 1, event.column])
+    largest = float(np.fmax.reduce(moves))
+    if not largest > limit:
+        return []
+    value, threshold = f"{largest:.0%}", f"{limit:.0%}"
+    return [LedgerEntry(event.deal, "large_return", Action.FLAGGED, value, threshold)]
 
 
 def refuse_empty(kept: int, ledger: Ledger) -> None:

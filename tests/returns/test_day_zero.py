@@ -14,7 +14,7 @@ import pytest
 
 from pipeline.core.findings import InputProblem
 from pipeline.core.ledger import Action
-from pipeline.returns.day_zero import Timing, ledger_entry, place, sentence
+from pipeline.returns.day_zero import Timing, ledger_entry, place
 from pipeline.returns.sessions import CalendarChange, Sessions, changed, sessions_between
 
 NEW_YORK, LONDON, TOKYO = "America/New_York", "Europe/London", "Asia/Tokyo"
@@ -43,7 +43,7 @@ def placed(exchange: str, text: str, zone: str, cutoff: int = 0) -> tuple[str, T
     ("exchange", "text", "zone", "day", "timing"),
     [
         # New York: before the open, in the session, to the second of the close, after it.
-        ("XNYS", "2023-03-14T07:30", NEW_YORK, "2023-03-14", Timing.DURING),
+        ("XNYS", "2023-03-14T07:30", NEW_YORK, "2023-03-14", Timing.BEFORE_OPEN),
         ("XNYS", "2023-03-14T12:00", NEW_YORK, "2023-03-14", Timing.DURING),
         ("XNYS", "2023-03-14T16:00", NEW_YORK, "2023-03-14", Timing.DURING),
         ("XNYS", "2023-03-14T16:00:01", NEW_YORK, "2023-03-15", Timing.AFTER_CLOSE),
@@ -66,12 +66,12 @@ def placed(exchange: str, text: str, zone: str, cutoff: int = 0) -> tuple[str, T
         ("XTKS", "2024-11-01T15:10", TOKYO, "2024-11-05", Timing.AFTER_CLOSE),
         ("XTKS", "2024-11-06T15:10", TOKYO, "2024-11-06", Timing.DURING),
         # Storm Sandy shut New York for two days.
-        ("XNYS", "2012-10-29T10:00", NEW_YORK, "2012-10-31", Timing.CLOSED_DAY),
+        ("XNYS", "2012-10-29T10:00", NEW_YORK, "2012-10-31", Timing.CLOSED_ONCE),
         # One market's holiday: 4 July 2023 in New York only, 28 August 2023 in London only.
         ("XNYS", "2023-07-04T10:00", NEW_YORK, "2023-07-05", Timing.CLOSED_DAY),
         ("XLON", "2023-07-04T10:00", NEW_YORK, "2023-07-04", Timing.DURING),
         ("XLON", "2023-08-28T10:00", LONDON, "2023-08-29", Timing.CLOSED_DAY),
-        ("XNYS", "2023-08-28T10:00", LONDON, "2023-08-28", Timing.DURING),
+        ("XNYS", "2023-08-28T10:00", LONDON, "2023-08-28", Timing.BEFORE_OPEN),
     ],
 )
 def test_time_of_day(exchange: str, text: str, zone: str, day: str, timing: Timing) -> None:
@@ -82,7 +82,7 @@ def test_the_date_line_between_new_york_and_tokyo() -> None:
     """Monday 18:00 in New York is Tuesday 07:00 in Tokyo: Tuesday on both, at other closes."""
     text = "2023-05-15T18:00"
     assert placed("XNYS", text, NEW_YORK) == ("2023-05-16", Timing.AFTER_CLOSE)
-    assert placed("XTKS", text, NEW_YORK) == ("2023-05-16", Timing.DURING)
+    assert placed("XTKS", text, NEW_YORK) == ("2023-05-16", Timing.BEFORE_OPEN)
     tokyo, new_york = around("XTKS", "2023-05-16"), around("XNYS", "2023-05-16")
     closes = [
         item.closes[item.days == np.datetime64("2023-05-16")][0] for item in (tokyo, new_york)
@@ -137,6 +137,8 @@ def test_outside_the_sessions_known() -> None:
     instants = np.array([utc("2023-04-20T10:00", NEW_YORK), utc("2022-04-20T10:00", NEW_YORK)])
     found = place(instants, instants.astype("datetime64[D]"), sessions)
     assert found.position.tolist() == [len(sessions.days), 0]
+    assert found.closes[0] == ""
+    assert found.reasons[0].endswith("the sessions known end before one that could react")
 
 
 def test_the_whole_list_at_once_is_each_alone() -> None:
@@ -150,17 +152,83 @@ def test_the_whole_list_at_once_is_each_alone() -> None:
     assert list(found.timing) == [timing for _, timing in alone]
 
 
+SENTENCES = {
+    Timing.BEFORE_OPEN: (
+        "2023-03-14T07:30",
+        "Public 2023-03-14 07:30 (America/New_York), before XNYS opened at 09:30; the close of "
+        "2023-03-14 at 16:00 is the first to hold it",
+    ),
+    Timing.DURING: (
+        "2023-11-24T12:00",
+        "Public 2023-11-24 12:00 (America/New_York), while XNYS was open; the close of 2023-11-24 "
+        "at 13:00 is the first to hold it",
+    ),
+    Timing.CUT_OFF: (
+        "2023-03-14T15:50",
+        "Public 2023-03-14 15:50 (America/New_York), less than 15 minutes before XNYS closed at "
+        "16:00, so that close may not hold it whole; the close of 2023-03-15 at 16:00 is the first "
+        "to hold it",
+    ),
+    Timing.AFTER_CLOSE: (
+        "2023-11-22T18:05",
+        "Public 2023-11-22 18:05 (America/New_York), after XNYS had closed at 16:00; the close of "
+        "2023-11-24 at 13:00 is the first to hold it",
+    ),
+    Timing.CLOSED_DAY: (
+        "2023-11-23T11:00",
+        "Public 2023-11-23 11:00 (America/New_York), a weekend or holiday of XNYS; the close of "
+        "2023-11-24 at 13:00 is the first to hold it",
+    ),
+    Timing.CLOSED_ONCE: (
+        "2012-10-29T10:00",
+        "Public 2012-10-29 10:00 (America/New_York), a day on which XNYS stayed closed out of "
+        "turn; the close of 2012-10-31 at 16:00 is the first to hold it",
+    ),
+    Timing.DATE_ONLY: (
+        "2023-11-24",
+        "Public on 2023-11-24 at an unknown time; the close of 2023-11-24 at 13:00 may hold it, or "
+        "the close of the session after",
+    ),
+    Timing.DATE_ONLY_CLOSED: (
+        "2023-11-23",
+        "Public on 2023-11-23 at an unknown time, a day without trading on XNYS; the close of "
+        "2023-11-24 at 13:00 is the first to hold it",
+    ),
+}
+
+
 @pytest.mark.parametrize("timing", Timing)
 def test_every_timing_is_explained(timing: Timing) -> None:
-    day = np.datetime64("2023-03-14")
-    assert "2023-03-14" in sentence(timing, day)
-    note = ledger_entry("D1", timing, day)
+    """Stamp, zone, exchange, its open or close of that date, and the close of day zero."""
+    text, sentence = SENTENCES[timing]
+    instant = utc(text, NEW_YORK) if "T" in text else np.datetime64("NaT", "s")
+    dates = np.array([text[:10]], dtype="datetime64[D]")
+    found = place(np.array([instant]), dates, around("XNYS", text[:10]), cutoff_minutes=15)
+    assert found.timing == (timing,)
+    assert found.reasons == (sentence,)
+    assert found.stamps == (text.replace("T", " "),)
+    assert found.closes[0] in sentence.split("; ")[1]
+
+
+@pytest.mark.parametrize("timing", Timing)
+def test_what_the_ledger_says_of_a_timing(timing: Timing) -> None:
+    note = ledger_entry("D1", timing, np.datetime64("2023-03-14"))
     wanted = {
+        Timing.BEFORE_OPEN: None,
         Timing.DURING: None,
         Timing.DATE_ONLY: ("time_unknown", Action.FLAGGED),
     }.get(timing, ("moved_to_session", Action.CHANGED))
     assert (note and (note.rule, note.action)) == wanted
     assert note is None or (note.deal == "D1" and "2023-03-14" in note.value)
+
+
+def test_a_closure_the_study_names_is_out_of_turn() -> None:
+    known = sessions_between("XLON", "2023-03-01", "2023-03-31")
+    told = changed(known, CalendarChange(closed=(date(2023, 3, 14),)))
+    instant = np.array([utc("2023-03-14T10:00", LONDON)])
+    found = place(instant, np.array(["2023-03-14"], dtype="datetime64[D]"), told)
+    assert found.timing == (Timing.CLOSED_ONCE,)
+    assert str(told.days[found.position[0]]) == "2023-03-15"
 
 
 def test_an_exchange_without_a_calendar() -> None:

@@ -18,7 +18,6 @@ from pipeline.core.prices import Booleans, PricePanel
 from pipeline.core.window import Window
 from pipeline.returns.events import (
     EventOptions,
-    keep_first_of_overlapping,
     locate,
     locate_candidates,
     located_events,
@@ -26,6 +25,7 @@ from pipeline.returns.events import (
 )
 from pipeline.returns.expected import market_model
 from pipeline.returns.measure import measure
+from pipeline.returns.repeats import settle_repeats
 from pipeline.returns.screens import jumps_near_events, screen_estimation, screen_event
 from pipeline.returns.sessions import Sessions, sessions_between
 from tests.returns.panels import panel_of_closes
@@ -96,9 +96,9 @@ def test_deals_are_placed_and_losses_are_named(panel: PricePanel, calendar: Sess
     assert located["deal_id"].tolist() == ["D1", "D5", "D6"]
     assert located["position"].tolist() == [200, last - 1, 2]
     assert located["column"].tolist() == [1, 0, 0]
-    assert located["timing"].tolist() == ["before the close"] * 3
+    assert located["timing"].tolist() == ["during the session"] * 3
     assert (located["day_zero"].to_numpy() == panel.sessions[[200, last - 1, 2]]).all()
-    assert all("so that close holds the reaction" in text for text in located["day_zero_reason"])
+    assert all("while XLON was open" in text for text in located["day_zero_reason"])
     assert said(ledger) == [
         ("D2", "no_prices", Action.DROPPED),
         ("D3", "outside_history", Action.DROPPED),
@@ -108,6 +108,18 @@ def test_deals_are_placed_and_losses_are_named(panel: PricePanel, calendar: Sess
     assert ledger.rows_in == 7
     assert ledger.rows_kept == len(located)
     assert [event.deal for event in located_events(located)] == ["D1", "D5", "D6"]
+
+
+def test_a_date_beyond_the_calendar_leaves_with_an_entry(
+    panel: PricePanel, calendar: Sessions
+) -> None:
+    table = deals(calendar, ("D1", "A", 200), ("D2", "B", 200), ("D3", "C", 200))
+    table.loc[0, "announced_utc"] += pd.Timedelta(days=3000)
+    table.loc[1, "announced_utc"] = pd.NaT
+    table.loc[1, "announced_date"] = pd.Timestamp("2031-05-05")
+    located, ledger = found(table, panel, calendar)
+    assert located["deal_id"].tolist() == ["D3"]
+    assert said(ledger) == [(deal, "outside_history", Action.DROPPED) for deal in ("D1", "D2")]
 
 
 def test_two_exchanges_keep_the_order_of_the_list(calendar: Sessions) -> None:
@@ -136,20 +148,6 @@ def test_moved_and_dateless_announcements_are_noted(panel: PricePanel, calendar:
     ]
 
 
-@pytest.mark.parametrize(
-    ("sessions_apart", "flagged"), [(-2, False), (-1, True), (0, True), (1, True), (2, False)]
-)
-def test_an_earnings_release_nearby(
-    sessions_apart: int, flagged: bool, panel: PricePanel, calendar: Sessions
-) -> None:
-    table = deals(calendar, ("D1", "A", 100))
-    table["earnings_release"] = calendar.days[[100 + sessions_apart]].astype("datetime64[s]")
-    located, ledger = found(table, panel, calendar)
-    assert len(located) == 1
-    wanted = [("D1", "confounded", Action.FLAGGED)] if flagged else []
-    assert said(ledger) == wanted
-
-
 @pytest.mark.parametrize(("apart", "kept"), [(2, ["D1", "D4"]), (3, ["D1", "D2", "D4"])])
 def test_the_first_of_two_deals_whose_windows_meet(
     apart: int, kept: list[str], panel: PricePanel, calendar: Sessions
@@ -157,7 +155,7 @@ def test_the_first_of_two_deals_whose_windows_meet(
     """Windows of three sessions meet when day zeros are fewer than three apart."""
     table = deals(calendar, ("D2", "A", 200 + apart), ("D4", "B", 201), ("D1", "A", 200))
     located, _ = found(table, panel, calendar)
-    left, ledger = keep_first_of_overlapping(located, HEADLINE)
+    left, ledger = settle_repeats(located, HEADLINE)
     assert sorted(left["deal_id"]) == kept
     assert ledger.rows_kept == len(left)
     if apart == 2:
@@ -172,7 +170,7 @@ def test_a_chain_of_deals_is_measured_from_the_last_one_kept(
     """The second falls with the first; the third meets the second alone and stays."""
     table = deals(calendar, ("D1", "A", 200), ("D2", "A", 202), ("D3", "A", 204))
     located, _ = found(table, panel, calendar)
-    left, _ = keep_first_of_overlapping(located, HEADLINE)
+    left, _ = settle_repeats(located, HEADLINE)
     assert left["deal_id"].tolist() == ["D1", "D3"]
 
 
@@ -234,10 +232,11 @@ def test_estimation_windows_that_will_not_do(panel: PricePanel, calendar: Sessio
         ("DB", "suspected_split", Action.DROPPED),
         ("DC", "thin_trading", Action.DROPPED),
         ("DD", "thin_trading", Action.FLAGGED),
+        ("DD", "stale_price", Action.FLAGGED),
     ]
     values = [entry.value for entry in ledger.entries]
     assert values == ["49 returns", str(panel.sessions[150]), "69% unchanged prices",
-                      "24% unchanged prices"]  # fmt: skip
+                      "24% unchanged prices", "one price for 25 sessions"]  # fmt: skip
     assert ledger.rows_kept == keep.sum()
 
 
@@ -288,10 +287,11 @@ def test_the_headline_window_needs_all_its_days(panel: PricePanel, calendar: Ses
     close[201, 0] = np.nan  # a day of the window, and the return after it
     close[205:, 1] = np.nan  # the share stops trading
     close[203:, 2] *= 1.7  # a jump that is no whole factor
-    _, _, abnormal = screened(
-        with_closes(panel, close), calendar, *[(f"D{code}", code, 200) for code in "ABCD"]
-    )
-    keep, ledger = screen_event(abnormal, HEADLINE)
+    rows = [(f"D{code}", code, 200) for code in "ABCD"]
+    panels = {"XLON": with_closes(panel, close)}
+    _, _, abnormal = screened(panels["XLON"], calendar, *rows)
+    located, _ = locate(deals(calendar, *rows), panels, {"XLON": calendar}, OPTIONS)
+    keep, ledger = screen_event(abnormal, HEADLINE, located, panels)
     assert keep.tolist() == [False, True, True, True]
     assert said(ledger) == [
         ("DA", "event_missing", Action.DROPPED),
@@ -299,7 +299,7 @@ def test_the_headline_window_needs_all_its_days(panel: PricePanel, calendar: Ses
         ("DC", "large_return", Action.FLAGGED),
     ]
     assert ledger.entries[0].value == "1 sessions without a return"
-    assert ledger.entries[1].value == "last return on day +4"
+    assert ledger.entries[1].value == "last price on day +4"
     assert ledger.rows_kept == keep.sum()
 
 
@@ -316,7 +316,7 @@ def test_history_that_ends_is_no_delisting(panel: PricePanel, calendar: Sessions
     abnormal = measure(
         "market_model", market_model, located, mask, {"XLON": cut}, OPTIONS.estimation, OPTIONS.span
     )
-    keep, ledger = screen_event(abnormal, HEADLINE)
+    keep, ledger = screen_event(abnormal, HEADLINE, located, {"XLON": cut})
     assert keep.all()
     assert not ledger.entries
 

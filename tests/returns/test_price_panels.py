@@ -9,7 +9,8 @@ import pytest
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import PricePanel
-from pipeline.returns.panel import build_panels, simple_returns, suspected_splits
+from pipeline.returns.jumps import suspected_splits
+from pipeline.returns.panel import build_panels, simple_returns
 from pipeline.returns.sessions import sessions_between
 from tests.returns.panels import panel_of_closes, weekdays
 
