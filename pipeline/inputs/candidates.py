@@ -23,6 +23,12 @@ def read_candidates(
         Column("deal_id", "text", why="the year's first deal of the company, empty if none"),
     ]
     columns = fixed + extra_columns(fixed, wanted.candidate_numbers, wanted.candidate_texts)
+    named_already = {column.name for column in columns}
+    columns += [
+        Column(name, "number", optional=True)
+        for name in wanted.candidate_extras
+        if name not in named_already
+    ]
     table, findings = typed(read_table(source), source, columns, date_format)
     years = table[table.duplicated(["security", "year"], keep=False)]
     named = table[table["deal_id"] != ""]

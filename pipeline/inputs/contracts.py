@@ -12,6 +12,7 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
+from pipeline.inputs.date_formats import SERIALS, Cell, date_findings, serial_day, serial_doubt
 from pipeline.inputs.files import ROW, Source
 
 MISSING_WORDS = {"", "n/a", "na", "#n/a", "nan", "none", "null", "-", ".", "nat"}
@@ -19,6 +20,8 @@ ERROR_WORDS = {"#DIV/0!", "#REF!", "#VALUE!", "#NAME?", "#NUM!", "#NULL!", "#SPI
 YES_OR_NO = {"true": 1.0, "yes": 1.0, "false": 0.0, "no": 0.0}
 ISO = re.compile(r"\d{4}-\d{2}-\d{2}([T ]\d{2}:\d{2}(:\d{2}(\.\d+)?)?(Z|[+-]\d{2}:?\d{2})?)?")
 EARLIEST, LATEST = pd.Timestamp("1950-01-01"), pd.Timestamp("2100-01-01")
+# What a data base writes where it has no date, and no exchange ever opened on: common practice.
+FILL_VALUES = [pd.Timestamp("1970-01-01")]
 EXAMPLES = 5
 DAY: Final = "datetime64[s]"
 
@@ -63,12 +66,17 @@ def apply_contract(
         raw = raw.mask(broken) if broken.any() else raw
         values, bad = _read(raw, column.kind, date_format)
         typed[column.name] = values
-        findings += _bad_cells(raw[bad], table.loc[bad, ROW], source, column)
+        if column.kind == "date":
+            findings += _bad_dates(raw, values, bad, table[ROW], source, column)
+            named = source.columns.get(column.name, column.name)
+            findings += serial_doubt(values, date_format, source.file, named)
+        else:
+            findings += _bad_cells(raw[bad], table.loc[bad, ROW], source, column)
         if column.filled:
             empty = is_missing(raw) & ~broken
             findings += _empty_cells(table.loc[empty, ROW], source, column)
         if column.kind == "date":
-            wrong = values.notna() & ~values.between(EARLIEST, LATEST)
+            wrong = values.notna() & (~values.between(EARLIEST, LATEST) | values.isin(FILL_VALUES))
             findings += _out_of_range(raw[wrong], table.loc[wrong, ROW], source, column)
     frame = pd.DataFrame(typed, index=table.index)
     frame[ROW] = table[ROW]
@@ -128,8 +136,9 @@ def read_dates(raw: pd.Series, date_format: str = "") -> tuple[pd.Series, pd.Ser
     """Calendar dates, and which cells are none.
 
     A cell must be a date already, or text in ISO 8601 or the declared format; a time of day is
-    left off. Bare numbers are refused: a spreadsheet's serial day has two origins, and nothing
-    tells which. So are stored instants other than midnight UTC, whose date depends on a zone.
+    left off. Bare numbers are refused unless declared ('excel', 'excel 1904'): a spreadsheet's
+    serial day has two origins, and nothing tells which. So are stored instants other than
+    midnight UTC, whose date depends on a zone.
     """
     if pd.api.types.is_datetime64_any_dtype(raw):
         return _stored_dates(raw)
@@ -137,6 +146,10 @@ def read_dates(raw: pd.Series, date_format: str = "") -> tuple[pd.Series, pd.Ser
     texts = raw.where(~missing).map(_date_text, na_action="ignore").astype(object)
     plain = texts.where(texts.str.fullmatch(ISO, na=False).astype(bool)).str.slice(0, 10)
     values = pd.to_datetime(plain, format="%Y-%m-%d", errors="coerce")
+    if date_format in SERIALS:
+        days = raw.where(~missing).map(lambda cell: serial_day(cell, date_format))
+        values = values.fillna(pd.to_datetime(days.astype(object), errors="coerce"))
+        return values.dt.normalize().astype(DAY), values.isna() & ~missing
     for declared in (date_part(date_format), date_format):
         if declared and "%z" not in declared:
             values = pd.to_datetime(texts, format=declared, errors="coerce").fillna(values)
@@ -169,10 +182,9 @@ EXPECTED = {
     "number": "a number with a decimal point, or an empty cell",
     "date": "a date as YYYY-MM-DD",
 }
-RULE = {"number": "unparseable_number", "date": "unparseable_date"}
+RULE = {"number": "unparseable_number"}
 REMEDY = {
     "number": "Correct the cells; leave them empty if the value is not known.",
-    "date": "Write YYYY-MM-DD, or declare your format in inputs.date_format.",
 }
 
 
@@ -238,6 +250,22 @@ def _bad_cells(cells: pd.Series, rows: pd.Series, source: Source, column: Column
             column=source.columns.get(column.name, column.name),
         )
     ]
+
+
+def _bad_dates(
+    raw: pd.Series,
+    values: pd.Series,
+    bad: pd.Series,
+    rows: pd.Series,
+    source: Source,
+    column: Column,
+) -> list[Finding]:
+    """What the cells of a column of dates hold that could not be read."""
+    if not bad.any():
+        return []
+    cells = [Cell(value, int(row)) for value, row in zip(raw[bad], rows[bad], strict=True)]
+    named = source.columns.get(column.name, column.name)
+    return date_findings(cells, raw[values.notna()], source.file, named, EXPECTED["date"])
 
 
 def _error_cells(

@@ -10,7 +10,16 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import DAY, EARLIEST, EXAMPLES, date_part, is_missing, row_list
+from pipeline.inputs.contracts import (
+    DAY,
+    EARLIEST,
+    EXAMPLES,
+    FILL_VALUES,
+    date_part,
+    is_missing,
+    row_list,
+)
+from pipeline.inputs.date_formats import Cell, date_findings, serial_day, serial_doubt
 from pipeline.inputs.files import ROW, Source
 
 ISO_DATE = re.compile(r"^\d{4}-\d{2}-\d{2}$")
@@ -61,15 +70,16 @@ def read_moment(cell: object, zone: str, date_format: str = "") -> datetime | da
     Args:
         cell: as read from the file.
         zone: IANA name for times without an offset; '' if none is known.
-        date_format: the format declared in the study, with or without its time of day; it is tried
-            before ISO 8601.
+        date_format: the format declared in the study, with or without its time of day, or that of
+            a spreadsheet's serial days; it is tried before ISO 8601.
     """
     moment = _parse(cell, date_format)
     if isinstance(moment, Refusal):
         return moment
     # A day of grace: it may already be tomorrow where the deal was announced.
     tomorrow = pd.Timestamp.now() + pd.Timedelta(days=1)
-    if not EARLIEST <= pd.Timestamp(moment.replace(tzinfo=None)) <= tomorrow:
+    written = pd.Timestamp(moment.replace(tzinfo=None))
+    if not EARLIEST <= written <= tomorrow or written.normalize() in FILL_VALUES:
         return OUT_OF_RANGE
     text = str(cell).strip()
     bare = ISO_DATE.match(text) or (
@@ -91,6 +101,9 @@ def _parse(cell: object, date_format: str) -> datetime | Refusal:
         return cell
     if isinstance(cell, date):
         return datetime(cell.year, cell.month, cell.day)
+    counted = serial_day(cell, date_format)
+    if counted is not None:
+        return counted
     text = str(cell).strip()
     for declared in (date_format, date_part(date_format)):
         try:
@@ -120,23 +133,29 @@ def _localise(moment: datetime, zone: str) -> datetime | Refusal:
 
 
 def read_moments(
-    deals: pd.DataFrame, source: Source, default_zone: str, date_format: str
+    deals: pd.DataFrame,
+    source: Source,
+    default_zone: str,
+    date_format: str,
+    column: str = "announced_at",
 ) -> tuple[pd.DataFrame, list[Finding]]:
     """The deals with ``announced_utc`` (NaT when only a date is known) and ``announced_date``.
 
     ``announced_date`` is the date as written, in the announcement's own zone when it has one.
     A column of nothing but midnights UTC holds dates. Findings name each row that gives no
-    moment, empty cells apart.
+    moment, empty cells apart. Another ``column`` gives columns named after its own stem:
+    ``rumoured_at`` makes ``rumoured_utc`` and ``rumoured_date``.
     """
+    stem = column.removesuffix("_at")
     found: list[datetime | date | None] = []
     refused: dict[Refusal, list[tuple[object, str, int]]] = {}
-    rows = zip(deals["announced_at"], deals["timestamp_zone"], deals[ROW], strict=True)
+    rows = zip(deals[column], deals["timestamp_zone"], deals[ROW], strict=True)
     for cell, own_zone, row in rows:
         moment = read_moment(cell, own_zone or default_zone, date_format)
         if isinstance(moment, Refusal):
             found.append(None)
             if not is_missing(pd.Series([cell], dtype=object)).any():
-                refused.setdefault(moment, []).append((cell, own_zone, int(row)))
+                refused.setdefault(moment, []).append((cell, own_zone or default_zone, int(row)))
         else:
             found.append(moment)
     timed = [moment for moment in found if isinstance(moment, datetime)]
@@ -144,16 +163,22 @@ def read_moments(
     instants = [m if isinstance(m, datetime) and not midnights else None for m in found]
     dates = [m.date() if isinstance(m, datetime) else m for m in found]
     utc = pd.to_datetime(pd.Series(instants, index=deals.index), utc=True)
-    moments = deals.assign(
-        announced_utc=utc.dt.as_unit("s"),
-        announced_date=pd.Series(dates, index=deals.index, dtype=DAY),
-    )
-    return moments, [_finding(why, cells, source) for why, cells in refused.items()]
+    written = pd.Series(dates, index=deals.index, dtype=DAY)
+    moments = deals.assign(**{f"{stem}_utc": utc.dt.as_unit("s"), f"{stem}_date": written})
+    named = source.columns.get(column, column)
+    findings = serial_doubt(written, date_format, source.file, named)
+    unread = [Cell(cell, row) for cell, _, row in refused.pop(BAD_FORMAT, [])]
+    good = deals[column][written.notna()]
+    findings += date_findings(unread, good, source.file, named, BAD_FORMAT.expected)
+    return moments, findings + [_finding(*item, source, named) for item in refused.items()]
 
 
-def _finding(refusal: Refusal, cells: list[tuple[object, str, int]], source: Source) -> Finding:
+def _finding(
+    refusal: Refusal, cells: list[tuple[object, str, int]], source: Source, column: str
+) -> Finding:
     """One finding for all cells refused for one reason, the first few by name."""
-    named = [f"'{cell}'" + (f" in zone '{zone}'" if zone else "") for cell, zone, _ in cells]
+    timed = refusal in (IMPOSSIBLE, BAD_ZONE)
+    named = [f"'{cell}'" + (f" in zone '{zone}'" if timed else "") for cell, zone, _ in cells]
     got = ", ".join(named[:EXAMPLES]) + (" and more" if len(named) > EXAMPLES else "")
     return Finding(
         refusal.rule,
@@ -163,5 +188,5 @@ def _finding(refusal: Refusal, cells: list[tuple[object, str, int]], source: Sou
         expected=refusal.expected,
         remedy=refusal.remedy,
         row=row_list(pd.Series([row for _, _, row in cells])),
-        column=source.columns.get("announced_at", "announced_at"),
+        column=column,
     )

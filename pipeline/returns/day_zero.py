@@ -1,4 +1,4 @@
-"""Which session could first react to an announcement."""
+"""Which session could first react to an announcement, and why, in words."""
 
 from __future__ import annotations
 
@@ -9,28 +9,41 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.ledger import Action, LedgerEntry
-from pipeline.core.prices import Dates, Integers
+from pipeline.core.prices import Booleans, Dates, Integers
 from pipeline.returns.sessions import Sessions
 
 
 class Timing(StrEnum):
     """How an announcement lies to the sessions."""
 
-    DURING = "before the close"
+    BEFORE_OPEN = "before the open"
+    DURING = "during the session"
+    CUT_OFF = "too near the close"
     AFTER_CLOSE = "after the close"
     CLOSED_DAY = "on a day without trading"
+    CLOSED_ONCE = "on a day closed out of turn"
     DATE_ONLY = "date only"
     DATE_ONLY_CLOSED = "date only, on a day without trading"
 
 
+# Blanks: the stamp, the exchange, its open and close on the stamp's date, the cut-off in minutes.
 WORDS = {
-    Timing.DURING: "public before the close of {day}, so that close holds the reaction",
-    Timing.AFTER_CLOSE: "public after the close of the session before, so {day} reacts first",
-    Timing.CLOSED_DAY: "public while the exchange was closed, so {day} reacts first",
-    Timing.DATE_ONLY: "only the date is known; {day} is taken, the session after may react too",
-    Timing.DATE_ONLY_CLOSED: "only the date is known and it is no session; {day} reacts first",
+    Timing.BEFORE_OPEN: "Public {stamp}, before {exchange} opened at {opened}",
+    Timing.DURING: "Public {stamp}, while {exchange} was open",
+    Timing.CUT_OFF: "Public {stamp}, less than {cutoff} minutes before {exchange} closed at "
+    "{closed}, so that close may not hold it whole",
+    Timing.AFTER_CLOSE: "Public {stamp}, after {exchange} had closed at {closed}",
+    Timing.CLOSED_DAY: "Public {stamp}, a weekend or holiday of {exchange}",
+    Timing.CLOSED_ONCE: "Public {stamp}, a day on which {exchange} stayed closed out of turn",
+    Timing.DATE_ONLY: "Public {stamp} at an unknown time",
+    Timing.DATE_ONLY_CLOSED: "Public {stamp} at an unknown time, a day without trading on "
+    "{exchange}",
 }
-MOVED = {Timing.AFTER_CLOSE, Timing.CLOSED_DAY, Timing.DATE_ONLY_CLOSED}
+FIRST = "; the close of {day} at {close} is the first to hold it"
+EITHER = "; the close of {day} at {close} may hold it, or the close of the session after"
+BEYOND = "; the sessions known end before one that could react"
+MOVED = {Timing.CUT_OFF, Timing.AFTER_CLOSE, Timing.CLOSED_DAY, Timing.CLOSED_ONCE,
+         Timing.DATE_ONLY_CLOSED}  # fmt: skip
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -40,10 +53,16 @@ class DayZero:
     Attributes:
         position: (N,) index into the sessions; T when the sessions end before it.
         timing: N reasons.
+        stamps: N announcements on the exchange's clock, or dates alone.
+        closes: N closing times of day zero on that clock; '' when the sessions end before it.
+        reasons: N sentences without their full stop.
     """
 
     position: Integers
     timing: tuple[Timing, ...]
+    stamps: tuple[str, ...]
+    closes: tuple[str, ...]
+    reasons: tuple[str, ...]
 
 
 def place(instants: Dates, dates: Dates, sessions: Sessions, cutoff_minutes: int = 0) -> DayZero:
@@ -67,33 +86,92 @@ def place(instants: Dates, dates: Dates, sessions: Sessions, cutoff_minutes: int
         np.searchsorted(limits, np.where(known, instants, limits[:1]), side="left"),
         np.searchsorted(sessions.days, dates, side="left"),
     ).astype(np.int64)
-    local = _local_dates(instants, dates, known, sessions.zone)
-    day_of = np.append(sessions.days, np.datetime64("NaT"))[position]
-    is_session = np.isin(local, sessions.days)
-    timing = tuple(
-        _reason(bool(k), bool(s), bool(same))
-        for k, s, same in zip(known, is_session, local == day_of, strict=True)
+    clock = _local(instants, sessions.zone)
+    local = np.where(known, clock.astype("datetime64[D]"), dates)
+    timing = _timings(instants, known, local, position, sessions)
+    stamps = _stamps(clock, known, local)
+    closes = [*_clock_times(sessions.closes, sessions.zone), ""]
+    own = tuple(closes[at] for at in position)
+    reasons = _reasons(timing, stamps, local, position, sessions, closes, cutoff_minutes)
+    return DayZero(position, timing, stamps, own, reasons)
+
+
+def _local(instants: Dates, zone: str) -> Dates:
+    """UTC instants as wall-clock times of a zone."""
+    stamps = pd.DatetimeIndex(instants.astype("datetime64[s]")).tz_localize("UTC").tz_convert(zone)
+    return np.asarray(stamps.tz_localize(None).to_numpy().astype("datetime64[s]"))
+
+
+def _clock_times(instants: Dates, zone: str) -> list[str]:
+    return [text[11:16] for text in np.datetime_as_string(_local(instants, zone), unit="m")]
+
+
+def _stamps(clock: Dates, known: Booleans, local: Dates) -> tuple[str, ...]:
+    minutes = np.datetime_as_string(clock, unit="m")
+    days = np.datetime_as_string(local, unit="D")
+    return tuple(
+        minute.replace("T", " ") if k else str(day)
+        for minute, day, k in zip(minutes, days, known, strict=True)
     )
-    return DayZero(position, timing)
 
 
-def _local_dates(instants: Dates, dates: Dates, known: np.ndarray, zone: str) -> Dates:
-    stamps = pd.DatetimeIndex(instants.astype("datetime64[ns]")).tz_localize("UTC").tz_convert(zone)
-    local = stamps.tz_localize(None).to_numpy().astype("datetime64[D]")
-    return np.where(known, local, dates)
+def _timings(
+    instants: Dates, known: Booleans, local: Dates, position: Integers, sessions: Sessions
+) -> tuple[Timing, ...]:
+    at = np.minimum(np.searchsorted(sessions.days, local), len(sessions.days) - 1)
+    is_session = sessions.days[at] == local
+    same = np.append(sessions.days, np.datetime64("NaT"))[position] == local
+    early = instants < sessions.opens[at]
+    late = instants > sessions.closes[at]
+    once = np.isin(local, sessions.unplanned)
+    return tuple(
+        _reason(*map(bool, facts))
+        for facts in zip(known, is_session, same, early, late, once, strict=True)
+    )
 
 
-def _reason(time_known: bool, is_session: bool, same_day: bool) -> Timing:
+def _reason(
+    time_known: bool, is_session: bool, same_day: bool, early: bool, late: bool, once: bool
+) -> Timing:
     if not time_known:
         return Timing.DATE_ONLY if is_session else Timing.DATE_ONLY_CLOSED
+    if not is_session:
+        return Timing.CLOSED_ONCE if once else Timing.CLOSED_DAY
     if same_day:
-        return Timing.DURING
-    return Timing.AFTER_CLOSE if is_session else Timing.CLOSED_DAY
+        return Timing.BEFORE_OPEN if early else Timing.DURING
+    return Timing.AFTER_CLOSE if late else Timing.CUT_OFF
 
 
-def sentence(timing: Timing, day: np.datetime64) -> str:
-    """Why ``day`` is day zero, in one sentence."""
-    return WORDS[timing].format(day=day)
+def _reasons(
+    timing: tuple[Timing, ...],
+    stamps: tuple[str, ...],
+    local: Dates,
+    position: Integers,
+    sessions: Sessions,
+    closes: list[str],
+    cutoff_minutes: int,
+) -> tuple[str, ...]:
+    """Why each day zero is day zero."""
+    opens = _clock_times(sessions.opens, sessions.zone)
+    days = [*map(str, sessions.days), ""]
+    at = np.minimum(np.searchsorted(sessions.days, local), len(sessions.days) - 1)
+    found = []
+    for kind, stamp, own, zero in zip(timing, stamps, at, position, strict=True):
+        dated = kind in (Timing.DATE_ONLY, Timing.DATE_ONLY_CLOSED)
+        end = EITHER if kind is Timing.DATE_ONLY else FIRST if closes[zero] else BEYOND
+        sentence = WORDS[kind] + end
+        found.append(
+            sentence.format(
+                stamp=f"on {stamp}" if dated else f"{stamp} ({sessions.zone})",
+                exchange=sessions.exchange,
+                opened=opens[own],
+                closed=closes[own],
+                cutoff=cutoff_minutes,
+                day=days[zero],
+                close=closes[zero],
+            )
+        )
+    return tuple(found)
 
 
 def ledger_entry(deal: str, timing: Timing, day: np.datetime64) -> LedgerEntry | None:

@@ -9,9 +9,9 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
-from pipeline.core.prices import Booleans, PricePanel
+from pipeline.core.prices import Booleans, Integers, PricePanel
 from pipeline.core.window import Window
-from pipeline.returns.day_zero import ledger_entry, place, sentence
+from pipeline.returns.day_zero import DayZero, ledger_entry, place
 from pipeline.returns.sessions import Sessions
 
 
@@ -27,11 +27,15 @@ class EventOptions:
     mask_sessions: int
     confounding_days: int
     real_jumps: frozenset[str] = frozenset()
+    confounding: str = "flag"
+    repeats: str = "keep_first"
+    earliest: bool = False
+    longest_halt: int = 10
 
 
 @dataclass(frozen=True, slots=True)
 class Located:
-    """One event in its exchange's panel: the security's column, the session of day zero."""
+    """One event in its exchange's panel: the column of its code there, the session of day zero."""
 
     deal: str
     security: str
@@ -42,13 +46,21 @@ class Located:
 
 def located_events(frame: pd.DataFrame) -> list[Located]:
     """The rows of a located deal list as values."""
-    names = ("deal_id", "security", "exchange")
+    names = ("deal_id", code_column(frame), "exchange")
     texts = [frame[name].astype(str).tolist() for name in names]
     numbers = [frame[name].astype(int).tolist() for name in ("column", "position")]
     return [
         Located(deal, security, exchange, column, position)
         for deal, security, exchange, column, position in zip(*texts, *numbers, strict=True)
     ]
+
+
+def code_column(frame: pd.DataFrame) -> str:
+    """The column that holds each row's code in the price file.
+
+    ``line`` where companies have several listings and one was chosen, else ``security``.
+    """
+    return "line" if "line" in frame else "security"
 
 
 def locate(
@@ -60,12 +72,14 @@ def locate(
     """Place every deal on its exchange's sessions and its security's column.
 
     Args:
-        deals: deal_id, security, exchange, announced_utc, announced_date, earnings_release.
+        deals: deal_id, security (and ``line``, if listings were chosen), exchange, announced_utc,
+            announced_date.
 
     Returns:
         The deals kept, in the order given, with ``column``, ``position`` (session of day zero),
-        ``day_zero``, ``timing`` and ``day_zero_reason``; and the stage's ledger. A deal leaves
-        if its security has no prices or its headline window is outside the price history.
+        ``day_zero``, ``day_zero_close``, ``announced_local`` (both on the exchange's clock),
+        ``timing`` and ``day_zero_reason``; and the stage's ledger. A deal leaves if its security
+        has no prices or its headline window is outside the price history.
     """
     entries: list[LedgerEntry] = []
     parts: list[pd.DataFrame] = []
@@ -77,20 +91,14 @@ def locate(
             sessions,
             options.cutoff_minutes,
         )
-        columns = {code: at for at, code in enumerate(panel.securities)}
-        column = own["security"].map(columns).fillna(-1).to_numpy().astype(np.int64)
+        codes = own[code_column(deals)]
+        column = _columns(codes, panel)
         outside = (placed.position + options.headline.start < 1) | (
             placed.position + options.headline.end >= len(panel.sessions)
         )
         day_zero = np.append(sessions.days, np.datetime64("NaT"))[placed.position]
-        located = own.assign(
-            column=column,
-            position=placed.position,
-            day_zero=day_zero,
-            timing=[str(timing) for timing in placed.timing],
-            day_zero_reason=[sentence(t, d) for t, d in zip(placed.timing, day_zero, strict=True)],
-        )
-        entries += _drops(located["deal_id"], column < 0, "no_prices", own["security"])
+        located = _placed(own, column, placed, day_zero)
+        entries += _drops(located["deal_id"], column < 0, "no_prices", codes)
         entries += _drops(
             located["deal_id"],
             outside & (column >= 0),
@@ -107,9 +115,28 @@ def locate(
             if keep
         )
         entries += [entry for entry in moved if entry is not None]
-        entries += _confounded(located[kept], panel, options.confounding_days)
         parts.append(located[kept])
     return pd.concat(parts).sort_index(), StageLedger("day zero", len(deals), tuple(entries))
+
+
+def _columns(codes: pd.Series, panel: PricePanel) -> Integers:
+    """(n,) places of codes in a panel; -1 for one without prices."""
+    columns = {code: at for at, code in enumerate(panel.securities)}
+    return np.asarray(codes.map(columns).fillna(-1).to_numpy().astype(np.int64))
+
+
+def _placed(
+    own: pd.DataFrame, column: Integers, placed: DayZero, day_zero: np.ndarray
+) -> pd.DataFrame:
+    return own.assign(
+        column=column,
+        position=placed.position,
+        day_zero=day_zero,
+        day_zero_close=list(placed.closes),
+        announced_local=list(placed.stamps),
+        timing=[str(timing) for timing in placed.timing],
+        day_zero_reason=list(placed.reasons),
+    )
 
 
 def _drops(
@@ -124,47 +151,6 @@ def _drops(
         for deal, out, value in zip(deals, which, values, strict=True)
         if out
     ]
-
-
-def _confounded(located: pd.DataFrame, panel: PricePanel, days: int) -> list[LedgerEntry]:
-    release = located["earnings_release"].to_numpy().astype("datetime64[D]")
-    known = ~np.isnat(release)
-    at = np.searchsorted(panel.sessions, np.where(known, release, panel.sessions[0]))
-    distance = at - located["position"].to_numpy()
-    near = known & (np.abs(distance) <= days)
-    return [
-        LedgerEntry(
-            str(deal), "confounded", Action.FLAGGED, f"{gap:+d} sessions", f"{days} sessions"
-        )
-        for deal, gap, flag in zip(located["deal_id"], distance, near, strict=True)
-        if flag
-    ]
-
-
-def keep_first_of_overlapping(
-    located: pd.DataFrame, headline: Window
-) -> tuple[pd.DataFrame, StageLedger]:
-    """Keep the first of a company's deals whose headline windows share a session."""
-    order = located.sort_values(["security", "position", "deal_id"])
-    keep, entries = [], []
-    last: tuple[str, int, str] = ("", 0, "")
-    for index, security, position, deal in order[["security", "position", "deal_id"]].itertuples():
-        if security == last[0] and position - last[1] < len(headline):
-            value = f"{position - last[1]} sessions after {last[2]}"
-            entries.append(
-                LedgerEntry(
-                    str(deal),
-                    "overlapping_event",
-                    Action.DROPPED,
-                    value,
-                    f"{len(headline)} sessions",
-                )
-            )
-            continue
-        keep.append(index)
-        last = (str(security), int(position), str(deal))
-    kept = located.loc[sorted(keep)]
-    return kept, StageLedger("repeated deals", len(located), tuple(entries))
 
 
 def masked_sessions(
@@ -186,11 +172,11 @@ def locate_candidates(candidates: pd.DataFrame, panels: Mapping[str, PricePanel]
     """The candidates with ``column`` (-1 without prices) and ``position`` of their date."""
     column = np.full(len(candidates), -1, dtype=np.int64)
     position = np.zeros(len(candidates), dtype=np.int64)
+    codes = candidates[code_column(candidates)]
     exchanges = candidates["exchange"].to_numpy()
     days = candidates["as_of"].to_numpy().astype("datetime64[D]")
     for exchange, panel in panels.items():
         here = exchanges == exchange
-        columns = {code: at for at, code in enumerate(panel.securities)}
-        column[here] = candidates.loc[here, "security"].map(columns).fillna(-1).to_numpy()
+        column[here] = _columns(codes[here], panel)
         position[here] = np.searchsorted(panel.sessions, days[here])
     return candidates.assign(column=column, position=position)

@@ -3,15 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping
+from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
-from pipeline.core.prices import Booleans, PricePanel
+from pipeline.core.prices import Booleans, Integers, PricePanel
+from pipeline.core.sessions import SessionRuns
 from pipeline.core.window import Window
 from pipeline.returns.expected import MeanModel
-from pipeline.returns.fit import Events, blank, fit_into
+from pipeline.returns.fit import Engine, Events
 
 ModelFunction = Callable[[PricePanel], MeanModel]
 
@@ -38,22 +40,83 @@ def measure(
     Returns:
         Abnormal returns in the order of ``located``.
     """
-    exchanges = located["exchange"].to_numpy()
-    models = {exchange: function(panels[exchange]) for exchange in sorted(set(exchanges))}
-    arrays = blank(len(located), next(iter(models.values())), estimation, span)
-    for exchange, mean_model in models.items():
-        here = np.flatnonzero(exchanges == exchange)
-        own = located.iloc[here]
-        # Neighbours in memory first: events of one security read the same column.
-        order = np.lexsort((own["position"].to_numpy(), own["column"].to_numpy()))
-        own, here = own.iloc[order], here[order]
-        events = Events(
-            deals=tuple(own["deal_id"]),
-            column=own["column"].to_numpy(),
-            position=own["position"].to_numpy(),
-            masked=masked[here],
+    places = placed(located)
+    made = engines(function, places, panels, estimation, span)
+    return fit_all(model, made, places, masked)
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Places:
+    """Where N events lie.
+
+    Attributes:
+        deals: (N,) identifiers.
+        exchange: (N,) exchange codes.
+        column: (N,) the security's column in the panel of the exchange.
+        position: (N,) the session of day zero in that panel.
+    """
+
+    deals: np.ndarray
+    exchange: np.ndarray
+    column: Integers
+    position: Integers
+
+    def moved(self, rows: Integers, sessions: Integers) -> Places:
+        """The events at ``rows``, each so many sessions later."""
+        return Places(
+            self.deals[rows],
+            self.exchange[rows],
+            self.column[rows],
+            self.position[rows] + sessions,
         )
-        fit_into(arrays, here, mean_model, panels[exchange], events, estimation, span)
+
+
+def placed(located: pd.DataFrame) -> Places:
+    """The places of the events of a table; its columns as of :func:`measure`."""
+    return Places(
+        deals=located["deal_id"].astype(str).to_numpy(dtype=object),
+        exchange=located["exchange"].to_numpy(dtype=object),
+        column=located["column"].to_numpy(dtype=np.int64),
+        position=located["position"].to_numpy(dtype=np.int64),
+    )
+
+
+def engines(
+    function: ModelFunction,
+    places: Places,
+    panels: Mapping[str, PricePanel],
+    estimation: Window,
+    span: Window,
+) -> dict[str, Engine]:
+    """Exchange -> the engine of its panel, ready for any number of events."""
+    return {
+        exchange: Engine(function(panels[exchange]), panels[exchange], estimation, span)
+        for exchange in sorted(set(places.exchange))
+    }
+
+
+def fit_all(
+    model: str, engines: Mapping[str, Engine], places: Places, masked: Booleans
+) -> AbnormalReturns:
+    """Fit every event on the engine of its exchange, in the order of ``places``."""
+    column, position = places.column, places.position
+    first = next(iter(engines.values()))
+    arrays = first.blank(len(column))
+    calendar = np.empty(len(column), dtype=np.int64)
+    for at, (exchange, engine) in enumerate(engines.items()):
+        here = np.flatnonzero(places.exchange == exchange)
+        calendar[here] = at
+        engine.fit_into(arrays, here, Events(column[here], position[here], masked[here]))
+    sessions = SessionRuns(
+        calendars=tuple(engine.panel.sessions for engine in engines.values()),
+        calendar=calendar,
+        first=position + first.estimation.start,
+        length=len(first.estimation),
+    )
     return AbnormalReturns(
-        model=model, deals=tuple(located["deal_id"].astype(str)), span=span, **arrays
+        model=model,
+        deals=tuple(places.deals.tolist()),
+        span=first.span,
+        estimation_sessions=sessions,
+        **arrays,
     )

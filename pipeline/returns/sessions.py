@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import UTC, date, datetime, time
 from functools import lru_cache
+from typing import Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
@@ -24,6 +25,13 @@ CALENDARS = {
     "XTSE": "TSX",
     "XASX": "ASX",
 }
+# Exchanges whose two calendars each miss closures that the other knows: one lacks the half days
+# and three typhoons, the other two storms. A day counts if both have it, to the earlier close.
+HELD_AGAINST = {"XHKG": "XHKG"}
+
+
+def _none() -> Dates:
+    return np.empty(0, dtype="datetime64[D]")
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -35,6 +43,8 @@ class Sessions:
         days: (T,) ``datetime64[D]`` session dates, in the exchange's own zone.
         opens, closes: (T,) ``datetime64[s]`` UTC instants, early closes included.
         zone: IANA name of the exchange's zone.
+        unplanned: ``datetime64[D]`` dates closed once, outside the yearly rules: storms, outages,
+            days of mourning, jubilees, and closures that the study names.
     """
 
     exchange: str
@@ -42,6 +52,7 @@ class Sessions:
     opens: Dates
     closes: Dates
     zone: str
+    unplanned: Dates = field(default_factory=_none)
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,7 +84,8 @@ def changed(sessions: Sessions, change: CalendarChange) -> Sessions:
         # Nothing depends on the opening of an added session but that it comes before the close.
         opens = np.insert(opens, at, instant - np.timedelta64(1, "h"))
         closes = np.insert(closes, at, instant)
-    return Sessions(sessions.exchange, days, opens, closes, sessions.zone)
+    unplanned = np.setdiff1d(np.union1d(sessions.unplanned, away), days)
+    return Sessions(sessions.exchange, days, opens, closes, sessions.zone, unplanned)
 
 
 def _instant(day: date, clock: time, zone: str) -> np.datetime64:
@@ -103,13 +115,37 @@ def sessions_between(exchange: str, first: str, last: str) -> Sessions:
             remedy="Use the code of the listing's exchange.",
         ) from None
     schedule = calendar.schedule(start_date=first, end_date=last)
+    once = _closed_once(calendar, first, last)
+    if exchange in HELD_AGAINST:
+        second = calendars.get_calendar(HELD_AGAINST[exchange])
+        taken = schedule.index.to_numpy().astype("datetime64[D]")
+        missed = np.intersect1d(_closed_once(second, first, last), taken)
+        schedule = _both(schedule, second.schedule(start_date=first, end_date=last))
+        once = np.union1d(once, missed)
     return Sessions(
         exchange=exchange,
         days=schedule.index.to_numpy().astype("datetime64[D]"),
         opens=_utc(schedule["market_open"]),
         closes=_utc(schedule["market_close"]),
         zone=str(calendar.tz),
+        unplanned=once,
     )
+
+
+def _both(schedule: pd.DataFrame, other: pd.DataFrame) -> pd.DataFrame:
+    """The sessions that two calendars have in common, each to the earlier of its two closes."""
+    common = schedule.index.intersection(other.index)
+    closes = pd.concat([schedule["market_close"], other["market_close"]], axis=1).loc[common]
+    return schedule.loc[common].assign(market_close=closes.min(axis=1))
+
+
+def _closed_once(calendar: Any, first: str, last: str) -> Dates:
+    """Closures of single dates that the calendar lists; not every calendar keeps such a list."""
+    known = pd.DatetimeIndex(
+        [pd.Timestamp(day).tz_localize(None) for day in calendar.adhoc_holidays]
+    )
+    days = known.to_numpy().astype("datetime64[D]")
+    return np.unique(days[(days >= np.datetime64(first)) & (days <= np.datetime64(last))])
 
 
 def _utc(instants: pd.Series) -> Dates:

@@ -30,7 +30,7 @@ def average_paths(
         day alone, and the one that holds the whole path; a deal whose prices stop leaves the
         average from that day on.
     """
-    inside = abnormal.returns[:, abnormal.columns(days)]
+    inside = abnormal.counted(days)
     cumulative = np.cumsum(inside, axis=1)  # a gap stays a gap: NaN from there on
     names = groups.to_numpy()
     parts = [

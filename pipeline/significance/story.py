@@ -84,7 +84,7 @@ def story_of(deal: str, abnormal: AbnormalReturns, window: Window, level: float)
 
 def _day(one: AbnormalReturns, day: int, reach: float) -> Day:
     where = one.columns(Window(day, day)).start
-    traded = bool(one.complete(Window(day, day))[0])
+    traded = bool(np.isfinite(one.returns[0, where]))
     spread = float(np.sqrt(one.car_variance(Window(day, day))[0])) if traded else np.nan
     return Day(
         day=day,

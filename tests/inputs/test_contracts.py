@@ -135,19 +135,27 @@ def test_a_declared_format() -> None:
 
 
 @pytest.mark.parametrize(
-    "cell",
-    ["01/03/2021", "2021-3-1", "2021-02-30", "20210301", "2021-03-0112", "2021-03-01 soon",
-     "45231", 45231, 45231.0, "1 March 2021", "21-03-01"],
-)  # fmt: skip
-def test_dates_that_would_be_a_guess(cell: object) -> None:
-    """Two readings of 01/03, two origins of a serial day, a typing slip: none is decided here."""
+    "cell", ["2021-3-1", "2021-02-30", "20210301", "2021-03-0112", "2021-03-01 soon", "soon", 7]
+)
+def test_dates_that_are_none(cell: object) -> None:
     _, findings = read(["2021-03-01", cell], Column("day", "date"))
     finding = one(findings)
     assert (finding.rule, finding.row, finding.column) == ("unparseable_date", "3", "day")
     assert str(cell) in finding.got
 
 
-@pytest.mark.parametrize("cell", ["1900-01-01", "1949-12-31", "2100-01-02"])
+@pytest.mark.parametrize(
+    "cell", ["01/03/2021", "45231", 45231, 45231.0, "1 March 2021", "21-03-01", "2021/03/01"]
+)
+def test_dates_that_would_be_a_guess(cell: object) -> None:
+    """Two readings of 01/03, two origins of a serial day, another format: none is decided here."""
+    _, findings = read(["2021-03-01", cell], Column("day", "date"))
+    finding = one(findings)
+    assert (finding.rule, finding.row, finding.column) == ("mixed_date_formats", "3", "day")
+    assert f"'{cell}'" in finding.got
+
+
+@pytest.mark.parametrize("cell", ["1900-01-01", "1949-12-31", "1970-01-01", "2100-01-02"])
 def test_fill_values_of_a_data_base(cell: str) -> None:
     _, findings = read([cell, "2021-03-01"], Column("day", "date"))
     finding = one(findings)

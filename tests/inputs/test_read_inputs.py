@@ -117,10 +117,10 @@ CASES: dict[str, tuple[Spoil, str, str, str, str]] = {
     ),
     "american date": (
         put("prices", 0, "date", "03/01/2021"),
-        "unparseable_date", "prices.csv", "2", "date",
+        "mixed_date_formats", "prices.csv", "2", "date",
     ),
     "serial date": (
-        put("prices", 1, "date", "44256"), "unparseable_date", "prices.csv", "3", "date",
+        put("prices", 1, "date", "44256"), "mixed_date_formats", "prices.csv", "3", "date",
     ),
     "far date": (
         put("prices", 1, "date", "1900-01-01"), "date_out_of_range", "prices.csv", "3", "date",
@@ -204,7 +204,7 @@ def test_factors_in_percent(tmp_path: Path) -> None:
         tables["factors"]["size"] = ["0.6", "-0.4"]
 
     (finding,) = refused(tmp_path, percent)
-    assert (finding.rule, finding.file, finding.column) == ("bad_value", "factors.csv", "size")
+    assert (finding.rule, finding.file, finding.column) == ("return_unit", "factors.csv", "size")
 
 
 def test_findings_of_all_files_at_once(tmp_path: Path) -> None:

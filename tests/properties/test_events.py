@@ -16,6 +16,7 @@ from pipeline.characteristics.recipes import winsorised
 from pipeline.core.abnormal import ARRAYS, AbnormalReturns
 from pipeline.core.estimate import TestResult
 from pipeline.core.ledger import Action, Ledger, LedgerEntry, StageLedger
+from pipeline.core.multiplicity import holm
 from pipeline.core.prices import PricePanel
 from pipeline.core.window import Window
 from pipeline.inputs.files import Source
@@ -23,13 +24,13 @@ from pipeline.inputs.read import Tables, read_inputs
 from pipeline.inputs.wanted import Wanted
 from pipeline.registry import TABLE, TESTS
 from pipeline.returns.day_zero import place
-from pipeline.returns.events import keep_first_of_overlapping, masked_sessions
+from pipeline.returns.events import masked_sessions
 from pipeline.returns.expected import market_model
 from pipeline.returns.measure import measure
+from pipeline.returns.repeats import settle_repeats
 from pipeline.returns.sessions import Sessions, sessions_between
 from pipeline.significance.dependence import pairwise
 from pipeline.significance.sample import car_sample
-from pipeline.significance.windows import holm
 from tests.returns.panels import (
     ESTIMATION,
     SPAN,
@@ -40,6 +41,7 @@ from tests.returns.panels import (
 from tests.significance.samples import clustered
 
 HEADLINE = Window(-1, 1)
+VALUES = tuple("estimation_days" if name == "estimation_sessions" else name for name in ARRAYS)
 FEW = settings(max_examples=25, deadline=None, derandomize=True)
 WITH_FILES = settings(
     max_examples=8,
@@ -107,7 +109,7 @@ def test_order_of_deals_and_of_securities(
     one = measured(located, masked, panel).take(np.array(rows))
     other = measured(moved, masked[rows], shuffled)
     assert one.deals == other.deals
-    for name in ARRAYS:
+    for name in VALUES:
         np.testing.assert_array_equal(getattr(one, name), getattr(other, name))
 
 
@@ -181,7 +183,7 @@ def test_taking_twice_is_taking_once(
     second = np.array([at % len(rows) for at in again], dtype=np.int64)
     twice, once = abnormal.take(first).take(second), abnormal.take(first[second])
     assert twice.deals == once.deals
-    for name in ARRAYS:
+    for name in VALUES:
         np.testing.assert_array_equal(getattr(twice, name), getattr(once, name))
 
 
@@ -269,19 +271,55 @@ def test_repeated_deals_add_up_and_never_meet(deals: list[tuple[int, int]]) -> N
             "position": [position for _, position in deals],
         }
     )
-    kept, ledger = keep_first_of_overlapping(located, HEADLINE)
+    kept, ledger = settle_repeats(located, HEADLINE)
     assert ledger.rows_in == len(kept) + len(ledger.dropped)
     assert set(kept["deal_id"]) | {entry.deal for entry in ledger.dropped} == set(
         located["deal_id"]
     )
     for _, own in kept.groupby("security"):
         assert (np.diff(np.sort(own["position"])) >= len(HEADLINE)).all()
-    again, _ = keep_first_of_overlapping(located.sample(frac=1, random_state=1), HEADLINE)
+    again, _ = settle_repeats(located.sample(frac=1, random_state=1), HEADLINE)
     assert sorted(again["deal_id"]) == sorted(kept["deal_id"])
     masked = masked_sessions(kept, located, ESTIMATION, 5)
     assert masked.shape == (len(kept), len(ESTIMATION))
     first = located.groupby("security")["position"].transform("min") == located["position"]
     assert not masked[kept["deal_id"].isin(located.loc[first, "deal_id"]).to_numpy()].any()
+
+
+@given(
+    st.lists(
+        st.tuples(st.integers(0, 3), st.integers(100, 120), st.sampled_from([1.0, 2.5, np.nan])),
+        min_size=1,
+        max_size=15,
+    ),
+    st.sampled_from(["keep_first", "merge", "keep_all"]),
+)
+@FEW
+def test_however_repeats_are_settled_nothing_is_lost(
+    deals: list[tuple[int, int, float]], policy: str
+) -> None:
+    """Every deal is kept or in the ledger, whatever the order of the list; money adds up."""
+    located = pd.DataFrame(
+        {
+            "deal_id": [f"D{at:02d}" for at in range(len(deals))],
+            "security": [f"S{code}" for code, _, _ in deals],
+            "position": [position for _, position, _ in deals],
+            "deal_value": [value for _, _, value in deals],
+        }
+    )
+    kept, ledger = settle_repeats(located, HEADLINE, policy)
+    assert set(kept["deal_id"]) | {entry.deal for entry in ledger.dropped} == set(
+        located["deal_id"]
+    )
+    assert ledger.rows_kept == len(kept)
+    assert not kept.duplicated(["security", "position"]).any()
+    again, _ = settle_repeats(located.sample(frac=1, random_state=1), HEADLINE, policy)
+    pd.testing.assert_frame_equal(
+        kept.sort_values("deal_id", ignore_index=True),
+        again.sort_values("deal_id", ignore_index=True),
+    )
+    if policy == "merge":
+        assert kept["deal_value"].sum() == pytest.approx(located["deal_value"].sum())
 
 
 @given(st.lists(st.lists(st.integers(0, 5), max_size=4), min_size=1, max_size=6))
@@ -308,7 +346,7 @@ def test_ledgers_reconcile(stages: list[list[int]]) -> None:
 
 def deal_tables() -> st.SearchStrategy[pd.DataFrame]:
     """Deal lists as an analyst might keep them: ids, moments, money with gaps, words."""
-    number = st.one_of(st.none(), st.floats(-1e6, 1e6), st.integers(-999, 999).map(float))
+    number = st.one_of(st.none(), st.floats(1e-3, 1e6), st.integers(1, 999).map(float))
     row = st.fixed_dictionaries(
         {
             "security": st.sampled_from(["A", "B1", "007"]),

@@ -80,3 +80,63 @@ def test_hong_kong_closed_for_the_storms_of_september_2023() -> None:
     assert sessions.days.astype(str).tolist() == [
         "2023-08-31", "2023-09-04", "2023-09-05", "2023-09-06", "2023-09-07", "2023-09-11",
     ]  # fmt: skip
+
+
+@pytest.mark.parametrize(
+    ("exchange", "day"),
+    [
+        ("XNYS", "2001-09-12"),  # after the attacks of 11 September
+        ("XNYS", "2012-10-29"),  # storm Sandy
+        ("XNYS", "2018-12-05"),  # day of mourning
+        ("XNYS", "2025-01-09"),  # day of mourning
+        ("XLON", "2022-09-19"),  # state funeral
+        ("XLON", "2023-05-08"),  # coronation
+        ("XTKS", "2020-10-01"),  # failure of the trading system
+        ("XHKG", "2020-10-13"),  # typhoon
+        ("XHKG", "2021-10-13"),  # typhoon
+        ("XHKG", "2023-09-01"),  # typhoon
+        ("XHKG", "2023-09-08"),  # rainstorm
+        ("XHKG", "2024-09-06"),  # typhoon
+    ],
+)
+def test_closures_out_of_turn_are_known_as_such(exchange: str, day: str) -> None:
+    """Each exchange's own notice of the day; read from memory."""
+    sessions = sessions_between(exchange, f"{day[:4]}-01-01", f"{day[:4]}-12-31")
+    assert np.datetime64(day) not in sessions.days
+    assert np.datetime64(day) in sessions.unplanned
+    assert not np.isin(sessions.unplanned, sessions.days).any()
+
+
+@pytest.mark.parametrize(
+    ("exchange", "day", "zone"),
+    [
+        ("XNYS", "2023-12-25", "America/New_York"),
+        ("XLON", "2023-12-26", "Europe/London"),
+        ("XHKG", "2023-01-24", "Asia/Shanghai"),  # Lunar New Year; the zone's clock is the same
+    ],
+)
+def test_yearly_holidays_are_in_turn(exchange: str, day: str, zone: str) -> None:
+    sessions = sessions_between(exchange, "2023-01-01", "2023-12-31")
+    assert sessions.zone == zone
+    assert np.datetime64(day) not in {*sessions.days, *sessions.unplanned}
+
+
+@pytest.mark.parametrize(
+    ("exchange", "day", "clock"),
+    [
+        # Half days: the day after Thanksgiving in New York, Christmas Eve in London.
+        ("XNYS", "2022-11-25", "13:00"),
+        ("XLON", "2020-12-24", "12:30"),
+        # The last session of Tokyo's shorter day, and the first of the longer one.
+        ("XTKS", "2024-11-01", "15:00"),
+        ("XTKS", "2024-11-05", "15:30"),
+        # Hong Kong's half day on New Year's Eve.
+        ("XHKG", "2024-12-31", "12:00"),
+    ],
+)
+def test_the_close_of_a_day_that_is_not_like_others(exchange: str, day: str, clock: str) -> None:
+    """Trading calendars of the exchanges; New York's and Tokyo's as in ``events.json``, London's
+    and Hong Kong's read from memory."""
+    sessions = around(exchange, day)
+    assert str(sessions.days[-1]) == day
+    assert local(sessions.closes[-1:], sessions.zone) == [clock]

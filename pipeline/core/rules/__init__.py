@@ -7,13 +7,15 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 
-from pipeline.core.rules import deals, regression, scrutiny, study, tables
+from pipeline.core.rules import deal_list, deals, prices, regression, scrutiny, study, tables
 from pipeline.core.rules.rule import Rule
 
 __all__ = ["RULES", "Rule", "rule_title"]
 
 RULES: Mapping[str, Rule] = {
-    rule.key: rule for room in (study, tables, deals, regression, scrutiny) for rule in room.RULES
+    rule.key: rule
+    for room in (study, tables, prices, deal_list, deals, regression, scrutiny)
+    for rule in room.RULES
 }
 
 

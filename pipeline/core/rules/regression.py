@@ -57,9 +57,10 @@ RULES = (
     Rule(
         "under_identified",
         "Fewer instruments than treatments",
-        "There are not enough instruments for the endogenous variable.",
+        "There are fewer instruments than variables they are to move, or they move these in one "
+        "proportion only.",
         "The effect has no value.",
-        "Name at least one instrument.",
+        "Name at least one instrument for each variable.",
     ),
     Rule(
         "separation",
@@ -134,9 +135,9 @@ RULES = (
     Rule(
         "no_outcome_variance",
         "Outcome without its measurement error",
-        "The column weighs deals by how precisely their return is measured; that is not known.",
+        "The column weighs deals by how precisely the outcome is measured; that is not known.",
         "Weights made up in its place would be no better than equal ones.",
-        "Use a return that dealwake measured, add its <outcome>_std_dev, or take the column out.",
+        "Use a return measured from prices, name outcome.standard_error, or take the column out.",
     ),
     Rule(
         "fitted_exactly",
@@ -184,7 +185,7 @@ RULES = (
         "no_exclusion",
         "Selection model without an excluded variable",
         "No variable moves the decision to bid alone.",
-        "The model would lean on the shape of the normal curve alone.",
+        "The model leans on the shape of the normal curve alone: it is shown and does not lead.",
         "Name a variable in selection.excluded, with its argument.",
     ),
     Rule(
@@ -235,6 +236,13 @@ RULES = (
         "The column needs the feature of every candidate, announced or not.",
         "It asks what the feature does to announcing.",
         "Add it to the selection variables, or take the column out.",
+    ),
+    Rule(
+        "flag_not_binary",
+        "Flag that is not yes or no",
+        "The column that says which outcomes count has a value other than 0 and 1.",
+        "A deal must either count or not.",
+        "Fill the column with 0 and 1, or leave bounds.observed out.",
     ),
     Rule(
         "no_controls",

@@ -55,6 +55,13 @@ RULES = (
         "Correct its name, or define it under [characteristics].",
     ),
     Rule(
+        "outcome_and_returns",
+        "Returns asked of a study with an outcome of its own",
+        "The study has an [outcome] table and also a key that belongs to returns from prices.",
+        "Two outcomes cannot be explained at once, and a key that nothing reads would mislead.",
+        "Delete the key named, or delete [outcome] to have returns measured from prices.",
+    ),
+    Rule(
         "output_folder",
         "Folder that cannot take the run",
         "The folder to write to is a file, holds other things, or cannot be written.",
@@ -67,6 +74,13 @@ RULES = (
         "The folder holds no run that can be read back.",
         "Two runs can only be held side by side if both are whole.",
         "Name the folder of a finished run, such as reports/demo.",
+    ),
+    Rule(
+        "different_outcomes",
+        "Runs that explain different outcomes",
+        "The two runs explain different columns, or the same in units that do not compare.",
+        "A difference between two different things has no meaning.",
+        "Compare two runs of one outcome.",
     ),
     Rule(
         "treatment_not_binary",
