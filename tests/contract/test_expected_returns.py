@@ -57,7 +57,7 @@ def test_residuals_and_abnormal_returns_add_up(model: Entry, panel: PricePanel) 
         rows = np.arange(position + ESTIMATION.start, position + ESTIMATION.end + 1)
         residual = found.estimation_returns[row]
         assert np.abs(regressors[rows].T @ residual).max(initial=0.0) < 1e-12
-        d = made.regressors.shape[1]
+        d = made.parameters
         variance = np.sum(residual**2) / (len(rows) - d)
         np.testing.assert_allclose(found.residual_variance[row], variance, rtol=1e-10)
         days = np.arange(position + SPAN.start, position + SPAN.end + 1)

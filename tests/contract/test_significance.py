@@ -24,8 +24,19 @@ def chosen(request: pytest.FixtureRequest) -> Entry:
 
 
 @pytest.fixture(scope="module")
-def abnormal() -> AbnormalReturns:
+def spread() -> AbnormalReturns:
     return clustered(deals=30, gaps=0)
+
+
+@pytest.fixture(scope="module")
+def one_date() -> AbnormalReturns:
+    return clustered(deals=30, days=1, gaps=0)
+
+
+@pytest.fixture
+def abnormal(chosen: Entry, spread: AbnormalReturns, one_date: AbnormalReturns) -> AbnormalReturns:
+    """Deals as the test takes them for granted: of one date or of several."""
+    return one_date if "one_date" in chosen.assumes else spread
 
 
 def sample(abnormal: AbnormalReturns, n: int, window: Window = WINDOW) -> CarSample:

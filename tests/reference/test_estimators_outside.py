@@ -21,7 +21,8 @@ from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import Estimate, Shape, TestResult
 from pipeline.estimators import covariance as cov
 from pipeline.estimators import effective_f as strength
-from pipeline.estimators.instruments import STOCK_YOGO_SIZE, two_stage_least_squares
+from pipeline.estimators.instrument_tests import STOCK_YOGO_SIZE
+from pipeline.estimators.instruments import two_stage_least_squares
 from pipeline.estimators.least_squares import fixed_effects, ols
 from pipeline.estimators.selection import heckman_two_step
 from tests.reference import public_data as data
