@@ -14,6 +14,7 @@ if TYPE_CHECKING:
     from pipeline.study.schema import Study
 
 BAD_INPUT = 2
+RESTRICTED = 3
 T = TypeVar("T")
 
 app = typer.Typer(
@@ -206,7 +207,7 @@ def _stop(*_: object) -> None:
 
 
 def _guard(work: Callable[[], None], show: Callable[[InputProblem], None]) -> None:
-    """Run; a problem of the input becomes one screen and exit code 2."""
+    """Run; a problem of the input becomes one screen and exit code 2, a restricted company 3."""
     from pipeline.core.findings import InputProblem
 
     signal.signal(signal.SIGTERM, _stop)
@@ -214,7 +215,8 @@ def _guard(work: Callable[[], None], show: Callable[[InputProblem], None]) -> No
         work()
     except InputProblem as fault:
         show(fault)
-        raise typer.Exit(BAD_INPUT) from None
+        stopped = any(finding.rule == "restricted_company" for finding in fault.findings)
+        raise typer.Exit(RESTRICTED if stopped else BAD_INPUT) from None
     except KeyboardInterrupt:
         typer.echo("Stopped; the last finished run is untouched.", err=True)
         raise typer.Exit(130) from None

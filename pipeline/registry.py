@@ -29,7 +29,9 @@ class Entry:
     ``why`` says in a clause what a test is chosen for, to follow "chosen because it"; ``assumes``
     names what the test takes for granted, checked against each sample. An entry that is not
     ``default`` is used only when the study names it; one that ``resamples`` is left out where a
-    test is repeated many times.
+    test is repeated many times. A model of ``one_session`` needs returns that cover one session
+    each. ``several`` says that an instrumented column takes further
+    endogenous variables beside the treatment.
     """
 
     key: str
@@ -40,6 +42,8 @@ class Entry:
     assumes: tuple[str, ...] = ()
     default: bool = True
     resamples: bool = False
+    several: bool = False
+    one_session: bool = False
 
     def load(self) -> Callable[..., Any]:
         """Import the function the entry names."""
@@ -56,9 +60,17 @@ TABLE: dict[str, tuple[Entry, ...]] = {
         Entry("factor_model", "pipeline.returns.expected:factor_model", needs=("factors",)),
         Entry("excess_return", "pipeline.returns.expected:excess_return", needs=("factors",)),
         Entry("local_and_global", "pipeline.returns.expected:local_and_global", needs=("factors",)),
-        Entry("scholes_williams", "pipeline.returns.expected:scholes_williams"),
-        Entry("dimson", "pipeline.returns.expected:dimson"),
-        Entry("huber", "pipeline.returns.expected:huber"),
+        Entry(
+            "peer_adjusted",
+            "pipeline.returns.expected:peer_adjusted",
+            needs=("peers",),
+            one_session=True,
+        ),
+        Entry(
+            "scholes_williams", "pipeline.returns.expected:scholes_williams", one_session=True
+        ),
+        Entry("dimson", "pipeline.returns.expected:dimson", one_session=True),
+        Entry("huber", "pipeline.returns.expected:huber", one_session=True),
     ),
     TESTS: (
         Entry(
@@ -88,6 +100,12 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "time_series",
             "pipeline.significance.parametric:time_series",
             why="takes dependence from the portfolio's own daily series",
+            assumes=("one_date", "constant_variance"),
+        ),
+        Entry(
+            "joint_date",
+            "pipeline.significance.joint_date:joint_date",
+            why="takes dependence among deals of one date from their joint residuals",
             assumes=("one_date", "constant_variance"),
         ),
         Entry(
@@ -164,6 +182,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "pipeline.estimators.instruments:two_stage_least_squares",
             needs=("instruments",),
             answers=4,
+            several=True,
         ),
         Entry(
             "heckman_likelihood",
@@ -278,6 +297,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "pipeline.estimators.k_class:limited_information",
             needs=("instruments",),
             answers=4,
+            several=True,
             default=False,
         ),
         Entry(
@@ -285,6 +305,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "pipeline.estimators.k_class:fuller",
             needs=("instruments",),
             answers=4,
+            several=True,
             default=False,
         ),
         Entry(
@@ -292,6 +313,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "pipeline.estimators.gmm:two_step_gmm",
             needs=("instruments",),
             answers=4,
+            several=True,
             default=False,
         ),
     ),

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
@@ -16,15 +17,42 @@ from pipeline.core.rules import RULES, Rule, rule_title
 
 if TYPE_CHECKING:
     import pandas as pd
+    from rich.progress import Progress, TaskID
 
     from pipeline.core.contrast import Contrast
     from pipeline.core.findings import Finding, InputProblem
     from pipeline.core.ledger import Ledger, LedgerEntry
+    from pipeline.core.outcome import Standing
     from pipeline.core.results import Results
     from pipeline.report.document import Table as DocumentTable
     from pipeline.significance.story import Story
 
-STAGES = 8
+STAGES = 11
+
+
+class _Teller:
+    """Moves the bar of the stages, and one for what is long within a stage, with the time left."""
+
+    def __init__(self, bar: Progress, stages: TaskID):
+        self.bar, self.stages = bar, stages
+        self.begun: dict[str, tuple[TaskID, float]] = {}
+
+    def __call__(self, stage: str) -> None:
+        self.bar.update(self.stages, description=stage, advance=1)
+
+    def portion(self, name: str, done: int, total: int) -> None:
+        """How much of ``name`` is done."""
+        if name not in self.begun:
+            task = self.bar.add_task(name, total=total, left="")
+            self.begun[name] = (task, time.monotonic())
+        task, begin = self.begun[name]
+        seconds = (time.monotonic() - begin) * (total - done) / done if done else 0.0
+        self.bar.update(
+            task,
+            completed=done,
+            left=f"{done:,} of {total:,}, about {seconds:.0f} s left",
+            visible=done < total,
+        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,16 +74,14 @@ class Screen:
             TextColumn("{task.description:<22}"),
             BarColumn(bar_width=30),
             TimeElapsedColumn(),
+            TextColumn("{task.fields[left]}"),
             console=Console(stderr=True),
             transient=True,
         )
         with bar:
-            task = bar.add_task("study file", total=STAGES)
+            task = bar.add_task("study file", total=STAGES, left="")
 
-            def tell(stage: str) -> None:
-                bar.update(task, description=stage, advance=1)
-
-            yield tell
+            yield _Teller(bar, task)
 
     def finished(self, results: Results, folder: Path, written: Sequence[str]) -> None:
         """The finding, the ledger's totals and where the documents are."""
@@ -100,7 +126,7 @@ class Screen:
     def deal(
         self,
         name: str,
-        story: Story | None,
+        story: Story | Standing | None,
         row: Mapping[str, Any],
         told: Sequence[tuple[str, LedgerEntry]],
     ) -> None:
@@ -111,7 +137,8 @@ class Screen:
             print(json.dumps(content, default=str))
             return
         console = Console(highlight=False, markup=False)
-        console.print(f"{name}: {row['security']} on {row['exchange']}")
+        listing = " on ".join(str(row[key]) for key in ("security", "exchange") if row.get(key))
+        console.print(f"{name}: {listing}" if listing else name)
         if "day_zero_reason" in row:
             console.print(f"Day zero {str(row['day_zero'])[:10]}: {row['day_zero_reason']}.")
         for stage, entry in told:
@@ -119,7 +146,12 @@ class Screen:
             limit = f" (limit: {entry.threshold})" if entry.threshold else ""
             console.print(f"{stage}: {entry.action}, {title}: {entry.value}{limit}.")
         if story is None:
-            console.print("It was not measured: the ledger lines above say why.")
+            console.print("It was left out: the ledger lines above say why.")
+            return
+        from pipeline.core.outcome import Standing
+
+        if isinstance(story, Standing):
+            _standing(console, story, row)
             return
         window = story.window.label.replace("-", "−")
         interval = f"{_bp(story.low)} to {_bp(story.high)} bp"
@@ -207,6 +239,27 @@ def _plain_table(block: DocumentTable) -> Table:
     for row in block.page_rows:
         table.add_row(*("\n".join(lines(cell)) for cell in row))
     return table
+
+
+def _standing(console: Console, story: Standing, row: Mapping[str, Any]) -> None:
+    """One deal's ready outcome among the others, and what else the deal list says of it."""
+    from pipeline.report.material import capital
+    from pipeline.report.numerals import amount
+
+    outcome, interval = story.outcome, ""
+    if story.low == story.low:
+        ends = f"{amount(story.low, outcome.unit)} to {amount(story.high, outcome.unit)}"
+        interval = f", its own interval {ends}"
+    console.print(
+        f"{capital(outcome.words)} {amount(story.value, outcome.unit)}{interval}; rank "
+        f"{story.rank} of {story.deals}, 1 the largest."
+    )
+    table = Table(box=None, pad_edge=False, show_header=False)
+    own = ("deal_id", "_row", "announced_date", outcome.column, f"{outcome.column}_std_dev")
+    for key, value in row.items():
+        if key not in own and value == value:
+            table.add_row(key, f"{value:.10g}" if isinstance(value, float) else str(value))
+    console.print(table)
 
 
 def _bp(value: float) -> str:

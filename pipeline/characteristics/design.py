@@ -15,6 +15,7 @@ from pipeline.characteristics.universe import (
     missing_controls,
     read_universe,
     selection_rows,
+    without_exclusion,
 )
 from pipeline.core.design import Design, SelectionRows
 from pipeline.core.findings import Finding, problem, raise_errors
@@ -37,6 +38,7 @@ class Roles:
     effects: tuple[str, ...] = ()
     clusters: tuple[str, ...] = ()
     instruments: tuple[str, ...] = ()
+    also_endogenous: tuple[str, ...] = ()
     selection: tuple[str, ...] = ()
     excluded: tuple[str, ...] = ()
 
@@ -121,7 +123,10 @@ def prepare(
     if candidates is not None and roles.selection:
         names = (*roles.selection, *roles.excluded)
         universe, more = read_universe(candidates, recipes, candidates_measured, names)
-        findings += more + missing_controls(candidates, roles.controls, roles.selection)
+        findings += more + missing_controls(
+            candidates, recipes, candidates_measured, roles.controls, roles.selection
+        )
+        findings += without_exclusion(roles.excluded)
     raise_errors(findings)
     used, ledger = _mask(deals, raw, roles, universe)
     finished = finish(makeable(recipes, raw), raw, used) if used.any() else dict(raw)
@@ -272,6 +277,7 @@ def _design(
         instruments=roles.instruments,
         selection=selection,
         outcome_variance=_outcome_variance(kept, roles.outcome),
+        also_endogenous=roles.also_endogenous,
     )
 
 

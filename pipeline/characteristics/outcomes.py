@@ -87,5 +87,6 @@ def deals_frame(deals: pd.DataFrame, groups: pd.Series) -> pd.DataFrame:
     shown = deals.drop(columns=[name for name in HIDDEN if name in deals])
     shown = shown.rename(columns={"deal_id": "deal"}).assign(group=groups)
     for name in ("announced_date", "day_zero", "earnings_release"):
-        shown[name] = shown[name].astype("datetime64[s]")
+        if name in shown:
+            shown[name] = shown[name].astype("datetime64[s]")
     return shown.reset_index(drop=True)

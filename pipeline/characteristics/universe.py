@@ -102,10 +102,36 @@ def codes(values: pd.Series) -> Integers:
     return np.asarray(pd.factorize(values, sort=True)[0], dtype=np.int64)
 
 
+def without_exclusion(excluded: Sequence[str]) -> list[Finding]:
+    """A warning where no variable moves the decision to bid alone."""
+    if excluded:
+        return []
+    return [
+        Finding(
+            "no_exclusion",
+            Severity.WARNING,
+            "study",
+            got="no variable moves the decision to bid alone: the selection model leans on the "
+            "shape of the normal curve",
+            expected="at least one variable in selection.excluded",
+            remedy="Name one and say why it does not move the return; the column does not lead.",
+            column="selection.excluded",
+        )
+    ]
+
+
 def missing_controls(
-    candidates: pd.DataFrame, controls: Sequence[str], selection: Sequence[str]
+    candidates: pd.DataFrame,
+    recipes: Mapping[str, Recipe],
+    measured: Mapping[str, Floats],
+    controls: Sequence[str],
+    selection: Sequence[str],
 ) -> list[Finding]:
-    """An error for each company variable of the outcome that the selection equation lacks."""
+    """An error for each company variable of the outcome that the selection equation lacks.
+
+    A variable is the company's if the candidates hold all its columns, or if it is made of their
+    prices.
+    """
     return [
         Finding(
             "selection_lacks_control",
@@ -117,5 +143,18 @@ def missing_controls(
             column="selection.explained_by",
         )
         for name in controls
-        if name in candidates.columns and name not in selection
+        if name not in selection and _of_company(name, candidates, recipes, measured)
     ]
+
+
+def _of_company(
+    name: str,
+    candidates: pd.DataFrame,
+    recipes: Mapping[str, Recipe],
+    measured: Mapping[str, Floats],
+) -> bool:
+    recipe = recipes.get(name) or Recipe(name, "column", (name,))
+    if recipe.source == "price" and name in measured:
+        return bool(np.isfinite(measured[name]).any())
+    columns = recipe.columns or (name,)
+    return all(part in candidates and candidates[part].notna().any() for part in columns)

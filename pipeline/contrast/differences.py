@@ -24,7 +24,7 @@ WITHOUT_EFFECT = (
     "tests",
     "title",
 )
-FOLLOWED = re.compile(r"mean_reaction|deals_kept|effect_\d+_(?P<column>\w+)")
+FOLLOWED = re.compile(r"mean_reaction|mean_outcome|deals_kept|effect_\d+_(?P<column>\w+)")
 MOST_DEALS = 10
 
 
@@ -142,7 +142,8 @@ def moved_deals(first: SavedRun, second: SavedRun) -> pd.DataFrame:
 
 
 def _outcomes(run: SavedRun) -> pd.Series:
+    asked = run.study.get("outcome")
     start, end = run.study["event_time"]["headline"]
-    name = f"car_{start}_{end}".replace("-", "m")
+    name = asked["column"] if asked else f"car_{start}_{end}".replace("-", "m")
     values = run.deals[name] if name in run.deals else pd.Series(np.nan, run.deals.index)
     return pd.Series(values.to_numpy(), index=run.deals["deal"].astype(str))

@@ -6,8 +6,17 @@ import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from typing import Protocol, runtime_checkable
 
 Progress = Callable[[str], None]
+
+
+@runtime_checkable
+class Detailed(Protocol):
+    """Whoever also wants to hear how much of a stage is done."""
+
+    def portion(self, name: str, done: int, total: int) -> None:
+        """``done`` of ``total`` parts of ``name`` are done."""
 
 
 @dataclass(slots=True)
@@ -24,3 +33,8 @@ class Clock:
         begin = time.perf_counter()
         yield
         self.seconds[name] = round(time.perf_counter() - begin, 3)
+
+    def portion(self, name: str, done: int, total: int) -> None:
+        """Tell how much of something long is done."""
+        if isinstance(self.progress, Detailed):
+            self.progress.portion(name, done, total)

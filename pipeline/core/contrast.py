@@ -10,6 +10,8 @@ from typing import Any
 
 import pandas as pd
 
+from pipeline.core.outcome import ABNORMAL_RETURN, Outcome
+
 
 class Kind(StrEnum):
     """What differs: a table that was read, a key of the study file, or a program's version."""
@@ -68,13 +70,14 @@ class Contrast:
     Attributes:
         first, second: the runs' names.
         differences: what is not the same.
-        numbers: ``number, unit, first, second, move`` of each headline number; decimal returns.
+        numbers: ``number, unit, first, second, move`` of each headline number, as stored.
         explained: ``difference, number, move, share``: the first run made again with that
             difference alone; the rows ``together`` hold what the differences move only jointly.
         deals: ``deal, first, second``: kept or why not, of deals that not both runs keep.
         moved: ``deal, first, second, move`` of the outcome of deals in both, largest move first.
         titles: estimator -> the title of its column.
         notes: what could not be made again, and why.
+        outcome: what both runs explain.
     """
 
     first: str
@@ -86,3 +89,4 @@ class Contrast:
     moved: pd.DataFrame
     titles: Mapping[str, str]
     notes: tuple[str, ...] = ()
+    outcome: Outcome = ABNORMAL_RETURN

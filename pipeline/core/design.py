@@ -43,6 +43,8 @@ class Design:
         clusters: cluster dimension -> (n,) integer codes from 0.
         Z: (n, L) excluded instruments; L may be 0.
         instruments: L names.
+        also_endogenous: further regressors that the instruments move, beside the treatment; one
+            that is taken out of X is no longer endogenous.
         selection: the candidates, if the study models who announces.
         rows: n deal identifiers.
         outcome: how the outcome is called on a page, e.g. ``CAR[-1, +1]``.
@@ -65,6 +67,7 @@ class Design:
     instruments: tuple[str, ...] = ()
     selection: SelectionRows | None = None
     outcome_variance: Floats | None = None
+    also_endogenous: tuple[str, ...] = ()
 
     def __post_init__(self) -> None:
         n = len(self.y)
@@ -77,6 +80,8 @@ class Design:
                 raise ValueError("effects and clusters need one code a row")
         if self.treatment and self.treatment not in self.names:
             raise ValueError(f"treatment {self.treatment} is not a regressor")
+        if self.treatment and self.treatment in self.also_endogenous:
+            raise ValueError("also_endogenous must name regressors other than the treatment")
         if not all(np.isfinite(array).all() for array in (self.y, self.X, self.Z)):
             raise ValueError("y, X and Z must be finite: rows with gaps are dropped before")
         variance = self.outcome_variance
@@ -87,6 +92,11 @@ class Design:
     def n(self) -> int:
         """Rows."""
         return len(self.y)
+
+    @property
+    def endogenous(self) -> tuple[str, ...]:
+        """The regressors the instruments move, the treatment first."""
+        return (self.treatment, *(n for n in self.also_endogenous if n in self.names))
 
 
 COVARIANCES = ("auto", "classical", "hc0", "hc1", "hc2", "hc3", "cr2", "cr3")
@@ -111,6 +121,7 @@ class FitOptions:
         learner: how nuisance functions are learnt, one of :data:`LEARNERS`.
         folds: parts of the sample for cross-fitting, 2 to 20; 1 fits and predicts on the same rows.
         matches: nearest deals a deal is compared with in matching, at least 1.
+        draws: bootstrap draws for the columns that offer one; 0 leaves the bootstrap out.
         seed: of every random choice inside a fit.
 
     Raises:
@@ -124,6 +135,7 @@ class FitOptions:
     learner: str = "penalised"
     folds: int = 5
     matches: int = 1
+    draws: int = 0
     seed: int = 20260301
 
     def __post_init__(self) -> None:
@@ -139,3 +151,5 @@ class FitOptions:
             raise ValueError(f"folds must be from 1 to 20. Got {self.folds} instead.")
         if self.matches < 1:
             raise ValueError(f"matches must be at least 1. Got {self.matches} instead.")
+        if self.draws < 0:
+            raise ValueError(f"draws must not be negative. Got {self.draws} instead.")

@@ -211,6 +211,8 @@ class Estimate:
         notes: sentences a reader must see.
         citation: the published source.
         level: confidence level of the intervals.
+        df_each: (k,) degrees of freedom where each coefficient has its own, or None; ``df`` is
+            then the treatment's.
     """
 
     estimator: str
@@ -238,11 +240,19 @@ class Estimate:
     level: float = 0.95
     checks: tuple[Diagnostic, ...] = ()
     claim: str = "is associated with"
+    df_each: Floats | None = None
 
     def __post_init__(self) -> None:
         k = len(self.names)
         if self.coefficients.shape != (k,) or self.covariance.shape != (k, k):
             raise ValueError(f"{self.estimator}: {k} names, {self.coefficients.shape} values")
+        if self.df_each is not None and self.df_each.shape != (k,):
+            raise ValueError(f"{self.estimator}: {k} names, {self.df_each.shape} df_each")
+
+    @property
+    def dfs(self) -> Floats:
+        """(k,) degrees of freedom of each coefficient's t."""
+        return np.full(len(self.names), self.df) if self.df_each is None else self.df_each
 
     @property
     def std_errors(self) -> Floats:
@@ -256,13 +266,15 @@ class Estimate:
 
     @property
     def p_values(self) -> Floats:
-        """(k,) two-sided, t with ``df`` degrees of freedom (the normal when df is infinite)."""
-        return np.array([t_tail(float(value), self.df) for value in self.statistics])
+        """(k,) two-sided, t with ``dfs`` degrees of freedom (the normal where infinite)."""
+        pairs = zip(self.statistics, self.dfs, strict=True)
+        return np.array([t_tail(float(value), float(df)) for value, df in pairs])
 
     @property
     def intervals(self) -> Floats:
         """(k, 2) two-sided intervals at ``level``."""
-        half = t_reach(self.level, self.df) * self.std_errors
+        reach = np.array([t_reach(self.level, float(df)) for df in self.dfs])
+        half = reach * self.std_errors
         return np.column_stack([self.coefficients - half, self.coefficients + half])
 
     def term(self, name: str) -> dict[str, Any]:

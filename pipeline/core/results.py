@@ -11,6 +11,7 @@ from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import Column, Tested
 from pipeline.core.findings import Finding
 from pipeline.core.ledger import Ledger
+from pipeline.core.outcome import ABNORMAL_RETURN, Outcome
 from pipeline.core.window import Window
 
 
@@ -35,6 +36,8 @@ class StudyFacts:
         level: confidence level.
         currency: of the money columns, with the scale, e.g. ``USD million``.
         seed: of every random stream.
+        outcome: what is explained. An outcome that the deal list holds has no windows, and the
+            fields about windows, models and tests mean nothing then.
     """
 
     name: str
@@ -61,6 +64,18 @@ class StudyFacts:
     level: float = 0.95
     currency: str = ""
     seed: int = 0
+    outcome: Outcome = ABNORMAL_RETURN
+
+    @property
+    def explained(self) -> dict[str, str | int]:
+        """What the estimates explain, as columns of a frame."""
+        if self.outcome.ready:
+            return {"outcome": self.outcome.column}
+        return {
+            "window_start": self.headline.start,
+            "window_end": self.headline.end,
+            "expected_return": self.models[0],
+        }
 
     def words(self, name: str) -> str:
         """A variable's label, or its name with spaces."""
@@ -120,6 +135,18 @@ class Results:
             source``: treated deals against the others.
         specifications: one row a way to make the least-squares estimate, the headline's first;
             ``curve`` is ``name, value`` of all of them together.
+        several_windows: one row a model and window with the p-value of its mean, and that of the
+            secondary windows adjusted for their number.
+        calendar_time: one row a horizon, weighting and regression of the portfolios that hold
+            every recent deal's company; decimal.
+        matched: one row a window and deal: buy-and-hold returns of its company and its control.
+        buy_and_hold: one row a window: the mean difference of the two, with its tests.
+        summary: ``group, n, mean, median, std_dev, share_positive, std_error, df, ci_low, ci_high,
+            clusters`` of an outcome that the deal list holds, all deals first; else empty.
+        selection: name -> frame of the review of who announces, the expected gains and the bounds;
+            only what was asked for.
+        readings: the headline and the test that leads under another date or listing of the same
+            deals, decimal, the headline's own row first; empty without one.
         doubts: sentences on what the scrutiny could not ask.
     """
 
@@ -144,6 +171,13 @@ class Results:
     groups: pd.DataFrame = field(default_factory=pd.DataFrame)
     specifications: pd.DataFrame = field(default_factory=pd.DataFrame)
     curve: pd.DataFrame = field(default_factory=pd.DataFrame)
+    several_windows: pd.DataFrame = field(default_factory=pd.DataFrame)
+    summary: pd.DataFrame = field(default_factory=pd.DataFrame)
+    calendar_time: pd.DataFrame = field(default_factory=pd.DataFrame)
+    matched: pd.DataFrame = field(default_factory=pd.DataFrame)
+    buy_and_hold: pd.DataFrame = field(default_factory=pd.DataFrame)
+    readings: pd.DataFrame = field(default_factory=pd.DataFrame)
+    selection: Mapping[str, pd.DataFrame] = field(default_factory=dict)
 
     @property
     def headline(self) -> WindowTests:

@@ -11,7 +11,6 @@ import pandas as pd
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import Column, Diagnostic, Estimate, NotApplicable
 from pipeline.core.results import WindowTests
-from pipeline.core.window import Window
 
 TEST_COLUMNS = {
     "window_start": "int64",
@@ -39,9 +38,6 @@ TEST_COLUMNS = {
     "headline": "bool",
 }
 ESTIMATE_COLUMNS = {
-    "window_start": "int64",
-    "window_end": "int64",
-    "expected_return": "str",
     "sample": "str",
     "estimator": "str",
     "title": "str",
@@ -58,6 +54,19 @@ ESTIMATE_COLUMNS = {
     "clusters": "str",
     "covariance": "str",
     "estimand": "str",
+}
+SUMMARY_COLUMNS = {
+    "group": "str",
+    "n": "int64",
+    "mean": "float64",
+    "median": "float64",
+    "std_dev": "float64",
+    "share_positive": "float64",
+    "std_error": "float64",
+    "df": "float64",
+    "ci_low": "float64",
+    "ci_high": "float64",
+    "clusters": "int64",
 }
 DIAGNOSTIC_COLUMNS = {
     "subject": "str",
@@ -118,33 +127,33 @@ def _test_rows(item: WindowTests, headline: bool) -> Iterator[dict[str, Any]]:
             }  # fmt: skip
 
 
-def estimates_frame(columns: Sequence[Column], window: Window, model: str) -> pd.DataFrame:
-    """One row a term a column, its first stages included (``stage`` names them)."""
-    shared = {
-        "window_start": window.start,
-        "window_end": window.end,
-        "expected_return": model,
-        "sample": "regression deals",
-    }
+def estimates_frame(columns: Sequence[Column], explained: Mapping[str, str | int]) -> pd.DataFrame:
+    """One row a term a column, its first stages included (``stage`` names them).
+
+    ``explained`` says in columns of its own what the estimates explain: window and model of the
+    abnormal return, or the outcome of the deal list.
+    """
+    shared = {**explained, "sample": "regression deals"}
     rows: list[dict[str, Any]] = []
     for column in columns:
         if isinstance(column, Estimate):
             rows += [{**shared, **row} for row in _terms(column, column, "")]
             for stage in column.stages:
                 rows += [{**shared, **row} for row in _terms(column, stage, stage.title)]
-    return typed_frame(rows, ESTIMATE_COLUMNS)
+    kinds = {name: "int64" if isinstance(v, int) else "str" for name, v in explained.items()}
+    return typed_frame(rows, {**kinds, **ESTIMATE_COLUMNS})
 
 
 def _terms(column: Estimate, estimate: Estimate, stage: str) -> Iterator[dict[str, Any]]:
     clusters = ", ".join(f"{name} {count}" for name, count in estimate.clusters.items())
-    for term in estimate.names:
+    for term, df in zip(estimate.names, estimate.dfs, strict=True):
         yield {
             "estimator": column.estimator,
             "title": column.title,
             "stage": stage,
             "term": term,
             **estimate.term(term),
-            "df": estimate.df,
+            "df": float(df),
             "n": estimate.n,
             "clusters": clusters,
             "covariance": estimate.covariance_name,

@@ -10,6 +10,7 @@ from pipeline.characteristics.outcomes import (
     deals_frame,
     group_names,
 )
+from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import Column, Withheld
 from pipeline.core.findings import findings_frame
 from pipeline.core.results import Results
@@ -22,14 +23,20 @@ from pipeline.core.tables import (
     ladder_frame,
     no_frame,
 )
-from pipeline.flow.explained import Doubts, deals_with_outcomes, lead_of
+from pipeline.flow.doubted import Doubts
+from pipeline.flow.explained import deals_with_outcomes, lead_of
+from pipeline.flow.horizons import longer_horizons
 from pipeline.flow.measured import Measured
+from pipeline.flow.ready import summary_of
+from pipeline.registry import TESTS, entry
 from pipeline.report.headline import headline_frame
 from pipeline.significance.averages import averages_of, groups_of
 from pipeline.significance.checks import sample_checks
 from pipeline.significance.choice import leading_test
 from pipeline.significance.paths import average_paths
 from pipeline.significance.power import power_of
+from pipeline.significance.readings import readings_frame
+from pipeline.significance.several_windows import several_windows
 from pipeline.significance.variants import mean_variants
 from pipeline.study import plan
 from pipeline.study.schema import Study
@@ -45,19 +52,25 @@ def results_of(
     doubts: Doubts,
 ) -> Results:
     """Everything a document or a table is made from."""
-    leading = leading_test(study.tests.headline, len(measured.deals))
+    ready = study.outcome is not None
+    leading = "" if ready else leading_test(study.tests.headline, len(measured.deals))
     facts = plan.facts(study, leading, measured.windows)
-    lead_model = study.expected_returns.headline
-    lead = measured.abnormal[lead_model]
     deals = prepared.deals if prepared else deals_with_outcomes(study, measured)
     groups = group_names(deals, facts.treatment, facts.groups)
     table = deals_frame(deals, groups)
-    checks = sample_checks(lead, study.event_time.headline_window, deals)
+    lead = None if ready else measured.abnormal[study.expected_returns.headline]
+    checks = sample_checks(lead, facts.headline, deals) if lead else ()
     for column in columns:
         checks += () if isinstance(column, Withheld) else column.checks
     checks += doubts.checks
-    ledger = measured.ledger.then(prepared.ledger) if prepared else measured.ledger
+    longer = longer_horizons(study, measured)
+    ledger = measured.ledger.then(*longer.stages, *((prepared.ledger,) if prepared else ()))
     findings = measured.findings + (prepared.findings if prepared else ())
+    mean = None
+    if lead:
+        mean = mean_variants(
+            measured.abnormal, facts.headline, ledger, study.level, measured.readings
+        )
     results = Results(
         study=facts,
         abnormal=measured.abnormal,
@@ -65,18 +78,16 @@ def results_of(
         window_tests=found,
         columns=columns,
         lead=lead_of(columns),
-        paths=average_paths(lead, groups, plan.path_days(study), study.level, study.seed),
-        averages=averages_of(lead, facts.headline, deals, study.level),
-        groups=groups_of(lead, facts.headline, groups, facts.groups),
+        paths=no_frame(),
         diagnostics=diagnostics_frame(checks),
-        sensitivity=together(
-            mean_variants(measured.abnormal, facts.headline, ledger, study.level), doubts.variants
-        ),
+        sensitivity=together(mean, doubts.variants),
         ledger=ledger,
         findings=findings,
         tables={},
-        placebo=placebo,
-        power=power_of(lead, facts.headline),
+        summary=summary_of(study, deals, groups, facts),
+        calendar_time=longer.calendar_time,
+        matched=longer.matched,
+        buy_and_hold=longer.buy_and_hold,
         ladder=ladder_frame(doubts.rungs),
         directions=direction_frame(doubts.directions),
         doubts=doubts.notes,
@@ -84,22 +95,70 @@ def results_of(
         curve=doubts.specifications[1] if doubts.specifications else no_frame(),
     )
     tables = {
-        "abnormal_returns": abnormal_returns_frame(measured.abnormal),
         "deals": table,
-        "event_tests": event_tests_frame(found),
-        "estimates": estimates_frame(columns, facts.headline, lead_model),
+        "estimates": estimates_frame(columns, facts.explained),
         "diagnostics": results.diagnostics,
         "sensitivity": results.sensitivity,
         "ledger": ledger.frame(),
         "findings": findings_frame(findings),
+        "ladder": results.ladder,
+        "directions": results.directions,
+        "specifications": results.specifications,
+        "curve": results.curve,
+        **doubts.tables,
+    }
+    if lead:
+        results = _with_reaction(results, study, measured, lead, groups, deals, placebo)
+        tables |= _reaction_tables(results)
+    else:
+        tables["summary"] = results.summary
+    return replace(results, tables={**tables, "headline": headline_frame(results)})
+
+
+def _with_reaction(
+    results: Results,
+    study: Study,
+    measured: Measured,
+    lead: AbnormalReturns,
+    groups: Any,
+    deals: Any,
+    placebo: Any,
+) -> Results:
+    """What only returns measured from prices can tell."""
+    facts = results.study
+    return replace(
+        results,
+        paths=average_paths(lead, groups, plan.path_days(study), study.level, study.seed),
+        averages=averages_of(lead, facts.headline, deals, study.level),
+        groups=groups_of(lead, facts.headline, groups, facts.groups),
+        placebo=placebo,
+        power=power_of(lead, facts.headline),
+        several_windows=several_windows(
+            measured.abnormal, measured.windows, study.event_time.share_of_days, study.seed
+        ),
+        readings=readings_frame(
+            lead,
+            measured.readings,
+            facts.headline,
+            entry(TESTS, facts.headline_test).load(),
+            study.level,
+            study.seed,
+        ),
+    )
+
+
+def _reaction_tables(results: Results) -> dict[str, Any]:
+    return {
+        "abnormal_returns": abnormal_returns_frame(results.abnormal),
+        "event_tests": event_tests_frame(results.window_tests),
         "paths": results.paths,
         "placebo": results.placebo,
         "power": results.power,
-        "ladder": results.ladder,
-        "directions": results.directions,
         "averages": results.averages,
         "groups": results.groups,
-        "specifications": results.specifications,
-        "curve": results.curve,
+        "several_windows": results.several_windows,
+        "calendar_time": results.calendar_time,
+        "matched": results.matched,
+        "buy_and_hold": results.buy_and_hold,
+        "readings": results.readings,
     }
-    return replace(results, tables={**tables, "headline": headline_frame(results)})

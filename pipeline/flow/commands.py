@@ -9,10 +9,15 @@ from pipeline.core.clock import Clock, Progress
 from pipeline.core.estimate import Column
 from pipeline.core.findings import Finding, problem
 from pipeline.core.ledger import Ledger, LedgerEntry
+from pipeline.core.outcome import Standing
 from pipeline.core.results import Results
+from pipeline.core.tables import no_frame
 from pipeline.flow.assembled import results_of
-from pipeline.flow.explained import Doubts, column_of, doubts_of, prepared_of
-from pipeline.flow.measured import measure_deals, placebo_of, tests_of
+from pipeline.flow.doubted import Doubts, doubts_of
+from pipeline.flow.explained import column_of, deals_with_outcomes, lead_of, prepared_of
+from pipeline.flow.measured import Measured, measure_deals, placebo_of, tests_of
+from pipeline.flow.ready import ready_deals, ready_standing
+from pipeline.flow.selected import selected_of, with_selection
 from pipeline.registry import (
     TESTS,
     entry,
@@ -33,7 +38,33 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
         InputProblem: with every finding of the stage that could not go on.
     """
     clock = Clock(progress)
-    measured = measure_deals(study, clock)
+    measured = deals_of(study, clock)
+    found, placebo = reactions_of(study, measured, clock)
+    with clock.stage("characteristics"):
+        prepared = prepared_of(study, measured)
+    columns: tuple[Column, ...] = ()
+    doubts = Doubts()
+    if prepared is not None:
+        with clock.stage("estimators"):
+            columns = tuple(column_of(study, key, prepared) for key in study.columns)
+        doubts = doubts_of(study, measured, prepared, columns, lead_of(columns), clock)
+    with clock.stage("results"):
+        results = results_of(study, measured, found, prepared, columns, placebo, doubts)
+    if prepared is not None:
+        deals = deals_with_outcomes(study, measured)
+        results = with_selection(results, selected_of(study, measured, deals, prepared, clock))
+    return results, clock.seconds
+
+
+def deals_of(study: Study, clock: Clock) -> Measured:
+    """The deals with an outcome: measured from prices, or as the deal list holds it."""
+    return measure_deals(study, clock) if study.outcome is None else ready_deals(study, clock)
+
+
+def reactions_of(study: Study, measured: Measured, clock: Clock) -> tuple[Any, Any]:
+    """The tests of every window and the placebo dates; nothing where no return was measured."""
+    if study.outcome is not None:
+        return (), no_frame()
     with clock.stage("tests"):
         tests = {key: entry(TESTS, key).load() for key in tests_of(study, len(measured.deals))}
         windows = measured.windows
@@ -48,18 +79,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
             study.seed,
             [key for key in tests if entry(TESTS, key).resamples],
         )
-    placebo = placebo_of(study, measured, found[0].mean, clock)
-    with clock.stage("characteristics"):
-        prepared = prepared_of(study, measured)
-    columns: tuple[Column, ...] = ()
-    doubts = Doubts()
-    if prepared is not None:
-        with clock.stage("estimators"):
-            columns = tuple(column_of(study, key, prepared) for key in study.columns)
-        doubts = doubts_of(study, measured, prepared, columns, clock)
-    with clock.stage("results"):
-        results = results_of(study, measured, found, prepared, columns, placebo, doubts)
-    return results, clock.seconds
+    return found, placebo_of(study, measured, found[0].mean, clock)
 
 
 def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tuple[Finding, ...]]:
@@ -69,7 +89,7 @@ def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tu
         InputProblem: as :func:`run` would.
     """
     clock = Clock(progress)
-    measured = measure_deals(study, clock)
+    measured = deals_of(study, clock)
     with clock.stage("characteristics"):
         prepared = prepared_of(study, measured)
     if prepared is None:
@@ -79,13 +99,13 @@ def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tu
 
 def deal(
     study: Study, name: str, progress: Progress = lambda _: None
-) -> tuple[Story | None, Mapping[str, Any], list[tuple[str, LedgerEntry]]]:
-    """One deal: its story if it was measured, its row, and what the ledger says of it.
+) -> tuple[Story | Standing | None, Mapping[str, Any], list[tuple[str, LedgerEntry]]]:
+    """One deal: its story if it has an outcome, its row, and what the ledger says of it.
 
     Raises:
         InputProblem: as :func:`check` would, or if the deal list has no such deal.
     """
-    measured = measure_deals(study, Clock(progress))
+    measured = deals_of(study, Clock(progress))
     listed = measured.tables.deals
     if name not in set(listed["deal_id"]):
         raise problem(
@@ -99,9 +119,11 @@ def deal(
     told = [(stage, item) for stage, item in measured.ledger if item.deal.split(" (")[0] == name]
     kept = measured.deals[measured.deals["deal_id"] == name]
     source = kept if len(kept) else listed[listed["deal_id"] == name]
+    row = {str(key): value for key, value in source.iloc[0].items()}
+    if study.outcome is not None:
+        return ready_standing(study, measured.deals, name), row, told
     lead = measured.abnormal[study.expected_returns.headline]
     window = study.event_time.headline_window
-    row = {str(key): value for key, value in source.iloc[0].items()}
     return story_of(name, lead, window, study.level), row, told
 
 
@@ -110,7 +132,20 @@ def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, int]:
 
     Returns:
         ``effect, power, deals_needed`` (effect decimal), and the deals measured.
+
+    Raises:
+        InputProblem: as :func:`check` would, or ``outcome_and_returns`` for an outcome that the
+            deal list holds.
     """
+    if study.outcome is not None:
+        raise problem(
+            "outcome_and_returns",
+            "study file",
+            column="outcome",
+            got="an outcome that the deal list holds",
+            expected="returns measured from prices, whose mean the power is about",
+            remedy="Run the study: its intervals say what these deals can tell apart.",
+        )
     measured = measure_deals(study, Clock(progress))
     lead = measured.abnormal[study.expected_returns.headline]
     return power_of(lead, study.event_time.headline_window), len(lead.deals)

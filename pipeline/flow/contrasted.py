@@ -12,10 +12,12 @@ from pipeline.contrast.differences import deals_between, differences, moved_deal
 from pipeline.contrast.runs import read_run
 from pipeline.core.clock import Progress
 from pipeline.core.contrast import Contrast, Difference, Kind, SavedRun
-from pipeline.core.findings import InputProblem
+from pipeline.core.findings import InputProblem, problem
+from pipeline.core.outcome import Outcome
 from pipeline.flow.commands import run
 from pipeline.saving import digest
 from pipeline.study.load import restored
+from pipeline.study.ready import outcome_named
 
 MOST_ALONE = 12
 VERSIONS = "versions of the programs"
@@ -27,9 +29,10 @@ def contrast(first: Path, second: Path, progress: Progress = lambda _: None) -> 
     """What differs between two saved runs, and how much of each move each difference explains.
 
     Raises:
-        InputProblem: if one of the folders holds no run.
+        InputProblem: if one of the folders holds no run, or they explain different outcomes.
     """
     one, two = read_run(first), read_run(second)
+    outcome = _outcome(one, two)
     found = differences(one, two)
     moves = numbers(one.numbers, two.numbers)
     explained, notes = _explained(one, two, found, moves, progress)
@@ -43,6 +46,28 @@ def contrast(first: Path, second: Path, progress: Progress = lambda _: None) -> 
         moved=moved_deals(one, two),
         titles={**one.titles, **two.titles},
         notes=notes,
+        outcome=outcome,
+    )
+
+
+def _outcome(one: SavedRun, two: SavedRun) -> Outcome:
+    """What both runs explain.
+
+    Raises:
+        InputProblem: ``different_outcomes`` if they do not explain the same.
+    """
+    first, second = (
+        outcome_named(run.study.get("outcome"), run.study["report"]["currency"])
+        for run in (one, two)
+    )
+    if (first.column, first.unit.scale) == (second.column, second.unit.scale):
+        return first
+    raise problem(
+        "different_outcomes",
+        f"{one.name} and {two.name}",
+        got=f"{first.words} in {first.unit.words} and {second.words} in {second.unit.words}",
+        expected="two runs that explain the same outcome in the same unit",
+        remedy="Compare runs of one outcome.",
     )
 
 

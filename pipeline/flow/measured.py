@@ -2,29 +2,31 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import dataclass, field
 from typing import Any
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.clock import Clock
 from pipeline.core.findings import Finding, raise_errors
-from pipeline.core.ledger import Ledger
-from pipeline.core.prices import PricePanel
+from pipeline.core.ledger import Ledger, StageLedger
+from pipeline.core.prices import Integers, PricePanel
+from pipeline.core.reading import Reading
 from pipeline.core.window import Window
+from pipeline.flow.peers import models_of, screen_peers
+from pipeline.flow.placed import Placed, place_deals, unused_sessions
+from pipeline.flow.priced import Priced, at_the_end, price_panels
+from pipeline.flow.readings import readings_of
 from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
-    EXPECTED_RETURNS,
     TESTS,
     entry,
 )
-from pipeline.returns.events import (
-    keep_first_of_overlapping,
-    locate,
-    masked_sessions,
-)
+from pipeline.returns.benchmarks import benchmark_findings, benchmark_fits, dominated
+from pipeline.returns.confounding import without_news
+from pipeline.returns.events import EventOptions
+from pipeline.returns.few import few_events
 from pipeline.returns.measure import measure
-from pipeline.returns.panel import build_panels
 from pipeline.returns.placebo import pseudo_events
 from pipeline.returns.screens import (
     jumps_near_events,
@@ -32,10 +34,11 @@ from pipeline.returns.screens import (
     screen_estimation,
     screen_event,
 )
+from pipeline.returns.trading import benchmark_in_windows, lacking_prices
 from pipeline.significance.choice import leading_test
 from pipeline.significance.dependence import links
 from pipeline.significance.placebo import placebo_sizes
-from pipeline.study import plan
+from pipeline.study import plan, plan_events, plan_prices, plan_returns
 from pipeline.study.schema import Study
 
 
@@ -50,6 +53,9 @@ class Measured:
     findings: tuple[Finding, ...]
     tables: Tables
     windows: tuple[Window, ...]
+    located: Any = None
+    readings: tuple[Reading, ...] = ()
+    measured_on: Mapping[str, PricePanel] = field(default_factory=dict)
 
 
 def measure_deals(study: Study, clock: Clock) -> Measured:
@@ -61,47 +67,102 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
             plan.wanted(study),
             zone=study.inputs.timestamp_zone,
             date_format=study.inputs.date_format,
+            rules=plan_events.deal_rules(study),
+            declared=plan_prices.quoted_files(study),
         )
     with clock.stage("sessions and prices"):
-        panels, calendars, found = build_panels(
-            tables.listings,
-            tables.prices,
-            tables.benchmarks,
-            tables.factors,
-            tables.factor_names,
-            plan.calendar_changes(study),
+        priced = price_panels(study, tables)
+        placed = place_deals(
+            priced.tables,
+            priced.panels,
+            priced.calendars,
+            options,
+            study.event_time.second_lines,
+            priced.rates,
         )
-        raise_errors(found)
-        located, at_zero = locate(tables.deals, panels, calendars, options)
-        raise_errors(jumps_near_events(located, panels, options))
-        first, repeats = keep_first_of_overlapping(located, options.headline)
-    ledger = Ledger((tables.ledger, at_zero, repeats))
-    refuse_empty(len(first), ledger)
+        sound = _sound(study, placed, priced, options)
+    ledger = Ledger((tables.ledger, *placed.stages, *sound.stages))
+    refuse_empty(len(sound.deals), ledger)
     with clock.stage("abnormal returns"):
-        masked = masked_sessions(first, located, options.estimation, options.mask_sessions)
-        abnormal = {
-            key: measure(
-                key,
-                entry(EXPECTED_RETURNS, key).load(),
-                first,
-                masked,
-                panels,
-                options.estimation,
-                options.span,
-            )
-            for key in study.expected_returns.all_models
-        }
-        lead = study.expected_returns.headline
-        usable, at_estimation = screen_estimation(first, abnormal[lead], panels, masked, options)
-        abnormal = {key: item.select(usable) for key, item in abnormal.items()}
-        traded, at_event = screen_event(abnormal[lead], options.headline)
-        abnormal = {key: item.select(traded) for key, item in abnormal.items()}
-    ledger = ledger.then(at_estimation, at_event)
+        deals, abnormal, stages = _measured(study, sound, placed, priced, options)
+    ledger = ledger.then(*stages)
     refuse_empty(ledger.rows_kept, ledger)
+    lead = study.expected_returns.headline
+    model = (lead, sound.models[lead])
+    return Measured(
+        deals=deals,
+        abnormal=abnormal,
+        panels=priced.panels,
+        ledger=ledger,
+        findings=(*tables.findings, *sound.findings, *few_events(deals, study.inputs.deals.name)),
+        tables=placed.tables,
+        windows=plan.windows(study, bool(deals["timing"].str.startswith("date only").any())),
+        located=placed.located,
+        readings=readings_of(placed, deals, priced.measured_on, model, options),
+        measured_on=priced.measured_on,
+    )
+
+
+@dataclass(frozen=True, slots=True)
+class _Sound:
+    """The deals whose prices and benchmark can serve, the models, and what was said of them."""
+
+    deals: Any
+    models: Mapping[str, Callable[..., Any]]
+    stages: tuple[StageLedger, ...]
+    findings: tuple[Finding, ...]
+
+
+def _sound(study: Study, placed: Placed, priced: Priced, options: EventOptions) -> _Sound:
+    """Whether prices, benchmarks and peers can serve the deals as placed.
+
+    Raises:
+        InputProblem: with what speaks against it.
+    """
+    panels, located, tables = priced.panels, placed.located, placed.tables
+    screens, limits = plan_prices.screen_limits(study), plan_returns.benchmark_limits(study)
+    raise_errors(
+        [
+            *lacking_prices(placed.stages[0], screens),
+            *jumps_near_events(located, panels, options, screens),
+            *benchmark_in_windows(located, panels, options.headline),
+        ]
+    )
+    fits = benchmark_fits(panels, located)
+    found = benchmark_findings(panels, fits, limits)
+    raise_errors(found)
+    models = models_of(study, tables, located)
+    deals, at_peers = screen_peers(study, tables, located, placed.first, panels)
+    doubted, at_benchmark = dominated(deals, fits, tables.benchmarks, limits)
+    stages = (*at_peers, *((at_benchmark,) if at_benchmark.entries else ()))
+    return _Sound(deals, models, stages, (*priced.findings, *found, *doubted))
+
+
+def _measured(
+    study: Study, sound: _Sound, placed: Placed, priced: Priced, options: EventOptions
+) -> tuple[Any, dict[str, AbnormalReturns], tuple[StageLedger, StageLedger]]:
+    """The deals that stay, their abnormal returns under each model, and the last two stages."""
+    first, panels, screens = sound.deals, priced.measured_on, plan_prices.screen_limits(study)
+    masked = unused_sessions(first, placed, options, placed.news)
+    abnormal = {
+        key: measure(key, function, first, masked, panels, options.estimation, options.span)
+        for key, function in sound.models.items()
+    }
+    if options.confounding == "dummy":
+        news = placed.news.mask(first, options.span)
+        abnormal = {key: without_news(item, news) for key, item in abnormal.items()}
+    lead = study.expected_returns.headline
+    usable, at_estimation = screen_estimation(
+        first, abnormal[lead], panels, masked, options, screens
+    )
+    abnormal = {key: item.select(usable) for key, item in abnormal.items()}
+    traded, at_event = screen_event(
+        abnormal[lead], options.headline, first[usable], priced.panels, screens
+    )
+    abnormal = {key: item.select(traded) for key, item in abnormal.items()}
     deals = first[usable][traded].reset_index(drop=True)
-    windows = plan.windows(study, bool(deals["timing"].str.startswith("date only").any()))
-    findings = tables.findings + tuple(found)
-    return Measured(deals, abnormal, panels, ledger, findings, tables, windows)
+    abnormal, at_event = at_the_end(abnormal, lead, deals, at_event, priced, options)
+    return deals, abnormal, (at_estimation, at_event)
 
 
 def tests_of(study: Study, deals: int) -> tuple[str, ...]:
@@ -114,13 +175,13 @@ def placebo_of(study: Study, measured: Measured, mean: float, clock: Clock) -> A
     asked, window = study.placebo, study.event_time.headline_window
     model = study.expected_returns.headline
     lead = measured.abnormal[model]
-    samples: Iterable[AbnormalReturns] = ()
+    samples: Iterable[tuple[Integers, AbnormalReturns]] = ()
     if asked.draws and len(lead.deals) > 1:
         samples = pseudo_events(
             model,
-            entry(EXPECTED_RETURNS, model).load(),
+            models_of(study, measured.tables, measured.located)[model],
             measured.deals,
-            measured.panels,
+            measured.measured_on,
             study.event_time.estimation_window,
             window,
             draws=asked.draws,
@@ -134,4 +195,4 @@ def placebo_of(study: Study, measured: Measured, mean: float, clock: Clock) -> A
         if not entry(TESTS, key).resamples
     }
     with clock.stage("placebo dates"):
-        return placebo_sizes(samples, window, tests, links(lead), lead.deals, mean, 1 - study.level)
+        return placebo_sizes(samples, window, tests, links(lead), mean, 1 - study.level)

@@ -6,6 +6,7 @@ from collections.abc import Callable
 
 from pipeline.core.estimate import Column as Estimated
 from pipeline.core.estimate import Estimate, NotApplicable, Withheld
+from pipeline.core.outcome import Unit
 from pipeline.report.document import (
     Bullets,
     Cell,
@@ -18,9 +19,10 @@ from pipeline.report.document import (
     Text,
 )
 from pipeline.report.material import Material, capital, effect_digits, embedded, named, prose, taken
-from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, plain, true_minus
+from pipeline.report.numerals import count, in_unit, p_value, plain, true_minus, unit_digits
 from pipeline.report.wording import (
     df_words,
+    per_unit,
     set_cell,
     set_pieces,
     set_words,
@@ -37,9 +39,10 @@ def comparison_table(material: Material, *, full: bool = True) -> Table:
     variables = _variables(material)
     rows = [_variable_row(material, name) for name in variables]
     footer = [*_footer(material), *(_fit_rows(columns) if full else ())]
-    footer += _set_rows(columns)
+    footer += _set_rows(columns, material.unit)
     footer += _test_rows(columns) if full else ()
-    headings = [Column("Variable"), *(Column(_heading(c), "bp per unit") for c in columns)]
+    unit = per_unit(material.unit)
+    headings = [Column("Variable"), *(Column(_heading(c), unit) for c in columns)]
     return Table(
         "comparison",
         prose("The estimators side by side"),
@@ -63,7 +66,7 @@ def _variables(material: Material) -> list[str]:
 
 
 def _variable_row(material: Material, name: str) -> Row:
-    cells = (_coefficient(c, name) for c in material.results.columns)
+    cells = (_coefficient(c, name, material.unit) for c in material.results.columns)
     return (Text(_variable_words(material, name)), *cells)
 
 
@@ -71,15 +74,15 @@ def _variable_words(material: Material, name: str) -> str:
     return capital(material.study.words(name))
 
 
-def _coefficient(column: Estimated, name: str) -> Cell:
+def _coefficient(column: Estimated, name: str, unit: Unit) -> Cell:
     if not isinstance(column, Estimate) or name not in column.names:
         return None
     term = column.term(name)
-    digits = bp_digits(BP * term["std_error"])
+    digits = unit_digits(float(term["std_error"]), unit)
     if name == column.treatment:
-        return set_cell(term["coefficient"], column.interval, digits)
-    low, high = (bp(term[end], digits) for end in ("ci_low", "ci_high"))
-    return Interval(bp(term["coefficient"], digits), low, high)
+        return set_cell(term["coefficient"], column.interval, digits, unit)
+    low, high = (in_unit(term[end], unit, digits) for end in ("ci_low", "ci_high"))
+    return Interval(in_unit(term["coefficient"], unit, digits), low, high)
 
 
 def _footer(material: Material) -> list[Row]:
@@ -132,9 +135,9 @@ def _fit_cell(key: str) -> Callable[[Estimate], Cell]:
     return lambda e: plain(float(e.fit[key])) if key in e.fit else None
 
 
-def _set_rows(columns: tuple[Estimated, ...]) -> list[Row]:
+def _set_rows(columns: tuple[Estimated, ...], unit: Unit) -> list[Row]:
     titles = set_titles(columns)
-    return [_row(f"Set: {title}", columns, _set_cell(key)) for key, title in titles.items()]
+    return [_row(f"Set: {title}", columns, _set_cell(key, unit)) for key, title in titles.items()]
 
 
 def set_titles(columns: tuple[Estimated, ...]) -> dict[str, str]:
@@ -144,8 +147,13 @@ def set_titles(columns: tuple[Estimated, ...]) -> dict[str, str]:
     return {key: tests.get(key, spoken(key)) for key in keys}
 
 
-def _set_cell(key: str) -> Callable[[Estimate], Cell]:
-    return lambda e: Text(set_words(e.sets[key], effect_digits(e))) if key in e.sets else None
+def _set_cell(key: str, unit: Unit) -> Callable[[Estimate], Cell]:
+    def cell(estimate: Estimate) -> Cell:
+        if key not in estimate.sets:
+            return None
+        return Text(set_words(estimate.sets[key], effect_digits(estimate, unit), unit))
+
+    return cell
 
 
 def _tests(columns: tuple[Estimated, ...]) -> dict[str, str]:
@@ -178,7 +186,8 @@ def _notes(material: Material) -> tuple[Paragraph, ...]:
     outcomes = dict.fromkeys(e.outcome for e in material.estimates)
     notes = [
         prose("Explained: ", taken("; ".join(outcomes), "estimate"), ". Cells above the footer "
-              "hold the change in basis points (bp) per unit of the variable; its ",
+              "hold the change in ", taken(material.unit.words, "study"),
+              " per unit of the variable; its ",
               material.percent("confidence_level"),
               " confidence set stands below, an interval in brackets, any other set in words. A "
               "blank cell: not part of that column."),
@@ -204,12 +213,13 @@ def _reading(material: Material, column: Estimated, with_notes: bool) -> Paragra
         reason = taken(material.in_words(column.reason), "estimate")
         return prose("no number: ", reason, lead=f"{column.title}:")
     name = material.effect_name(column)
-    digits = effect_digits(column)
+    digits = effect_digits(column, material.unit)
     notes = (taken(material.in_words(note), "estimate") for note in column.notes if with_notes)
     spaced = tuple(piece for note in notes for piece in (" ", note))
     return prose(
         taken(_variable_words(material, column.treatment), "study"),
-        f" {column.claim} ", material.coefficient(column), " bp (",
+        f" {column.claim} ", material.unit.before, material.coefficient(column),
+        f"{material.unit.change} (",
         material.percent(name, "level"), " set: ", set_pieces(material, name, digits),
         "). It estimates: ", embedded(material.in_words(column.estimand), "estimate"), ".",
         spaced, lead=f"{true_minus(column.title)}:",

@@ -7,6 +7,7 @@ from collections.abc import Mapping
 import pandas as pd
 
 from pipeline.core.contrast import Contrast, Kind
+from pipeline.core.outcome import Unit
 from pipeline.report.document import (
     Block,
     Cell,
@@ -20,11 +21,12 @@ from pipeline.report.document import (
     Text,
 )
 from pipeline.report.material import prose, quote, taken
-from pipeline.report.numerals import BP, bp, count, percent
+from pipeline.report.numerals import count, in_unit, percent
 from pipeline.report.wording import joined, spoken
 
 WORDS = {
     "mean_reaction": "Mean reaction",
+    "mean_outcome": "Mean outcome",
     "deals_kept": "Deals in the regression",
     "together": "Only together, beyond each alone",
 }
@@ -72,18 +74,26 @@ def _finding(contrast: Contrast) -> Paragraph:
     if not contrast.differences:
         return prose("The two runs read the same tables under the same settings and programs.")
     found = contrast.numbers["number"].tolist()
-    if "mean_reaction" not in found:
+    mean, unit = _mean_of(contrast), contrast.outcome.unit
+    if mean not in found:
         return prose("The runs share no headline number.")
     all_frames = frames(contrast)
     first, second, move = (
-        _quoted(all_frames, "numbers", side, {"number": "mean_reaction"}, signed=side == "move")
+        _quoted(all_frames, "numbers", side, {"number": mean}, unit, signed=side == "move")
         for side in ("first", "second", "move")
     )
+    what = contrast.outcome.words if contrast.outcome.ready else "reaction"
     return prose(
-        "The mean reaction was ", first, " bp in “", taken(contrast.first, "study"), "” and is ",
-        second, " bp in “", taken(contrast.second, "study"), "”, a move of ", move, " bp. ",
+        "The mean ", taken(what, "study"), " was ", unit.before, first, f"{unit.level} in “",
+        taken(contrast.first, "study"), "” and is ", unit.before, second, f"{unit.level} in “",
+        taken(contrast.second, "study"), "”, a move of ", unit.before, move, f"{unit.change}. ",
         _carrier(contrast), _deal_words(contrast),
     )  # fmt: skip
+
+
+def _mean_of(contrast: Contrast) -> str:
+    """The name of the mean among the numbers followed."""
+    return "mean_outcome" if contrast.outcome.ready else "mean_reaction"
 
 
 def _quoted(
@@ -91,14 +101,17 @@ def _quoted(
     table: str,
     column: str,
     where: Mapping[str, Key],
+    unit: Unit,
     signed: bool = False,
 ) -> Quote:
-    return quote(all_frames, table, column, where, scale=BP, digits=1, signed=signed)
+    return quote(
+        all_frames, table, column, where, scale=unit.scale, digits=unit.decimals, signed=signed
+    )
 
 
 def _carrier(contrast: Contrast) -> str:
     """The differences that move the mean, the largest first, in words."""
-    own = contrast.explained[contrast.explained["number"] == "mean_reaction"]
+    own = contrast.explained[contrast.explained["number"] == _mean_of(contrast)]
     own = own[own["difference"] != "together"]
     large = own[own["share"].abs() >= LARGE_SHARE]
     if own.empty:
@@ -128,17 +141,20 @@ def _numbers(contrast: Contrast) -> Table:
     rows = []
     for item in contrast.numbers.to_dict("records"):
         counted = bool(item["unit"] == "deals")
-        cells = [_value(float(item[side]), counted) for side in ("first", "second", "move")]
-        unit = "deals" if counted else "bp"
+        cells = [
+            _value(float(item[side]), counted, contrast.outcome.unit)
+            for side in ("first", "second", "move")
+        ]
+        unit = "deals" if counted else contrast.outcome.unit.short
         rows.append((Text(label(contrast, str(item["number"]))), Text(unit), *cells))
     note = prose("A blank stands where a run has no such column or withheld it.")
     return Table("numbers", prose("Headline numbers of both runs"), columns, tuple(rows), (note,))
 
 
-def _value(value: float, counted: bool) -> Cell:
+def _value(value: float, counted: bool, unit: Unit) -> Cell:
     if value != value:
         return None
-    return count(round(value)) if counted else bp(value, 1)
+    return count(round(value)) if counted else in_unit(value, unit, unit.decimals)
 
 
 def _differences(contrast: Contrast) -> Table:
@@ -170,15 +186,15 @@ def _explained(contrast: Contrast) -> tuple[Block, ...]:
         return (prose("Nothing was made again."), *notes)
     numbers = list(dict.fromkeys(contrast.explained["number"]))
     differences = list(dict.fromkeys(contrast.explained["difference"]))
-    own = contrast.explained.set_index(["difference", "number"])
+    own, unit = contrast.explained.set_index(["difference", "number"]), contrast.outcome.unit
     columns = (
         Column("Difference"),
-        *(Column(label(contrast, n), "" if n == "deals_kept" else "bp") for n in numbers),
+        *(Column(label(contrast, n), "" if n == "deals_kept" else unit.short) for n in numbers),
     )
     moves = tuple(
         (
             Text(_place(name)),
-            *(_value(float(own.loc[(name, n), "move"]), n == "deals_kept") for n in numbers),
+            *(_value(float(own.loc[(name, n), "move"]), n == "deals_kept", unit) for n in numbers),
         )
         for name in differences
     )
@@ -217,14 +233,23 @@ def _deals(contrast: Contrast) -> Table:
 
 
 def _moved(contrast: Contrast) -> Table:
+    unit = contrast.outcome.unit
     columns = (
         Column("Deal"),
-        Column(contrast.first, "bp"),
-        Column(contrast.second, "bp"),
-        Column("Move", "bp"),
+        Column(contrast.first, unit.heading),
+        Column(contrast.second, unit.heading),
+        Column("Move", unit.short),
     )
     rows = tuple(
-        (Text(str(row["deal"])), *(bp(float(row[side])) for side in ("first", "second", "move")))
+        (
+            Text(str(row["deal"])),
+            *(
+                in_unit(float(row[side]), unit, unit.decimals - 1)
+                for side in ("first", "second", "move")
+            ),
+        )
         for row in contrast.moved.to_dict("records")
     )
-    return Table("moved", prose("Deals of both whose reaction moved most"), columns, rows)
+    what = contrast.outcome.words if contrast.outcome.ready else "reaction"
+    title = prose("Deals of both whose ", taken(what, "study"), " moved most")
+    return Table("moved", title, columns, rows)

@@ -211,6 +211,8 @@ class Figure:
         data: what is drawn, in the units drawn.
         marks: further positions on the axes, by name.
         axis: what the value axis shows, with its unit; empty where the drawing knows it.
+        unit: the ending of the columns of ``data`` that hold amounts of the outcome.
+        beside: group -> words printed in its part of the picture.
     """
 
     name: str
@@ -221,6 +223,8 @@ class Figure:
     data: pd.DataFrame
     marks: Mapping[str, float] = field(default_factory=dict)
     axis: str = ""
+    unit: str = "bp"
+    beside: Mapping[str, str] = field(default_factory=dict)
 
 
 Block = Paragraph | Bullets | Callout | Table | Figure

@@ -8,8 +8,8 @@ from __future__ import annotations
 
 import io
 import re
-import textwrap
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
+from dataclasses import replace
 from functools import lru_cache
 from html import escape
 from typing import TYPE_CHECKING, Any
@@ -22,19 +22,28 @@ from matplotlib.backends.backend_svg import FigureCanvasSVG
 from matplotlib.figure import Figure as Canvas
 
 from pipeline.report.document import Figure
-from pipeline.report.numerals import clean, show
+from pipeline.report.doubt_drawings import DRAWINGS as DOUBTS
+from pipeline.report.drawing import (
+    COLOURS,
+    FAINT,
+    INK,
+    LINES,
+    MARKERS,
+    STRIP,
+    Drawing,
+    ticks,
+    wrapped,
+)
+from pipeline.report.numerals import clean
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
 
-# Blue and vermilion of the Okabe-Ito palette: apart for every kind of colour vision, and of
-# different lightness.
-COLOURS = ("#0072b2", "#d55e00", "#333333", "#009e73")
-LINES = ("-", (0, (6, 2)), (0, (2, 1.5)), "-.")
-MARKERS = ("o", "s", "^", "D")
-INK, FAINT, STRIP = "#222222", "#8a8a8a", "#ececec"
 WIDTH = 7.2
 LABELLED = 45
+LIKELIHOOD_DROP = 1.92
+"""Half the 95% point of χ²(1)."""
+DEEPEST = 15.0
 LINE = 15
 
 STYLE: dict[Any, Any] = {
@@ -77,7 +86,7 @@ def titled_svg(figure: Figure) -> str:
     if size is None:
         raise ValueError(f"the drawing of {figure.name} has no viewBox")
     width, height = float(size[1]), float(size[2])
-    lines = _wrapped(figure.title.text, 78, 4).split("\n")
+    lines = wrapped(figure.title.text, 78, 4).split("\n")
     above = 10 + LINE * len(lines)
     total = height + above
     head = "".join(
@@ -115,10 +124,15 @@ def csv(data: pd.DataFrame) -> bytes:
 
 
 def _draw(figure: Figure) -> Canvas:
-    height = DRAWINGS[figure.kind][0](figure.data)
+    height = DRAWINGS[figure.kind][0](_bare(figure))
     canvas = Canvas(figsize=(WIDTH, height), layout="constrained")
-    DRAWINGS[figure.kind][1](canvas, figure)
+    DRAWINGS[figure.kind][1](canvas, replace(figure, data=_bare(figure)))
     return canvas
+
+
+def _bare(figure: Figure) -> pd.DataFrame:
+    """The data, its columns of amounts without the unit in their names."""
+    return figure.data.rename(columns=lambda name: str(name).removesuffix(f"_{figure.unit}"))
 
 
 def _path(canvas: Canvas, figure: Figure) -> None:
@@ -129,10 +143,10 @@ def _path(canvas: Canvas, figure: Figure) -> None:
     ends = []
     for at, (group, path) in enumerate(figure.data.groupby("group", sort=False)):
         colour, marker = COLOURS[at % 4], MARKERS[at % 4]
-        x, y = path["session"], path["mean_bp"]
-        axes.fill_between(x, path["low_bp"], path["high_bp"], color=colour, alpha=0.13, lw=0)
-        if "low_path_bp" in path:
-            for edge in ("low_path_bp", "high_path_bp"):
+        x, y = path["session"], path["mean"]
+        axes.fill_between(x, path["low"], path["high"], color=colour, alpha=0.13, lw=0)
+        if "low_path" in path:
+            for edge in ("low_path", "high_path"):
                 axes.plot(x, path[edge], color=colour, lw=0.7, ls=(0, (1, 2)))
         every = max(1, len(path) // 8)
         axes.plot(
@@ -141,14 +155,14 @@ def _path(canvas: Canvas, figure: Figure) -> None:
         ends.append((str(group), float(x.iloc[-1]), float(y.iloc[-1]), colour))
     axes.set_xlabel("Sessions from the announcement")
     axes.set_ylabel("Mean cumulative abnormal return (bp)")
-    _ticks(axes)
+    ticks(axes)
     axes.set_xlim(figure.data["session"].min() - 0.5, figure.data["session"].max() + 0.5)
     _end_labels(axes, ends)
 
 
 def _curve(canvas: Canvas, figure: Figure) -> None:
     axes = canvas.subplots()
-    x, y = figure.data["effect_bp"], figure.data["power_percent"]
+    x, y = figure.data["effect"], figure.data["power_percent"]
     axes.axhline(80, color=FAINT, lw=0.8, ls=(0, (1, 2)))
     axes.axvline(figure.marks["detectable"], color=FAINT, lw=0.8, ls=(0, (1, 2)))
     axes.plot(x, y, color=COLOURS[0], lw=1.8, marker=MARKERS[0], ms=4)
@@ -156,7 +170,21 @@ def _curve(canvas: Canvas, figure: Figure) -> None:
     axes.set_xlim(0, float(min(x.max(), 4 * figure.marks["detectable"])))
     axes.set_xlabel("True mean abnormal return (bp)")
     axes.set_ylabel("Chance that a test finds it (%)")
-    _ticks(axes)
+    ticks(axes)
+
+
+def _profile(canvas: Canvas, figure: Figure) -> None:
+    axes = canvas.subplots()
+    data = figure.data
+    axes.axhline(-LIKELIHOOD_DROP, color=FAINT, lw=0.8, ls=(0, (6, 2)))
+    if "estimate" in figure.marks:
+        axes.axvline(figure.marks["estimate"], color=COLOURS[1], lw=1.2, ls=(0, (4, 2)))
+    axes.plot(data["rho"], data["log_likelihood"], color=COLOURS[0], lw=1.8, marker="o", ms=3)
+    axes.set_xlim(-1, 1)
+    axes.set_ylim(max(float(data["log_likelihood"].min()), -DEEPEST) - 0.5, 0.7)
+    axes.set_xlabel("Correlation between announcing and return")
+    axes.set_ylabel("Log-likelihood below the highest seen")
+    ticks(axes)
 
 
 def _choices_height(data: pd.DataFrame) -> float:
@@ -175,28 +203,28 @@ def _choices(canvas: Canvas, figure: Figure) -> None:
     data, rows = figure.data, _choice_rows(figure.data)
     above, below = canvas.subplots(2, 1, sharex=True, height_ratios=[2.2, 0.17 * len(rows) + 0.2])
     x = data["rank"]
-    above.vlines(x, data["low_bp"], data["high_bp"], color=STRIP, lw=1.2)
-    above.plot(x, data["estimate_bp"], ls="none", marker="o", ms=2.2, color=COLOURS[0])
+    above.vlines(x, data["low"], data["high"], color=STRIP, lw=1.2)
+    above.plot(x, data["estimate"], ls="none", marker="o", ms=2.2, color=COLOURS[0])
     above.axhline(0, color=FAINT, lw=0.8)
     at = figure.marks["headline"]
     if at:
-        value = data["estimate_bp"].iloc[int(at) - 1]
+        value = data["estimate"].iloc[int(at) - 1]
         above.plot([at], [value], marker="s", ms=6, color=COLOURS[1], ls="none")
     above.set_ylabel(figure.axis)
-    _ticks(above)
+    ticks(above)
     for place, (name, choice) in enumerate(rows):
         made = x[data[name].astype(str) == choice]
         below.plot(made, np.full(len(made), place), ls="none", marker="|", ms=4, color=INK)
     below.set_yticks(range(len(rows)), [choice for _, choice in rows], fontsize=7.5)
     below.set_ylim(len(rows) - 0.5, -0.5)
     below.set_xlabel("Ways to make the estimate, sorted")
-    _ticks(below, y=False)
+    ticks(below, y=False)
 
 
 def _end_labels(axes: Axes, ends: list[tuple[str, float, float, str]]) -> None:
     """Name the lines at their ends, pushed apart where they would meet."""
     low, high = axes.get_ylim()
-    texts = [_wrapped(name, 18, 3) for name, *_ in ends]
+    texts = [wrapped(name, 18, 3) for name, *_ in ends]
     heights = [(high - low) * 0.055 * (text.count("\n") + 1) for text in texts]
     order = sorted(range(len(ends)), key=lambda i: ends[i][2])
     places: dict[int, float] = {}
@@ -216,25 +244,25 @@ def _distribution(canvas: Canvas, figure: Figure) -> None:
     for at, (axes, group) in enumerate(zip(panels, groups, strict=True)):
         bars = figure.data[figure.data["group"] == group]
         colour = COLOURS[at % 4]
-        width = bars["to_bp"] - bars["from_bp"]
-        axes.bar(bars["from_bp"], bars["share_percent"], width, align="edge", color=colour,
+        width = bars["to"] - bars["from"]
+        axes.bar(bars["from"], bars["share_percent"], width, align="edge", color=colour,
                  alpha=0.55, edgecolor="white", lw=0.6, hatch="" if at == 0 else "///")  # fmt: skip
-        axes.axvline(0, color=FAINT, lw=0.8)
+        if figure.data["from"].min() <= 0 <= figure.data["to"].max():
+            axes.axvline(0, color=FAINT, lw=0.8)
         median = figure.marks[f"median: {group}"]
         axes.axvline(median, color=INK, lw=1.4, ls=(0, (4, 2)))
-        facts = f"{int(bars['deals'].sum()):,} deals, median {show(median)} bp"
-        words = f"{_wrapped(str(group), 60, 2)}\n{facts}"
+        words = f"{wrapped(str(group), 60, 2)}\n{figure.beside.get(str(group), '')}"
         axes.text(0.99, 0.95, words, transform=axes.transAxes, ha="right", va="top", color=colour)
         axes.set_ylabel("Share of deals (%)")
-        _ticks(axes)
-    panels[-1].set_xlabel("Cumulative abnormal return in the headline window (bp)")
+        ticks(axes)
+    panels[-1].set_xlabel(wrapped(figure.axis, 70, 2))
 
 
 def _intervals(canvas: Canvas, figure: Figure) -> None:
     data = figure.data.reset_index(drop=True)
     crowded = len(data) > LABELLED
     if crowded:
-        data = data.sort_values("estimate_bp", ascending=False, ignore_index=True)
+        data = data.sort_values("estimate", ascending=False, ignore_index=True)
     axes = canvas.subplots()
     axes.axvline(0, color=FAINT, lw=0.8)
     if "estimate" in figure.marks:
@@ -248,10 +276,10 @@ def _intervals(canvas: Canvas, figure: Figure) -> None:
     axes.set_yticklabels([] if crowded else [_label(row) for _, row in data.iterrows()])
     axes.tick_params(axis="y", length=0, pad=10)
     axes.spines["left"].set_visible(False)
-    axes.set_xlabel(_wrapped(figure.axis, 70, 2))
+    axes.set_xlabel(wrapped(figure.axis, 70, 2))
     if crowded:
         axes.set_ylabel("Variants in order of size; names in the table")
-    _ticks(axes, y=False)
+    ticks(axes, y=False)
 
 
 def _interval_height(data: pd.DataFrame) -> float:
@@ -264,21 +292,16 @@ def _interval_height(data: pd.DataFrame) -> float:
 
 def _label(row: pd.Series[Any]) -> str:
     parts = (clean(str(row["dimension"])), clean(str(row["label"])))
-    return _wrapped(": ".join(part for part in parts if part), 38, 3)
-
-
-def _wrapped(text: str, width: int, lines: int) -> str:
-    """``text`` on at most ``lines`` lines, an ellipsis where it was cut."""
-    return "\n".join(textwrap.wrap(clean(text), width, max_lines=lines, placeholder=" …"))
+    return wrapped(": ".join(part for part in parts if part), 38, 3)
 
 
 def _reach(data: pd.DataFrame) -> tuple[float, float]:
     """The span of the axis: all estimates and ends, odd ends far away left to arrows."""
-    every = data[["estimate_bp", "low_bp", "high_bp"]].to_numpy(dtype=np.float64).ravel()
+    every = data[["estimate", "low", "high"]].to_numpy(dtype=np.float64).ravel()
     found = np.append(every[np.isfinite(every)], 0.0)
-    middle = data["estimate_bp"].to_numpy(dtype=np.float64)
+    middle = data["estimate"].to_numpy(dtype=np.float64)
     bounded = data[data["shape"] == "interval"]
-    spread = float((bounded["high_bp"] - bounded["low_bp"]).max()) if len(bounded) else 1.0
+    spread = float((bounded["high"] - bounded["low"]).max()) if len(bounded) else 1.0
     low = max(found.min(), middle.min() - 3 * spread)
     high = min(found.max(), middle.max() + 3 * spread)
     low, high = min(low, 0.0), max(high, 0.0)
@@ -296,17 +319,17 @@ def _interval_row(
             if end == edge:
                 axes.plot([end], [y], marker=marker, ms=6, clip_on=False, color=COLOURS[0])
     face = COLOURS[1] if row["lead"] else "white"
-    axes.plot([row["estimate_bp"]], [y], marker="s" if row["lead"] else "o", mfc=face,
+    axes.plot([row["estimate"]], [y], marker="s" if row["lead"] else "o", mfc=face,
               mec=COLOURS[1] if row["lead"] else COLOURS[0], mew=1.4,
               ms=3.5 if crowded else 6.5, ls="")  # fmt: skip
     if row["shape"] == "empty":
-        axes.annotate("empty set", (row["estimate_bp"], y), (8, 0), textcoords="offset points",
+        axes.annotate("empty set", (row["estimate"], y), (8, 0), textcoords="offset points",
                       va="center", fontsize=8.5)  # fmt: skip
 
 
 def _segments(row: pd.Series[Any], left: float, right: float) -> list[tuple[float, float]]:
     """What of the axis the set covers, cut at the axis's ends."""
-    low, high = float(row["low_bp"]), float(row["high_bp"])
+    low, high = float(row["low"]), float(row["high"])
     spans = {
         "interval": [(low, high)],
         "two rays": [(left, low), (high, right)],
@@ -317,22 +340,12 @@ def _segments(row: pd.Series[Any], left: float, right: float) -> list[tuple[floa
     return [(a, b) for a, b in cut if a <= b]
 
 
-def _ticks(axes: Axes, *, y: bool = True) -> None:
-    """Tick labels with thousands separated and a true minus sign."""
-    for axis in (axes.xaxis, axes.yaxis) if y else (axes.xaxis,):
-        axis.set_major_locator(mpl.ticker.MaxNLocator(7, steps=[1, 2, 2.5, 5, 10]))
-        axis.set_major_formatter(mpl.ticker.FuncFormatter(_tick))
-
-
-def _tick(value: float, _: int | None) -> str:
-    return show(value, 0 if float(value).is_integer() else 1)
-
-
-Drawing = tuple[Callable[[pd.DataFrame], float], Callable[[Canvas, Figure], None]]
 DRAWINGS: Mapping[str, Drawing] = {
     "path": (lambda data: 4.0, _path),
     "distribution": (lambda data: 1.0 + 1.6 * data["group"].nunique(), _distribution),
     "intervals": (_interval_height, _intervals),
     "curve": (lambda data: 3.2, _curve),
+    "profile": (lambda data: 3.2, _profile),
     "choices": (_choices_height, _choices),
+    **DOUBTS,
 }

@@ -6,6 +6,7 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.estimate import Estimate
+from pipeline.core.outcome import Unit
 from pipeline.core.prices import Floats
 from pipeline.report.document import Figure, Piece
 from pipeline.report.headline import MEAN_REACTION, group_reactions, sensitivity_targets
@@ -16,9 +17,10 @@ from pipeline.report.material import (
     embedded,
     named,
     prose,
+    taken,
 )
-from pipeline.report.numerals import BP, PERCENT, bp_digits, show, slug, true_minus
-from pipeline.report.wording import direction, set_words
+from pipeline.report.numerals import BP, PERCENT, amount, show, slug, true_minus, unit_digits
+from pipeline.report.wording import axis_words, direction, per_unit, set_words
 
 BINS = 30
 SORTED = 12
@@ -83,42 +85,61 @@ def distribution_figure(material: Material) -> Figure | None:
     groups = group_reactions(material.results)
     if not groups or sum(len(values) for values in groups.values()) < 2:
         return None
-    pieces: list[Piece] = ["Reactions below zero: "]
+    unit = material.unit
+    pieces: list[Piece] = [f"{_spread_words(material)} below zero: "]
     for at, group in enumerate(groups):
         share = material.number(f"share_below_zero: {group}", scale=PERCENT, digits=0)
         deals = material.number(f"deals: {group}")
         pieces += [", " if at else "", embedded(group, "study"), " ", share, "% of ", deals]
     caption = prose(
-        "Cumulative abnormal returns over sessions ", material.window(), ", in basis points, one "
-        "panel a group; bars hold the share of the group's deals, the outermost ones also what "
+        *_spread_caption(material), ", in ", taken(unit.amounts, "study"), ", one panel a group; "
+        "bars hold the share of the group's deals, the outermost ones also what "
         "lies beyond. The dashed line is the group's median.",
     )  # fmt: skip
-    data = _bins(groups)
-    marks = {f"median: {group}": float(np.median(v)) * BP for group, v in groups.items()}
-    words = "; ".join(
-        f"{group}: {len(v)} deals, median {show(float(np.median(v)) * BP)} bp"
-        for group, v in groups.items()
-    )
-    alt = f"Histograms of the reaction by group. {words}."
+    medians = {group: float(np.median(values)) for group, values in groups.items()}
+    marks = {f"median: {group}": median * unit.scale for group, median in medians.items()}
+    beside = {group: _median_words(values, unit) for group, values in groups.items()}
+    words = "; ".join(f"{group}: {facts}" for group, facts in beside.items())
+    alt = f"Histograms of the {material.outcome} by group. {words}."
     title = prose(*pieces, " deals")
-    return Figure("distribution", "distribution", title, caption, alt, data, marks)
+    axis = "Cumulative abnormal return in the headline window (bp)"
+    axis = axis_words(material.outcome, unit.heading) if material.ready else axis
+    data = _bins(groups, unit)
+    return Figure(
+        "distribution", "distribution", title, caption, alt, data, marks, axis, unit.slug, beside
+    )
 
 
-def _bins(groups: dict[str, Floats]) -> pd.DataFrame:
-    """group, from_bp, to_bp, deals, share; common edges, the outermost bins open-ended."""
-    every = np.concatenate(list(groups.values())) * BP
+def _median_words(values: Floats, unit: Unit) -> str:
+    digits = unit_digits(float(np.std(values)) / np.sqrt(len(values)), unit)
+    return f"{len(values):,} deals, median {amount(float(np.median(values)), unit, digits)}"
+
+
+def _spread_words(material: Material) -> str:
+    return capital(material.outcome) if material.ready else "Reactions"
+
+
+def _spread_caption(material: Material) -> tuple[Piece, ...]:
+    if material.ready:
+        return ("The ", embedded(material.outcome, "study"), " of each deal")
+    return ("Cumulative abnormal returns over sessions ", *material.window())
+
+
+def _bins(groups: dict[str, Floats], unit: Unit) -> pd.DataFrame:
+    """group, from, to, deals, share; common edges, the outermost bins open-ended."""
+    every = np.concatenate(list(groups.values())) * unit.scale
     low, high = np.quantile(every, [0.005, 0.995])
     low, high = (low, high) if high > low else (low - 1, high + 1)
     edges = np.linspace(low, high, min(BINS, max(5, len(every) // 4)) + 1)
     frames = []
     for group, values in groups.items():
-        deals, _ = np.histogram(np.clip(values * BP, low, high), edges)
+        deals, _ = np.histogram(np.clip(values * unit.scale, low, high), edges)
         frames.append(
             pd.DataFrame(
                 {
                     "group": group,
-                    "from_bp": edges[:-1],
-                    "to_bp": edges[1:],
+                    f"from_{unit.slug}": edges[:-1],
+                    f"to_{unit.slug}": edges[1:],
                     "deals": deals,
                     "share_percent": 100 * deals / len(values),
                 }
@@ -132,49 +153,51 @@ def columns_figure(material: Material) -> Figure | None:
     found = [e for e in material.estimates if e.treatment in e.names]
     if len(found) < 2:
         return None
-    data = pd.DataFrame([_column_row(e, e is material.lead) for e in found])
+    unit = material.unit
+    data = pd.DataFrame([_column_row(e, e is material.lead, unit) for e in found])
     feature = embedded(named(material.feature), "study")
     title = prose(embedded(capital(material.feature), "study"), ": ", *_columns_title(material))
     caption = prose(
-        "The coefficient of ", feature, " by column, in basis points per unit, with its ",
-        material.percent("confidence_level"),
+        "The coefficient of ", feature, " by column, in ", taken(unit.words, "study"),
+        " per unit, with its ", material.percent("confidence_level"),
         " confidence set. Filled: the lead column. An arrow: the set goes on without end. The "
         "columns do not all estimate the same thing: see what each estimates in the table.",
     )  # fmt: skip
-    words = "; ".join(
-        f"{e.title} {show(row['estimate_bp'])} bp, {set_words(e.interval, 0)}"
-        for e, (_, row) in zip(found, data.iterrows(), strict=True)
-    )
+    words = "; ".join(_column_words(e, unit) for e in found)
     alt = f"Dots with confidence sets, one a column. {words}."
-    axis = f"{capital(material.feature)} (bp per unit)"
-    return Figure("columns", "intervals", title, caption, alt, data, axis=axis)
+    axis = axis_words(material.feature, per_unit(unit))
+    return Figure("columns", "intervals", title, caption, alt, data, {}, axis, unit.slug)
+
+
+def _column_words(estimate: Estimate, unit: Unit) -> str:
+    digits = effect_digits(estimate, unit)
+    effect = amount(float(estimate.term(estimate.treatment)["coefficient"]), unit, digits)
+    return f"{estimate.title} {effect}, {set_words(estimate.interval, digits, unit)}"
 
 
 def _columns_title(material: Material) -> list[Piece]:
-    lead, pieces = material.lead, list[Piece]()
+    lead, pieces, unit = material.lead, list[Piece](), material.unit
     if lead is not None:
         value = material.coefficient(lead)
-        pieces += [value, " bp in the lead column, "]
+        pieces += [unit.before, value, f"{unit.change} in the lead column, "]
     others = [e for e in material.estimates if e is not lead]
-    digits = max(effect_digits(e) for e in others)
-    low, high = (
-        material.number(f"others_{end}", scale=BP, digits=digits) for end in ("low", "high")
-    )
+    digits = max(effect_digits(e, unit) for e in others)
     if len(others) == 1:
-        return [*pieces, low, " bp in the other"]
-    return [*pieces, low, " to ", high, " bp in the others" if lead else " bp over the columns"]
+        return [*pieces, *material.effect("others_low", digits), " in the other"]
+    reach = material.span(("others_low", "others_high"), digits)
+    return [*pieces, *reach, " in the others" if lead else " over the columns"]
 
 
-def _column_row(estimate: Estimate, lead: bool) -> dict[str, object]:
+def _column_row(estimate: Estimate, lead: bool, unit: Unit) -> dict[str, object]:
     found = estimate.interval
     term = estimate.term(estimate.treatment)
     return {
         "dimension": "",
         "label": estimate.title,
         "shape": str(found.shape),
-        "estimate_bp": BP * term["coefficient"],
-        "low_bp": BP * found.low,
-        "high_bp": BP * found.high,
+        f"estimate_{unit.slug}": unit.scale * term["coefficient"],
+        f"low_{unit.slug}": unit.scale * found.low,
+        f"high_{unit.slug}": unit.scale * found.high,
         "deals": estimate.n,
         "lead": lead,
     }
@@ -182,45 +205,46 @@ def _column_row(estimate: Estimate, lead: bool) -> dict[str, object]:
 
 def sensitivity_figure(material: Material, target: str) -> Figure:
     """One of the numbers asked about under other choices."""
-    frame = sensitivity_targets(material.results)[target]
+    frame, unit = sensitivity_targets(material.results)[target], material.unit
     data = pd.DataFrame(
         {
             "dimension": frame["dimension"].astype("str"),
             "label": [true_minus(str(text)) for text in frame["variant"]],
             "shape": "interval",
-            "estimate_bp": frame["estimate"].astype(float) * BP,
-            "low_bp": frame["ci_low"].astype(float) * BP,
-            "high_bp": frame["ci_high"].astype(float) * BP,
+            f"estimate_{unit.slug}": frame["estimate"].astype(float) * unit.scale,
+            f"low_{unit.slug}": frame["ci_low"].astype(float) * unit.scale,
+            f"high_{unit.slug}": frame["ci_high"].astype(float) * unit.scale,
             "deals": frame["n"],
             "lead": False,
         }
     )
     if len(data) > SORTED:  # a few stay in the order of their kinds
-        data = data.sort_values("estimate_bp", kind="stable", ignore_index=True)
-    digits = variant_digits(material, target)
-    low, high = (
-        material.number(f"sensitivity_{end}: {target}", scale=BP, digits=digits)
-        for end in ("low", "high")
-    )
-    ends = direction(low.value), direction(high.value)
+        data = data.sort_values(f"estimate_{unit.slug}", kind="stable", ignore_index=True)
+    names = f"sensitivity_low: {target}", f"sensitivity_high: {target}"
+    reach = material.span(names, variant_digits(material, target))
+    low, high = (material.number(end).value for end in names)
+    ends = direction(low), direction(high)
     where = f"stays {ends[0]}" if ends[0] == ends[1] else "changes sign"
     name = embedded(target, "check")
-    title = prose("Over all variants the ", name, f" {where}: ", low, " to ", high, " bp")
+    title = prose("Over all variants the ", name, f" {where}: ", *reach)
     caption = prose(
         "Each dot is the ",
         name,
         " under one other choice, with its ",
         material.percent("confidence_level"),
-        " interval, in basis points.",
+        " interval, in ",
+        taken(unit.words, "study"),
+        ".",
     )
-    words = f"{show(BP * low.value)} to {show(BP * high.value)} bp"
+    words = f"{amount(low, unit)} to {amount(high, unit)}"
     alt = f"Dots with intervals, one a variant, the {target} from {words}."
     file = "sensitivity" if target == MEAN_REACTION else f"sensitivity_{slug(target)}"
-    return Figure(file, "intervals", title, caption, alt, data, axis=f"{capital(target)} (bp)")
+    axis = axis_words(target, unit)
+    return Figure(file, "intervals", title, caption, alt, data, {}, axis, unit.slug)
 
 
 def variant_digits(material: Material, target: str) -> int:
-    """Decimals of a number under other choices, from the middle reach of its intervals."""
+    """Decimals of an amount under other choices, from the middle reach of its intervals."""
     frame = sensitivity_targets(material.results)[target]
     reach = frame["ci_high"].astype(float) - frame["ci_low"].astype(float)
-    return bp_digits(BP * float(reach.median()) / 4)
+    return unit_digits(float(reach.median()) / 4, material.unit)

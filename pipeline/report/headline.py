@@ -81,14 +81,20 @@ def effect_of(estimate: Estimate) -> float:
 
 
 def market_values(results: Results) -> Floats:
-    """The deals' market values in the study's currency; empty if they or it are unknown."""
-    deals = results.deals
-    if "market_value" not in deals or not results.study.currency:
+    """What a relative outcome is a share of, in the study's currency; empty if not known."""
+    deals, base = results.deals, results.study.outcome.base
+    if base not in deals or not results.study.currency:
         return np.empty(0)
     if "currency" in deals and deals["currency"].nunique() > 1:
         return np.empty(0)  # sums in different currencies have no median
-    found = deals["market_value"].to_numpy(dtype=np.float64)
+    found = deals[base].to_numpy(dtype=np.float64)
     return np.asarray(found[np.isfinite(found)])
+
+
+def _stored(results: Results) -> str:
+    """The unit in which amounts of the outcome are stored."""
+    unit = results.study.outcome.unit
+    return "decimal" if unit.relative else unit.short or "number"
 
 
 def significance(results: Results) -> float:
@@ -110,6 +116,11 @@ def _counts(results: Results) -> Iterator[Line]:
 
 
 def _reaction(results: Results) -> Iterator[Line]:
+    if results.study.outcome.ready:
+        mean, low, high = _mean(results)
+        level = results.study.level
+        yield Line("mean_outcome", mean, _stored(results), low, high, level, Shape.INTERVAL)
+        return
     tests, level = results.headline, results.study.level
     low, high = tests.interval
     yield Line("mean_reaction", tests.mean, "decimal", low, high, level, Shape.INTERVAL)
@@ -126,9 +137,9 @@ def _effects(results: Results) -> Iterator[Line]:
     for position, estimate in estimates(results):
         found = estimate.interval
         value = effect_of(estimate)
-        yield _with_set(effect_name(position, estimate), value, "decimal", found)
+        yield _with_set(effect_name(position, estimate), value, _stored(results), found)
         if estimate is lead_estimate(results):
-            yield _with_set("feature_effect", value, "decimal", found)
+            yield _with_set("feature_effect", value, _stored(results), found)
 
 
 def _range(results: Results) -> Iterator[Line]:
@@ -141,24 +152,32 @@ def _range(results: Results) -> Iterator[Line]:
     yield Line("columns_positive", sum(value > 0 for value in every), "columns")
     yield Line("others_estimated", len(others), "columns")
     if others:
-        yield Line("others_low", min(others), "decimal")
-        yield Line("others_high", max(others), "decimal")
+        yield Line("others_low", min(others), _stored(results))
+        yield Line("others_high", max(others), _stored(results))
 
 
 def _money(results: Results) -> Iterator[Line]:
     values, unit = market_values(results), results.study.currency
     if not len(values):
         return
-    low, high = results.headline.interval
+    mean, low, high = _mean(results)
     interval = ConfidenceSet(Shape.INTERVAL, low, high, results.study.level, "")
     lead = lead_estimate(results)
     middle = float(np.median(values))
     yield Line("median_market_value", middle, unit)
     yield Line("quarter_market_value", float(np.quantile(values, 0.25)), unit)
     yield Line("three_quarter_market_value", float(np.quantile(values, 0.75)), unit)
-    yield _scaled("mean_reaction_money", results.headline.mean, unit, interval, middle)
+    yield _scaled("mean_reaction_money", mean, unit, interval, middle)
     if lead is not None:
         yield _scaled("feature_money", effect_of(lead), unit, lead.interval, middle)
+
+
+def _mean(results: Results) -> tuple[float, float, float]:
+    """The mean outcome and the ends of its interval, as stored."""
+    if not results.study.outcome.ready:
+        return (results.headline.mean, *results.headline.interval)
+    first = results.summary.iloc[0]
+    return float(first["mean"]), float(first["ci_low"]), float(first["ci_high"])
 
 
 def _paths(results: Results) -> Iterator[Line]:
@@ -177,26 +196,34 @@ def _paths(results: Results) -> Iterator[Line]:
 def _distribution(results: Results) -> Iterator[Line]:
     for group, values in group_reactions(results).items():
         yield Line(f"deals: {group}", len(values), "deals")
-        yield Line(f"median: {group}", float(np.median(values)), "decimal")
+        yield Line(f"median: {group}", float(np.median(values)), _stored(results))
         yield Line(f"share_below_zero: {group}", float(np.mean(values < 0)), "fraction")
 
 
 def group_reactions(results: Results) -> dict[str, Floats]:
-    """Group in words -> (n,) headline-window CARs, decimal, of its deals.
+    """Group in words -> (n,) outcomes as stored, CARs of the headline window, of its deals.
 
     One group of all deals if the study asks about no feature or the feature is not two-valued.
     """
-    abnormal = results.abnormal.get(results.headline.model)
-    if abnormal is None:
-        return {}
-    window = results.study.headline
-    cars = pd.Series(abnormal.car(window), index=list(abnormal.deals))[abnormal.complete(window)]
+    cars = _outcomes(results)
     groups = _group_of(results).reindex(cars.index)
     if groups.isna().all():
         groups = pd.Series("All deals", index=cars.index)
     words = dict.fromkeys(groups.dropna())
     ordered = [word for word in results.study.groups if word in words] or list(words)
     return {word: np.asarray(cars[groups == word], dtype=np.float64) for word in ordered}
+
+
+def _outcomes(results: Results) -> pd.Series[float]:
+    """Deal -> its outcome, of the deals that have one."""
+    study = results.study
+    if study.outcome.ready:
+        return results.deals.set_index("deal")[study.outcome.column].astype(np.float64)
+    abnormal = results.abnormal.get(results.headline.model)
+    if abnormal is None:
+        return pd.Series(dtype=np.float64)
+    cars = pd.Series(abnormal.car(study.headline), index=list(abnormal.deals))
+    return cars[abnormal.complete(study.headline)]
 
 
 def _group_of(results: Results) -> pd.Series[str]:
@@ -223,8 +250,7 @@ def _proof(results: Results) -> Iterator[Line]:
         yield Line("placebo_p", float(row["rate"]), "fraction")
 
 
-UNITS = {"cells": "ways", "failed": "ways", "median": "decimal", "low": "decimal"}
-UNITS |= {"high": "decimal", "same_sign": "fraction", "significant": "fraction"}
+AMOUNTS = ("median", "low", "high")
 
 
 def _curve(results: Results) -> Iterator[Line]:
@@ -232,7 +258,9 @@ def _curve(results: Results) -> Iterator[Line]:
     for _, row in results.curve.iterrows():
         if math.isfinite(row["value"]):
             name = str(row["name"])
-            yield Line(f"curve_{name}", float(row["value"]), UNITS.get(name, "fraction"))
+            unit = "ways" if name in ("cells", "failed") else "fraction"
+            unit = _stored(results) if name in AMOUNTS else unit
+            yield Line(f"curve_{name}", float(row["value"]), unit)
 
 
 def _verdicts(results: Results) -> Iterator[Line]:
@@ -242,8 +270,8 @@ def _verdicts(results: Results) -> Iterator[Line]:
     for target, variants in sensitivity_targets(results).items():
         found = variants["estimate"].astype(float)
         yield Line(f"sensitivity_variants: {target}", len(variants), "variants")
-        yield Line(f"sensitivity_low: {target}", float(found.min()), "decimal")
-        yield Line(f"sensitivity_high: {target}", float(found.max()), "decimal")
+        yield Line(f"sensitivity_low: {target}", float(found.min()), _stored(results))
+        yield Line(f"sensitivity_high: {target}", float(found.max()), _stored(results))
 
 
 def sensitivity_targets(results: Results) -> dict[str, pd.DataFrame]:

@@ -26,6 +26,7 @@ from pipeline.report.document import (
 from pipeline.report.figures import csv, svg
 from pipeline.report.numerals import clean, lines, slug
 
+_DATE = re.compile(r"\d{4}-\d\d-\d\d( \d\d:\d\d)?")
 _PROLOGUE = re.compile(r"<\?xml.*?\?>\s*<!DOCTYPE.*?>\s*", re.DOTALL)
 _METADATA = re.compile(r"\s*<metadata>.*?</metadata>", re.DOTALL)
 _STYLE = re.compile(r"\s*<defs>\s*<style.*?</style>\s*</defs>", re.DOTALL)
@@ -72,8 +73,9 @@ def _template() -> Template:
 
 
 def numeric(cell: Cell) -> bool:
-    """Whether a cell's content lines up as a number and stays on one line."""
-    worded = isinstance(cell, Text) or (isinstance(cell, Interval) and bool(cell.words))
+    """Whether a cell's content, a number or a date, stays on one line."""
+    worded = isinstance(cell, Text) and not _DATE.fullmatch(cell.text)
+    worded = worded or (isinstance(cell, Interval) and bool(cell.words))
     return cell is not None and not worded
 
 

@@ -10,11 +10,12 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.estimate import Estimate, NotApplicable, TestResult, Withheld
+from pipeline.core.outcome import BASIS_POINTS, Unit
 from pipeline.core.prices import Booleans
 from pipeline.core.results import Results, StudyFacts, WindowTests
 from pipeline.report.document import Key, Paragraph, Piece, Quote, Verbatim
 from pipeline.report.headline import effect_name, headline_frame
-from pipeline.report.numerals import BP, LEAST_P, PERCENT, bp_digits, show, true_minus
+from pipeline.report.numerals import LEAST_P, PERCENT, show, true_minus, unit_digits
 
 
 def prose(*pieces: Piece | tuple[Piece, ...], lead: str = "") -> Paragraph:
@@ -110,6 +111,39 @@ class Material:
         return self.results.headline
 
     @property
+    def unit(self) -> Unit:
+        """How amounts of the outcome are printed."""
+        return self.study.outcome.unit
+
+    @property
+    def ready(self) -> bool:
+        """Whether the deal list held the outcome, so that there is no reaction to speak of."""
+        return self.study.outcome.ready
+
+    @property
+    def outcome(self) -> str:
+        """What is explained, in words: ``reaction`` where returns were measured."""
+        return self.study.outcome.words if self.ready else "reaction"
+
+    @property
+    def mean(self) -> tuple[float, float, float]:
+        """The mean outcome of all deals and the ends of its interval, as stored."""
+        if not self.ready:
+            return (self.tests.mean, *self.tests.interval)
+        mean, low, high = (self.summary(name).value for name in ("mean", "ci_low", "ci_high"))
+        return mean, low, high
+
+    @property
+    def spread(self) -> float:
+        """The standard deviation of the outcome over all deals, as stored."""
+        return self.summary("std_dev").value if self.ready else self.tests.std_dev
+
+    @property
+    def deals(self) -> int:
+        """Deals behind the mean outcome."""
+        return int(self.summary("n").value) if self.ready else self.tests.n
+
+    @property
     def estimates(self) -> tuple[Estimate, ...]:
         """The columns that hold numbers, in order."""
         return tuple(c for c in self.results.columns if isinstance(c, Estimate))
@@ -158,6 +192,22 @@ class Material:
             self.frames, "headline", column, where, scale=scale, digits=digits, signed=signed
         )
 
+    def effect(self, name: str, digits: int) -> tuple[Piece, ...]:
+        """A difference of the headline frame in the outcome's unit."""
+        unit = self.unit
+        return (unit.before, self.number(name, scale=unit.scale, digits=digits), unit.change)
+
+    def span(self, names: tuple[str, str], digits: int, joint: str = " to ") -> tuple[Piece, ...]:
+        """Two differences of the headline frame, the unit behind the second."""
+        unit = self.unit
+        low, high = (self.number(name, scale=unit.scale, digits=digits) for name in names)
+        return (unit.before, low, joint, unit.before, high, unit.change)
+
+    def summary(self, column: str, *, scale: float = 1, digits: int = 0) -> Quote:
+        """A number about all deals of an outcome that the deal list held."""
+        where = {"group": str(self.frames["summary"]["group"].iloc[0])}
+        return quote(self.frames, "summary", column, where, scale=scale, digits=digits)
+
     def percent(self, name: str, column: str = "value") -> tuple[Piece, ...]:
         """A fraction of the headline frame in percent, no more decimals than it needs."""
         value = self.number(name, column).value * PERCENT
@@ -188,19 +238,18 @@ class Material:
         return ("[", start, ", ", end, "]")
 
     def coefficient(self, estimate: Estimate) -> Quote:
-        """The treatment coefficient of a column, in basis points, from ``estimates``."""
+        """The treatment coefficient of a column, in the outcome's unit, from ``estimates``."""
         where: dict[str, Key] = {
-            "window_start": self.study.headline.start,
-            "window_end": self.study.headline.end,
-            "expected_return": self.study.models[0],
+            **self.study.explained,
             "estimator": estimate.estimator,
             "title": estimate.title,
             "stage": "",
             "term": estimate.treatment,
         }
         where = self._sampled("estimates", where)
+        digits = effect_digits(estimate, self.unit)
         return quote(
-            self.frames, "estimates", "coefficient", where, digits=effect_digits(estimate), scale=BP
+            self.frames, "estimates", "coefficient", where, digits=digits, scale=self.unit.scale
         )
 
     def effect_name(self, estimate: Estimate) -> str:
@@ -221,9 +270,9 @@ class Material:
         return {**where, "sample": str(samples[0])} if len(samples) else where
 
 
-def effect_digits(estimate: Estimate) -> int:
-    """Decimals of a column's effect in basis points."""
-    return bp_digits(BP * estimate.term(estimate.treatment)["std_error"])
+def effect_digits(estimate: Estimate, unit: Unit = BASIS_POINTS) -> int:
+    """Decimals of a column's effect in the outcome's unit."""
+    return unit_digits(float(estimate.term(estimate.treatment)["std_error"]), unit)
 
 
 def headline_result(material: Material) -> TestResult | NotApplicable | None:

@@ -10,6 +10,7 @@ from __future__ import annotations
 import math
 import re
 
+from pipeline.core.outcome import Unit
 from pipeline.report.document import Cell, Interval, Number, Statistic, Text
 
 BP = 10_000.0
@@ -70,6 +71,12 @@ def bp_digits(error: float) -> int:
     return digits_for(error, 1 if not error < 0.1 else 6)
 
 
+def unit_digits(error: float, unit: Unit) -> int:
+    """Decimals of an amount printed in ``unit`` whose standard error, as stored, is ``error``."""
+    printed = error * unit.scale
+    return digits_for(printed, unit.decimals if not printed < 10.0**-unit.decimals else 6)
+
+
 def plain_digits(value: float, significant: int = 3) -> int:
     """Decimals that show ``significant`` digits of a number without an error, at most six."""
     if not math.isfinite(value) or value == 0:
@@ -80,6 +87,18 @@ def plain_digits(value: float, significant: int = 3) -> int:
 def bp(value: float, digits: int = 0) -> Number | None:
     """A cell in basis points of a decimal value; blank for NaN."""
     return None if math.isnan(value) else Number(value * BP, digits, "bp")
+
+
+def in_unit(value: float, unit: Unit, digits: int = 0) -> Number | None:
+    """A cell in the outcome's unit of an amount as stored; blank for NaN."""
+    return None if math.isnan(value) else Number(value * unit.scale, digits, unit.short)
+
+
+def amount(value: float, unit: Unit, digits: int | None = None) -> str:
+    """An amount as stored, in words: ``35.2%``; three significant digits unless told."""
+    printed = value * unit.scale
+    text = show(printed, plain_digits(printed) if digits is None else digits)
+    return f"{unit.before}{text}{unit.level}"
 
 
 def percent(value: float, digits: int = 0) -> Number | None:

@@ -22,6 +22,7 @@ from pipeline.report.graphs import distribution_figure, path_figure
 from pipeline.report.material import Material, embedded, prose, taken
 from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, percent, plain
 from pipeline.report.proof import proof_blocks
+from pipeline.report.several_windows import several_windows_table
 from pipeline.report.wording import distribution_words, level_words, window_label
 
 
@@ -29,8 +30,12 @@ def reaction_section(material: Material) -> Section:
     """Figures of the path and of the spread, and the tables of windows and tests."""
     opening = prose(reaction_sentence(material), agreement_sentence(material))
     figures = [path_figure(material), distribution_figure(material)]
-    tables = [windows_table(material), tests_table(material, models(material)[0])]
-    blocks: list[Block] = [opening, *(f for f in figures if f is not None), *tables]
+    tables = [
+        windows_table(material),
+        several_windows_table(material),
+        tests_table(material, models(material)[0]),
+    ]
+    blocks: list[Block] = [opening, *(part for part in (*figures, *tables) if part is not None)]
     more = (averages_table(material), groups_table(material))
     after = [*(t for t in more if t.rows), assumptions_table(material), *proof_blocks(material)]
     return Section("Is the reaction real", (*blocks, *after))

@@ -20,7 +20,7 @@ from pipeline.report.document import (
     Text,
     Verbatim,
 )
-from pipeline.report.material import Material, prose, taken
+from pipeline.report.material import Material, embedded, prose, taken
 from pipeline.report.numerals import count
 from pipeline.report.wording import joined, level_words, spoken, window_label
 
@@ -37,12 +37,16 @@ def question_section(material: Material) -> Section:
 def population(material: Material) -> Paragraph:
     """How many deals were read, tested and kept to the end."""
     read, kept = material.number("deals_read"), material.number("deals_kept")
-    tested = material.event("n")
     last: tuple[Piece, ...] = ()
     if material.results.columns:
         last = (" Deals in the regressions: ", kept, ".")
+    with_outcome: tuple[Piece, ...] = (
+        (". Deals with a ", embedded(material.outcome, "study"), ": ", material.summary("n"), ".")
+        if material.ready
+        else (". Deals in the tests of the headline window: ", material.event("n"), ".")
+    )
     return prose(
-        "Deals read: ", read, ". Deals in the tests of the headline window: ", tested, ".", last,
+        "Deals read: ", read, with_outcome, last,
         " Every deal that was dropped has a line in the ledger, with the rule and the value that "
         "decided.",
     )  # fmt: skip
@@ -51,14 +55,8 @@ def population(material: Material) -> Paragraph:
 def settings_table(material: Material) -> Table:
     """The settings of the study, one a row."""
     study = material.study
-    secondary = [window_label(w.label) for w in study.windows if w != study.headline]
     rows = [
-        ("Deals announced", _announced(material.results.deals, material)),
-        ("Headline window, sessions", window_label(study.headline.label)),
-        ("Secondary windows, sessions", joined(secondary)),
-        ("Estimation window, sessions", window_label(study.estimation.label)),
-        ("Returns an estimation window must hold", f"{study.minimum_observations:,}"),
-        ("Expected return", joined(study.words(model) for model in study.models)),
+        *(_outcome_settings(material) if material.ready else _window_settings(material)),
         ("Deal feature asked about", material.feature),
         ("Its two values", joined(group for group in study.groups if group)),
         ("Controls", joined(study.words(n) for n in study.regressors if n != study.treatment)),
@@ -79,12 +77,41 @@ def settings_table(material: Material) -> Table:
     return Table("settings", prose("Settings of the study"), columns, cells)
 
 
-def _announced(deals: pd.DataFrame, material: Material) -> str:
+def _window_settings(material: Material) -> list[tuple[str, str]]:
+    study = material.study
+    secondary = [window_label(w.label) for w in study.windows if w != study.headline]
+    return [
+        ("Deals announced", _announced(material)),
+        ("Headline window, sessions", window_label(study.headline.label)),
+        ("Secondary windows, sessions", joined(secondary)),
+        ("Estimation window, sessions", window_label(study.estimation.label)),
+        ("Returns an estimation window must hold", f"{study.minimum_observations:,}"),
+        ("Expected return", joined(study.words(model) for model in study.models)),
+    ]
+
+
+def _outcome_settings(material: Material) -> list[tuple[str, str]]:
+    asked, deals = material.study.outcome, material.results.deals
+    dated = next((name for name in ("announced_date", asked.date) if name in deals), "")
+    days = pd.to_datetime(deals[dated]).dropna() if dated else pd.Series(dtype="datetime64[s]")
+    return [
+        ("Outcome", asked.words),
+        ("Taken from", f"column '{asked.column}' of {asked.file}, in {asked.unit.key}"),
+        ("Its standard error from", f"column '{asked.error}'" if asked.error else ""),
+        ("A share of", material.study.words(asked.base) if asked.base else ""),
+        ("Deals dated", _first_to_last(days)),
+    ]
+
+
+def _announced(material: Material) -> str:
     """First and last event session of the deals kept, from the abnormal returns' dates."""
     abnormal = material.results.abnormal.get(material.tests.model)
     if abnormal is None or not abnormal.span.start <= 0 <= abnormal.span.end:
         return ""
-    days = pd.Series(abnormal.days[:, -abnormal.span.start]).dropna()
+    return _first_to_last(pd.Series(abnormal.days[:, -abnormal.span.start]).dropna())
+
+
+def _first_to_last(days: pd.Series) -> str:
     if days.empty:
         return ""
     first, last = str(days.min().date()), str(days.max().date())

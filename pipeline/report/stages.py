@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 from pipeline.core.estimate import Estimate, NotApplicable, TestResult
+from pipeline.core.outcome import Unit
 from pipeline.report.document import (
     Block,
     Cell,
     Column,
     Interval,
+    Number,
     Paragraph,
     Row,
     Section,
@@ -17,15 +19,15 @@ from pipeline.report.document import (
 )
 from pipeline.report.material import Material, capital, prose, taken
 from pipeline.report.numerals import (
-    BP,
-    bp_digits,
     count,
     digits_for,
+    in_unit,
     p_value,
     plain,
     shown,
+    unit_digits,
 )
-from pipeline.report.wording import df_words, distribution_words, level_words
+from pipeline.report.wording import df_words, distribution_words, level_words, per_unit
 
 
 def identification_section(material: Material) -> Section:
@@ -86,15 +88,16 @@ def _fact(value: float) -> str:
 
 
 def stage_table(material: Material, parent: Estimate, stage: Estimate, name: str) -> Table:
-    """One stage's coefficients; in basis points where it explains what its column explains."""
+    """One stage's coefficients; in the outcome's unit where it explains what its column does."""
     same = stage.outcome == parent.outcome
-    scale, unit = (BP, "bp per unit") if same else (1.0, "per unit")
+    unit = material.unit if same else None
+    heading = per_unit(unit) if unit else "per unit"
     level = level_words(stage.level)
     columns = (
-        Column("Variable"), Column(f"Coefficient with {level} interval", unit),
-        Column("Standard error", unit), Column("Statistic"), Column("p"),
+        Column("Variable"), Column(f"Coefficient with {level} interval", heading),
+        Column("Standard error", heading), Column("Statistic"), Column("p"),
     )  # fmt: skip
-    rows = [_term_row(material, stage, term, scale, same) for term in stage.names]
+    rows = [_term_row(material, stage, term, unit) for term in stage.names]
     footer = _stage_footer(material, stage)
     title = prose(taken(f"{parent.title}: {stage.title}", "estimate"))
     notes = _stage_notes(material, stage)
@@ -112,19 +115,17 @@ def _stage_footer(material: Material, stage: Estimate) -> list[Row]:
     return [(Text(title), cell, None, None, None) for title, cell in facts]
 
 
-def _term_row(material: Material, stage: Estimate, name: str, scale: float, same: bool) -> Row:
+def _term_row(material: Material, stage: Estimate, name: str, unit: Unit | None) -> Row:
     term = {key: float(value) for key, value in stage.term(name).items()}
-    error = scale * term["std_error"]
-    digits = bp_digits(error) if same else digits_for(error, 6)
-    unit = "bp" if same else ""
+    error = term["std_error"]
+    digits = unit_digits(error, unit) if unit else digits_for(error, 6)
 
-    def cell(key: str) -> Cell:
-        return plain(scale * term[key], digits, unit)
+    def cell(key: str) -> Number | None:
+        return in_unit(term[key], unit, digits) if unit else plain(term[key], digits)
 
-    low, high = plain(scale * term["ci_low"], digits), plain(scale * term["ci_high"], digits)
     return (
         Text(capital(material.study.words(name))),
-        Interval(plain(scale * term["coefficient"], digits), low, high),
+        Interval(cell("coefficient"), cell("ci_low"), cell("ci_high")),
         cell("std_error"),
         plain(term["statistic"], 2),
         p_value(term["p_value"]),

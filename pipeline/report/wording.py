@@ -9,9 +9,10 @@ from numbers import Real
 import pandas as pd
 
 from pipeline.core.estimate import ConfidenceSet, Shape, TestResult
+from pipeline.core.outcome import BASIS_POINTS, Unit
 from pipeline.report.document import Cell, Interval, Piece, Quote, Text, Verbatim
 from pipeline.report.material import Material, capital
-from pipeline.report.numerals import BP, PERCENT, bp, plain, show, true_minus
+from pipeline.report.numerals import PERCENT, in_unit, plain, show, true_minus
 
 
 def spoken(key: str) -> str:
@@ -31,31 +32,51 @@ def level_words(level: float) -> str:
     return f"{show(level * PERCENT, digits)}%"
 
 
-def set_words(found: ConfidenceSet, digits: int, scale: float = BP, unit: str = "bp") -> str:
-    """A confidence set in words, for a cell."""
-    low, high = (show(end * scale, digits) for end in (found.low, found.high))
+def per_unit(unit: Unit) -> str:
+    """The unit of a coefficient, for a heading."""
+    return f"{unit.short} per unit".strip()
+
+
+def axis_words(words: str, unit: Unit | str) -> str:
+    """What an axis shows, its unit in brackets: that of a difference unless put in words."""
+    inside = unit if isinstance(unit, str) else unit.short
+    return capital(words) + (f" ({inside})" if inside else "")
+
+
+def set_words(found: ConfidenceSet, digits: int, unit: Unit = BASIS_POINTS) -> str:
+    """A confidence set of differences in words, for a cell."""
+    ends = (show(end * unit.scale, digits) for end in (found.low, found.high))
+    low, high = (f"{unit.before}{end}" for end in ends)
     match found.shape:
         case Shape.INTERVAL:
-            return f"from {low} to {high} {unit}"
+            return f"from {low} to {high}{unit.change}"
         case Shape.RAYS:
-            return f"two rays: at or below {low}, or at or above {high} {unit}"
+            return f"two rays: at or below {low}, or at or above {high}{unit.change}"
         case Shape.LINE:
             return "the whole line: no value is excluded"
         case Shape.EMPTY:
             return "empty: no value fits"
 
 
-def set_cell(estimate: float, found: ConfidenceSet, digits: int) -> Interval:
-    """A cell with an effect above its confidence set, in basis points."""
+def set_cell(
+    estimate: float, found: ConfidenceSet, digits: int, unit: Unit = BASIS_POINTS
+) -> Interval:
+    """A cell with an effect above its confidence set."""
+    middle = in_unit(estimate, unit, digits)
     if found.shape is Shape.INTERVAL:
-        return Interval(bp(estimate, digits), bp(found.low, digits), bp(found.high, digits))
-    return Interval(bp(estimate, digits), None, None, set_words(found, digits))
+        low, high = (in_unit(end, unit, digits) for end in (found.low, found.high))
+        return Interval(middle, low, high)
+    return Interval(middle, None, None, set_words(found, digits, unit))
 
 
 def set_pieces(
-    material: Material, name: str, digits: int, scale: float = BP, unit: str = " bp"
+    material: Material, name: str, digits: int, unit: Unit | None = None
 ) -> tuple[Piece, ...]:
-    """The confidence set of a number of the headline frame, in words with quoted ends."""
+    """The confidence set of a number of the headline frame, in words with quoted ends.
+
+    In the unit of the outcome unless another one is named.
+    """
+    used = unit or material.unit
     frame = material.frames["headline"]
     shape = Shape(frame.loc[frame["name"] == name, "shape"].iloc[0])
     if shape is Shape.LINE:
@@ -63,13 +84,14 @@ def set_pieces(
     if shape is Shape.EMPTY:
         return ("empty: no value fits",)
     low, high = (
-        material.number(name, side, scale=scale, digits=digits) for side in ("ci_low", "ci_high")
+        material.number(name, end, scale=used.scale, digits=digits) for end in ("ci_low", "ci_high")
     )
     if not (math.isfinite(low.value) and math.isfinite(high.value)):
         return ("not known",)
     if shape is Shape.RAYS:
-        return ("two rays, at or below ", low, unit, " or at or above ", high, unit)
-    return (low, " to ", high, unit)
+        ends = ("two rays, at or below ", used.before, low, used.change)
+        return (*ends, " or at or above ", used.before, high, used.change)
+    return (used.before, low, " to ", used.before, high, used.change)
 
 
 def money_pieces(quoted: Quote, currency: str) -> tuple[Piece, ...]:

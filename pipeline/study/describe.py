@@ -30,6 +30,8 @@ EXAMPLES: dict[str, Any] = {
     "inputs.candidates": "../data_demo/candidates.parquet",
     "calendars.closed": [date(2023, 9, 1)],
     "calendars.closes": {"2024-12-24": time(12, 0)},
+    "outcome.column": "bid_premium",
+    "outcome.unit": "percent",
     "characteristics.column": "leverage",
     "characteristics.ratio": ["deal_value", "market_value"],
     "characteristics.interaction": ["relative_size", "target_listed"],
@@ -40,6 +42,7 @@ EXAMPLES: dict[str, Any] = {
     "selection.explained_by": ["leverage", "cash"],
     "selection.excluded": ["divisions_for_sale"],
     "selection.rationale": "Why these move the decision to bid and nothing else.",
+    "bounds.rationale": "Why paying in shares moves whether a return is seen one way only.",
     "instruments.for": "paid_in_shares",
     "instruments.use": ["treasury_shares", "fast_placement"],
     "instruments.rationale": "Why these move the form of payment and nothing else.",
@@ -47,6 +50,11 @@ EXAMPLES: dict[str, Any] = {
 TABLES_BY_NAME = {
     "calendars": "One table an exchange, where you know better than its calendar.\n"
     "[calendars.XHKG]",
+    "outcome": (
+        "For a deal list that holds its outcome already, such as a bid premium: then take prices,\n"
+        "benchmarks and all that is measured from them out of the study.\n"
+        "[outcome]"
+    ),
     "characteristics": (
         "One table a variable, of exactly one source and any steps, taken in the order shown.\n"
         "[characteristics.your_name]"
@@ -99,7 +107,9 @@ def _keys(model: type[BaseModel], prefix: str, mark: bool = True) -> Iterator[st
 
 def _is_table(field: FieldInfo) -> bool:
     """Whether the key is a table of its own in the study file."""
-    inline = get_origin(field.annotation) is list or "Indicator" in str(field.annotation)
+    inline = get_origin(field.annotation) is list or any(
+        name in str(field.annotation) for name in ("Indicator", "SampleFilter")
+    )
     return _model(field.annotation) is not None and not inline
 
 

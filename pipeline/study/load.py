@@ -15,7 +15,10 @@ from pipeline.core.findings import Finding, InputProblem, Severity, problem, rai
 from pipeline.study.rules import cross_checks
 from pipeline.study.schema import Study
 
-PATH_KEYS = ("deals", "prices", "benchmarks", "candidates", "factors")
+PATH_KEYS = (
+    "deals", "prices", "benchmarks", "candidates", "factors", "peers", "listings", "news",
+    "restricted", "rates", "delistings",
+)  # fmt: skip
 FILE_KEYS = ("base",)
 
 

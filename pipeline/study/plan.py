@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Mapping
 from dataclasses import replace
 from datetime import date
 
@@ -17,8 +17,7 @@ from pipeline.inputs.wanted import Wanted
 from pipeline.registry import TESTS, entry
 from pipeline.returns.events import EventOptions
 from pipeline.returns.sessions import CalendarChange
-from pipeline.scrutiny.directions import Suspect
-from pipeline.scrutiny.options import ScrutinyOptions
+from pipeline.study import plan_events, plan_prices, plan_returns, ready
 from pipeline.study.schema import Characteristic, Study
 
 PATH_DAYS = Window(-10, 10)
@@ -32,10 +31,20 @@ def sources(study: Study) -> dict[str, Source]:
         "benchmarks": study.inputs.benchmarks,
         "candidates": study.inputs.candidates,
         "factors": study.inputs.factors,
+        "peers": study.inputs.peers,
+        "listings": study.inputs.listings,
+        "news": study.inputs.news,
+        "restricted": study.inputs.restricted,
+        "rates": study.inputs.rates,
+        "delistings": study.inputs.delistings,
     }
     names: Mapping[str, Mapping[str, str]] = {str(k): v for k, v in study.inputs.columns.items()}
     sheets: Mapping[str, str] = {str(k): v for k, v in study.inputs.sheets.items()}
-    by_year = study.selection is not None or any(c.lag for c in study.characteristics.values())
+    by_year = (
+        study.selection is not None
+        or any(c.lag for c in study.characteristics.values())
+        or plan_returns.uses_candidates(study)
+    )
     return {
         table: Source(table, path, names.get(table, {}), sheets.get(table, ""))
         for table, path in paths.items()
@@ -81,38 +90,65 @@ def roles(study: Study) -> Roles | None:
     regression = study.regression
     if regression is None:
         return None
-    chosen, instruments = study.selection, study.instruments
+    chosen, instruments, asked = study.selection, study.instruments, study.outcome
+    dates = [asked.date] if asked and asked.date else []
     return Roles(
-        outcome=car_column(study.event_time.headline_window),
-        outcome_label=f"CAR{study.event_time.headline_window.label}",
+        outcome=asked.column if asked else car_column(study.event_time.headline_window),
+        outcome_label=_outcome_label(study),
         treatment=regression.treatment,
         continuous=regression.continuous,
         controls=tuple(regression.controls),
         effects=tuple(regression.fixed_effects),
-        clusters=tuple(regression.clusters),
+        clusters=tuple(
+            dict.fromkeys([*regression.clusters, *dates, *plan_events.company_clusters(study)])
+        ),
         instruments=tuple(instruments.use) if instruments else (),
+        also_endogenous=tuple(instruments.also_for) if instruments else (),
         selection=tuple(chosen.explained_by) if chosen else (),
         excluded=tuple(chosen.excluded) if chosen else (),
     )
 
 
+def _outcome_label(study: Study) -> str:
+    if study.outcome is not None:
+        return ready.outcome(study).words
+    return f"CAR{study.event_time.headline_window.label}"
+
+
 def wanted(study: Study) -> Wanted:
     """The columns a study reads beyond the fixed ones."""
     parts = roles(study)
+    alike_numbers, alike_texts = plan_returns.candidate_columns(study)
+    peers = plan_returns.peers_column(study)
     if parts is None:
-        return Wanted()
+        currency = plan_prices.candidate_currency(study, alike_numbers)
+        return Wanted((), peers, alike_numbers, (*alike_texts, *currency))
     book = recipes(study)
     past = tuple(
         name for name in needed(list(parts.numbers), book) if name in book and book[name].lag
     )
     numbers, texts = _columns([name for name in parts.numbers if name not in past], book)
     c_numbers, c_texts = _columns((*parts.selection, *parts.excluded, *past), book)
+    flags, cells = _seen_by(study, numbers)
+    d_numbers, d_texts = study.scrutiny.columns((*book, *numbers, *flags))
+    currency = plan_prices.candidate_currency(study, (*c_numbers, *alike_numbers))
     return Wanted(
-        deal_numbers=numbers,
-        deal_texts=(*texts, *parts.effects, *parts.clusters),
-        candidate_numbers=c_numbers,
-        candidate_texts=c_texts,
+        deal_numbers=tuple(dict.fromkeys((*numbers, *flags, *d_numbers))),
+        deal_texts=tuple(
+            dict.fromkeys((*texts, *parts.effects, *parts.clusters, *cells, *d_texts, *peers))
+        ),
+        candidate_numbers=tuple(dict.fromkeys((*c_numbers, *alike_numbers))),
+        candidate_texts=tuple(dict.fromkeys((*c_texts, *alike_texts, *currency))),
+        candidate_extras=_columns(parts.controls, book)[0] if parts.selection else (),
     )
+
+
+def _seen_by(study: Study, numbers: tuple[str, ...]) -> tuple[tuple[str, ...], tuple[str, ...]]:
+    """Columns behind the bounds: the flag, and the cells that are not read as numbers anyway."""
+    if study.bounds is None:
+        return (), ()
+    flags = (study.bounds.observed,) if study.bounds.observed else ()
+    return flags, tuple(name for name in study.bounds.cells if name not in (*numbers, *flags))
 
 
 def _columns(
@@ -142,6 +178,10 @@ def event_options(study: Study) -> EventOptions:
         mask_sessions=time.mask_sessions,
         confounding_days=time.confounding_days,
         real_jumps=frozenset(time.real_jumps),
+        confounding=time.confounding,
+        repeats=time.repeats,
+        earliest=time.day_zero == "earliest",
+        longest_halt=study.screens.longest_halt,
     )
 
 
@@ -189,9 +229,10 @@ def facts(study: Study, leading_test: str, listed: tuple[Window, ...]) -> StudyF
     parts = roles(study)
     arguments = {
         "What moves the decision to bid and nothing else": study.selection,
-        "What moves the form of payment and nothing else": study.instruments,
+        "What moves the feature asked about and nothing else": study.instruments,
+        "Why the bounds hold": study.bounds,
+        "What moves the return and not the choice": study.scrutiny.argued,
     }
-    labels = {name: item.label for name, item in study.characteristics.items() if item.label}
     return StudyFacts(
         name=study.name,
         title=study.title,
@@ -202,7 +243,7 @@ def facts(study: Study, leading_test: str, listed: tuple[Window, ...]) -> StudyF
         minimum_observations=study.event_time.minimum_observations,
         models=study.expected_returns.all_models,
         headline_test=leading_test,
-        headline_test_reason=entry(TESTS, leading_test).why,
+        headline_test_reason=entry(TESTS, leading_test).why if leading_test else "",
         treatment=parts.treatment if parts else "",
         groups=(study.report.groups[0], study.report.groups[1]),
         regressors=(parts.treatment, *parts.controls) if parts else (),
@@ -212,32 +253,32 @@ def facts(study: Study, leading_test: str, listed: tuple[Window, ...]) -> StudyF
         excluded=parts.excluded if parts else (),
         selection=parts.selection if parts else (),
         rationales={head: part.rationale for head, part in arguments.items() if part is not None},
-        labels={**labels, **study.labels},
-        notes=conventions(study),
+        labels=labels(study),
+        notes=conventions(study) if study.outcome is None else ready.conventions(study),
         level=study.level,
         currency=study.report.currency,
         seed=study.seed,
+        outcome=ready.outcome(study),
     )
+
+
+def labels(study: Study) -> dict[str, str]:
+    """Variable -> its words on a page."""
+    made = {name: item.label for name, item in study.characteristics.items() if item.label}
+    return {**made, **ready.labels(study), **study.labels}
 
 
 def conventions(study: Study) -> tuple[str, ...]:
     """The conventions a reader must know, one sentence each, from the study's own values."""
     time = study.event_time
-    model = study.expected_returns.headline.replace("_", " ")
     return (
         "Day zero is the first session of the listing's own exchange whose close, "
         f"less {time.cutoff_minutes} minutes, comes at or after the announcement.",
+        *plan_events.date_sentences(study),
         "An announcement with a date and no time takes that date's session; the session after "
         "may hold its reaction.",
-        f"Returns are simple daily returns of adjusted closes; the headline model is the {model}, "
-        f"estimated over sessions {time.estimation_window.label} with at least "
-        f"{time.minimum_observations} returns.",
-        "A session without a price is a gap, never a return of zero; a deal needs every day of "
-        f"the headline window and {time.share_of_days:.0%} of the days of another window.",
-        f"Sessions within {time.mask_sessions} of another deal of the company are left out of "
-        "estimation; of two deals whose headline windows meet, the first is kept.",
-        "A deal within "
-        f"{time.confounding_days} session(s) of an earnings release is kept and flagged.",
+        *plan_prices.return_sentences(study),
+        *plan_events.event_sentences(study),
     )
 
 
@@ -247,29 +288,12 @@ def fit_options(study: Study) -> FitOptions:
     return FitOptions(
         level=study.level,
         covariance=chosen.covariance,
-        cluster=chosen.cluster_all and chosen.covariance == "auto",
+        cluster=(chosen.cluster_all or bool(plan_events.company_clusters(study)))
+        and chosen.covariance == "auto",
         allow_functional_form=chosen.curvature_only,
         learner=chosen.learner,
         folds=chosen.folds,
         matches=chosen.matches,
+        draws=chosen.bootstrap_draws,
         seed=study.seed,
-    )
-
-
-def scrutiny_options(study: Study, groups: Mapping[str, Sequence[str]]) -> ScrutinyOptions:
-    """The doubts to go through; ``groups`` gives the words of each cluster's and effect's codes."""
-    asked = study.scrutiny
-    labels = {name: item.label for name, item in study.characteristics.items() if item.label}
-    return ScrutinyOptions(
-        fit=FitOptions(level=study.level),
-        suspects=tuple(
-            Suspect(item.factor, item.on_outcome, item.on_treatment, item.evidence)
-            for item in asked.suspects
-        ),
-        reliability=dict(asked.reliability),
-        benchmarks=tuple(asked.benchmarks),
-        simex=asked.simulate_errors,
-        seed=study.seed,
-        labels={**labels, **study.labels},
-        groups=groups,
     )

@@ -4,14 +4,16 @@ from __future__ import annotations
 
 from typing import Annotated, Literal
 
-from pydantic import Field
+from pydantic import Field, field_validator
 
 from pipeline.core.design import COVARIANCES, LEARNERS
 from pipeline.study.part import Estimator, Part, Rationale
 
+FEWEST_DRAWS = 999
+
 
 class Regression(Part):
-    """The cross-section of abnormal returns in the headline window."""
+    """The cross-section of the outcome: abnormal returns of the headline window, or [outcome]."""
 
     treatment: str = Field(description="The deal feature the committee can choose: 0 or 1.")
     continuous: bool = Field(
@@ -25,6 +27,10 @@ class Regression(Part):
     columns: list[Estimator] = Field(
         default_factory=list,
         description="Estimators of the comparison table; all that the study allows if empty.",
+    )
+    expected_gain: bool = Field(
+        False,
+        description="Whether returns are also read as surprises to investors who foresee deals.",
     )
 
 
@@ -42,8 +48,14 @@ class Fit(Part):
     )
     folds: int = Field(5, ge=1, le=20, description="Parts of the sample for cross-fitting.")
     matches: int = Field(1, ge=1, le=50, description="Nearest deals a deal is compared with.")
+    bootstrap_draws: int = Field(
+        1_999,
+        ge=0,
+        le=99_999,
+        description="Draws of the cluster bootstrap of instrumented columns; 0 leaves it out.",
+    )
     curvature_only: bool = Field(
-        False, description="Accept a selection model without an excluded variable."
+        False, description="Let a selection model without an excluded variable lead."
     )
 
 
@@ -53,64 +65,31 @@ class Selection(Part):
     explained_by: Annotated[list[str], Field(min_length=1)] = Field(
         description="Company variables, known for every candidate."
     )
-    excluded: Annotated[list[str], Field(min_length=1)] = Field(
-        description="Variables that move the decision to bid and nothing else."
+    excluded: list[str] = Field(
+        description="Variables that move the decision to bid and nothing else. Without one the "
+        "column rests on the shape of the normal curve, says so and does not lead."
     )
     rationale: Rationale = Field(description="The argument for the exclusion, printed verbatim.")
+    review: bool = Field(True, description="Whether to put the reviewers' questions to the model.")
+    draws: int = Field(
+        999, ge=0, le=100_000, description="Replications of both steps; 0 leaves them out."
+    )
+
+    @field_validator("draws")
+    @classmethod
+    def _enough(cls, value: int) -> int:
+        if 0 < value < FEWEST_DRAWS:
+            raise ValueError(f"0, or at least {FEWEST_DRAWS} replications for an interval")
+        return value
 
 
 class Instruments(Part):
     """What moves the treatment and nothing else."""
 
     treatment: str = Field(alias="for", description="The variable they move.")
+    also_for: list[str] = Field(
+        default_factory=list,
+        description="Controls that are chosen as well and that the same instruments move.",
+    )
     use: Annotated[list[str], Field(min_length=1)] = Field(description="The instruments.")
     rationale: Rationale = Field(description="The argument for the exclusion, printed verbatim.")
-
-
-Sign = Literal["+", "-", "0", "?"]
-
-
-class SuspectedFactor(Part):
-    """A factor nobody recorded, as you would argue it before a committee."""
-
-    factor: str = Field(description="What it is.")
-    on_outcome: Sign = Field(description="Sign of its effect on the return, all else equal.")
-    on_treatment: Sign = Field(description="Sign of its effect on the choice of the feature.")
-    evidence: str = Field("", description="Why you think so; printed verbatim.")
-
-
-class SpecificationGrid(Part):
-    """The specification curve: windows, models, controls, winsorising and samples, all combined."""
-
-    run: bool = Field(False, description="Whether to make it.")
-    control_sets: list[list[str]] = Field(
-        default_factory=list, description="Sets of controls beside all of them and none."
-    )
-    winsorise: list[float] = Field(
-        [0.0, 0.01], description="Shares of the outcome set to its quantile at either end."
-    )
-    permutations: int = Field(
-        199, ge=0, le=100_000, description="Draws of the test of the whole curve; 0 leaves it out."
-    )
-
-
-class Scrutiny(Part):
-    """What it would take to overturn the finding."""
-
-    run: bool = Field(True, description="Whether to go through the doubts.")
-    suspects: list[SuspectedFactor] = Field(
-        default_factory=list,
-        description="Factors nobody recorded: { factor, on_outcome, on_treatment, evidence }.",
-    )
-    reliability: dict[str, float] = Field(
-        default_factory=dict,
-        description="Variable -> share of its variance that is not error of record, in (0, 1].",
-    )
-    benchmarks: list[str] = Field(
-        default_factory=list,
-        description="Controls a hidden factor is likened to; the strongest one if empty.",
-    )
-    grid: SpecificationGrid = Field(default_factory=SpecificationGrid)
-    simulate_errors: bool = Field(
-        False, description="Whether errors of record are simulated as well (slow)."
-    )

@@ -7,6 +7,12 @@ from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.registry import ESTIMATORS, EXPECTED_RETURNS, entry
+from pipeline.study.bounds import bounds_checks
+from pipeline.study.doubt_rules import doubt_checks
+from pipeline.study.outcome import outcome_checks
+from pipeline.study.plan_events import event_checks
+from pipeline.study.plan_prices import price_checks
+from pipeline.study.plan_returns import returns_checks
 from pipeline.study.schema import Study
 
 
@@ -19,6 +25,12 @@ def cross_checks(study: Study, file: str) -> list[Finding]:
         *_columns(study, file),
         *_needs(study, file),
         *_zone(study, file),
+        *bounds_checks(study, file),
+        *outcome_checks(study, file),
+        *event_checks(study, file),
+        *price_checks(study, file),
+        *doubt_checks(study, file),
+        *returns_checks(study, file),
     ]
 
 
@@ -116,6 +128,7 @@ def _roles(study: Study, file: str) -> Iterator[Finding]:
             "Name the two values of the treatment.",
         )
     yield from _instruments(study, file, outcome)
+    yield from _also_chosen(study, file)
     yield from _exclusions(study, file, outcome)
 
 
@@ -141,6 +154,44 @@ def _instruments(study: Study, file: str, outcome: list[str]) -> Iterator[Findin
                 f"'{study.instruments.treatment}'",
                 f"'{regression.treatment}', the treatment of the regression",
                 "Name the same variable in both places.",
+            )
+
+
+def _also_chosen(study: Study, file: str) -> Iterator[Finding]:
+    """Further variables the instruments move: controls, enough instruments, columns that can."""
+    regression, instruments = study.regression, study.instruments
+    if regression is None or instruments is None or not instruments.also_for:
+        return
+    chosen = [regression.treatment, *instruments.also_for]
+    for name in instruments.also_for:
+        if name not in regression.controls or chosen.count(name) > 1:
+            yield _error(
+                "bad_value",
+                file,
+                "instruments.also_for",
+                f"'{name}'",
+                "names of regression.controls, each once",
+                f"Add '{name}' to regression.controls, or take it out of instruments.also_for.",
+            )
+    if len(instruments.use) < len(chosen):
+        yield _error(
+            "under_identified",
+            file,
+            "instruments.use",
+            f"{len(instruments.use)} for {len(chosen)} variables ({', '.join(chosen)})",
+            f"at least {len(chosen)} instruments",
+            "Name more instruments, or take variables out of instruments.also_for.",
+        )
+    for key in regression.columns:
+        known = entry(ESTIMATORS, key)
+        if "instruments" in known.needs and not known.several:
+            yield _error(
+                "bad_value",
+                file,
+                "regression.columns",
+                f"'{key}', which takes one chosen variable",
+                "columns for several: two_stage_least_squares and the like",
+                f"Take '{key}' out, or take instruments.also_for out.",
             )
 
 

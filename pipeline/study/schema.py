@@ -11,25 +11,66 @@ from typing import Annotated, Literal
 
 from pydantic import Field, field_validator, model_validator
 
-from pipeline.core.window import Window
 from pipeline.registry import ESTIMATORS, FORMATS, TABLE, TESTS, keys
+from pipeline.study.benchmarks import BenchmarkChecks
+from pipeline.study.bounds import Bounds
+from pipeline.study.deal_list import DealList
+from pipeline.study.doubts import Scrutiny
+from pipeline.study.horizons import CalendarTime, MatchedControl
+from pipeline.study.outcome import Outcome
 from pipeline.study.part import BY_RULE, Format, LeadingTest, Measure, Model, Part, Span, Test
-from pipeline.study.questions import Fit, Instruments, Regression, Scrutiny, Selection
+from pipeline.study.prices import Currency, Screens, Series
+from pipeline.study.questions import Fit, Instruments, Regression, Selection
+from pipeline.study.timing import EventTime
 
-TableName = Literal["deals", "prices", "benchmarks", "candidates", "factors"]
+TableName = Literal[
+    "deals", "prices", "benchmarks", "candidates", "factors", "peers", "listings", "news",
+    "restricted", "rates", "delistings",
+]  # fmt: skip
 
 
 class Inputs(Part):
     """Where the tables are. Paths count from the folder of the study file that names them."""
 
     deals: Path = Field(description="One row a deal.")
-    prices: Path = Field(description="Daily closes: security, date, close, volume.")
-    benchmarks: Path = Field(description="Index levels: exchange, date, close.")
+    prices: Path | None = Field(
+        None, description="Daily closes: security, date, close, volume. Must be there unless the "
+        "study has [outcome]."
+    )
+    benchmarks: Path | None = Field(
+        None, description="Index levels: exchange, date, close. Must be there as well."
+    )
     candidates: Path | None = Field(
         None, description="Companies by year that could have announced, for the selection model."
     )
     factors: Path | None = Field(
         None, description="Daily factor returns, decimal: exchange, date, one column a factor."
+    )
+    peers: Path | None = Field(
+        None, description="Companies a company is compared with: security, peer, perhaps exchange."
+    )
+    listings: Path | None = Field(
+        None,
+        description="Lines of companies listed more than once: security, line (its code among the "
+        "prices), exchange, perhaps primary, home, currency.",
+    )
+    news: Path | None = Field(
+        None, description="Other news of companies: security, date, kind (guidance, dividend)."
+    )
+    restricted: Path | None = Field(
+        None,
+        description="The house's restricted list: security. A deal of one of its companies stops "
+        "the run.",
+    )
+    rates: Path | None = Field(
+        None,
+        description="Exchange rates: date, currency, rate (what one unit of it costs in the common "
+        "currency).",
+    )
+    delistings: Path | None = Field(
+        None,
+        description="Securities that left their exchange: security, date, return (decimal), reason "
+        "('performance' where the company failed).",
     )
     columns: dict[TableName, dict[str, str]] = Field(
         default_factory=dict,
@@ -42,63 +83,10 @@ class Inputs(Part):
         "", description="Time zone of announcements without one, e.g. Europe/London."
     )
     date_format: str = Field(
-        "", description="Format of dates that are not YYYY-MM-DD, e.g. '%d/%m/%Y %H:%M'."
+        "",
+        description="Format of dates that are not YYYY-MM-DD, e.g. '%d/%m/%Y %H:%M'; 'excel' or "
+        "'excel 1904' for days counted by a spreadsheet.",
     )
-
-
-class EventTime(Part):
-    """Sessions are those of the security's own exchange, counted from day zero."""
-
-    estimation: Span = Field([-250, -31], description="Estimation window, sessions, inclusive.")
-    minimum_observations: int = Field(
-        120, ge=30, description="Returns that the estimation window must hold."
-    )
-    headline: Span = Field([-1, 1], description="The window declared before looking.")
-    windows: list[Span] = Field(
-        default_factory=list, description="Secondary windows, adjusted for multiplicity."
-    )
-    cutoff_minutes: int = Field(
-        0, ge=0, le=120, description="News this close to the close counts for the next session."
-    )
-    share_of_days: float = Field(
-        0.8, gt=0, le=1, description="Share of a secondary window's days that must have traded."
-    )
-    mask_sessions: int = Field(
-        5, ge=0, description="Sessions around another deal that are left out of estimation."
-    )
-    confounding_days: int = Field(
-        1, ge=0, description="Sessions within which an earnings release is flagged."
-    )
-
-    real_jumps: list[str] = Field(
-        default_factory=list,
-        description="Deals whose price moved by a whole factor for real, not by a split.",
-    )
-
-    @model_validator(mode="after")
-    def _ordered(self) -> EventTime:
-        for start, end in (self.estimation, self.headline, *self.windows):
-            if end < start:
-                raise ValueError(
-                    f"a last session after the first: [{start}, {end}] ends before it starts"
-                )
-        return self
-
-    @property
-    def estimation_window(self) -> Window:
-        """The estimation window."""
-        return Window(*self.estimation)
-
-    @property
-    def headline_window(self) -> Window:
-        """The window declared before looking."""
-        return Window(*self.headline)
-
-    @property
-    def all_windows(self) -> tuple[Window, ...]:
-        """The headline window, then each secondary one once."""
-        listed = [Window(*pair) for pair in (self.headline, *self.windows)]
-        return tuple(dict.fromkeys(listed))
 
 
 class Calendar(Part):
@@ -127,6 +115,12 @@ class ExpectedReturns(Part):
     also: list[Model] = Field(
         default_factory=list, description="Models shown beside it for comparison."
     )
+    peers: str = Field(
+        "",
+        description="Column of deals and candidates whose equals are peers, such as industry; "
+        "not needed with inputs.peers.",
+    )
+    fewest_peers: int = Field(5, ge=1, description="Peers a deal must have for that comparison.")
 
     @property
     def all_models(self) -> tuple[str, ...]:
@@ -237,17 +231,28 @@ class Study(Part):
     seed: int = Field(20260301, ge=0, description="Seed of every random stream.")
     level: float = Field(0.95, gt=0.5, lt=1, description="Confidence level of intervals.")
     inputs: Inputs
+    outcome: Outcome | None = Field(
+        None, description="An outcome that the deal list holds, in place of measured returns."
+    )
+    deal_list: DealList = Field(default_factory=DealList)
     event_time: EventTime = Field(default_factory=EventTime)
+    series: Series = Field(default_factory=Series)
+    currency: Currency = Field(default_factory=Currency)
+    screens: Screens = Field(default_factory=Screens)
     calendars: dict[str, Calendar] = Field(
         default_factory=dict, description="Changes of exchange calendars, by ISO 10383 code."
     )
     expected_returns: ExpectedReturns = Field(default_factory=ExpectedReturns)
+    benchmark_checks: BenchmarkChecks = Field(default_factory=BenchmarkChecks)
     tests: Tests = Field(default_factory=Tests)
     placebo: Placebo = Field(default_factory=Placebo)
+    calendar_time: CalendarTime = Field(default_factory=CalendarTime)
+    matched_control: MatchedControl = Field(default_factory=MatchedControl)
     characteristics: dict[str, Characteristic] = Field(default_factory=dict)
     regression: Regression | None = None
     selection: Selection | None = None
     instruments: Instruments | None = None
+    bounds: Bounds | None = None
     fit: Fit = Field(default_factory=Fit)
     scrutiny: Scrutiny = Field(default_factory=Scrutiny)
     labels: dict[str, str] = Field(

@@ -294,3 +294,9 @@ def test_the_deal_table_as_written() -> None:
     ]  # fmt: skip
     assert found["group"].tolist() == ["cash"]
     assert found["earnings_release"].dtype == "datetime64[s]"
+
+
+def test_a_control_the_instruments_move_is_endogenous() -> None:
+    design = made(roles=replace(ROLES, also_endogenous=("relative",))).design
+    assert design.endogenous == ("shares", "relative")
+    assert made().design.endogenous == ("shares",)

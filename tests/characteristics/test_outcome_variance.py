@@ -15,8 +15,7 @@ def made(spread: object) -> tuple[Design, np.ndarray]:
     table = deals()
     if spread is not None:
         table["car_m1_1_std_dev"] = spread
-    on_candidates = {"run_up": np.zeros(80)}
-    found = prepare(table, candidates(table), RECIPES, MEASURED, on_candidates, ROLES)
+    found = prepare(table, candidates(table), RECIPES, MEASURED, {}, ROLES)
     kept = table.set_index("deal_id").loc[list(found.design.rows)]
     return found.design, kept.get("car_m1_1_std_dev", kept["cap"]).to_numpy()
 

@@ -70,8 +70,10 @@ def test_one_row_a_test_a_window() -> None:
 def test_one_row_a_term_and_stage() -> None:
     lead = estimate(stages=(estimate("First stage"),))
     columns = [lead, Withheld("heckman_two_step", "Heckman", "no number")]
-    frame = estimates_frame(columns, WINDOW, "market_model")
-    assert frame.dtypes.astype(str).to_dict() == ESTIMATE_COLUMNS
+    frame = estimates_frame(columns, {"window_start": -1, "expected_return": "market_model"})
+    kinds = {"window_start": "int64", "expected_return": "str", **ESTIMATE_COLUMNS}
+    assert frame.dtypes.astype(str).to_dict() == kinds
+    assert set(frame["window_start"]) == {-1}
     assert frame["term"].tolist() == ["constant", "shares"] * 2
     assert frame["stage"].tolist() == ["", "", "First stage", "First stage"]
     assert set(frame["clusters"]) == {"security 6, year 3"}
@@ -82,7 +84,7 @@ def test_one_row_a_term_and_stage() -> None:
 def test_empty_frames_keep_their_columns_and_types() -> None:
     for frame, columns in (
         (event_tests_frame([]), TEST_COLUMNS),
-        (estimates_frame([], WINDOW, "m"), ESTIMATE_COLUMNS),
+        (estimates_frame([], {"outcome": "premium"}), {"outcome": "str", **ESTIMATE_COLUMNS}),
         (diagnostics_frame([]), DIAGNOSTIC_COLUMNS),
     ):
         assert frame.empty

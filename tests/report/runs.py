@@ -21,6 +21,7 @@ from pipeline.core.estimate import (
 from pipeline.core.findings import Finding, Severity, findings_frame
 from pipeline.core.ledger import Action, Ledger, LedgerEntry, StageLedger
 from pipeline.core.results import Results, StudyFacts, WindowTests
+from pipeline.core.sessions import SessionRuns
 from pipeline.core.tables import estimates_frame, event_tests_frame
 from pipeline.core.window import Window
 
@@ -94,10 +95,9 @@ def assembled(
 
 def with_frames(results: Results) -> Results:
     """The run with the frames of its own tests and columns."""
-    model = results.study.models[0]
     tables = {
         "event_tests": event_tests_frame(results.window_tests),
-        "estimates": estimates_frame(results.columns, results.study.headline, model),
+        "estimates": estimates_frame(results.columns, results.study.explained),
         "ledger": results.ledger.frame(),
         "findings": findings_frame(results.findings),
         "diagnostics": results.diagnostics,
@@ -187,7 +187,12 @@ def _abnormal(model: str, seed: int) -> AbnormalReturns:
         residual_variance=np.full(DEALS, 0.012**2),
         observations=np.full(DEALS, 150),
         estimation_returns=rng.normal(0, 0.012, (DEALS, 4)),
-        estimation_days=np.full((DEALS, 4), np.datetime64("2018-06-01")),
+        estimation_sessions=SessionRuns(
+            calendars=(np.datetime64("2018-06-01") + np.arange(4),),
+            calendar=np.zeros(DEALS, dtype=np.int64),
+            first=np.zeros(DEALS, dtype=np.int64),
+            length=4,
+        ),
         expected=np.zeros((DEALS, width)),
     )
 

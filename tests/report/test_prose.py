@@ -21,6 +21,7 @@ from pipeline.report.content import memo, report
 from pipeline.report.document import Document, Paragraph, Quote, Verbatim
 from pipeline.report.headline import headline_frame
 from pipeline.report.material import quote
+from tests.report.doubted import doubted_run
 from tests.report.runs import bare_run, estimate, full_run, shaped, with_columns
 
 NUMBER = re.compile(r"\d(?:[\d,]*\d)?(?:\.\d+)?")
@@ -37,6 +38,7 @@ def runs() -> dict[str, Results]:
         "two columns": with_columns(full_run(), sole, estimate("Other", 0.02)),
         "withheld lead": with_columns(full_run(), Withheld("a", "A", "it has 1 cluster"), sole),
         "no lead": with_columns(full_run(), sole, lead=-1),
+        "doubted": doubted_run(),
     }
 
 
@@ -60,7 +62,8 @@ def case(request: pytest.FixtureRequest) -> tuple[Results, Document]:
 
 def rows_of(run: Results) -> dict[str, list[dict[Hashable, Any]]]:
     frames = {**run.tables, "headline": headline_frame(run)}
-    wanted = ("event_tests", "estimates", "headline")
+    wanted = [name for name in ("event_tests", "estimates", "headline", "breakdowns")
+              if name in frames]  # fmt: skip
     return {name: frames[name].to_dict("records") for name in wanted}
 
 
@@ -121,7 +124,9 @@ def spoken_by(run: Results) -> str:
     columns = [str(vars_of(column)) for column in run.columns]
     tests = [str(t) for entry in run.window_tests for t in entry.tests.values()]
     parts = [str(run.study), *columns, *tests, run.diagnostics.to_string(),
-             str(run.findings), run.sensitivity.to_string()]  # fmt: skip
+             str(run.findings), run.sensitivity.to_string(),
+             *(str(run.tables[name].to_dict("list")) for name in ("breakdowns",)
+               if name in run.tables)]  # fmt: skip
     return " ".join(parts)
 
 

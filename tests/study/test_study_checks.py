@@ -70,6 +70,31 @@ def test_an_instrument_for_another_variable(tmp_path: Path) -> None:
     assert (finding.rule, finding.column) == ("bad_value", "instruments.for")
 
 
+USE, ALSO = 'use = ["spare"]', 'use = ["spare", "urgent"]\nalso_for = ["relative_size"]'
+
+
+def test_further_variables_of_the_instruments_are_controls(tmp_path: Path) -> None:
+    finding = one_refusal(tmp_path, (USE, ALSO.replace("relative_size", "unknown")))
+    assert (finding.rule, finding.column) == ("bad_value", "instruments.also_for")
+    assert "'unknown'" in finding.got
+
+
+def test_fewer_instruments_than_variables_are_counted(tmp_path: Path) -> None:
+    finding = one_refusal(tmp_path, (USE, USE + '\nalso_for = ["relative_size"]'))
+    assert (finding.rule, finding.column) == ("under_identified", "instruments.use")
+    assert finding.got == "1 for 2 variables (shares, relative_size)"
+    assert finding.expected == "at least 2 instruments"
+
+
+def test_columns_made_for_one_variable(tmp_path: Path) -> None:
+    columns = 'treatment = "shares"\ncolumns = ["treatment_two_step"]'
+    finding = one_refusal(
+        tmp_path, (USE, ALSO), ('[regression]\ntreatment = "shares"', f"[regression]\n{columns}")
+    )
+    assert (finding.rule, finding.column) == ("bad_value", "regression.columns")
+    assert "'treatment_two_step'" in finding.got
+
+
 def test_an_excluded_variable_among_the_controls(tmp_path: Path) -> None:
     finding = one_refusal(tmp_path, ('excluded = ["for_sale"]', 'excluded = ["leverage"]'))
     assert (finding.rule, finding.column) == ("excluded_is_control", "selection.excluded")

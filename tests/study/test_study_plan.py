@@ -173,3 +173,13 @@ def test_a_date_alone_never_stands_on_day_zero_alone(study: Study) -> None:
     assert plan.windows(alone, date_only=True)[-1] == Window(0, 1)
     covered = with_windows([0, 0], [-1, 1])
     assert Window(0, 1) not in plan.windows(covered, date_only=True)
+
+
+def test_further_variables_the_instruments_move(tmp_path: Path) -> None:
+    more = ('use = ["spare"]', 'use = ["spare", "urgent"]\nalso_for = ["relative_size"]')
+    study = loaded(tmp_path, more, ("[selection]", "[fit]\nbootstrap_draws = 99\n\n[selection]"))
+    parts = plan.roles(study)
+    assert parts is not None
+    assert parts.also_endogenous == ("relative_size",)
+    assert plan.fit_options(study).draws == 99
+    assert loaded(tmp_path).instruments is not None
