@@ -188,6 +188,8 @@ def placebo_of(study: Study, measured: Measured, mean: float, clock: Clock) -> A
             distance=asked.distance,
             minimum_observations=study.event_time.minimum_observations,
             seed=study.seed,
+            announced=measured.located,
+            around=study.event_time.mask_sessions,
         )
     tests = {
         key: entry(TESTS, key).load()

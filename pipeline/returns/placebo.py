@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Iterator, Mapping
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
@@ -30,6 +31,8 @@ def pseudo_events(
     distance: int,
     minimum_observations: int,
     seed: int,
+    announced: pd.DataFrame,
+    around: int,
 ) -> Iterator[tuple[Integers, AbnormalReturns]]:
     """One sample a draw: every deal moved to sessions where its company announced nothing.
 
@@ -44,6 +47,8 @@ def pseudo_events(
         window: the event days wanted.
         draws: number of samples.
         seed: of the stream of shifts.
+        announced: security, exchange, column, position of every deal of the list: the sessions
+            within ``around`` of one are not used, as they are not in the sample's own windows.
 
     Returns:
         Of each draw, the (n,) rows of ``located`` that stay in it, and their abnormal returns.
@@ -51,7 +56,8 @@ def pseudo_events(
     shifts = draw_shifts(located["day_zero"], draws, distance, seed)
     free = free_to_move(located, shifts, distance, panels, window)
     places = placed(located)
-    made = engines(function, places, panels, estimation, window)
+    quiet = without_announcements(panels, announced, around)
+    made = engines(function, places, quiet, estimation, window)
     a_batch = max(1, BATCH_EVENTS // len(located))
     for first in range(0, draws, a_batch):
         batch = slice(first, first + a_batch)
@@ -65,6 +71,24 @@ def pseudo_events(
         ends = np.searchsorted(draw, np.arange(len(free[batch]) + 1))
         for start, end in itertools.pairwise(ends.tolist()):
             yield deal[start:end], together.take(slice(start, end))
+
+
+def without_announcements(
+    panels: Mapping[str, PricePanel], announced: pd.DataFrame, around: int
+) -> dict[str, PricePanel]:
+    """The panels without the returns of a company within ``around`` sessions of its deals.
+
+    A reaction left in an estimation window would make the share look riskier than it is on dates
+    without an announcement, and the tests more cautious than they are.
+    """
+    quiet = {}
+    for name, panel in panels.items():
+        own = announced[(announced["exchange"] == name) & (announced["column"] >= 0)]
+        returns = panel.returns.copy(order="F")
+        for column, position in zip(own["column"], own["position"], strict=True):
+            returns[max(position - around, 0) : position + around + 1, column] = np.nan
+        quiet[name] = replace(panel, returns=returns)
+    return quiet
 
 
 def draw_shifts(days: pd.Series, draws: int, distance: int, seed: int) -> Integers:

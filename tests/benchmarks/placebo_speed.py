@@ -95,6 +95,8 @@ def samples(
         distance=60,
         minimum_observations=100,
         seed=20260301,
+        announced=located,
+        around=5,
     )
 
 

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -11,7 +13,12 @@ from pipeline.core.window import Window
 from pipeline.returns import placebo
 from pipeline.returns.expected import market_model
 from pipeline.returns.measure import measure
-from pipeline.returns.placebo import draw_shifts, free_to_move, pseudo_events
+from pipeline.returns.placebo import (
+    draw_shifts,
+    free_to_move,
+    pseudo_events,
+    without_announcements,
+)
 from tests.returns.panels import invented_panel
 
 WINDOW, ESTIMATION = Window(-1, 1), Window(-100, -11)
@@ -64,7 +71,8 @@ def test_no_draw_comes_near_an_announcement_of_the_company(
 def test_samples_are_the_returns_of_the_moved_dates(
     located: pd.DataFrame, panels: dict[str, PricePanel]
 ) -> None:
-    how = {"draws": 6, "distance": 60, "minimum_observations": 60, "seed": 5}
+    how: dict[str, object] = {"draws": 6, "distance": 60, "minimum_observations": 60, "seed": 5}
+    how |= {"announced": located, "around": 5}
     drawn = list(
         pseudo_events("m", market_model, located, panels, ESTIMATION, WINDOW, **how)  # type: ignore[arg-type]
     )
@@ -87,20 +95,41 @@ def test_a_sample_is_the_fit_of_the_deals_moved(
     located: pd.DataFrame, panels: dict[str, PricePanel], monkeypatch: pytest.MonkeyPatch
 ) -> None:
     """Draw by draw through the ordinary fit; the same whatever the batch."""
-    how = {"draws": 7, "distance": 60, "minimum_observations": 60, "seed": 5}
+    how: dict[str, object] = {"draws": 7, "distance": 60, "minimum_observations": 60, "seed": 5}
+    how |= {"announced": located, "around": 5}
     position = located["position"].to_numpy()
     shifts = draw_shifts(located["day_zero"], 7, 60, 5)
     free = free_to_move(located, shifts, 60, panels, WINDOW)
+    quiet = without_announcements(panels, located, 5)
     for events in (1, 12, 4_000):
         monkeypatch.setattr(placebo, "BATCH_EVENTS", events)
         drawn = pseudo_events("m", market_model, located, panels, ESTIMATION, WINDOW, **how)  # type: ignore[arg-type]
         for at, (_, sample) in enumerate(drawn):
             moved = located.assign(position=position + shifts[at])[free[at]]
             masked = np.zeros((len(moved), len(ESTIMATION)), dtype=np.bool_)
-            plain = measure("m", market_model, moved, masked, panels, ESTIMATION, WINDOW)
+            plain = measure("m", market_model, moved, masked, quiet, ESTIMATION, WINDOW)
             kept = plain.select((plain.observations >= 60) & plain.complete(WINDOW))
             assert sample.deals == kept.deals
             np.testing.assert_array_equal(sample.returns, kept.returns)
             np.testing.assert_array_equal(sample.estimation_returns, kept.estimation_returns)
             np.testing.assert_array_equal(sample.estimation_days, kept.estimation_days)
         assert at == 6
+
+
+def test_the_real_reactions_are_not_in_the_windows_of_the_pseudo_events(
+    located: pd.DataFrame, panels: dict[str, PricePanel]
+) -> None:
+    """A jump of 40% at each real announcement changes nothing on the dates without one."""
+    panel = panels["XLON"]
+    jumped = panel.returns.copy(order="F")
+    jumped[located["position"], located["column"]] += 0.4
+    shocked = {"XLON": replace(panel, returns=jumped)}
+    how: dict[str, object] = {"draws": 20, "distance": 60, "minimum_observations": 60, "seed": 5}
+    how |= {"announced": located, "around": 5}
+    for (_, calm), (_, other) in zip(
+        pseudo_events("m", market_model, located, panels, ESTIMATION, WINDOW, **how),  # type: ignore[arg-type]
+        pseudo_events("m", market_model, located, shocked, ESTIMATION, WINDOW, **how),  # type: ignore[arg-type]
+        strict=True,
+    ):
+        np.testing.assert_array_equal(calm.residual_variance, other.residual_variance)
+        np.testing.assert_array_equal(calm.returns, other.returns)
