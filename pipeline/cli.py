@@ -100,8 +100,8 @@ def power(study: StudyFile, as_json: AsJson = False) -> None:
         from pipeline.flow import power as power_stages
 
         with screen.progress() as tell:
-            frame, deals = power_stages(_load(study, ""), tell)
-        screen.power(frame, deals)
+            frame, smallest, deals = power_stages(_load(study, ""), tell)
+        screen.power(frame, smallest, deals)
 
     _guard(work, screen.problem)
 

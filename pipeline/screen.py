@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import time
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -169,23 +170,30 @@ class Screen:
             table.add_row(f"{day.day:+d}" if day.day else "0", day.date, *cells, outside)
         console.print(table)
 
-    def power(self, frame: pd.DataFrame, deals: int) -> None:
-        """Power by size of the true mean."""
+    def power(self, frame: pd.DataFrame, smallest: float, deals: int) -> None:
+        """The smallest true mean found four times in five, then power by size of the true mean."""
         if self.as_json:
-            print(json.dumps({"deals": deals, "power": frame.to_dict("records")}))
+            found = smallest if math.isfinite(smallest) else None
+            print(json.dumps({"deals": deals, "smallest": found, "power": _records(frame)}))
             return
         console = Console(highlight=False, markup=False)
         if frame.empty:
             console.print("Power needs at least two deals.")
             return
+        console.print(
+            f"A true mean of {_bp(smallest)} bp is the smallest that is found four times in five."
+        )
         console.print(f"{deals} deals, those that move together counted for less; 5% two-sided.\n")
         table = Table(box=None, pad_edge=False, header_style="")
         for name in ("true mean, bp", "chance of finding it", "deals needed for 80%"):
             table.add_column(name, justify="right")
         columns = (frame[name].astype(float) for name in ("effect", "power", "deals_needed"))
         for effect, chance, needed in zip(*columns, strict=True):
-            table.add_row(f"{effect * 1e4:.0f}", f"{chance:.0%}", f"{needed:,.0f}")
+            count = f"{needed:,.0f}" if math.isfinite(needed) else "never"
+            table.add_row(f"{effect * 1e4:.0f}", f"{chance:.0%}", count)
         console.print(table)
+        if not all(map(math.isfinite, frame["deals_needed"])):
+            console.print("\nNever: deals that move together as these do stop adding information.")
 
     def contrasted(self, found: Contrast, folder: Path, written: Sequence[str]) -> None:
         """What moved between two runs, and what explains it."""

@@ -16,23 +16,43 @@ HIDDEN = ("_row", "column", "position", "announced_utc")
 
 def car_column(window: Window) -> str:
     """Name of a window's CAR in the deal table: ``car_m1_1`` for [-1, +1]."""
-    return f"car_{window.start}_{window.end}".replace("-", "m")
+    return _column("car", window)
+
+
+def _column(measure: str, window: Window) -> str:
+    return f"{measure}_{window.start}_{window.end}".replace("-", "m")
 
 
 def with_outcomes(
-    deals: pd.DataFrame, abnormal: AbnormalReturns, windows: Sequence[Window], share: float
+    deals: pd.DataFrame,
+    abnormal: AbnormalReturns,
+    windows: Sequence[Window],
+    share: float,
+    *,
+    log: bool = False,
 ) -> pd.DataFrame:
-    """The deals with one CAR column a window and the facts of estimation.
+    """The deals with the abnormal returns of each window and the facts of estimation.
+
+    A window has its CAR (``car_m1_1``), the CAR over its forecast standard deviation
+    (``scar_m1_1``) and the buy-and-hold abnormal return (``bhar_m1_1``), decimal but for the
+    second.
 
     Args:
         deals: N rows in the order of ``abnormal``.
+        log: whether its returns are logarithmic.
         windows: the first is the headline, which needs all its days.
         share: of the days of the others that must have traded; NaN where fewer did.
     """
     added: dict[str, np.ndarray] = {}
     for at, window in enumerate(windows):
         enough = abnormal.complete(window, 1.0 if at == 0 else share)
-        added[car_column(window)] = np.where(enough, abnormal.car(window), np.nan)
+        measures = {
+            "car": abnormal.car(window),
+            "scar": abnormal.standardised(window),
+            "bhar": abnormal.bhar(window, log=log),
+        }
+        for name, values in measures.items():
+            added[_column(name, window)] = np.where(enough, values, np.nan)
     added[f"{car_column(windows[0])}_std_dev"] = np.sqrt(abnormal.car_variance(windows[0]))
     added["estimation_returns"] = abnormal.observations
     return deals.assign(**added)

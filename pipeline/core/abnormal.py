@@ -104,8 +104,7 @@ class AbnormalReturns:
     def complete(self, window: Window, share: float = 1.0) -> Booleans:
         """(N,) whether at least ``share`` of the window's days traded, day 0 (if in it) among them.
 
-        A missing day is not a zero: methods, common practice, no source. A day that was left out
-        did trade.
+        A missing day is not a zero. Common practice, no source. A day that was left out did trade.
         """
         inside = np.isfinite(self.counted(window))
         enough = inside.mean(axis=1) >= share - 1e-12
@@ -126,12 +125,18 @@ class AbnormalReturns:
         total = np.nansum(self.returns[:, self.columns(window)], axis=1)
         return np.asarray(total, dtype=np.float64)
 
-    def bhar(self, window: Window) -> Floats:
-        """(N,) buy-and-hold abnormal return: product of 1+R less product of 1+E[R], minus."""
+    def bhar(self, window: Window, *, log: bool = False) -> Floats:
+        """(N,) buy-and-hold abnormal return, decimal: prod(1 + R) - prod(1 + E[R]).
+
+        Barber and Lyon (1997, JFE 43). Where returns are logarithmic (``log``), each product is
+        the exponential of the sum. Days that did not trade, and days left out, count as zero.
+        """
         where = self.columns(window)
         traded = np.isfinite(self.returns[:, where])
         expected = np.where(traded, self.expected[:, where], 0.0)
         realised = np.where(traded, self.returns[:, where] + self.expected[:, where], 0.0)
+        if log:
+            return np.asarray(np.exp(realised.sum(axis=1)) - np.exp(expected.sum(axis=1)))
         return np.asarray((1 + realised).prod(axis=1) - (1 + expected).prod(axis=1))
 
     def forecast_covariance(self, window: Window) -> Floats:

@@ -21,7 +21,7 @@ from pipeline.estimators.errors import (
     words,
 )
 from pipeline.estimators.sample import plain
-from pipeline.estimators.selection import check_rows
+from pipeline.estimators.selection_rows import check_rows
 from pipeline.estimators.treatment import binary_treatment
 
 LEE = "Lee (2009)"

@@ -9,10 +9,13 @@ from collections.abc import Iterator
 from dataclasses import dataclass, replace
 
 from pipeline.core.estimate import Diagnostic, Estimate, NotApplicable, TestResult
+from pipeline.estimators.balance import BALANCED
 
 HOUSE = "common practice, no source"
 FEW_CLUSTERS = 40
 SIGNIFICANCE = 0.05
+AFTER = "after."
+UNLIKE = 0.25
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,6 +62,22 @@ LIMITS = (
         0.5,
         "It rests on the shape of the normal curve alone and does not lead.",
         "Lennox, Francis and Wang 2012",
+    ),
+    Limit(
+        "propensity_extreme",
+        "Deals all but sure of the feature, or of its absence, share",
+        0.05,
+        0.2,
+        "For them there is hardly a deal to compare with, and the column extrapolates.",
+        f"Crump, Hotz, Imbens and Mitnik 2009; thresholds {HOUSE}",
+    ),
+    Limit(
+        "clipped",
+        "Deals whose probability of the feature had to be moved, share",
+        0.05,
+        0.2,
+        "For them the other side is all but missing, and the column rests on its bounds.",
+        HOUSE,
     ),
     Limit(
         "ratio",
@@ -111,7 +130,13 @@ TESTS = (
 
 def with_checks(estimate: Estimate) -> Estimate:
     """The estimate with its diagnostics."""
-    found = (*_limits(estimate), *_tests(estimate), *_strength(estimate), *_clusters(estimate))
+    found = (
+        *_limits(estimate),
+        *_balance(estimate),
+        *_tests(estimate),
+        *_strength(estimate),
+        *_clusters(estimate),
+    )
     return replace(estimate, checks=found)
 
 
@@ -126,6 +151,28 @@ def _limits(estimate: Estimate) -> Iterator[Diagnostic]:
         yield Diagnostic(
             estimate.title, limit.words, value, threshold, verdict, limit.meaning, limit.source
         )
+
+
+def _balance(estimate: Estimate) -> Iterator[Diagnostic]:
+    """The largest standardised difference of a control that weights or matches leave."""
+    left = {
+        name.removeprefix(AFTER): abs(value)
+        for name, value in estimate.fit.items()
+        if name.startswith(AFTER)
+    }
+    if not left:
+        return
+    worst = max(left, key=lambda name: left[name])
+    size = left[worst]
+    yield Diagnostic(
+        estimate.title,
+        f"Largest difference left between the two sides, in standard deviations ({worst})",
+        size,
+        f"at most {BALANCED:g}; above {UNLIKE:g} the column does not lead",
+        "fail" if size > UNLIKE else "warn" if size > BALANCED else "pass",
+        "Too large, unlike deals are compared, and the controls' shape decides the answer.",
+        "Austin 2009; Imbens and Wooldridge 2009",
+    )
 
 
 def _tests(estimate: Estimate) -> Iterator[Diagnostic]:

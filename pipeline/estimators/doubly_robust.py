@@ -28,7 +28,7 @@ from pipeline.estimators.learners import (
     probability_learner,
 )
 from pipeline.estimators.likelihood_report import multiplier
-from pipeline.estimators.propensity import SUPPORTED, Observed, observed
+from pipeline.estimators.propensity import SUPPORTED, Observed, observed, refuse_separated
 from pipeline.estimators.sample import plain
 from pipeline.estimators.weighting import estimand
 
@@ -164,7 +164,7 @@ def partially_linear(design: Design, options: FitOptions) -> Estimate:
 
     Raises:
         InputProblem: ``no_variation``, ``collinear``, ``few_rows``, a problem of clusters or
-            covariance.
+            covariance; ``separation`` of a treatment of two values.
         EstimationFailed: if the controls predict the treatment exactly or a variance is not
             positive.
     """
@@ -180,6 +180,9 @@ def partially_linear(design: Design, options: FitOptions) -> Estimate:
     refuse_dependent(design.X, design.names)
     at = design.names.index(design.treatment)
     D, X = design.X[:, at], np.delete(design.X, at, axis=1)
+    if len(np.unique(D)) == 2:
+        names = tuple(name for name in design.names if name != design.treatment)
+        refuse_separated(D.max() == D, X, names)
     folds, learn = folds_of(design, D, rule, options), mean_learner(options)
     v = D - cross_fitted(folds, learn, X, D)
     u = design.y - cross_fitted(folds, learn, X, design.y)

@@ -21,7 +21,7 @@ from pipeline.estimators.algebra import refuse_dependent, scaled, solve
 from pipeline.estimators.errors import ErrorRule, choose_errors, of_influence, positive, words
 from pipeline.estimators.probit import Equation, ProbitFit, fit_probit, limits, mills
 from pipeline.estimators.sample import plain
-from pipeline.estimators.selection import checked_selection
+from pipeline.estimators.selection_rows import checked_selection
 
 FORESEEN, PRIVATE = "Foreseen gain", "Private news"
 EMW = "Eckbo, Maksimovic and Williams (1990)"
@@ -214,7 +214,8 @@ def private_terms(design: Design, options: FitOptions) -> tuple[GainTerm, ...]:
     1994, theorem 6.1), HC1 or clustered. The second row adds a constant, zero under the model.
 
     Raises:
-        InputProblem: as :func:`~pipeline.estimators.selection.checked_selection`, the probit's.
+        InputProblem: as :func:`~pipeline.estimators.selection_rows.checked_selection`, and the
+            probit's.
         EstimationFailed: if the probit does not converge or a variance is not positive.
     """
     selection = checked_selection(design)

@@ -234,6 +234,10 @@ def in_units(model: Joint) -> tuple[Joint, Floats]:
 
 
 def to_units(theta: Floats, units: Floats, q: int) -> Floats:
+    """(p,) parameters ``theta`` carried to the scaled columns of :func:`in_units`.
+
+    ``units`` (p - 1,) are those it returns, ``q`` the number of coefficients in γ.
+    """
     spread = units[-1]
     inner = theta.copy()
     inner[:q] *= units[:q]
@@ -264,6 +268,10 @@ def profile_of(unit: Joint, gamma: Floats, grid: tuple[float, ...] = GRID) -> di
 
 
 def peaks(profile: dict[float, Ascent]) -> list[Floats]:
+    """The parameters at every ρ whose likelihood is at least that of both its neighbours.
+
+    ``profile`` is in ascending order of ρ; the ends have one neighbour.
+    """
     values = np.array([a.value for a in profile.values()])
     padded = np.concatenate([[-np.inf], values, [-np.inf]])
     peak = (padded[1:-1] >= padded[:-2]) & (padded[1:-1] >= padded[2:])

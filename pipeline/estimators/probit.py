@@ -134,6 +134,11 @@ def _derivatives(signs: Floats, index: Floats) -> tuple[Floats, Floats]:
     return generalised, generalised * (generalised + index)
 
 
+def row_derivatives(chosen: Booleans, index: Floats) -> tuple[Floats, Floats]:
+    """(A,) generalised residuals and (A,) minus the second derivatives by the index w'γ."""
+    return _derivatives(np.where(chosen, 1.0, -1.0), index)
+
+
 def _newton(signs: Floats, W: Floats) -> tuple[Floats, int, bool]:
     gamma = np.zeros(W.shape[1])
     value = float(special.log_ndtr(signs * (W @ gamma)).sum())

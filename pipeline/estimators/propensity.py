@@ -63,7 +63,8 @@ def observed(
 
     Raises:
         InputProblem: ``no_variation``, ``few_rows``, ``collinear``, ``treatment_not_binary``, or
-            a problem of clusters or covariance.
+            a problem of clusters or covariance; ``separation`` if the controls tell the treated
+            from the untreated without error, so that there is nobody to compare them with.
     """
     rule = choose_errors(
         design.clusters,
@@ -77,14 +78,26 @@ def observed(
     refuse_dependent(design.X, design.names)
     D = binary_treatment(design)
     at = design.names.index(design.treatment)
+    X = np.delete(design.X, at, axis=1)
+    names = tuple(name for name in design.names if name != design.treatment)
+    refuse_separated(D, X, names)
     return Observed(
         y=design.y,
         D=D,
-        X=np.delete(design.X, at, axis=1),
-        names=tuple(name for name in design.names if name != design.treatment),
+        X=X,
+        names=names,
         rule=rule,
         notes=notes,
     )
+
+
+def refuse_separated(D: Booleans, X: Floats, names: tuple[str, ...]) -> None:
+    """Raise if a combination of the controls X (n, p) tells the treated D (n,) from the others.
+
+    Raises:
+        InputProblem: ``separation`` naming the variables (Albert and Anderson 1984).
+    """
+    _maximum(D, scaled(X)[0], X, names)
 
 
 def fit_logit(D: Booleans, X: Floats, names: tuple[str, ...]) -> Logit:
@@ -97,20 +110,26 @@ def fit_logit(D: Booleans, X: Floats, names: tuple[str, ...]) -> Logit:
         InputProblem: ``separation`` naming the variables.
         EstimationFailed: if Newton's method does not converge.
     """
-    refuse_single_separation(D, X, names)
     unit, length = scaled(X)
     target = D.astype(np.float64)
-    signs = np.where(D, 1.0, -1.0)
-    gamma, converged = _newton(signs, target, unit)
-    index = unit @ gamma
-    if not converged or float((signs * index).max()) > SUSPICIOUS_INDEX:
-        refuse_separation(signs, unit, names)
+    gamma, converged = _maximum(D, unit, X, names)
     if not converged:
         raise EstimationFailed("the probability of the treatment did not converge")
+    index = unit @ gamma
     p = special.expit(index)
     inner = np.linalg.inv((unit * (p * special.expit(-index))[:, None]).T @ unit)
     influence = (unit * (target - p)[:, None]) @ inner / length
     return Logit(gamma / length, np.asarray(p), np.asarray(influence))
+
+
+def _maximum(D: Booleans, unit: Floats, X: Floats, names: tuple[str, ...]) -> tuple[Floats, bool]:
+    """Coefficients of the columns ``unit``, X at unit length, and whether they are a maximum."""
+    refuse_single_separation(D, X, names)
+    signs = np.where(D, 1.0, -1.0)
+    gamma, converged = _newton(signs, D.astype(np.float64), unit)
+    if not converged or float((signs * (unit @ gamma)).max()) > SUSPICIOUS_INDEX:
+        refuse_separation(signs, unit, names)
+    return gamma, converged
 
 
 def _newton(signs: Floats, target: Floats, X: Floats) -> tuple[Floats, bool]:

@@ -10,7 +10,7 @@ from pipeline.core.design import Design, FitOptions, SelectionRows
 from pipeline.core.estimate import Estimate, EstimationFailed, Tested, t_test, z_test
 from pipeline.core.prices import Floats
 from pipeline.estimators import diagnostics
-from pipeline.estimators.algebra import refusal, refuse_dependent, solve
+from pipeline.estimators.algebra import refuse_dependent, solve
 from pipeline.estimators.errors import (
     CLUSTER,
     ErrorRule,
@@ -29,6 +29,7 @@ from pipeline.estimators.probit import (
     probit_estimate,
 )
 from pipeline.estimators.sample import plain
+from pipeline.estimators.selection_rows import checked_selection
 
 LAMBDA = "inverse_mills"
 CITATION = "Heckman (1979); Greene (1981)"
@@ -112,62 +113,17 @@ def heckman_two_step(design: Design, options: FitOptions) -> Estimate:
     )
 
 
-def checked_selection(design: Design) -> SelectionRows:
-    """The candidates, if a selection model may be made of them.
-
-    Raises:
-        InputProblem: ``no_selection``, ``unknown_exclusion``, ``excluded_is_control``,
-            ``selection_rows``.
-    """
-    selection = design.selection
-    if selection is None:
-        raise refusal(
-            "no_selection",
-            "selection",
-            "no candidates",
-            "a table of candidates",
-            "declare which companies could have announced a deal",
-        )
-    unknown = [name for name in selection.excluded if name not in selection.names]
-    if unknown:
-        raise refusal(
-            "unknown_exclusion",
-            ", ".join(unknown),
-            "not in the selection equation",
-            "excluded variables among those that explain announcing",
-            "add it there",
-        )
-    both = [name for name in selection.excluded if name in design.names]
-    if both:
-        raise refusal(
-            "excluded_is_control",
-            ", ".join(both),
-            "excluded, yet a regressor of the outcome",
-            "a variable that moves announcing and not the outcome",
-            "take it out of one of the two",
-        )
-    check_rows(design, selection)
-    return selection
-
-
-def check_rows(design: Design, selection: SelectionRows) -> None:
-    rows = selection.outcome_row[selection.selected]
-    found = np.bincount(rows[(rows >= 0) & (rows < design.n)], minlength=design.n)
-    stray = int((rows < 0).sum() + (rows >= design.n).sum())
-    if stray or (found != 1).any():
-        lost, twice = int((found == 0).sum()), int((found > 1).sum())
-        raise refusal(
-            "selection_rows",
-            "candidates",
-            f"{lost} deals without a candidate, {twice} with several, {stray} without a deal",
-            "one selected candidate a deal",
-            "match the candidates to the deals",
-        )
-
-
 def second_step(
     design: Design, selection: SelectionRows, first: ProbitFit, names: tuple[str, ...]
 ) -> SecondStep:
+    """Least squares of the outcome on X and λ, and the moments of its error (Heckman 1979).
+
+    ``names`` are those of X and of λ, k + 1 of them. σ² = e'e/n + β_λ² mean(δ), outcome units.
+
+    Raises:
+        InputProblem: ``collinear`` or ``few_rows``.
+        EstimationFailed: if the regressors fit the outcome exactly.
+    """
     chosen = selection.selected
     rows = selection.outcome_row[chosen]
     index = first.index[chosen]
@@ -268,6 +224,7 @@ def _estimate(
 
 
 def estimand(design: Design, selection: SelectionRows) -> str:
+    """What a selection model of the design estimates, for whom and under which assumptions."""
     identified = (
         f"the exclusion of {', '.join(selection.excluded)} from the outcome"
         if selection.excluded
@@ -307,6 +264,7 @@ def curvature_alone(selection: SelectionRows, options: FitOptions) -> dict[str, 
 
 
 def excluded_test(stage: Estimate, selection: SelectionRows) -> Tested:
+    """Wald test that no excluded variable moves announcing; ``stage`` is the probit (Wald 1943)."""
     at = [selection.names.index(name) for name in selection.excluded]
     return diagnostics.wald(
         "Excluded variables in the selection equation",

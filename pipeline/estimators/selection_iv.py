@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import replace
 
 import numpy as np
 
@@ -39,7 +39,6 @@ from pipeline.estimators.probit import (
     Equation,
     ProbitFit,
     fit_probit,
-    limits,
     mills,
     probit_estimate,
 )
@@ -47,40 +46,18 @@ from pipeline.estimators.sample import plain
 from pipeline.estimators.selection import (
     LAMBDA,
     SecondStep,
-    checked_selection,
     curvature_alone,
     equation_notes,
     excluded_test,
     stacked_influence,
 )
+from pipeline.estimators.selection_forms import Columns, inverted_forms, reduced_forms
+from pipeline.estimators.selection_rows import checked_selection
 from pipeline.estimators.stages import SAME_VARIABLE, check_names
 
 CITATION = "Wooldridge (2010), procedure 19.2; Newey and McFadden (1994)"
 SUPPORTED = ("hc0", "hc1")
 EXACT = 1e-20
-
-
-@dataclass(frozen=True, slots=True, eq=False)
-class Columns:
-    """The second step's columns, in the candidates' order of the n deals.
-
-    Attributes:
-        y: (n,) outcome.
-        X: (n, k + 1) regressors, the inverse Mills ratio last.
-        Z: (n, L) instruments.
-        spread: (n, L + k) instruments, controls, the ratio last: regressors of the first stage.
-        W: (n, q) regressors of the selection equation.
-        delta: (n,) λ(λ + w'γ).
-        at: the treatment's column in X.
-    """
-
-    y: Floats
-    X: Floats
-    Z: Floats
-    spread: Floats
-    W: Floats
-    delta: Floats
-    at: int
 
 
 def selection_two_stage(design: Design, options: FitOptions) -> Estimate:
@@ -90,8 +67,9 @@ def selection_two_stage(design: Design, options: FitOptions) -> Estimate:
     first-stage fit of X = (x, D, λ), the influence of a candidate is (X̂'X̂)⁻¹(x̂u + G₂₁ψ), ψ its
     influence on the probit: both steps' errors are counted (Newey and McFadden 1994, theorem
     6.1). HC1 with A/(A - 1) by default, clustered if the candidates have clusters; ``hc0`` too.
-    Read against the normal, t(G - 1) with clusters. ``robust_set`` is the Anderson-Rubin set,
-    from reduced forms with the same kind of errors, while the effective F is below 104.67.
+    Read against the normal, t(G - 1) with clusters. ``robust_set`` is the Anderson-Rubin set, by
+    :func:`~pipeline.estimators.selection_forms.inverted_forms`, while the effective F is below
+    104.67 or that set is unbounded. The treatment alone may be endogenous.
 
     ``fit``: sigma, least_squares (with λ, treatment not instrumented), without_selection (two
     stages without λ), partial_r_squared, candidates, selected. ``sets``: wald, anderson_rubin.
@@ -101,7 +79,7 @@ def selection_two_stage(design: Design, options: FitOptions) -> Estimate:
     Raises:
         InputProblem: as :func:`~pipeline.estimators.selection.heckman_two_step`;
             ``under_identified``, ``instrument_is_treatment``, ``instrument_is_control``,
-            ``instrument_collinear``.
+            ``instrument_collinear``, ``one_endogenous``, ``cluster_decides``.
         EstimationFailed: if the probit does not converge, the fit is exact or a variance is not
             positive.
     """
@@ -126,7 +104,8 @@ def selection_two_stage(design: Design, options: FitOptions) -> Estimate:
     step = _second(columns)
     errors = of_influence(rule, stacked_influence(step, first, selection), 1)
     stage = probit_estimate(first, equation, rule, options)
-    forms = _reduced_forms(columns, first, selection, rule, design.instruments)
+    forms = reduced_forms(columns, first, selection, rule, design.instruments)
+    tested = inverted_forms(columns, first, selection, rule, design.instruments)
     return _estimate(
         design,
         options,
@@ -134,7 +113,7 @@ def selection_two_stage(design: Design, options: FitOptions) -> Estimate:
         step,
         positive(errors.covariance, names),
         columns,
-        forms,
+        (forms, tested),
         stage,
         selection,
         (*notes, *cautions(rule, errors.floored or forms.repaired)),
@@ -149,6 +128,16 @@ def _check_instruments(design: Design) -> None:
             f"no instrument for {design.treatment}",
             "at least one",
             "declare an instrument or use the selection model alone",
+        )
+    if design.also_endogenous:
+        listed = ", ".join(design.also_endogenous)
+        raise refusal(
+            "one_endogenous",
+            listed,
+            f"{listed} to be instrumented beside {design.treatment}",
+            f"{design.treatment} alone",
+            "this estimator instruments one variable: leave its column out, or instrument "
+            f"{design.treatment} alone",
         )
     check_names(design)
 
@@ -202,34 +191,6 @@ def _second(columns: Columns) -> SecondStep:
     return SecondStep(predicted, columns.W, b, u, bread, columns.delta, sigma, float(b[-1]) / sigma)
 
 
-def _reduced_forms(
-    columns: Columns,
-    first: ProbitFit,
-    selection: SelectionRows,
-    rule: ErrorRule,
-    names: tuple[str, ...],
-) -> ReducedForms:
-    """Outcome and treatment on instruments, controls and λ, with the joint stacked covariance."""
-    L = columns.Z.shape[1]
-    blocks, found = [], []
-    for target in (columns.y, columns.X[:, columns.at]):
-        b, e, bread = solve(columns.spread, target)
-        step = SecondStep(columns.spread, columns.W, b, e, bread, columns.delta, 1.0, 0.0)
-        blocks.append(stacked_influence(step, first, selection)[:, :L])
-        found.append(b[:L])
-    errors = of_influence(rule, np.column_stack(blocks), 1)
-    labels = tuple(f"{of} {z}" for of in ("outcome on", "first stage") for z in names)
-    df, _ = limits(rule)
-    return ReducedForms(
-        found[0], found[1], positive(errors.covariance, labels), _finite(df, rule), errors.floored
-    )
-
-
-def _finite(df: float, rule: ErrorRule) -> float:
-    """The F distribution's denominator: G - 1, or the rows where the normal is meant."""
-    return float(rule.n) if np.isinf(df) else df
-
-
 def _estimate(
     design: Design,
     options: FitOptions,
@@ -237,29 +198,36 @@ def _estimate(
     step: SecondStep,
     V: Floats,
     columns: Columns,
-    forms: ReducedForms,
+    forms: tuple[ReducedForms, ReducedForms],
     stage: Estimate,
     selection: SelectionRows,
     notes: tuple[str, ...],
 ) -> Estimate:
-    left, effective = _strength(design, columns, forms)
-    weak = effective.statistic < strength.STRONG
+    """``forms``: those the effective F is made of, and those the Anderson-Rubin test is."""
+    left, effective = _strength(design, columns, forms[0])
     found = Found((*design.names, LAMBDA), step.coefficients, V)
     column = large_sample(design, options, rule, _labels(design, selection, rule), found)
-    sets = _sets(column, forms)
+    sets = _sets(column, forms[1])
+    robust = sets["anderson_rubin"]
+    unbounded = robust.shape in (Shape.RAYS, Shape.LINE)
+    weak = unbounded or effective.statistic < strength.STRONG
     return replace(
         column,
         fit={**_facts(columns, step, left, selection), **curvature_alone(selection, options)},
         tests={
             "effective_f": effective,
-            "anderson_rubin": anderson_rubin_test(forms),
+            "anderson_rubin": anderson_rubin_test(forms[1]),
             "no_selection": _no_selection(step, V, column.df),
             "excluded_variables": excluded_test(stage, selection),
         },
         stages=(stage,),
-        robust_set=sets["anderson_rubin"] if weak else None,
+        robust_set=robust if weak else None,
         sets=sets,
-        notes=(*notes, *_notes(design, selection, effective), *equation_notes(design, selection)),
+        notes=(
+            *notes,
+            *_notes(design, selection, effective, unbounded=unbounded),
+            *equation_notes(design, selection),
+        ),
     )
 
 
@@ -330,7 +298,9 @@ def _no_selection(step: SecondStep, V: Floats, df: float) -> Tested:
     return t_test(name, null, statistic, df, caution=caution, citation=CITATION)
 
 
-def _notes(design: Design, selection: SelectionRows, effective: TestResult) -> list[str]:
+def _notes(
+    design: Design, selection: SelectionRows, effective: TestResult, *, unbounded: bool
+) -> list[str]:
     notes = []
     missing = [name for name in design.instruments if name not in selection.names]
     if missing:
@@ -343,4 +313,6 @@ def _notes(design: Design, selection: SelectionRows, effective: TestResult) -> l
             f"Effective F {effective.statistic:.1f}, below {strength.STRONG}: the interval shown "
             "is the Anderson-Rubin set."
         )
+    if unbounded:
+        notes.append("The data do not bound the effect: the Anderson-Rubin set is unbounded.")
     return notes

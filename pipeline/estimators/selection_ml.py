@@ -27,13 +27,13 @@ from pipeline.estimators.probit import Equation, fit_probit, limits
 from pipeline.estimators.sample import plain
 from pipeline.estimators.selection import (
     LAMBDA,
-    checked_selection,
     curvature_alone,
     equation_notes,
     estimand,
     excluded_test,
     second_step,
 )
+from pipeline.estimators.selection_rows import checked_selection
 
 SUPPORTED = ("classical", "hc0", "hc1")
 CITATION = "Heckman (1974); Olsen (1982); Maddala (1983), sec. 9.2"

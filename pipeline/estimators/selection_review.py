@@ -19,10 +19,10 @@ from pipeline.estimators.errors import choose_errors
 from pipeline.estimators.likelihood_maximum import survey
 from pipeline.estimators.marginal import average_effects
 from pipeline.estimators.probit import Equation, ProbitFit, fit_probit, probit_estimate
-from pipeline.estimators.selection import checked_selection
 from pipeline.estimators.selection_bootstrap import Resampled, bootstrap_both_steps
 from pipeline.estimators.selection_checks import checklist
 from pipeline.estimators.selection_ml import joint_model
+from pipeline.estimators.selection_rows import checked_selection
 from pipeline.estimators.selection_versions import versions_of
 
 NAN = float("nan")

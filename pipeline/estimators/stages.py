@@ -12,6 +12,7 @@ from pipeline.core.prices import Floats
 from pipeline.estimators import absorb
 from pipeline.estimators.algebra import (
     RANK_TOLERANCE,
+    orthonormal,
     partial_out,
     refusal,
     refuse_dependent,
@@ -191,12 +192,13 @@ def _check_instruments(
         "instrument_collinear",
     )
     free = sample.n - len(names) - len(design.instruments) - sample.absorbed
-    if free < 1:
+    needed = 1 + len(design.endogenous)
+    if free < needed:
         raise refusal(
             "few_rows",
             ", ".join(design.instruments),
-            f"{sample.n} deals, {free} to spare",
-            "more deals than coefficients in the first stage",
+            f"{sample.n} deals, {free} more than coefficients in the first stage",
+            f"at least {needed} more: one for the outcome and one for each endogenous variable",
             "use fewer instruments",
         )
     fewest = min(sample.rule.counts.values(), default=sample.n)
@@ -211,20 +213,31 @@ def _check_instruments(
 
 
 def _check_same(parts: Parts) -> None:
-    """Refuse instruments that reproduce an endogenous variable."""
+    """Refuse instruments that reproduce an endogenous variable, or a combination of several.
+
+    The largest squared canonical correlation of the two sets (Hotelling 1936) is the largest
+    partial R² any combination reaches; with one endogenous variable it is the variable's own.
+    """
+    basis = orthonormal(parts.Z)
+    left, strength, _ = linalg.svd(basis.T @ orthonormal(parts.E))
+    if strength[0] ** 2 <= SAME_VARIABLE:
+        return
+    combination = basis @ left[:, 0]
+    alone = (parts.Z.T @ combination) ** 2 / np.sum(parts.Z**2, axis=0)
+    raise refusal(
+        "instrument_is_treatment",
+        parts.instruments[int(alone.argmax())],
+        f"the instruments reproduce {_reproduced(parts)} (partial R² above {SAME_VARIABLE})",
+        "instruments that move the treatment without being it",
+        "an instrument that is the treatment under another name removes no bias: replace it",
+    )
+
+
+def _reproduced(parts: Parts) -> str:
     left = solve(parts.Z, parts.E)[1]
-    for name, column, rest in zip(parts.endogenous, parts.E.T, left.T, strict=True):
-        total = float(column @ column)
-        if 1 - float(rest @ rest) / total <= SAME_VARIABLE:
-            continue
-        alone = (parts.Z.T @ column) ** 2 / np.sum(parts.Z**2, axis=0) / total
-        raise refusal(
-            "instrument_is_treatment",
-            parts.instruments[int(alone.argmax())],
-            f"the instruments reproduce {name} (partial R² above {SAME_VARIABLE})",
-            "instruments that move the treatment without being it",
-            "an instrument that is the treatment under another name removes no bias: replace it",
-        )
+    shares = 1 - np.sum(left**2, axis=0) / np.sum(parts.E**2, axis=0)
+    whole = [n for n, s in zip(parts.endogenous, shares, strict=True) if s > SAME_VARIABLE]
+    return " and ".join(whole) or f"a combination of {' and '.join(parts.endogenous)}"
 
 
 def _check_rank(parts: Parts) -> None:

@@ -76,6 +76,7 @@ def bootstrap(
 
     The squared error, of the data and of each draw, is the largest of V₁ + V₂ - V₁₂, V₁ and V₂,
     each with its own G/(G - 1): the sum alone may be negative (MacKinnon, Nielsen and Webb 2024).
+    With few clusters in both dimensions it comes nearer to its level than t and may still miss it.
 
     Raises:
         InputProblem: as :func:`~pipeline.estimators.wild.bootstrap`.

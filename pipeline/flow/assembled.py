@@ -129,7 +129,9 @@ def _with_reaction(
     return replace(
         results,
         paths=average_paths(lead, groups, plan.path_days(study), study.level, study.seed),
-        averages=averages_of(lead, facts.headline, deals, study.level),
+        averages=averages_of(
+            lead, facts.headline, deals, study.level, log=study.event_time.returns == "log"
+        ),
         groups=groups_of(lead, facts.headline, groups, facts.groups),
         placebo=placebo,
         power=power_of(lead, facts.headline),

@@ -22,7 +22,7 @@ from pipeline.registry import (
     TESTS,
     entry,
 )
-from pipeline.significance.power import power_of
+from pipeline.significance.power import detectable_of, power_of
 from pipeline.significance.story import Story, story_of
 from pipeline.significance.windows import all_windows
 from pipeline.study.schema import Study
@@ -127,11 +127,12 @@ def deal(
     return story_of(name, lead, window, study.level), row, told
 
 
-def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, int]:
+def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, float, int]:
     """The chance of finding a mean of a given size with the study's deals, and their number.
 
     Returns:
-        ``effect, power, deals_needed`` (effect decimal), and the deals measured.
+        ``effect, power, deals_needed`` (effect decimal), the smallest mean found four times in five
+        (decimal), and the deals measured.
 
     Raises:
         InputProblem: as :func:`check` would, or ``outcome_and_returns`` for an outcome that the
@@ -148,4 +149,5 @@ def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, int]:
         )
     measured = measure_deals(study, Clock(progress))
     lead = measured.abnormal[study.expected_returns.headline]
-    return power_of(lead, study.event_time.headline_window), len(lead.deals)
+    window = study.event_time.headline_window
+    return power_of(lead, window), detectable_of(lead, window), len(lead.deals)

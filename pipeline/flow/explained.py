@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
+
 from pipeline.characteristics.design import Prepared, prepare, price_measures
 from pipeline.characteristics.outcomes import with_outcomes
 from pipeline.core.estimate import Column, Estimate, EstimationFailed, Withheld
@@ -20,6 +22,11 @@ from pipeline.returns.events import (
 )
 from pipeline.study import plan
 from pipeline.study.schema import Study
+
+UNSOLVABLE = (
+    "its equations have no single solution on these deals: variables that nearly repeat one "
+    "another, or too few deals for them, usually do this"
+)
 
 
 def prepared_of(study: Study, measured: Measured) -> Prepared | None:
@@ -42,12 +49,13 @@ def prepared_of(study: Study, measured: Measured) -> Prepared | None:
 
 
 def deals_with_outcomes(study: Study, measured: Measured) -> Any:
-    """The deals with a column for the CAR of each window, or with the outcome they came with."""
+    """The deals with the abnormal returns of each window, or with the outcome they came with."""
     if study.outcome is not None:
         return measured.deals
     time = study.event_time
     lead = measured.abnormal[study.expected_returns.headline]
-    return with_outcomes(measured.deals, lead, measured.windows, time.share_of_days)
+    log = time.returns == "log"
+    return with_outcomes(measured.deals, lead, measured.windows, time.share_of_days, log=log)
 
 
 def column_of(study: Study, key: str, prepared: Prepared) -> Column:
@@ -57,6 +65,8 @@ def column_of(study: Study, key: str, prepared: Prepared) -> Column:
         estimate: Estimate = entry(ESTIMATORS, key).load()(prepared.design, options)
     except EstimationFailed as failure:
         return Withheld(key, key.replace("_", " "), failure.reason)
+    except np.linalg.LinAlgError:
+        return Withheld(key, key.replace("_", " "), UNSOLVABLE)
     return with_checks(estimate)
 
 

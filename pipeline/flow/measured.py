@@ -24,6 +24,7 @@ from pipeline.registry import (
 )
 from pipeline.returns.benchmarks import benchmark_findings, benchmark_fits, dominated
 from pipeline.returns.confounding import without_news
+from pipeline.returns.day_zero import times_needed
 from pipeline.returns.events import EventOptions
 from pipeline.returns.few import few_events
 from pipeline.returns.measure import measure
@@ -126,6 +127,7 @@ def _sound(study: Study, placed: Placed, priced: Priced, options: EventOptions) 
             *lacking_prices(placed.stages[0], screens),
             *jumps_near_events(located, panels, options, screens),
             *benchmark_in_windows(located, panels, options.headline),
+            *times_needed(placed.first, options.headline, study.inputs.deals.name),
         ]
     )
     fits = benchmark_fits(panels, located)
@@ -143,7 +145,7 @@ def _measured(
 ) -> tuple[Any, dict[str, AbnormalReturns], tuple[StageLedger, StageLedger]]:
     """The deals that stay, their abnormal returns under each model, and the last two stages."""
     first, panels, screens = sound.deals, priced.measured_on, plan_prices.screen_limits(study)
-    masked = unused_sessions(first, placed, options, placed.news)
+    masked = unused_sessions(first, placed.located, options, placed.news, panels)
     abnormal = {
         key: measure(key, function, first, masked, panels, options.estimation, options.span)
         for key, function in sound.models.items()

@@ -107,9 +107,18 @@ def _on_lines(
     return replace(tables, candidates=candidates), on_lines(deals, choices), choices
 
 
-def unused_sessions(deals: Any, placed: Placed, options: EventOptions, news: NewsDays) -> Any:
-    """(N, E) estimation sessions of ``deals`` that are not used: other deals, other news."""
-    masked = masked_sessions(deals, placed.located, options.estimation, options.mask_sessions)
+def unused_sessions(
+    deals: Any,
+    located: Any,
+    options: EventOptions,
+    news: NewsDays,
+    panels: Mapping[str, PricePanel],
+) -> Any:
+    """(N, E) estimation sessions of ``deals`` that are not used: other deals, other news.
+
+    ``located`` are all deals of their companies, each on the sessions of its own exchange.
+    """
+    masked = masked_sessions(deals, located, options.estimation, options.mask_sessions, panels)
     if options.confounding == "dummy":
         masked |= news.mask(deals, options.estimation)
     return masked

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from typing import Any
 
+from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import PricePanel
 from pipeline.core.reading import Reading
 from pipeline.flow.placed import Placed, unused_sessions
@@ -37,15 +38,23 @@ def readings_of(
         options: as of the headline.
     """
     choices = (
-        ("day zero", OTHER_DATE[options.earliest], placed.by_other_date),
-        ("listing", SECOND, placed.on_second_lines),
+        ("day zero", OTHER_DATE[options.earliest], placed.by_other_date, placed.located),
+        ("listing", SECOND, placed.on_second_lines, _on_second_sessions(placed)),
     )
     found = []
-    for dimension, words, other in choices:
+    for dimension, words, other, located in choices:
         changed = _changed(deals, other, options)
         if changed is not None:
-            found.append(_reading(dimension, words, changed, deals, placed, panels, model, options))
+            moved = with_day_zero(deals, changed)
+            measured = _measured(moved, located, placed, panels, model, options)
+            found.append(Reading(dimension, words, len(changed), measured))
     return tuple(found)
+
+
+def _on_second_sessions(placed: Placed) -> Any:
+    """Every deal located, on the sessions of its company's second listing where it has one."""
+    second = placed.on_second_lines
+    return placed.located if second is None else with_day_zero(placed.located, second)
 
 
 def _changed(deals: Any, other: Any, options: EventOptions) -> Any:
@@ -57,22 +66,20 @@ def _changed(deals: Any, other: Any, options: EventOptions) -> Any:
     return kept if len(kept) else None
 
 
-def _reading(
-    dimension: str,
-    words: str,
-    changed: Any,
-    deals: Any,
+def _measured(
+    moved: Any,
+    located: Any,
     placed: Placed,
     panels: Mapping[str, PricePanel],
     model: tuple[str, Callable[..., Any]],
     options: EventOptions,
-) -> Reading:
-    moved = with_day_zero(deals, changed)
+) -> AbnormalReturns:
+    """The abnormal returns of ``moved``, apart from deals with too few returns to estimate on."""
     news = news_days(moved, panels, placed.tables.news)
-    masked = unused_sessions(moved, placed, options, news)
+    masked = unused_sessions(moved, located, options, news, panels)
     key, function = model
     abnormal = measure(key, function, moved, masked, panels, options.estimation, options.span)
     if options.confounding == "dummy":
         abnormal = without_news(abnormal, news.mask(moved, options.span))
     usable = abnormal.observations >= options.minimum_observations
-    return Reading(dimension, words, len(changed), abnormal.select(usable))
+    return abnormal.select(usable)

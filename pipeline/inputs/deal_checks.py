@@ -52,6 +52,7 @@ def deal_findings(deals: pd.DataFrame, source: Source) -> list[Finding]:
         *_order(deals, source),
         *_survivors(deals, source),
         *_companies(deals, source),
+        *_both_sides(deals, source),
         *_codes(deals, source),
         *_money(deals, source),
     ]
@@ -138,6 +139,33 @@ def _companies(deals: pd.DataFrame, source: Source) -> Iterator[Finding]:
                  "A code given to another company later needs a code of its own in deals and "
                  "prices; a company that changed its ISIN needs one of them."),
             )  # fmt: skip
+
+
+def _both_sides(deals: pd.DataFrame, source: Source) -> Iterator[Finding]:
+    """Two companies on each other's side of one deal, in a list that does not tell the sides.
+
+    A list with a column ``side`` comes here with the rows of one side.
+    """
+    if "side" in deals or "counterparty" not in deals:
+        return
+    own, other = _plain(deals["security"]), _plain(deals["counterparty"])
+    rows = pd.DataFrame(
+        {"own": own, "other": other, "day": deals["announced_date"], "at": range(len(deals))}
+    )
+    rows = rows[(own != "") & (other != "") & (own != other)]
+    met = rows.merge(rows, left_on=["own", "other"], right_on=["other", "own"])
+    near = (met["day_x"] - met["day_y"]).abs() <= pd.Timedelta(days=SAME_PAIR_DAYS)
+    found = deals.iloc[sorted(set(met.loc[near, "at_x"]))]
+    if len(found):
+        first = found.iloc[0]
+        yield finding(
+            "side_not_named", found, source, ("security", "counterparty"),
+            (f"{len(found)} rows of companies that are each other's counterparty within "
+             f"{SAME_PAIR_LIMIT}, such as {first['security']} and {first['counterparty']}",
+             "the one side of the deals that the study is about",
+             "Add a column side, such as acquirer and target, and set event_time.side to one of "
+             "its words. Two companies that each acquired from the other are acquirer twice."),
+        )  # fmt: skip
 
 
 def _plain(codes: pd.Series) -> pd.Series:

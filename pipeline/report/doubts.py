@@ -13,6 +13,7 @@ from pipeline.report.curve import curve_blocks
 from pipeline.report.document import (
     Block,
     Bullets,
+    Cell,
     Column,
     Interval,
     Paragraph,
@@ -53,10 +54,16 @@ def diagnostics_table(material: Material) -> Table:
     ranked = ranked.sort_values("rank", kind="stable")
     names = ("verdict", "subject", "check", "value", "threshold", "meaning", "source")
     rows = tuple(
-        tuple(any_cell(_worded(material, row[name])) for name in names)
+        tuple(_checked(material, row, name) for name in names)
         for _, row in ranked.iterrows()
     )
     return Table("diagnostics", prose("Diagnostics, the worst first"), columns, rows)
+
+
+def _checked(material: Material, row: pd.Series, name: str) -> Cell:
+    if name == "value" and str(row["check"]).endswith(", p"):
+        return p_value(float(row["value"]))
+    return any_cell(_worded(material, row[name]))
 
 
 def _worded(material: Material, value: object) -> object:

@@ -63,6 +63,7 @@ def _sentences(material: Material, moved: tuple[str, ...]) -> list[Piece | Piece
         found.append(outcome_sentence(material))
     else:
         found.append(reaction_sentence(material, with_reason="reason" not in moved))
+        found.append(time_sentence(material))
         found.append(agreement_sentence(material))
     found.append(feature_sentence(material, with_estimand="estimand" not in moved))
     for name, sentence in (("others", others_sentence), ("money", money_sentence)):
@@ -131,6 +132,14 @@ def reaction_sentence(material: Material, *, with_reason: bool = True) -> Pieces
         *_flat(*whom), mean, " bp (", *_interval(material, digits), *facts, ")",
         *_test_words(material, with_reason), ". ",
     )  # fmt: skip
+
+
+def time_sentence(material: Material) -> Pieces:
+    """How many deals have a date and no time, so that their day zero is in doubt."""
+    unknown = material.number("deals_of_unknown_time")
+    if not unknown.value:
+        return ()
+    return ("Time unknown: ", unknown, " deal. " if unknown.value == 1 else " deals. ")
 
 
 def reaction_digits(material: Material) -> int:

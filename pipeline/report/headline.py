@@ -19,6 +19,7 @@ from pipeline.core.results import Results
 
 MEAN_REACTION = "mean reaction"
 POWER = 0.8
+DATE_ONLY = "date only"
 COLUMNS = ("name", "value", "unit", "ci_low", "ci_high", "level", "shape")
 
 
@@ -111,8 +112,15 @@ def _counts(results: Results) -> Iterator[Line]:
     for action in (Action.FLAGGED, Action.CHANGED):
         deals = {entry.deal for entry in kept if entry.action is action}
         yield Line(f"deals_{action}", len(deals), "deals")
+    yield Line("deals_of_unknown_time", _unknown_times(results), "deals")
     yield Line("confidence_level", results.study.level, "fraction")
     yield Line("significance_level", significance(results), "fraction")
+
+
+def _unknown_times(results: Results) -> int:
+    """Deals kept of which the date is known and not the time, so day zero is in doubt."""
+    deals = results.deals
+    return int((deals["timing"] == DATE_ONLY).sum()) if "timing" in deals else 0
 
 
 def _reaction(results: Results) -> Iterator[Line]:

@@ -94,20 +94,23 @@ def _instrumented(
     words = (
         "smaller than least squares says" if _smaller(material) else "not what least squares says"
     )
-    found: list[Piece | Pieces] = []
-    if float(zero["value"]) > 0:
-        found += ["That there is an effect stands; it falls if ", _clause(material, zero), ". "]
-    else:
-        found.append("That there is an effect at all does not stand: the set of the lead column "
-                     "holds zero. ")  # fmt: skip
-    if float(other["value"]) > 0:
-        found += [f"That it is {words} stands; it falls if ", _clause(material, other), ". "]
-    else:
-        found.append(f"That it is {words} does not stand: the set holds that too. ")
+    found = _standing(material, "That there is an effect at all", zero,
+                      "the set of the lead column holds zero")  # fmt: skip
+    found += _standing(material, f"That it is {words}", other, "the set holds that too")
     found += _least_squares(material, rows, difference)
     carrier = str(zero["assumption"])
     found += ["The assumption that carries the finding: ", _decapitalised(carrier), "."]
     return found
+
+
+def _standing(
+    material: Material, statement: str, row: pd.Series[float], why_not: str
+) -> list[Piece | Pieces]:
+    """Whether a statement stands, and what it falls to."""
+    if float(row["value"]) == 0:
+        return [f"{statement} does not stand: {why_not}. "]
+    how = "stands" if str(row["verdict"]) == "holds" else "stands only just"
+    return [f"{statement} {how}; it falls if ", _clause(material, row), ". "]
 
 
 def _least_squares(
@@ -119,13 +122,13 @@ def _least_squares(
     row = next((r for (_, key), r in rows.items() if key == "confounder_interval"), None)
     if row is None or float(row["value"]) == 0:
         return ["The least-squares interval holds zero as it is. "] if row is not None else []
-    if float(difference["value"]) > 0:
+    if str(difference["verdict"]) == "holds":
         return [
             "Least squares itself does not survive: it differs from the instrumented effect "
             "beyond the error of both, and will unless ", _clause(material, difference), ". For "
             "its interval to hold zero it is enough that ", _clause(material, row), ". ",
         ]  # fmt: skip
-    return ["Least squares is not contradicted; its interval holds zero if ",
+    return ["The instruments hardly contradict least squares; its interval holds zero if ",
             _clause(material, row), ". "]  # fmt: skip
 
 

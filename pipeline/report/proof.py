@@ -67,7 +67,7 @@ def power_figure(material: Material) -> Figure | None:
         {
             "effect_bp": frame["effect"].astype(float) * BP,
             "power_percent": frame["power"].astype(float) * PERCENT,
-            "deals_needed": frame["deals_needed"].astype(int),
+            "deals_needed": frame["deals_needed"].astype(float),
         }
     )
     found = material.number("detectable_mean", scale=BP, digits=0)

@@ -27,7 +27,14 @@ from pipeline.report.numerals import (
     shown,
     unit_digits,
 )
-from pipeline.report.wording import df_words, distribution_words, level_words, per_unit
+from pipeline.report.wording import (
+    CRITICAL_SIZE,
+    df_words,
+    distribution_words,
+    level_words,
+    per_unit,
+    spoken,
+)
 
 
 def identification_section(material: Material) -> Section:
@@ -70,11 +77,15 @@ def column_tests_table(material: Material) -> Table:
     return Table("column_tests", prose("Tests of each column and its stages"), columns, rows)
 
 
+def _fact_words(key: str) -> str:
+    return spoken(key) if CRITICAL_SIZE.fullmatch(key) else key.replace("_", " ")
+
+
 def _test_row(material: Material, title: str, test: TestResult | NotApplicable) -> Row:
     if isinstance(test, NotApplicable):
         reason = Text(material.in_words(f"no answer: {test.reason}"))
         return (Text(title), Text(test.name), None, None, None, None, reason, None)
-    facts = "; ".join(f"{key.replace('_', ' ')}: {_fact(v)}" for key, v in test.facts.items())
+    facts = "; ".join(f"{_fact_words(key)}: {_fact(v)}" for key, v in test.facts.items())
     caution = ". ".join(part.rstrip(".") for part in (test.caution, facts) if part)
     return (
         Text(title), Text(test.name), Text(material.in_words(test.null)),

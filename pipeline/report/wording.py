@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterable
 from numbers import Real
 
@@ -14,9 +15,14 @@ from pipeline.report.document import Cell, Interval, Piece, Quote, Text, Verbati
 from pipeline.report.material import Material, capital
 from pipeline.report.numerals import PERCENT, in_unit, plain, show, true_minus
 
+CRITICAL_SIZE = re.compile(r"stock_yogo(_liml)?_size_(\d+)")
+
 
 def spoken(key: str) -> str:
     """A key as words: underscores as spaces, the first letter a capital."""
+    if size := CRITICAL_SIZE.fullmatch(key):
+        which = ", limited information" if size[1] else ""
+        return f"Stock–Yogo critical value{which}, {size[2]}% size"
     return capital(key.replace("_", " ").replace("r squared", "R²").strip())
 
 

@@ -8,8 +8,10 @@ from enum import StrEnum
 import numpy as np
 import pandas as pd
 
+from pipeline.core.findings import Finding, Severity
 from pipeline.core.ledger import Action, LedgerEntry
 from pipeline.core.prices import Booleans, Dates, Integers
+from pipeline.core.window import Window
 from pipeline.returns.sessions import Sessions
 
 
@@ -42,6 +44,7 @@ WORDS = {
 FIRST = "; the close of {day} at {close} is the first to hold it"
 EITHER = "; the close of {day} at {close} may hold it, or the close of the session after"
 BEYOND = "; the sessions known end before one that could react"
+SHOWN = 5
 MOVED = {Timing.CUT_OFF, Timing.AFTER_CLOSE, Timing.CLOSED_DAY, Timing.CLOSED_ONCE,
          Timing.DATE_ONLY_CLOSED}  # fmt: skip
 
@@ -66,7 +69,9 @@ class DayZero:
 
 
 def place(instants: Dates, dates: Dates, sessions: Sessions, cutoff_minutes: int = 0) -> DayZero:
-    """Place announcements on sessions (methods: the close of a session holds news before it).
+    """Place announcements on sessions: the close of a session holds the news before it.
+
+    Common practice, no source.
 
     Args:
         instants: (N,) ``datetime64[s]`` UTC; NaT where only a date is known.
@@ -183,3 +188,34 @@ def ledger_entry(deal: str, timing: Timing, day: np.datetime64) -> LedgerEntry |
     if timing is Timing.DATE_ONLY:
         return LedgerEntry(deal, "time_unknown", Action.FLAGGED, f"day zero {day}", "a time of day")
     return None
+
+
+def times_needed(deals: pd.DataFrame, headline: Window, file: str) -> list[Finding]:
+    """An error if deals with a date and no time meet a headline window that ends on day zero.
+
+    The session after may hold their whole reaction. A date without trading is no such case: the
+    session after it is day zero, and holds the news.
+
+    Args:
+        deals: deal_id, and timing as placed.
+        headline: the window declared before looking.
+        file: the name of the deal list.
+    """
+    unknown = deals.loc[deals["timing"] == Timing.DATE_ONLY, "deal_id"].astype(str).tolist()
+    if not unknown or not headline.start <= 0 == headline.end:
+        return []
+    more = f" and {len(unknown) - SHOWN} more" if len(unknown) > SHOWN else ""
+    return [
+        Finding(
+            "time_needed",
+            Severity.ERROR,
+            file,
+            got=f"{len(unknown)} deals with a date and no time ({', '.join(unknown[:SHOWN])}{more})"
+            f", and the headline window {headline.label}",
+            expected="the time of each announcement, or a headline window that holds the session "
+            "after day zero",
+            remedy=f"Set event_time.headline to [{headline.start}, 1], add the times, or leave "
+            "those deals out.",
+            column="announced_at",
+        )
+    ]

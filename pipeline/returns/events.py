@@ -154,17 +154,37 @@ def _drops(
 
 
 def masked_sessions(
-    kept: pd.DataFrame, located: pd.DataFrame, estimation: Window, around: int
+    kept: pd.DataFrame,
+    located: pd.DataFrame,
+    estimation: Window,
+    around: int,
+    panels: Mapping[str, PricePanel],
 ) -> Booleans:
-    """(N, E) estimation sessions within ``around`` sessions of another deal of the company."""
+    """(N, E) estimation sessions within ``around`` sessions of another deal of the company.
+
+    Args:
+        kept: security, exchange and position of N deals.
+        located: the same of all deals, and day_zero. A deal placed on another exchange counts at
+            the first session here on or after its day zero there.
+        estimation: the estimation window.
+        around: sessions either side.
+        panels: exchange -> prices.
+    """
     days = np.arange(estimation.start, estimation.end + 1)
     masked = np.zeros((len(kept), len(days)), dtype=np.bool_)
-    others = located.groupby("security")["position"].agg(list)
-    pairs = zip(kept["security"], kept["position"], strict=True)
-    for row, (security, position) in enumerate(pairs):
-        for other in others[security]:
-            if other != position:
-                masked[row] |= np.abs(position + days - other) <= around
+    names = ["exchange", "position", "day_zero"]
+    others = {
+        security: list(rows.itertuples(index=False, name=None))
+        for security, rows in located.groupby("security")[names]
+    }
+    places = zip(kept["security"], kept["exchange"], kept["position"], strict=True)
+    for row, (security, exchange, position) in enumerate(places):
+        for there, session, day in others[security]:
+            here = session
+            if there != exchange:
+                here = np.searchsorted(panels[exchange].sessions, np.datetime64(day, "D"))
+            if here != position:
+                masked[row] |= np.abs(position + days - here) <= around
     return masked
 
 

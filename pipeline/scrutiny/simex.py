@@ -13,9 +13,8 @@ from scipy import optimize
 from pipeline.core.estimate import EstimationFailed, t_reach
 from pipeline.core.prices import Floats
 from pipeline.estimators.algebra import solve
-from pipeline.estimators.covariance import cluster_sums
-from pipeline.estimators.errors import CLUSTER, factor
-from pipeline.scrutiny.ground import Ground
+from pipeline.estimators.errors import of_influence
+from pipeline.scrutiny.ground import Ground, row_sums
 from pipeline.scrutiny.mismeasured import error_variance
 
 CITATION = "Cook and Stefanski (1994); Stefanski and Cook (1995)"
@@ -93,12 +92,9 @@ def _refit(ground: Ground, column: int, noise: Floats) -> tuple[float, float]:
 
 
 def _variance(ground: Ground, influence: Floats) -> float:
-    rule, k = ground.sample.rule, ground.sample.X.shape[1] + ground.sample.counted
-    if rule.kind == CLUSTER and len(rule.clusters) == 1:
-        (codes,) = rule.clusters.values()
-        sums = cluster_sums(influence[:, None], codes)[:, 0]
-        return factor(rule, k) * float(sums @ sums)
-    return float(rule.n / (rule.n - k) * np.dot(influence, influence))
+    sample = ground.sample
+    k = sample.X.shape[1] + sample.counted
+    return float(of_influence(row_sums(sample.rule), influence[:, None], k).covariance[0, 0])
 
 
 def extrapolated(zeta: Floats, values: Floats, kind: str) -> float:

@@ -35,18 +35,22 @@ GROUP_COLUMNS = {
 TRIM = 0.1
 
 
-def averages(car: Floats, variance: Floats, value: Floats, level: float) -> pd.DataFrame:
+def averages(
+    car: Floats, variance: Floats, value: Floats, held: Floats, level: float
+) -> pd.DataFrame:
     """The mean reaction under other weights, which may differ in sign from the plain one.
 
     Weighted means sum(w CAR) / sum(w), errors sqrt(sum(w² (CAR - mean)²)) / sum(w) with the
     factor n / (n - 1) (White 1980): equal weights; the inverse of each CAR's forecast variance;
     market value (Moeller, Schlingemann and Stulz 2005, JF 60: averages in percent and in money
     can differ in sign). The median has the sign test's interval, the trimmed mean Tukey and
-    McLaughlin's (1963) error on the winsorised deals.
+    McLaughlin's (1963) error on the winsorised deals. The buy-and-hold mean is the plain one of
+    returns compounded over the window (Barber and Lyon 1997, JFE 43).
 
     Args:
         car: (n,) decimal; variance: (n,) forecast variances; value: (n,) market values, NaN where
             unknown.
+        held: (n,) buy-and-hold abnormal returns, decimal.
         level: of the intervals.
 
     Returns:
@@ -63,7 +67,11 @@ def averages(car: Floats, variance: Floats, value: Floats, level: float) -> pd.D
         ),
         _trimmed(car, level),
         _median(car, level),
-    ]
+        _weighted(
+            "buy and hold", held, np.ones(n), level,
+            "returns compounded over the window, not added up; every deal counts once",
+        ),
+    ]  # fmt: skip
     if known.sum() > 2:
         meaning = "money gained or lost over money invested"
         rows.append(_weighted("by market value", car[known], value[known], level, meaning))
@@ -124,17 +132,22 @@ def _median(car: Floats, level: float) -> dict[str, object]:
 
 
 def averages_of(
-    abnormal: AbnormalReturns, window: Window, deals: pd.DataFrame, level: float
+    abnormal: AbnormalReturns,
+    window: Window,
+    deals: pd.DataFrame,
+    level: float,
+    *,
+    log: bool = False,
 ) -> pd.DataFrame:
     """:func:`averages` of the deals that traded on every day of ``window``.
 
-    ``deals`` are the rows of ``abnormal`` in its order, with ``market_value``.
+    ``deals`` are the rows of ``abnormal`` in its order, with ``market_value``; ``log`` says whether
+    its returns are logarithmic.
     """
     whole = abnormal.complete(window)
     value = deals["market_value"].to_numpy(np.float64)
-    return averages(
-        abnormal.car(window)[whole], abnormal.car_variance(window)[whole], value[whole], level
-    )
+    car, variance = abnormal.car(window)[whole], abnormal.car_variance(window)[whole]
+    return averages(car, variance, value[whole], abnormal.bhar(window, log=log)[whole], level)
 
 
 def groups_of(
@@ -151,10 +164,12 @@ def groups_of(
 def group_tests(
     car: Floats, scar: Floats, treated: Floats, groups: tuple[str, str]
 ) -> pd.DataFrame:
-    """The second group of deals against the first, by three tests.
+    """The second group of deals against the first, by four tests.
 
-    Welch's t of the CARs (Welch 1947, Biometrika 34) and of the standardised CARs, and the
-    Mann-Whitney test (Mann and Whitney 1947). Deals of one date are taken as independent.
+    Welch's t of the CARs (Welch 1947, Biometrika 34) and of the standardised CARs, the
+    Mann-Whitney test (Mann and Whitney 1947), and the median test: how many of each group lie
+    above the common median, chi-squared with the correction for continuity (Mood 1950). Deals of
+    one date are taken as independent.
 
     Args:
         car, scar: (n,) of the deals, decimal and standardised.
@@ -188,4 +203,11 @@ def group_tests(
          "statistic": float(ranks.statistic), "df": np.nan, "p_value": float(ranks.pvalue),
          "source": "Mann and Whitney 1947"}
     )  # fmt: skip
+    if (car > np.median(car)).any():
+        above = stats.median_test(car[second], car[first])
+        rows.append(
+            {**shared, "test": "Median test", "difference": difference,
+             "statistic": float(above.statistic), "df": 1.0, "p_value": float(above.pvalue),
+             "source": "Mood 1950"}
+        )  # fmt: skip
     return typed_frame(rows, GROUP_COLUMNS)

@@ -41,7 +41,8 @@ def _dependence(sample: CarSample) -> tuple[Diagnostic, ...]:
             SUBJECT,
             "Mean correlation of abnormal returns",
             link.mean,
-            f"below {2 * link.noise:.4f}, twice what independent deals would show",
+            f"below {2 * link.noise:.4f}, twice what independent deals would show, or fewer than "
+            f"{100 * MANY:.0f}% of pairs overlapping",
             "warn" if link.mean > 2 * link.noise and link.overlapping >= MANY else "pass",
             "Matters only where windows overlap; the headline test allows for it.",
             "Kolari and Pynnönen 2010",

@@ -27,6 +27,7 @@ class Dependence:
         noise: what ``mean`` would scatter by if deals were independent.
         dates: distinct dates of day zero (or of the window's first day).
         largest: most deals on one such date.
+        weighted_noise: what ``weighted`` would scatter by if deals were independent, or NaN.
     """
 
     mean: float
@@ -36,6 +37,7 @@ class Dependence:
     noise: float
     dates: int
     largest: int
+    weighted_noise: float = np.nan
 
     def adjustment(self, n: int) -> float:
         """Kolari–Pynnönen's factor on a standardised t: sqrt((1 - r) / (1 + (n - 1) r)), r ≥ 0."""
@@ -89,6 +91,10 @@ class Links:
         """Correlations of pairs, by their places in ``rows``; NaN where they share too little."""
         return np.asarray(self.correlation[self.rows[first], self.rows[second]])
 
+    def dates_between(self, first: Integers, second: Integers) -> Floats:
+        """Common dates of pairs, by their places in ``rows``; zero where they share too few."""
+        return np.asarray(self.common[self.rows[first], self.rows[second]])
+
 
 @lru_cache(maxsize=8)
 def links(abnormal: AbnormalReturns) -> Links:
@@ -109,6 +115,10 @@ def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = 
     that the two deals have in common, and is zero for deals whose windows do not meet; a pair
     that shares too few dates counts with the mean of the others. ``known`` are the links of
     these N deals, if they were made before.
+
+    Correlations over T dates of independent deals scatter by 1 / sqrt(T) and are uncorrelated
+    between pairs, so a mean of them over N (N - 1) ordered pairs with weights w scatters by
+    sqrt(2 sum w² / T) / (N (N - 1)).
     """
     n = len(abnormal.deals)
     where = abnormal.columns(window)
@@ -129,6 +139,8 @@ def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = 
     alike = np.where(np.isfinite(alike), alike, mean)
     possible = n * (n - 1)
     length = float(dates) / pairs if pairs else np.nan
+    common = known.dates_between(first, second)
+    common = np.where(common > 0, common, length)
     return Dependence(
         mean=mean,
         weighted=2 * float((np.nan_to_num(alike) * share).sum()) / possible,
@@ -137,6 +149,7 @@ def dependence(abnormal: AbnormalReturns, window: Window, known: Links | None = 
         noise=float(np.sqrt(2 / (pairs * length))) if pairs else np.nan,
         dates=len(counts),
         largest=int(counts.max()),
+        weighted_noise=2 * float(np.sqrt((share**2 / common).sum())) / possible,
     )
 
 

@@ -54,6 +54,32 @@ def patell(sample: CarSample) -> Tested:
     )
 
 
+def dependence_adjusted_patell(sample: CarSample) -> Tested:
+    """Patell's Z over sqrt(1 + (n - 1) r), standard normal (Kolari and Pynnönen 2010, RFS 23).
+
+    ``r`` is the overlap-weighted mean correlation, floored at zero, so the test becomes Patell's
+    when no windows meet.
+    """
+    name = "Dependence-adjusted Patell Z"
+    plain = patell(sample)
+    if isinstance(plain, NotApplicable):
+        return NotApplicable(name, plain.reason)
+    if sample.n < 2:
+        return NotApplicable(name, FEW)
+    link = sample.dependence
+    return z_test(
+        name,
+        NULL,
+        plain.statistic * float(np.sqrt(link.effective_n(sample.n) / sample.n)),
+        caution="rejects too often when variance rises at the event",
+        citation="Kolari and Pynnönen 2010, weighted by window overlap",
+        facts={
+            "weighted_correlation": link.weighted,
+            "effective_n": link.effective_n(sample.n),
+        },
+    )
+
+
 def standardised_cross_sectional(sample: CarSample) -> Tested:
     """t = sqrt(n) mean(SCAR) / s(SCAR), t(n - 1) (Boehmer, Musumeci and Poulsen 1991, JFE 30)."""
     name = "Standardised cross-sectional t"

@@ -46,6 +46,10 @@ def detectable(
 def power_frame(std_dev: float, n: int, link: Dependence, size: float = 0.05) -> pd.DataFrame:
     """Power over effects, and the deals each effect needs for power of four fifths.
 
+    n deals whose correlation is r on average are worth n / (1 + (n - 1) r), never more than 1 / r.
+    So many are needed as are worth the N = ((z_(1-size/2) + z_.8) s / effect)² independent ones:
+    N (1 - r) / (1 - N r), or no number of them where N r ≥ 1.
+
     Args:
         std_dev: cross-sectional standard deviation of the CARs, decimal.
         n: deals of the sample.
@@ -53,20 +57,37 @@ def power_frame(std_dev: float, n: int, link: Dependence, size: float = 0.05) ->
         size: nominal level.
 
     Returns:
-        ``effect`` (decimal), ``power`` with the sample's deals, ``deals_needed`` for power 0.8 if
-        deals were independent.
+        ``effect`` (decimal), ``power`` with the sample's deals, ``deals_needed`` for power 0.8,
+        infinite where no number is enough.
     """
     effects = EFFECTS
     worth = link.effective_n(n)
     reach = -float(special.ndtri(size / 2)) + float(special.ndtri(POWER))
-    needed = np.ceil(np.nan_to_num((reach * std_dev / effects) ** 2))
+    independent = np.nan_to_num((reach * std_dev / effects) ** 2)
     return pd.DataFrame(
         {
             "effect": effects,
             "power": [z_test_power(float(e), std_dev, worth, size) for e in effects],
-            "deals_needed": needed.astype(np.int64),
+            "deals_needed": [_deals_worth(float(count), link) for count in independent],
         }
     )
+
+
+def _deals_worth(worth: float, link: Dependence) -> float:
+    """Fewest deals, as dependent as these, that are worth so many independent ones."""
+    r = max(link.weighted, 0.0)
+    if worth * r >= 1:
+        return np.inf
+    return float(np.ceil(worth * (1 - r) / (1 - worth * r)))
+
+
+def detectable_of(abnormal: AbnormalReturns, window: Window, size: float = 0.05) -> float:
+    """:func:`detectable` at power 0.8 of the deals that traded on every day; NaN below two."""
+    sample = car_sample(abnormal, window, 1.0)
+    if sample.n < 2:
+        return np.nan
+    spread = float(sample.car.std(ddof=1))
+    return detectable(spread, sample.n, sample.dependence, size, POWER)
 
 
 def power_of(abnormal: AbnormalReturns, window: Window, size: float = 0.05) -> pd.DataFrame:

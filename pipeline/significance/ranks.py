@@ -9,12 +9,13 @@ from scipy import stats
 
 from pipeline.core.estimate import NotApplicable, Tested, t_test, z_test
 from pipeline.core.prices import Booleans, Floats, Integers
-from pipeline.significance.sample import CarSample
+from pipeline.significance.sample import CarSample, Series
 
 NULL = "the mean cumulative abnormal return is zero"
 MEDIAN_NULL = "abnormal returns are as often above zero as before the announcement"
 NO_SERIES = "needs the daily series of the estimation windows"
 FEW = "needs at least two deals"
+ALIKE = "needs deals whose returns differ"
 # Few enough rows to stay in the processor's cache while they are sorted.
 ROWS = 256
 MISSING = np.finfo(np.float64).max
@@ -30,17 +31,48 @@ def rank(sample: CarSample) -> Tested:
     name = "Rank Z"
     if sample.series is None or sample.n < 2:
         return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
-    mean, weight = mean_rank(*sample.series.alike())
-    length = sample.series.event.shape[1]
-    spread = np.sqrt(np.nansum(weight * mean**2) / np.isfinite(mean).sum())
-    statistic = float(np.nansum(mean[-length:]) / (np.sqrt(length) * spread))
     return z_test(
         name,
         NULL,
-        statistic,
-        caution="loses power as the window grows",
+        _rank_z(*sample.series.alike()),
+        caution="rejects too often when variance rises at the event, 8% at a nominal 5% where it "
+        "doubles; loses power as the window grows",
         citation="Corrado 1989; Cowan 1992",
     )
+
+
+def rank_event_variance(sample: CarSample) -> Tested:
+    """The rank test of returns standardised for a change of variance at the event.
+
+    Corrado and Zivney 1992, JFQA 27: returns over their residual standard deviation, those of an
+    event day also over the deals' cross-sectional standard deviation that day; then as
+    :func:`rank`.
+    """
+    name = "Rank Z, event variance"
+    if sample.series is None or sample.n < 2:
+        return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
+    before, event = (part / sample.series.residual_sd[:, None] for part in sample.series.alike())
+    traded = np.isfinite(event).sum(axis=0)
+    if (traded < 2).any():
+        return NotApplicable(name, "needs two deals that traded on each day of the window")
+    spread = np.nanstd(event, axis=0, ddof=1)
+    if not (spread > 0).all():
+        return NotApplicable(name, ALIKE)
+    return z_test(
+        name,
+        NULL,
+        _rank_z(before, event / spread),
+        caution="loses power as the window grows",
+        citation="Corrado and Zivney 1992; Cowan 1992",
+    )
+
+
+def _rank_z(before: Floats, event: Floats) -> float:
+    """The window's summed mean rank over its time-series error, from (n, E) and (n, L) returns."""
+    mean, weight = mean_rank(before, event)
+    length = event.shape[1]
+    spread = np.sqrt(np.nansum(weight * mean**2) / np.isfinite(mean).sum())
+    return float(np.nansum(mean[-length:]) / (np.sqrt(length) * spread))
 
 
 def mean_rank(*parts: Floats) -> tuple[Floats, Floats]:
@@ -121,10 +153,8 @@ def generalised_rank(sample: CarSample) -> Tested:
     if sample.series is None or sample.n < 2:
         return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
     if not sample.scar.std(ddof=1) > 0:
-        return NotApplicable(name, "needs deals whose returns differ")
-    standardised = sample.series.alike()[0] / sample.series.residual_sd[:, None]
-    cumulated = (sample.scar / sample.scar.std(ddof=1))[:, None]
-    mean, weight = mean_rank(standardised, cumulated)
+        return NotApplicable(name, ALIKE)
+    mean, weight = mean_rank(*_cumulated(sample, sample.series))
     days = int(np.isfinite(mean).sum())
     spread = np.sqrt(np.nansum(weight * mean**2) / days)
     z = float(mean[-1] / spread)
@@ -139,6 +169,38 @@ def generalised_rank(sample: CarSample) -> Tested:
         caution="rejects too often when returns are skewed and the window has several days",
         citation="Kolari and Pynnönen 2011",
     )
+
+
+def generalised_rank_z(sample: CarSample) -> Tested:
+    """GRANK-Z: the generalised rank against its variance among independent deals.
+
+    Kolari and Pynnönen 2011, JEF 18. U_i0 is uniform on 1, ..., T over T + 1, less a half, so
+    Z = mean U_0 / sqrt(mean_i((T_i - 1) / (T_i + 1)) / (12 n)), standard normal; T_i - 1 returns
+    of deal i's estimation window.
+    """
+    name = "Generalised rank Z"
+    if sample.series is None or sample.n < 2:
+        return NotApplicable(name, NO_SERIES if sample.n > 1 else FEW)
+    if not sample.scar.std(ddof=1) > 0:
+        return NotApplicable(name, ALIKE)
+    before, cumulated = _cumulated(sample, sample.series)
+    mean, _ = mean_rank(before, cumulated)
+    days = np.isfinite(before).sum(axis=1) + 1
+    variance = float(((days - 1) / (days + 1)).mean()) / (12 * sample.n)
+    return z_test(
+        name,
+        NULL,
+        float(mean[-1] / np.sqrt(variance)),
+        caution="assumes independent deals; rejects too often when returns are skewed and the "
+        "window has several days",
+        citation="Kolari and Pynnönen 2011",
+    )
+
+
+def _cumulated(sample: CarSample, series: Series) -> tuple[Floats, Floats]:
+    """(n, E) standardised estimation returns and (n, 1) SCARs over their standard deviation."""
+    before = series.alike()[0] / series.residual_sd[:, None]
+    return before, (sample.scar / sample.scar.std(ddof=1))[:, None]
 
 
 def generalised_sign(sample: CarSample) -> Tested:

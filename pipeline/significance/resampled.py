@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 
 from pipeline.core.estimate import NotApplicable, Tested, TestResult
@@ -12,6 +14,9 @@ from pipeline.significance.sample import CarSample
 NULL = "the mean cumulative abnormal return is zero"
 DRAWS = 1999
 HANDFUL = 5
+FEWEST = 6
+# Returns drawn at a time, so that many deals do not fill the memory.
+CELLS = 1_000_000
 
 
 def skewness_adjusted(sample: CarSample) -> Tested:
@@ -21,42 +26,114 @@ def skewness_adjusted(sample: CarSample) -> Tested:
     distribution of the same statistic about the sample's own mean; p is twice the smaller tail.
     """
     name = "Skewness-adjusted t"
-    n = sample.n
-    if n < 20:
+    if sample.n < 20:
         return NotApplicable(name, "needs at least 20 deals, so that a quarter of them is a sample")
+    return _bootstrapped(
+        name, sample, johnson, sample.n // 4, "Johnson 1978; Lyon, Barber and Tsai 1999"
+    )
+
+
+def skewness_transformed(sample: CarSample) -> Tested:
+    """Hall's transformed t with bootstrapped critical values (Hall 1992, JRSS B 54).
+
+    S = mean / s, g the skewness: t = sqrt(n) (S + g S²/3 + g² S³/27 + g/(6n)), which rises with
+    the mean everywhere, as Johnson's does not. Draws of n deals; p is twice the smaller tail.
+    """
+    name = "Skewness-transformed t"
+    if sample.n < 20:
+        return NotApplicable(name, "needs at least 20 deals, so that their skewness is known")
+    return _bootstrapped(name, sample, hall, sample.n, "Hall 1992")
+
+
+def deal_bootstrap(sample: CarSample) -> Tested:
+    """Studentised bootstrap of independent deals (Efron and Tibshirani 1993, ch. 16.4).
+
+    t* = (mean* - mean) / (s* / sqrt(n)) of draws of n deals; p is the share of draws whose t* is
+    at least as large in size.
+    """
+    name = "Bootstrap t by deal"
+    if sample.n < FEWEST:
+        return NotApplicable(name, f"needs at least {FEWEST} deals")
+    return _bootstrapped(
+        name, sample, student, sample.n, "Efron and Tibshirani 1993", symmetric=True
+    )
+
+
+def _bootstrapped(
+    name: str,
+    sample: CarSample,
+    statistic: Callable[[Floats, float], Floats],
+    size: int,
+    citation: str,
+    symmetric: bool = False,
+) -> Tested:
+    """A statistic of the CARs about zero among those of draws of ``size`` about their mean."""
     if not sample.car.std(ddof=1) > 0:
         return NotApplicable(name, "needs deals whose returns differ")
     # Drawn from the deals in order of size, the mean above zero, so that neither the order of
     # the deals nor the sign of the question changes the draws.
     side = 1.0 if sample.car.mean() >= 0 else -1.0
     car = np.sort(side * sample.car)
-    statistic = float(_johnson(car[None, :], 0.0)[0])
-    stream = np.random.default_rng(sample.seed)
-    draws = car[stream.integers(0, n, (DRAWS, max(n // 4, 5)))]
-    usable = draws.std(axis=1, ddof=1) > 0
-    null = _johnson(draws[usable], float(car.mean()))
-    below = (1 + (null <= statistic).sum()) / (len(null) + 1)
-    above = (1 + (null >= statistic).sum()) / (len(null) + 1)
+    found = float(statistic(car[None, :], 0.0)[0])
+    null = _null(car, statistic, size, sample.seed)
+    if symmetric:
+        p = (1 + (np.abs(null) >= abs(found) - 1e-12).sum()) / (len(null) + 1)
+    else:
+        tail = min((null <= found).sum(), (null >= found).sum())
+        p = min(1.0, 2 * (1 + tail) / (len(null) + 1))
     return TestResult(
         name,
         NULL,
-        side * statistic,
+        side * found,
         "bootstrap",
-        float(min(1.0, 2 * min(below, above))),
+        float(p),
         caution="assumes that deals are independent of one another",
-        citation="Johnson 1978; Lyon, Barber and Tsai 1999",
+        citation=citation,
         facts={"draws": float(len(null))},
     )
 
 
-def _johnson(samples: Floats, centre: float) -> Floats:
-    """(B,) Johnson's statistic of (B, m) samples about ``centre``."""
+def _null(
+    car: Floats, statistic: Callable[[Floats, float], Floats], size: int, seed: int
+) -> Floats:
+    """The statistic about the mean of ``car``, in each of the draws whose returns differ."""
+    stream, centre = np.random.default_rng(seed), float(car.mean())
+    rows = max(1, CELLS // size)
+    parts = []
+    for at in range(0, DRAWS, rows):
+        draws = car[stream.integers(0, len(car), (min(rows, DRAWS - at), size))]
+        parts.append(statistic(draws[draws.std(axis=1, ddof=1) > 0], centre))
+    return np.concatenate(parts)
+
+
+def student(samples: Floats, centre: float) -> Floats:
+    """(B,) t of (B, m) samples about ``centre``."""
+    m = samples.shape[1]
+    return np.asarray(np.sqrt(m) * (samples.mean(axis=1) - centre) / samples.std(axis=1, ddof=1))
+
+
+def johnson(samples: Floats, centre: float) -> Floats:
+    """(B,) Johnson's (1978) statistic of (B, m) samples about ``centre``."""
+    m = samples.shape[1]
+    ratio, skew = _moments(samples, centre)
+    return np.asarray(np.sqrt(m) * (ratio + skew * ratio**2 / 3 + skew / (6 * m)))
+
+
+def hall(samples: Floats, centre: float) -> Floats:
+    """(B,) Hall's (1992) statistic of (B, m) samples about ``centre``."""
+    m = samples.shape[1]
+    ratio, skew = _moments(samples, centre)
+    return np.asarray(johnson(samples, centre) + np.sqrt(m) * skew**2 * ratio**3 / 27)
+
+
+def _moments(samples: Floats, centre: float) -> tuple[Floats, Floats]:
+    """(B,) mean less ``centre`` over the standard deviation, and (B,) skewness."""
     m = samples.shape[1]
     mean = samples.mean(axis=1)
     spread = samples.std(axis=1, ddof=1)
-    skew = ((samples - mean[:, None]) ** 3).sum(axis=1) / (m * spread**3)
-    ratio = (mean - centre) / spread
-    return np.asarray(np.sqrt(m) * (ratio + skew * ratio**2 / 3 + skew / (6 * m)))
+    apart = samples - mean[:, None]
+    skew = (apart * apart * apart).sum(axis=1) / (m * spread**3)
+    return (mean - centre) / spread, skew
 
 
 def date_bootstrap(sample: CarSample) -> Tested:

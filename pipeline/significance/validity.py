@@ -16,9 +16,13 @@ SIZE = 0.01
 
 
 def independent(sample: CarSample) -> str:
-    """Why deals are not independent here, or ''."""
+    """Why deals are not independent here, or ''.
+
+    What counts is the correlation of deals whose windows meet: it must stand clear of its noise,
+    and be worth many deals. Deals that never meet may be alike or opposed without harm.
+    """
     link = sample.dependence
-    if sample.n < 2 or not link.mean > 2 * link.noise:
+    if sample.n < 2 or not link.weighted > 2 * link.weighted_noise:
         return ""
     worth = link.effective_n(sample.n)
     if sample.n / worth < DESIGN_EFFECT:

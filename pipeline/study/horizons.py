@@ -6,7 +6,7 @@ from typing import Annotated, Literal
 
 from pydantic import Field, model_validator
 
-from pipeline.study.part import Part, Span
+from pipeline.study.part import ORDERED, Part, Span, misfit
 
 Weighting = Literal["equal", "value"]
 
@@ -56,7 +56,7 @@ class MatchedControl(Part):
     def _fit_together(self) -> MatchedControl:
         for start, end in self.windows:
             if end < start:
-                raise ValueError(f"a last session after the first: [{start}, {end}]")
+                raise misfit(f"[{start}, {end}] in 'windows'", ORDERED)
         if self.windows and not self.nearest:
             raise ValueError("nearest: at least one column that says who is most alike")
         return self

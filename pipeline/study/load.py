@@ -155,7 +155,7 @@ def _finding(error: Any, file: str) -> Finding:
             "bad_value",
             Severity.ERROR,
             file,
-            got="values that do not fit together",
+            got=error.get("ctx", {}).get("got", "values that do not fit together"),
             expected=message,
             remedy="Correct one of them; configs/every_key.toml says what each may be.",
             column=key,

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import Annotated
 
 from pydantic import AfterValidator, BaseModel, ConfigDict, Field
+from pydantic_core import PydanticCustomError
 
 from pipeline.registry import (
     ESTIMATORS,
@@ -16,12 +17,18 @@ from pipeline.registry import (
 )
 
 BY_RULE = "by_rule"
+ORDERED = "a window whose last session is its first or comes after it"
 
 
 class Part(BaseModel):
     """A table of the study file: strict, frozen, no unknown key."""
 
     model_config = ConfigDict(extra="forbid", frozen=True, strict=True, populate_by_name=True)
+
+
+def misfit(got: str, expected: str) -> PydanticCustomError:
+    """What a validator of several keys raises, to say which of their values it refuses."""
+    return PydanticCustomError("misfit", "{expected}", {"got": got, "expected": expected})
 
 
 def known(table: str, *also: str) -> AfterValidator:

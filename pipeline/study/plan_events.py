@@ -22,7 +22,7 @@ REPEATED = {
     "merge": "deals whose headline windows meet become one event at day zero of the first, with "
     "the values summed and the features of the largest",
     "keep_all": "deals whose headline windows meet are all kept, those of one session apart, and "
-    "errors are clustered by company",
+    "errors are clustered by company in the regression",
 }
 
 

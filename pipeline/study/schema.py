@@ -18,7 +18,18 @@ from pipeline.study.deal_list import DealList
 from pipeline.study.doubts import Scrutiny
 from pipeline.study.horizons import CalendarTime, MatchedControl
 from pipeline.study.outcome import Outcome
-from pipeline.study.part import BY_RULE, Format, LeadingTest, Measure, Model, Part, Span, Test
+from pipeline.study.part import (
+    BY_RULE,
+    ORDERED,
+    Format,
+    LeadingTest,
+    Measure,
+    Model,
+    Part,
+    Span,
+    Test,
+    misfit,
+)
 from pipeline.study.prices import Currency, Screens, Series
 from pipeline.study.questions import Fit, Instruments, Regression, Selection
 from pipeline.study.timing import EventTime
@@ -137,7 +148,8 @@ class Tests(Part):
         "test for up to five deals, else the dependence-adjusted one.",
     )
     use: list[Test] = Field(
-        default_factory=lambda: list(keys(TESTS)), description="Tests shown, in this order."
+        default_factory=lambda: [entry.key for entry in TABLE[TESTS] if entry.default],
+        description="Tests shown, in this order.",
     )
 
 
@@ -197,7 +209,7 @@ class Characteristic(Part):
         if (self.window is not None) and self.price is None:
             raise ValueError("window belongs to a price measure")
         if self.window is not None and self.window[1] < self.window[0]:
-            raise ValueError(f"window {self.window} ends before it starts")
+            raise misfit(f"{self.window} in 'window'", ORDERED)
         if self.lag and self.column is None:
             raise ValueError("lag needs a column of the candidates")
         return self

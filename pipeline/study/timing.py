@@ -7,7 +7,7 @@ from typing import Literal
 from pydantic import Field, model_validator
 
 from pipeline.core.window import Window
-from pipeline.study.part import Part, Span
+from pipeline.study.part import ORDERED, Part, Span, misfit
 from pipeline.study.prices import Delisting, Kind, Missing
 
 Confounding = Literal["flag", "exclude", "dummy"]
@@ -51,7 +51,7 @@ class EventTime(Part):
     repeats: Repeats = Field(
         "keep_first",
         description="Deals of one company whose headline windows meet: the first alone, one event "
-        "made of them, or all, with errors clustered by company.",
+        "made of them, or all, with errors clustered by company in the regression.",
     )
     side: str = Field("", description="The side of the deals meant, for a list with a column side.")
     second_lines: bool = Field(
@@ -77,11 +77,10 @@ class EventTime(Part):
 
     @model_validator(mode="after")
     def _ordered(self) -> EventTime:
-        for start, end in (self.estimation, self.headline, *self.windows):
+        named = [("estimation", self.estimation), ("headline", self.headline)]
+        for name, (start, end) in (*named, *(("windows", pair) for pair in self.windows)):
             if end < start:
-                raise ValueError(
-                    f"a last session after the first: [{start}, {end}] ends before it starts"
-                )
+                raise misfit(f"[{start}, {end}] in '{name}'", ORDERED)
         return self
 
     @property

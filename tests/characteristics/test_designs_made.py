@@ -269,6 +269,12 @@ def test_outcomes_beside_the_deals() -> None:
     assert np.flatnonzero(found["car_0_4"].isna()).tolist() == [4]
     np.testing.assert_allclose(found["car_m1_1_std_dev"] ** 2, abnormal.car_variance(windows[0]))
     np.testing.assert_array_equal(found["estimation_returns"], abnormal.observations)
+    np.testing.assert_allclose(found["scar_m1_1"], abnormal.standardised(windows[0]))
+    np.testing.assert_allclose(found["bhar_m1_1"], abnormal.bhar(windows[0]))
+    for name in ("scar_m5_5", "bhar_m5_5"):
+        assert found[name].isna().tolist() == found["car_m5_5"].isna().tolist()
+    logs = with_outcomes(listed, abnormal, windows, 0.9, log=True)
+    np.testing.assert_allclose(logs["bhar_m1_1"], abnormal.bhar(windows[0], log=True))
 
 
 def test_groups_in_words() -> None:

@@ -130,6 +130,17 @@ def test_buy_and_hold_by_products(gappy: AbnormalReturns) -> None:
         np.testing.assert_allclose(gappy.bhar(window)[row], by_hand, rtol=1e-10)
 
 
+def test_buy_and_hold_is_the_same_from_logarithmic_returns(gappy: AbnormalReturns) -> None:
+    """A portfolio's value does not depend on how its daily moves are written down."""
+    realised, expected = np.log1p(gappy.returns + gappy.expected), np.log1p(gappy.expected)
+    logs = replace(gappy, returns=realised - expected, expected=expected)
+    for window in (Window(0, 0), Window(-1, 1), Window(-10, 10)):
+        np.testing.assert_allclose(
+            logs.bhar(window, log=True), gappy.bhar(window), rtol=1e-10, atol=1e-15
+        )
+    assert np.abs(logs.bhar(Window(-10, 10)) - gappy.bhar(Window(-10, 10))).max() > 1e-4
+
+
 def test_degrees_of_freedom_count_the_mean_parameters(
     market_model: AbnormalReturns, factor_model: AbnormalReturns
 ) -> None:

@@ -14,6 +14,7 @@ from pipeline.core.estimate import EstimationFailed
 from pipeline.core.findings import InputProblem
 from pipeline.estimators.balance import effective_size, standardised_differences
 from pipeline.estimators.bounds import bounds_of, imbens_manski, lee_bounds, trimmed_mean
+from pipeline.estimators.checks import with_checks
 from pipeline.estimators.doubly_robust import (
     doubly_robust,
     doubly_robust_treated,
@@ -60,12 +61,12 @@ def test_refusals(fit, design: Design) -> None:  # type: ignore[no-untyped-def]
     assert caught.value.findings[0].rule == "treatment_not_binary"
 
 
-@pytest.mark.parametrize("fit", [weighting, weighting_treated])
+@pytest.mark.parametrize("fit", [*EVERY, partially_linear])
 def test_separated_treatment_is_refused_by_name(fit, design: Design) -> None:  # type: ignore[no-untyped-def]
     X = design.X.copy()
     X[:, 3] = X[:, 1] * 2 + np.random.default_rng(1).random(design.n)
     with pytest.raises(InputProblem) as caught:
-        fit(replace(design, X=X), LINES)
+        fit(replace(design, X=X), FitOptions())
     assert (caught.value.findings[0].rule, caught.value.findings[0].column) == (
         "separation",
         "run_up",
@@ -73,8 +74,10 @@ def test_separated_treatment_is_refused_by_name(fit, design: Design) -> None:  #
 
 
 def test_entropy_balancing_without_a_counterpart(design: Design) -> None:
+    """One treated deal lies among the others, the mean of the treated beyond all of them."""
     X = design.X.copy()
     X[:, 3] += 100 * X[:, 1]
+    X[np.flatnonzero(X[:, 1])[0], 3] = X[X[:, 1] == 0, 3].mean()
     with pytest.raises(InputProblem) as caught:
         entropy_balancing(replace(design, X=X), FitOptions())
     finding = caught.value.findings[0]
@@ -284,3 +287,40 @@ def test_bounds_need_the_treatment_of_every_candidate() -> None:
     with pytest.raises(InputProblem) as caught:
         lee_bounds(deals(), FitOptions())
     assert caught.value.findings[0].rule == "treatment_not_known"
+
+
+def test_two_controls_that_separate_together_are_refused(design: Design) -> None:
+    """Neither does alone, so that a look at single variables would pass it."""
+    X = design.X.copy()
+    X[:, 3] = 2 * X[:, 1] - X[:, 2]
+    X[:, 3] += np.random.default_rng(1).random(design.n)
+    for fit in (matching, doubly_robust):
+        with pytest.raises(InputProblem) as caught:
+            fit(replace(design, X=X), FitOptions())
+        (finding,) = caught.value.findings
+        assert finding.rule == "separation"
+        assert "run_up" in finding.column
+        assert "relative_size" in finding.column
+
+
+@pytest.mark.parametrize("fit", [matching, doubly_robust])
+def test_deals_that_have_hardly_a_counterpart_fail_a_check(fit, design: Design) -> None:  # type: ignore[no-untyped-def]
+    """All but three of either arm are told apart by one control; as it is, nothing fails."""
+    X = design.X.copy()
+    X[:, 3] += 8 * X[:, 1]
+    for arm, there in ((0.0, 8.0), (1.0, 0.0)):
+        X[np.flatnonzero(X[:, 1] == arm)[:3], 3] = there
+    thin = with_checks(fit(replace(design, X=X), FitOptions()))
+    failed = [check.check for check in thin.checks if check.verdict == "fail"]
+    assert any("run_up" in name for name in failed)
+    assert not any(c.verdict == "fail" for c in with_checks(fit(design, FitOptions())).checks)
+
+
+def test_share_of_extreme_probabilities_fails_above_a_fifth(design: Design) -> None:
+    column = doubly_robust(design, FitOptions())
+    for fact in ("propensity_extreme", "clipped"):
+        verdicts = [
+            {c.check: c.verdict for c in with_checks(replace(column, fit={fact: share})).checks}
+            for share in (0.05, 0.06, 0.21)
+        ]
+        assert [next(iter(found.values())) for found in verdicts] == ["pass", "warn", "fail"]

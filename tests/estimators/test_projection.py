@@ -7,8 +7,9 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
-from pipeline.core.design import FitOptions
+from pipeline.core.design import Design, FitOptions
 from pipeline.core.estimate import ConfidenceSet, Shape
+from pipeline.core.findings import InputProblem
 from pipeline.estimators import anderson_rubin as ar
 from pipeline.estimators.clustered_forms import inverted_forms
 from pipeline.estimators.instruments import two_stage_least_squares
@@ -90,3 +91,31 @@ def test_the_shadow_is_wider_than_the_usual_interval_and_holds_the_estimate() ->
     usual = column.sets["wald"]
     assert column.interval.covers(column.term("paid_in_shares")["coefficient"])
     assert column.interval.high - column.interval.low > usual.high - usual.low
+
+
+def test_an_instrument_that_combines_two_chosen_variables_is_refused() -> None:
+    """Neither variable is reproduced alone."""
+    design = two_chosen()
+    mixed = design.X[:, 1] + design.X[:, 2]
+    Z = np.column_stack([design.Z[:, :2], mixed])
+    with pytest.raises(InputProblem) as caught:
+        two_stage_least_squares(
+            replace(design, Z=Z, instruments=("first", "second", "mix")), FitOptions()
+        )
+    (finding,) = caught.value.findings
+    assert (finding.rule, finding.column) == ("instrument_is_treatment", "mix")
+    assert "a combination of paid_in_shares and relative_size" in finding.got
+
+
+def test_rows_must_suffice_for_the_errors_of_every_equation() -> None:
+    """Two chosen variables: three residuals a deal, so three deals beyond the coefficients."""
+    design = two_chosen(n=420)
+    bare = replace(design, effects={}, clusters={})
+
+    def first(n: int) -> Design:
+        return replace(bare, y=bare.y[:n], X=bare.X[:n], Z=bare.Z[:n], rows=bare.rows[:n])
+
+    with pytest.raises(InputProblem) as caught:
+        two_stage_least_squares(first(9), FitOptions())
+    assert caught.value.findings[0].rule == "few_rows"
+    assert two_stage_least_squares(first(10), FitOptions()).n == 10

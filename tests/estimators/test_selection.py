@@ -13,6 +13,7 @@ from pipeline.core.estimate import EstimationFailed, TestResult
 from pipeline.core.findings import InputProblem
 from pipeline.estimators import probit, selection
 from pipeline.estimators.selection import heckman_two_step
+from pipeline.estimators.selection_rows import checked_selection
 from tests.estimators.designs import deals, without
 
 
@@ -189,3 +190,24 @@ def test_correlation_outside_its_range_is_said() -> None:
 def test_exact_outcome_is_withheld(design: Design) -> None:
     with pytest.raises(EstimationFailed, match="exactly"):
         heckman_two_step(replace(design, y=design.X @ np.arange(1.0, 6.0)), FitOptions())
+
+
+def test_exclusion_in_the_outcome_under_another_name_is_refused(design: Design) -> None:
+    """Once as it stands, once as a combination of a regressor and the constant."""
+    s = candidates(design)
+    for column in (design.X[:, 2], 3.0 - 2.0 * design.X[:, 2]):
+        W = s.W.copy()
+        W[s.selected, 3] = column[s.outcome_row[s.selected]]
+        with pytest.raises(InputProblem) as caught:
+            heckman_two_step(replace(design, selection=replace(s, W=W)), FitOptions())
+        (finding,) = caught.value.findings
+        assert (finding.rule, finding.column) == ("excluded_is_control", "divisions_for_sale")
+        assert "relative_size" in finding.got
+
+
+def test_exclusion_that_no_deal_differs_in_is_no_control(design: Design) -> None:
+    s = candidates(design)
+    W = s.W.copy()
+    W[s.selected, 3] = 1.0
+    W[~s.selected, 3] = np.random.default_rng(2).integers(0, 3, size=int((~s.selected).sum()))
+    assert checked_selection(replace(design, selection=replace(s, W=W))) is not None

@@ -137,6 +137,10 @@ FINDINGS: dict[str, Case] = {
         columns(side=["acquirer", "target", "acquirer"]),
         NONE, "side_not_named", ERROR, "", "side", "'acquirer', 'target'",
     ),
+    "both sides and no column of sides": (
+        columns(counterparty=["b ", "A", ""]),
+        NONE, "side_not_named", ERROR, "2, 3", "security, counterparty", "such as A and b",
+    ),
     "a side the list does not have": (
         columns(side=["acquirer", "target", "acquirer"]),
         DealRules(side="seller"), "side_not_named", ERROR, "", "side", "'acquirer', 'target'",
@@ -314,3 +318,21 @@ def test_check_digits_are_those_of_an_independent_library(kind: str) -> None:
     assert not any(CHECKS[kind](code) for code in CODES["invalid"][kind])
     assert not CHECKS[kind](CODES["valid"][kind][0][:-1])
     assert not CHECKS[kind]("")
+
+
+@pytest.mark.parametrize(
+    "cells",
+    [
+        {"counterparty": ["B", "A", ""], "side": ["acquirer", "acquirer", "acquirer"]},
+        {
+            "counterparty": ["B", "A", ""],
+            "announced_at": ["2020-03-01", "2021-03-02", "2021-06-01"],
+        },
+        {"counterparty": ["B", "C", "B"]},
+    ],
+    ids=["sides told", "more than a year apart", "one side of each pair"],
+)
+def test_companies_that_may_meet_twice(cells: dict[str, list[str]], tmp_path: Path) -> None:
+    rules = DealRules(side="acquirer") if "side" in cells else NONE
+    kept = read(tmp_path, columns(**cells), rules)
+    assert len(kept.deals) == 3

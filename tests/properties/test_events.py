@@ -269,6 +269,8 @@ def test_repeated_deals_add_up_and_never_meet(deals: list[tuple[int, int]]) -> N
             "deal_id": [f"D{at:02d}" for at in range(len(deals))],
             "security": [f"S{code}" for code, _ in deals],
             "position": [position for _, position in deals],
+            "exchange": "XLON",
+            "day_zero": pd.Timestamp("2020-01-01"),
         }
     )
     kept, ledger = settle_repeats(located, HEADLINE)
@@ -280,7 +282,7 @@ def test_repeated_deals_add_up_and_never_meet(deals: list[tuple[int, int]]) -> N
         assert (np.diff(np.sort(own["position"])) >= len(HEADLINE)).all()
     again, _ = settle_repeats(located.sample(frac=1, random_state=1), HEADLINE)
     assert sorted(again["deal_id"]) == sorted(kept["deal_id"])
-    masked = masked_sessions(kept, located, ESTIMATION, 5)
+    masked = masked_sessions(kept, located, ESTIMATION, 5, {})
     assert masked.shape == (len(kept), len(ESTIMATION))
     first = located.groupby("security")["position"].transform("min") == located["position"]
     assert not masked[kept["deal_id"].isin(located.loc[first, "deal_id"]).to_numpy()].any()

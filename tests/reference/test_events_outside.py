@@ -6,6 +6,7 @@ The numbers and their sources are in ``events.json``; prices come from packages 
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -21,9 +22,11 @@ from pipeline.core.window import Window
 from pipeline.registry import EXPECTED_RETURNS, TESTS, entry
 from pipeline.returns.measure import measure
 from pipeline.significance.power import z_test_power
+from pipeline.significance.ranks import signed_rank
 from pipeline.significance.sample import car_sample
 from tests.benchmarks.event_tests_size import KEYS, REAL, drawn, drawn_rates
 from tests.returns.panels import fitted, panel_of_closes, panel_of_returns, weekdays
+from tests.significance.samples import sample_of
 
 CASES: dict[str, Any] = json.loads(Path(__file__).with_name("events.json").read_text())["cases"]
 THIRTEEN = CASES["thirteen_events"]["expected"]
@@ -130,11 +133,18 @@ def test_thirteen_events_windows(
         "sd_simple": np.sqrt(lead.residual_variance * len(window)),
         "BHAR": lead.bhar(window),
         "BHAR_mkt": adjusted.bhar(window),
+        "BHAR_mkt, log": in_logs(adjusted).bhar(window, log=True),
         "CAR_mktadj": adjusted.car(window),
         "CAR_meanadj": thirteen["constant_mean"].car(window),
     }
     for name, values in found.items():
-        close_to({"value": case[name], "abs_tol": 1e-10}, values[row])
+        close_to({"value": case[name.removesuffix(", log")], "abs_tol": 1e-10}, values[row])
+
+
+def in_logs(found: AbnormalReturns) -> AbnormalReturns:
+    """The same moves of shares and market, written as logarithmic returns."""
+    realised, expected = np.log1p(found.returns + found.expected), np.log1p(found.expected)
+    return replace(found, returns=realised - expected, expected=expected)
 
 
 def test_thirteen_events_tests(thirteen: dict[str, AbnormalReturns]) -> None:
@@ -267,6 +277,55 @@ def test_power_of_the_z_test(name: str) -> None:
 def test_power_to_two_decimals(effect: float, std_dev: float, n: int, printed: float) -> None:
     """MacKinlay 1997, JEL 35, table 2; values from memory (events.json)."""
     assert round(z_test_power(effect, std_dev, n), 2) == printed
+
+
+def signed_rank_cases() -> dict[str, np.ndarray]:
+    """Few and many returns, with and without ties and zeros; rounded to a percent they tie."""
+    stream = np.random.default_rng(12)
+    few, many = stream.normal(0.01, 0.03, 14), stream.normal(0.004, 0.03, 70)
+    return {
+        "few": few,
+        "few, zeros": np.append(few, np.zeros(4)),
+        "few, ties": np.round(few, 2),
+        "25": many[:25],
+        "26": many[:26],
+        "many": many,
+        "many, ties and zeros": np.append(np.round(many, 2), np.zeros(9)),
+    }
+
+
+@pytest.mark.parametrize("name", signed_rank_cases())
+def test_signed_rank_is_scipys(name: str) -> None:
+    """scipy.stats.wilcoxon without zeros (Wilcoxon's own way) and without continuity correction:
+    exact up to 25 returns that do not tie, else normal with the variance corrected for ties."""
+    car = signed_rank_cases()[name]
+    found = result(signed_rank(sample_of(car, np.full(len(car), 0.02))))
+    plain = {"zero_method": "wilcox", "correction": False, "method": "asymptotic"}
+    normal = stats.wilcoxon(car, **plain)
+    above = stats.wilcoxon(car, alternative="greater", **plain)
+    assert found.statistic == pytest.approx(above.zstatistic, rel=1e-12)
+    used = car[car != 0]
+    if len(used) > 25 or "ties" in name:
+        assert found.distribution == "normal"
+        assert found.p_value == pytest.approx(normal.pvalue, rel=1e-9)
+        return
+    exact = stats.wilcoxon(used, method="exact")
+    assert found.distribution == "exact"
+    assert found.p_value == pytest.approx(exact.pvalue, rel=1e-12)
+
+
+def test_exact_signed_rank_by_all_signs() -> None:
+    """Every one of the 2^10 ways to sign ten ranks, equally likely (Wilcoxon 1945)."""
+    car = np.array([0.031, -0.004, 0.012, 0.027, -0.019, 0.044, 0.008, 0.036, 0.0, -0.002, 0.015])
+    used = car[car != 0]
+    ranks = stats.rankdata(np.abs(used))
+    signs = (np.arange(2**10)[:, None] >> np.arange(10)) & 1
+    sums = signs @ ranks
+    own = ranks[used > 0].sum()
+    p = min(1.0, 2 * min((sums >= own).mean(), (sums <= own).mean()))
+    found = result(signed_rank(sample_of(car, np.full(len(car), 0.02))))
+    assert found.facts["positive_rank_sum"] == own
+    assert found.p_value == pytest.approx(p, rel=1e-12)
 
 
 FIFTY = [key for key in REAL if key.endswith("N50")]

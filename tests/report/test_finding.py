@@ -69,6 +69,15 @@ def test_a_short_finding_holds_reason_and_estimand() -> None:
     assert "is associated with" in text
 
 
+@pytest.mark.parametrize(("dated", "words"), [(1, "1 deal."), (3, "3 deals."), (0, "")])
+def test_unknown_times_are_said(dated: int, words: str) -> None:
+    run = full_run()
+    timing = ["date only"] * dated + ["during the session"] * (len(run.deals) - dated)
+    text = finding_text(with_frames(replace(run, deals=run.deals.assign(timing=timing))))
+    assert (f"Time unknown: {words}" in text) == bool(dated)
+    assert ("Time unknown" in text) == bool(dated)
+
+
 def test_columns_that_differ_in_sign_are_said_first() -> None:
     run = with_columns(calm(), estimate("First", -0.01), estimate("Second", 0.02))
     assert finding_text(run).startswith("The columns differ in sign.")

@@ -177,18 +177,30 @@ def test_a_chain_of_deals_is_measured_from_the_last_one_kept(
 def test_sessions_around_another_deal_are_masked(panel: PricePanel, calendar: Sessions) -> None:
     table = deals(calendar, ("D1", "A", 200), ("D2", "A", 260), ("D3", "B", 250))
     located, _ = found(table, panel, calendar)
-    masked = masked_sessions(located, located, OPTIONS.estimation, 5)
+    masked = masked_sessions(located, located, OPTIONS.estimation, 5, {"XLON": panel})
     sessions = np.arange(-120, -20)
     # D1 lies 60 sessions before D2: sessions -65 to -55 of D2. D2 lies after D1's window.
     np.testing.assert_array_equal(masked[1], (sessions >= -65) & (sessions <= -55))
     assert not masked[[0, 2]].any()
 
 
+def test_a_deal_on_another_exchange_is_masked_by_its_date(
+    panel: PricePanel, calendar: Sessions
+) -> None:
+    """Its place among the sessions there says nothing of the sessions here."""
+    located, _ = found(deals(calendar, ("D1", "A", 200), ("D2", "A", 260)), panel, calendar)
+    own = masked_sessions(located, located, OPTIONS.estimation, 5, {"XLON": panel})
+    elsewhere = located.assign(exchange="XNYS", position=located["position"] - 17)
+    other = masked_sessions(located, elsewhere, OPTIONS.estimation, 5, {"XLON": panel})
+    np.testing.assert_array_equal(other, own)
+    assert own[1].sum() == 11
+
+
 def screened(
     panel: PricePanel, calendar: Sessions, *rows: tuple[str, str, int], masked: bool = False
 ) -> tuple[Booleans, StageLedger, AbnormalReturns]:
     located, _ = locate(deals(calendar, *rows), {"XLON": panel}, {"XLON": calendar}, OPTIONS)
-    mask = masked_sessions(located, located, OPTIONS.estimation, 5)
+    mask = masked_sessions(located, located, OPTIONS.estimation, 5, {"XLON": panel})
     if not masked:
         mask = np.zeros_like(mask)
     panels = {"XLON": panel}

@@ -176,6 +176,19 @@ def test_simulated_extrapolation_by_the_right_curve(noisy: Ground) -> None:
     assert again.estimates == film.estimates
 
 
+def test_simulated_errors_of_two_way_clusters_start_at_their_own() -> None:
+    """Without added error the variance is the sum of the ways less their intersection."""
+    rng = np.random.default_rng(8)
+    design = worlds.noisy_treatment(rng, 300)
+    company, year = rng.integers(0, 30, size=300), rng.integers(0, 12, size=300)
+    y = design.y + 2 * rng.normal(size=30)[company] + 2 * rng.normal(size=12)[year]
+    ground = ground_of(
+        replace(design, y=y, clusters={"company": company, "year": year}), FitOptions()
+    )
+    film = simex(ground, "D", worlds.RELIABILITY, seed=3, draws=5)
+    assert film.variances[0] == pytest.approx(ground.robust**2, rel=1e-8)
+
+
 def test_simulated_errors_lie_around_those_of_the_correction(noisy: Ground) -> None:
     """Both with the error variance, not the reliability, as known: simulation takes it so."""
     film = simex(noisy, "D", worlds.RELIABILITY, seed=5, draws=200)

@@ -14,11 +14,12 @@ STREAM = np.random.default_rng(11)
 CAR = STREAM.normal(0.004, 0.03, 60)
 VARIANCE = STREAM.uniform(0.0004, 0.0016, 60)
 VALUE = STREAM.lognormal(6, 1, 60)
+HELD = CAR + STREAM.normal(0, 0.002, 60)
 
 
 def test_weighted_means_are_weighted_least_squares_with_robust_errors() -> None:
     """statsmodels WLS of the CARs on a constant, HC1 errors."""
-    frame = averages(CAR, VARIANCE, VALUE, 0.95).set_index("average")
+    frame = averages(CAR, VARIANCE, VALUE, HELD, 0.95).set_index("average")
     for name, weight in (
         ("equal weights", np.ones(60)),
         ("by precision", 1 / VARIANCE),
@@ -32,10 +33,13 @@ def test_weighted_means_are_weighted_least_squares_with_robust_errors() -> None:
 
 
 def test_trimmed_mean_and_median_against_scipy() -> None:
-    frame = averages(CAR, VARIANCE, VALUE, 0.95).set_index("average")
+    frame = averages(CAR, VARIANCE, VALUE, HELD, 0.95).set_index("average")
     assert frame.loc["trimmed", "value"] == pytest.approx(stats.trim_mean(CAR, 0.1))
     assert frame.loc["median", "value"] == np.median(CAR)
     known = stats.mstats.trimmed_stde(CAR, limits=(0.1, 0.1), inclusive=(True, True))
+    held = stats.ttest_1samp(HELD, 0.0).confidence_interval(0.95)
+    assert frame.loc["buy and hold", "value"] == pytest.approx(HELD.mean())
+    assert frame.loc["buy and hold", ["ci_low", "ci_high"]].tolist() == pytest.approx([*held])
     assert frame.loc["trimmed", "std_error"] == pytest.approx(float(known), rel=0.02)
 
 
@@ -46,14 +50,15 @@ def test_the_medians_interval_covers(n: int) -> None:
     hits = 0
     for _ in range(400):
         car = stream.exponential(1.0, n)
-        row = averages(car, np.ones(n), np.full(n, np.nan), 0.95).set_index("average").loc["median"]
+        frame = averages(car, np.ones(n), np.full(n, np.nan), car, 0.95)
+        row = frame.set_index("average").loc["median"]
         hits += row["ci_low"] <= np.log(2) <= row["ci_high"]
     assert hits / 400 >= 0.95 - 3 * np.sqrt(0.05 * 0.95 / 400)
 
 
 def test_two_deals_give_no_averages_and_unknown_values_no_money() -> None:
-    assert averages(CAR[:2], VARIANCE[:2], VALUE[:2], 0.95).empty
-    frame = averages(CAR, VARIANCE, np.full(60, np.nan), 0.95)
+    assert averages(CAR[:2], VARIANCE[:2], VALUE[:2], HELD[:2], 0.95).empty
+    frame = averages(CAR, VARIANCE, np.full(60, np.nan), HELD, 0.95)
     assert "by market value" not in set(frame["average"])
 
 
@@ -68,9 +73,28 @@ def test_groups_against_scipy() -> None:
     )
     ranks = stats.mannwhitneyu(CAR[treated == 1], CAR[treated == 0], method="asymptotic")
     assert frame["p_value"].iloc[2] == pytest.approx(ranks.pvalue)
+    above = stats.median_test(CAR[treated == 1], CAR[treated == 0])
+    assert frame["p_value"].iloc[3] == pytest.approx(above.pvalue)
+    assert frame["difference"].iloc[3] == pytest.approx(
+        np.median(CAR[treated == 1]) - np.median(CAR[treated == 0])
+    )
     assert frame[["n_first", "n_second"]].iloc[0].tolist() == [40, 20]
     assert group_tests(CAR, scar, np.zeros(60), ("cash", "shares")).empty
     assert group_tests(CAR, scar, np.linspace(0, 1, 60), ("cash", "shares")).empty
+
+
+def test_the_median_test_by_its_table() -> None:
+    """Chi-squared of the two by two table of deals above the common median, Yates' correction;
+    left out when no deal lies above it. Mood 1950."""
+    treated = (np.arange(60) % 3 == 0).astype(float)
+    row = group_tests(CAR, CAR, treated, ("cash", "shares")).set_index("test").loc["Median test"]
+    high = np.median(CAR) < CAR
+    table = [[(high & (treated == g)).sum(), (~high & (treated == g)).sum()] for g in (1, 0)]
+    known = stats.chi2_contingency(table)
+    assert (row["statistic"], row["df"]) == (pytest.approx(known.statistic), 1.0)
+    assert row["p_value"] == pytest.approx(known.pvalue)
+    tied = np.where(np.arange(60) < 40, 0.02, CAR - 1)
+    assert "Median test" not in set(group_tests(tied, CAR, treated, ("cash", "shares"))["test"])
 
 
 def test_the_band_of_a_path_holds_the_whole_path() -> None:

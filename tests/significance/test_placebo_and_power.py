@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from statsmodels.stats.power import NormalIndPower
@@ -10,9 +12,9 @@ from pipeline.core.window import Window
 from pipeline.registry import TABLE, TESTS
 from pipeline.significance.dependence import links
 from pipeline.significance.placebo import placebo_sizes
-from pipeline.significance.power import detectable, power_frame, power_of
+from pipeline.significance.power import POWER, detectable, detectable_of, power_frame, power_of
 from pipeline.significance.sample import car_sample
-from tests.significance.samples import WINDOW, clustered
+from tests.significance.samples import WINDOW, clustered, linked
 
 TEST_FUNCTIONS = {entry.key: entry.load() for entry in TABLE[TESTS] if not entry.resamples}
 
@@ -64,4 +66,32 @@ def test_the_smallest_effect_found_lies_where_power_is_four_fifths() -> None:
     smallest = detectable(float(sample.car.std(ddof=1)), sample.n, sample.dependence)
     assert (frame.loc[frame["effect"] >= smallest, "power"] >= 0.8 - 1e-6).all()
     assert (frame.loc[frame["effect"] < smallest, "power"] < 0.8).all()
-    assert power_of(abnormal.take(np.array([0])), WINDOW).empty
+    assert detectable_of(abnormal, WINDOW) == smallest
+    one = abnormal.take(np.array([0]))
+    assert power_of(one, WINDOW).empty
+    assert np.isnan(detectable_of(one, WINDOW))
+
+
+@pytest.mark.parametrize("r", [0.0, 0.002, 0.05])
+def test_deals_needed_are_the_fewest_with_power_of_four_fifths(r: float) -> None:
+    """The smallest mean that so many deals find is the effect; one deal fewer does not find it."""
+    link, found = linked(r), 0
+    for _, row in power_frame(0.03, 40, link).iterrows():
+        effect, needed = row["effect"], row["deals_needed"]
+        if np.isinf(needed):
+            assert detectable(0.03, 10**9, link, power=POWER) >= effect
+        elif needed > 2:
+            found += 1
+            assert detectable(0.03, int(needed), link, power=POWER) <= effect
+            assert detectable(0.03, int(needed) - 1, link, power=POWER) > effect
+    assert found >= 3
+
+
+def test_deals_that_move_together_may_never_be_enough() -> None:
+    """Deals whose correlation is .05 are worth fewer than twenty, however many are added."""
+    together = power_frame(0.03, 40, linked(0.05)).set_index("effect")["deals_needed"]
+    apart = power_frame(0.03, 40, replace(linked(0.05), weighted=-0.01))
+    assert np.isinf(together.loc[:0.015]).all()
+    assert np.isfinite(together.loc[0.02:]).all()
+    assert (together.to_numpy() >= apart["deals_needed"].to_numpy()).all()
+    assert np.isfinite(apart["deals_needed"]).all()

@@ -51,7 +51,7 @@ def test_candidates_are_read_for_controls_alone(tmp_path: Path) -> None:
 @pytest.mark.parametrize(
     "text, words",
     [
-        (ASKED.replace("[1, 250]", "[250, 1]"), "last session after the first"),
+        (ASKED.replace("[1, 250]", "[250, 1]"), "last session is its first or comes after it"),
         (ASKED.replace('nearest = ["market_value"]', ""), "nearest"),
         (ASKED.replace("horizons = [60, 250]", "horizons = [1]"), "greater than or equal to 5"),
         (ASKED.replace("fewest_holdings = 5", 'regressors = "factors"'), "factor returns"),

@@ -155,13 +155,13 @@ def test_every_fault_of_a_file_at_once(tmp_path: Path) -> None:
     ("old", "new", "column", "word"),
     [
         ("minimum_observations = 100", "minimum_observations = 10", "minimum_observations", "30"),
-        ("headline = [-1, 1]", "headline = [1, -1]", "event_time", "ends before it starts"),
+        ("headline = [-1, 1]", "headline = [1, -1]", "event_time", "last session"),
         ("headline = [-1, 1]", "headline = [-1, 1, 2]", "event_time.headline", "2 items"),
         ("headline = [-1, 1]", "headline = [-1.5, 1]", "event_time.headline.0", "integer"),
         ("log = true", 'log = "yes"', "characteristics.relative_size.log", "boolean"),
         ("log = true", "winsorise = 0.5", "characteristics.relative_size.winsorise", "0.5"),
         ('price = "run_up"', 'price = "momentum"', "characteristics.run_up.price", "one of run_up"),
-        ("window = [-25, -11]", "window = [-11, -25]", "characteristics.run_up", "before"),
+        ("window = [-25, -11]", "window = [-11, -25]", "characteristics.run_up", "last session"),
         ("window = [-25, -11]", "lag = 1", "characteristics.run_up", "lag needs a column"),
         ("log = true", "window = [-25, -11]", "characteristics.relative_size", "price measure"),
         ("log = true", 'column = "size"', "characteristics.relative_size", "exactly one source"),
@@ -220,5 +220,6 @@ def test_a_long_value_is_cut_short(tmp_path: Path) -> None:
 def test_a_window_that_ends_before_it_starts_says_so(tmp_path: Path) -> None:
     finding = one_refusal(tmp_path, ("headline = [-1, 1]", "headline = [5, -5]"))
     assert finding.column == "event_time"
-    assert "[5, -5] ends before it starts" in finding.expected
+    assert finding.got == "[5, -5] in 'windows'"
+    assert "last session is its first or comes after it" in finding.expected
     assert "{" not in finding.got

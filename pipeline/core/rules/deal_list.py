@@ -22,9 +22,10 @@ RULES = (
     Rule(
         "side_not_named",
         "List of both sides, study of none",
-        "The deal list has a column side, and the study does not name one of its sides.",
+        "The deal list has a column side, and the study does not name one of its sides; or it "
+        "has none, and two companies are each other's counterparty within a year.",
         "Acquirers and targets hear the same news; they are never pooled in one mean.",
-        "Set event_time.side, and make one study a side.",
+        "Set event_time.side, and make one study a side; add the column if there is none.",
     ),
     Rule(
         "rumour_after",

@@ -87,7 +87,7 @@ RULES = (
         "Deal that shares its window with another of the company",
         "Its headline window meets that of an earlier deal of the company; the study keeps both.",
         "The two share a price move, so they count for less than two deals.",
-        "None needed: errors are clustered by company.",
+        "None needed: errors are clustered by company in the regression.",
     ),
     Rule(
         "other_side",
@@ -130,6 +130,14 @@ RULES = (
         "Only the date is known, so day zero or the session after may hold the reaction.",
         "A window of day zero alone could miss it.",
         "Add the time of the announcement.",
+    ),
+    Rule(
+        "time_needed",
+        "Unknown times under a headline window that ends on day zero",
+        "Some deals have a date and no time, and the headline window ends on day zero.",
+        "News after the close moves the next session, so the window may miss the whole reaction.",
+        "Set event_time.headline to end on the session after, as [0, 1] does, add the times of "
+        "those announcements, or leave those deals out.",
     ),
     Rule(
         "confounded",

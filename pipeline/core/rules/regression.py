@@ -63,6 +63,13 @@ RULES = (
         "Name at least one instrument for each variable.",
     ),
     Rule(
+        "one_endogenous",
+        "Several chosen variables where one is allowed",
+        "The column instruments the feature alone, and the study asks for more.",
+        "A chosen variable taken as given would bias the feature's effect without a word.",
+        "Leave the column out, or instrument the feature alone.",
+    ),
+    Rule(
         "separation",
         "Perfect separation",
         "A variable predicts the decision without error.",
