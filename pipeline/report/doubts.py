@@ -54,8 +54,7 @@ def diagnostics_table(material: Material) -> Table:
     ranked = ranked.sort_values("rank", kind="stable")
     names = ("verdict", "subject", "check", "value", "threshold", "meaning", "source")
     rows = tuple(
-        tuple(_checked(material, row, name) for name in names)
-        for _, row in ranked.iterrows()
+        tuple(_checked(material, row, name) for name in names) for _, row in ranked.iterrows()
     )
     return Table("diagnostics", prose("Diagnostics, the worst first"), columns, rows)
 

@@ -69,7 +69,7 @@ def test_many_even_clusters_change_little(design: Design) -> None:
     single = replace(design, selection=replace(s, clusters={"own": np.arange(len(s.selected))}))
     clustered = selection_two_stage(single, FitOptions())
     one, other = alone.sets["anderson_rubin"], clustered.sets["anderson_rubin"]
-    assert (other.low, other.high) == pytest.approx((one.low, one.high), rel=0.1)
+    assert 1 < (other.high - other.low) / (one.high - one.low) < 1.1
 
 
 def without_clusters(design: Design) -> Design:

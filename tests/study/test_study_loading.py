@@ -220,6 +220,6 @@ def test_a_long_value_is_cut_short(tmp_path: Path) -> None:
 def test_a_window_that_ends_before_it_starts_says_so(tmp_path: Path) -> None:
     finding = one_refusal(tmp_path, ("headline = [-1, 1]", "headline = [5, -5]"))
     assert finding.column == "event_time"
-    assert finding.got == "[5, -5] in 'windows'"
+    assert finding.got == "[5, -5] in 'headline'"
     assert "last session is its first or comes after it" in finding.expected
     assert "{" not in finding.got
