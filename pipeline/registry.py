@@ -167,7 +167,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             "rank_event_variance",
             "pipeline.significance.ranks:rank_event_variance",
             why="needs no normal returns and allows for variance that rises at the event",
-            assumes=("aligned",),
+            assumes=("aligned", "symmetric_daily"),
             default=False,
         ),
         Entry(

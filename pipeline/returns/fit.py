@@ -125,26 +125,21 @@ class Engine:
         """Fit N events and write event i to row ``rows[i]`` of ``arrays``."""
         rest = np.arange(len(rows))
         if self.shared is not None:
-            whole = self.shared.whole(events.position) & ~events.masked.any(axis=1)
-            rest = self._fit_whole(self.shared, arrays, rows, events, whole)
+            rest = self._fit_shared(self.shared, arrays, rows, events)
         for part in _chunks(rest):
             _write(arrays, rows[part], self._fit_ragged(events, part))
 
-    def _fit_whole(
-        self,
-        shared: SharedFits,
-        arrays: Arrays,
-        rows: Integers,
-        events: Events,
-        whole: Booleans,
+    def _fit_shared(
+        self, shared: SharedFits, arrays: Arrays, rows: Integers, events: Events
     ) -> Integers:
-        """Fit the whole events; the events left over, for want of a return or of a fit."""
-        left = ~whole
-        shared.solve(events.position[whole])
-        for part in _chunks(np.flatnonzero(whole)):
-            found = shared.fit(events.column[part], events.position[part])
-            _write(arrays, rows[part], found)
-            left[part] = ~np.isfinite(found["residual_variance"])
+        """Fit the events inside the panel; those left over, outside it or without a fit."""
+        inside = shared.inside(events.position)
+        left = ~inside
+        for part in _chunks(np.flatnonzero(inside)):
+            column, position = events.column[part], events.position[part]
+            for own, found in shared.fit(column, position, events.masked[part]):
+                _write(arrays, rows[part[own]], found)
+                left[part[own]] = ~np.isfinite(found["residual_variance"])
         return np.flatnonzero(left)
 
     def _fit_ragged(self, events: Events, part: Integers) -> Arrays:

@@ -68,7 +68,15 @@ def symmetric_before(sample: CarSample) -> str:
 
     Matters when one cumulated return is ranked among daily ones, and the window has several days.
     """
-    if sample.series is None or len(sample.window) == 1:
+    return "" if len(sample.window) == 1 else symmetric_daily(sample)
+
+
+def symmetric_daily(sample: CarSample) -> str:
+    """Why daily returns of the estimation windows are not symmetric, or ''.
+
+    Matters in any window when returns of the event are scaled before they are ranked.
+    """
+    if sample.series is None:
         return ""
     standardised = sample.series.estimation / sample.series.residual_sd[:, None]
     skew = float(stats.skew(standardised[np.isfinite(standardised)]))
@@ -88,6 +96,7 @@ CHECKS: dict[str, Callable[[CarSample], str]] = {
     "constant_variance": constant_variance,
     "symmetric": symmetric,
     "symmetric_before": symmetric_before,
+    "symmetric_daily": symmetric_daily,
     "one_date": several_dates,
 }
 

@@ -24,11 +24,21 @@ VALID = {
     "patell": ("null",),
     "standardised": ("null", *VARIANCE),
     "dependence_adjusted": ("null", *VARIANCE, *SAME_DAY, "within 40 sessions, r = .1"),
+    "dependence_adjusted_patell": ("null", "same day, r = .1", "within 40 sessions, r = .1"),
+    "rank_event_variance": ("null", *VARIANCE, *SAME_DAY),
+    "generalised_rank_z": ("null", *VARIANCE),
+    "skewness_transformed": ("null", *VARIANCE, "skewed residuals"),
+    "deal_bootstrap": ("null", *VARIANCE, "skewed residuals"),
 }
 INVALID = {
     "cross_sectional": SAME_DAY,
     "patell": (*VARIANCE, *SAME_DAY),
     "standardised": SAME_DAY,
+    "dependence_adjusted_patell": VARIANCE,
+    "rank_event_variance": ("skewed residuals",),
+    "generalised_rank_z": (*SAME_DAY, "skewed residuals"),
+    "skewness_transformed": SAME_DAY,
+    "deal_bootstrap": SAME_DAY,
 }
 
 

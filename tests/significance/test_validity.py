@@ -8,6 +8,7 @@ from scipy import stats
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Floats
+from pipeline.core.window import Window
 from pipeline.registry import TESTS, entry
 from pipeline.significance.dependence import dependence
 from pipeline.significance.sample import CarSample, car_sample
@@ -78,6 +79,26 @@ def test_deals_that_never_meet_are_not_doubted() -> None:
     assert sample.dependence.mean > 10 * sample.dependence.noise
     assert sample.dependence.weighted == 0.0
     assert doubt(("independent",), sample) == ""
+
+
+@pytest.mark.parametrize("window", [Window(0, 0), WINDOW])
+def test_skewed_days_are_doubted_by_tests_that_scale_or_cumulate_before_they_rank(
+    window: Window,
+) -> None:
+    """The plain rank test takes days as they are; a day's rank alone is not cumulated."""
+    stream = np.random.default_rng(3)
+    noise = 0.01 * (stream.exponential(size=(400, 20)) - 1)
+    market = stream.normal(0, 0.01, 400)
+    panel = panel_of_returns(weekdays(400), market[:, None] + noise, market)
+    position = 150 + 12 * np.arange(20)
+    skewed = fitted("market_model", panel, np.arange(20), position, ESTIMATION, SPAN)
+    sample = car_sample(skewed, window, 1.0)
+    found = {
+        key: "daily returns are skewed" in doubt(entry(TESTS, key).assumes, sample)
+        for key in ("rank", "rank_event_variance", "generalised_rank")
+    }
+    several = len(window) > 1
+    assert found == {"rank": False, "rank_event_variance": True, "generalised_rank": several}
 
 
 def weighted_means(days: int, draws: int) -> Floats:
