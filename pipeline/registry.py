@@ -66,9 +66,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
             needs=("peers",),
             one_session=True,
         ),
-        Entry(
-            "scholes_williams", "pipeline.returns.expected:scholes_williams", one_session=True
-        ),
+        Entry("scholes_williams", "pipeline.returns.expected:scholes_williams", one_session=True),
         Entry("dimson", "pipeline.returns.expected:dimson", one_session=True),
         Entry("huber", "pipeline.returns.expected:huber", one_session=True),
     ),

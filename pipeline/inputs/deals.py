@@ -67,9 +67,7 @@ def read_deals(
     return (kept.drop(columns=unused), ledger), findings
 
 
-def _columns(
-    wanted: Wanted, raw: pd.DataFrame, source: Source, rules: DealRules
-) -> list[Column]:
+def _columns(wanted: Wanted, raw: pd.DataFrame, source: Source, rules: DealRules) -> list[Column]:
     """The contract: what every list holds, and what this one holds besides."""
     fixed = [
         Column("deal_id", "text", filled=True, why="a name for each deal that no other has"),

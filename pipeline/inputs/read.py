@@ -199,9 +199,7 @@ def _across(
     return findings
 
 
-def _known_too_late(
-    deals: pd.DataFrame, candidates: pd.DataFrame, source: Source
-) -> list[Finding]:
+def _known_too_late(deals: pd.DataFrame, candidates: pd.DataFrame, source: Source) -> list[Finding]:
     """An error for candidates whose values date from after the deal they are meant to explain."""
     announced = deals.set_index("deal_id")["announced_date"]
     announced = announced[~announced.index.duplicated()]

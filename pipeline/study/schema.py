@@ -45,8 +45,9 @@ class Inputs(Part):
 
     deals: Path = Field(description="One row a deal.")
     prices: Path | None = Field(
-        None, description="Daily closes: security, date, close, volume. Must be there unless the "
-        "study has [outcome]."
+        None,
+        description="Daily closes: security, date, close, volume. Must be there unless the "
+        "study has [outcome].",
     )
     benchmarks: Path | None = Field(
         None, description="Index levels: exchange, date, close. Must be there as well."
