@@ -21,7 +21,7 @@ from pipeline.estimators.errors import (
     words,
 )
 from pipeline.estimators.sample import plain
-from pipeline.estimators.selection_rows import check_rows
+from pipeline.estimators.selection_rows import candidates_of, check_rows
 from pipeline.estimators.treatment import binary_treatment
 
 LEE = "Lee (2009)"
@@ -172,15 +172,7 @@ def lee_bounds(design: Design, options: FitOptions) -> Estimate:
 
 
 def _candidates(design: Design) -> SelectionRows:
-    selection = design.selection
-    if selection is None:
-        raise refusal(
-            "no_selection",
-            "selection",
-            "no candidates",
-            "a table of candidates",
-            "declare which companies could have announced a deal",
-        )
+    selection = candidates_of(design)
     if design.treatment not in selection.names:
         raise refusal(
             "treatment_not_known",

@@ -87,7 +87,9 @@ def _of_one(parts: Parts, basis: Floats, left: Floats, codes: Integers) -> tuple
     for rows in Basis(span, basis, recoded(codes)).rows():
         loads, lost = adjusted(span[rows], basis[rows], CR3_POWER)
         if (lost > LOADED).any():
-            _refuse(parts, codes)
+            names = parts.sample.rule.clusters
+            name = next(key for key, value in names.items() if value is codes)
+            raise one_cluster_decides(name, parts.instruments)
         scores.append((left[rows].T @ loads).ravel())
         squares.append(loads.T @ loads)
         cross.append(span[rows].T @ loads)
@@ -96,11 +98,10 @@ def _of_one(parts: Parts, basis: Floats, left: Floats, codes: Integers) -> tuple
     return np.asarray((G - 1) / G * (made.T @ made)), eta
 
 
-def _refuse(parts: Parts, codes: Integers) -> None:
-    names = parts.sample.rule.clusters
-    name = next(key for key, value in names.items() if value is codes)
-    listed = ", ".join(parts.instruments)
-    raise refusal(
+def one_cluster_decides(name: str, instruments: tuple[str, ...]) -> InputProblem:
+    """The refusal where a combination of the instruments varies in one cluster by ``name`` only."""
+    listed = ", ".join(instruments)
+    return refusal(
         "cluster_decides",
         listed,
         f"one cluster by {name} alone moves a combination of {listed}",

@@ -8,9 +8,13 @@ import numpy as np
 
 from pipeline.core.design import SelectionRows
 from pipeline.core.prices import Booleans, Floats, Integers
-from pipeline.estimators.algebra import orthonormal, partial_out, refusal, solve
+from pipeline.estimators.algebra import orthonormal, partial_out, solve
 from pipeline.estimators.anderson_rubin import ReducedForms
-from pipeline.estimators.clustered_forms import CR3_POWER, degrees_of_freedom
+from pipeline.estimators.clustered_forms import (
+    CR3_POWER,
+    degrees_of_freedom,
+    one_cluster_decides,
+)
 from pipeline.estimators.covariance import intersection, recoded
 from pipeline.estimators.errors import CLUSTER, ErrorRule, of_influence, positive
 from pipeline.estimators.few_clusters import LEAST_DF, LOADED, adjusted
@@ -209,13 +213,5 @@ def _refuse_loaded(
 ) -> None:
     for _, deals in _clusters(chosen, codes):
         lost = adjusted(pieces.span[deals], pieces.basis[deals], CR3_POWER)[1]
-        if (lost <= LOADED).all():
-            continue
-        listed = ", ".join(instruments)
-        raise refusal(
-            "cluster_decides",
-            listed,
-            f"one cluster by {name} alone moves a combination of {listed}",
-            "instruments that vary in at least two clusters",
-            "cluster by a finer dimension, or take the instrument out",
-        )
+        if (lost > LOADED).any():
+            raise one_cluster_decides(name, instruments)

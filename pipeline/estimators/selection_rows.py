@@ -8,12 +8,11 @@ from pipeline.core.design import Design, SelectionRows
 from pipeline.estimators.algebra import dependent, refusal
 
 
-def checked_selection(design: Design) -> SelectionRows:
-    """The candidates, if a selection model may be made of them.
+def candidates_of(design: Design) -> SelectionRows:
+    """The candidates.
 
     Raises:
-        InputProblem: ``no_selection``, ``unknown_exclusion``, ``excluded_is_control``,
-            ``selection_rows``.
+        InputProblem: ``no_selection`` if the design has none.
     """
     selection = design.selection
     if selection is None:
@@ -24,6 +23,17 @@ def checked_selection(design: Design) -> SelectionRows:
             "a table of candidates",
             "declare which companies could have announced a deal",
         )
+    return selection
+
+
+def checked_selection(design: Design) -> SelectionRows:
+    """The candidates, if a selection model may be made of them.
+
+    Raises:
+        InputProblem: ``no_selection``, ``unknown_exclusion``, ``excluded_is_control``,
+            ``selection_rows``.
+    """
+    selection = candidates_of(design)
     unknown = [name for name in selection.excluded if name not in selection.names]
     if unknown:
         raise refusal(

@@ -14,9 +14,8 @@ import pandas as pd
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.ledger import Action, LedgerEntry
 from pipeline.inputs.codes import CHECKS
-from pipeline.inputs.contracts import row_list
-from pipeline.inputs.files import ROW, Source
-from pipeline.inputs.typed import theirs
+from pipeline.inputs.files import Source
+from pipeline.inputs.typed import finding, theirs
 
 UNIT_RATIO = (1e-6, 100.0)
 ODD_SIZE = (1e-4, 10.0)
@@ -26,19 +25,6 @@ PERSONAL = re.compile(
     r"e_?mail|phone|mobile|passport|birth|social_security|national_id|home_address|"
     r"first_?name|last_?name|surname|salary|tax_id|gender"
 )
-
-
-def finding(
-    rule: str,
-    rows: pd.DataFrame,
-    source: Source,
-    columns: tuple[str, ...],
-    words: tuple[str, str, str],
-    severity: Severity = Severity.ERROR,
-) -> Finding:
-    """A finding on ``rows``; ``words`` are what was found, what was expected, and what to do."""
-    row, column = row_list(rows[ROW]), theirs(source, columns)
-    return Finding(rule, severity, source.file, *words, row=row, column=column)
 
 
 def deal_findings(deals: pd.DataFrame, source: Source) -> list[Finding]:

@@ -8,12 +8,12 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, Severity
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
-from pipeline.inputs.contracts import Column, row_list
+from pipeline.inputs.contracts import Column
 from pipeline.inputs.deal_checks import deal_findings, personal_data, same_pair_flags, size_flags
 from pipeline.inputs.declared import declared
 from pipeline.inputs.files import ROW, Source, read_table
 from pipeline.inputs.moments import read_moments
-from pipeline.inputs.typed import extra_columns, typed
+from pipeline.inputs.typed import extra_columns, finding, typed
 from pipeline.inputs.wanted import DealRules, Wanted
 
 MONEY = ("market_value", "deal_value")
@@ -152,15 +152,16 @@ def one_row_a_deal(
     kept = deals[~repeated].reset_index(drop=True)
     conflict = kept[kept.duplicated("deal_id", keep=False)]
     findings = [
-        Finding(
+        finding(
             "conflicting_deal",
-            Severity.ERROR,
-            source.file,
-            got=f"deal '{deal!s}' on rows that differ",
-            expected="one row a deal identifier",
-            remedy="Keep one row, or give the second deal an identifier of its own.",
-            row=row_list(rows[ROW]),
-            column=source.columns.get("deal_id", "deal_id"),
+            rows,
+            source,
+            ("deal_id",),
+            (
+                f"deal '{deal!s}' on rows that differ",
+                "one row a deal identifier",
+                "Keep one row, or give the second deal an identifier of its own.",
+            ),
         )
         for deal, rows in conflict.groupby("deal_id", sort=True)
         if deal

@@ -10,8 +10,8 @@ import pandas as pd
 
 from pipeline.core.findings import Finding
 from pipeline.core.ledger import Action, LedgerEntry
-from pipeline.inputs.deal_checks import finding
 from pipeline.inputs.files import Source
+from pipeline.inputs.typed import finding
 from pipeline.inputs.wanted import DealRules
 
 WHOLE = (1.0, 100.0)

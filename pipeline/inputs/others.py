@@ -7,7 +7,7 @@ import pandas as pd
 from pipeline.core.findings import Finding, Severity
 from pipeline.inputs.contracts import Column, row_list
 from pipeline.inputs.files import ROW, Source, read_table
-from pipeline.inputs.typed import theirs, typed
+from pipeline.inputs.typed import finding, typed
 
 PARTIES = ("security", "counterparty", "isin", "cusip", "sedol")
 
@@ -37,15 +37,16 @@ def read_listings(source: Source) -> tuple[pd.DataFrame, list[Finding]]:
 
 
 def _conflict(rows: pd.DataFrame, source: Source, column: str, got: str) -> Finding:
-    return Finding(
+    return finding(
         "conflicting_listing",
-        Severity.ERROR,
-        source.file,
-        got=f"{got}: {', '.join(rows['line'].unique()[:4])}",
-        expected="one row a line, and one primary and one home line a company",
-        remedy="Correct the rows.",
-        row=row_list(rows[ROW]),
-        column=theirs(source, (column,)),
+        rows,
+        source,
+        (column,),
+        (
+            f"{got}: {', '.join(rows['line'].unique()[:4])}",
+            "one row a line, and one primary and one home line a company",
+            "Correct the rows.",
+        ),
     )
 
 

@@ -7,10 +7,10 @@ from collections.abc import Iterator
 import numpy as np
 import pandas as pd
 
-from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import Column, row_list
+from pipeline.core.findings import Finding
+from pipeline.inputs.contracts import Column
 from pipeline.inputs.files import ROW, Source, read_table
-from pipeline.inputs.typed import one_row_a_date, theirs, typed
+from pipeline.inputs.typed import finding, one_row_a_date, typed
 
 # One of the left costs far less than one of the right, for decades: common practice, no source.
 SMALL = {"JPY", "KRW", "IDR", "VND", "HUF", "CLP", "COP", "INR", "ISK", "RUB", "THB", "TWD"}
@@ -30,7 +30,7 @@ def read_rates(source: Source, date_format: str, common: str) -> tuple[pd.DataFr
     bad = table["rate"] <= 0
     if bad.any():
         got = (f"{int(bad.sum())} rates of zero or below", "rates above zero", "Correct the cells.")
-        findings.append(_finding("bad_value", table[bad], source, got))
+        findings.append(finding("bad_value", table[bad], source, ("rate",), got))
     findings += list(_inverse(table[~bad], source, common.upper()))
     once, more = one_row_a_date(table, source, ("currency", "date"))
     return once, findings + more
@@ -55,7 +55,7 @@ def _inverse(table: pd.DataFrame, source: Source, common: str) -> Iterator[Findi
                 f"what one {currency} costs in {common}, on every row",
                 "Turn those rates over.",
             )
-            yield _finding("inverse_rate", some, source, words)
+            yield finding("inverse_rate", some, source, ("rate",), words)
         elif (currency in SMALL and common in LARGE and middle > 0) or (
             currency in LARGE and common in SMALL and middle < 0
         ):
@@ -64,12 +64,7 @@ def _inverse(table: pd.DataFrame, source: Source, common: str) -> Iterator[Findi
                 f"what one {currency} costs in {common}",
                 f"Turn the rates over: these are what one {common} costs in {currency}.",
             )
-            yield _finding("inverse_rate", rows, source, words)
-
-
-def _finding(rule: str, rows: pd.DataFrame, source: Source, words: tuple[str, str, str]) -> Finding:
-    row, column = row_list(rows[ROW]), theirs(source, ("rate",))
-    return Finding(rule, Severity.ERROR, source.file, *words, row=row, column=column)
+            yield finding("inverse_rate", rows, source, ("rate",), words)
 
 
 def read_delistings(source: Source, date_format: str) -> tuple[pd.DataFrame, list[Finding]]:
@@ -86,30 +81,32 @@ def read_delistings(source: Source, date_format: str) -> tuple[pd.DataFrame, lis
     if (low | high).any():
         rows = table[low | high]
         findings.append(
-            Finding(
+            finding(
                 "return_unit",
-                Severity.ERROR,
-                source.file,
-                got=f"delisting returns such as {rows['return'].iloc[0]:g}",
-                expected="decimals from -1: -0.3 for a loss of 30%",
-                remedy="Divide percentages by 100.",
-                row=row_list(rows[ROW]),
-                column=theirs(source, ("return",)),
+                rows,
+                source,
+                ("return",),
+                (
+                    f"delisting returns such as {rows['return'].iloc[0]:g}",
+                    "decimals from -1: -0.3 for a loss of 30%",
+                    "Divide percentages by 100.",
+                ),
             )
         )
     again = table[table.duplicated("security", keep=False)]
     again = again[~again.duplicated(["security", "date", "return", "reason"], keep=False)]
     if len(again):
         findings.append(
-            Finding(
+            finding(
                 "conflicting_price",
-                Severity.ERROR,
-                source.file,
-                got=f"two delistings of {again['security'].iloc[0]}",
-                expected="one row a security",
-                remedy="Keep the right one.",
-                row=row_list(again[ROW]),
-                column=theirs(source, ("security",)),
+                again,
+                source,
+                ("security",),
+                (
+                    f"two delistings of {again['security'].iloc[0]}",
+                    "one row a security",
+                    "Keep the right one.",
+                ),
             )
         )
     return table.drop(columns=ROW).drop_duplicates(), findings

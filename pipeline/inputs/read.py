@@ -11,7 +11,6 @@ import pandas as pd
 from pipeline.core.findings import Finding, InputProblem, Severity, raise_errors
 from pipeline.core.ledger import StageLedger
 from pipeline.inputs.candidates import read_candidates
-from pipeline.inputs.deal_checks import finding
 from pipeline.inputs.deals import NO_RULES, read_deals
 from pipeline.inputs.files import Source
 from pipeline.inputs.market import DECLARED, read_benchmarks, read_factors, read_prices
@@ -19,6 +18,7 @@ from pipeline.inputs.others import read_listings, read_news, restricted_findings
 from pipeline.inputs.peers import listed_peers, read_peers
 from pipeline.inputs.quoted import QuotedFiles
 from pipeline.inputs.rates import read_delistings, read_rates
+from pipeline.inputs.typed import finding
 from pipeline.inputs.wanted import DealRules, Wanted
 
 T = TypeVar("T")

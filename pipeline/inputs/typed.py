@@ -43,20 +43,30 @@ def theirs(source: Source, names: tuple[str, ...]) -> str:
     return ", ".join(source.columns.get(name, name) for name in names)
 
 
+def finding(
+    rule: str,
+    rows: pd.DataFrame,
+    source: Source,
+    columns: tuple[str, ...],
+    words: tuple[str, str, str],
+    severity: Severity = Severity.ERROR,
+) -> Finding:
+    """A finding on ``rows``; ``words`` are what was found, what was expected, and what to do."""
+    row, column = row_list(rows[ROW]), theirs(source, columns)
+    return Finding(rule, severity, source.file, *words, row=row, column=column)
+
+
 def repeats(rows: pd.DataFrame, source: Source, key: tuple[str, ...], words: str) -> list[Finding]:
     """An error for rows that share a key."""
     if rows.empty:
         return []
     return [
-        Finding(
+        finding(
             "conflicting_deal",
-            Severity.ERROR,
-            source.file,
-            got=f"several rows for one {words}",
-            expected=f"one row a {words}",
-            remedy="Keep one row.",
-            row=row_list(rows[ROW]),
-            column=theirs(source, key),
+            rows,
+            source,
+            key,
+            (f"several rows for one {words}", f"one row a {words}", "Keep one row."),
         )
     ]
 
@@ -71,14 +81,7 @@ def one_row_a_date(
     if not conflict.any():
         return once.drop(columns=ROW), []
     first = once[conflict].iloc[0]
-    finding = Finding(
-        "conflicting_price",
-        Severity.ERROR,
-        source.file,
-        got=f"two rows for {first[key[0]]} on {first['date']:%Y-%m-%d}",
-        expected=f"one row a {key[0]} and date",
-        remedy="Keep the right one.",
-        row=row_list(once.loc[conflict, ROW]),
-        column=theirs(source, key),
-    )
-    return once.drop(columns=ROW), [finding]
+    got = f"two rows for {first[key[0]]} on {first['date']:%Y-%m-%d}"
+    words = (got, f"one row a {key[0]} and date", "Keep the right one.")
+    found = finding("conflicting_price", once[conflict], source, key, words)
+    return once.drop(columns=ROW), [found]

@@ -14,7 +14,6 @@ from __future__ import annotations
 
 import argparse
 import json
-from collections import defaultdict
 from collections.abc import Callable, Iterable
 from pathlib import Path
 
@@ -27,6 +26,7 @@ from pipeline.estimators.algebra import solve
 from pipeline.estimators.instruments import two_stage_least_squares
 from pipeline.estimators.least_squares import fixed_effects, ols
 from pipeline.estimators.selection import heckman_two_step
+from tests.benchmarks.draws import drawn, rejections
 
 FIGURES = Path(__file__).parent / "figures" / "estimators_size.json"
 TRUTH = 0.3
@@ -204,25 +204,8 @@ DESIGNS: dict[str, Callable[[np.random.Generator], Outcome]] = {
 
 def measure(name: str, draws: int) -> list[dict[str, object]]:
     """One row a procedure of the design; rows of means for what starts with an underscore."""
-    seeds = np.random.SeedSequence([20260301, list(DESIGNS).index(name)]).spawn(draws)
-    found: dict[str, list[float]] = defaultdict(list)
-    for seed in seeds:
-        for procedure, value in DESIGNS[name](np.random.default_rng(seed)).items():
-            found[procedure].append(float(value))
-    error = float(np.sqrt(0.05 * 0.95 / draws))
-    rows: list[dict[str, object]] = [
-        {
-            "design": name,
-            "procedure": procedure,
-            "nominal": 0.05,
-            "rate": round(float(np.mean(values)), 4),
-            "monte_carlo_se": round(error, 4),
-            "draws": draws,
-        }
-        for procedure, values in found.items()
-        if not procedure.startswith("_")
-    ]
-    return rows + list(_means(name, found, draws))
+    found = drawn(DESIGNS[name], (20260301, list(DESIGNS).index(name)), draws)
+    return rejections(name, found, draws) + list(_means(name, found, draws))
 
 
 def _means(name: str, found: dict[str, list[float]], draws: int) -> Iterable[dict[str, object]]:

@@ -22,7 +22,6 @@ from __future__ import annotations
 import json
 import os
 import platform
-import resource
 import subprocess
 import sys
 import time
@@ -170,36 +169,48 @@ def compared(model: str, panel: PricePanel) -> dict[str, object]:
     }
 
 
-def peak() -> int:
-    """MiB at the most of a process that fits the market model to 100,000 events."""
-    code = "from tests.benchmarks import fit_speed; fit_speed.alone()"
+def peak(module: str) -> int:
+    """MiB at the most of a process that does a benchmark's work alone."""
+    code = f"""
+import resource
+from tests.benchmarks import {module}
+{module}.alone()
+print(round(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024))
+"""
     done = subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True)
     return int(done.stdout)
 
 
 def alone() -> None:
-    """Fit the market model to 100,000 events and print this process's peak MiB."""
+    """Fit the market model to 100,000 events."""
     ours("market_model", invented(), invented_events(SIZES[-1]))
-    print(round(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024))
+
+
+def write(path: Path, figures: dict[str, object]) -> None:
+    """Write the figures under how to make them again and what they were made on."""
+    facts = {
+        "rerun": f"python -m tests.benchmarks.{path.stem}",
+        "python": platform.python_version(),
+        "numpy": np.__version__,
+        "statsmodels": statsmodels.__version__,
+        "cores": os.cpu_count(),
+    }
+    text = json.dumps({**facts, **figures}, indent=2)
+    path.write_text(text + "\n", encoding="utf-8")
+    print(text)
 
 
 def main() -> None:
     """Measure and write the figures."""
     panel = invented()
-    figures = {
-        "rerun": "python -m tests.benchmarks.fit_speed",
-        "python": platform.python_version(),
-        "numpy": np.__version__,
-        "statsmodels": statsmodels.__version__,
-        "cores": os.cpu_count(),
+    figures: dict[str, object] = {
         "estimation_sessions": len(ESTIMATION),
         "event_days": len(SPAN),
         "models": [compared(model, panel) for model in LIMITS],
-        "peak_mebibytes_at_100000_events": peak(),
+        "peak_mebibytes_at_100000_events": peak("fit_speed"),
         "limit_mebibytes": MEMORY_LIMIT,
     }
-    FIGURES.write_text(json.dumps(figures, indent=2) + "\n", encoding="utf-8")
-    print(json.dumps(figures, indent=2))
+    write(FIGURES, figures)
 
 
 if __name__ == "__main__":

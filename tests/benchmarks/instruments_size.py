@@ -16,7 +16,6 @@ from __future__ import annotations
 
 import argparse
 import json
-from collections import defaultdict
 from collections.abc import Callable
 from pathlib import Path
 
@@ -32,6 +31,7 @@ from pipeline.estimators.least_squares import ols
 from pipeline.estimators.sample import plain
 from pipeline.estimators.stages import Parts, parts_of, reduced_forms
 from pipeline.estimators.wild_instruments import TWO_STAGES, Weights
+from tests.benchmarks.draws import drawn, rejections
 from tests.benchmarks.estimators_size import TRUTH, Outcome, design_of
 
 FIGURES = Path(__file__).parent / "figures" / "instruments_size.json"
@@ -166,23 +166,8 @@ DESIGNS: dict[str, Callable[[RANDOM], Outcome]] = {
 
 def measure(name: str, draws: int) -> list[dict[str, object]]:
     """One row a procedure of the design."""
-    seeds = np.random.SeedSequence([20260304, list(DESIGNS).index(name)]).spawn(draws)
-    found: dict[str, list[float]] = defaultdict(list)
-    for seed in seeds:
-        for procedure, value in DESIGNS[name](np.random.default_rng(seed)).items():
-            found[procedure].append(float(value))
-    error = round(float(np.sqrt(0.05 * 0.95 / draws)), 4)
-    return [
-        {
-            "design": name,
-            "procedure": procedure,
-            "nominal": 0.05,
-            "rate": round(float(np.mean(values)), 4),
-            "monte_carlo_se": error,
-            "draws": draws,
-        }
-        for procedure, values in found.items()
-    ]
+    found = drawn(DESIGNS[name], (20260304, list(DESIGNS).index(name)), draws)
+    return rejections(name, found, draws)
 
 
 def main() -> None:

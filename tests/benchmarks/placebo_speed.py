@@ -17,12 +17,7 @@ own that makes the 1,000 draws, panel and interpreter included.
 
 from __future__ import annotations
 
-import json
 import os
-import platform
-import resource
-import subprocess
-import sys
 from collections.abc import Iterator
 from itertools import islice
 from pathlib import Path
@@ -46,7 +41,7 @@ from pipeline.returns.placebo import pseudo_events, without_announcements  # noq
 from pipeline.significance.dependence import Links, links  # noqa: E402
 from pipeline.significance.placebo import placebo_sizes  # noqa: E402
 from pipeline.significance.sample import car_sample  # noqa: E402
-from tests.benchmarks.fit_speed import ESTIMATION, SESSIONS, invented, seconds  # noqa: E402
+from tests.benchmarks.fit_speed import ESTIMATION, SESSIONS, invented, peak, seconds, write  # noqa: E402
 
 FIGURES = Path(__file__).parent / "figures" / "placebo_speed.json"
 DRAWS, DEALS, WINDOW = 1_000, 500, Window(-1, 1)
@@ -182,19 +177,11 @@ def draws_of_the_loop(
     return where, np.array(ours_there)
 
 
-def peak() -> int:
-    """MiB at the most of a process that makes all draws."""
-    code = "from tests.benchmarks import placebo_speed; placebo_speed.alone()"
-    done = subprocess.run([sys.executable, "-c", code], check=True, capture_output=True, text=True)
-    return int(done.stdout)
-
-
 def alone() -> None:
-    """Make all draws and print this process's peak MiB."""
+    """Make all draws."""
     panel = invented()
     located = located_deals(panel)
     ours(panel, located, known_links(panel, located))
-    print(round(resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024))
 
 
 def main() -> None:
@@ -215,11 +202,7 @@ def main() -> None:
         spent = seconds(lambda: statsmodels_loop(wide, market, *some))
         times["statsmodels"].append(spent / LOOP_FITS * DEALS * DRAWS)
     best = {name: min(values) for name, values in times.items()}
-    figures = {
-        "rerun": "python -m tests.benchmarks.placebo_speed",
-        "python": platform.python_version(),
-        "numpy": np.__version__,
-        "cores": os.cpu_count(),
+    figures: dict[str, object] = {
         "draws": DRAWS,
         "deals": DEALS,
         "tests": KEYS,
@@ -231,11 +214,10 @@ def main() -> None:
         "times_faster": {name: round(best[name] / best["ours"], 1) for name in LIMITS},
         "limit_times_faster": LIMITS,
         "greatest_difference": float(f"{apart:.1e}"),
-        "peak_mebibytes": peak(),
+        "peak_mebibytes": peak("placebo_speed"),
         "limit_mebibytes": MEMORY_LIMIT,
     }
-    FIGURES.write_text(json.dumps(figures, indent=2) + "\n", encoding="utf-8")
-    print(json.dumps(figures, indent=2))
+    write(FIGURES, figures)
 
 
 if __name__ == "__main__":

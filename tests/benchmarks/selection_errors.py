@@ -15,7 +15,6 @@ from __future__ import annotations
 
 import argparse
 import json
-from collections import defaultdict
 from collections.abc import Callable
 from pathlib import Path
 
@@ -33,6 +32,7 @@ from pipeline.estimators.selection import heckman_two_step
 from pipeline.estimators.selection_bootstrap import bootstrap_both_steps
 from pipeline.estimators.selection_controls import controlled, powers, straight_line
 from pipeline.estimators.selection_ml import heckman_likelihood
+from tests.benchmarks.draws import drawn
 
 FIGURES = Path(__file__).parent / "figures" / "selection_errors.json"
 TRUTH, RATIO, REPLICATIONS = 0.3, 0.6, 199
@@ -219,11 +219,7 @@ def measure(name: str, draws: int) -> list[dict[str, object]]:
     """One row a procedure of the design."""
     draw, times = DESIGNS[name]
     draws = round(draws * times)
-    seeds = np.random.SeedSequence([20260304, list(DESIGNS).index(name)]).spawn(draws)
-    found: dict[str, list[tuple[float, float, float, bool]]] = defaultdict(list)
-    for seed in seeds:
-        for procedure, value in draw(np.random.default_rng(seed)).items():
-            found[procedure].append(value)
+    found = drawn(draw, (20260304, list(DESIGNS).index(name)), draws)
     return [_row(name, procedure, np.array(rows), draws) for procedure, rows in found.items()]
 
 

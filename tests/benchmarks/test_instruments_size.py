@@ -6,16 +6,10 @@ import json
 
 import pytest
 
+from tests.benchmarks.draws import rates
 from tests.benchmarks.instruments_size import DESIGNS, DRAWS, FIGURES, measure
 
 LIVE = 40
-
-
-def rates(rows: list[dict[str, object]]) -> dict[tuple[str, str], float]:
-    return {
-        (str(row["design"]), str(row["procedure"])): float(row["rate"])  # type: ignore[arg-type]
-        for row in rows
-    }
 
 
 @pytest.fixture(scope="module")

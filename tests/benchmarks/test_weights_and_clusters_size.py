@@ -6,17 +6,10 @@ import json
 
 import pytest
 
+from tests.benchmarks.draws import rates
 from tests.benchmarks.weights_and_clusters_size import DESIGNS, DRAWS, FIGURES, measure
 
 LIVE = 150
-
-
-def rates(rows: list[dict[str, object]]) -> dict[tuple[str, str], float]:
-    return {
-        (str(row["design"]), str(row["procedure"])): float(row["rate"])  # type: ignore[arg-type]
-        for row in rows
-        if "rate" in row
-    }
 
 
 @pytest.fixture(scope="module")

@@ -13,7 +13,6 @@ from __future__ import annotations
 
 import argparse
 import json
-from collections import defaultdict
 from collections.abc import Callable
 from pathlib import Path
 
@@ -36,6 +35,7 @@ from pipeline.estimators.switching import ON_TREATED, ON_UNTREATED, switching_re
 from pipeline.estimators.treatment import fitted_probability_instrument, treatment_two_step
 from pipeline.estimators.treatment_ml import treatment_likelihood
 from pipeline.estimators.weighting import entropy_balancing, weighting, weighting_treated
+from tests.benchmarks.draws import drawn, rejections
 from tests.benchmarks.estimators_size import TRUTH, candidates, design_of
 
 FIGURES = Path(__file__).parent / "figures" / "treatment_size.json"
@@ -257,23 +257,8 @@ def measure(name: str, draws: int) -> list[dict[str, object]]:
     """One row a procedure of the design."""
     draw, times = DESIGNS[name]
     draws = round(draws * times)
-    seeds = np.random.SeedSequence([20260302, list(DESIGNS).index(name)]).spawn(draws)
-    found: dict[str, list[float]] = defaultdict(list)
-    for seed in seeds:
-        for procedure, value in draw(np.random.default_rng(seed)).items():
-            found[procedure].append(float(value))
-    error = float(np.sqrt(0.05 * 0.95 / draws))
-    return [
-        {
-            "design": name,
-            "procedure": procedure,
-            "nominal": 0.05,
-            "rate": round(float(np.mean(values)), 4),
-            "monte_carlo_se": round(error, 4),
-            "draws": draws,
-        }
-        for procedure, values in found.items()
-    ]
+    found = drawn(draw, (20260302, list(DESIGNS).index(name)), draws)
+    return rejections(name, found, draws)
 
 
 def main() -> None:

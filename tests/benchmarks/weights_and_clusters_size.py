@@ -13,7 +13,6 @@ from __future__ import annotations
 
 import argparse
 import json
-from collections import defaultdict
 from collections.abc import Callable, Iterable
 from dataclasses import replace
 from pathlib import Path
@@ -31,6 +30,7 @@ from pipeline.estimators.least_squares import fixed_effects, ols
 from pipeline.estimators.robust_location import huber, median
 from pipeline.estimators.sample import plain, within
 from pipeline.estimators.variance_weighted import variance_weighted
+from tests.benchmarks.draws import drawn, rejections
 from tests.benchmarks.estimators_size import TRUTH, Outcome, design_of, rejected
 
 FIGURES = Path(__file__).parent / "figures" / "weights_and_clusters_size.json"
@@ -177,25 +177,8 @@ DESIGNS: dict[str, Callable[[RANDOM], Outcome]] = {
 
 def measure(name: str, draws: int) -> list[dict[str, object]]:
     """One row a procedure of the design: rates, then median bias and spread of the estimates."""
-    seeds = np.random.SeedSequence([20260302, list(DESIGNS).index(name)]).spawn(draws)
-    found: dict[str, list[float]] = defaultdict(list)
-    for seed in seeds:
-        for procedure, value in DESIGNS[name](np.random.default_rng(seed)).items():
-            found[procedure].append(float(value))
-    error = round(float(np.sqrt(0.05 * 0.95 / draws)), 4)
-    rates: list[dict[str, object]] = [
-        {
-            "design": name,
-            "procedure": procedure,
-            "nominal": 0.05,
-            "rate": round(float(np.mean(values)), 4),
-            "monte_carlo_se": error,
-            "draws": draws,
-        }
-        for procedure, values in found.items()
-        if not procedure.startswith("_")
-    ]
-    return rates + list(_spreads(name, found, draws))
+    found = drawn(DESIGNS[name], (20260302, list(DESIGNS).index(name)), draws)
+    return rejections(name, found, draws) + list(_spreads(name, found, draws))
 
 
 def _spreads(name: str, found: dict[str, list[float]], draws: int) -> Iterable[dict[str, object]]:
