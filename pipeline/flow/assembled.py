@@ -5,13 +5,15 @@ from __future__ import annotations
 from dataclasses import replace
 from typing import Any
 
+import pandas as pd
+
 from pipeline.characteristics.design import Prepared
 from pipeline.characteristics.outcomes import (
     deals_frame,
     group_names,
 )
 from pipeline.core.abnormal import AbnormalReturns
-from pipeline.core.estimate import Column, Withheld
+from pipeline.core.estimate import Column, Diagnostic, Withheld
 from pipeline.core.findings import findings_frame
 from pipeline.core.results import Results
 from pipeline.core.scrutiny import direction_frame, together
@@ -23,6 +25,7 @@ from pipeline.core.tables import (
     ladder_frame,
     no_frame,
 )
+from pipeline.core.window import Window
 from pipeline.flow.doubted import Doubts
 from pipeline.flow.explained import deals_with_outcomes, lead_of
 from pipeline.flow.horizons import longer_horizons
@@ -57,15 +60,9 @@ def results_of(
     facts = plan.facts(study, leading, measured.windows)
     deals = prepared.deals if prepared else deals_with_outcomes(study, measured)
     groups = group_names(deals, facts.treatment, facts.groups)
-    table = deals_frame(deals, groups)
     lead = None if ready else measured.abnormal[study.expected_returns.headline]
-    checks = sample_checks(lead, facts.headline, deals) if lead else ()
-    for column in columns:
-        checks += () if isinstance(column, Withheld) else column.checks
-    checks += doubts.checks
     longer = longer_horizons(study, measured)
     ledger = measured.ledger.then(*longer.stages, *((prepared.ledger,) if prepared else ()))
-    findings = measured.findings + (prepared.findings if prepared else ())
     mean = None
     if lead:
         mean = mean_variants(
@@ -74,15 +71,15 @@ def results_of(
     results = Results(
         study=facts,
         abnormal=measured.abnormal,
-        deals=table,
+        deals=deals_frame(deals, groups),
         window_tests=found,
         columns=columns,
         lead=lead_of(columns),
         paths=no_frame(),
-        diagnostics=diagnostics_frame(checks),
+        diagnostics=diagnostics_frame(_checks(lead, facts.headline, deals, columns, doubts)),
         sensitivity=together(mean, doubts.variants),
         ledger=ledger,
-        findings=findings,
+        findings=measured.findings + (prepared.findings if prepared else ()),
         tables={},
         summary=summary_of(study, deals, groups, facts),
         calendar_time=longer.calendar_time,
@@ -94,25 +91,23 @@ def results_of(
         specifications=doubts.specifications[0] if doubts.specifications else no_frame(),
         curve=doubts.specifications[1] if doubts.specifications else no_frame(),
     )
-    tables = {
-        "deals": table,
-        "estimates": estimates_frame(columns, facts.explained),
-        "diagnostics": results.diagnostics,
-        "sensitivity": results.sensitivity,
-        "ledger": ledger.frame(),
-        "findings": findings_frame(findings),
-        "ladder": results.ladder,
-        "directions": results.directions,
-        "specifications": results.specifications,
-        "curve": results.curve,
-        **doubts.tables,
-    }
     if lead:
         results = _with_reaction(results, study, measured, lead, groups, deals, placebo)
-        tables |= _reaction_tables(results)
-    else:
-        tables["summary"] = results.summary
-    return replace(results, tables={**tables, "headline": headline_frame(results)})
+    tables = {**_tables(results), **doubts.tables, "headline": headline_frame(results)}
+    return replace(results, tables=tables)
+
+
+def _checks(
+    lead: AbnormalReturns | None,
+    headline: Window,
+    deals: pd.DataFrame,
+    columns: tuple[Column, ...],
+    doubts: Doubts,
+) -> tuple[Diagnostic, ...]:
+    """Those of the sample, of every column, and of what was doubted, in that order."""
+    of_sample = sample_checks(lead, headline, deals) if lead else ()
+    fitted = (column for column in columns if not isinstance(column, Withheld))
+    return (*of_sample, *(check for column in fitted for check in column.checks), *doubts.checks)
 
 
 def _with_reaction(
@@ -149,8 +144,24 @@ def _with_reaction(
     )
 
 
-def _reaction_tables(results: Results) -> dict[str, Any]:
+def _tables(results: Results) -> dict[str, Any]:
+    """Every table that is saved, but what the doubts add and the headline."""
+    saved = {
+        "deals": results.deals,
+        "estimates": estimates_frame(results.columns, results.study.explained),
+        "diagnostics": results.diagnostics,
+        "sensitivity": results.sensitivity,
+        "ledger": results.ledger.frame(),
+        "findings": findings_frame(results.findings),
+        "ladder": results.ladder,
+        "directions": results.directions,
+        "specifications": results.specifications,
+        "curve": results.curve,
+    }
+    if not results.abnormal:
+        return {**saved, "summary": results.summary}
     return {
+        **saved,
         "abnormal_returns": abnormal_returns_frame(results.abnormal),
         "event_tests": event_tests_frame(results.window_tests),
         "paths": results.paths,
