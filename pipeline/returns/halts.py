@@ -20,11 +20,12 @@ def past_halts(
     calendars: Mapping[str, Sessions],
     options: EventOptions,
 ) -> tuple[pd.DataFrame, StageLedger]:
-    """Move day zero past sessions of a halt: volume zero and the close of the session before.
+    """Move day zero past sessions of a halt: without a close, or volume zero and the last close.
 
-    The first price that shows the news is that of the next trade. Day zero stays where volume is
-    not known, where no trade follows within ``options.longest_halt`` sessions, and where the
-    headline window would leave the history.
+    The first price that shows the news is that of the next trade. Day zero stays where closes
+    repeat and volume is not known, where no trade follows within ``options.longest_halt``
+    sessions, and where the headline window would leave the history. Whether a deal is measured
+    across the gap is for the policy of missing closes to say.
 
     Args:
         located: deal_id, exchange, column, position, day_zero, day_zero_close, day_zero_reason.
@@ -70,8 +71,13 @@ def _clock(sessions: Sessions, at: int) -> str:
 
 def _next_trade(panel: PricePanel, column: int, position: int, longest: int) -> int:
     """The first session from ``position`` on that traded; ``position`` if no halt is seen."""
-    until = min(position + longest, len(panel.sessions) - 1)
-    for at in range(position, until + 1):
-        if panel.volume[at, column] != 0 or panel.close[at, column] != panel.close[at - 1, column]:
-            return at if panel.volume[at, column] > 0 else position
+    close, volume = panel.close[:, column], panel.volume[:, column]
+    before = close[:position][np.isfinite(close[:position])]
+    if not len(before):
+        return position
+    absent = np.isnan(close[position])
+    for at in range(position, min(position + longest, len(close) - 1) + 1):
+        if np.isnan(close[at]) or (volume[at] == 0 and close[at] == before[-1]):
+            continue
+        return at if absent or volume[at] > 0 else position
     return position

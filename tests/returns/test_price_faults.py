@@ -391,6 +391,22 @@ def test_day_zero_of_a_halted_share_is_its_next_trade(tmp_path: Path) -> None:
     assert not any(rule == "halted" for _, rule, _ in stays.ledger)
 
 
+def test_day_zero_without_a_price_is_the_next_one_where_gaps_are_lumped(tmp_path: Path) -> None:
+    made = market()
+    put(EVENT, np.nan, EVENT + 2)(made)
+    made.closes.iloc[EVENT + 3 :, 0] *= 1.2
+    lumped(made)
+    told = said(tmp_path, made)
+    assert ("D0", "halted", "changed") in told.ledger
+    assert told.measured is not None
+    row = told.measured.deals.set_index("deal_id").loc["D0"]
+    assert str(row["day_zero"])[:10] == str(SESSIONS[EVENT + 3])
+    found = told.measured.abnormal["market_model"]
+    at = found.deals.index("D0")
+    assert np.isfinite(found.returns[at]).all()
+    assert found.returns[at, -found.span.start] == pytest.approx(0.2, abs=0.08)
+
+
 def test_a_deal_without_returns_under_another_model_stays(tmp_path: Path) -> None:
     made = market()
     short_factor(made)

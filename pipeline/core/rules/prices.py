@@ -85,7 +85,7 @@ RULES = (
     Rule(
         "halted",
         "Not traded on day zero",
-        "Volume was zero and the price that of the session before.",
+        "There was no price, or volume was zero and the price that of the session before.",
         "The first price that shows the news is that of the next trade.",
         "None needed: day zero is the session of the next trade.",
     ),
