@@ -12,7 +12,7 @@ from pipeline.core.estimate import TestResult
 from pipeline.core.prices import Integers
 from pipeline.core.tables import typed_frame
 from pipeline.core.window import Window
-from pipeline.significance.dependence import Links
+from pipeline.significance.dependence import Known
 from pipeline.significance.sample import car_sample
 from pipeline.significance.windows import TestFunction
 
@@ -33,7 +33,7 @@ def placebo_sizes(
     samples: Iterable[tuple[Integers, AbnormalReturns]],
     window: Window,
     tests: Mapping[str, TestFunction],
-    known: Links,
+    known: Known,
     mean: float,
     size: float,
 ) -> pd.DataFrame:

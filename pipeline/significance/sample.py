@@ -10,7 +10,7 @@ from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.prices import Dates, Floats, Integers
 from pipeline.core.sessions import SessionRuns
 from pipeline.core.window import Window
-from pipeline.significance.dependence import Dependence, Links, dependence, links
+from pipeline.significance.dependence import Dependence, Known, dependence, links
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -80,7 +80,7 @@ def car_sample(
     abnormal: AbnormalReturns,
     window: Window,
     share_of_days: float,
-    known: Links | None = None,
+    known: Known | None = None,
     seed: int = 20260301,
 ) -> CarSample:
     """The deals that traded on enough days of ``window``, as a sample.

@@ -29,7 +29,7 @@ from pipeline.returns.expected import market_model
 from pipeline.returns.measure import measure
 from pipeline.returns.repeats import settle_repeats
 from pipeline.returns.sessions import Sessions, sessions_between
-from pipeline.significance.dependence import pairwise
+from pipeline.significance.pairs import pairwise
 from pipeline.significance.sample import car_sample
 from tests.returns.panels import (
     ESTIMATION,

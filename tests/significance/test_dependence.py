@@ -15,7 +15,8 @@ import pytest
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.window import Window
-from pipeline.significance.dependence import COMMON_DAYS, dependence, links, overlap, pairwise
+from pipeline.significance.dependence import dependence, links
+from pipeline.significance.pairs import COMMON_DAYS, overlap, pairwise
 from pipeline.significance.sample import car_sample
 from tests.significance.samples import WINDOW, clustered, linked
 
