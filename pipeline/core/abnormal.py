@@ -180,8 +180,8 @@ class AbnormalReturns:
         return ARRAYS + tuple(name for name in OPTIONAL if getattr(self, name) is not None)
 
     def select(self, keep: Booleans) -> AbnormalReturns:
-        """The events where ``keep`` (N,) is true."""
-        return self.take(np.flatnonzero(keep))
+        """The events where ``keep`` (N,) is true; the same object if that is all of them."""
+        return self if keep.all() else self.take(np.flatnonzero(keep))
 
     def take(self, rows: Integers | slice) -> AbnormalReturns:
         """The events at ``rows``, in that order; a slice looks at them in place."""

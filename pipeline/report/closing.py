@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import islice
+
 import pandas as pd
 
 from pipeline.core.estimate import Estimate, TestResult
@@ -17,7 +19,7 @@ from pipeline.report.document import (
     Text,
 )
 from pipeline.report.horizons import horizon_sources
-from pipeline.report.material import Material, capital, prose, taken
+from pipeline.report.material import MOST_ROWS, Material, capital, prose, rows_left_out, taken
 from pipeline.report.numerals import plain, true_minus
 from pipeline.report.reaction import other_models_section
 from pipeline.report.wording import axis_words, joined, spoken
@@ -186,10 +188,11 @@ def ledger_table(material: Material) -> Table:
             Text(spoken(stage)), Text(e.deal), Text(rule_title(e.rule)), Text(str(e.action)),
             Text(true_minus(e.value)), Text(true_minus(e.threshold)),
         )
-        for stage, e in material.results.ledger
+        for stage, e in islice(material.results.ledger, MOST_ROWS)
     )  # fmt: skip
     title = prose("Every deal dropped, changed or flagged")
-    return Table("ledger", title, columns, rows, shown=LEDGER_SHOWN)
+    notes = rows_left_out(sum(1 for _ in material.results.ledger), "ledger")
+    return Table("ledger", title, columns, rows, notes, shown=LEDGER_SHOWN)
 
 
 def findings_table(material: Material) -> Table:

@@ -17,6 +17,16 @@ from pipeline.report.document import Key, Paragraph, Piece, Quote, Verbatim
 from pipeline.report.headline import effect_name, headline_frame
 from pipeline.report.numerals import LEAST_P, PERCENT, show, true_minus, unit_digits
 
+# Rows of a table of deals in a document; a sheet holds a million, a reader far fewer.
+MOST_ROWS = 100_000
+
+
+def rows_left_out(total: int, table: str) -> tuple[Paragraph, ...]:
+    """The note of a table that stops after ``MOST_ROWS`` rows, if it does."""
+    if total <= MOST_ROWS:
+        return ()
+    return (prose(f"The first {MOST_ROWS:,} of {total:,} rows. All are in data/{table}.parquet."),)
+
 
 def prose(*pieces: Piece | tuple[Piece, ...], lead: str = "") -> Paragraph:
     """A paragraph of pieces and runs of pieces; empty words are left out."""

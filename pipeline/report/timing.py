@@ -5,7 +5,7 @@ from __future__ import annotations
 import pandas as pd
 
 from pipeline.report.document import Block, Column, Interval, Section, Statistic, Table, Text
-from pipeline.report.material import Material, capital, prose
+from pipeline.report.material import MOST_ROWS, Material, capital, prose, rows_left_out
 from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, plain
 from pipeline.report.wording import level_words
 
@@ -64,9 +64,11 @@ def day_zero_table(deals: pd.DataFrame) -> Table:
             Text(str(deal)), Text(exchange), Text(stamp), Text(capital(kind)),
             Text(f"{day:%Y-%m-%d}"), Text(close), Text(f"{why}."),
         )
-        for deal, exchange, stamp, kind, day, close, why in deals[names].itertuples(index=False)
+        for deal, exchange, stamp, kind, day, close, why
+        in deals[names].head(MOST_ROWS).itertuples(index=False)
     )  # fmt: skip
-    return Table("day_zero", prose("Day zero of each deal, and why"), columns, rows, shown=SHOWN)
+    title, notes = prose("Day zero of each deal, and why"), rows_left_out(len(deals), "deals")
+    return Table("day_zero", title, columns, rows, notes, shown=SHOWN)
 
 
 def readings_table(material: Material) -> Table:

@@ -170,22 +170,57 @@ def masked_sessions(
         around: sessions either side.
         panels: exchange -> prices.
     """
-    days = np.arange(estimation.start, estimation.end + 1)
-    masked = np.zeros((len(kept), len(days)), dtype=np.bool_)
-    names = ["exchange", "position", "day_zero"]
-    others = {
-        security: list(rows.itertuples(index=False, name=None))
-        for security, rows in located.groupby("security")[names]
-    }
-    places = zip(kept["security"], kept["exchange"], kept["position"], strict=True)
-    for row, (security, exchange, position) in enumerate(places):
-        for there, session, day in others[security]:
-            here = session
-            if there != exchange:
-                here = np.searchsorted(panels[exchange].sessions, np.datetime64(day, "D"))
-            if here != position:
-                masked[row] |= np.abs(position + days - here) <= around
+    masked = np.zeros((len(kept), len(estimation)), dtype=np.bool_)
+    at = kept["position"].to_numpy(np.int64)
+    codes = pd.Index(located["security"].unique())
+    own, others = codes.get_indexer(kept["security"]), codes.get_indexer(located["security"])
+    for exchange in kept["exchange"].unique():
+        rows = np.flatnonzero((kept["exchange"] == exchange).to_numpy())
+        here = _sessions_here(located, exchange, panels)
+        first = at[rows] + estimation.start
+        row, session = _near(own[rows], first, others, here, len(estimation), around)
+        apart = session != at[rows][row]
+        row, session = rows[row[apart]], session[apart]
+        for step in range(-around, around + 1):
+            day = session + step - at[row] - estimation.start
+            inside = (day >= 0) & (day < len(estimation))
+            masked[row[inside], day[inside]] = True
     return masked
+
+
+def _sessions_here(
+    located: pd.DataFrame, exchange: str, panels: Mapping[str, PricePanel]
+) -> Integers:
+    """(m,) day zero of every deal on this exchange: its own there, else the first from its day."""
+    here = located["position"].to_numpy(np.int64).copy()
+    away = (located["exchange"] != exchange).to_numpy()
+    if away.any():
+        days = located["day_zero"].to_numpy()[away].astype("datetime64[D]")
+        here[away] = panels[exchange].sessions.searchsorted(days)
+    return here
+
+
+def _near(
+    own: Integers, first: Integers, others: Integers, here: Integers, length: int, around: int
+) -> tuple[Integers, Integers]:
+    """Pairs of a row and the session of a deal of its company near the row's run of sessions.
+
+    Args:
+        own: (n,) company of each row.
+        first: (n,) first session of each run of ``length``.
+        others: (m,) company of each deal.
+        here: (m,) its session.
+        around: sessions that a deal may lie before or after the run.
+    """
+    base = min(int(first.min()) - around, int(here.min(initial=0)))
+    width = max(int(first.max()) + length + around, int(here.max(initial=0))) - base + 1
+    key = np.sort(others * width + here - base)
+    low = np.searchsorted(key, own * width + first - around - base)
+    high = np.searchsorted(key, own * width + first + length - 1 + around - base, side="right")
+    count = high - low
+    row = np.repeat(np.arange(len(own)), count)
+    place = np.arange(len(row)) - np.repeat(np.cumsum(count) - count, count) + low[row]
+    return row, key[place] % width + base
 
 
 def locate_candidates(candidates: pd.DataFrame, panels: Mapping[str, PricePanel]) -> pd.DataFrame:

@@ -69,7 +69,8 @@ def simultaneous_reach(own: Floats, mean: Floats, error: Floats, level: float, s
     """How many standard errors hold the whole path at ``level``: max-|t| multiplier bootstrap.
 
     t*(day) = sum of g_i (x_i - mean) / (n error) with g standard normal, one g a deal for all its
-    days (Chernozhukov, Chetverikov and Kato 2013, Annals of Statistics 41). Deals with a gap are
+    days (Chernozhukov, Chetverikov and Kato 2013, Annals of Statistics 41). Given the deals, t* is
+    normal with the covariance of the deals' own terms, and drawn as such. Deals with a gap are
     left out of the draws; NaN with fewer than two whole paths.
     """
     whole = own[np.isfinite(own).all(axis=1)]
@@ -77,5 +78,7 @@ def simultaneous_reach(own: Floats, mean: Floats, error: Floats, level: float, s
     if len(whole) < 2 or not usable.any():
         return float("nan")
     scaled = (whole - mean)[:, usable] / (len(whole) * error[usable])
-    draws = np.random.default_rng(seed).standard_normal((DRAWS, len(whole))) @ scaled
+    size, axes = np.linalg.eigh(scaled.T @ scaled)
+    root = (axes * np.sqrt(np.maximum(size, 0.0))) @ axes.T
+    draws = np.random.default_rng(seed).standard_normal((DRAWS, len(size))) @ root
     return float(np.quantile(np.abs(draws).max(axis=1), level))

@@ -103,3 +103,26 @@ def test_the_section_is_in_the_report_and_its_page(run: Results) -> None:
 def test_without_readings_or_without_a_day_zero(run: Results) -> None:
     assert "readings" not in tables(replace(run, readings=pd.DataFrame()))
     assert timing_section(Material.of(full_run())) is None
+
+
+def test_a_table_of_very_many_deals_stops_and_says_so(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Excel's sheets end at 1,048,576 rows; what a document leaves out stands in data."""
+    from pipeline.report import material, timing
+
+    for room in (timing, material):
+        monkeypatch.setattr(room, "MOST_ROWS", 2)
+    deals = pd.DataFrame(
+        {
+            "deal": ["D1", "D2", "D3"],
+            "exchange": "XLON",
+            "announced_local": "09:00",
+            "timing": "before the open",
+            "day_zero": pd.Timestamp("2020-01-02"),
+            "day_zero_close": "16:30",
+            "day_zero_reason": "It was before the open",
+        }
+    )
+    table = timing.day_zero_table(deals)
+    assert [row[0].text for row in table.rows] == ["D1", "D2"]  # type: ignore[union-attr]
+    assert "The first 2 of 3 rows" in table.notes[0].text
+    assert timing.day_zero_table(deals.head(2)).notes == ()
