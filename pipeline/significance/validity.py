@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
+from dataclasses import dataclass, field
 
 import numpy as np
 from scipy import special, stats
@@ -101,6 +102,16 @@ CHECKS: dict[str, Callable[[CarSample], str]] = {
 }
 
 
-def doubt(assumes: Sequence[str], sample: CarSample) -> str:
-    """Why a test with these assumptions does not hold in the sample; '' if it does."""
-    return "; ".join(reason for name in assumes if (reason := CHECKS[name](sample)))
+@dataclass(frozen=True, slots=True)
+class Reasons:
+    """What speaks against assumptions in one sample; each is looked at once."""
+
+    sample: CarSample
+    known: dict[str, str] = field(default_factory=dict)
+
+    def against(self, assumes: Sequence[str]) -> str:
+        """Why a test with these assumptions does not hold in the sample; '' if it does."""
+        for name in assumes:
+            if name not in self.known:
+                self.known[name] = CHECKS[name](self.sample)
+        return "; ".join(self.known[name] for name in assumes if self.known[name])

@@ -14,7 +14,7 @@ from pipeline.core.results import WindowTests
 from pipeline.core.window import Window
 from pipeline.significance.dependence import links
 from pipeline.significance.sample import CarSample, car_sample
-from pipeline.significance.validity import doubt
+from pipeline.significance.validity import Reasons
 
 TestFunction = Callable[[CarSample], Tested]
 
@@ -57,10 +57,11 @@ def _tested(
 ) -> dict[str, Tested]:
     """Every test of a sample, each with the reason why it does not hold there, if any."""
     found: dict[str, Tested] = {}
+    reasons = Reasons(sample)
     for key, test in tests.items():
         result = test(sample)
         if isinstance(result, TestResult):
-            result = replace(result, doubt=doubt(assumes.get(key, ()), sample))
+            result = replace(result, doubt=reasons.against(assumes.get(key, ())))
         found[key] = result
     return found
 

@@ -12,7 +12,7 @@ from pipeline.core.window import Window
 from pipeline.registry import TESTS, entry
 from pipeline.significance.dependence import dependence
 from pipeline.significance.sample import CarSample, car_sample
-from pipeline.significance.validity import doubt
+from pipeline.significance.validity import Reasons
 from tests.returns.panels import fitted, panel_of_returns, weekdays
 from tests.significance.samples import ESTIMATION, SPAN, WINDOW, clustered
 
@@ -35,7 +35,8 @@ def two_industries(seed: int, share: float = 0.4) -> AbnormalReturns:
 
 def doubts(sample: CarSample) -> dict[str, str]:
     keys = (*INDEPENDENT, "dependence_adjusted", "date_bootstrap", "rank")
-    return {key: doubt(entry(TESTS, key).assumes, sample) for key in keys}
+    reasons = Reasons(sample)
+    return {key: reasons.against(entry(TESTS, key).assumes) for key in keys}
 
 
 def test_industries_that_move_against_one_another_hide_nothing() -> None:
