@@ -80,7 +80,12 @@ def symmetric_daily(sample: CarSample) -> str:
     if sample.series is None:
         return ""
     standardised = sample.series.estimation / sample.series.residual_sd[:, None]
-    skew = float(stats.skew(standardised[np.isfinite(standardised)]))
+    values = standardised[np.isfinite(standardised)]
+    if not len(values):
+        return ""
+    values -= values.mean()
+    squares = values * values
+    skew = float(np.vdot(squares, values) / len(values) / squares.mean() ** 1.5)
     return f"daily returns are skewed ({skew:.1f})" if abs(skew) > SKEWED else ""
 
 

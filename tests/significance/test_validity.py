@@ -12,7 +12,7 @@ from pipeline.core.window import Window
 from pipeline.registry import TESTS, entry
 from pipeline.significance.dependence import dependence
 from pipeline.significance.sample import CarSample, car_sample
-from pipeline.significance.validity import Reasons
+from pipeline.significance.validity import Reasons, independent
 from tests.returns.panels import fitted, panel_of_returns, weekdays
 from tests.significance.samples import ESTIMATION, SPAN, WINDOW, clustered
 
@@ -62,8 +62,7 @@ def test_the_doubted_test_rejects_too_often_there() -> None:
 def test_independent_deals_are_not_doubted() -> None:
     """Of 100 samples of independent deals on one date, few are called dependent."""
     found = [
-        doubt(("independent",), car_sample(clustered(20, 1, 0.0, seed, 0), WINDOW, 1.0))
-        for seed in range(100)
+        independent(car_sample(clustered(20, 1, 0.0, seed, 0), WINDOW, 1.0)) for seed in range(100)
     ]
     assert sum(bool(reason) for reason in found) <= 8
 
@@ -79,7 +78,7 @@ def test_deals_that_never_meet_are_not_doubted() -> None:
     sample = car_sample(apart, WINDOW, 1.0)
     assert sample.dependence.mean > 10 * sample.dependence.noise
     assert sample.dependence.weighted == 0.0
-    assert doubt(("independent",), sample) == ""
+    assert independent(sample) == ""
 
 
 @pytest.mark.parametrize("window", [Window(0, 0), WINDOW])
@@ -95,7 +94,7 @@ def test_skewed_days_are_doubted_by_tests_that_scale_or_cumulate_before_they_ran
     skewed = fitted("market_model", panel, np.arange(20), position, ESTIMATION, SPAN)
     sample = car_sample(skewed, window, 1.0)
     found = {
-        key: "daily returns are skewed" in doubt(entry(TESTS, key).assumes, sample)
+        key: "daily returns are skewed" in Reasons(sample).against(entry(TESTS, key).assumes)
         for key in ("rank", "rank_event_variance", "generalised_rank")
     }
     several = len(window) > 1
