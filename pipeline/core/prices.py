@@ -34,6 +34,7 @@ class PricePanel:
         spans: (T, S) sessions each return covers, from 1 on; None if every return covers one.
         delisted: (S,) session that holds the return of the delisting, -1 where there is none; None
             without a table of delistings.
+        asked: (T, S) whether the price of the session was read; None if all were.
     """
 
     exchange: str
@@ -46,6 +47,7 @@ class PricePanel:
     factors: dict[str, Floats]
     spans: Integers | None = None
     delisted: Integers | None = None
+    asked: Booleans | None = None
 
     def __post_init__(self) -> None:
         shape = (len(self.sessions), len(self.securities))

@@ -40,6 +40,7 @@ from pipeline.significance.choice import leading_test
 from pipeline.significance.dependence import links
 from pipeline.significance.placebo import placebo_sizes
 from pipeline.study import plan, plan_events, plan_prices, plan_returns
+from pipeline.study.plan_reach import reach
 from pipeline.study.schema import Study
 
 
@@ -70,6 +71,7 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
             date_format=study.inputs.date_format,
             rules=plan_events.deal_rules(study),
             declared=plan_prices.quoted_files(study),
+            reach=reach(study),
         )
     with clock.stage("sessions and prices"):
         priced = price_panels(study, tables)

@@ -63,6 +63,7 @@ def price_panels(study: Study, tables: Tables) -> Priced:
         plan.calendar_changes(study),
         plan_prices.screen_limits(study),
         money,
+        tables.spans,
     )
     raise_errors(found)
     time = study.event_time

@@ -13,10 +13,12 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.inputs.date_formats import SERIALS, Cell, date_findings, serial_day, serial_doubt
-from pipeline.inputs.files import ROW, Source
+from pipeline.inputs.numerals import comma_remedy, lost_digits, with_points
+from pipeline.inputs.source import NOT_COMPUTED, ROW, Source
 
 MISSING_WORDS = {"", "n/a", "na", "#n/a", "nan", "none", "null", "-", ".", "nat"}
-ERROR_WORDS = {"#DIV/0!", "#REF!", "#VALUE!", "#NAME?", "#NUM!", "#NULL!", "#SPILL!", "#CALC!"}
+ERROR_WORDS = {"#DIV/0!", "#REF!", "#VALUE!", "#NAME?", "#NUM!", "#NULL!", "#SPILL!", "#CALC!",
+               NOT_COMPUTED}  # fmt: skip
 YES_OR_NO = {"true": 1.0, "yes": 1.0, "false": 0.0, "no": 0.0}
 ISO = re.compile(r"\d{4}-\d{2}-\d{2}([T ]\d{2}:\d{2}(:\d{2}(\.\d+)?)?(Z|[+-]\d{2}:?\d{2})?)?")
 EARLIEST, LATEST = pd.Timestamp("1950-01-01"), pd.Timestamp("2100-01-01")
@@ -64,6 +66,7 @@ def apply_contract(
         broken = _is_error(raw)
         findings += _error_cells(raw[broken], table.loc[broken, ROW], source, column)
         raw = raw.mask(broken) if broken.any() else raw
+        raw = with_points(raw, source) if column.kind == "number" else raw
         values, bad = _read(raw, column.kind, date_format)
         typed[column.name] = values
         if column.kind == "date":
@@ -72,6 +75,8 @@ def apply_contract(
             findings += serial_doubt(values, date_format, source.file, named)
         else:
             findings += _bad_cells(raw[bad], table.loc[bad, ROW], source, column)
+        if column.kind == "text":
+            findings += _lost_digits(raw, table[ROW], source, column)
         if column.filled:
             empty = is_missing(raw) & ~broken
             findings += _empty_cells(table.loc[empty, ROW], source, column)
@@ -214,6 +219,24 @@ def unknown_names(source: Source, columns: Sequence[Column]) -> list[Finding]:
     ]
 
 
+def unknown_units(source: Source, columns: Sequence[Column]) -> list[Finding]:
+    """An error for each unit declared of something that is no column of numbers of the table."""
+    known = [column.name for column in columns if column.kind == "number"]
+    return [
+        Finding(
+            "unknown_key",
+            Severity.ERROR,
+            "study file",
+            got=f"a unit of '{name}', which is no column of numbers that the study reads",
+            expected="one of " + ", ".join(known),
+            remedy="Correct the name, or delete the key.",
+            column=f"inputs.source.{source.table}.units.{name}",
+        )
+        for name in source.factors
+        if name not in known
+    ]
+
+
 def _absent(table: pd.DataFrame, source: Source, column: Column) -> Finding:
     theirs = source.columns.get(column.name, column.name)
     have = ", ".join(str(name) for name in table.columns if name != ROW)
@@ -245,8 +268,27 @@ def _bad_cells(cells: pd.Series, rows: pd.Series, source: Source, column: Column
             source.file,
             got=examples,
             expected=EXPECTED[column.kind],
-            remedy=REMEDY[column.kind],
+            remedy=comma_remedy(cells, source) or REMEDY[column.kind],
             row=row_list(rows),
+            column=source.columns.get(column.name, column.name),
+        )
+    ]
+
+
+def _lost_digits(raw: pd.Series, rows: pd.Series, source: Source, column: Column) -> list[Finding]:
+    """An error for codes of which a spreadsheet kept fifteen digits, or a power of ten."""
+    lost = lost_digits(raw)
+    if not lost.any():
+        return []
+    return [
+        Finding(
+            "lost_digits",
+            Severity.ERROR,
+            source.file,
+            got=", ".join(f"'{cell}'" for cell in raw[lost][:EXAMPLES]),
+            expected="codes with all their digits",
+            remedy="Format the column as text before the codes are put in, and export it again.",
+            row=row_list(rows[lost]),
             column=source.columns.get(column.name, column.name),
         )
     ]

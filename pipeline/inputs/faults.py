@@ -6,48 +6,55 @@ import csv
 from pathlib import Path
 
 from pipeline.core.findings import InputProblem, problem
+from pipeline.inputs.source import Source
 
 MARKS = ",;\t|"
+# The reader's own limit for a line.
+LONGEST = 2_000_000
 
 
-def csv_fault(path: Path, file: str) -> InputProblem | None:
-    """The first row that is not UTF-8, or that has more or fewer cells than the header.
-
-    Args:
-        path: the csv file.
-        file: its name in findings.
+def csv_fault(source: Source) -> InputProblem | None:
+    """The first row that is not in its encoding, is too long, or is no match for the header.
 
     Returns:
-        The problem to raise, or None if neither is found. Rows count from the header as row 1,
+        The problem to raise, or None if nothing is found. Rows count from the first line as row 1,
         blank ones included.
     """
     try:
-        with path.open(newline="", encoding="utf-8-sig") as text:
-            header = text.readline()
-            mark = max(MARKS, key=header.count)
+        with source.at.open(newline="", encoding=source.encoding or "utf-8-sig") as text:
+            for _ in range(source.header_row - 1):
+                text.readline(LONGEST)
+            header = text.readline(LONGEST)
+            mark = source.delimiter or max(MARKS, key=header.count)
             width = len(next(csv.reader([header], delimiter=mark), []))
-            for number, row in enumerate(csv.reader(text, delimiter=mark), start=2):
+            rows = csv.reader(text, delimiter=mark)
+            for number, row in enumerate(rows, start=source.header_row + 1):
                 if row and len(row) != width:
-                    return problem(
-                        "unreadable_file",
-                        file,
-                        got=f"{len(row)} cells",
-                        expected=f"{width} cells, as the header has",
-                        remedy=f"Complete the row, or put text that holds a '{mark}' in quotes.",
-                        row=str(number),
-                    )
+                    remedy = f"Complete the row, or put text that holds a '{mark}' in quotes."
+                    expected = f"{width} cells, as the header has"
+                    return _fault(source, f"{len(row)} cells", expected, remedy, number)
     except UnicodeDecodeError:
         return problem(
             "unreadable_file",
-            file,
+            source.file,
             got="a character of another encoding",
-            expected="text in UTF-8",
-            remedy="Save the table again as CSV in UTF-8.",
-            row=str(_first_undecodable(path)),
+            expected=f"text in {source.encoding or 'UTF-8'}",
+            remedy="Save the table again as CSV in UTF-8, or name the encoding it has: "
+            f"inputs.source.{source.table}.encoding = 'cp1252' is that of many spreadsheets.",
+            row=str(_first_undecodable(source.at)),
         )
     except csv.Error:
-        return None
+        number = source.header_row + rows.line_num
+        limit = f"cells of at most {csv.field_size_limit():,} characters"
+        remedy = "Look for a quotation mark that is never closed, or shorten the cell."
+        return _fault(source, "a cell that goes on and on", limit, remedy, number)
     return None
+
+
+def _fault(source: Source, got: str, expected: str, remedy: str, row: int) -> InputProblem:
+    return problem(
+        "unreadable_file", source.file, got=got, expected=expected, remedy=remedy, row=str(row)
+    )
 
 
 def _first_undecodable(path: Path) -> int:

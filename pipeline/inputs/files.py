@@ -1,49 +1,46 @@
-"""Reading a table from csv, parquet or xlsx, rows numbered as the person sees them."""
+"""Reading a table from any source, rows numbered as the person sees them."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
-from pathlib import Path
+from collections.abc import Iterator, Mapping, Sequence
+from contextlib import contextmanager
+from dataclasses import replace
 from zipfile import BadZipFile
 
 import duckdb
 import pandas as pd
 
-from pipeline.core.findings import problem
+from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.inputs.faults import MARKS, csv_fault
+from pipeline.inputs.plain import plain_rows
+from pipeline.inputs.relations import (
+    Relation,
+    code_of,
+    day_of,
+    header_of,
+    opened,
+    select,
+    touched,
+)
+from pipeline.inputs.source import KINDS, ROW, Only, Source
+from pipeline.inputs.wide import columns_of_codes, laid_long, melted, recognised
+from pipeline.inputs.workbook import read_sheet, sheet_header
 
-ROW = "_row"
-READERS = {".parquet": "read_parquet(?)", ".csv": "read_csv(?, all_varchar=true, header=true)"}
-FIRST_ROW = "SELECT * FROM read_csv(?, all_varchar=true, header=false) LIMIT 1"
-KINDS = (".csv", ".parquet", ".xlsx")
+__all__ = ["ROW", "Only", "Source", "read_plain", "read_table", "seen_layout"]
 
-
-@dataclass(frozen=True, slots=True)
-class Source:
-    """Where one table is.
-
-    ``columns`` maps our names to the names in the file, for those that differ.
-    """
-
-    table: str
-    path: Path
-    columns: Mapping[str, str] = field(default_factory=dict)
-    sheet: str = ""
-
-    @property
-    def kind(self) -> str:
-        """The ending of the file's name, in lower case."""
-        return self.path.suffix.lower()
-
-    @property
-    def file(self) -> str:
-        """The file as named in findings."""
-        return self.path.name + (f", sheet {self.sheet}" if self.sheet else "")
+LONGEST_MESSAGE = 300
+REMEDY = {
+    ".xlsx": "Open the file, check the sheet and its first row, and save it again.",
+    ".duckdb": "Check the name of the table, or the query, in inputs.source.",
+}
+UNREADABLE = (duckdb.Error, BadZipFile, ValueError, KeyError, OSError)
 
 
 def read_table(
-    source: Source, wanted: Sequence[str] | None = None, only: tuple[str, list[str]] | None = None
+    source: Source,
+    wanted: Sequence[str] | None = None,
+    only: Only | None = None,
+    date_format: str = "",
 ) -> pd.DataFrame:
     """The raw cells of a table under our column names, plus ``_row``.
 
@@ -51,7 +48,8 @@ def read_table(
         source: the file.
         wanted: our names of the columns to read; all if None. Names the file lacks are left out,
             the contract reports them.
-        only: one of our columns and the values to keep (parquet and csv only read those rows).
+        only: the securities and dates to keep; all but workbooks read those rows alone.
+        date_format: the study's, to compare dates written in it.
 
     Returns:
         The table. ``_row`` counts from the header as row 1, as a spreadsheet does; lines above
@@ -61,9 +59,9 @@ def read_table(
         InputProblem: if the file is absent, of an unknown kind, unreadable or empty.
     """
     _refuse_path(source)
-    raw = _raw(source, wanted, only)
-    ours = _ours(source, list(raw.columns))
-    table = raw[[*ours, ROW]].rename(columns=ours)
+    raw = _raw(source, wanted, only, date_format)
+    ours = _ours(source, list(raw.columns)) if not source.wide else {}
+    table = raw[[*ours, ROW]].rename(columns=ours) if ours else raw
     if wanted is None:
         table = table[~_blank(table)].reset_index(drop=True)
     if table.empty and only is None:
@@ -84,12 +82,12 @@ def _blank(table: pd.DataFrame) -> pd.Series:
 
 
 def _refuse_path(source: Source) -> None:
-    if not source.path.is_file():
+    if not source.at.is_file():
         raise problem(
             "missing_file",
             source.path.name,
             column=f"inputs.{source.table}",
-            got=f"no file at {source.path}",
+            got=f"no file at {source.at}",
             expected="an existing file",
             remedy="Correct the path; it counts from the folder of the study file that names it.",
         )
@@ -104,24 +102,27 @@ def _refuse_path(source: Source) -> None:
 
 
 def _raw(
-    source: Source, wanted: Sequence[str] | None, only: tuple[str, list[str]] | None
+    source: Source, wanted: Sequence[str] | None, only: Only | None, date_format: str
 ) -> pd.DataFrame:
     """The cells under the file's own names; what is wrong with a csv is said by row."""
     is_csv = source.kind == ".csv"
     try:
         _refuse_repeats(source, _header(source))
-        raw = _excel(source) if source.kind == ".xlsx" else _query(source, wanted, only)
-    except (duckdb.Error, BadZipFile, ValueError, KeyError, OSError) as fault:
-        found = csv_fault(source.path, source.file) if is_csv else None
+        if source.kind == ".xlsx":
+            raw = _sheet_cells(source, only)
+        else:
+            raw = _query(source, wanted, only, date_format)
+    except UNREADABLE as fault:
+        found = csv_fault(source) if is_csv else None
         raise found or problem(
             "unreadable_file",
             source.file,
-            got=str(fault).splitlines()[0],
+            got=(str(fault).splitlines() or [type(fault).__name__])[0][:LONGEST_MESSAGE],
             expected="a table with a header in its first row",
-            remedy="Open the file, check the sheet and its first row, and save it again.",
+            remedy=REMEDY.get(source.kind, "Open the file, look at its header, and save it again."),
         ) from None
     if is_csv and (raw.empty or _one_cell_a_row(raw)):
-        found = csv_fault(source.path, source.file)
+        found = csv_fault(source)
         if found is not None:
             raise found
     return raw
@@ -162,18 +163,7 @@ def _loose(name: str) -> str:
 
 
 def _header(source: Source) -> list[str]:
-    """The names in the first row, before a reader makes repeated ones differ."""
-    if source.kind == ".xlsx":
-        with pd.ExcelFile(source.path, engine="openpyxl") as book:
-            sheet = _sheet(source, book)
-            first = pd.read_excel(book, sheet_name=sheet, header=None, nrows=1, dtype=object)
-        return [str(name) for name in first.to_numpy().ravel() if pd.notna(name)]
-    with duckdb.connect() as base:
-        if source.kind == ".csv":
-            base.execute(FIRST_ROW, [str(source.path)])
-            return [str(name) for name in base.fetchone() or () if name is not None]
-        shape = base.execute(f"SELECT * FROM {READERS[source.kind]} LIMIT 0", [str(source.path)])
-        return [column[0] for column in shape.description or ()]
+    return sheet_header(source) if source.kind == ".xlsx" else header_of(source)
 
 
 def _refuse_repeats(source: Source, header: list[str]) -> None:
@@ -181,7 +171,8 @@ def _refuse_repeats(source: Source, header: list[str]) -> None:
     declared = {theirs: ours for ours, theirs in source.columns.items()}
     alike: dict[str, list[str]] = {}
     for name in header:
-        alike.setdefault(declared.get(name, _loose(name)), []).append(name)
+        ours = name if source.wide else declared.get(name, _loose(name))
+        alike.setdefault(ours, []).append(name)
     for ours, names in alike.items():
         chosen = [name for name in names if name == source.columns.get(ours)] or names
         if len(chosen) > 1:
@@ -195,49 +186,101 @@ def _refuse_repeats(source: Source, header: list[str]) -> None:
             )
 
 
-def _sheet(source: Source, book: pd.ExcelFile) -> str:
-    sheet = source.sheet or str(book.sheet_names[0])
-    if sheet not in book.sheet_names:
-        raise ValueError(f"no sheet '{sheet}'; it has {', '.join(map(str, book.sheet_names))}")
-    return sheet
-
-
-def _excel(source: Source) -> pd.DataFrame:
-    with pd.ExcelFile(source.path, engine="openpyxl") as book:
-        sheet = _sheet(source, book)
-        table = pd.read_excel(book, sheet_name=sheet, dtype=object, keep_default_na=False)
-        if table.isna().any(axis=None):  # the reader turns every error cell into NaN
-            written = pd.DataFrame(book.book[sheet].iter_rows(min_row=2, values_only=True))
-            written = written.iloc[: len(table), : table.shape[1]].set_axis(table.columns, axis=1)
-            table = table.where(table.notna(), written)
-    table[ROW] = range(2, len(table) + 2)
-    return table
+def _sheet_cells(source: Source, only: Only | None) -> pd.DataFrame:
+    table = read_sheet(source)
+    if not source.wide:
+        return table
+    date, codes = _laid_out(source, [str(name) for name in table.columns], only)
+    return melted(table, source, date, codes)
 
 
 def _query(
-    source: Source,
-    wanted: Sequence[str] | None,
-    only: tuple[str, list[str]] | None,
+    source: Source, wanted: Sequence[str] | None, only: Only | None, date_format: str
 ) -> pd.DataFrame:
-    with duckdb.connect() as base:
-        base.execute("SET TimeZone = 'UTC'")
-        shape = base.execute(f"SELECT * FROM {READERS[source.kind]} LIMIT 0", [str(source.path)])
-        ours = _ours(source, [column[0] for column in shape.description or ()])
+    with _laid(source, only) as (relation, ours):
         kept = [name for name in ours if wanted is None or ours[name] in wanted]
-        chosen = ", ".join(_quoted(name) for name in kept)
-        query = (
-            f"SELECT {chosen + ', ' if chosen else ''}{ROW} FROM (SELECT *, "
-            f"row_number() OVER () + 1 AS {ROW} FROM {READERS[source.kind]})"
+        condition = _touched(relation, ours, only, date_format)
+        return relation.base.execute(select(relation, kept, condition)).df()
+
+
+def read_plain(
+    source: Source, value: str, only: Only | None, date_format: str
+) -> pd.DataFrame | None:
+    """The typed rows of a price table if all is written plainly; see :mod:`pipeline.inputs.plain`.
+
+    Raises:
+        InputProblem: as :func:`read_table` does.
+    """
+    if only is None or source.kind == ".xlsx" or source.decimal or source.factors:
+        return None
+    _refuse_path(source)
+    try:
+        _refuse_repeats(source, _header(source))
+        with _laid(source, only) as (relation, ours):
+            return plain_rows(relation, ours, value, only, date_format)
+    except UNREADABLE:
+        return None
+
+
+@contextmanager
+def _laid(source: Source, only: Only | None) -> Iterator[tuple[Relation, dict[str, str]]]:
+    """The open table with a row a code and date, and its columns -> our names."""
+    with opened(source) as relation:
+        if source.wide:
+            date, codes = _laid_out(source, list(relation.kinds), only)
+            relation = laid_long(relation, source, date, codes)
+            yield relation, {name: name for name in relation.kinds}
+        else:
+            yield relation, _ours(source, list(relation.kinds))
+
+
+def _touched(
+    relation: Relation, ours: Mapping[str, str], only: Only | None, date_format: str
+) -> str:
+    """The condition on the rows that a study touches; '' where it cannot be put."""
+    theirs = {our: name for name, our in ours.items()}
+    if only is None or "security" not in theirs:
+        return ""
+    code = code_of(theirs["security"], relation.kinds[theirs["security"]])
+    day = "CAST(NULL AS DATE)"
+    if "date" in theirs:
+        day = day_of(theirs["date"], relation.kinds[theirs["date"]], date_format)
+    return touched(relation, code, day, only)
+
+
+def _laid_out(source: Source, names: list[str], only: Only | None) -> tuple[str, dict[str, str]]:
+    """The column of dates of a wide table, and its columns of codes."""
+    ours = _ours(source, names)
+    dates = [name for name, our in ours.items() if our == "date"]
+    if not dates:
+        raise problem(
+            "missing_column",
+            source.file,
+            column=source.columns.get("date", "date"),
+            got="no such column",
+            expected=f"a column of dates beside one column a {source.code}",
+            remedy=f"Add it, or write [inputs.columns.{source.table}] date = 'your name'.",
         )
-        parameters: list[object] = [str(source.path)]
-        by_our_name = {our: name for name, our in ours.items()}
-        if only is not None and only[0] in by_our_name:
-            # Codes compare as the contract reads them: without spaces around, 5.0 as 5.
-            code = f"trim(CAST({_quoted(by_our_name[only[0]])} AS VARCHAR))"
-            query += f" WHERE regexp_replace({code}, '^(\\d+)\\.0$', '\\1') IN (SELECT unnest(?))"
-            parameters.append(only[1])
-        return base.execute(query, parameters).df()
+    return dates[0], columns_of_codes(names, dates[0], only)
 
 
-def _quoted(name: str) -> str:
-    return '"' + name.replace('"', '""') + '"'
+def seen_layout(source: Source, only: Only | None) -> tuple[Source, list[Finding]]:
+    """The source, taken for a wide table if it looks like one, and the note that says so.
+
+    That is a table without a column of codes, whose other columns are called as codes are that
+    the study wants.
+    """
+    if source.wide is not None or only is None or not source.at.is_file():
+        return source, []
+    try:
+        names = _header(source)
+    except (*UNREADABLE, InputProblem):
+        return source, []  # what is wrong with it is said where it is read
+    ours = _ours(source, names)
+    dates = [name for name, our in ours.items() if our == "date"]
+    if not dates or source.code in ours.values() or source.value in ours.values():
+        return source, []
+    codes = columns_of_codes(names, dates[0], only)
+    if not codes:
+        return source, []
+    return replace(source, wide=True), [recognised(source, codes)]

@@ -7,7 +7,7 @@ import pandas as pd
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import RISK_FREE
 from pipeline.inputs.contracts import Column, row_list
-from pipeline.inputs.files import ROW, Source, read_table
+from pipeline.inputs.files import ROW, Only, Source, read_plain, read_table, seen_layout
 from pipeline.inputs.quoted import Quoted, QuotedFiles, as_simple, return_findings
 from pipeline.inputs.typed import one_row_a_date, theirs, typed
 
@@ -21,17 +21,18 @@ PLAIN_DAYS = ("date", "integer", "floating", "empty")
 
 def read_prices(
     source: Source,
-    only: tuple[str, list[str]] | None,
+    only: Only | None,
     date_format: str,
     declared: QuotedFiles = DECLARED,
 ) -> Read:
-    """Closes or returns of the securities ``only`` names.
+    """Closes or returns of the securities and dates ``only`` names.
 
     Returns:
         security, date, close (or ``return``, simple and decimal), volume; a close of zero or below
         is missing. Besides ``currency`` if the study uses it.
     """
     quoted = declared.prices
+    source, noted = seen_layout(source, only)
     columns = [
         Column("security", "text", filled=True, why="the code the deals use"),
         Column("date", "date", filled=True),
@@ -39,8 +40,14 @@ def read_prices(
         Column("volume", "number", optional=True),
         *_currency(quoted),
     ]
-    raw = read_table(source, [column.name for column in columns], only)
+    if not quoted.currency and set(source.columns) <= {column.name for column in columns}:
+        plain = read_plain(source, quoted.value, only, date_format)
+        if plain is not None and not _doubted(plain, source, quoted):
+            return plain, noted
+    raw = read_table(source, [column.name for column in columns], only, date_format)
     table, findings = typed(raw, source, columns, date_format)
+    table = table if only is None else only.within(table)
+    raw, findings = raw.loc[table.index], noted + findings
     if table.empty:
         findings.append(_none_priced(source, only))
     if quoted.returns:
@@ -50,6 +57,18 @@ def read_prices(
         table, more = _positive(table, source, declared.nonpositive_share)
         findings += more
     return _one_price_a_date(table, raw, source, findings)
+
+
+def _doubted(table: pd.DataFrame, source: Source, quoted: Quoted) -> bool:
+    """Whether anything is to be said of plain rows, which is then said by row; makes returns."""
+    if table.empty:
+        return True
+    if not quoted.returns:
+        return bool((table["close"] <= 0).any())
+    if any(return_findings(table.assign(**{ROW: 0}), source, ["return"], quoted)):
+        return True
+    table["return"] = as_simple(table["return"].to_numpy(), quoted)
+    return False
 
 
 def _value(quoted: Quoted, why: str) -> Column:
@@ -100,8 +119,8 @@ def _within_the_day(rows: pd.DataFrame, source: Source, several: bool) -> Findin
     )
 
 
-def _none_priced(source: Source, only: tuple[str, list[str]] | None) -> Finding:
-    named = only[1] if only else []
+def _none_priced(source: Source, only: Only | None) -> Finding:
+    named = only.codes if only else ()
     return Finding(
         "no_prices",
         Severity.ERROR,

@@ -12,12 +12,14 @@ from pipeline.core.findings import Finding, InputProblem, Severity, raise_errors
 from pipeline.core.ledger import StageLedger
 from pipeline.inputs.candidates import read_candidates
 from pipeline.inputs.deals import NO_RULES, read_deals
-from pipeline.inputs.files import Source
+from pipeline.inputs.files import Only, Source
 from pipeline.inputs.market import DECLARED, read_benchmarks, read_factors, read_prices
 from pipeline.inputs.others import read_listings, read_news, restricted_findings
 from pipeline.inputs.peers import listed_peers, read_peers
+from pipeline.inputs.postgres import Fetcher, fetching
 from pipeline.inputs.quoted import QuotedFiles
 from pipeline.inputs.rates import read_delistings, read_rates
+from pipeline.inputs.reach import EVERYTHING, Reach, touched
 from pipeline.inputs.typed import finding
 from pipeline.inputs.wanted import DealRules, Wanted
 
@@ -35,7 +37,9 @@ class Tables:
     (security, peer, exchange), ``lines`` (the listings of companies that have several: security,
     line, exchange, primary, home, currency) and ``news`` (security, date, kind) likewise;
     ``rates`` date, currency, rate; ``delistings`` security, date, return, reason. A file declared
-    to hold returns has ``return`` (simple, decimal) in place of close.
+    to hold returns has ``return`` (simple, decimal) in place of close. ``spans`` (security, first,
+    last) are the dates of which prices were read, None for all of them; ``digests`` the SHA-256 of
+    each query's result.
     """
 
     deals: pd.DataFrame
@@ -50,6 +54,8 @@ class Tables:
     news: pd.DataFrame | None = None
     rates: pd.DataFrame | None = None
     delistings: pd.DataFrame | None = None
+    spans: pd.DataFrame | None = None
+    digests: Mapping[str, str] = field(default_factory=dict)
 
     @property
     def listings(self) -> pd.DataFrame:
@@ -85,6 +91,7 @@ def read_inputs(
     date_format: str = "",
     rules: DealRules = NO_RULES,
     declared: QuotedFiles = DECLARED,
+    reach: Reach = EVERYTHING,
 ) -> Tables:
     """Read and check every table.
 
@@ -95,18 +102,35 @@ def read_inputs(
         date_format: format of dates that are not ISO 8601.
         rules: what the study declares about the deal list.
         declared: what it declares of prices, benchmarks and factors.
+        reach: how far around an event prices are needed.
 
     Raises:
         InputProblem: with the errors of all files at once.
     """
+    with fetching() as fetcher:
+        return _read_inputs(sources, wanted, zone, date_format, rules, declared, reach, fetcher)
+
+
+def _read_inputs(
+    sources: Mapping[str, Source],
+    wanted: Wanted,
+    zone: str,
+    date_format: str,
+    rules: DealRules,
+    declared: QuotedFiles,
+    reach: Reach,
+    fetcher: Fetcher,
+) -> Tables:
     found: list[Finding] = []
 
-    def attempt(table: str, read: Callable[[Source], tuple[T, list[Finding]]]) -> T | None:
+    def attempt(
+        table: str, read: Callable[[Source], tuple[T, list[Finding]]], rows: Only | None = None
+    ) -> T | None:
         """Collect the findings of one file instead of stopping there."""
         if table not in sources:
             return None
         try:
-            value, findings = read(sources[table])
+            value, findings = read(fetcher.at_hand(sources[table], rows))
         except InputProblem as fault:
             found.extend(fault.findings)
             return None
@@ -118,12 +142,12 @@ def read_inputs(
     peers = attempt("peers", read_peers)
     lines = attempt("listings", read_listings)
     news = attempt("news", lambda file: read_news(file, date_format))
-    only = _securities(listed[0] if listed else None, candidates, peers, lines)
+    only = touched(reach, listed[0] if listed else None, candidates, peers, lines)
     if listed is not None:
         found += _across(listed[0], candidates, sources, lines)
     if listed is not None and "restricted" in sources:
-        found += _restricted(listed[0], sources)
-    prices = attempt("prices", lambda file: read_prices(file, only, date_format, declared))
+        found += _restricted(listed[0], sources, fetcher)
+    prices = attempt("prices", lambda file: read_prices(file, only, date_format, declared), only)
     benchmarks = attempt("benchmarks", lambda file: read_benchmarks(file, date_format, declared))
     factors = attempt("factors", lambda file: read_factors(file, date_format, declared))
     rates = attempt("rates", lambda file: read_rates(file, date_format, rules.common))
@@ -143,13 +167,18 @@ def read_inputs(
         news=news,
         rates=rates,
         delistings=delistings,
+        spans=only.spans if only else None,
+        digests=fetcher.digests,
     )
 
 
-def _restricted(deals: pd.DataFrame, sources: Mapping[str, Source]) -> list[Finding]:
+def _restricted(
+    deals: pd.DataFrame, sources: Mapping[str, Source], fetcher: Fetcher
+) -> list[Finding]:
     """What the restricted list says of the deals, or why it cannot be read."""
     try:
-        return restricted_findings(deals, sources["deals"], sources["restricted"])
+        listed = fetcher.at_hand(sources["restricted"])
+        return restricted_findings(deals, sources["deals"], listed)
     except InputProblem as fault:
         return list(fault.findings)
 
@@ -212,10 +241,3 @@ def _known_too_late(deals: pd.DataFrame, candidates: pd.DataFrame, source: Sourc
         "Take the values of the last report before the announcement.",
     )
     return [finding("known_too_late", candidates[late], source, ("as_of",), words)]
-
-
-def _securities(*tables: pd.DataFrame | None) -> tuple[str, list[str]] | None:
-    columns = ("security", "peer", "line")
-    present = [table for table in tables if table is not None]
-    named = {code for table in present for name in columns if name in table for code in table[name]}
-    return ("security", sorted(named)) if named else None

@@ -5,8 +5,9 @@ from __future__ import annotations
 import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, Severity
-from pipeline.inputs.contracts import Column, apply_contract, row_list, unknown_names
-from pipeline.inputs.files import ROW, Source
+from pipeline.inputs.contracts import Column, apply_contract, row_list, unknown_names, unknown_units
+from pipeline.inputs.numerals import scaled
+from pipeline.inputs.source import ROW, Source
 
 
 def typed(
@@ -14,9 +15,10 @@ def typed(
 ) -> tuple[pd.DataFrame, list[Finding]]:
     """The contracted columns; without one of them no further check of the file makes sense."""
     table, findings = apply_contract(raw, source, columns, date_format)
-    findings = unknown_names(source, columns) + findings
+    findings = unknown_names(source, columns) + unknown_units(source, columns) + findings
     if any(finding.rule in ("missing_column", "unknown_key") for finding in findings):
         raise InputProblem(findings)
+    table = scaled(table, source)
     if "exchange" in table:
         table["exchange"] = table["exchange"].str.upper()
     return table, findings

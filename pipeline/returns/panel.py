@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.core.prices import Dates, Floats, PricePanel
+from pipeline.core.prices import Booleans, Dates, Floats, PricePanel
 from pipeline.returns.currency import Quotation, Rates, session_rates
 from pipeline.returns.jumps import dates, jumps_together, unit_jumps
 from pipeline.returns.limits import DEFAULT_LIMITS, ScreenLimits
@@ -17,6 +17,7 @@ from pipeline.returns.policies import alive
 from pipeline.returns.sessions import CalendarChange, Sessions, changed, sessions_between
 
 RETURN = "return"
+FROM_TO = ("first", "last")
 
 
 @dataclass(frozen=True, slots=True)
@@ -36,6 +37,7 @@ def build_panels(
     changes: Mapping[str, CalendarChange] | None = None,
     limits: ScreenLimits = DEFAULT_LIMITS,
     money: InOneCurrency | None = None,
+    spans: pd.DataFrame | None = None,
 ) -> tuple[dict[str, PricePanel], dict[str, Sessions], list[Finding]]:
     """One panel an exchange, with findings about prices, benchmark and calendar.
 
@@ -48,6 +50,7 @@ def build_panels(
         changes: exchange -> what the desk knows better than its calendar.
         limits: when the tables are doubted.
         money: makes all prices and benchmarks ones of a common currency; None leaves them.
+        spans: ``security, first, last``: the dates of which prices were read; None for all.
     """
     panels: dict[str, PricePanel] = {}
     calendars: dict[str, Sessions] = {}
@@ -68,7 +71,7 @@ def build_panels(
         own = prices[prices["security"].isin(listed["security"])]
         level = benchmarks[benchmarks["exchange"] == exchange]
         moves = None if factors is None else factors[factors["exchange"] == exchange]
-        panel, more = _panel(sessions, own, level, limits, money)
+        panel, more = _panel(sessions, own, level, limits, money, spans)
         panels[name] = _with_factors(panel, moves, factor_names)
         calendars[name] = sessions
         findings += more
@@ -92,6 +95,7 @@ def _panel(
     benchmarks: pd.DataFrame,
     limits: ScreenLimits,
     money: InOneCurrency | None,
+    spans: pd.DataFrame | None,
 ) -> tuple[PricePanel, list[Finding]]:
     exchange, days = sessions.exchange, sessions.days
     last = prices["date"].max()
@@ -122,9 +126,21 @@ def _panel(
         returns=returns,
         benchmark=_close_and_return(market, known == RETURN, market_rate)[1][:, 0],
         factors={},
+        asked=None if spans is None else _asked(days, securities, spans),
     )
     checks = (_closed_sessions, _sparse, unit_jumps, jumps_together)
     return panel, findings + [found for check in checks for found in check(panel, limits)]
+
+
+def _asked(days: Dates, securities: tuple[str, ...], spans: pd.DataFrame) -> Booleans:
+    """(T, S) whether the price of the session was read."""
+    column = pd.Index(securities).get_indexer(pd.Index(spans["security"]))
+    known = column >= 0
+    first, last = (spans.loc[known, end].to_numpy().astype("datetime64[D]") for end in FROM_TO)
+    edges = np.zeros((len(days) + 1, len(securities)), dtype=np.int16)
+    np.add.at(edges, (np.searchsorted(days, first), column[known]), 1)
+    np.add.at(edges, (np.searchsorted(days, last, side="right"), column[known]), -1)
+    return np.cumsum(edges[:-1], axis=0) > 0
 
 
 def _with_factors(
@@ -226,7 +242,7 @@ def _benchmark_gaps(
 
 
 def _closed_sessions(panel: PricePanel, limits: ScreenLimits) -> list[Finding]:
-    listed = alive(panel.close).sum(axis=1)
+    listed = alive(panel).sum(axis=1)
     quoted = np.isfinite(panel.close).sum(axis=1)
     closed = panel.sessions[(listed >= 5) & (quoted < limits.closed_share * listed)]
     if closed.size == 0:
@@ -248,7 +264,7 @@ def _sparse(panel: PricePanel, limits: ScreenLimits) -> list[Finding]:
     """An error if half of the securities go a week between two prices: a weekly or monthly file."""
     quoted = np.isfinite(panel.close)
     with np.errstate(invalid="ignore", divide="ignore"):
-        apart = (alive(panel.close).sum(axis=0) - 1) / (quoted.sum(axis=0) - 1)
+        apart = (alive(panel).sum(axis=0) - 1) / (quoted.sum(axis=0) - 1)
     several = quoted.sum(axis=0) > 2
     if not several.any() or np.mean(apart[several] >= limits.sparse_sessions) <= 0.5:
         return []

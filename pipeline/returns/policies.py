@@ -62,16 +62,20 @@ def lumped(panel: PricePanel) -> PricePanel:
     JBF 17): for comparison alone.
     """
     returns, _ = since_last_close(panel.close)
-    idle = alive(panel.close) & ~np.isfinite(panel.close)
+    idle = alive(panel) & ~np.isfinite(panel.close)
     return replace(panel, returns=np.asfortranarray(np.where(idle, 0.0, returns)))
 
 
-def alive(close: Floats) -> Booleans:
-    """(T, S) whether the security has been quoted before or on the session and will be later."""
-    quoted = np.isfinite(close)
+def alive(panel: PricePanel) -> Booleans:
+    """(T, S) whether the security has been quoted before or on the session and will be later.
+
+    Sessions of which no price was read do not count.
+    """
+    quoted = np.isfinite(panel.close)
     started = np.maximum.accumulate(quoted, axis=0)
     going = np.maximum.accumulate(quoted[::-1], axis=0)[::-1]
-    return np.asarray(started & going)
+    lives = started & going
+    return np.asarray(lives if panel.asked is None else lives & panel.asked)
 
 
 def in_logs(panel: PricePanel) -> PricePanel:

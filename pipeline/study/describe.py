@@ -62,6 +62,10 @@ TABLES_BY_NAME = {
 }
 
 
+# Keys that hold one table of keys for each table that is read, and the one shown.
+BY_TABLE = {"inputs.source": "prices"}
+
+
 def every_key() -> str:
     """The commented study file: each key with its meaning and default, valid as it stands."""
     lines = [HEAD, *_keys(Study, "")]
@@ -77,7 +81,9 @@ def every_key() -> str:
         for inner, part in model.model_fields.items():
             nested = _model(part.annotation)
             if nested is not None and _is_table(part):
-                lines += ["", f"[{name}.{inner}]", *_keys(nested, f"{name}.{inner}.")]
+                key = f"{name}.{inner}"
+                head = f"{key}.{BY_TABLE[key]}" if key in BY_TABLE else key
+                lines += ["", f"[{head}]", *_keys(nested, f"{key}.")]
     return "\n".join(lines) + "\n"
 
 

@@ -12,6 +12,7 @@ from typing import Any, get_args
 from pydantic import BaseModel, ValidationError
 
 from pipeline.core.findings import Finding, InputProblem, Severity, problem, raise_errors
+from pipeline.inputs.source import POSTGRES
 from pipeline.study.rules import cross_checks
 from pipeline.study.schema import Study
 
@@ -84,7 +85,7 @@ def _read(path: Path, seen: tuple[Path, ...]) -> dict[str, Any]:
     if isinstance(inputs, dict):
         for key in PATH_KEYS:
             if isinstance(inputs.get(key), str):
-                inputs[key] = (path.parent / inputs[key]).resolve()
+                inputs[key] = _place(path.parent, inputs[key])
     base = raw.pop("base", None)
     if base is None:
         return raw
@@ -98,6 +99,11 @@ def _read(path: Path, seen: tuple[Path, ...]) -> dict[str, Any]:
             remedy='Write base = "demo.toml".',
         )
     return _merge(_read((path.parent / base).resolve(), (*seen, path)), raw)
+
+
+def _place(folder: Path, named: str) -> Path:
+    """Where a table is: a file, counted from the study's folder, or a data base."""
+    return POSTGRES if Path(named) == POSTGRES else (folder / named).resolve()
 
 
 def _parse(path: Path) -> dict[str, Any]:

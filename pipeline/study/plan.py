@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable
 from dataclasses import replace
 from datetime import date
 
@@ -19,6 +19,7 @@ from pipeline.returns.events import EventOptions
 from pipeline.returns.sessions import CalendarChange
 from pipeline.study import plan_events, plan_prices, plan_returns, ready
 from pipeline.study.schema import Characteristic, Study
+from pipeline.study.sources import source_of
 
 PATH_DAYS = Window(-10, 10)
 
@@ -38,15 +39,13 @@ def sources(study: Study) -> dict[str, Source]:
         "rates": study.inputs.rates,
         "delistings": study.inputs.delistings,
     }
-    names: Mapping[str, Mapping[str, str]] = {str(k): v for k, v in study.inputs.columns.items()}
-    sheets: Mapping[str, str] = {str(k): v for k, v in study.inputs.sheets.items()}
     by_year = (
         study.selection is not None
         or any(c.lag for c in study.characteristics.values())
         or plan_returns.uses_candidates(study)
     )
     return {
-        table: Source(table, path, names.get(table, {}), sheets.get(table, ""))
+        table: source_of(study, table, path)
         for table, path in paths.items()
         if path is not None and (table != "candidates" or by_year)
     }

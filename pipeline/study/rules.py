@@ -14,6 +14,7 @@ from pipeline.study.plan_events import event_checks
 from pipeline.study.plan_prices import price_checks
 from pipeline.study.plan_returns import returns_checks
 from pipeline.study.schema import Study
+from pipeline.study.sources import source_checks
 
 
 def cross_checks(study: Study, file: str) -> list[Finding]:
@@ -29,6 +30,7 @@ def cross_checks(study: Study, file: str) -> list[Finding]:
         *outcome_checks(study, file),
         *event_checks(study, file),
         *price_checks(study, file),
+        *source_checks(study, file),
         *doubt_checks(study, file),
         *returns_checks(study, file),
     ]

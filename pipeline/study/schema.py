@@ -32,6 +32,7 @@ from pipeline.study.part import (
 )
 from pipeline.study.prices import Currency, Screens, Series
 from pipeline.study.questions import Fit, Instruments, Regression, Selection
+from pipeline.study.sources import SourceKeys
 from pipeline.study.timing import EventTime
 
 TableName = Literal[
@@ -43,7 +44,10 @@ TableName = Literal[
 class Inputs(Part):
     """Where the tables are. Paths count from the folder of the study file that names them."""
 
-    deals: Path = Field(description="One row a deal.")
+    deals: Path = Field(
+        description="One row a deal. This and all other tables: a csv, parquet, xlsx or DuckDB "
+        "file, or the word postgresql, each with its keys under [inputs.source.deals]."
+    )
     prices: Path | None = Field(
         None,
         description="Daily closes: security, date, close, volume. Must be there unless the "
@@ -90,6 +94,21 @@ class Inputs(Part):
     )
     sheets: dict[TableName, str] = Field(
         default_factory=dict, description="Sheet of an xlsx file, by table; the first if absent."
+    )
+    source: dict[TableName, SourceKeys] = Field(
+        default_factory=dict,
+        description="How a table is written: [inputs.source.prices] delimiter = ';'.",
+    )
+    connection: str = Field(
+        "",
+        description="Environment variable that holds the connection to PostgreSQL; if not said, "
+        "PGHOST, PGDATABASE, PGUSER and the others. Never write it here.",
+    )
+    history: Literal["touched", "whole"] = Field(
+        "touched",
+        description="Prices that are read: of the sessions around deals and the dates of "
+        "candidates, or the whole history of their securities, so that faults on other dates are "
+        "told too.",
     )
     timestamp_zone: str = Field(
         "", description="Time zone of announcements without one, e.g. Europe/London."

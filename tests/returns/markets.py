@@ -24,6 +24,7 @@ title = "Market"
 question = "Does it matter?"
 
 [inputs]
+history = "whole"
 deals = "deals.parquet"
 prices = "prices.parquet"
 benchmarks = "benchmarks.parquet"

@@ -32,7 +32,13 @@ def test_returns_since_the_last_close_by_hand() -> None:
     wanted = [np.nan, np.nan, 0.1, np.nan, np.nan, 0.1, 0.0, np.nan]
     np.testing.assert_allclose(returns[:, 0], wanted, atol=1e-12)
     assert spans[:, 0].tolist() == [1, 1, 1, 1, 1, 3, 1, 1]
-    np.testing.assert_array_equal(alive(close)[:, 0], [False] + [True] * 6 + [False])
+    panel = replace(
+        invented_panel(len(close), 1), close=close, volume=close, returns=returns, asked=None
+    )
+    np.testing.assert_array_equal(alive(panel)[:, 0], [False] + [True] * 6 + [False])
+    read = np.array([[True]] * 3 + [[False]] * 2 + [[True]] * 3)
+    seen = alive(replace(panel, asked=read))[:, 0]
+    np.testing.assert_array_equal(seen, [False, True, True, False, False, True, True, False])
 
 
 @given(st.lists(st.booleans(), min_size=3, max_size=40), st.integers(0, 1000))
