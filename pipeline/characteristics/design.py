@@ -18,11 +18,12 @@ from pipeline.characteristics.universe import (
     without_exclusion,
 )
 from pipeline.core.design import Design, SelectionRows
-from pipeline.core.findings import Finding, problem, raise_errors
+from pipeline.core.findings import Finding, Severity, problem, raise_errors
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
 from pipeline.core.prices import Booleans, Floats, PricePanel
 
 FEWEST_A_GROUP = 5
+SHOWN = 5
 MeasureFunction = Callable[..., Floats]
 
 
@@ -114,7 +115,8 @@ def prepare(
 
     Raises:
         InputProblem: a variable nothing defines, an impossible transform, a treatment without
-            variation, a company control missing from the selection equation.
+            variation, a company control missing from the selection equation, a deal that is left
+            without a cluster (``cluster_missing``).
     """
     raw, findings = raw_variables(
         deals, recipes, roles.numbers, measured, "deal_id", "deals", candidates
@@ -159,16 +161,15 @@ def _mask(
     roles: Roles,
     universe: Universe | None,
 ) -> tuple[Booleans, StageLedger]:
-    """Rows with every variable, effect and cluster, and (with a selection model) a candidate."""
+    """Rows with every variable and effect, and (with a selection model) a candidate."""
     entries: list[LedgerEntry] = []
     ids = deals["deal_id"].astype(str).tolist()
     lacking: list[list[str]] = [[] for _ in ids]
     for name, values in raw.items():
         for row in np.flatnonzero(~np.isfinite(values)):
             lacking[row].append(name)
-    for name in (*roles.effects, *roles.clusters):
-        empty = (deals[name].isna() | (deals[name].astype(str) == "")).to_numpy()
-        for row in np.flatnonzero(empty):
+    for name in roles.effects:
+        for row in np.flatnonzero(_empty(deals[name])):
             lacking[row].append(name)
     used = np.array([not names for names in lacking], dtype=np.bool_)
     for deal, names in zip(ids, lacking, strict=True):
@@ -186,7 +187,48 @@ def _mask(
         used[alone] = False
         value = f"alone in {effect} {deals[effect].iloc[alone]}"
         entries.append(_drop(ids[alone], "singleton", value, "two deals a group"))
+    _refuse_without_cluster(deals[used], roles.clusters)
     return used, StageLedger("regression", len(deals), tuple(entries))
+
+
+def _empty(values: pd.Series) -> Booleans:
+    return (values.isna() | (values.astype(str) == "")).to_numpy(dtype=np.bool_)
+
+
+def _refuse_without_cluster(kept: pd.DataFrame, clusters: Sequence[str]) -> None:
+    """Every deal left for the regression must say with which others it shares shocks.
+
+    Leaving it out would choose the sample by a gap in the records, and a group of its own would
+    claim that it moves with no other deal.
+    """
+    findings = []
+    for name in clusters:
+        lost = kept[_empty(kept[name])]
+        if len(lost):
+            deals = lost["deal_id"].astype(str).tolist()
+            more = f" and {len(deals) - SHOWN} more" if len(deals) > SHOWN else ""
+            findings.append(
+                Finding(
+                    "cluster_missing",
+                    Severity.ERROR,
+                    "deals",
+                    got=f"no {name} for {', '.join(deals[:SHOWN])}{more}",
+                    expected="a group for every deal of the regression",
+                    remedy="Fill the cells, delete those rows, or choose another cluster.",
+                    row=_rows_of(lost),
+                    column=name,
+                )
+            )
+    raise_errors(findings)
+
+
+def _rows_of(deals: pd.DataFrame) -> str:
+    """The rows of the deal list, as its reader counts them; '' where they are not known."""
+    if "_row" not in deals:
+        return ""
+    rows = [str(int(row)) for row in deals["_row"].iloc[:SHOWN]]
+    more = f" and {len(deals) - SHOWN} more" if len(deals) > SHOWN else ""
+    return ", ".join(rows) + more
 
 
 def _singletons(

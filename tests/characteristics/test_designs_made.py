@@ -134,6 +134,20 @@ def test_a_deal_with_a_gap_leaves_every_column() -> None:
     np.testing.assert_allclose(found.design.X[:, 2], wanted, rtol=1e-12)
 
 
+def test_a_deal_without_a_cluster_stops_the_run() -> None:
+    def spoil(table: pd.DataFrame) -> None:
+        table.loc[[3, 7], "security"] = ""
+        table.loc[7, "spare"] = np.nan  # D07 leaves anyway, so its cluster is not asked for
+        table["_row"] = range(2, N + 2)
+
+    with pytest.raises(InputProblem) as caught:
+        made(spoil, among=None)
+    (found,) = caught.value.findings
+    assert (found.rule, found.severity) == ("cluster_missing", Severity.ERROR)
+    assert (found.row, found.column) == ("5", "security")
+    assert found.got == "no security for D03"
+
+
 def test_candidates_stand_beside_the_deals() -> None:
     found = made()
     rows = found.design.selection

@@ -121,9 +121,9 @@ RULES = (
     Rule(
         "cluster_missing",
         "Deal without a cluster",
-        "A row has no value of a cluster dimension.",
-        "It cannot be put with the deals it moves with.",
-        "Fill the column.",
+        "A deal that is left for the regression has no value of a cluster dimension.",
+        "It cannot be put with the deals it moves with; alone it would claim to move with none.",
+        "Fill the column, delete the row, or choose another cluster.",
     ),
     Rule(
         "cluster_decides",
