@@ -358,6 +358,7 @@ TABLE: dict[str, tuple[Entry, ...]] = {
         Entry("xlsx", "pipeline.report.xlsx:render"),
         Entry("tex", "pipeline.report.tex:render"),
         Entry("svg", "pipeline.report.svg:render"),
+        Entry("pdf", "pipeline.report.pdf:render", default=False),
     ),
 }
 
