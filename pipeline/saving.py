@@ -9,6 +9,7 @@ import platform
 from collections.abc import Mapping
 from importlib.metadata import version
 from pathlib import Path
+from typing import Any
 
 from pipeline.core.clock import Clock
 from pipeline.core.contrast import Contrast
@@ -73,9 +74,12 @@ def _manifest(study: Study, folder: Path, seconds: Mapping[str, float]) -> bytes
         }
         for name, path in paths.items()
     }
+    logo = study.papers.logo
+    kept_out: Any = {"inputs": set(paths), "papers": {"logo"}}
     content = {
-        "study": study.model_dump(mode="json", by_alias=True, exclude={"inputs": set(paths)}),
+        "study": study.model_dump(mode="json", by_alias=True, exclude=kept_out),
         "inputs": inputs,
+        "logo": {"file": logo.name, "sha256": digest(logo)} if logo else {},
         "packages": {name: version(name) for name in PACKAGES},
         "python": platform.python_version(),
         "seed": study.seed,

@@ -17,6 +17,7 @@ WITHOUT_EFFECT = (
     "labels",
     "level",
     "name",
+    "papers",
     "placebo",
     "question",
     "report",

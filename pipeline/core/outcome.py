@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from typing import Final
 
 from pipeline.core.estimate import t_reach
+from pipeline.core.house import money_heading, money_words
 from pipeline.core.prices import Floats
 
 
@@ -87,13 +88,11 @@ UNITS: Final[Mapping[str, Unit]] = {
 UNIT_KEYS: Final = tuple(UNITS)
 
 
-def money_in(currency: str) -> Unit:
-    """Money in a currency with its scale, such as ``USD million``."""
-    code, _, scale = currency.partition(" ")
-    after = f" {scale}" if scale else ""
-    return replace(
-        MONEY, before=f"{code} ", level=after, change=after, short=currency, words=currency
-    )
+def money_in(currency: str, pattern: str = "") -> Unit:
+    """Money in a currency with its scale, such as ``USD million``, shown by the house's pattern."""
+    before, after = money_words(currency, pattern)
+    short = money_heading(currency, pattern)
+    return replace(MONEY, before=before, level=after, change=after, short=short, words=short)
 
 
 @dataclass(frozen=True, slots=True)
@@ -125,6 +124,13 @@ class Outcome:
 
 
 ABNORMAL_RETURN: Final = Outcome()
+
+
+def with_decimals(outcome: Outcome, decimals: int | None) -> Outcome:
+    """The outcome with another limit to its decimals; as it is without one."""
+    if decimals is None:
+        return outcome
+    return replace(outcome, unit=replace(outcome.unit, decimals=decimals))
 
 
 @dataclass(frozen=True, slots=True)

@@ -10,6 +10,7 @@ import pandas as pd
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import Column, Tested
 from pipeline.core.findings import Finding
+from pipeline.core.house import PLAIN, House
 from pipeline.core.ledger import Ledger
 from pipeline.core.outcome import ABNORMAL_RETURN, Outcome
 from pipeline.core.window import Window
@@ -38,6 +39,7 @@ class StudyFacts:
         seed: of every random stream.
         outcome: what is explained. An outcome that the deal list holds has no windows, and the
             fields about windows, models and tests mean nothing then.
+        house: the style of the papers.
     """
 
     name: str
@@ -65,6 +67,7 @@ class StudyFacts:
     currency: str = ""
     seed: int = 0
     outcome: Outcome = ABNORMAL_RETURN
+    house: House = PLAIN
 
     @property
     def explained(self) -> dict[str, str | int]:

@@ -57,7 +57,11 @@ def _outcome(one: SavedRun, two: SavedRun) -> Outcome:
         InputProblem: ``different_outcomes`` if they do not explain the same.
     """
     first, second = (
-        outcome_named(run.study.get("outcome"), run.study["report"]["currency"])
+        outcome_named(
+            run.study.get("outcome"),
+            run.study["report"]["currency"],
+            run.study.get("papers", {}).get("money", ""),
+        )
         for run in (one, two)
     )
     if (first.column, first.unit.scale) == (second.column, second.unit.scale):

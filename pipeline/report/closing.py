@@ -7,6 +7,7 @@ from itertools import islice
 import pandas as pd
 
 from pipeline.core.estimate import Estimate, TestResult
+from pipeline.core.house import House
 from pipeline.core.rules import rule_title
 from pipeline.report.document import (
     Bullets,
@@ -54,14 +55,18 @@ def cautions_section(material: Material) -> Section:
     """The cautions and the lines to sign."""
     texts = READY_CAUTIONS if material.ready else CAUTIONS
     paragraphs = tuple(prose(text, lead=lead) for lead, text in texts)
-    return Section("Cautions", (Callout("Read before use", paragraphs), sign_off_table()))
+    return Section(
+        "Cautions", (Callout("Read before use", paragraphs), sign_off_table(material.house))
+    )
 
 
-def sign_off_table() -> Table:
-    """Lines to be filled in by hand."""
+def sign_off_table(house: House) -> Table:
+    """Lines to be filled in by hand, one for every reviewer whom the house names."""
     columns = tuple(Column(title) for title in ("", "Name", "Date", "Signature"))
-    roles = ("Distribution class", "Prepared by", "Reviewed by", "Released by compliance")
-    rows = tuple((Text(role), None, None, None) for role in roles)
+    named = [(person.role, person.name) for person in house.reviewers]
+    lines = [("Distribution class", ""), ("Prepared by", ""), *(named or [("Reviewed by", "")]),
+             ("Released by compliance", "")]  # fmt: skip
+    rows = tuple((Text(role), Text(name) if name else None, None, None) for role, name in lines)
     return Table("sign_off", prose("Distribution and review"), columns, rows, form=True)
 
 

@@ -6,13 +6,14 @@ from collections.abc import Callable
 
 from pipeline.core.estimate import Column as Estimated
 from pipeline.core.estimate import Estimate, NotApplicable, Withheld
+from pipeline.core.house import INTERVAL, House
 from pipeline.core.outcome import Unit
 from pipeline.report.document import (
     Bullets,
     Cell,
     Column,
-    Interval,
     Paragraph,
+    Piece,
     Row,
     Statistic,
     Table,
@@ -21,6 +22,9 @@ from pipeline.report.document import (
 from pipeline.report.material import Material, capital, effect_digits, embedded, named, prose, taken
 from pipeline.report.numerals import count, in_unit, p_value, plain, true_minus, unit_digits
 from pipeline.report.wording import (
+    SET_ALONE,
+    STAR_WORDS,
+    coefficient_cell,
     df_words,
     per_unit,
     set_cell,
@@ -66,7 +70,7 @@ def _variables(material: Material) -> list[str]:
 
 
 def _variable_row(material: Material, name: str) -> Row:
-    cells = (_coefficient(c, name, material.unit) for c in material.results.columns)
+    cells = (_coefficient(c, name, material.unit, material.house) for c in material.results.columns)
     return (Text(_variable_words(material, name)), *cells)
 
 
@@ -74,15 +78,14 @@ def _variable_words(material: Material, name: str) -> str:
     return capital(material.study.words(name))
 
 
-def _coefficient(column: Estimated, name: str, unit: Unit) -> Cell:
+def _coefficient(column: Estimated, name: str, unit: Unit, house: House) -> Cell:
     if not isinstance(column, Estimate) or name not in column.names:
         return None
     term = column.term(name)
     digits = unit_digits(float(term["std_error"]), unit)
-    if name == column.treatment:
+    if name == column.treatment and column.robust_set is not None:
         return set_cell(term["coefficient"], column.interval, digits, unit)
-    low, high = (in_unit(term[end], unit, digits) for end in ("ci_low", "ci_high"))
-    return Interval(in_unit(term["coefficient"], unit, digits), low, high)
+    return coefficient_cell(term, house, lambda value: in_unit(value, unit, digits))
 
 
 def _footer(material: Material) -> list[Row]:
@@ -182,16 +185,28 @@ def _test_cell(key: str) -> Callable[[Estimate], Cell]:
     return cell
 
 
-def _notes(material: Material) -> tuple[Paragraph, ...]:
+def lead_cell(material: Material, column: Estimate) -> Cell:
+    """The feature's coefficient in a column, as in the table."""
+    return _coefficient(column, column.treatment, material.unit, material.house)
+
+
+def cell_notes(material: Material) -> tuple[Paragraph, ...]:
+    """What a cell holds: the outcome, the unit, what stands in brackets, and the stars."""
     outcomes = dict.fromkeys(e.outcome for e in material.estimates)
     notes = [
-        prose("Explained: ", taken("; ".join(outcomes), "estimate"), ". Cells above the footer "
-              "hold the change in ", taken(material.unit.words, "study"),
-              " per unit of the variable; its ",
-              material.percent("confidence_level"),
-              " confidence set stands below, an interval in brackets, any other set in words. A "
-              "blank cell: not part of that column."),
+        prose("Explained: ", taken("; ".join(outcomes), "estimate"), ". Cells hold the change "
+              "in ", taken(material.unit.words, "study"),
+              " per unit of the variable; ", *_below(material),
+              " A blank cell: not part of that column."),
     ]  # fmt: skip
+    if material.house.stars:
+        alone = SET_ALONE if _robust(material) else ""
+        notes.append(prose(taken(STAR_WORDS, "convention"), alone))
+    return tuple(notes)
+
+
+def _notes(material: Material) -> tuple[Paragraph, ...]:
+    notes = list(cell_notes(material))
     for key, title in set_titles(material.results.columns).items():
         found = dict.fromkeys(e.sets[key].method for e in material.estimates if key in e.sets)
         methods = material.in_words("; ".join(found))
@@ -200,6 +215,23 @@ def _notes(material: Material) -> tuple[Paragraph, ...]:
         notes.append(prose("The columns do not stand on the same number of deals: see the row "
                            "of deals, and what each column says below."))  # fmt: skip
     return tuple(notes)
+
+
+def _below(material: Material) -> tuple[Piece, ...]:
+    """What stands below a coefficient, in words."""
+    level = material.percent("confidence_level")
+    if material.house.brackets == INTERVAL:
+        return ("its ", *level, " confidence set stands below, an interval in brackets, any other "
+                "set in words.")  # fmt: skip
+    kept = (" Where a column's ", *level, " confidence set is not made from its standard error, "
+            "the feature's cell holds that set instead.")  # fmt: skip
+    what = f"its {material.house.brackets} stands below in brackets."
+    return (what, *(kept if _robust(material) else ()))
+
+
+def _robust(material: Material) -> bool:
+    """Whether a column has a confidence set that its standard error does not make."""
+    return any(e.robust_set is not None for e in material.estimates)
 
 
 def reading(material: Material, *, notes: bool = True) -> Bullets:

@@ -9,10 +9,16 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
+from datetime import date
 
 import pandas as pd
 
+from pipeline.core.house import ISO, PLAIN, House
+
 Key = str | int | float | bool
+
+
+SHORTENED = "The first rows; all of them stand in tables.xlsx."
 
 
 @dataclass(frozen=True, slots=True)
@@ -46,7 +52,18 @@ class Verbatim:
     origin: str
 
 
-Piece = str | Quote | Verbatim
+@dataclass(frozen=True, slots=True)
+class Reference:
+    """A table or a figure of a numbered document, spoken of: ``Table 2``.
+
+    ``name`` is the block's; ``text`` stays empty until the document gives it its number.
+    """
+
+    name: str
+    text: str = ""
+
+
+Piece = str | Quote | Verbatim | Reference
 
 
 @dataclass(frozen=True, slots=True)
@@ -69,11 +86,11 @@ class Paragraph:
 
     @property
     def own_text(self) -> str:
-        """The paragraph without the words taken over from elsewhere."""
+        """The paragraph without the words taken over from elsewhere and without references."""
         return "".join(
             piece if isinstance(piece, str) else piece.text
             for piece in self.pieces
-            if not isinstance(piece, Verbatim)
+            if not isinstance(piece, Verbatim | Reference)
         )
 
     @property
@@ -109,12 +126,30 @@ class Number:
     """A cell with one number, in ``unit``, at full precision.
 
     ``digits`` are the decimals to show; a positive value under ``least`` is shown as "<least".
+    ``mark`` stands behind the digits.
     """
 
     value: float
     digits: int = 0
     unit: str = ""
     least: float = 0.0
+    mark: str = ""
+
+
+@dataclass(frozen=True, slots=True)
+class Day:
+    """A cell with one date; ``dates`` says how the house shows it."""
+
+    day: date
+    dates: str = ISO
+
+
+@dataclass(frozen=True, slots=True)
+class Bracketed:
+    """An estimate above another number in brackets, its t value or its standard error."""
+
+    estimate: Number | None
+    inside: Number | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -136,7 +171,7 @@ class Statistic:
     adjusted: Number | None = None
 
 
-Cell = Text | Number | Interval | Statistic | None
+Cell = Text | Number | Day | Interval | Bracketed | Statistic | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -232,21 +267,31 @@ Block = Paragraph | Bullets | Callout | Table | Figure
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Section:
-    """Blocks under a heading of level 2 or 3; a ``wide`` one wants a page on its side."""
+    """Blocks under a heading of level 2 or 3.
+
+    A ``wide`` one wants a page on its side; a ``fresh`` one begins a page where there are pages.
+    """
 
     heading: str
     blocks: tuple[Block, ...]
     level: int = 2
     wide: bool = False
+    fresh: bool = False
 
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Document:
-    """A title, a line under it, and sections in order."""
+    """A title, a line under it, and sections in order.
+
+    ``house`` is the style it is shown in; the tables and figures of a ``numbered`` document carry
+    numbers, by which references call them.
+    """
 
     title: str
     subtitle: str
     sections: tuple[Section, ...]
+    house: House = PLAIN
+    numbered: bool = False
 
     @property
     def blocks(self) -> Iterator[Block]:
@@ -262,6 +307,17 @@ class Document:
     def figures(self) -> tuple[Figure, ...]:
         """All figures in order."""
         return tuple(block for block in self.blocks if isinstance(block, Figure))
+
+    @property
+    def numbers(self) -> dict[str, str]:
+        """Name of a table or figure -> what it is called; empty unless the document is numbered."""
+        if not self.numbered:
+            return {}
+        tables = [table for table in self.tables if not table.form]
+        return {
+            **{table.name: f"Table {at}" for at, table in enumerate(tables, 1)},
+            **{figure.name: f"Figure {at}" for at, figure in enumerate(self.figures, 1)},
+        }
 
     @property
     def paragraphs(self) -> Iterator[Paragraph]:

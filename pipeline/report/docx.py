@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import zipfile
+from collections.abc import Mapping
 from datetime import datetime
 from typing import Any
 
@@ -12,8 +13,8 @@ from docx.enum.section import WD_ORIENT, WD_SECTION
 from docx.enum.style import WD_STYLE_TYPE
 from docx.shared import Mm, Pt, RGBColor
 
+from pipeline.core.house import Logo
 from pipeline.core.results import Results
-from pipeline.report.content import memo
 from pipeline.report.document import (
     Block,
     Bullets,
@@ -24,24 +25,29 @@ from pipeline.report.document import (
     Section,
     Table,
 )
+from pipeline.report.docx_fields import page_numbers, runs
 from pipeline.report.docx_parts import (
     TABLE_STYLES,
     add_table,
     border,
     caption,
     keep_with_next,
-    page_number,
-    runs,
     set_font,
+    table_style,
 )
 from pipeline.report.figures import png
+from pipeline.report.logo import pixels, placed
+from pipeline.report.memo import memo
 from pipeline.report.numerals import clean
 
 # A fixed date: the same results give the same bytes whenever they are written.
 WRITTEN = datetime(2000, 1, 1)
 ZIP_DATE = (1980, 1, 1, 0, 0, 0)
 FAINT = RGBColor(0x60, 0x5A, 0x52)
-PAGE = (Mm(210), Mm(297))
+PAPER: Mapping[str, tuple[int, int]] = {
+    "A4": (Mm(210), Mm(297)),
+    "Letter": (Mm(215.9), Mm(279.4)),
+}
 MARGIN = Mm(20)
 HEADINGS = {"Title": 20, "Heading 1": 15, "Heading 2": 13, "Heading 3": 11}
 
@@ -56,17 +62,19 @@ def file(document: Document) -> bytes:
     word = docx.Document()
     _styles(word)
     _properties(word, document)
-    _page(word.sections[0], wide=False)
+    size = PAPER[document.house.page]
+    _page(word.sections[0], size, wide=False)
+    _logo(word, document.house.logo)
     word.add_paragraph(clean(document.title), style="Title")
     subtitle = word.add_paragraph(clean(document.subtitle))
     subtitle.runs[0].font.color.rgb = FAINT
     wide = False
     for section in document.sections:
         if section.wide != wide:
-            _page(word.add_section(WD_SECTION.NEW_PAGE), wide=section.wide)
+            _page(word.add_section(WD_SECTION.NEW_PAGE), size, wide=section.wide)
             wide = section.wide
-        _section(word, section)
-    page_number(word.sections[0].footer.paragraphs[0], clean(document.title))
+        _section(word, section, size, document.numbers)
+    _footer(word.sections[0].footer, document)
     buffer = io.BytesIO()
     word.save(buffer)
     return _undated(buffer.getvalue())
@@ -94,6 +102,7 @@ def _styles(word: Any) -> None:
         set_font(style, "Arial", points)
         style.paragraph_format.space_after = Pt(1)
         style.paragraph_format.line_spacing = 1.0
+    table_style(word)
 
 
 def _properties(word: Any, document: Document) -> None:
@@ -103,22 +112,44 @@ def _properties(word: Any, document: Document) -> None:
     facts.last_modified_by, facts.revision, facts.language = "", 1, "en"
 
 
-def _page(section: Any, *, wide: bool) -> None:
-    short, long = PAGE
+def _page(section: Any, size: tuple[int, int], *, wide: bool) -> None:
+    short, long = size
     section.orientation = WD_ORIENT.LANDSCAPE if wide else WD_ORIENT.PORTRAIT
     section.page_width, section.page_height = (long, short) if wide else (short, long)
     section.left_margin = section.right_margin = MARGIN
     section.top_margin = section.bottom_margin = Mm(18)
 
 
-def _section(word: Any, section: Section) -> None:
-    word.add_heading(clean(section.heading), section.level - 1)
-    width = (PAGE[1] if section.wide else PAGE[0]) - 2 * MARGIN
+def _section(
+    word: Any, section: Section, size: tuple[int, int], numbers: Mapping[str, str]
+) -> None:
+    heading = word.add_heading(clean(section.heading), section.level - 1)
+    heading.paragraph_format.page_break_before = section.fresh or None
+    width = size[1 if section.wide else 0] - 2 * MARGIN
     for block in section.blocks:
-        _block(word, block, width)
+        _block(word, block, width, numbers)
 
 
-def _block(word: Any, block: Block, width: int) -> None:
+def _logo(word: Any, logo: Logo | None) -> None:
+    if logo is None:
+        return
+    holder = word.add_paragraph()
+    width, height = placed(logo)
+    picture = holder.add_run().add_picture(io.BytesIO(pixels(logo)), Mm(width), Mm(height))
+    picture._inline.docPr.set("descr", clean(logo.words))
+
+
+def _footer(footer: Any, document: Document) -> None:
+    """The house's own words if there are any, then the title and the page's number."""
+    holder = footer.paragraphs[0]
+    if document.house.footer:
+        holder.add_run(clean(document.house.footer)).bold = True
+        holder.add_run().add_break()
+    holder.add_run(f"{clean(document.title)[:90]}    ")
+    page_numbers(holder)
+
+
+def _block(word: Any, block: Block, width: int, numbers: Mapping[str, str]) -> None:
     match block:
         case Paragraph():
             runs(word.add_paragraph(style="Quote" if block.quotation else None), block)
@@ -128,9 +159,9 @@ def _block(word: Any, block: Block, width: int) -> None:
         case Callout(heading, paragraphs):
             _callout(word, heading, paragraphs)
         case Table():
-            add_table(word, block, width)
+            add_table(word, block, width, numbers)
         case Figure():
-            _figure(word, block, width)
+            _figure(word, block, width, numbers)
 
 
 def _callout(word: Any, heading: str, paragraphs: tuple[Paragraph, ...]) -> None:
@@ -143,8 +174,8 @@ def _callout(word: Any, heading: str, paragraphs: tuple[Paragraph, ...]) -> None
         border(paragraph._p.get_or_add_pPr(), "left")
 
 
-def _figure(word: Any, figure: Figure, width: int) -> None:
-    caption(word, figure.title)
+def _figure(word: Any, figure: Figure, width: int, numbers: Mapping[str, str]) -> None:
+    caption(word, figure, numbers)
     holder = word.add_paragraph()
     keep_with_next(holder)
     shape = holder.add_run().add_picture(io.BytesIO(png(figure)), width=min(width, Mm(160)))

@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from typing import Any
 
+from docx.enum.style import WD_STYLE_TYPE
 from docx.enum.table import WD_TABLE_ALIGNMENT
 from docx.oxml import OxmlElement
 from docx.oxml.ns import qn
 from docx.shared import Emu, Pt
 
-from pipeline.report.document import Paragraph, Table
+from pipeline.report.document import SHORTENED, Figure, Table
+from pipeline.report.docx_fields import add_number, runs
 from pipeline.report.numerals import clean, lines
 
+TABLE_LOOK = "Three Rules"
 TABLE_STYLES = {"Table Text": 8.5, "Table Small": 7.5}
 RULE = {"val": "single", "sz": "8", "space": "1", "color": "23211E"}
 LIGHT = {"val": "single", "sz": "12", "space": "8", "color": "C9C2B6"}
@@ -27,24 +31,18 @@ def set_font(style: Any, name: str, size: float) -> None:
         fonts.set(qn(f"w:{script}"), name)
 
 
-def runs(holder: Any, paragraph: Paragraph) -> Any:
-    """Fill a Word paragraph with a paragraph's pieces; the run-in heading in bold."""
-    if paragraph.lead:
-        holder.add_run(f"{clean(paragraph.lead)} ").bold = True
-    for piece in paragraph.pieces:
-        holder.add_run(clean(piece if isinstance(piece, str) else piece.text))
-    return holder
-
-
 def keep_with_next(paragraph: Any) -> None:
     """Keep a paragraph on the page of the one after it."""
     paragraph.paragraph_format.keep_with_next = True
 
 
-def caption(word: Any, title: Paragraph) -> None:
-    """A title above a table or a figure."""
+def caption(word: Any, block: Table | Figure, numbers: Mapping[str, str]) -> None:
+    """The title above a table or a figure, with its number where the document gives one."""
     holder = word.add_paragraph(style="Caption")
-    runs(holder, title)
+    if block.name in numbers:
+        mark = list(numbers).index(block.name) + 1
+        add_number(holder, block.name, numbers[block.name], mark)
+    runs(holder, block.title)
     keep_with_next(holder)
 
 
@@ -66,35 +64,47 @@ def border(properties: Any, side: str | None) -> None:
     )  # fmt: skip
 
 
-def page_number(holder: Any, title: str) -> None:
-    """A footer: the title and the page's number."""
-    holder.add_run(f"{title[:90]}    ")
-    for kind in ("begin", None, "end"):
-        if kind is None:
-            field = OxmlElement("w:instrText")
-            field.text = "PAGE"
-        else:
-            field = OxmlElement("w:fldChar")
-            field.set(qn("w:fldCharType"), kind)
-        holder.add_run()._r.append(field)
+def table_style(word: Any) -> None:
+    """The style of all tables: a rule above, one below, one under the heading row."""
+    style = word.styles.add_style(TABLE_LOOK, WD_STYLE_TYPE.TABLE)
+    style.base_style = word.styles["Normal Table"]
+    properties = OxmlElement("w:tblPr")
+    borders = OxmlElement("w:tblBorders")
+    for side in ("top", "bottom"):
+        borders.append(_line(side, RULE))
+    margins = OxmlElement("w:tblCellMar")
+    for side in ("left", "right"):
+        edge = OxmlElement(f"w:{side}")
+        edge.set(qn("w:w"), "68")
+        edge.set(qn("w:type"), "dxa")
+        margins.append(edge)
+    properties.extend((borders, margins))
+    heading = OxmlElement("w:tblStylePr")
+    heading.set(qn("w:type"), "firstRow")
+    strong, cells, ruled = (OxmlElement(f"w:{n}") for n in ("rPr", "tcPr", "tcBorders"))
+    strong.append(OxmlElement("w:b"))
+    ruled.append(_line("bottom", RULE))
+    cells.append(ruled)
+    heading.extend((strong, cells))
+    style.element.extend((properties, heading))
 
 
-def add_table(word: Any, table: Table, width: int) -> None:
+def add_table(word: Any, table: Table, width: int, numbers: Mapping[str, str]) -> None:
     """A table with three rules, its heading repeated on every page, its title above."""
-    caption(word, table.title)
+    caption(word, table, numbers)
     style = "Table Small" if len(table.columns) > 4 else "Table Text"
     rows = table.page_rows
     found = word.add_table(rows=1 + len(rows), cols=len(table.columns))
     found.alignment = WD_TABLE_ALIGNMENT.LEFT
     found.autofit = False
-    _frame(found)
+    found.style = TABLE_LOOK
+    found._tbl.tblPr.find(qn("w:tblLook")).set(qn("w:firstColumn"), "0")
     widths = [Emu(w) for w in column_widths(table, width)]
     grid = zip(found.columns, widths, strict=True)
     for column, wide in grid:
         column.width = wide
     head: list[tuple[str, ...]] = [(clean(column.heading),) for column in table.columns]
     _fill(found.rows[0], head, widths, style, bold=True)
-    _rule(found.rows[0], "bottom")
     found.rows[0]._tr.get_or_add_trPr().append(OxmlElement("w:tblHeader"))
     for at, (line, row) in enumerate(zip(found.rows[1:], rows, strict=True)):
         _fill(line, [lines(cell) for cell in row], widths, style, form=table.form)
@@ -112,7 +122,8 @@ def column_widths(table: Table, width: int) -> list[int]:
 def _need(table: Table, at: int) -> float:
     cells = [row[at] for row in table.page_rows]
     longest = max((len(line) for cell in cells for line in lines(cell)), default=0)
-    return float(min(max(longest, len(table.columns[at].title) / 2, 8), 26))
+    most = 60 if table.columns[at].prose else 26
+    return float(min(max(longest, len(table.columns[at].title) / 2, 8), most))
 
 
 def _fill(
@@ -143,6 +154,8 @@ def _below(word: Any, table: Table) -> None:
         paragraph.paragraph_format.space_after = Pt(2)
         for run in paragraph.runs:
             run.font.size = Pt(8)
+    if table.shortened:
+        word.add_paragraph().add_run(SHORTENED).font.size = Pt(8)
     if not table.notes:
         word.add_paragraph().paragraph_format.space_after = Pt(2)
 
@@ -152,21 +165,6 @@ def _line(side: str, look: dict[str, str]) -> Any:
     for key, value in look.items():
         line.set(qn(f"w:{key}"), value)
     return line
-
-
-def _frame(table: Any) -> None:
-    properties = table._tbl.tblPr
-    borders = OxmlElement("w:tblBorders")
-    for side in ("top", "bottom"):
-        borders.append(_line(side, RULE))
-    properties.insert_element_before(borders, "w:shd", "w:tblLayout", "w:tblLook")
-    margins = OxmlElement("w:tblCellMar")
-    for side in ("left", "right"):
-        edge = OxmlElement(f"w:{side}")
-        edge.set(qn("w:w"), "68")
-        edge.set(qn("w:type"), "dxa")
-        margins.append(edge)
-    properties.insert_element_before(margins, "w:tblLook")
 
 
 def _rule(row: Any, side: str) -> None:

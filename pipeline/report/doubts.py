@@ -185,7 +185,7 @@ MONEY_NOTE = prose(
 
 def money_table(material: Material) -> Table:
     """The mean outcome and the feature's effect in money at three sizes of deal."""
-    unit = material.study.currency
+    unit = material.money_unit
     lead, base = material.lead, material.study.words(material.study.outcome.base)
     columns = [Column(f"At a {base} of"), Column(capital(base), unit),
                Column(f"Mean {material.outcome}", unit)]  # fmt: skip
@@ -203,21 +203,23 @@ def money_table(material: Material) -> Table:
 
 
 def _money_cells(material: Material, by: float) -> tuple[Interval, ...]:
-    unit, (mean, low, high) = material.study.currency, material.mean
+    unit, (mean, low, high) = material.money_unit, material.mean
     digits = digits_for(by * (high - low) / 4, 2)
     ends = (plain(by * low, digits, unit), plain(by * high, digits, unit))
     cells = [Interval(plain(by * mean, digits, unit), *ends)]
     if material.lead is not None:
-        cells.append(_money_set(material.lead, by, unit))
+        cells.append(_money_set(material, material.lead, by))
     return tuple(cells)
 
 
-def _money_set(lead: Estimate, by: float, unit: str) -> Interval:
+def _money_set(material: Material, lead: Estimate, by: float) -> Interval:
+    unit = material.money_unit
     term, found = lead.term(lead.treatment), lead.interval
     digits = digits_for(by * term["std_error"], 2)
     estimate = plain(by * term["coefficient"], digits, unit)
     if set_cell(0.0, found, 0).words:
-        words = set_words(found, digits, replace(money_in(unit), scale=by))
+        money = money_in(material.study.currency, material.house.money)
+        words = set_words(found, digits, replace(money, scale=by))
         return Interval(estimate, None, None, words)
     return Interval(estimate, plain(by * found.low, digits), plain(by * found.high, digits))
 

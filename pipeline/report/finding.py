@@ -145,7 +145,7 @@ def time_sentence(material: Material) -> Pieces:
 def reaction_digits(material: Material) -> int:
     """Decimals of the mean reaction in basis points, from the reach of its interval."""
     low, high = material.tests.interval
-    return bp_digits(BP * (high - low) / 4)
+    return bp_digits(BP * (high - low) / 4, material.unit.decimals)
 
 
 def _interval(material: Material, digits: int) -> Pieces:
@@ -248,7 +248,6 @@ def money_sentence(material: Material) -> Pieces:
     name = "feature_money" if material.known("feature_money") else "mean_reaction_money"
     if not material.known(name):
         return ()
-    currency = material.study.currency
     low, high = (material.number(name, end).value for end in ("ci_low", "ci_high"))
     value = material.number(name).value
     reach = (high - low) / 4 if math.isfinite(high - low) else abs(value) / 10
@@ -257,9 +256,9 @@ def money_sentence(material: Material) -> Pieces:
     what = "the effect" if name == "feature_money" else f"the mean {material.outcome}"
     base = material.study.words(material.study.outcome.base)
     return (
-        "At the median ", embedded(base, "study"), " (", *money_pieces(middle, currency),
+        "At the median ", embedded(base, "study"), " (", *money_pieces(middle, material),
         f") {what} is ",
-        *money_pieces(material.number(name, digits=digits), currency), " (",
+        *money_pieces(material.number(name, digits=digits), material), " (",
         *set_pieces(material, name, digits, MONEY), "). ",
     )  # fmt: skip
 

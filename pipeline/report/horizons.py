@@ -66,7 +66,7 @@ def calendar_time_table(material: Material) -> Table | None:
         Column("Companies held", "mean"), Column("Abnormal return a session", "bp"),
         Column("t"), Column("p"), Column(f"Times the horizon, with {level} interval", "bp"),
     )  # fmt: skip
-    rows = tuple(_portfolio_row(row) for _, row in frame.iterrows())
+    rows = tuple(_portfolio_row(row, material.unit.decimals) for _, row in frame.iterrows())
     notes = [
         prose("Each session holds every company whose deal came in the sessions before, and the "
               "portfolio's return over the risk-free rate (over zero where the factor file has "
@@ -85,9 +85,9 @@ def calendar_time_table(material: Material) -> Table | None:
                  tuple(notes))  # fmt: skip
 
 
-def _portfolio_row(row: pd.Series) -> Row:
+def _portfolio_row(row: pd.Series, most: int) -> Row:
     horizon, error = int(row["horizon"]), float(row["std_error"])
-    daily, whole = bp_digits(error * BP), bp_digits(error * horizon * BP)
+    daily, whole = (bp_digits(error * BP * span, most) for span in (1, horizon))
     answer: tuple[Cell, ...] = (Text("no answer"), None, None, None)
     if not row["reason"]:
         answer = (
@@ -119,7 +119,7 @@ def buy_and_hold_table(material: Material) -> Table | None:
         Column(f"Mean difference with {level} interval", "bp"), Column("Median", "bp"),
         Column("t"), Column("p"), Column("Skewness"), Column("p, skewness-adjusted"),
     )  # fmt: skip
-    rows = tuple(_window_row(row) for _, row in frame.iterrows())
+    rows = tuple(_window_row(row, material.unit.decimals) for _, row in frame.iterrows())
     notes = (
         prose("The return of holding the deal's company less that of holding the candidate of the "
               "same year and exchange that was most alike before the deal in the columns the "
@@ -133,9 +133,9 @@ def buy_and_hold_table(material: Material) -> Table | None:
     return Table("buy_and_hold", title, columns, rows, notes)
 
 
-def _window_row(row: pd.Series) -> Row:
+def _window_row(row: pd.Series, most: int) -> Row:
     low, high = float(row["ci_low"]), float(row["ci_high"])
-    digits = bp_digits(BP * (high - low) / 4) if math.isfinite(high - low) else 0
+    digits = bp_digits(BP * (high - low) / 4, most) if math.isfinite(high - low) else 0
     window = Window(int(row["window_start"]), int(row["window_end"]))
     n = int(row["n"])
     return (

@@ -13,6 +13,7 @@ from markupsafe import Markup
 from pipeline.core.results import Results
 from pipeline.report.content import report
 from pipeline.report.document import (
+    SHORTENED,
     Cell,
     Document,
     Figure,
@@ -20,13 +21,15 @@ from pipeline.report.document import (
     Number,
     Paragraph,
     Quote,
+    Reference,
     Table,
     Text,
 )
 from pipeline.report.figures import csv, svg
+from pipeline.report.logo import address, placed
 from pipeline.report.numerals import clean, lines, slug
 
-_DATE = re.compile(r"\d{4}-\d\d-\d\d( \d\d:\d\d)?")
+_MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
 _PROLOGUE = re.compile(r"<\?xml.*?\?>\s*<!DOCTYPE.*?>\s*", re.DOTALL)
 _METADATA = re.compile(r"\s*<metadata>.*?</metadata>", re.DOTALL)
 _STYLE = re.compile(r"\s*<defs>\s*<style.*?</style>\s*</defs>", re.DOTALL)
@@ -65,18 +68,28 @@ def _template() -> Template:
         "sources": sources,
         "drawn": drawn,
         "numeric": numeric,
+        "address": address,
+        "placed": placed,
+        "anchor": anchor,
         "column_class": column_class,
     }
     css = environment.loader.get_source(environment, "page.css")[0] if environment.loader else ""
+    environment.globals["shortened"] = SHORTENED
     environment.globals["css"] = Markup(css)
     return environment.get_template("page.html.j2")
 
 
 def numeric(cell: Cell) -> bool:
     """Whether a cell's content, a number or a date, stays on one line."""
-    worded = isinstance(cell, Text) and not _DATE.fullmatch(cell.text)
+    worded = isinstance(cell, Text) and not _MOMENT.fullmatch(cell.text)
     worded = worded or (isinstance(cell, Interval) and bool(cell.words))
     return cell is not None and not worded
+
+
+def anchor(reference: Reference, document: Document) -> str:
+    """Where a reference leads: the id of its table or figure."""
+    kind = document.numbers.get(reference.name, "").partition(" ")[0].lower()
+    return f"{kind}-{slug(reference.name)}"
 
 
 def column_class(table: Table, at: int) -> str:

@@ -10,6 +10,7 @@ import numpy as np
 import pandas as pd
 
 from pipeline.core.estimate import Estimate, NotApplicable, TestResult, Withheld
+from pipeline.core.house import House, money_heading
 from pipeline.core.outcome import BASIS_POINTS, Unit
 from pipeline.core.prices import Booleans
 from pipeline.core.results import Results, StudyFacts, WindowTests
@@ -124,6 +125,16 @@ class Material:
     def unit(self) -> Unit:
         """How amounts of the outcome are printed."""
         return self.study.outcome.unit
+
+    @property
+    def house(self) -> House:
+        """The style of the papers."""
+        return self.study.house
+
+    @property
+    def money_unit(self) -> str:
+        """The unit of a column of money, as the house shows it."""
+        return money_heading(self.study.currency, self.house.money)
 
     @property
     def ready(self) -> bool:

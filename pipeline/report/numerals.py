@@ -11,7 +11,8 @@ import math
 import re
 
 from pipeline.core.outcome import Unit
-from pipeline.report.document import Cell, Interval, Number, Statistic, Text
+from pipeline.report.days import day_words
+from pipeline.report.document import Bracketed, Cell, Day, Interval, Number, Statistic, Text
 
 BP = 10_000.0
 PERCENT = 100.0
@@ -66,15 +67,17 @@ def digits_for(error: float, most: int) -> int:
     return min(max(0, 1 - math.floor(math.log10(error))), most)
 
 
-def bp_digits(error: float) -> int:
-    """Decimals of a value in basis points whose standard error, in basis points, is ``error``."""
-    return digits_for(error, 1 if not error < 0.1 else 6)
+def bp_digits(error: float, most: int = 1) -> int:
+    """Decimals of a value in basis points whose standard error, in basis points, is ``error``.
+
+    At most ``most``, unless the error is smaller than they show.
+    """
+    return digits_for(error, most if not error < 10.0**-most else 6)
 
 
 def unit_digits(error: float, unit: Unit) -> int:
     """Decimals of an amount printed in ``unit`` whose standard error, as stored, is ``error``."""
-    printed = error * unit.scale
-    return digits_for(printed, unit.decimals if not printed < 10.0**-unit.decimals else 6)
+    return bp_digits(error * unit.scale, unit.decimals)
 
 
 def plain_digits(value: float, significant: int = 3) -> int:
@@ -125,7 +128,9 @@ def count(value: int, unit: str = "deals") -> Number:
 
 def shown(number: Number | None) -> str:
     """A number cell as printed."""
-    return "" if number is None else show(number.value, number.digits, least=number.least)
+    if number is None:
+        return ""
+    return show(number.value, number.digits, least=number.least) + number.mark
 
 
 def phrase_p(text: str) -> str:
@@ -146,6 +151,11 @@ def lines(cell: Cell) -> tuple[str, ...]:
             ends = clean(cell.words) or f"[{shown(cell.low)}, {shown(cell.high)}]"
             empty = not cell.words and cell.low is None
             return _filled(shown(cell.estimate), "" if empty else ends)
+        case Bracketed(estimate, inside):
+            below = f"({shown(inside)})" if inside else ""
+            return _filled(shown(estimate), below)
+        case Day(day, dates):
+            return (day_words(day, dates),)
         case Statistic():
             adjusted = f"Holm {phrase_p(shown(cell.adjusted))}" if cell.adjusted else ""
             p = phrase_p(shown(cell.p)) if cell.p else ""

@@ -50,7 +50,7 @@ def averages_table(material: Material) -> Table:
     )  # fmt: skip
     frame = material.results.averages
     low, high = material.tests.interval
-    digits = bp_digits(BP * (high - low) / 4)
+    digits = bp_digits(BP * (high - low) / 4, material.unit.decimals)
     rows = tuple(
         (
             Text(str(row["average"])), count(int(row["n"])),
@@ -139,7 +139,7 @@ def _declared(material: Material, entry: WindowTests) -> str:
 
 def _window_row(material: Material, entry: WindowTests) -> tuple[Cell, ...]:
     low, high = entry.interval
-    digits = bp_digits(BP * (high - low) / 4)
+    digits = bp_digits(BP * (high - low) / 4, material.unit.decimals)
     return (
         Text(window_label(entry.window.label)),
         Text(material.study.words(entry.model)),

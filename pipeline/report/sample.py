@@ -69,7 +69,7 @@ def settings_table(material: Material) -> Table:
         ("Decision to announce explained by", joined(study.words(n) for n in study.selection)),
         ("In that decision alone", joined(study.words(n) for n in study.excluded)),
         ("Confidence level", level_words(study.level)),
-        ("Money in", study.currency),
+        ("Money in", material.money_unit),
         ("Seed of every random stream", str(study.seed)),
     ]
     cells = tuple((Text(key), Text(value)) for key, value in rows if value)

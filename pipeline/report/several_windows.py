@@ -26,7 +26,7 @@ def several_windows_table(material: Material) -> Table | None:
         Column("Dates", "n"), Column("Mean", "bp"), Column("t, by date"), Column("p"),
         Column("p, Holm"), Column("q, Benjamini–Hochberg"), Column("p, Romano–Wolf"),
     )  # fmt: skip
-    rows = tuple(_row(row) for _, row in own.iterrows())
+    rows = tuple(_row(row, material.unit.decimals) for _, row in own.iterrows())
     model = material.study.words(material.study.models[0])
     title = prose("What several windows cost, ", taken(model, "study"))
     notes = (
@@ -43,13 +43,13 @@ def several_windows_table(material: Material) -> Table | None:
     return Table(SEVERAL, title, columns, rows, notes)
 
 
-def _row(row: pd.Series) -> Row:
+def _row(row: pd.Series, most: int) -> Row:
     mean, t = float(row["mean"]), float(row["statistic"])
     window = Window(int(row["window_start"]), int(row["window_end"])).label
     error = abs(mean / t) if t else 0.0
     adjusted = (p_value(float(row[name])) for name in ("p_holm", "q_value", "p_romano_wolf"))
     return (
         Text(window_label(window)), Text(str(row["declared"])), count(int(row["n"])),
-        count(int(row["dates"]), "dates"), bp(mean, bp_digits(error * BP)), plain(t, 2),
+        count(int(row["dates"]), "dates"), bp(mean, bp_digits(error * BP, most)), plain(t, 2),
         p_value(float(row["p_value"])), *adjusted,
     )  # fmt: skip

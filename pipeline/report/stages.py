@@ -8,7 +8,6 @@ from pipeline.report.document import (
     Block,
     Cell,
     Column,
-    Interval,
     Number,
     Paragraph,
     Row,
@@ -29,9 +28,10 @@ from pipeline.report.numerals import (
 )
 from pipeline.report.wording import (
     CRITICAL_SIZE,
+    bracket_words,
+    coefficient_cell,
     df_words,
     distribution_words,
-    level_words,
     per_unit,
     spoken,
 )
@@ -103,9 +103,9 @@ def stage_table(material: Material, parent: Estimate, stage: Estimate, name: str
     same = stage.outcome == parent.outcome
     unit = material.unit if same else None
     heading = per_unit(unit) if unit else "per unit"
-    level = level_words(stage.level)
+    below = bracket_words(material.house, stage.level)
     columns = (
-        Column("Variable"), Column(f"Coefficient with {level} interval", heading),
+        Column("Variable"), Column(f"Coefficient with {below}", heading),
         Column("Standard error", heading), Column("Statistic"), Column("p"),
     )  # fmt: skip
     rows = [_term_row(material, stage, term, unit) for term in stage.names]
@@ -131,13 +131,13 @@ def _term_row(material: Material, stage: Estimate, name: str, unit: Unit | None)
     error = term["std_error"]
     digits = unit_digits(error, unit) if unit else digits_for(error, 6)
 
-    def cell(key: str) -> Number | None:
-        return in_unit(term[key], unit, digits) if unit else plain(term[key], digits)
+    def shown_in(value: float) -> Number | None:
+        return in_unit(value, unit, digits) if unit else plain(value, digits)
 
     return (
         Text(capital(material.study.words(name))),
-        Interval(cell("coefficient"), cell("ci_low"), cell("ci_high")),
-        cell("std_error"),
+        coefficient_cell(term, material.house, shown_in),
+        shown_in(error),
         plain(term["statistic"], 2),
         p_value(term["p_value"]),
     )

@@ -58,16 +58,24 @@ ROOM = 84
 
 def render(results: Results) -> dict[str, bytes]:
     """``tables/<name>.tex`` for every table that is not to be filled in by hand."""
-    tables = (table for table in report(results).tables if not table.form)
-    return {f"tables/{table.name}.tex": tabular(table).encode() for table in tables}
+    document = report(results)
+    tables = (table for table in document.tables if not table.form)
+    return {
+        f"tables/{table.name}.tex": tabular(table, document.house.footer).encode()
+        for table in tables
+    }
 
 
-def tabular(table: Table) -> str:
-    """A table environment to be read with ``\\input``; needs booktabs and array."""
+def tabular(table: Table, footer: str = "") -> str:
+    """A table environment to be read with ``\\input``; needs booktabs and array.
+
+    The house's ``footer`` stands below the notes, because the page is somebody else's.
+    """
     size = r"\centering\footnotesize" if len(table.columns) < 7 else r"\centering\scriptsize"
     body = [line for at, row in enumerate(table.page_rows) for line in _row(table, at, row)]
     head = " & ".join(escape(column.heading) for column in table.columns)
-    notes = [rf"{{\par\footnotesize\raggedright {escape(note.text)}\par}}" for note in table.notes]
+    below = [*(note.text for note in table.notes), *([footer] if footer else [])]
+    notes = [rf"{{\par\footnotesize\raggedright {escape(text)}\par}}" for text in below]
     return "\n".join(
         [
             r"\begin{table}[htbp]", size, r"\setlength{\tabcolsep}{4pt}",

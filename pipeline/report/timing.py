@@ -80,7 +80,7 @@ def readings_table(material: Material) -> Table:
         Column("No answer because", prose=True),
     )  # fmt: skip
     low, high = material.tests.interval
-    digits = bp_digits(BP * (high - low) / 4)
+    digits = bp_digits(BP * (high - low) / 4, material.unit.decimals)
     rows = []
     for row in material.results.readings.to_dict("records"):
         statistic = plain(float(row["statistic"]), 2)

@@ -4,17 +4,35 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable, Mapping
+from dataclasses import replace
 from numbers import Real
 
 import pandas as pd
 
 from pipeline.core.estimate import ConfidenceSet, Shape, TestResult
+from pipeline.core.house import INTERVAL, STANDARD_ERROR, T_VALUE, House, money_words
 from pipeline.core.outcome import BASIS_POINTS, Unit
-from pipeline.report.document import Cell, Interval, Piece, Quote, Text, Verbatim
+from pipeline.report.document import (
+    Bracketed,
+    Cell,
+    Interval,
+    Number,
+    Piece,
+    Quote,
+    Text,
+    Verbatim,
+)
 from pipeline.report.material import Material, capital
 from pipeline.report.numerals import PERCENT, in_unit, plain, show, true_minus
 
+# The convention of finance journals: 10%, 5% and 1% (common practice, no source).
+STARS = (0.10, 0.05, 0.01)
+STAR_WORDS = "* p < 10%, ** p < 5%, *** p < 1%, two-sided, from the degrees of freedom named here."
+SET_ALONE = (
+    " A coefficient whose confidence set is not made from its standard error carries no star: read "
+    "the set."
+)
 CRITICAL_SIZE = re.compile(r"stock_yogo(_liml)?_size_(\d+)")
 
 
@@ -75,6 +93,34 @@ def set_cell(
     return Interval(middle, None, None, set_words(found, digits, unit))
 
 
+def coefficient_cell(
+    term: Mapping[str, float], house: House, shown: Callable[[float], Number | None]
+) -> Interval | Bracketed:
+    """A coefficient with what the house wants in brackets under it, and its stars if any.
+
+    ``term`` holds ``coefficient, std_error, statistic, p_value, ci_low, ci_high``; ``shown`` makes
+    a cell of an amount with the digits that the standard error allows.
+    """
+    middle = shown(term["coefficient"])
+    if middle is not None and house.stars:
+        middle = replace(middle, mark=stars(term["p_value"]))
+    if house.brackets == T_VALUE:
+        return Bracketed(middle, plain(term["statistic"], 2))
+    if house.brackets == STANDARD_ERROR:
+        return Bracketed(middle, shown(term["std_error"]))
+    return Interval(middle, shown(term["ci_low"]), shown(term["ci_high"]))
+
+
+def stars(p: float) -> str:
+    """Three, two, one or no star."""
+    return "*" * sum(p < limit for limit in STARS)
+
+
+def bracket_words(house: House, level: float) -> str:
+    """What stands with a coefficient, for a heading."""
+    return f"{level_words(level)} interval" if house.brackets == INTERVAL else house.brackets
+
+
 def set_pieces(
     material: Material, name: str, digits: int, unit: Unit | None = None
 ) -> tuple[Piece, ...]:
@@ -100,11 +146,10 @@ def set_pieces(
     return (used.before, low, " to ", used.before, high, used.change)
 
 
-def money_pieces(quoted: Quote, currency: str) -> tuple[Piece, ...]:
-    """``USD −10.6 million`` of a quoted amount and ``USD million``."""
-    unit, _, scale = currency.partition(" ")
-    after = Verbatim(f" {scale}" if scale else "", "study")
-    return (Verbatim(f"{unit} ", "study"), quoted, after)
+def money_pieces(quoted: Quote, material: Material) -> tuple[Piece, ...]:
+    """``USD −10.6 million`` of a quoted amount, as the house shows money."""
+    before, after = money_words(material.study.currency, material.house.money)
+    return (Verbatim(before, "study"), quoted, Verbatim(after, "study"))
 
 
 def distribution_words(result: TestResult) -> str:

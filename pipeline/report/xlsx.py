@@ -9,25 +9,49 @@ from __future__ import annotations
 import io
 import math
 import re
-from datetime import datetime
+from datetime import datetime, time
 from itertools import zip_longest
 from typing import Any
 
 import xlsxwriter
+from PIL import Image
 
+from pipeline.core.house import House, Logo
 from pipeline.core.results import Results
 from pipeline.report.content import report
-from pipeline.report.document import Cell, Document, Interval, Number, Statistic, Table, Text
-from pipeline.report.numerals import clean
+from pipeline.report.document import (
+    Bracketed,
+    Cell,
+    Day,
+    Document,
+    Interval,
+    Number,
+    Statistic,
+    Table,
+    Text,
+)
+from pipeline.report.logo import pixels, placed
+from pipeline.report.numerals import clean, lines
 
-Part = Number | str | None
+Part = Number | Day | str | None
 Formats = dict[str, Any]
 
 # A fixed date: the same results give the same bytes whenever they are written.
 WRITTEN = datetime(2000, 1, 1)
-WIDEST = 60
+BROADEST = 60
 LINE = 15.0
 CONTENTS = "Contents"
+# Real dates under a number format, the month's name in the language of its locale code.
+DATES = {
+    "iso": "yyyy-mm-dd",
+    "english": "[$-809]d mmmm yyyy",
+    "american": "[$-409]mmmm d, yyyy",
+    "german": "[$-407]d. mmmm yyyy",
+    "french": "[$-40C]d mmmm yyyy",
+}
+# What the library takes a picture to have that does not say.
+DPI_WITHOUT = 96
+PAPER = {"A4": 9, "Letter": 1}
 
 
 def render(results: Results) -> dict[str, bytes]:
@@ -52,6 +76,8 @@ def workbook(document: Document) -> bytes:
     _contents(book, formats, document, tables, names)
     for table, name in zip(tables, names, strict=True):
         _sheet(book, formats, table, name)
+    for sheet in book.worksheets():
+        _paper(sheet, document.house)
     book.close()
     return buffer.getvalue()
 
@@ -79,6 +105,10 @@ def parts(cell: Cell) -> tuple[Part, ...]:
             return (clean(text) or None,)
         case Number():
             return (cell,)
+        case Day():
+            return (cell,)
+        case Bracketed(estimate, inside):
+            return (estimate, inside)
         case Interval(estimate, low, high, words):
             return (estimate, clean(words), None) if words else (estimate, low, high)
         case Statistic(value, p, adjusted):
@@ -89,9 +119,38 @@ def part_titles(cells: list[Cell]) -> tuple[str, ...]:
     """What the sheet columns of one table column are called."""
     intervals = any(isinstance(cell, Interval) for cell in cells)
     tests = any(isinstance(cell, Statistic) for cell in cells)
+    if any(isinstance(cell, Bracketed) for cell in cells):
+        below = "in brackets" + (", or p" if tests else "") + (", or low" if intervals else "")
+        return ("estimate", below, "high") if intervals or tests else ("estimate", below)
     if intervals:
         return ("value", "low, or p", "high") if tests else ("estimate", "low", "high")
     return ("statistic", "p", "Holm p") if tests else ("",)
+
+
+def _paper(sheet: Any, house: House) -> None:
+    """The sheet as printed: the paper's size, the house's words and the page at its foot."""
+    words = clean(house.footer).replace("&", "&&")
+    sheet.set_footer(f"&L{words[:200]}&RPage &P of &N")
+    sheet.set_paper(PAPER[house.page])
+    sheet.fit_to_pages(1, 0)
+
+
+def _logo(sheet: Any, logo: Logo | None) -> None:
+    """The house's logo beside the list of sheets."""
+    if logo is None:
+        return
+    data = pixels(logo)
+    with Image.open(io.BytesIO(data)) as picture:
+        across, down = picture.size
+        dpi = picture.info.get("dpi", (DPI_WITHOUT, DPI_WITHOUT))
+    width, height = (size / 25.4 for size in placed(logo))
+    facts = {
+        "image_data": io.BytesIO(data),
+        "x_scale": width * dpi[0] / across,
+        "y_scale": height * dpi[1] / down,
+        "description": clean(logo.words),
+    }
+    sheet.insert_image(0, 4, f"logo.{logo.kind}", facts)
 
 
 def _contents(
@@ -107,8 +166,8 @@ def _contents(
         sheet.write_string(row, 1, clean(table.title.text))
         sheet.write_number(row, 2, len(table.rows))
     sheet.set_column(0, 0, 32)
-    sheet.set_column(1, 1, WIDEST)
-    sheet.fit_to_pages(1, 0)
+    sheet.set_column(1, 1, BROADEST)
+    _logo(sheet, document.house.logo)
 
 
 def _sheet(book: Any, formats: Formats, table: Table, name: str) -> None:
@@ -128,16 +187,16 @@ def _sheet(book: Any, formats: Formats, table: Table, name: str) -> None:
         column += len(names)
     sheet.freeze_panes(first, 1)
     sheet.set_landscape()
-    sheet.fit_to_pages(1, 0)
 
 
 def _width(table: Table, at: int, names: tuple[str, ...]) -> int:
     """Width in characters of each sheet column of one table column."""
     if len(names) > 1:
         return 12
-    texts = [cell.text for row in table.rows if isinstance(cell := row[at], Text)]
+    cells = [row[at] for row in table.rows]
+    texts = [line for cell in cells if isinstance(cell, Text | Day) for line in lines(cell)]
     longest = max((len(line) for text in texts for line in text.splitlines()), default=0)
-    return min(max(longest, len(table.columns[at].heading), 8), WIDEST)
+    return min(max(longest, len(table.columns[at].heading), 8), BROADEST)
 
 
 def _height(row: tuple[Cell, ...], titles: list[tuple[str, ...]], widths: list[int]) -> int:
@@ -205,8 +264,13 @@ def _write(
         case Number(value, _) if not math.isfinite(value):
             look = _format(book, formats, valign="top", align="right", **rule)
             sheet.write_string(row, column, "no bound" if math.isinf(value) else "", look)
-        case Number(value, digits):
+        case Day(day, dates):
+            pattern = DATES[dates]
+            look = _format(book, formats, num_format=pattern, valign="top", align="left", **rule)
+            sheet.write_datetime(row, column, datetime.combine(day, time()), look)
+        case Number(value, digits, mark=mark):
             pattern = "#,##0" + (f".{'0' * digits}" if digits else "")
+            pattern += f'"{mark}"' if mark else ""
             look = _format(book, formats, num_format=pattern, valign="top", **rule)
             sheet.write_number(row, column, value, look)
         case str():

@@ -86,6 +86,10 @@ def _read(path: Path, seen: tuple[Path, ...]) -> dict[str, Any]:
         for key in PATH_KEYS:
             if isinstance(inputs.get(key), str):
                 inputs[key] = _place(path.parent, inputs[key])
+    papers = raw.get("papers")
+    if isinstance(papers, dict) and isinstance(papers.get("logo"), str):
+        logo = papers["logo"]
+        papers["logo"] = (path.parent / logo).resolve() if logo else None
     base = raw.pop("base", None)
     if base is None:
         return raw

@@ -18,6 +18,7 @@ from pipeline.registry import TESTS, entry
 from pipeline.returns.events import EventOptions
 from pipeline.returns.sessions import CalendarChange
 from pipeline.study import plan_events, plan_prices, plan_returns, ready
+from pipeline.study.papers import house_of
 from pipeline.study.schema import Characteristic, Study
 from pipeline.study.sources import source_of
 
@@ -258,6 +259,7 @@ def facts(study: Study, leading_test: str, listed: tuple[Window, ...]) -> StudyF
         currency=study.report.currency,
         seed=study.seed,
         outcome=ready.outcome(study),
+        house=house_of(study.papers),
     )
 
 

@@ -13,22 +13,23 @@ from pipeline.study.schema import Study
 
 def outcome(study: Study) -> core.Outcome:
     """What the study explains, for a reader."""
-    asked = study.outcome
+    asked, papers = study.outcome, study.papers
     if asked is None:
-        return core.ABNORMAL_RETURN
-    named = outcome_named(asked.model_dump(), study.report.currency)
+        return core.with_decimals(core.ABNORMAL_RETURN, papers.decimals)
+    named = outcome_named(asked.model_dump(), study.report.currency, papers.money)
     words = study.labels.get(asked.column, named.words)
+    named = core.with_decimals(named, papers.decimals)
     return replace(named, words=words, file=study.inputs.deals.name)
 
 
-def outcome_named(values: Mapping[str, Any] | None, currency: str) -> core.Outcome:
+def outcome_named(values: Mapping[str, Any] | None, currency: str, money: str = "") -> core.Outcome:
     """What an [outcome] table with these plain values explains."""
     if values is None:
         return core.ABNORMAL_RETURN
     unit = core.UNITS[values["unit"]]
     return core.Outcome(
         words=values["label"] or values["column"].replace("_", " "),
-        unit=core.money_in(currency) if unit == core.MONEY else unit,
+        unit=core.money_in(currency, money) if unit == core.MONEY else unit,
         column=values["column"],
         error=values["standard_error"],
         base=values["share_of"],

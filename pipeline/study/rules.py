@@ -10,6 +10,7 @@ from pipeline.registry import ESTIMATORS, EXPECTED_RETURNS, entry
 from pipeline.study.bounds import bounds_checks
 from pipeline.study.doubt_rules import doubt_checks
 from pipeline.study.outcome import outcome_checks
+from pipeline.study.papers import papers_checks
 from pipeline.study.plan_events import event_checks
 from pipeline.study.plan_prices import price_checks
 from pipeline.study.plan_returns import returns_checks
@@ -33,6 +34,7 @@ def cross_checks(study: Study, file: str) -> list[Finding]:
         *source_checks(study, file),
         *doubt_checks(study, file),
         *returns_checks(study, file),
+        *papers_checks(study.papers),
     ]
 
 

@@ -11,13 +11,14 @@ from typing import Annotated, Literal
 
 from pydantic import Field, field_validator, model_validator
 
-from pipeline.registry import ESTIMATORS, FORMATS, TABLE, TESTS, keys
+from pipeline.registry import ESTIMATORS, FORMATS, TABLE, TESTS
 from pipeline.study.benchmarks import BenchmarkChecks
 from pipeline.study.bounds import Bounds
 from pipeline.study.deal_list import DealList
 from pipeline.study.doubts import Scrutiny
 from pipeline.study.horizons import CalendarTime, MatchedControl
 from pipeline.study.outcome import Outcome
+from pipeline.study.papers import Papers
 from pipeline.study.part import (
     BY_RULE,
     ORDERED,
@@ -246,7 +247,8 @@ class Report(Part):
         description="The two values of the treatment in words: untreated, treated.",
     )
     formats: list[Format] = Field(
-        default_factory=lambda: list(keys(FORMATS)), description="What is written."
+        default_factory=lambda: [entry.key for entry in TABLE[FORMATS] if entry.default],
+        description="What is written; 'pdf' is the memo as a PDF.",
     )
     currency: str = Field("", description="Of the money columns, with scale: USD million.")
 
@@ -291,6 +293,7 @@ class Study(Part):
         default_factory=dict, description="Words for variables: paid_in_shares = 'Paid in shares'."
     )
     report: Report = Field(default_factory=Report)
+    papers: Papers = Field(default_factory=Papers)
 
     @property
     def columns(self) -> tuple[str, ...]:

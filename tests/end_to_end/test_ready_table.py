@@ -21,8 +21,9 @@ from pipeline.core.findings import InputProblem
 from pipeline.core.results import Results
 from pipeline.flow import check, run
 from pipeline.report.bundle import documents
-from pipeline.report.content import memo, report
+from pipeline.report.content import report
 from pipeline.report.document import Document
+from pipeline.report.memo import memo
 from pipeline.study.load import load_study
 from tests.end_to_end.conftest import dealwake
 from tests.study.studies import write

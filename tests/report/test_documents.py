@@ -16,9 +16,10 @@ import pytest
 from pipeline.core.estimate import Shape, Withheld
 from pipeline.core.results import Results
 from pipeline.report import docx, html, svg
-from pipeline.report.content import memo, report
+from pipeline.report.content import report
 from pipeline.report.document import Column, Paragraph, Table
 from pipeline.report.headline import COLUMNS, headline_frame
+from pipeline.report.memo import memo
 from tests.report.runs import full_run, shaped, with_columns, with_frames
 
 ROOT = Path(__file__).resolve().parents[2]
@@ -96,7 +97,12 @@ def test_the_memo_is_the_shorter_one(full: Results) -> None:
     short, long = memo(full), report(full)
     assert length(list(short.paragraphs)) < length(list(long.paragraphs))
     assert len(short.figures) == 1
-    assert [t.name for t in short.tables] == ["comparison", "sign_off"]
+    assert [t.name for t in short.tables] == [
+        "answers",
+        "sign_off",
+        "settings",
+        "comparison",
+    ]
 
 
 def test_the_ledger_adds_up_in_the_table_of_losses(full: Results) -> None:

@@ -12,10 +12,11 @@ import pandas as pd
 import pytest
 
 from pipeline.core.results import Results
-from pipeline.report.content import memo, report
+from pipeline.report.content import report
 from pipeline.report.document import Callout, Figure, Paragraph, Section, Table
 from pipeline.report.figures import svg
 from pipeline.report.material import Material
+from pipeline.report.memo import memo
 from pipeline.report.overturn import overturn_section, survival_section, verdict
 from tests.report.doubted import BASE, LEAD, doubted_run, no_ends, with_breakdowns
 from tests.report.runs import full_run

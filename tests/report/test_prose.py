@@ -17,10 +17,11 @@ import pytest
 
 from pipeline.core.estimate import Shape, Withheld
 from pipeline.core.results import Results
-from pipeline.report.content import memo, report
+from pipeline.report.content import report
 from pipeline.report.document import Document, Paragraph, Quote, Verbatim
 from pipeline.report.headline import headline_frame
 from pipeline.report.material import quote
+from pipeline.report.memo import memo
 from tests.report.doubted import doubted_run
 from tests.report.runs import bare_run, estimate, full_run, shaped, with_columns
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import io
 import zipfile
 from dataclasses import replace
+from datetime import datetime, time
 
 import openpyxl
 import pytest
@@ -13,7 +14,7 @@ from openpyxl.worksheet.worksheet import Worksheet
 from pipeline.core.estimate import Estimate
 from pipeline.core.results import Results
 from pipeline.report.content import report
-from pipeline.report.document import Column, Number, Paragraph, Table, Text
+from pipeline.report.document import Column, Day, Number, Paragraph, Table, Text
 from pipeline.report.xlsx import part_titles, parts, render, sheet_names
 from tests.report.runs import estimate, with_columns, with_frames
 
@@ -42,7 +43,14 @@ def expected(table: Table) -> list[list[object]]:
     for row in table.rows:
         line: list[object] = []
         for cell, names in zip(row, titles, strict=True):
-            held = [p.value if isinstance(p, Number) else p for p in parts(cell)]
+            held = [
+                p.value
+                if isinstance(p, Number)
+                else datetime.combine(p.day, time())
+                if isinstance(p, Day)
+                else p
+                for p in parts(cell)
+            ]
             line += (held + [None] * len(names))[: len(names)]
         found.append(line)
     return found
@@ -91,7 +99,7 @@ def test_words_never_become_formulas(full: Results, start: str) -> None:
     data = render(with_columns(run, estimate(evil, -0.01)))["tables.xlsx"]
     book = openpyxl.load_workbook(io.BytesIO(data))
     cells = [c for sheet in book for row in sheet.iter_rows() for c in row if c.value is not None]
-    assert {c.data_type for c in cells} <= {"s", "n"}
+    assert {c.data_type for c in cells} <= {"s", "n", "d"}
     assert any(c.value == evil for c in cells)
     assert not [c for c in cells if c.hyperlink]
 

@@ -189,7 +189,7 @@ def test_values_outside_what_a_key_allows(
     [
         ("expected_returns", 'headline = "market"', "market_model"),
         ("tests", 'use = ["sign_test"]', "cross_sectional"),
-        ("report", 'formats = ["pdf"]', "docx"),
+        ("report", 'formats = ["odt"]', "docx"),
     ],
 )
 def test_a_thing_the_registry_does_not_hold(

@@ -15,9 +15,9 @@ RULES = (
     Rule(
         "unreadable_file",
         "File cannot be read",
-        "The file exists, and is not a table of the kind its name says.",
+        "The file exists, and is not a table or a picture of the kind its name says.",
         "Reading on could lose rows without a trace.",
-        "Save it again as csv (UTF-8), parquet or xlsx.",
+        "Save it again as csv (UTF-8), parquet or xlsx; a logo as PNG, JPEG or SVG.",
     ),
     Rule(
         "ambiguous_delimiter",
