@@ -47,11 +47,14 @@ def run(
     window: Annotated[
         str, typer.Option(help="Another headline window, as first:last session, e.g. -3:3.")
     ] = "",
+    open_page: Annotated[
+        bool, typer.Option("--open", help="Open the page in your browser when it is done.")
+    ] = False,
     quiet: Quiet = False,
     as_json: AsJson = False,
 ) -> None:
     """Run a study: from the tables it names to the committee's documents."""
-    from pipeline.screen import Screen
+    from pipeline.screen import Screen, open_document, start_with
 
     screen = Screen(quiet=quiet, as_json=as_json)
 
@@ -59,15 +62,18 @@ def run(
         from pipeline.core.clock import Clock
         from pipeline.core.store import refuse_foreign
         from pipeline.flow import run as run_stages
+        from pipeline.progress import earlier_seconds
         from pipeline.saving import save
 
         with screen.progress() as tell:
             plan = _load(study, window)
             folder = out or Path("reports") / _folder(plan.name, window)
             refuse_foreign(folder)
+            tell.expect(earlier_seconds(folder))
             results, seconds = run_stages(plan, tell)
             written = save(plan, results, seconds, folder, Clock(tell))
-        screen.finished(results, folder, written)
+        shown = open_document(folder / start_with(written)) if open_page else None
+        screen.finished(results, folder, written, shown)
 
     _guard(work, screen.problem)
 

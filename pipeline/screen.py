@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import json
 import math
-import time
-from collections.abc import Callable, Iterator, Mapping, Sequence
+import os
+import sys
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from pathlib import Path
@@ -18,42 +19,15 @@ from pipeline.core.rules import RULES, Rule, rule_title
 
 if TYPE_CHECKING:
     import pandas as pd
-    from rich.progress import Progress, TaskID
 
     from pipeline.core.contrast import Contrast
     from pipeline.core.findings import Finding, InputProblem
     from pipeline.core.ledger import Ledger, LedgerEntry
     from pipeline.core.outcome import Standing
     from pipeline.core.results import Results
+    from pipeline.progress import Told
     from pipeline.report.document import Table as DocumentTable
     from pipeline.significance.story import Story
-
-STAGES = 11
-
-
-class _Teller:
-    """Moves the bar of the stages, and one for what is long within a stage, with the time left."""
-
-    def __init__(self, bar: Progress, stages: TaskID):
-        self.bar, self.stages = bar, stages
-        self.begun: dict[str, tuple[TaskID, float]] = {}
-
-    def __call__(self, stage: str) -> None:
-        self.bar.update(self.stages, description=stage, advance=1)
-
-    def portion(self, name: str, done: int, total: int) -> None:
-        """How much of ``name`` is done."""
-        if name not in self.begun:
-            task = self.bar.add_task(name, total=total, left="")
-            self.begun[name] = (task, time.monotonic())
-        task, begin = self.begun[name]
-        seconds = (time.monotonic() - begin) * (total - done) / done if done else 0.0
-        self.bar.update(
-            task,
-            completed=done,
-            left=f"{done:,} of {total:,}, about {seconds:.0f} s left",
-            visible=done < total,
-        )
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,28 +38,23 @@ class Screen:
     as_json: bool
 
     @contextmanager
-    def progress(self) -> Iterator[Callable[[str], None]]:
+    def progress(self) -> Iterator[Told]:
         """A bar over the stages with the time left, unless machines are listening."""
+        from pipeline.progress import Silent, bars
+
         if self.quiet or self.as_json:
-            yield lambda _: None
+            yield Silent()
             return
-        from rich.progress import BarColumn, Progress, TextColumn, TimeElapsedColumn
+        with bars() as told:
+            yield told
 
-        bar = Progress(
-            TextColumn("{task.description:<22}"),
-            BarColumn(bar_width=30),
-            TimeElapsedColumn(),
-            TextColumn("{task.fields[left]}"),
-            console=Console(stderr=True),
-            transient=True,
-        )
-        with bar:
-            task = bar.add_task("study file", total=STAGES, left="")
+    def finished(
+        self, results: Results, folder: Path, written: Sequence[str], shown: bool | None = None
+    ) -> None:
+        """The finding, the ledger's totals and where the documents are.
 
-            yield _Teller(bar, task)
-
-    def finished(self, results: Results, folder: Path, written: Sequence[str]) -> None:
-        """The finding, the ledger's totals and where the documents are."""
+        ``shown`` says whether the page was opened, None if nobody asked for it.
+        """
         from pipeline.report.finding import finding_text
 
         text = finding_text(results)
@@ -97,6 +66,7 @@ class Screen:
                 "rows_kept": ledger.rows_kept,
                 "folder": str(folder),
                 "files": list(written),
+                **({} if shown is None else {"opened": shown}),
             }
             print(json.dumps(content, ensure_ascii=False))
             return
@@ -106,7 +76,12 @@ class Screen:
         console.print()
         _ledger_totals(console, ledger)
         console.print()
-        console.print(f"Written to {folder}: start with {folder / 'report.html'}", soft_wrap=True)
+        first = folder / start_with(written)
+        console.print(f"Written to {folder}: start with {first}", soft_wrap=True)
+        if shown is False:
+            where = first.resolve()
+            words = f"No browser could be opened here; open {where} yourself."
+            console.print(words, soft_wrap=True)
         console.print("Research, not advice; see the cautions in the report.")
 
     def checked(self, ledger: Ledger, findings: Sequence[Finding]) -> None:
@@ -230,6 +205,27 @@ class Screen:
         console.print(f"{count} {noun} in the input; nothing was written.\n")
         for finding in fault.findings:
             _show(console, finding)
+
+
+def start_with(written: Sequence[str]) -> str:
+    """The document a reader opens first; the manifest where there is none."""
+    for name in ("report.html", "memo.pdf", "memo.docx", "tables.xlsx"):
+        if name in written:
+            return name
+    return "manifest.json"
+
+
+def open_document(path: Path) -> bool:
+    """Show a document in the person's browser; False where none can be opened."""
+    import webbrowser
+
+    graphical = sys.platform in ("win32", "darwin") or any(
+        os.environ.get(name) for name in ("DISPLAY", "WAYLAND_DISPLAY", "BROWSER")
+    )
+    try:
+        return graphical and webbrowser.open(path.resolve().as_uri())
+    except (webbrowser.Error, OSError):
+        return False
 
 
 def _records(frame: pd.DataFrame) -> Any:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 
 import pandas as pd
@@ -150,6 +150,7 @@ class Results:
             only what was asked for.
         readings: the headline and the test that leads under another date or listing of the same
             deals, decimal, the headline's own row first; empty without one.
+        look: makes the HTML that a notebook shows; None leaves it to the notebook.
         doubts: sentences on what the scrutiny could not ask.
     """
 
@@ -181,6 +182,11 @@ class Results:
     buy_and_hold: pd.DataFrame = field(default_factory=pd.DataFrame)
     readings: pd.DataFrame = field(default_factory=pd.DataFrame)
     selection: Mapping[str, pd.DataFrame] = field(default_factory=dict)
+    look: Callable[[Results], str] | None = field(default=None, repr=False)
+
+    def _repr_html_(self) -> str | None:
+        """How a notebook shows the run."""
+        return self.look(self) if self.look else None
 
     @property
     def headline(self) -> WindowTests:

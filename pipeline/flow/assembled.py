@@ -90,6 +90,7 @@ def results_of(
         doubts=doubts.notes,
         specifications=doubts.specifications[0] if doubts.specifications else no_frame(),
         curve=doubts.specifications[1] if doubts.specifications else no_frame(),
+        look=_in_a_notebook,
     )
     if lead:
         results = _with_reaction(results, study, measured, lead, groups, deals, placebo)
@@ -108,6 +109,12 @@ def _checks(
     of_sample = sample_checks(lead, headline, deals) if lead else ()
     fitted = (column for column in columns if not isinstance(column, Withheld))
     return (*of_sample, *(check for column in fitted for check in column.checks), *doubts.checks)
+
+
+def _in_a_notebook(results: Results) -> str:
+    from pipeline.report.html import fragment
+
+    return fragment(results)
 
 
 def _with_reaction(

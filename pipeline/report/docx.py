@@ -117,7 +117,7 @@ def _page(section: Any, size: tuple[int, int], *, wide: bool) -> None:
     section.orientation = WD_ORIENT.LANDSCAPE if wide else WD_ORIENT.PORTRAIT
     section.page_width, section.page_height = (long, short) if wide else (short, long)
     section.left_margin = section.right_margin = MARGIN
-    section.top_margin = section.bottom_margin = Mm(18)
+    section.top_margin = section.bottom_margin = Mm(12 if wide else 18)
 
 
 def _section(

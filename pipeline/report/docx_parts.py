@@ -123,7 +123,7 @@ def _need(table: Table, at: int) -> float:
     cells = [row[at] for row in table.page_rows]
     longest = max((len(line) for cell in cells for line in lines(cell)), default=0)
     most = 60 if table.columns[at].prose else 26
-    return float(min(max(longest, len(table.columns[at].title) / 2, 8), most))
+    return float(min(max(longest, len(table.columns[at].heading) / 2, 8), most))
 
 
 def _fill(

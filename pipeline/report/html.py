@@ -11,7 +11,9 @@ from jinja2 import Environment, PackageLoader, StrictUndefined, Template
 from markupsafe import Markup
 
 from pipeline.core.results import Results
+from pipeline.report.comparison import comparison_table
 from pipeline.report.content import report
+from pipeline.report.days import redated
 from pipeline.report.document import (
     SHORTENED,
     Cell,
@@ -22,11 +24,15 @@ from pipeline.report.document import (
     Paragraph,
     Quote,
     Reference,
+    Section,
     Table,
     Text,
 )
 from pipeline.report.figures import csv, svg
+from pipeline.report.finding import finding_text
+from pipeline.report.house import styled
 from pipeline.report.logo import address, placed
+from pipeline.report.material import Material
 from pipeline.report.numerals import clean, lines, slug
 
 _MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
@@ -46,11 +52,22 @@ def page(document: Document) -> str:
 
     Words are escaped; the page's own policy forbids scripts and requests.
     """
-    return _template().render(document=document) + "\n"
+    return _template("page.html.j2").render(document=document) + "\n"
+
+
+def fragment(results: Results) -> str:
+    """What a notebook shows of a run: the finding and the comparison table, escaped, no script."""
+    material = Material.of(results)
+    made = (comparison_table(material, full=False),) if results.columns else ()
+    facts = material.study
+    document = styled(Document(facts.title, "", (Section("", made),), facts.house))
+    table = next(iter(document.tables), None)
+    said = redated(finding_text(results), facts.house.dates)
+    return _template("notebook.html.j2").render(title=facts.title, finding=said, table=table)
 
 
 @cache
-def _template() -> Template:
+def _template(name: str) -> Template:
     environment = Environment(
         loader=PackageLoader("pipeline.report", ""),
         autoescape=True,
@@ -76,7 +93,7 @@ def _template() -> Template:
     css = environment.loader.get_source(environment, "page.css")[0] if environment.loader else ""
     environment.globals["shortened"] = SHORTENED
     environment.globals["css"] = Markup(css)
-    return environment.get_template("page.html.j2")
+    return environment.get_template(name)
 
 
 def numeric(cell: Cell) -> bool:

@@ -132,6 +132,7 @@ def _paper(sheet: Any, house: House) -> None:
     words = clean(house.footer).replace("&", "&&")
     sheet.set_footer(f"&L{words[:200]}&RPage &P of &N")
     sheet.set_paper(PAPER[house.page])
+    sheet.set_landscape()
     sheet.fit_to_pages(1, 0)
 
 
@@ -186,7 +187,7 @@ def _sheet(book: Any, formats: Formats, table: Table, name: str) -> None:
         sheet.set_column(column, column + len(names) - 1, width + 2)
         column += len(names)
     sheet.freeze_panes(first, 1)
-    sheet.set_landscape()
+    sheet.repeat_rows(2, first - 1)
 
 
 def _width(table: Table, at: int, names: tuple[str, ...]) -> int:
@@ -220,6 +221,7 @@ def _headings(
     for at, (facts, names) in enumerate(zip(table.columns, titles, strict=True)):
         numbers = any(isinstance(row[at], Number) for row in table.rows)
         look: dict[str, Any] = {"bold": True, "align": "right" if numbers else "left"}
+        look |= {} if numbers else {"indent": int(column > 0)}
         rule = {} if two else {"bottom": 1}
         last = column + len(names) - 1
         _words(sheet, 2, column, last, clean(facts.heading), _format(book, formats, **look, **rule))
