@@ -6,6 +6,7 @@ import base64
 import re
 from collections.abc import Iterable
 from functools import cache
+from html import escape
 
 from jinja2 import Environment, PackageLoader, StrictUndefined, Template
 from markupsafe import Markup
@@ -36,10 +37,8 @@ from pipeline.report.material import Material
 from pipeline.report.numerals import clean, lines, slug
 
 _MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
-_PROLOGUE = re.compile(r"<\?xml.*?\?>\s*<!DOCTYPE.*?>\s*", re.DOTALL)
-_METADATA = re.compile(r"\s*<metadata>.*?</metadata>", re.DOTALL)
-_STYLE = re.compile(r"\s*<defs>\s*<style.*?</style>\s*</defs>", re.DOTALL)
-_ROOT = re.compile(r"<svg (?:[^>]*?)viewBox=\"([^\"]+)\"[^>]*>", re.DOTALL)
+ROOT = '<svg xmlns="http://www.w3.org/2000/svg"'
+_ROOT = re.compile(r'^.*?<svg [^>]*?viewBox="([^"]+)"', re.DOTALL)
 
 
 def render(results: Results) -> dict[str, bytes]:
@@ -141,17 +140,10 @@ def drawn(figure: Figure) -> Markup:
 
 
 def picture(figure: Figure) -> Markup:
-    """The figure's SVG to stand inside a page: no prologue, ids of its own, named for readers."""
-    text = svg(figure)
-    for pattern in (_PROLOGUE, _METADATA, _STYLE):
-        text = pattern.sub("", text)
-    prefix = f"{figure.name}-"
-    text = re.sub(r'\bid="', f'id="{prefix}', text)
-    text = re.sub(r'href="#', f'href="#{prefix}', text)
-    text = re.sub(r"url\(#", f"url(#{prefix}", text)
-    label = Markup("{}").format(clean(figure.alt))
-    opening = (
-        '<svg xmlns="http://www.w3.org/2000/svg" xmlns:xlink="http://www.w3.org/1999/xlink" '
-        rf'viewBox="\1" role="img" aria-label="{label}">'
-    )
-    return Markup(_ROOT.sub(lambda m: opening.replace(r"\1", m.group(1)), text, count=1).strip())
+    """The figure's SVG to stand inside a page: without prologue and size, named for readers."""
+    label = escape(clean(figure.alt))
+
+    def opening(root: re.Match[str]) -> str:
+        return f'{ROOT} viewBox="{root.group(1)}" role="img" aria-label="{label}"'
+
+    return Markup(_ROOT.sub(opening, svg(figure), count=1))

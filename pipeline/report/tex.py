@@ -72,7 +72,9 @@ def tabular(table: Table, footer: str = "") -> str:
     The house's ``footer`` stands below the notes, because the page is somebody else's.
     """
     size = r"\centering\footnotesize" if len(table.columns) < 7 else r"\centering\scriptsize"
-    body = [line for at, row in enumerate(table.page_rows) for line in _row(table, at, row)]
+    wraps = _wraps(table)
+    rows = enumerate(table.page_rows)
+    body = [line for at, row in rows for line in _row(table, at, row, wraps)]
     head = " & ".join(escape(column.heading) for column in table.columns)
     below = [*(note.text for note in table.notes), *([footer] if footer else [])]
     notes = [rf"{{\par\footnotesize\raggedright {escape(text)}\par}}" for text in below]
@@ -132,9 +134,9 @@ def _figures(table: Table, at: int) -> bool:
     return at > 0 and bool(cells) and all(isinstance(cell, Number) for cell in cells)
 
 
-def _row(table: Table, at: int, row: tuple[Cell, ...]) -> list[str]:
+def _row(table: Table, at: int, row: tuple[Cell, ...], wraps: bool) -> list[str]:
     """The lines of one row; the second line of a cell inside it, or below where cells are flat."""
-    if _wraps(table):
+    if wraps:
         cells = (r" \newline ".join(escape(line) for line in lines(cell)) for cell in row)
         found = [" & ".join(cells) + r" \\"]
     else:

@@ -12,6 +12,7 @@ import itertools
 import re
 import warnings
 from dataclasses import replace
+from pathlib import Path
 from xml.etree import ElementTree
 
 import numpy as np
@@ -20,23 +21,16 @@ import pytest
 from lxml import etree
 from PIL import Image
 
+from pipeline import report as report_page
 from pipeline.core.estimate import Shape
 from pipeline.core.results import Results
 from pipeline.report.content import report
 from pipeline.report.document import Figure, Paragraph
-from pipeline.report.figures import (
-    COLOURS,
-    INK,
-    LINES,
-    MARKERS,
-    _segments,
-    csv,
-    png,
-    svg,
-    titled_svg,
-)
+from pipeline.report.drawings import _segments
+from pipeline.report.figures import csv, png, scene, svg, titled_svg
 from pipeline.report.graphs import columns_figure, distribution_figure, path_figure
 from pipeline.report.material import Material
+from pipeline.report.scene import COLOURS, INK, LINES, MARKERS, TONES, Words, measured
 from tests.report.runs import DEALS, shaped, with_frames
 
 SVG = "{http://www.w3.org/2000/svg}"
@@ -79,14 +73,22 @@ def test_lines_are_named_at_their_ends(full: Results) -> None:
 
 
 def test_the_drawing_fits_under_its_title(full: Results) -> None:
-    """The whole is as wide as the drawing and taller by the title; nothing is cut off."""
+    """The whole is as wide as the drawing and taller by the title; no text is cut off."""
     for figure in figures(full).values():
         own = ElementTree.fromstring(svg(figure)).get("viewBox", "").split()
-        whole = ElementTree.fromstring(titled_svg(figure))
-        box = [float(part) for part in whole.get("viewBox", "").split()]
-        inner = next(part for part in whole if part.tag.endswith("svg"))
-        assert float(inner.get("width", 0)) == float(own[2]) == box[2]
-        assert float(inner.get("y", 0)) + float(inner.get("height", 0)) == pytest.approx(box[3])
+        whole = ElementTree.fromstring(titled_svg(figure)).get("viewBox", "").split()
+        assert own[2] == whole[2]
+        assert float(whole[3]) == pytest.approx(
+            float(own[3]) + 10 + 15 * (1 + (len(figure.title.text) > 78))
+        )
+        drawn = scene(figure)
+        for part in drawn.parts:
+            if isinstance(part, Words):
+                across = measured(part.text, part.size) if not part.turned else 0.0
+                before = {"start": 0.0, "middle": across / 2, "end": across}[part.anchor]
+                assert part.at[0] - before > -6, part.text
+                assert part.at[0] - before + across < drawn.width + 12, part.text
+                assert 0 < part.at[1] < drawn.height, part.text
 
 
 def test_the_file_carries_its_takeaway(full: Results) -> None:
@@ -106,6 +108,26 @@ def test_colours_stand_out_from_paper_and_from_each_other() -> None:
         assert contrast(colour, "#fffefb") >= 3
     assert COLOURS[:2] == ("#0072b2", "#d55e00")
     lights = sorted(luminance(c) for c in COLOURS[:3])
+    assert all(b - a > 0.02 for a, b in itertools.pairwise(lights))
+
+
+def palettes() -> list[dict[str, str]]:
+    """The page's tones as its style declares them: by day, in the dark, in print."""
+    css = Path(report_page.__file__).with_name("page.css").read_text(encoding="utf-8")
+    blocks = re.findall(r"--ink: [^}]*}", css)
+    return [dict(re.findall(r"--(\w+): (#?\w+);", block)) for block in blocks]
+
+
+def test_the_page_declares_every_tone_for_day_night_and_print() -> None:
+    """A page that gives a tone no colour in the dark would draw it in the paper's own."""
+    day, dark, printed = palettes()
+    for name, colour in TONES.items():
+        if name not in ("ink", "faint", "paper"):
+            assert day[name] == printed[name] == colour
+        drawn = dark["thin" if name == "faint" else name]
+        if name not in ("strip", "paper"):
+            assert contrast(drawn, dark["paper"]) >= 3, name
+    lights = sorted(luminance(dark[name]) for name in ("one", "two", "three"))
     assert all(b - a > 0.02 for a, b in itertools.pairwise(lights))
 
 
