@@ -28,6 +28,7 @@ DIRECTION_COLUMNS = {
     "true_effect": "str",
     "evidence": "str",
 }
+LEFT_OUT = "left_out"
 TABLES: Mapping[str, Mapping[str, str]] = {
     "reported": {
         "target": "str",
@@ -227,6 +228,15 @@ def table_frames(rows: Mapping[str, Iterable[Mapping[str, object]]]) -> dict[str
     """The frames of :data:`TABLES` that have rows, in the order declared there."""
     found = {name: list(rows.get(name, ())) for name in TABLES}
     return {name: typed_frame(part, TABLES[name]) for name, part in found.items() if part}
+
+
+def with_rows(
+    name: str, rows: Iterable[Mapping[str, object]], frame: pd.DataFrame | None
+) -> pd.DataFrame | None:
+    """A frame of :data:`TABLES` with these rows before its own; None if there are neither."""
+    first = table_frames({name: rows}).get(name)
+    parts = [part for part in (first, frame) if part is not None]
+    return pd.concat(parts, ignore_index=True) if parts else None
 
 
 def together(mean: pd.DataFrame | None, variants: Iterable[Variant]) -> pd.DataFrame:

@@ -16,6 +16,7 @@ from pipeline.flow.assembled import results_of
 from pipeline.flow.doubted import Doubts, doubts_of
 from pipeline.flow.explained import column_of, deals_with_outcomes, lead_of, prepared_of
 from pipeline.flow.measured import Measured, measure_deals, placebo_of, tests_of
+from pipeline.flow.pictured import with_pictures
 from pipeline.flow.ready import ready_deals, ready_standing
 from pipeline.flow.selected import selected_of, with_selection
 from pipeline.registry import (
@@ -39,7 +40,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     """
     clock = Clock(progress)
     measured = deals_of(study, clock)
-    found, placebo = reactions_of(study, measured, clock)
+    found, (placebo, draws) = reactions_of(study, measured, clock)
     with clock.stage("characteristics"):
         prepared = prepared_of(study, measured)
     columns: tuple[Column, ...] = ()
@@ -50,6 +51,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
         doubts = doubts_of(study, measured, prepared, columns, lead_of(columns), clock)
     with clock.stage("results"):
         results = results_of(study, measured, found, prepared, columns, placebo, doubts)
+        results = with_pictures(results, study, measured, prepared, draws)
     if prepared is not None:
         deals = deals_with_outcomes(study, measured)
         results = with_selection(results, selected_of(study, measured, deals, prepared, clock))
@@ -64,7 +66,7 @@ def deals_of(study: Study, clock: Clock) -> Measured:
 def reactions_of(study: Study, measured: Measured, clock: Clock) -> tuple[Any, Any]:
     """The tests of every window and the placebo dates; nothing where no return was measured."""
     if study.outcome is not None:
-        return (), no_frame()
+        return (), (no_frame(), no_frame())
     with clock.stage("tests"):
         tests = {key: entry(TESTS, key).load() for key in tests_of(study, len(measured.deals))}
         windows = measured.windows

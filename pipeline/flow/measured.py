@@ -174,8 +174,8 @@ def tests_of(study: Study, deals: int) -> tuple[str, ...]:
     return tuple(dict.fromkeys([leading_test(study.tests.headline, deals), *study.tests.use]))
 
 
-def placebo_of(study: Study, measured: Measured, mean: float, clock: Clock) -> Any:
-    """The tests on dates without an announcement, if the study asks for them."""
+def placebo_of(study: Study, measured: Measured, mean: float, clock: Clock) -> tuple[Any, Any]:
+    """The tests on dates without an announcement and each draw, if the study asks for them."""
     asked, window = study.placebo, study.event_time.headline_window
     model = study.expected_returns.headline
     lead = measured.abnormal[model]

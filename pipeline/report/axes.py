@@ -112,14 +112,14 @@ def axes(scene: Scene, x: Span, y: Span, x_words: str = "", y_words: str = "", *
             (0: the sheet's lower end).
         x, y: what of the data is shown.
         x_words, y_words: what stands along each side, on several lines if it has breaks.
-        left: what the left side takes, 0 for what its ticks and words need.
+        left: the least that the left side takes, more if its ticks and words need it.
         right: left free at the right side.
         marked: whether the lower and the left side have ticks.
     """
     y_ticks = ticks(y) if marked[1] else ()
     y_lines = y_words.count("\n") + 1 if y_words else 0
     widest = max((width_of(text, SIZE) for _, text in labels(y_ticks)), default=0.0)
-    edge = left or 6 + 13.0 * y_lines + widest + TICK + 3
+    edge = max(left, 8 + 13.0 * y_lines + widest + TICK)
     x_lines = x_words.count("\n") + 1 if x_words else 0
     floor = (bottom or scene.height) - 4 - 13.0 * x_lines - (17 if marked[0] else 4)
     made = Axes(scene, edge, top, scene.width - right, floor, x, y)
@@ -128,7 +128,7 @@ def axes(scene: Scene, x: Span, y: Span, x_words: str = "", y_words: str = "", *
         middle = (made.left + made.right) / 2
         scene.block((middle, floor + (17 if marked[0] else 4) + 10), x_words, anchor="middle")
     for number, line in enumerate(y_words.split("\n") if y_words else ()):
-        away = widest + TICK + 4 + 13.0 * (y_lines - 1 - number)
+        away = widest + TICK + 8 + 13.0 * (y_lines - 1 - number)
         place = (made.left - away, (made.top + made.bottom) / 2)
         scene.add(Words(place, line, anchor="middle", turned=True))
     return made

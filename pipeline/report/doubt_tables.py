@@ -220,7 +220,7 @@ def left_out_table(material: Material) -> Table | None:
     digits = _digits(material, shown["change"].astype(float) / 5)
     columns = (
         Column("Number"), Column("Left out"), Column("Which"), Column("Deals", "n"),
-        Column("Effect without", unit.short), Column("Change", unit.short),
+        Column("Without it", unit.short), Column("Change", unit.short),
     )  # fmt: skip
     rows = tuple(
         (

@@ -26,6 +26,7 @@ from pipeline.report.doubt_tables import (
 from pipeline.report.grade import grade
 from pipeline.report.material import Material, embedded, prose, quote
 from pipeline.report.numerals import PERCENT
+from pipeline.report.sample_graphs import left_out_figures
 
 Pieces = tuple[Piece, ...]
 SCALES = {"share": (PERCENT, "%"), "times": (1.0, ""), "odds": (1.0, ""), "correlation": (1.0, "")}
@@ -55,6 +56,7 @@ def overturn_section(material: Material) -> Section | None:
         both_ways_table(material),
         expectations_table(material),
         left_out_table(material),
+        *left_out_figures(material),
     ]
     kept = tuple(block for block in blocks if block is not None)
     return Section("What it would take to overturn the finding", kept)

@@ -7,6 +7,7 @@ import pandas as pd
 from pipeline.report.document import Block, Column, Figure, Interval, Paragraph, Table, Text
 from pipeline.report.material import Material, prose
 from pipeline.report.numerals import BP, PERCENT, count, percent, show
+from pipeline.report.sample_graphs import placebo_figure
 
 EMPIRICAL = "mean"
 
@@ -89,5 +90,10 @@ def power_figure(material: Material) -> Figure | None:
 
 def proof_blocks(material: Material) -> list[Block]:
     """Placebo sizes and power, as far as the run has them."""
-    found = (placebo_sentence(material), placebo_table(material), power_figure(material))
+    found = (
+        placebo_sentence(material),
+        placebo_table(material),
+        placebo_figure(material),
+        power_figure(material),
+    )
     return [block for block in found if block is not None]

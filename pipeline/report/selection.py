@@ -29,6 +29,7 @@ from pipeline.report.numerals import (
     show,
     unit_digits,
 )
+from pipeline.report.sample_graphs import correction_figure
 from pipeline.report.wording import level_words, per_unit
 
 VERDICTS = {"pass": "pass", "warn": "warn", "fail": "fail", "reading": ""}
@@ -55,6 +56,9 @@ def _review(material: Material) -> Iterator[Block]:
     yield first_stage_table(material)
     yield checks_table(material)
     yield versions_table(material)
+    correction = correction_figure(material)
+    if correction is not None:
+        yield correction
     figure = profile_figure(_frame(material, "selection_likelihood"))
     if figure is not None:
         yield figure

@@ -26,6 +26,7 @@ from pipeline.report.numerals import (
     shown,
     unit_digits,
 )
+from pipeline.report.sample_graphs import balance_figure, first_stage_figure, overlap_figure
 from pipeline.report.wording import (
     CRITICAL_SIZE,
     bracket_words,
@@ -51,6 +52,8 @@ def identification_section(material: Material) -> Section:
         blocks.append(prose("The study file holds no argument for how the effect is identified."))
     tests = column_tests_table(material)
     blocks += [tests] if tests.rows else []
+    drawn = (first_stage_figure(material), overlap_figure(material), balance_figure(material))
+    blocks += [figure for figure in drawn if figure is not None]
     for position, estimate in enumerate(material.results.columns):
         if isinstance(estimate, Estimate):
             blocks += [

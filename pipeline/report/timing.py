@@ -7,6 +7,7 @@ import pandas as pd
 from pipeline.report.document import Block, Column, Interval, Section, Statistic, Table, Text
 from pipeline.report.material import MOST_ROWS, Material, capital, prose, rows_left_out
 from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, plain
+from pipeline.report.sample_graphs import calendar_figure
 from pipeline.report.wording import level_words
 
 SHOWN = 12
@@ -27,6 +28,9 @@ def timing_section(material: Material) -> Section | None:
         "close could hold the news, on the clock of the exchange where the deal is measured."
     )
     blocks: list[Block] = [opening, kinds_table(deals), day_zero_table(deals)]
+    drawn = calendar_figure(material)
+    if drawn is not None:
+        blocks.append(drawn)
     if len(material.results.readings):
         blocks.append(readings_table(material))
     return Section("Day zero", tuple(blocks))

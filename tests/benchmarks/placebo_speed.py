@@ -99,7 +99,7 @@ def samples(
 
 def ours(panel: PricePanel, located: pd.DataFrame, known: Links) -> pd.DataFrame:
     """Sizes of the five tests over 1,000 draws."""
-    return placebo_sizes(samples(panel, located), WINDOW, TESTED, known, 0.01, 0.05)
+    return placebo_sizes(samples(panel, located), WINDOW, TESTED, known, 0.01, 0.05)[0]
 
 
 def numpy_loop(panel: PricePanel, where: list[tuple[np.ndarray, np.ndarray]]) -> Floats:

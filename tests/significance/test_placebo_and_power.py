@@ -11,7 +11,7 @@ from statsmodels.stats.power import NormalIndPower
 from pipeline.core.window import Window
 from pipeline.registry import TABLE, TESTS
 from pipeline.significance.dependence import links
-from pipeline.significance.placebo import placebo_sizes
+from pipeline.significance.placebo import farther, placebo_sizes
 from pipeline.significance.power import POWER, detectable, detectable_of, power_frame, power_of
 from pipeline.significance.sample import car_sample
 from tests.significance.samples import WINDOW, clustered, linked
@@ -27,9 +27,17 @@ def test_rates_are_counted_over_the_samples() -> None:
     orders = [stream.permutation(20) for _ in range(20)]
     samples = [(rows, abnormal.take(rows)) for rows in orders]
     own = car_sample(abnormal, WINDOW, 1.0)
-    frame = placebo_sizes(
+    sizes, draws = placebo_sizes(
         samples, WINDOW, TEST_FUNCTIONS, known, float(own.car.mean()), 0.05
-    ).set_index("test")
+    )
+    frame = sizes.set_index("test")
+    lead = next(iter(TEST_FUNCTIONS))
+    statistic = TEST_FUNCTIONS[lead](own).statistic
+    assert set(draws["test"]) == {lead}
+    np.testing.assert_allclose(draws["statistic"], statistic)
+    np.testing.assert_allclose(draws["mean"], own.car.mean())
+    told = {row["name"]: row["value"] for row in farther(draws, TEST_FUNCTIONS[lead](own))}
+    assert told == {"draws": 20.0, "farther": 20.0}
     assert (frame.loc[frame.index != "mean", "rejected"].isin([0, 20])).all()
     for key in ("cross_sectional", "patell", "dependence_adjusted"):
         expected = TEST_FUNCTIONS[key](own).p_value < 0.05
@@ -40,7 +48,7 @@ def test_rates_are_counted_over_the_samples() -> None:
 
 def test_no_sample_gives_an_empty_frame() -> None:
     abnormal = clustered(deals=5, gaps=0)
-    frame = placebo_sizes([], WINDOW, TEST_FUNCTIONS, links(abnormal), 0.0, 0.05)
+    frame, _ = placebo_sizes([], WINDOW, TEST_FUNCTIONS, links(abnormal), 0.0, 0.05)
     assert frame.empty
     assert "rate" in frame
 
