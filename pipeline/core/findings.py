@@ -2,11 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+import re
+from collections.abc import Container, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from enum import StrEnum
 
 import pandas as pd
+
+_ROWS = re.compile(r"(?<!and )\b(\d+)(?:-(\d+))?")
+"""Rows and runs of rows in words such as ``12, 14-16 and 20 more``."""
 
 
 class Severity(StrEnum):
@@ -71,6 +75,23 @@ def raise_errors(findings: Iterable[Finding]) -> None:
     errors = [finding for finding in findings if finding.severity is Severity.ERROR]
     if errors:
         raise InputProblem(errors)
+
+
+def touching(
+    findings: Iterable[Finding], rows: Mapping[str, int], files: Container[str]
+) -> Iterator[tuple[str, Finding]]:
+    """(deal, finding) of each finding about the deal's own row of the deal list.
+
+    ``rows`` holds each deal's row as the person sees it; ``files`` what the deal list is called.
+    """
+    for item in findings:
+        if item.file not in files or not item.row:
+            continue
+        named = _ROWS.findall(item.row.replace("–", "-"))
+        spans = [(int(first), int(last or first)) for first, last in named]
+        for deal, row in rows.items():
+            if any(first <= row <= last for first, last in spans):
+                yield deal, item
 
 
 def findings_frame(findings: Iterable[Finding]) -> pd.DataFrame:

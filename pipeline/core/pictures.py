@@ -1,4 +1,4 @@
-"""The frames behind the pictures of the sample: what each holds, and how each is made."""
+"""The frames behind the pictures of the sample and the page of each deal: what each holds."""
 
 from __future__ import annotations
 
@@ -30,11 +30,57 @@ PICTURES: Mapping[str, Mapping[str, str]] = {
     "propensity": {"deal": "str", "treated": "bool", "probability": "float64"},
     "balance": {"variable": "str", "before": "float64", "after": "float64"},
     "mills": {"deal": "str", "mills": "float64", "predicted": "float64"},
+    "deal_stories": {
+        "deal": "str",
+        "estimation_first": "str",
+        "estimation_last": "str",
+        "sessions": "int64",
+        "observations": "int64",
+        "residual_sd": "float64",
+        "car": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+        "scar": "float64",
+        "rank": "int64",
+        "rank_standardised": "int64",
+        "deals": "int64",
+    },
+    "deal_days": {
+        "deal": "str",
+        "day": "int64",
+        "date": "str",
+        "abnormal_return": "float64",
+        "expected": "float64",
+        "reach": "float64",
+    },
+    "deal_fits": {
+        "deal": "str",
+        "column": "str",
+        "observed": "float64",
+        "fitted": "float64",
+        "residual": "float64",
+    },
+    "deal_findings": {
+        "deal": "str",
+        "rule": "str",
+        "severity": "str",
+        "where": "str",
+        "got": "str",
+        "remedy": "str",
+    },
+    "quartiles": {
+        "variable": "str",
+        "n": "int64",
+        "lower": "float64",
+        "median": "float64",
+        "upper": "float64",
+    },
     "picture_facts": {"picture": "str", "name": "str", "value": "float64"},
 }
 """Name -> columns. ``share_with_more`` is the share of deals whose window meets more than
 ``others`` windows; means of bins are of residuals; ``before`` and ``after`` are in pooled standard
-deviations; ``picture_facts`` holds the numbers that titles quote."""
+deviations. ``reach`` is half the band of one session, ``rank`` 1 for the largest; of two equal ones
+both have the better. ``picture_facts`` holds the numbers that titles quote."""
 
 Rows = Iterable[Mapping[str, object]]
 

@@ -13,6 +13,7 @@ from pipeline.core.outcome import Standing
 from pipeline.core.results import Results
 from pipeline.core.tables import no_frame
 from pipeline.flow.assembled import results_of
+from pipeline.flow.dealt import with_deal_frames
 from pipeline.flow.doubted import Doubts, doubts_of
 from pipeline.flow.explained import column_of, deals_with_outcomes, lead_of, prepared_of
 from pipeline.flow.measured import Measured, measure_deals, placebo_of, tests_of
@@ -52,6 +53,7 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     with clock.stage("results"):
         results = results_of(study, measured, found, prepared, columns, placebo, doubts)
         results = with_pictures(results, study, measured, prepared, draws)
+        results = with_deal_frames(results, study, measured, prepared)
     if prepared is not None:
         deals = deals_with_outcomes(study, measured)
         results = with_selection(results, selected_of(study, measured, deals, prepared, clock))

@@ -5,10 +5,15 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+import pandas as pd
 
 from pipeline.core.abnormal import AbnormalReturns
 from pipeline.core.estimate import t_reach
+from pipeline.core.pictures import PICTURES
+from pipeline.core.prices import Floats, Integers
 from pipeline.core.window import Window
+
+Rows = list[dict[str, object]]
 
 
 @dataclass(frozen=True, slots=True)
@@ -80,6 +85,63 @@ def story_of(deal: str, abnormal: AbnormalReturns, window: Window, level: float)
         rank=1 + int((cars > car).sum()),
         deals=len(cars),
     )
+
+
+def stories_of(abnormal: AbnormalReturns, window: Window, level: float) -> Rows:
+    """What was measured of every deal, as rows of ``deal_stories``; numbers as in :func:`story_of`.
+
+    ``rank_standardised`` orders the deals by their standardised reaction.
+    """
+    reach = np.array([t_reach(level, float(df)) for df in abnormal.degrees_of_freedom])
+    cars, spread = abnormal.car(window), np.sqrt(abnormal.car_variance(window))
+    scars = abnormal.standardised(window)
+    dates = abnormal.estimation_days
+    ranks, standardised = _ranks(cars), _ranks(scars)
+    return [
+        {
+            "deal": deal,
+            "estimation_first": str(dates[at, 0]),
+            "estimation_last": str(dates[at, -1]),
+            "sessions": int(dates.shape[1]),
+            "observations": int(abnormal.observations[at]),
+            "residual_sd": float(np.sqrt(abnormal.residual_variance[at])),
+            "car": float(cars[at]),
+            "ci_low": float(cars[at] - reach[at] * spread[at]),
+            "ci_high": float(cars[at] + reach[at] * spread[at]),
+            "scar": float(scars[at]),
+            "rank": int(ranks[at]),
+            "rank_standardised": int(standardised[at]),
+            "deals": len(cars),
+        }
+        for at, deal in enumerate(abnormal.deals)
+    ]
+
+
+def _ranks(values: Floats) -> Integers:
+    """(N,) 1 for the largest; equal values have the same, the better, rank."""
+    return np.asarray(1 + len(values) - np.searchsorted(np.sort(values), values, side="right"))
+
+
+def days_of(abnormal: AbnormalReturns, level: float) -> pd.DataFrame:
+    """Every deal's days with half the band of each, the columns of ``deal_days``.
+
+    A band is the deal's own forecast error of that session with t(M - d), as in :func:`story_of`.
+    """
+    n, width = abnormal.returns.shape
+    reach = np.array([t_reach(level, float(df)) for df in abnormal.degrees_of_freedom])
+    days = np.arange(abnormal.span.start, abnormal.span.end + 1)
+    spread = np.column_stack([abnormal.car_variance(Window(d, d)) for d in days.tolist()])
+    band = np.where(np.isfinite(abnormal.returns), np.sqrt(spread) * reach[:, None], np.nan)
+    return pd.DataFrame(
+        {
+            "deal": np.repeat(np.array(abnormal.deals, dtype=object), width),
+            "day": np.tile(days, n),
+            "date": np.datetime_as_string(abnormal.days.ravel()),
+            "abnormal_return": abnormal.returns.ravel(),
+            "expected": abnormal.expected.ravel(),
+            "reach": band.ravel(),
+        }
+    ).astype(PICTURES["deal_days"])
 
 
 def _day(one: AbnormalReturns, day: int, reach: float) -> Day:

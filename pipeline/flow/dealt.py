@@ -1,0 +1,54 @@
+"""The frames behind the page of each deal, asked of the stages that make them."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import Any
+
+from pipeline.characteristics.design import Prepared
+from pipeline.characteristics.quartiles import quartiles_of
+from pipeline.core.findings import touching
+from pipeline.core.pictures import picture_frames
+from pipeline.core.results import Results
+from pipeline.estimators.selection import LAMBDA
+from pipeline.flow.measured import Measured
+from pipeline.scrutiny.fitted import fits_of
+from pipeline.significance.story import days_of, stories_of
+from pipeline.study.schema import Study
+
+
+def with_deal_frames(
+    results: Results, study: Study, measured: Measured, prepared: Prepared | None
+) -> Results:
+    """The results with what the page of each deal is made from."""
+    facts, rows, tables = results.study, dict[str, Any](), dict(results.tables)
+    names = (facts.outcome.base, *facts.regressors, *facts.instruments)
+    rows["quartiles"] = quartiles_of(results.deals, names)
+    rows["deal_findings"] = _findings(study, measured, results)
+    if prepared is not None:
+        mills = tables.get("mills")
+        further = {} if mills is None else {LAMBDA: mills["mills"].to_numpy()}
+        rows["deal_fits"] = fits_of(prepared.design, results.columns, further)
+    if study.outcome is None:
+        lead = measured.abnormal[study.expected_returns.headline]
+        rows["deal_stories"] = stories_of(lead, facts.headline, study.level)
+        tables["deal_days"] = days_of(lead, study.level)
+    return replace(results, tables={**tables, **picture_frames(rows)})
+
+
+def _findings(study: Study, measured: Measured, results: Results) -> list[dict[str, object]]:
+    if "_row" not in measured.deals:
+        return []
+    rows = dict(zip(measured.deals["deal_id"], measured.deals["_row"].astype(int), strict=True))
+    files = ("deals", study.inputs.deals.name)
+    return [
+        {
+            "deal": deal,
+            "rule": item.rule,
+            "severity": str(item.severity),
+            "where": item.where,
+            "got": item.got,
+            "remedy": item.remedy,
+        }
+        for deal, item in touching(results.findings, rows, files)
+    ]
