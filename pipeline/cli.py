@@ -50,6 +50,9 @@ def run(
     open_page: Annotated[
         bool, typer.Option("--open", help="Open the page in your browser when it is done.")
     ] = False,
+    fresh: Annotated[
+        bool, typer.Option("--fresh", help="Make everything again, whatever earlier runs kept.")
+    ] = False,
     quiet: Quiet = False,
     as_json: AsJson = False,
 ) -> None:
@@ -70,7 +73,7 @@ def run(
             folder = out or Path("reports") / _folder(plan.name, window)
             refuse_foreign(folder)
             tell.expect(earlier_seconds(folder))
-            results, seconds = run_stages(plan, tell)
+            results, seconds = run_stages(plan, tell, fresh)
             written = save(plan, results, seconds, folder, Clock(tell))
         shown = open_document(folder / start_with(written)) if open_page else None
         screen.finished(results, folder, written, shown)

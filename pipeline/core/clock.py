@@ -28,11 +28,12 @@ class Clock:
 
     @contextmanager
     def stage(self, name: str) -> Iterator[None]:
-        """Time a stage."""
+        """Time a stage, which may be done in several parts."""
         self.progress(name)
         begin = time.perf_counter()
         yield
-        self.seconds[name] = round(time.perf_counter() - begin, 3)
+        spent = self.seconds.get(name, 0.0) + time.perf_counter() - begin
+        self.seconds[name] = round(spent, 3)
 
     def portion(self, name: str, done: int, total: int) -> None:
         """Tell how much of something long is done."""

@@ -30,8 +30,10 @@ from pipeline.significance.windows import all_windows
 from pipeline.study.schema import Study
 
 
-def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Mapping[str, float]]:
-    """All stages of a study.
+def run(
+    study: Study, progress: Progress = lambda _: None, fresh: bool = False
+) -> tuple[Results, Mapping[str, float]]:
+    """All stages of a study; ``fresh`` makes again what an earlier run has kept.
 
     Returns:
         The results, and the seconds each stage took.
@@ -60,9 +62,11 @@ def run(study: Study, progress: Progress = lambda _: None) -> tuple[Results, Map
     return results, clock.seconds
 
 
-def deals_of(study: Study, clock: Clock) -> Measured:
+def deals_of(study: Study, clock: Clock, fresh: bool = False) -> Measured:
     """The deals with an outcome: measured from prices, or as the deal list holds it."""
-    return measure_deals(study, clock) if study.outcome is None else ready_deals(study, clock)
+    if study.outcome is not None:
+        return ready_deals(study, clock)
+    return measure_deals(study, clock, fresh)
 
 
 def reactions_of(study: Study, measured: Measured, clock: Clock) -> tuple[Any, Any]:

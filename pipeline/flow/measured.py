@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 from pipeline.core.abnormal import AbnormalReturns
@@ -17,6 +17,7 @@ from pipeline.flow.peers import models_of, screen_peers
 from pipeline.flow.placed import Placed, place_deals, unused_sessions
 from pipeline.flow.priced import Priced, at_the_end, price_panels
 from pipeline.flow.readings import readings_of
+from pipeline.flow.reused import price_key, return_key, shelf_of
 from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
     TESTS,
@@ -60,9 +61,28 @@ class Measured:
     measured_on: Mapping[str, PricePanel] = field(default_factory=dict)
 
 
-def measure_deals(study: Study, clock: Clock) -> Measured:
-    """Inputs, day zero, abnormal returns and the screens between them."""
-    options = plan.event_options(study)
+def measure_deals(study: Study, clock: Clock, fresh: bool = False) -> Measured:
+    """Inputs, day zero, abnormal returns and the screens between them.
+
+    What took long and depends on nothing that has changed is taken from the shelf, unless
+    ``fresh``.
+    """
+    shelf = shelf_of(study, fresh)
+    with clock.stage("inputs"):
+        key = price_key(study) if shelf.most else ""
+    priced = shelf.kept(key, lambda: _priced(study, clock))
+    found = shelf.kept(return_key(study, key), lambda: _returns(study, priced, clock))
+    by_date = found.deals["timing"].str.startswith("date only").any()
+    return replace(
+        found,
+        panels=priced.panels,
+        measured_on=priced.measured_on,
+        windows=plan.windows(study, bool(by_date)),
+    )
+
+
+def _priced(study: Study, clock: Clock) -> Priced:
+    """The tables, and the price panels made from them."""
     with clock.stage("inputs"):
         tables = read_inputs(
             plan.sources(study),
@@ -74,7 +94,13 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
             reach=reach(study),
         )
     with clock.stage("sessions and prices"):
-        priced = price_panels(study, tables)
+        return price_panels(study, tables)
+
+
+def _returns(study: Study, priced: Priced, clock: Clock) -> Measured:
+    """The deals kept and their abnormal returns; panels and windows are still to be put in."""
+    options = plan.event_options(study)
+    with clock.stage("sessions and prices"):
         placed = place_deals(
             priced.tables,
             priced.panels,
@@ -84,7 +110,7 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
             priced.rates,
         )
         sound = _sound(study, placed, priced, options)
-    ledger = Ledger((tables.ledger, *placed.stages, *sound.stages))
+    ledger = Ledger((priced.tables.ledger, *placed.stages, *sound.stages))
     refuse_empty(len(sound.deals), ledger)
     with clock.stage("abnormal returns"):
         deals, abnormal, stages = _measured(study, sound, placed, priced, options)
@@ -92,17 +118,17 @@ def measure_deals(study: Study, clock: Clock) -> Measured:
     refuse_empty(ledger.rows_kept, ledger)
     lead = study.expected_returns.headline
     model = (lead, sound.models[lead])
+    told = (*priced.tables.findings, *sound.findings)
     return Measured(
         deals=deals,
         abnormal=abnormal,
-        panels=priced.panels,
+        panels={},
         ledger=ledger,
-        findings=(*tables.findings, *sound.findings, *few_events(deals, study.inputs.deals.name)),
+        findings=(*told, *few_events(deals, study.inputs.deals.name)),
         tables=placed.tables,
-        windows=plan.windows(study, bool(deals["timing"].str.startswith("date only").any())),
+        windows=(),
         located=placed.located,
         readings=readings_of(placed, deals, priced.measured_on, model, options),
-        measured_on=priced.measured_on,
     )
 
 

@@ -28,7 +28,7 @@ class Priced:
     """The price panels of a study.
 
     Attributes:
-        tables: the tables, their money in the common currency if there is one.
+        tables: the tables, their money in the common currency if there is one, and no price rows.
         panels: exchange -> prices with simple returns that never span a gap.
         measured_on: the same with the kind of return and the policy for gaps that the study asks
             for: what abnormal returns are measured on.
@@ -71,6 +71,8 @@ def price_panels(study: Study, tables: Tables) -> Priced:
     found += [*left.findings, *plan_prices.return_warnings(study)]
     on = measured_on(left.panels, time.missing, time.returns)
     rates = money.rates if money else None
+    # The panels hold what the rows said; a market's rows take more memory than all that follows.
+    tables = replace(tables, prices=tables.prices.iloc[:0].copy())
     return Priced(tables, left.panels, on, calendars, left.returns, found, rates)
 
 

@@ -14,6 +14,7 @@ from pydantic import Field, field_validator, model_validator
 from pipeline.registry import ESTIMATORS, FORMATS, TABLE, TESTS
 from pipeline.study.benchmarks import BenchmarkChecks
 from pipeline.study.bounds import Bounds
+from pipeline.study.compute import Compute
 from pipeline.study.deal_list import DealList
 from pipeline.study.doubts import Scrutiny
 from pipeline.study.horizons import CalendarTime, MatchedControl
@@ -294,6 +295,7 @@ class Study(Part):
     )
     report: Report = Field(default_factory=Report)
     papers: Papers = Field(default_factory=Papers)
+    compute: Compute = Field(default_factory=Compute)
 
     @property
     def columns(self) -> tuple[str, ...]:
