@@ -11,7 +11,8 @@ hold by rule, least squares, fixed effects and two stages with errors clustered 
 placebo dates and no scrutiny, whose work does not grow with the deals but by the draws asked for.
 Each size runs in a process of its own. The peak is the stage's own high-water mark where the
 kernel lets a process set its mark back, with what the stages before it left in memory included.
-A second run with another window says what a rerun costs.
+A second run with another window says what a rerun costs, which takes prices and abnormal returns
+from what the first has kept.
 """
 
 from __future__ import annotations
@@ -187,7 +188,10 @@ def whole(folder: Path, name: str) -> dict[str, object]:
     study.write_text(STUDY.format(windows=WINDOWS[name]), encoding="utf-8")
     code = f"from tests.benchmarks import scale; scale.alone({str(study)!r})"
     begin = time.perf_counter()
-    done = subprocess.run([sys.executable, "-c", code], capture_output=True, text=True, check=False)
+    environment = {**os.environ, "DEALWAKE_KEEP": str(folder / "kept")}
+    done = subprocess.run(
+        [sys.executable, "-c", code], env=environment, capture_output=True, text=True, check=False
+    )
     if done.returncode:
         return {"failed": done.stderr.strip().splitlines()[-1]}
     stages = json.loads(done.stdout.splitlines()[-1])
