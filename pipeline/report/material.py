@@ -19,7 +19,7 @@ from pipeline.report.headline import effect_name, headline_frame
 from pipeline.report.numerals import LEAST_P, PERCENT, show, true_minus, unit_digits
 
 # Rows of a table of deals in a document; a sheet holds a million, a reader far fewer.
-MOST_ROWS = 100_000
+MOST_ROWS = 10_000
 
 
 def rows_left_out(total: int, table: str) -> tuple[Paragraph, ...]:
