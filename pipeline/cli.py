@@ -119,6 +119,12 @@ def power(study: StudyFile, as_json: AsJson = False) -> None:
 def deal(
     study: StudyFile,
     name: Annotated[str, typer.Argument(help="The deal's identifier in the deal list.")],
+    whole: Annotated[
+        bool, typer.Option(help="Run every stage and tell what each column makes of it, too.")
+    ] = False,
+    page: Annotated[
+        Path | None, typer.Option(help="Run every stage and write its page to this file.")
+    ] = None,
     as_json: AsJson = False,
 ) -> None:
     """Tell one deal's whole story: day zero and why, its returns, its place, its ledger."""
@@ -127,6 +133,13 @@ def deal(
     screen = Screen(quiet=False, as_json=as_json)
 
     def work() -> None:
+        if whole or page is not None:
+            from pipeline.flow import deal_page
+
+            with screen.progress() as tell:
+                document = deal_page(_load(study, ""), name, tell)
+            screen.deal_page(document, page)
+            return
         from pipeline.flow import deal as deal_stages
 
         with screen.progress() as tell:

@@ -8,7 +8,7 @@ import os
 import sys
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -26,6 +26,7 @@ if TYPE_CHECKING:
     from pipeline.core.outcome import Standing
     from pipeline.core.results import Results
     from pipeline.progress import Told
+    from pipeline.report.document import Document
     from pipeline.report.document import Table as DocumentTable
     from pipeline.significance.story import Story
 
@@ -145,6 +146,24 @@ class Screen:
             table.add_row(f"{day.day:+d}" if day.day else "0", day.date, *cells, outside)
         console.print(table)
 
+    def deal_page(self, document: Document, file: Path | None) -> None:
+        """One deal with all that the run makes of it: in words and tables, or as a page."""
+        if file is not None:
+            from pipeline.report.html import page
+
+            file.parent.mkdir(parents=True, exist_ok=True)
+            file.write_text(page(replace(document, ways=())), encoding="utf-8")
+        if self.as_json:
+            content = {"deal": document.title, "page": str(file or ""), "told": _told(document)}
+            print(json.dumps(content, ensure_ascii=False))
+            return
+        console = Console(highlight=False, markup=False)
+        if file is not None:
+            console.print(f"Written to {file}", soft_wrap=True)
+            return
+        console.print(document.title)
+        _sections(console, document)
+
     def power(self, frame: pd.DataFrame, smallest: float, deals: int) -> None:
         """The smallest true mean found four times in five, then power by size of the true mean."""
         if self.as_json:
@@ -243,6 +262,36 @@ def _plain_table(block: DocumentTable) -> Table:
     for row in block.page_rows:
         table.add_row(*("\n".join(lines(cell)) for cell in row))
     return table
+
+
+def _sections(console: Console, document: Document) -> None:
+    """Headings, words and tables; a picture gives its takeaway."""
+    from pipeline.report.document import Figure, Paragraph
+    from pipeline.report.document import Table as DocumentTable
+
+    for section in document.sections:
+        console.print(f"\n{section.heading}")
+        for block in section.blocks:
+            if isinstance(block, DocumentTable):
+                console.print(_plain_table(block) if block.rows else "None.")
+            elif isinstance(block, Figure | Paragraph):
+                console.print(block.title.text if isinstance(block, Figure) else block.text)
+
+
+def _told(document: Document) -> dict[str, list[dict[str, str]]]:
+    """The tables of a document, by name: one row a line, its cells as printed."""
+    from pipeline.report.numerals import lines
+
+    return {
+        table.name: [
+            {
+                column.heading: " ".join(lines(cell))
+                for column, cell in zip(table.columns, row, strict=True)
+            }
+            for row in table.rows
+        ]
+        for table in document.tables
+    }
 
 
 def _standing(console: Console, story: Standing, row: Mapping[str, Any]) -> None:

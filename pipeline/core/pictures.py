@@ -43,6 +43,16 @@ PICTURES: Mapping[str, Mapping[str, str]] = {
         "scar": "float64",
         "rank": "int64",
         "rank_standardised": "int64",
+        "traded": "int64",
+        "outside": "int64",
+        "deals": "int64",
+    },
+    "deal_standings": {
+        "deal": "str",
+        "value": "float64",
+        "ci_low": "float64",
+        "ci_high": "float64",
+        "rank": "int64",
         "deals": "int64",
     },
     "deal_days": {

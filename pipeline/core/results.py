@@ -40,6 +40,7 @@ class StudyFacts:
         outcome: what is explained. An outcome that the deal list holds has no windows, and the
             fields about windows, models and tests mean nothing then.
         house: the style of the papers.
+        deal_pages: of how many deals, the first ones, a page is made beside the report.
     """
 
     name: str
@@ -68,6 +69,7 @@ class StudyFacts:
     seed: int = 0
     outcome: Outcome = ABNORMAL_RETURN
     house: House = PLAIN
+    deal_pages: int = 0
 
     @property
     def explained(self) -> dict[str, str | int]:

@@ -24,6 +24,7 @@ from pipeline.registry import (
     TESTS,
     entry,
 )
+from pipeline.report.deal_pages import Book, document
 from pipeline.significance.power import detectable_of, power_of
 from pipeline.significance.story import Story, story_of
 from pipeline.significance.windows import all_windows
@@ -133,6 +134,27 @@ def deal(
     lead = measured.abnormal[study.expected_returns.headline]
     window = study.event_time.headline_window
     return story_of(name, lead, window, study.level), row, told
+
+
+def deal_page(study: Study, name: str, progress: Progress = lambda _: None) -> Any:
+    """All stages of a study, and the page of one of its deals as a document.
+
+    Raises:
+        InputProblem: as :func:`run` would, or if no such deal was measured.
+    """
+    results, _ = run(study, progress)
+    book = Book.of(results)
+    if name not in book.names:
+        raise problem(
+            "unknown_variable",
+            "deals",
+            column="deal_id",
+            got=f"'{name}'",
+            expected="a deal that was measured, such as " + ", ".join(list(book.names)[:3]),
+            remedy="Write it as in the deal list; without --page and --whole the command says why "
+            "a deal was left out.",
+        )
+    return document(book, name)
 
 
 def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, float, int]:

@@ -12,6 +12,7 @@ from pipeline.core.pictures import picture_frames
 from pipeline.core.results import Results
 from pipeline.estimators.selection import LAMBDA
 from pipeline.flow.measured import Measured
+from pipeline.flow.ready import standings_of
 from pipeline.scrutiny.fitted import fits_of
 from pipeline.significance.story import days_of, stories_of
 from pipeline.study.schema import Study
@@ -31,8 +32,10 @@ def with_deal_frames(
         rows["deal_fits"] = fits_of(prepared.design, results.columns, further)
     if study.outcome is None:
         lead = measured.abnormal[study.expected_returns.headline]
-        rows["deal_stories"] = stories_of(lead, facts.headline, study.level)
         tables["deal_days"] = days_of(lead, study.level)
+        rows["deal_stories"] = stories_of(lead, facts.headline, study.level, tables["deal_days"])
+    else:
+        rows["deal_standings"] = standings_of(study, measured.deals)
     return replace(results, tables={**tables, **picture_frames(rows)})
 
 

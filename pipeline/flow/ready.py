@@ -74,6 +74,23 @@ def ready_standing(study: Study, deals: Any, name: str) -> Standing | None:
     return standing_of(outcome, float(values[rows[0]]), error, values, study.level)
 
 
+def standings_of(study: Study, deals: Any) -> list[dict[str, Any]]:
+    """Where every deal's outcome lies among the others, as rows of ``deal_standings``."""
+    found = {str(name): ready_standing(study, deals, str(name)) for name in deals["deal_id"]}
+    return [
+        {
+            "deal": name,
+            "value": one.value,
+            "ci_low": one.low,
+            "ci_high": one.high,
+            "rank": one.rank,
+            "deals": one.deals,
+        }
+        for name, one in found.items()
+        if one is not None
+    ]
+
+
 def summary_of(study: Study, deals: Any, groups: Any, facts: StudyFacts) -> pd.DataFrame:
     """The outcome of all deals and of each group; empty where returns were measured.
 

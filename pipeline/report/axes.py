@@ -11,7 +11,7 @@ from numpy.typing import ArrayLike
 
 from pipeline.core.prices import Floats
 from pipeline.report.numerals import show
-from pipeline.report.scene import DOTS, SIZE, SMALL, Area, Line, Marks, Point, Scene, Words
+from pipeline.report.scene import DOTS, SIZE, SMALL, Area, Line, Marks, Point, Scene, Stems, Words
 from pipeline.report.scene import measured as width_of
 
 Span = tuple[float, float]
@@ -96,6 +96,16 @@ class Axes:
         if known.any():
             points = tuple(self.at(*point) for point in pairs[known].tolist())
             self.scene.add(Marks(points, shape, size, tone, filled))
+
+    def stems(self, x: Floats, y: Floats) -> None:
+        """A thin line from zero, which is inside, to each of the data."""
+        pairs = zip(x.tolist(), y.tolist(), strict=True)
+        ends = (
+            (self.at(place, 0.0), self.at(*self.inside(place, value)))
+            for place, value in pairs
+            if math.isfinite(value)
+        )
+        self.scene.add(Stems(tuple(ends), "faint"))
 
     def inside(self, x: float, y: float) -> Point:
         """The nearest data inside the axes."""

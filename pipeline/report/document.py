@@ -46,10 +46,14 @@ class Quote:
 
 @dataclass(frozen=True, slots=True)
 class Verbatim:
-    """Words taken over unchanged; ``origin`` says from whom (the study, an estimate, a check)."""
+    """Words taken over unchanged; ``origin`` says from whom (the study, an estimate, a check).
+
+    ``href`` is a page of the run they lead to, for the formats that have links.
+    """
 
     text: str
     origin: str
+    href: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -116,9 +120,10 @@ class Callout:
 
 @dataclass(frozen=True, slots=True)
 class Text:
-    """A cell of words."""
+    """A cell of words; ``href`` is a page of the run they lead to."""
 
     text: str
+    href: str = ""
 
 
 @dataclass(frozen=True, slots=True)
@@ -284,7 +289,7 @@ class Document:
     """A title, a line under it, and sections in order.
 
     ``house`` is the style it is shown in; the tables and figures of a ``numbered`` document carry
-    numbers, by which references call them.
+    numbers, by which references call them. ``ways`` are (words, page) beside it.
     """
 
     title: str
@@ -292,6 +297,7 @@ class Document:
     sections: tuple[Section, ...]
     house: House = PLAIN
     numbered: bool = False
+    ways: tuple[tuple[str, str], ...] = ()
 
     @property
     def blocks(self) -> Iterator[Block]:

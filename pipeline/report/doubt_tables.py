@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 
 import pandas as pd
 
 from pipeline.core.outcome import Unit
+from pipeline.report.deal_names import page_links
 from pipeline.report.document import Column, Interval, Row, Table, Text
 from pipeline.report.material import Material, capital, embedded, named, prose, taken
 from pipeline.report.numerals import (
@@ -222,10 +224,11 @@ def left_out_table(material: Material) -> Table | None:
         Column("Number"), Column("Left out"), Column("Which"), Column("Deals", "n"),
         Column("Without it", unit.short), Column("Change", unit.short),
     )  # fmt: skip
+    pages = page_links(material)
     rows = tuple(
         (
             Text(capital(str(row["target"]))), Text(f"one {row['dimension']}"),
-            Text(str(row["group"])), count(int(row["deals"])),
+            Text(str(row["group"]), _page(row, pages)), count(int(row["deals"])),
             in_unit(float(row["estimate"]), unit, digits),
             in_unit(float(row["change"]), unit, digits),
         )
@@ -234,6 +237,10 @@ def left_out_table(material: Material) -> Table | None:
     notes = (prose("The largest of each kind; the data file ", taken("left_out.parquet", "file"),
                    " holds every one."),)  # fmt: skip
     return Table("left_out", prose("What moves the answer most"), columns, rows, notes)
+
+
+def _page(row: pd.Series[float], pages: Mapping[str, str]) -> str:
+    return pages.get(str(row["group"]), "") if str(row["dimension"]) == "deal" else ""
 
 
 def both_ways_table(material: Material) -> Table | None:

@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import io
 from collections.abc import Callable, Mapping
+from csv import writer as table_writer
 from dataclasses import replace
 from functools import lru_cache
 
@@ -22,8 +24,11 @@ DRAWINGS: Mapping[str, Callable[[Figure], Scene]] = {**RESULTS, **DOUBTS, **SAMP
 @lru_cache(maxsize=64)
 def scene(figure: Figure) -> Scene:
     """The figure as shapes; drawn once for all formats."""
+    draw = DRAWINGS[figure.kind]
+    if not figure.unit:
+        return draw(figure)
     bare = figure.data.rename(columns=lambda name: str(name).removesuffix(f"_{figure.unit}"))
-    return DRAWINGS[figure.kind](replace(figure, data=bare))
+    return draw(replace(figure, data=bare))
 
 
 @lru_cache(maxsize=64)
@@ -45,9 +50,15 @@ def png(figure: Figure, *, dpi: int = 200) -> bytes:
 
 def csv(data: pd.DataFrame) -> bytes:
     """The drawn data; words that a spreadsheet would run as a formula get an apostrophe."""
+    buffer = io.StringIO()
+    writer = table_writer(buffer, lineterminator="\n")
+    writer.writerow(str(name) for name in data.columns)
+    columns = (data[name].tolist() for name in data.columns)
+    writer.writerows(map(_safe, row) for row in zip(*columns, strict=True))
+    return buffer.getvalue().encode()
 
-    def safe(value: object) -> object:
-        risky = isinstance(value, str) and value.lstrip()[:1] in ("=", "+", "-", "@")
-        return f"'{value}" if risky else value
 
-    return data.map(safe).to_csv(index=False, lineterminator="\n").encode()
+def _safe(value: object) -> object:
+    if isinstance(value, str):
+        return f"'{value}" if value.lstrip()[:1] in ("=", "+", "-", "@") else value
+    return "" if value is pd.NA or value != value else value

@@ -15,19 +15,13 @@ from pipeline.core.results import Results
 from pipeline.report.comparison import comparison_table
 from pipeline.report.content import report
 from pipeline.report.days import redated
+from pipeline.report.deal_names import page_path
+from pipeline.report.deal_pages import documents
 from pipeline.report.document import (
-    SHORTENED,
-    Cell,
     Document,
     Figure,
-    Interval,
-    Number,
     Paragraph,
-    Quote,
-    Reference,
     Section,
-    Table,
-    Text,
 )
 from pipeline.report.figures import csv, svg
 from pipeline.report.finding import finding_text
@@ -35,15 +29,21 @@ from pipeline.report.house import styled
 from pipeline.report.logo import address, placed
 from pipeline.report.material import Material
 from pipeline.report.numerals import clean, lines, slug
+from pipeline.report.table_markup import prose_markup, table_markup
 
-_MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
 ROOT = '<svg xmlns="http://www.w3.org/2000/svg"'
 _ROOT = re.compile(r'^.*?<svg [^>]*?viewBox="([^"]+)"', re.DOTALL)
 
 
 def render(results: Results) -> dict[str, bytes]:
-    """``report.html``."""
-    return {"report.html": page(report(results)).encode()}
+    """``report.html``, and the pages of the deals beside it."""
+    return {"report.html": page(report(results)).encode(), **deal_pages(results)}
+
+
+def deal_pages(results: Results) -> dict[str, bytes]:
+    """``deals/<name>.html`` of as many deals as the study asks for, and the list of all."""
+    found = documents(results, results.study.deal_pages)
+    return {page_path(name): page(document).encode() for name, document in found}
 
 
 def page(document: Document) -> str:
@@ -78,50 +78,18 @@ def _template(name: str) -> Template:
         "kind": lambda value: type(value).__name__.lower(),
         "clean": clean,
         "slug": slug,
-        "lines": lines,
         "picture": picture,
-        "source": source,
+        "pieces": lambda paragraph, numbers: Markup(prose_markup(paragraph, numbers)),
         "sources": sources,
         "drawn": drawn,
-        "numeric": numeric,
+        "lines": lines,
+        "table_markup": table_markup,
         "address": address,
         "placed": placed,
-        "anchor": anchor,
-        "column_class": column_class,
     }
     css = environment.loader.get_source(environment, "page.css")[0] if environment.loader else ""
-    environment.globals["shortened"] = SHORTENED
     environment.globals["css"] = Markup(css)
     return environment.get_template(name)
-
-
-def numeric(cell: Cell) -> bool:
-    """Whether a cell's content, a number or a date, stays on one line."""
-    worded = isinstance(cell, Text) and not _MOMENT.fullmatch(cell.text)
-    worded = worded or (isinstance(cell, Interval) and bool(cell.words))
-    return cell is not None and not worded
-
-
-def anchor(reference: Reference, document: Document) -> str:
-    """Where a reference leads: the id of its table or figure."""
-    kind = document.numbers.get(reference.name, "").partition(" ")[0].lower()
-    return f"{kind}-{slug(reference.name)}"
-
-
-def column_class(table: Table, at: int) -> str:
-    """What a column holds: plain numbers, sentences, or other."""
-    cells = [row[at] for row in table.rows if row[at] is not None]
-    if table.columns[at].prose:
-        return "prose"
-    if at and cells and all(isinstance(cell, Number) for cell in cells):
-        return "figures"
-    return "words"
-
-
-def source(quote: Quote) -> str:
-    """Where a quoted number stands, for the person who points at it."""
-    where = clean(", ".join(f"{name} {value}" for name, value in quote.where))
-    return f"data/{quote.table}.parquet: {quote.column} where {where}"
 
 
 def sources(paragraphs: Iterable[Paragraph]) -> tuple[str, ...]:

@@ -10,7 +10,7 @@ from pathlib import Path
 
 from PIL import Image, ImageDraw, ImageFont
 
-from pipeline.report.scene import TONES, Area, Line, Marks, Point, Scene, Words
+from pipeline.report.scene import TONES, Area, Line, Marks, Point, Scene, Stems, Words
 from pipeline.report.vector import corners
 
 FINER = 3
@@ -28,6 +28,9 @@ def png(scene: Scene, dpi: int = 200) -> bytes:
         match part:
             case Line():
                 _line(brush, part, scale)
+            case Stems():
+                for ends in part.ends:
+                    _line(brush, Line(ends, part.tone, part.width), scale)
             case Area():
                 points = _scaled(part.points, scale)
                 brush.polygon(points, fill=_faded(part.tone, part.opacity))

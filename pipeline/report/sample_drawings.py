@@ -225,6 +225,23 @@ def _extremes(made: Axes, part: pd.DataFrame, place: np.ndarray, full: float) ->
         made.scene.add(Words((x + side, y + down), words, "ink", 7.5, anchor))
 
 
+def _days(figure: Figure) -> Scene:
+    data, scene = figure.data, Scene(WIDTH, 210.0)
+    names = ("session", "abnormal_bp", "band_bp")
+    x, y, band = (data[name].to_numpy(dtype=np.float64) for name in names)
+    span = (float(x.min()) - 0.6, float(x.max()) + 0.6)
+    up = reach(y, band, -band, zero=True)
+    made = axes(scene, span, up, "Sessions from the announcement", "Abnormal return (bp)")
+    made.bar((figure.marks["from"] - 0.5, figure.marks["to"] + 0.5), made.y, "strip")
+    made.band(x, -band, band, SERIES[0], 0.13)
+    made.across(0.0)
+    made.stems(x, y)
+    outside = np.abs(y) > band
+    made.dots(x[~outside], y[~outside], SERIES[0], MARKERS[0], 5, filled=False)
+    made.dots(x[outside], y[outside], SERIES[1], MARKERS[1], 6)
+    return scene
+
+
 DRAWINGS: Mapping[str, Callable[[Figure], Scene]] = {
     "calendar": _calendar,
     "bins": _bins,
@@ -233,4 +250,5 @@ DRAWINGS: Mapping[str, Callable[[Figure], Scene]] = {
     "correction": _correction,
     "placebo": _placebo,
     "left_out": _left_out,
+    "days": _days,
 }

@@ -49,6 +49,15 @@ class Line:
 
 
 @dataclass(frozen=True, slots=True)
+class Stems:
+    """Many separate lines of two points each, all alike."""
+
+    ends: tuple[tuple[Point, Point], ...]
+    tone: str
+    width: float = 1.0
+
+
+@dataclass(frozen=True, slots=True)
 class Area:
     """A filled polygon without an outline."""
 
@@ -81,7 +90,7 @@ class Words:
     bold: bool = False
 
 
-Part = Line | Area | Marks | Words
+Part = Line | Stems | Area | Marks | Words
 
 
 @dataclass(slots=True)

@@ -2,8 +2,11 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+
 import pandas as pd
 
+from pipeline.report.deal_names import all_deals, page_links
 from pipeline.report.document import Block, Column, Interval, Section, Statistic, Table, Text
 from pipeline.report.material import MOST_ROWS, Material, capital, prose, rows_left_out
 from pipeline.report.numerals import BP, bp, bp_digits, count, p_value, plain
@@ -27,7 +30,10 @@ def timing_section(material: Material) -> Section | None:
         "A deal can move the price only once it is public. Day zero is the first session whose "
         "close could hold the news, on the clock of the exchange where the deal is measured."
     )
-    blocks: list[Block] = [opening, kinds_table(deals), day_zero_table(deals)]
+    more = all_deals(material)
+    if more is not None:
+        opening = prose(*opening.pieces, " There is ", more, ".")
+    blocks: list[Block] = [opening, kinds_table(deals), day_zero_table(deals, page_links(material))]
     drawn = calendar_figure(material)
     if drawn is not None:
         blocks.append(drawn)
@@ -55,7 +61,7 @@ def kinds_table(deals: pd.DataFrame) -> Table:
     return Table("day_zero_kinds", prose("When the deals were announced"), columns, rows)
 
 
-def day_zero_table(deals: pd.DataFrame) -> Table:
+def day_zero_table(deals: pd.DataFrame, pages: Mapping[str, str]) -> Table:
     """One row a deal; a page shows the first, the workbook all."""
     columns = (
         Column("Deal"), Column("Exchange"), Column("Announced, its clock"), Column("Kind"),
@@ -65,8 +71,8 @@ def day_zero_table(deals: pd.DataFrame) -> Table:
              "day_zero_reason"]  # fmt: skip
     rows = tuple(
         (
-            Text(str(deal)), Text(exchange), Text(stamp), Text(capital(kind)),
-            Text(f"{day:%Y-%m-%d}"), Text(close), Text(f"{why}."),
+            Text(str(deal), pages.get(str(deal), "")), Text(exchange), Text(stamp),
+            Text(capital(kind)), Text(f"{day:%Y-%m-%d}"), Text(close), Text(f"{why}."),
         )
         for deal, exchange, stamp, kind, day, close, why
         in deals[names].head(MOST_ROWS).itertuples(index=False)

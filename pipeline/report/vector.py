@@ -8,7 +8,7 @@ from __future__ import annotations
 
 from html import escape
 
-from pipeline.report.scene import INK, SIZE, TONES, Area, Line, Marks, Part, Point, Scene
+from pipeline.report.scene import INK, SIZE, TONES, Area, Line, Marks, Part, Point, Scene, Stems
 from pipeline.report.scene import Words as Text
 
 FONT = "DejaVu Sans, Segoe UI, Helvetica Neue, Arial, sans-serif"
@@ -35,6 +35,10 @@ def _part(part: Part) -> str:
                 f'<path d="{_way(part.points)}" fill="none" {_stroke(part.tone)} '
                 f'stroke-width="{_number(part.width)}"{dashed}/>'
             )
+        case Stems():
+            way = "".join(map(_way, part.ends))
+            width = _number(part.width)
+            return f'<path d="{way}" fill="none" {_stroke(part.tone)} stroke-width="{width}"/>'
         case Area():
             faded = f' fill-opacity="{_number(part.opacity)}"' if part.opacity < 1 else ""
             return f'<path d="{_way(part.points)}Z" {_fill(part.tone)}{faded}/>'
@@ -111,6 +115,9 @@ def _moved(part: Part, down: float) -> Part:
     match part:
         case Line():
             return Line(_shifted(part.points, down), part.tone, part.width, part.dash)
+        case Stems():
+            ends = tuple((_shifted(pair, down)[0], _shifted(pair, down)[1]) for pair in part.ends)
+            return Stems(ends, part.tone, part.width)
         case Area():
             return Area(_shifted(part.points, down), part.tone, part.opacity)
         case Marks():

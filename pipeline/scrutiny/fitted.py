@@ -55,13 +55,8 @@ def residuals(
     effects = {name: codes for name, codes in design.effects.items() if name in column.effects}
     if not set(column.names) <= set(known) or not (effects or CONSTANT in column.names):
         return None
-    left = design.y - sum(
-        (
-            value * known[name]
-            for name, value in zip(column.names, column.coefficients, strict=True)
-        ),
-        np.zeros(design.n),
-    )
+    used = np.column_stack([known[name] for name in column.names])
+    left = design.y - used @ column.coefficients
     kept = np.ones(design.n, dtype=np.bool_)
     if effects:
         kept = without_singletons(effects)

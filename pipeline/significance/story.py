@@ -87,11 +87,15 @@ def story_of(deal: str, abnormal: AbnormalReturns, window: Window, level: float)
     )
 
 
-def stories_of(abnormal: AbnormalReturns, window: Window, level: float) -> Rows:
+def stories_of(abnormal: AbnormalReturns, window: Window, level: float, days: pd.DataFrame) -> Rows:
     """What was measured of every deal, as rows of ``deal_stories``; numbers as in :func:`story_of`.
 
-    ``rank_standardised`` orders the deals by their standardised reaction.
+    ``rank_standardised`` orders the deals by their standardised reaction; ``traded`` counts the
+    sessions of ``days`` (see :func:`days_of`) with a return, ``outside`` those beyond their band.
     """
+    beyond = days["abnormal_return"].abs() > days["reach"]
+    outside = beyond.groupby(days["deal"], sort=False).sum()
+    traded = days.groupby("deal", sort=False)["abnormal_return"].count()
     reach = np.array([t_reach(level, float(df)) for df in abnormal.degrees_of_freedom])
     cars, spread = abnormal.car(window), np.sqrt(abnormal.car_variance(window))
     scars = abnormal.standardised(window)
@@ -111,6 +115,8 @@ def stories_of(abnormal: AbnormalReturns, window: Window, level: float) -> Rows:
             "scar": float(scars[at]),
             "rank": int(ranks[at]),
             "rank_standardised": int(standardised[at]),
+            "traded": int(traded[deal]),
+            "outside": int(outside[deal]),
             "deals": len(cars),
         }
         for at, deal in enumerate(abnormal.deals)

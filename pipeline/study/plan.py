@@ -260,6 +260,7 @@ def facts(study: Study, leading_test: str, listed: tuple[Window, ...]) -> StudyF
         seed=study.seed,
         outcome=ready.outcome(study),
         house=house_of(study.papers),
+        deal_pages=study.report.deal_pages if "html" in study.report.formats else 0,
     )
 
 

@@ -252,6 +252,12 @@ class Report(Part):
         description="What is written; 'pdf' is the memo as a PDF.",
     )
     currency: str = Field("", description="Of the money columns, with scale: USD million.")
+    deal_pages: int = Field(
+        1_000,
+        ge=0,
+        description="Of how many deals, the first of the list, a page is made beside the report; "
+        "dealwake deal STUDY ID --page FILE makes that of any deal.",
+    )
 
 
 class Study(Part):
