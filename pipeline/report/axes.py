@@ -103,7 +103,7 @@ class Axes:
         ends = (
             (self.at(place, 0.0), self.at(*self.inside(place, value)))
             for place, value in pairs
-            if math.isfinite(value)
+            if math.isfinite(place + value)
         )
         self.scene.add(Stems(tuple(ends), "faint"))
 

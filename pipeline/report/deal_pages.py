@@ -35,7 +35,7 @@ from pipeline.report.document import (
 )
 from pipeline.report.material import Material, capital, embedded, prose, taken
 from pipeline.report.numerals import BP, count, in_unit, plain, show, true_minus, unit_digits
-from pipeline.report.wording import level_words, window_label
+from pipeline.report.wording import window_label
 
 Record = Mapping[str, Any]
 REPORT = "../report.html"
@@ -211,11 +211,12 @@ def _reaction_section(book: Book, deal: str, row: Record) -> Section | None:
     if story is None:
         return None
     study = book.material.study
+    level = book.material.percent("confidence_level")
     words = prose(
         "Over sessions ", taken(window_label(study.headline.label), "study"),
         " its abnormal return was ", _quoted(story, "deal_stories", "car", scale=BP), " bp, rank ",
         _quoted(story, "deal_stories", "rank"), " of ", _quoted(story, "deal_stories", "deals"),
-        " (1 is the largest). Its own ", level_words(study.level), " interval, from how much this "
+        " (the first is the largest). Its own ", level, " interval, from how much this "
         "share moves on other days, runs from ",
         _quoted(story, "deal_stories", "ci_low", scale=BP), " to ",
         _quoted(story, "deal_stories", "ci_high", scale=BP), " bp. In units of its own standard "
@@ -247,8 +248,8 @@ def days_figure(
     title = prose(outside, " of ", traded, " sessions lie outside their band", *largest)
     caption = prose(
         "The abnormal return of each session in basis points. The band holds what this share does "
-        "on ", level_words(material.study.level), " of sessions without news; a filled square is "
-        "outside it. The grey strip is the headline window.",
+        "on ", material.percent("confidence_level"), " of sessions without news; a filled square "
+        "is outside it. The grey strip is the headline window.",
     )  # fmt: skip
     alt = f"Dots of {len(days)} abnormal returns with a band around zero; the table holds each."
     window = material.study.headline
@@ -272,7 +273,7 @@ def _standing_section(book: Book, deal: str) -> Section | None:
     words = prose(
         capital(book.material.outcome), " ", unit.before, value, unit.level, *interval, "; rank ",
         _quoted(story, "deal_standings", "rank"), " of ",
-        _quoted(story, "deal_standings", "deals"), ", 1 the largest.",
+        _quoted(story, "deal_standings", "deals"), "; the first is the largest.",
     )  # fmt: skip
     return Section("The outcome", (words,))
 
@@ -283,8 +284,8 @@ def _index(book: Book, written: frozenset[str]) -> Document:
     blocks: list[Block | None] = [_list_table(book, written), _dropped_table(material)]
     if len(written) < len(book.names):
         blocks.insert(0, prose(
-            "Pages were made for the first ", str(len(written)), " deals. That of any other deal: "
-            "dealwake deal STUDY ID --page FILE.",
+            "Pages were made for the first ", taken(f"{len(written):,}", "study"),
+            " deals. That of any other deal: dealwake deal STUDY ID --page FILE.",
         ))  # fmt: skip
     kept = tuple(block for block in blocks if block is not None)
     ways = (("Report", REPORT),)

@@ -57,7 +57,7 @@ def characteristics_table(material: Material, row: Record, quartiles: list[Recor
             words = Text(capital(material.study.words(name)))
             rows.append((words, _code(row[name]), None, None, None, Text("")))
     note = prose("A quarter of the deals lie below the lower quartile, a quarter above the upper "
-                 "one. Variables that are 0 or 1 have no place.")  # fmt: skip
+                 "one. A variable that is only yes or no has no place.")  # fmt: skip
     title = prose("Its characteristics beside those of all deals")
     return Table("characteristics", title, columns, tuple(rows), (note,))
 

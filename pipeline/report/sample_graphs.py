@@ -88,7 +88,9 @@ def first_stage_figure(material: Material) -> Figure | None:
         "Both sides without what the controls, the fixed effects and the other instruments tell "
         "of them. Each dot is the mean of about as many deals; the line has the slope of the first "
         "stage (Frisch–Waugh–Lovell). Read the slope and the spread, not the shape: means of "
-        "what is left are not the curve itself (Cattaneo and others 2024)."
+        "what is left are not the curve itself (",
+        taken("Cattaneo and others 2024", "source"),
+        ").",
     )
     data = frame.assign(label=[material.study.words(str(n)) for n in frame["instrument"]])
     alt = "Dots of means with a line, one panel an instrument. Slopes: " + "; ".join(
@@ -181,7 +183,9 @@ def correction_figure(material: Material) -> Figure | None:
         "The correction for who announces (the inverse Mills ratio), one dot a deal, against its "
         "best straight-line prediction from the regressors of the outcome; the dashed line is "
         "where they are equal. The closer the dots to it the less the model can tell the "
-        "correction from the controls (Leung and Yu 1996). Below: the correction over the deals."
+        "correction from the controls (",
+        taken("Leung and Yu 1996", "source"),
+        "). Below: the correction over the deals.",
     )
     low, high = float(frame["mills"].min()), float(frame["mills"].max())
     middle = float(frame["mills"].median())

@@ -36,7 +36,7 @@ def prose_markup(paragraph: Paragraph) -> str:
             found.append(_words(piece))
         elif isinstance(piece, Quote):
             title = _words(source(piece))
-            found.append(f'<data value="{piece.value}" title="{title}">{piece.text}</data>')
+            found.append(f'<data value="{piece.value}" title="{title}">{escape(piece.text)}</data>')
         else:
             found.append(_linked(_words(piece.text), piece.href))
     return "".join(found)
