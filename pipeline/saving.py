@@ -16,6 +16,7 @@ from pipeline.core.contrast import Contrast
 from pipeline.core.parquet import parquet_bytes
 from pipeline.core.results import Results
 from pipeline.core.store import write_folder
+from pipeline.inputs.source import POSTGRES, Source
 from pipeline.registry import FORMATS, entry
 from pipeline.study import plan
 from pipeline.study.schema import Study
@@ -37,7 +38,7 @@ def save(
             files.update(entry(FORMATS, key).load()(results))
         for name, frame in results.tables.items():
             files[f"data/{name}.parquet"] = parquet_bytes(frame)
-    files["manifest.json"] = _manifest(study, folder, {**seconds, **clock.seconds})
+    files["manifest.json"] = _manifest(study, folder, {**seconds, **clock.seconds}, results.digests)
     write_folder(folder, files)
     return sorted(files)
 
@@ -63,15 +64,13 @@ def save_contrast(found: Contrast, folder: Path) -> list[str]:
     return sorted(files)
 
 
-def _manifest(study: Study, folder: Path, seconds: Mapping[str, float]) -> bytes:
+def _manifest(
+    study: Study, folder: Path, seconds: Mapping[str, float], digests: Mapping[str, str]
+) -> bytes:
     paths = {name: path for name, path in study.inputs if isinstance(path, Path)}
     read = plan.sources(study)
     inputs = {
-        name: {
-            "file": path.name,
-            "path": Path(os.path.relpath(path, folder)).as_posix(),
-            "sha256": digest(path) if name in read else "",
-        }
+        name: _input(read[name], folder, digests) if name in read else _unread(path, folder)
         for name, path in paths.items()
     }
     logo = study.papers.logo
@@ -86,6 +85,27 @@ def _manifest(study: Study, folder: Path, seconds: Mapping[str, float]) -> bytes
         "seconds": dict(seconds),
     }
     return (json.dumps(content, indent=2, ensure_ascii=False) + "\n").encode()
+
+
+def _input(source: Source, folder: Path, digests: Mapping[str, str]) -> dict[str, str]:
+    """What was read: a file and its digest, or a query and that of its result.
+
+    A connection is no part of it.
+    """
+    if source.is_postgres:
+        asked = source.query or f"table {source.relation}"
+        return {
+            "file": source.file,
+            "path": POSTGRES.name,
+            "query": asked,
+            "sha256": digests.get(source.table, ""),
+        }
+    return {**_unread(source.path, folder), "sha256": digest(source.path)}
+
+
+def _unread(path: Path, folder: Path) -> dict[str, str]:
+    where = POSTGRES.name if path == POSTGRES else Path(os.path.relpath(path, folder)).as_posix()
+    return {"file": path.name, "path": where, "sha256": ""}
 
 
 def digest(path: Path) -> str:

@@ -153,6 +153,7 @@ class Results:
         readings: the headline and the test that leads under another date or listing of the same
             deals, decimal, the headline's own row first; empty without one.
         look: makes the HTML that a notebook shows; None leaves it to the notebook.
+        digests: table -> SHA-256 of what a query gave, for tables that are no files.
         doubts: sentences on what the scrutiny could not ask.
     """
 
@@ -184,6 +185,7 @@ class Results:
     buy_and_hold: pd.DataFrame = field(default_factory=pd.DataFrame)
     readings: pd.DataFrame = field(default_factory=pd.DataFrame)
     selection: Mapping[str, pd.DataFrame] = field(default_factory=dict)
+    digests: Mapping[str, str] = field(default_factory=dict)
     look: Callable[[Results], str] | None = field(default=None, repr=False)
 
     def _repr_html_(self) -> str | None:

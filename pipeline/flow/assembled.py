@@ -71,6 +71,7 @@ def results_of(
     results = Results(
         study=facts,
         abnormal=measured.abnormal,
+        digests=measured.tables.digests,
         deals=deals_frame(deals, groups),
         window_tests=found,
         columns=columns,

@@ -15,6 +15,7 @@ from pipeline.core.contrast import Contrast, Difference, Kind, SavedRun
 from pipeline.core.findings import InputProblem, problem
 from pipeline.core.outcome import Outcome
 from pipeline.flow.commands import run
+from pipeline.inputs.source import POSTGRES
 from pipeline.saving import digest
 from pipeline.study.load import restored
 from pipeline.study.ready import outcome_named
@@ -23,6 +24,12 @@ MOST_ALONE = 12
 VERSIONS = "versions of the programs"
 TOGETHER = "together"
 Steps = Mapping[str, tuple[Difference, ...]]
+
+# Why a table cannot be read again: a file, or a data base.
+CHANGED = {
+    False: "is no longer the file that was read",
+    True: "came from a data base, which may have changed since",
+}
 
 
 def contrast(first: Path, second: Path, progress: Progress = lambda _: None) -> Contrast:
@@ -124,8 +131,8 @@ def _steps(found: Iterable[Difference]) -> Steps:
 def _lost(run: SavedRun) -> tuple[str, ...]:
     """Why the run cannot be made again: tables that are gone, or are no longer what they were."""
     return tuple(
-        f"{run.inputs[table]['file']} of {run.name} is no longer the file that was read: nothing "
-        "was made again."
+        f"{run.inputs[table]['file']} of {run.name} {CHANGED[path == POSTGRES]}: nothing was made "
+        "again."
         for table, path in _paths(run).items()
         if run.inputs[table]["sha256"]
         and not (path.is_file() and digest(path) == run.inputs[table]["sha256"])
@@ -133,7 +140,10 @@ def _lost(run: SavedRun) -> tuple[str, ...]:
 
 
 def _paths(run: SavedRun) -> dict[str, Path]:
-    return {table: (run.folder / file["path"]).resolve() for table, file in run.inputs.items()}
+    return {
+        table: POSTGRES if file["path"] == POSTGRES.name else (run.folder / file["path"]).resolve()
+        for table, file in run.inputs.items()
+    }
 
 
 def _changed(

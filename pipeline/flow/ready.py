@@ -58,6 +58,7 @@ def ready_deals(study: Study, clock: Clock) -> Measured:
         candidates=read.candidates,
         factors=None,
         findings=read.findings,
+        digests=read.digests,
     )
     return Measured(read.deals, {}, {}, Ledger(read.ledger), read.findings, tables, ())
 

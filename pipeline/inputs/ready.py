@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import Any
 
 import numpy as np
@@ -24,6 +24,7 @@ from pipeline.inputs.deals import (
 )
 from pipeline.inputs.files import ROW, Source, read_table
 from pipeline.inputs.others import restricted_findings
+from pipeline.inputs.postgres import fetching
 from pipeline.inputs.typed import extra_columns, typed
 from pipeline.inputs.units import error_scale, unit_doubt
 from pipeline.inputs.wanted import DealRules, Wanted
@@ -58,6 +59,7 @@ class ReadyTables:
         ledger: the stages "deal list" and "outcome".
         candidates: company by year, or None.
         findings: warnings and notes.
+        digests: table -> SHA-256 of a query's result.
     """
 
     deals: pd.DataFrame
@@ -65,6 +67,7 @@ class ReadyTables:
     ledger: tuple[StageLedger, StageLedger]
     candidates: pd.DataFrame | None
     findings: tuple[Finding, ...]
+    digests: Mapping[str, str] = field(default_factory=dict)
 
 
 def read_ready(
@@ -80,6 +83,26 @@ def read_ready(
     Raises:
         InputProblem: with the errors of all files at once.
     """
+    with fetching() as fetcher:
+        local = {name: source for name, source in sources.items() if not source.is_postgres}
+        found: list[Finding] = []
+        for name in sources.keys() - local.keys():
+            try:
+                local[name] = fetcher.at_hand(sources[name])
+            except InputProblem as fault:
+                found += fault.findings
+        raise_errors(found)
+        return _read_ready(local, wanted, outcome, date_format, rules, fetcher.digests)
+
+
+def _read_ready(
+    sources: Mapping[str, Source],
+    wanted: Wanted,
+    outcome: OutcomeColumns,
+    date_format: str,
+    rules: DealRules,
+    digests: Mapping[str, str],
+) -> ReadyTables:
     source = sources["deals"]
     found: list[Finding] = []
     listed, candidates = None, None
@@ -100,7 +123,7 @@ def read_ready(
     raise_errors(found)
     assert listed is not None
     kept, lost = _with_outcome(listed, outcome.value)
-    return ReadyTables(kept, listed, (ledger, lost), candidates, tuple(found))
+    return ReadyTables(kept, listed, (ledger, lost), candidates, tuple(found), digests)
 
 
 def _read_list(
