@@ -18,7 +18,10 @@ from pipeline.core.prices import Integers
 from pipeline.inputs.relations import FORMATS, Relation, code_of, day_of, literal, quoted
 from pipeline.inputs.source import Only
 
-BATCH = 1 << 17
+# Vectors of 2,048 rows that are drawn at a time.
+VECTORS = 64
+A_DAY = 86_400
+KINDS = {"number": np.int32, "day": np.int64, "value": np.float64, "volume": np.float64}
 DECIMAL = r"\s*[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?\s*"
 # Below it lie the values that stand for no date at all.
 EARLIEST = "1970-01-02"
@@ -45,23 +48,26 @@ def plain_rows(
         return None
     if not only.codes or only.spans.empty or (only.day_limits() or ("",))[0] < EARLIEST:
         return None
-    statement = _statement(relation, theirs, value, date_format)
+    statement = _statement(relation, theirs, value, only, date_format)
     if statement is None:
         return None
-    spans = only.spans
-    at = pd.Index(only.codes).get_indexer(pd.Index(spans["security"])).astype(np.int32)
-    wanted = pd.DataFrame({"code": spans["security"], "at": at})
-    wanted["first"], wanted["last"] = spans["first"], spans["last"]
-    relation.base.register("touched", wanted)
+    codes = pd.DataFrame({"code": only.codes, "number": np.arange(len(only.codes), dtype=np.int32)})
+    relation.base.register("codes", codes)
+    number = pd.Index(only.codes).get_indexer(pd.Index(only.spans["security"])).astype(np.int32)
+    relation.base.register("spans", only.spans[["first", "last"]].assign(number=number))
+    relation.base.execute(
+        "CREATE TEMP TABLE touched AS "
+        "SELECT number, CAST(first AS DATE) AS first, CAST(last AS DATE) AS last FROM spans"
+    )
     try:
-        columns = _columns(relation.base.sql(statement).to_arrow_reader(BATCH))
+        drawn = _columns(relation.base.execute(statement), _most(only.spans))
     except duckdb.Error:
         return None
-    return _table(columns, value, only)
+    return None if drawn is None else _table(*drawn, value, only)
 
 
 def _statement(
-    relation: Relation, theirs: Mapping[str, str], value: str, date_format: str
+    relation: Relation, theirs: Mapping[str, str], value: str, only: Only, date_format: str
 ) -> str | None:
     kinds = relation.kinds
     date, security = theirs["date"], theirs["security"]
@@ -69,17 +75,21 @@ def _statement(
     cells = [_plain_number(theirs.get(name), kinds) for name in (value, "volume")]
     if day is None or None in cells:
         return None
-    on = f"{code_of(security, kinds[security])} = touched.code"
     when = day_of(date, kinds[date], date_format)
     within = f"{when} BETWEEN touched.first AND touched.last"
+    limits = ""
     if kinds[date] == "VARCHAR":  # a date that cannot be compared must not be passed over
         within = f"({when} IS NULL OR {within})"
     else:
-        limits = "(SELECT min(first) FROM touched) AND (SELECT max(last) FROM touched)"
-        within += f" AND {quoted(date)} BETWEEN {limits}"
+        first, last = only.day_limits() or ("", "")
+        limits = f" WHERE {quoted(date)} BETWEEN DATE '{first}' AND DATE '{last}'"
+    # Each row meets one code and is kept or not: none is read twice where spans are many.
+    days = f"CAST({day} AS DATE) - DATE '1970-01-01'"
     return (
-        f"SELECT touched.at, CAST({day} AS DATE) - DATE '1970-01-01' AS day, {cells[0]} AS value, "
-        f"{cells[1]} AS volume FROM {relation.view} JOIN touched ON {on} AND {within}"
+        f"SELECT codes.number, {days} AS day, {cells[0]} AS value, {cells[1]} AS volume "
+        f"FROM {relation.view} "
+        f"JOIN codes ON {code_of(security, kinds[security])} = codes.code "
+        f"SEMI JOIN touched ON touched.number = codes.number AND {within}{limits}"
     )
 
 
@@ -121,37 +131,61 @@ def _plain_number(name: str | None, kinds: Mapping[str, str]) -> str | None:
     )
 
 
-def _columns(batches: Any) -> dict[str, np.ndarray]:
-    """The columns of a result, drawn batch by batch so that it never stands in memory twice."""
-    kinds = {"at": np.int32, "day": np.int32, "value": np.float64, "volume": np.float64}
-    parts: dict[str, list[np.ndarray]] = {name: [] for name in kinds}
-    for batch in batches:
-        for name, kind in kinds.items():
-            parts[name].append(batch.column(name).to_numpy(zero_copy_only=False).astype(kind))
-    found = {}
-    for name, kind in kinds.items():
-        found[name] = np.concatenate(parts.pop(name) or [np.empty(0, kind)])
-    return found
+def _columns(result: Any, most: int) -> tuple[dict[str, np.ndarray], bool] | None:
+    """The columns of a result, and whether its rows rise by security and date, each pair once.
+
+    Drawn batch by batch into arrays of ``most`` rows, of which only what is filled takes memory;
+    None if there are more rows, which a table with one row a security and date cannot have.
+    """
+    columns = {name: np.empty(most, kind) for name, kind in KINDS.items()}
+    before, rising, rows = np.empty(0, np.int64), True, 0
+    while len(batch := result.fetch_df_chunk(VECTORS)):
+        here = slice(rows, rows + len(batch))
+        if here.stop > most:
+            return None
+        if rising:
+            numbers, days = batch["number"].to_numpy(), batch["day"].to_numpy()
+            key = np.concatenate([before, _keys(numbers, days)])
+            rising, before = bool((key[1:] > key[:-1]).all()), key[-1:]
+        for name in KINDS:
+            columns[name][here] = batch[name].to_numpy()
+        columns["day"][here] *= A_DAY
+        rows = here.stop
+    return {name: column[:rows] for name, column in columns.items()}, rising
 
 
-def _table(columns: dict[str, np.ndarray], value: str, only: Only) -> pd.DataFrame | None:
-    key = columns["at"].astype(np.int64) << 32 | columns["day"].astype(np.int64)
-    if np.isinf(columns["value"]).any() or np.isinf(columns["volume"]).any():
+def _most(spans: pd.DataFrame) -> int:
+    """Dates in all spans."""
+    return int(((spans["last"] - spans["first"]).dt.days + 1).sum())
+
+
+def _keys(security: np.ndarray, day: np.ndarray) -> Integers:
+    """One number a row, which rises with security and day."""
+    return (security.astype(np.int64) << 40) + day.astype(np.int64)
+
+
+def _table(
+    columns: dict[str, np.ndarray], rising: bool, value: str, only: Only
+) -> pd.DataFrame | None:
+    """The rows in order; None if a pair of security and date stands twice."""
+    if any(np.isinf(columns[name]).any() for name in ("value", "volume")):
         return None
-    if not _rising(key):
+    if not rising:
+        key = _keys(columns["number"], columns["day"])
         order = np.argsort(key, kind="stable")
         key = key[order]
-        if not _rising(key):
+        if (key[1:] == key[:-1]).any():
             return None
-        columns = {name: cells[order] for name, cells in columns.items()}
-    del key
-    security = pd.Categorical.from_codes(columns["at"], categories=pd.Index(only.codes))
-    day = columns["day"].astype("datetime64[D]").astype("datetime64[s]")
+        del key
+        for name in KINDS:
+            columns[name] = columns[name][order]
+    security = pd.Categorical.from_codes(columns.pop("number"), categories=pd.Index(only.codes))
     return pd.DataFrame(
-        {"security": security, "date": day, value: columns["value"], "volume": columns["volume"]},
+        {
+            "security": security,
+            "date": columns["day"].view("datetime64[s]"),
+            value: columns["value"],
+            "volume": columns["volume"],
+        },
         copy=False,
     )
-
-
-def _rising(key: Integers) -> bool:
-    return bool((key[1:] > key[:-1]).all())
