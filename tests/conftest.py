@@ -5,5 +5,8 @@ import os
 import tempfile
 
 import pipeline  # noqa: F401  (fixes the number of threads before numpy is imported)
+from tests.database import server
+
+__all__ = ["server"]
 
 os.environ["DEALWAKE_KEEP"] = tempfile.mkdtemp(prefix="dealwake-tests-")

@@ -29,15 +29,18 @@ def key(source: Source, name: str) -> str:
 
 
 @contextmanager
-def as_utf8(source: Source) -> Iterator[Path]:
+def as_utf8(source: Source, whole: bool = True) -> Iterator[Path]:
     """The file in UTF-8: itself, or a copy that lives as long as the context.
+
+    Without ``whole`` nothing but its first rows will be read, and bytes of zero are not looked for.
 
     Raises:
         InputProblem: if it cannot be read as declared, or holds bytes that no text has.
     """
     marked = _byte_order_mark(source.at)
     encoding = marked or source.encoding or "utf-8"
-    _refuse_nulls(source, encoding)
+    if whole:
+        _refuse_nulls(source, encoding)
     if codecs.lookup(encoding).name in ("utf-8", "utf-8-sig", "ascii"):
         yield source.at
         return

@@ -241,7 +241,7 @@ def _touched(
     theirs = {our: name for name, our in ours.items()}
     if only is None or "security" not in theirs:
         return ""
-    code = code_of(theirs["security"], relation.kinds[theirs["security"]])
+    code = code_of(theirs["security"])
     day = "CAST(NULL AS DATE)"
     if "date" in theirs:
         day = day_of(theirs["date"], relation.kinds[theirs["date"]], date_format)

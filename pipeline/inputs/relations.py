@@ -6,11 +6,12 @@ one statement that reads.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 
 import duckdb
+import numpy as np
 import pandas as pd
 
 from pipeline.inputs.csv_text import as_utf8, delimiter
@@ -97,20 +98,31 @@ def header_of(source: Source) -> list[str]:
     if source.kind != ".csv":
         with opened(source) as relation:
             return list(relation.kinds)
-    with duckdb.connect() as base, as_utf8(source) as path:
+    with duckdb.connect() as base, as_utf8(source, whole=False) as path:
         made = _csv(str(path), delimiter(source, path), source)
         made = made.replace("header = true", "header = false")
         names = base.execute(f"SELECT * FROM {made} LIMIT 1").fetchone() or ()
         return [str(name) for name in names if name is not None]
 
 
-def code_of(name: str, kind: str) -> str:
-    """A column's codes as the contract reads them: without spaces around, 5.0 as 5."""
-    text = f"trim(CAST({quoted(name)} AS VARCHAR))"
-    if kind in ("DOUBLE", "FLOAT", "VARCHAR") or kind.startswith("DECIMAL"):
-        ends = f"CASE WHEN {text} LIKE '%.0' THEN regexp_replace({text}, "
-        return ends + f"'^(\\d+)\\.0$', '\\1') ELSE {text} END"
-    return text
+def code_of(name: str) -> str:
+    """A column's codes without spaces around; compare them with :func:`spellings`."""
+    return f"trim(CAST({quoted(name)} AS VARCHAR))"
+
+
+def spellings(codes: Sequence[str]) -> pd.DataFrame:
+    """code, number: each code by its place, as it is and, if it is a whole number 5, as 5.0.
+
+    The contract reads both as one; so turned over, no cell has to be rewritten to be compared.
+    """
+    number = np.arange(len(codes), dtype=np.int32)
+    whole = [at for at, code in enumerate(codes) if code.isascii() and code.isdigit()]
+    return pd.DataFrame(
+        {
+            "code": [*codes, *(f"{codes[at]}.0" for at in whole)],
+            "number": np.concatenate([number, number[whole]]),
+        }
+    )
 
 
 def day_of(name: str, kind: str, date_format: str) -> str:
@@ -121,7 +133,7 @@ def day_of(name: str, kind: str, date_format: str) -> str:
     if kind != "VARCHAR":
         return "CAST(NULL AS DATE)"
     parts = {date_format[at : at + 2] for at, mark in enumerate(date_format) if mark == "%"}
-    plain = f"TRY_CAST(left(trim({cell}), 10) AS DATE)"
+    plain = f"coalesce(TRY_CAST({cell} AS DATE), TRY_CAST(left(trim({cell}), 10) AS DATE))"
     if parts != FORMATS:
         return plain if not date_format else "CAST(NULL AS DATE)"
     return f"coalesce(CAST(try_strptime({cell}, {literal(date_format)}) AS DATE), {plain})"
@@ -132,15 +144,22 @@ def touched(relation: Relation, code: str, day: str, only: Only) -> str:
 
     ``code`` and ``day`` are expressions; a row of a wanted security without a date stays.
     """
+    codes = spellings(only.codes)
+    relation.base.register("wanted", codes)
     if only.spans is None:
-        relation.base.register("wanted", pd.DataFrame({"code": list(only.codes)}))
         return f"{code} IN (SELECT code FROM wanted)"
-    spans = only.spans.rename(columns={"security": "code"})
-    relation.base.register("wanted", spans)
+    relation.base.register("wanted", codes_with_spans(codes, only))
     return (
         f"EXISTS (SELECT 1 FROM wanted WHERE wanted.code = {code} AND ({day} IS NULL OR "
         f"{day} BETWEEN wanted.first AND wanted.last))"
     )
+
+
+def codes_with_spans(codes: pd.DataFrame, only: Only) -> pd.DataFrame:
+    """code, first, last: every spelling of a code with each of its spans."""
+    assert only.spans is not None
+    named = codes.assign(security=np.asarray(only.codes, dtype=object)[codes["number"]])
+    return named.merge(only.spans, on="security")[["code", "first", "last"]]
 
 
 def select(relation: Relation, names: list[str], condition: str = "") -> str:
