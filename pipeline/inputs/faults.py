@@ -20,15 +20,19 @@ def csv_fault(source: Source) -> InputProblem | None:
         The problem to raise, or None if nothing is found. Rows count from the first line as row 1,
         blank ones included.
     """
+    line = source.header_row
     try:
         with source.at.open(newline="", encoding=source.encoding or "utf-8-sig") as text:
             for _ in range(source.header_row - 1):
                 text.readline(LONGEST)
             header = text.readline(LONGEST)
             mark = source.delimiter or max(MARKS, key=header.count)
+            if len(header) == LONGEST:
+                return _too_long(source, line)
             width = len(next(csv.reader([header], delimiter=mark), []))
             rows = csv.reader(text, delimiter=mark)
             for number, row in enumerate(rows, start=source.header_row + 1):
+                line = number + 1
                 if row and len(row) != width:
                     remedy = f"Complete the row, or put text that holds a '{mark}' in quotes."
                     expected = f"{width} cells, as the header has"
@@ -44,11 +48,14 @@ def csv_fault(source: Source) -> InputProblem | None:
             row=str(_first_undecodable(source.at)),
         )
     except csv.Error:
-        number = source.header_row + rows.line_num
-        limit = f"cells of at most {csv.field_size_limit():,} characters"
-        remedy = "Look for a quotation mark that is never closed, or shorten the cell."
-        return _fault(source, "a cell that goes on and on", limit, remedy, number)
+        return _too_long(source, line)
     return None
+
+
+def _too_long(source: Source, row: int) -> InputProblem:
+    limit = f"cells of at most {csv.field_size_limit():,} characters"
+    remedy = "Look for a quotation mark that is never closed, or shorten the cell."
+    return _fault(source, "a cell that goes on and on", limit, remedy, row)
 
 
 def _fault(source: Source, got: str, expected: str, remedy: str, row: int) -> InputProblem:
