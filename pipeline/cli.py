@@ -99,6 +99,40 @@ def check(study: StudyFile, as_json: AsJson = False) -> None:
 
 
 @app.command()
+def draft(
+    folder: Annotated[Path, typer.Argument(help="The folder with your tables.")],
+    out: Annotated[
+        Path | None, typer.Option(help="Study file to write; study.toml in the folder if absent.")
+    ] = None,
+    answer: Annotated[
+        list[str] | None,
+        typer.Option(help="A key and its value, such as inputs.timestamp_zone=Europe/London."),
+    ] = None,
+    as_json: AsJson = False,
+) -> None:
+    """Write a study file from your own tables: what each is, and what only you can say."""
+    from pipeline.screen import Screen
+
+    screen = Screen(quiet=False, as_json=as_json)
+    passed = True
+
+    def work() -> None:
+        nonlocal passed
+        from pipeline.flow.drafted import drafted
+        from pipeline.screen_draft import show_drafted
+
+        answers = dict(_answer(text) for text in answer or ())
+        with screen.progress() as tell:
+            found = drafted(folder, out or folder / "study.toml", answers, tell)
+        show_drafted(found, as_json=as_json)
+        passed = found.checked
+
+    _guard(work, screen.problem)
+    if not passed:
+        raise typer.Exit(BAD_INPUT)
+
+
+@app.command()
 def power(study: StudyFile, as_json: AsJson = False) -> None:
     """Say how small a mean reaction the study's deals can find, and how many deals others need."""
     from pipeline.screen import Screen
@@ -203,6 +237,28 @@ def _load(path: Path, window: str) -> Study:
 def _folder(name: str, window: str) -> str:
     """The study's own folder; a window of the command line gets one beside it."""
     return f"{name}_{window.replace(':', '_').replace('-', 'm')}" if window else name
+
+
+def _answer(text: str) -> tuple[str, Any]:
+    """``key=value``, the value as TOML, or as the words they are."""
+    import tomllib
+
+    from pipeline.core.findings import problem
+
+    key, mark, value = (part.strip() for part in text.partition("="))
+    if not mark or not key or not value:
+        raise problem(
+            "bad_value",
+            "command line",
+            column="--answer",
+            got=f"'{text}'",
+            expected="a key of the study file and its value: inputs.timestamp_zone=Europe/London",
+            remedy="Write the key, an equals sign and the value, without spaces.",
+        )
+    try:
+        return key, tomllib.loads(f"value = {value}")["value"]
+    except tomllib.TOMLDecodeError:
+        return key, value
 
 
 def _span(text: str) -> list[int]:

@@ -91,13 +91,13 @@ class Screen:
             content = {
                 "rows_read": ledger.rows_in,
                 "rows_kept": ledger.rows_kept,
-                "findings": [_as_dict(finding) for finding in findings],
+                "findings": [finding_dict(finding) for finding in findings],
             }
             print(json.dumps(content, ensure_ascii=False))
             return
         console = Console(highlight=False, markup=False)
         for finding in findings:
-            _show(console, finding)
+            show_finding(console, finding)
         _ledger_totals(console, ledger)
 
     def deal(
@@ -216,14 +216,14 @@ class Screen:
     def problem(self, fault: InputProblem) -> None:
         """Every finding on one screen."""
         if self.as_json:
-            print(json.dumps({"findings": [_as_dict(f) for f in fault.findings]}))
+            print(json.dumps({"findings": [finding_dict(f) for f in fault.findings]}))
             return
         console = Console(stderr=True, highlight=False, markup=False)
         count = len(fault.findings)
         noun = "problem" if count == 1 else "problems"
         console.print(f"{count} {noun} in the input; nothing was written.\n")
         for finding in fault.findings:
-            _show(console, finding)
+            show_finding(console, finding)
 
 
 def start_with(written: Sequence[str]) -> str:
@@ -320,12 +320,14 @@ def _bp(value: float) -> str:
     return f"{value * 1e4:,.0f}".replace("-", "−") if value == value else ""
 
 
-def _as_dict(finding: Finding) -> dict[str, str]:
+def finding_dict(finding: Finding) -> dict[str, str]:
+    """A finding for machines."""
     names = ("rule", "severity", "file", "row", "column", "got", "expected", "remedy")
     return {name: str(getattr(finding, name)) for name in names}
 
 
-def _show(console: Console, finding: Finding) -> None:
+def show_finding(console: Console, finding: Finding) -> None:
+    """A finding for a person: where, found, expected, do."""
     console.print(f"{rule_title(finding.rule)} [{finding.rule}]")
     lines = (
         ("where", finding.where),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass, field
 from datetime import UTC, date, datetime, time
 from functools import lru_cache
@@ -28,6 +29,7 @@ CALENDARS = {
 # Exchanges whose two calendars each miss closures that the other knows: one lacks the half days
 # and three typhoons, the other two storms. A day counts if both have it, to the earlier close.
 HELD_AGAINST = {"XHKG": "XHKG"}
+MIC = re.compile(r"X[A-Z0-9]{3}|AIXK|BVMF|IEPA")
 
 
 def _none() -> Dates:
@@ -53,6 +55,14 @@ class Sessions:
     closes: Dates
     zone: str
     unplanned: Dates = field(default_factory=_none)
+
+
+def known_exchanges() -> frozenset[str]:
+    """The ISO 10383 codes for which a calendar is known."""
+    import pandas_market_calendars as calendars
+
+    names = calendars.get_calendar_names()
+    return frozenset(CALENDARS) | {name for name in names if MIC.fullmatch(name)}
 
 
 @dataclass(frozen=True, slots=True)

@@ -13,6 +13,13 @@ RULES = (
         "Correct the path; paths count from the folder of the study file.",
     ),
     Rule(
+        "missing_table",
+        "Table that the folder lacks",
+        "None of the tables in the folder can be the one that a study needs.",
+        "A reaction cannot be measured without it.",
+        "Add the table, laid out as the finding says; its columns may have any names.",
+    ),
+    Rule(
         "unreadable_file",
         "File cannot be read",
         "The file exists, and is not a table or a picture of the kind its name says.",

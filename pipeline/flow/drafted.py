@@ -1,0 +1,63 @@
+"""A study file drafted from a folder, and what a check of it says."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from pathlib import Path
+
+from pipeline.core.clock import Progress
+from pipeline.core.findings import Finding, InputProblem, problem
+from pipeline.draft.make import Draft, draft
+from pipeline.flow.commands import check
+from pipeline.study.load import load_study
+
+
+@dataclass(frozen=True, slots=True)
+class Drafted:
+    """A written draft.
+
+    Attributes:
+        draft: what it holds, asks and lacks.
+        place: the study file.
+        checked: whether a check of it passes.
+        findings: what the check says, or what is missing.
+        kept: rows read and rows left for the last stage, where it passes.
+    """
+
+    draft: Draft
+    place: Path
+    checked: bool
+    findings: tuple[Finding, ...]
+    kept: tuple[int, int] = (0, 0)
+
+
+def drafted(
+    folder: Path, place: Path, answers: Mapping[str, object], progress: Progress = lambda _: None
+) -> Drafted:
+    """Draft a study, write it and check it.
+
+    Raises:
+        InputProblem: ``output_folder`` if there is a file at ``place`` already, ``missing_file``
+            if the folder holds no table.
+    """
+    if place.exists():
+        raise problem(
+            "output_folder",
+            place.name,
+            got=f"a file at {place}",
+            expected="a new file, so that nothing you wrote is lost",
+            remedy="Name another one with --out, or move the old one away.",
+        )
+    made = draft(folder, place, answers)
+    if not any(line.path == "inputs.deals" for line in made.lines):
+        raise InputProblem(made.missing)
+    place.parent.mkdir(parents=True, exist_ok=True)
+    place.write_text(made.text, encoding="utf-8", newline="\n")
+    if made.missing:
+        return Drafted(made, place, False, made.missing)
+    try:
+        ledger, findings = check(load_study(place), progress)
+    except InputProblem as fault:
+        return Drafted(made, place, False, fault.findings)
+    return Drafted(made, place, True, findings, (ledger.rows_in, ledger.rows_kept))
