@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 
+from pipeline.draft.beside import series_of, value_of
 from pipeline.draft.likeness import likeness
 from pipeline.draft.matching import Match, match
 from pipeline.draft.roles import GIVEN_AS_RETURNS, KINDS, Role, small
@@ -204,20 +205,18 @@ def why_not(found: Found, options: Sequence[Recognised], taken: Mapping[str, Rec
         if item.kind in taken:
             other = taken[item.kind].found.source.file
             return f"looks like {item.kind} as well, for which {other} fits better"
-    dates, numbers = found.of_kind("date"), found.of_kind("number")
-    series = [name for name in numbers if found.signs[name].varies]
-    if len(dates) == 1 and len(series) == len(found.signs) - 1 and found.one_row_a(dates[0]):
-        return _side_by_side(found, dates[0], series)
+    _, series = series_of(found)
+    if len(series) > 1:
+        return _side_by_side(found, series)
     return "fits no table of a study: see the tables in README.md"
 
 
-def _side_by_side(found: Found, date: str, series: Sequence[str]) -> str:
-    first = series[0]
-    signed = [found.signs[name] for name in series if found.signs[name].low < 0]
-    value = "return" if signed and all(small(signs) for signs in signed) else "close"
+def _side_by_side(found: Found, series: Sequence[str]) -> str:
+    first, value = series[0], value_of(found, series)
     return (
         f"one row a date and one column a series ({first} and {len(series) - 1} more); a study "
         f"reads one row a company and date with the columns security, date, {value} (prices), "
         f"one row an exchange and date with exchange, date, {value} (benchmarks), or exchange, "
-        "date and one column a factor (factors): lay it out so, or add the column that is missing"
+        "date and one column a factor (factors): lay it out so, add the column that is missing, or "
+        "head the columns with the codes that the deals use"
     )

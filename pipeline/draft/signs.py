@@ -25,6 +25,7 @@ CURRENCIES = (
     SMALL | LARGE | {"SEK", "NOK", "DKK", "PLN", "CZK", "NZD", "SGD", "HKD", "CNY", "ZAR", "BRL"}
     | {"MXN", "TRY", "ILS", "GBX", "GBP", "AED", "SAR", "MYR", "PHP", "RON", "BGN", "ARS"}
 )  # fmt: skip
+COMMA = "numbers with a decimal comma"
 COMMA_NUMBER = re.compile(r"[-+(]?(\d{1,3}([. \u00a0]\d{3})+|\d+),\d+\)?%?")
 DRESSED = re.compile(
     r"[-+(]?\s*[$€£¥]?\s*\d[\d,.' \u00a0]*\s*(%|bn|mn|m|k|million|billion|[$€£¥])?\s*\)?", re.I
@@ -133,7 +134,7 @@ def _text(base: Signs, words: pd.Series, present: pd.Series) -> Signs:
         if float(words.map(fits).mean()) >= NEARLY_ALL:
             return replace(base, code=code)
     if float(words.map(lambda word: bool(COMMA_NUMBER.fullmatch(word))).mean()) >= NEARLY_ALL:
-        return replace(base, trouble="numbers with a decimal comma")
+        return replace(base, trouble=COMMA)
     if float(words.map(lambda word: bool(DRESSED.fullmatch(word))).mean()) >= NEARLY_ALL:
         return replace(base, trouble="numbers with signs or words around them")
     return base

@@ -11,7 +11,7 @@ from pipeline.draft.kinds import Recognised, Sorted
 from pipeline.draft.lines import Line
 from pipeline.draft.matching import Match
 from pipeline.draft.roles import PROVES
-from pipeline.draft.signs import Signs
+from pipeline.draft.signs import COMMA, Signs
 
 DATE_KEY, ZONE_KEY = "inputs.date_format", "inputs.timestamp_zone"
 READ_DATES = ("announced_at", "date", "as_of", "rumoured_at", "completed_at", "withdrawn_at",
@@ -31,9 +31,10 @@ def source_lines(kinds: Sorted, base: Path) -> list[Line]:
         for kind, item in kinds.by_kind.items()
         if item.found.source.sheet
     ]
-    troubles = [line for item in kinds.by_kind.values() for line in _troubles(item)]
+    layouts = [line for kind, item in kinds.by_kind.items() for line in _layout(kind, item)]
+    troubles = [line for kind, item in kinds.by_kind.items() for line in _troubles(kind, item)]
     columns = [line for kind, item in kinds.by_kind.items() for line in _columns(kind, item)]
-    return [*paths, *troubles, *sheets, *columns]
+    return [*paths, *troubles, *sheets, *layouts, *columns]
 
 
 def _path_line(kind: str, item: Recognised, base: Path) -> Line:
@@ -42,6 +43,18 @@ def _path_line(kind: str, item: Recognised, base: Path) -> Line:
     if item.rival:
         reason += f" It might also be a table of {item.rival}."
     return Line("inputs", table_of(kind), path, reason, doubtful=bool(item.rival))
+
+
+def _layout(kind: str, item: Recognised) -> Iterator[Line]:
+    """Closes, levels or rates side by side, whose headings are the codes."""
+    source = item.found.source
+    if source.wide:
+        section = f"inputs.source.{table_of(kind)}"
+        reason = f"One column a {source.code}, headed with its code."
+        yield Line(section, "layout", "wide", reason)
+        if source.columns["date"] != "date":
+            section = f"inputs.columns.{table_of(kind)}"
+            yield Line(section, "date", source.columns["date"], "The one column of dates.")
 
 
 def _columns(kind: str, item: Recognised) -> Iterator[Line]:
@@ -58,17 +71,20 @@ def _columns(kind: str, item: Recognised) -> Iterator[Line]:
         )  # fmt: skip
 
 
-def _troubles(item: Recognised) -> Iterator[Line]:
-    """Columns that look like numbers and that no reader takes for numbers."""
+def _troubles(kind: str, item: Recognised) -> Iterator[Line]:
+    """Columns that look like numbers and that no reader takes for numbers as they stand."""
     for name, signs in item.found.signs.items():
-        if signs.trouble:
-            yield Line(
-                "inputs", "", None,
-                f"'{name}' of {item.found.source.file} holds {signs.trouble}, such as "
-                f"'{signs.levels[0] if signs.levels else item.found.frame[name].iloc[0]}'. No key "
-                "can settle that: write plain numbers with a decimal point if the study is to use "
-                "the column.",
-            )  # fmt: skip
+        if not signs.trouble:
+            continue
+        example = signs.levels[0] if signs.levels else item.found.frame[name].iloc[0]
+        told = f"'{name}' of {item.found.source.file} holds {signs.trouble}, such as '{example}'."
+        if signs.trouble == COMMA and item.found.source.kind == ".csv":
+            section = f"inputs.source.{table_of(kind)}"
+            told += " Is the comma the decimal mark?"
+            yield Line(section, "decimal", None, told, example='","')
+        else:
+            told += " No key settles that: write plain numbers with a decimal point to use it."
+            yield Line("inputs", "", None, told)
 
 
 def _evidence(found: Match, signs: Signs) -> str:

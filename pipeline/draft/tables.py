@@ -10,9 +10,10 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.draft.signs import Signs, signs_of
-from pipeline.inputs.files import KINDS, ROW, Source, read_table
+from pipeline.inputs.files import ROW, Source, read_table
 
 LONG = 100_000
+KINDS = (".csv", ".parquet", ".xlsx")
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -59,6 +59,8 @@ def touched(
     if candidates is not None and reach.candidate_before is not None:
         spans.append(_around(candidates, "as_of", reach.candidate_before, 0))
     found = pd.concat(spans, ignore_index=True)
+    if found.empty:  # no date could be read, which is said where it stands and not of the prices
+        return only(named)
     if lines is not None:
         found = pd.concat([found, _of_lines(found, lines)], ignore_index=True)
     return only(named, found)

@@ -173,6 +173,15 @@ def test_prices_as_returns_in_percent(folder: Path) -> None:
     assert value(found, "series.prices.unit") == "percent"
 
 
+def test_a_decimal_comma_is_asked_about(folder: Path) -> None:
+    def commas(table: pd.DataFrame) -> pd.DataFrame:
+        return table.assign(size=table["size"].str.replace(".", ","))
+
+    change(folder, "deals", commas)
+    (asked,) = [line for line in made(folder).questions if line.key == "decimal"]
+    assert (asked.path, asked.example) == ("inputs.source.deals.decimal", '","')
+
+
 def test_a_missing_column_is_named_with_its_layout(folder: Path) -> None:
     change(folder, "deals", lambda table: table.drop(columns="exchange"))
     (missing,) = made(folder).missing

@@ -111,18 +111,24 @@ def test_daily_closes_of_real_shares(real: Path, tmp_path: Path) -> None:
     assert len(pd.read_parquet(data / "deals.parquet")) > 20
 
 
-def test_closes_side_by_side_without_an_exchange_are_told_how_they_should_look(
-    real: Path, tmp_path: Path
-) -> None:
+def test_closes_side_by_side_headed_with_the_deals_codes(real: Path, tmp_path: Path) -> None:
     long = pd.read_csv(real / "prices.csv")
     wide = long.pivot(index="Trading day", columns="Ticker", values="Adj Close")
-    wide.tail(300).to_csv(tmp_path / "closes.csv")
+    wide.to_csv(tmp_path / "closes.csv")
     (tmp_path / "deals.csv").write_text((real / "deals.csv").read_text())
-    found = drafted(tmp_path, passes=False)
-    missing = {item["column"]: item for item in found["findings"]}
-    assert set(missing) == {"inputs.prices", "inputs.benchmarks"}
-    assert "one row a company and date" in missing["inputs.prices"]["remedy"]
-    assert "security (the company's code" in missing["inputs.prices"]["expected"]
+    zone = "inputs.timestamp_zone=America/New_York"
+    without = drafted(tmp_path, zone, passes=False)
+    (missing,) = without["findings"]
+    assert (missing["rule"], missing["column"]) == ("missing_table", "inputs.benchmarks")
+    assert "exchange (ISO 10383 code: XNYS, XLON)" in missing["expected"]
+    (tmp_path / "benchmarks.csv").write_text((real / "benchmarks.csv").read_text())
+    keys = drafted(tmp_path, zone)["by_key"]
+    assert keys["inputs.source.prices.layout"]["value"] == "wide"
+    assert keys["inputs.columns.prices.date"]["value"] == "trading_day"
+    # Without the deals' codes in the headings nothing says that the columns are prices.
+    wide.set_axis([f"C{at}" for at in range(wide.shape[1])], axis=1).to_csv(tmp_path / "closes.csv")
+    other = drafted(tmp_path, zone, passes=False)["findings"]
+    assert "one row a company and date" in other[0]["remedy"]
 
 
 def test_the_textbooks_single_event(tmp_path: Path) -> None:
