@@ -82,20 +82,31 @@ def run(
 
 
 @app.command()
-def check(study: StudyFile, as_json: AsJson = False) -> None:
-    """Read and check everything a study needs; estimate nothing, write nothing."""
+def check(
+    study: StudyFile,
+    rows: Annotated[
+        Path | None,
+        typer.Option(help="Workbook (.xlsx) of the rows to look at, for whoever keeps the tables."),
+    ] = None,
+    as_json: AsJson = False,
+) -> None:
+    """Read and check everything a study needs; estimate nothing."""
     from pipeline.screen import Screen
 
     screen = Screen(quiet=False, as_json=as_json)
 
     def work() -> None:
-        from pipeline.flow import check as check_stages
+        from pipeline.flow.checked import check_with_rows
 
         with screen.progress() as tell:
-            ledger, findings = check_stages(_load(study, ""), tell)
+            ledger, findings = check_with_rows(_load(study, ""), rows, tell)
         screen.checked(ledger, findings)
 
-    _guard(work, screen.problem)
+    try:
+        _guard(work, screen.problem)
+    finally:
+        if rows is not None and rows.is_file() and not as_json:
+            typer.echo(f"Rows to look at: {rows}", err=True)
 
 
 @app.command()

@@ -215,20 +215,11 @@ def _refuse_without_cluster(kept: pd.DataFrame, clusters: Sequence[str]) -> None
                     got=f"no {name} for {', '.join(deals[:SHOWN])}{more}",
                     expected="a group for every deal of the regression",
                     remedy="Fill the cells, delete those rows, or choose another cluster.",
-                    row=_rows_of(lost),
+                    rows=tuple(int(row) for row in lost.get("_row", ())),
                     column=name,
                 )
             )
     raise_errors(findings)
-
-
-def _rows_of(deals: pd.DataFrame) -> str:
-    """The rows of the deal list, as its reader counts them; '' where they are not known."""
-    if "_row" not in deals:
-        return ""
-    rows = [str(int(row)) for row in deals["_row"].iloc[:SHOWN]]
-    more = f" and {len(deals) - SHOWN} more" if len(deals) > SHOWN else ""
-    return ", ".join(rows) + more
 
 
 def _singletons(

@@ -9,6 +9,8 @@ from enum import StrEnum
 
 import pandas as pd
 
+SHOWN = 5
+
 _ROWS = re.compile(r"(?<!and )\b(\d+)(?:-(\d+))?")
 """Rows and runs of rows in words such as ``12, 14-16 and 20 more``."""
 
@@ -27,6 +29,7 @@ class Finding:
 
     ``rule`` is an entry of :mod:`pipeline.core.rules`; ``where`` parts are as the person sees
     them (file name, row number of her sheet counted from its header as row 1, column or key).
+    ``rows`` are all of the row numbers, from which ``row`` names the first few.
     """
 
     rule: str
@@ -37,6 +40,11 @@ class Finding:
     remedy: str
     row: str = ""
     column: str = ""
+    rows: tuple[int, ...] = ()
+
+    def __post_init__(self) -> None:
+        if self.rows and not self.row:
+            object.__setattr__(self, "row", _first_few(self.rows))
 
     @property
     def where(self) -> str:
@@ -48,6 +56,12 @@ class Finding:
         if self.column:
             parts.append(f"column or key '{self.column}'")
         return ", ".join(part for part in parts if part)
+
+
+def _first_few(rows: tuple[int, ...]) -> str:
+    """The first few row numbers, and how many more there are."""
+    more = f" and {len(rows) - SHOWN:d} more" if len(rows) > SHOWN else ""
+    return ", ".join(map(str, rows[:SHOWN])) + more
 
 
 class InputProblem(Exception):

@@ -251,10 +251,9 @@ def _absent(table: pd.DataFrame, source: Source, column: Column) -> Finding:
     )
 
 
-def row_list(rows: pd.Series) -> str:
-    """The first few row numbers, and how many more there are."""
-    shown = ", ".join(str(int(row)) for row in rows[:EXAMPLES])
-    return shown + (f" and {len(rows) - EXAMPLES} more" if len(rows) > EXAMPLES else "")
+def row_numbers(rows: pd.Series) -> tuple[int, ...]:
+    """The numbers of rows as their reader counts them."""
+    return tuple(int(row) for row in rows)
 
 
 def _bad_cells(cells: pd.Series, rows: pd.Series, source: Source, column: Column) -> list[Finding]:
@@ -269,7 +268,7 @@ def _bad_cells(cells: pd.Series, rows: pd.Series, source: Source, column: Column
             got=examples,
             expected=EXPECTED[column.kind],
             remedy=comma_remedy(cells, source) or REMEDY[column.kind],
-            row=row_list(rows),
+            rows=row_numbers(rows),
             column=source.columns.get(column.name, column.name),
         )
     ]
@@ -288,7 +287,7 @@ def _lost_digits(raw: pd.Series, rows: pd.Series, source: Source, column: Column
             got=", ".join(f"'{cell}'" for cell in raw[lost][:EXAMPLES]),
             expected="codes with all their digits",
             remedy="Format the column as text before the codes are put in, and export it again.",
-            row=row_list(rows[lost]),
+            rows=row_numbers(rows[lost]),
             column=source.columns.get(column.name, column.name),
         )
     ]
@@ -323,7 +322,7 @@ def _error_cells(
             got=", ".join(f"'{cell}'" for cell in dict.fromkeys(cells)),
             expected="a value, or an empty cell",
             remedy="Correct the formulas, or empty the cells.",
-            row=row_list(rows),
+            rows=row_numbers(rows),
             column=source.columns.get(column.name, column.name),
         )
     ]
@@ -340,7 +339,7 @@ def _empty_cells(rows: pd.Series, source: Source, column: Column) -> list[Findin
             got=f"{len(rows)} empty cell" + ("s" if len(rows) > 1 else ""),
             expected="a value in every row",
             remedy="Fill the cells, or delete the rows.",
-            row=row_list(rows),
+            rows=row_numbers(rows),
             column=source.columns.get(column.name, column.name),
         )
     ]
@@ -359,7 +358,7 @@ def _out_of_range(
             got=", ".join(f"'{cell}'" for cell in cells[:EXAMPLES]),
             expected=f"dates from {EARLIEST:%Y-%m-%d} to {LATEST:%Y-%m-%d}",
             remedy="Correct the dates; such values are often fill values of a data base.",
-            row=row_list(rows),
+            rows=row_numbers(rows),
             column=source.columns.get(column.name, column.name),
         )
     ]

@@ -180,9 +180,8 @@ def _one_format(name: str, cells: list[Cell], file: str, column: str, expected: 
 def _finding(
     rule: str, cells: list[Cell], file: str, column: str, got: str, expected: str, remedy: str
 ) -> Finding:
-    rows = sorted(cell.row for cell in cells)
-    shown = ", ".join(map(str, rows[:5])) + (f" and {len(rows) - 5} more" if len(rows) > 5 else "")
-    return Finding(rule, Severity.ERROR, file, got, expected, remedy, row=shown, column=column)
+    rows = tuple(sorted(cell.row for cell in cells))
+    return Finding(rule, Severity.ERROR, file, got, expected, remedy, rows=rows, column=column)
 
 
 def _examples(cells: list[Cell]) -> str:

@@ -26,7 +26,16 @@ from pipeline.inputs.source import KINDS, ROW, Only, Source
 from pipeline.inputs.wide import columns_of_codes, laid_long, melted, recognised
 from pipeline.inputs.workbook import read_sheet, sheet_header
 
-__all__ = ["ROW", "Only", "Source", "read_plain", "read_table", "seen_layout"]
+__all__ = [
+    "ROW",
+    "Only",
+    "Source",
+    "loose_name",
+    "names_of",
+    "read_plain",
+    "read_table",
+    "seen_layout",
+]
 
 LONGEST_MESSAGE = 300
 REMEDY = {
@@ -87,7 +96,7 @@ def _refuse_path(source: Source) -> None:
             "missing_file",
             source.path.name,
             column=f"inputs.{source.table}",
-            got=f"no file at {source.at}",
+            got=f"no file at {source.at}" + _alike(source),
             expected="an existing file",
             remedy="Correct the path; it counts from the folder of the study file that names it.",
         )
@@ -101,13 +110,21 @@ def _refuse_path(source: Source) -> None:
         )
 
 
+def _alike(source: Source) -> str:
+    """A file that differs by capital letters alone, which some systems take for the same."""
+    folder, name = source.at.parent, source.at.name.casefold()
+    known = sorted(path.name for path in folder.iterdir()) if folder.is_dir() else []
+    near = [other for other in known if other.casefold() == name]
+    return f"; there is '{near[0]}', written otherwise" if near else ""
+
+
 def _raw(
     source: Source, wanted: Sequence[str] | None, only: Only | None, date_format: str
 ) -> pd.DataFrame:
     """The cells under the file's own names; what is wrong with a csv is said by row."""
     is_csv = source.kind == ".csv"
     try:
-        _refuse_repeats(source, _header(source))
+        _refuse_repeats(source, names_of(source))
         if source.kind == ".xlsx":
             raw = _sheet_cells(source, only)
         else:
@@ -140,7 +157,7 @@ def _ours(source: Source, names: list[str]) -> dict[str, str]:
     A column whose own name was declared to be another's is left out.
     """
     declared = _declared(source, names)
-    ours = {name: declared.get(name, _loose(name)) for name in names if name != ROW}
+    ours = {name: declared.get(name, loose_name(name)) for name in names if name != ROW}
     return {
         name: our for name, our in ours.items() if name in declared or our not in declared.values()
     }
@@ -150,7 +167,7 @@ def _declared(source: Source, names: list[str]) -> dict[str, str]:
     """File name -> our name for declared columns, case and spaces aside where that is unique."""
     found: dict[str, str] = {}
     for ours, theirs in source.columns.items():
-        alike = [name for name in names if name != ROW and _loose(name) == _loose(theirs)]
+        alike = [name for name in names if name != ROW and loose_name(name) == loose_name(theirs)]
         if theirs in names:
             found[theirs] = ours
         elif len(alike) == 1:
@@ -158,11 +175,13 @@ def _declared(source: Source, names: list[str]) -> dict[str, str]:
     return found
 
 
-def _loose(name: str) -> str:
+def loose_name(name: str) -> str:
+    """A column's name as it is compared: lower case, spaces as underscores."""
     return str(name).strip().lower().replace(" ", "_")
 
 
-def _header(source: Source) -> list[str]:
+def names_of(source: Source) -> list[str]:
+    """The names in the header, as they stand there."""
     return sheet_header(source) if source.kind == ".xlsx" else header_of(source)
 
 
@@ -171,7 +190,7 @@ def _refuse_repeats(source: Source, header: list[str]) -> None:
     declared = {theirs: ours for ours, theirs in source.columns.items()}
     alike: dict[str, list[str]] = {}
     for name in header:
-        ours = name if source.wide else declared.get(name, _loose(name))
+        ours = name if source.wide else declared.get(name, loose_name(name))
         alike.setdefault(ours, []).append(name)
     for ours, names in alike.items():
         chosen = [name for name in names if name == source.columns.get(ours)] or names
@@ -215,7 +234,7 @@ def read_plain(
         return None
     _refuse_path(source)
     try:
-        _refuse_repeats(source, _header(source))
+        _refuse_repeats(source, names_of(source))
         with _laid(source, only) as (relation, ours):
             return plain_rows(relation, ours, value, only, date_format)
     except UNREADABLE:
@@ -273,7 +292,7 @@ def seen_layout(source: Source, only: Only | None) -> tuple[Source, list[Finding
     if source.wide is not None or only is None or not source.at.is_file():
         return source, []
     try:
-        names = _header(source)
+        names = names_of(source)
     except (*UNREADABLE, InputProblem):
         return source, []  # what is wrong with it is said where it is read
     ours = _ours(source, names)

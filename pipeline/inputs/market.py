@@ -6,7 +6,7 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import RISK_FREE
-from pipeline.inputs.contracts import Column, row_list
+from pipeline.inputs.contracts import Column, row_numbers
 from pipeline.inputs.files import ROW, Only, Source, read_plain, read_table, seen_layout
 from pipeline.inputs.quoted import Quoted, QuotedFiles, as_simple, return_findings
 from pipeline.inputs.typed import one_row_a_date, theirs, typed
@@ -114,7 +114,7 @@ def _within_the_day(rows: pd.DataFrame, source: Source, several: bool) -> Findin
         remedy="Export closing prices."
         if several
         else "The time is left off; check that the date is the exchange's own.",
-        row=row_list(rows[ROW]),
+        rows=row_numbers(rows[ROW]),
         column=theirs(source, ("date",)),
     )
 
@@ -156,7 +156,7 @@ def _nonpositive(rows: pd.DataFrame, source: Source, severity: Severity, codes: 
         expected="prices above zero",
         remedy="Leave the cell empty when there was no price; if the column holds returns, set "
         f"series.{source.table}.given = 'returns'.",
-        row=row_list(rows[ROW]),
+        rows=row_numbers(rows[ROW]),
         column=source.columns.get("close", "close"),
     )
 

@@ -17,7 +17,7 @@ from pipeline.inputs.contracts import (
     FILL_VALUES,
     date_part,
     is_missing,
-    row_list,
+    row_numbers,
 )
 from pipeline.inputs.date_formats import Cell, date_findings, serial_day, serial_doubt
 from pipeline.inputs.files import ROW, Source
@@ -187,6 +187,6 @@ def _finding(
         got=got,
         expected=refusal.expected,
         remedy=refusal.remedy,
-        row=row_list(pd.Series([row for _, _, row in cells])),
+        rows=row_numbers(pd.Series([row for _, _, row in cells])),
         column=column,
     )

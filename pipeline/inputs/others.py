@@ -5,7 +5,7 @@ from __future__ import annotations
 import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import Column, row_list
+from pipeline.inputs.contracts import Column, row_numbers
 from pipeline.inputs.files import ROW, Source, read_table
 from pipeline.inputs.typed import finding, typed
 
@@ -90,6 +90,6 @@ def restricted_findings(deals: pd.DataFrame, source: Source, listed: Source) -> 
         got=f"{int(touched.sum())} deals of companies on the restricted list",
         expected="no company of the restricted list",
         remedy="Stop and ask compliance: whether this study may be made is theirs to decide.",
-        row=row_list(deals.loc[touched, ROW]),
+        rows=row_numbers(deals.loc[touched, ROW]),
     )
     return [*findings, stop]

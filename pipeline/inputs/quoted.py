@@ -10,7 +10,7 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import Floats
-from pipeline.inputs.contracts import row_list
+from pipeline.inputs.contracts import row_numbers
 from pipeline.inputs.files import ROW, Source
 
 # Standard deviations of daily returns between which no market lies outside: common practice, no
@@ -112,6 +112,6 @@ def _impossible(
         got=f"{int(bad.sum())} returns below -100%, first {values[bad][0]:g}",
         expected="simple returns, of which none loses more than everything",
         remedy=f"Correct the cells, or set series.{source.table}.returns = 'log'.",
-        row=row_list(table.loc[bad, ROW]),
+        rows=row_numbers(table.loc[bad, ROW]),
         column=source.columns.get(name, name),
     )

@@ -13,7 +13,7 @@ from pipeline.core.findings import Finding, InputProblem, Severity, raise_errors
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
 from pipeline.core.outcome import Unit
 from pipeline.inputs.candidates import read_candidates
-from pipeline.inputs.contracts import Column, row_list
+from pipeline.inputs.contracts import Column, row_numbers
 from pipeline.inputs.deals import (
     MONEY,
     NO_RULES,
@@ -214,7 +214,7 @@ def _errors_checked(deals: pd.DataFrame, source: Source, outcome: OutcomeColumns
                     expected="a standard error of zero or above wherever there is an outcome",
                     remedy="Fill the cells, empty the outcome of these deals, or take "
                     "outcome.standard_error out of the study.",
-                    row=row_list(deals.loc[wrong, ROW]),
+                    rows=row_numbers(deals.loc[wrong, ROW]),
                     column=column,
                 )
             )

@@ -5,7 +5,13 @@ from __future__ import annotations
 import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, Severity
-from pipeline.inputs.contracts import Column, apply_contract, row_list, unknown_names, unknown_units
+from pipeline.inputs.contracts import (
+    Column,
+    apply_contract,
+    row_numbers,
+    unknown_names,
+    unknown_units,
+)
 from pipeline.inputs.numerals import scaled
 from pipeline.inputs.source import ROW, Source
 
@@ -54,8 +60,8 @@ def finding(
     severity: Severity = Severity.ERROR,
 ) -> Finding:
     """A finding on ``rows``; ``words`` are what was found, what was expected, and what to do."""
-    row, column = row_list(rows[ROW]), theirs(source, columns)
-    return Finding(rule, severity, source.file, *words, row=row, column=column)
+    numbers, column = row_numbers(rows[ROW]), theirs(source, columns)
+    return Finding(rule, severity, source.file, *words, rows=numbers, column=column)
 
 
 def repeats(rows: pd.DataFrame, source: Source, key: tuple[str, ...], words: str) -> list[Finding]:

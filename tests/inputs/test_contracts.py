@@ -11,7 +11,7 @@ import pandas as pd
 import pytest
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.inputs.contracts import Column, apply_contract, read_dates, row_list
+from pipeline.inputs.contracts import Column, apply_contract, read_dates, row_numbers
 from pipeline.inputs.files import ROW, Source
 
 SOURCE = Source("deals", Path("deals.xlsx"), {"size": "Size (m)"})
@@ -204,4 +204,5 @@ def test_many_bad_rows_are_counted_not_listed() -> None:
     finding = one(findings)
     assert finding.row == "2, 3, 4, 5, 6 and 3 more"
     assert finding.got == ", ".join(["'x'"] * 5)
-    assert row_list(pd.Series([3])) == "3"
+    assert finding.rows == tuple(range(2, 10))
+    assert row_numbers(pd.Series([3.0])) == (3,)
