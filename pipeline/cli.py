@@ -228,11 +228,12 @@ def explain(
     rule: Annotated[
         str, typer.Argument(help="A rule's key as shown in brackets; empty: all.")
     ] = "",
+    as_json: AsJson = False,
 ) -> None:
-    """Say what a rule of the ledger or of the findings means and what to do."""
+    """Say what a rule means, why it matters, with an example, and what to do."""
     from pipeline.screen import explain_rule
 
-    if not explain_rule(rule):
+    if not explain_rule(rule, as_json):
         raise typer.Exit(BAD_INPUT)
 
 

@@ -9,6 +9,7 @@ import sys
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import asdict, dataclass, replace
+from difflib import get_close_matches
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -353,22 +354,29 @@ def _ledger_totals(console: Console, ledger: Ledger) -> None:
     console.print(table)
 
 
-def explain_rule(key: str) -> bool:
-    """Print a rule, or all keys if ``key`` is empty; False if there is no such rule."""
+def explain_rule(key: str, as_json: bool = False) -> bool:
+    """Print a rule's page, or all keys if ``key`` is empty; False if there is no such rule."""
     console = Console(highlight=False, markup=False)
+    if as_json:
+        known = [rule for rule in RULES.values() if key in ("", rule.key)]
+        print(json.dumps([asdict(rule) for rule in known], ensure_ascii=False))
+        return bool(known)
     if not key:
         for rule in RULES.values():
             console.print(f"{rule.key:<26}{rule.title}")
         return True
-    rule_found: Rule | None = RULES.get(key)
-    if rule_found is None:
-        console.print(f"No rule '{key}'. dealwake explain lists all of them.")
+    page: Rule | None = RULES.get(key)
+    if page is None:
+        near = ", ".join(get_close_matches(key, RULES, 3, 0.5))
+        nearest = f" Did you mean {near}?" if near else ""
+        console.print(f"No rule '{key}'.{nearest} dealwake explain lists all of them.")
         return False
+    console.print(f"{page.title} [{page.key}]")
     for label, text in (
-        ("", rule_found.title),
-        ("What it does", rule_found.what),
-        ("Why it matters", rule_found.why),
-        ("What to do", rule_found.remedy),
+        ("What it means", page.meaning),
+        ("Why it matters", page.why),
+        ("For example", page.example),
+        ("What to do", page.remedy),
     ):
-        console.print(f"{label}\n  {text}" if label else text)
+        console.print(f"{label}\n  {text}", soft_wrap=True)
     return True

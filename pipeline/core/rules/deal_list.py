@@ -10,6 +10,7 @@ RULES = (
         "Several listings and no primary one",
         "A company has several listings, and nothing says which one counts.",
         "Each has its own sessions, currency and benchmark.",
+        "C001 in New York and London, neither marked primary nor home.",
         "Mark one as primary, or its home market, in the table of listings.",
     ),
     Rule(
@@ -17,6 +18,7 @@ RULES = (
         "Listings that contradict one another",
         "A line stands there twice, or a company has two primary or two home lines.",
         "Only one of them can be measured.",
+        "C001 with two lines marked primary.",
         "Correct the table of listings.",
     ),
     Rule(
@@ -25,6 +27,7 @@ RULES = (
         "The deal list has a column side, and the study does not name one of its sides; or it "
         "has none, and two companies are each other's counterparty within a year.",
         "Acquirers and targets hear the same news; they are never pooled in one mean.",
+        "Rows of 'acquirer' and 'target' and no event_time.side.",
         "Set event_time.side, and make one study a side; add the column if there is none.",
     ),
     Rule(
@@ -32,6 +35,7 @@ RULES = (
         "Rumour later than the announcement",
         "A rumour is dated after the announcement.",
         "A rumour of what is public is none; one of the dates is wrong.",
+        "Rumoured 2024-03-11, announced 2024-03-08.",
         "Correct the dates, or empty the rumour's cell.",
     ),
     Rule(
@@ -39,6 +43,7 @@ RULES = (
         "Announcement after the deal had gone on",
         "A deal was amended, completed or withdrawn before its announcement.",
         "One of the dates is wrong, and with it perhaps day zero.",
+        "Announced 2024-06-01, completed 2024-05-15.",
         "Correct the dates.",
     ),
     Rule(
@@ -46,6 +51,7 @@ RULES = (
         "Values dated after the announcement",
         "The values of a company or deal were known only after the announcement.",
         "They may hold the market's answer, which they are meant to explain.",
+        "Balance sheet of 2024-03-31 for a deal announced on 2024-03-08.",
         "Take the values of the last report before the announcement.",
     ),
     Rule(
@@ -53,6 +59,7 @@ RULES = (
         "List of completed deals alone",
         "All deals of the list were completed.",
         "Nobody knew at the announcement which would be; the sample looks into the future.",
+        "All 120 deals have the status 'completed'.",
         "Add the deals that were withdrawn or are pending.",
     ),
     Rule(
@@ -60,6 +67,7 @@ RULES = (
         "Company on both sides of its deal",
         "Buyer and counterparty are the same code.",
         "One of them is wrong, or it is no deal between two companies.",
+        "C001 buys C001.",
         "Correct the code.",
     ),
     Rule(
@@ -67,6 +75,7 @@ RULES = (
         "One code for two companies",
         "A security's code stands with two ISINs.",
         "A code given on to another company would join the prices of the two.",
+        "Code ABC with two ISINs, of a company that left and of one that took the code over.",
         "Give each company a code of its own in deals and prices.",
     ),
     Rule(
@@ -74,6 +83,7 @@ RULES = (
         "Identifier whose check digit does not fit",
         "The last sign of an ISIN, CUSIP or SEDOL does not follow from the others.",
         "The code belongs to no security, or to another one.",
+        "GBLWN9LHY5J1, where the first eleven signs give a last digit of 0.",
         "Correct the code; a spreadsheet may have cut leading zeros.",
     ),
     Rule(
@@ -81,6 +91,7 @@ RULES = (
         "Amount of zero or below",
         "A deal value or market value is zero or negative.",
         "No size can be made of it.",
+        "-120 in deal_value, or 0 for an amount that was not disclosed.",
         "Leave the cell empty if the amount was not disclosed.",
     ),
     Rule(
@@ -88,6 +99,7 @@ RULES = (
         "Amounts in two units",
         "Deal values are a hundred times the market value and more, or less than a millionth.",
         "One column in units and one in millions make every size wrong.",
+        "Deal values in units (762,045,000) beside market values in millions (5,589).",
         "Bring both columns to one unit.",
     ),
     Rule(
@@ -95,6 +107,7 @@ RULES = (
         "Share in the other unit",
         "The cells of a column of shares have the size of the other unit.",
         "A share of 30 where 0.3 is meant is off by a hundred.",
+        "paid_in_cash = 60 in a column declared to hold fractions.",
         "Correct the cells, or the list under [deal_list].",
     ),
     Rule(
@@ -102,6 +115,7 @@ RULES = (
         "Payment shares that do not add up",
         "The shares of payment add up to more or less than the whole.",
         "One of them is wrong or missing.",
+        "60% in cash and 60% in shares.",
         "Correct the shares.",
     ),
     Rule(
@@ -109,6 +123,7 @@ RULES = (
         "Word that the column may not hold",
         "A cell holds a word that is not among those declared for its column.",
         "It would make a group of its own, or none.",
+        "'stok' in payment, where cash, stock and mixed are declared.",
         "Correct the cell, or declare the word.",
     ),
     Rule(
@@ -116,6 +131,7 @@ RULES = (
         "Company on the restricted list",
         "A deal of the study touches a company on the house's restricted list.",
         "Whether such a study may be made, kept or shown is not the analyst's to decide.",
+        "A deal whose target is on the house's restricted list.",
         "Stop and ask compliance.",
     ),
 )

@@ -10,6 +10,7 @@ RULES = (
         "Exact duplicate row",
         "The row repeats an earlier one in every column.",
         "Counting a deal twice makes the mean look more certain than it is.",
+        "Row 42 repeats row 18 in every cell.",
         "None needed: the first row is kept.",
     ),
     Rule(
@@ -17,6 +18,7 @@ RULES = (
         "No outcome for the deal",
         "The column named in [outcome] is empty for the deal.",
         "A deal without an outcome cannot be explained.",
+        "D017 has no bid_premium.",
         "Fill the cell if the value is known.",
     ),
     Rule(
@@ -24,6 +26,7 @@ RULES = (
         "Jump that looks like an unadjusted split",
         "A close moved by a whole factor in one session and the benchmark did not.",
         "A split read as a return would swamp every other number.",
+        "Closes of 90.2 and 45.0 on two sessions, and the index moved by 0.3%.",
         "Adjust the prices for splits; the deals it touches are dropped until then.",
     ),
     Rule(
@@ -31,6 +34,7 @@ RULES = (
         "No prices for the security",
         "The price file does not hold the deal's security.",
         "No return can be measured.",
+        "The deal names 'C-001' and the price file 'C001'.",
         "Add the security's prices, or correct its code.",
     ),
     Rule(
@@ -38,6 +42,7 @@ RULES = (
         "Announcement outside the price history",
         "The windows of the deal reach outside the price file.",
         "No return can be measured there.",
+        "A deal of February 2015 and prices from January 2015 on.",
         "Extend the price file, or shorten the windows.",
     ),
     Rule(
@@ -45,6 +50,7 @@ RULES = (
         "Too few returns before the deal",
         "Fewer returns than the study's minimum lie in the estimation window.",
         "The normal return would be a guess.",
+        "97 returns in the estimation window, and minimum_observations = 120.",
         "Extend the price history, or lower minimum_observations with a reason.",
     ),
     Rule(
@@ -52,6 +58,7 @@ RULES = (
         "Gaps in the estimation window",
         "More than a twentieth of the estimation window's sessions have no return.",
         "The share was not traded, or the price file has a hole.",
+        "17 of 220 sessions without a return.",
         "Complete the prices if the share traded; the deal is kept.",
     ),
     Rule(
@@ -59,6 +66,7 @@ RULES = (
         "Too many unchanged prices before the deal",
         "More than half of the estimation window's returns are exactly zero.",
         "The share hardly traded: its returns do not show what the market thought.",
+        "62% of the returns before the deal are exactly zero.",
         "None, unless the prices are stale copies.",
     ),
     Rule(
@@ -66,6 +74,7 @@ RULES = (
         "No price in the headline window",
         "The share did not trade on a day of the headline window.",
         "A missing day is not a return of zero.",
+        "No price on session +1 of the window [-1, 1].",
         "Complete the prices, or declare a shorter headline window.",
     ),
     Rule(
@@ -73,6 +82,7 @@ RULES = (
         "Second deal of the company within the same window",
         "An earlier deal of the company has a headline window that shares sessions with this one.",
         "One price move cannot be given to two deals.",
+        "C001 announces D017 on Monday and D018 on Tuesday; window [-1, 1].",
         "None needed: the first deal is kept.",
     ),
     Rule(
@@ -80,6 +90,7 @@ RULES = (
         "Deals made into one event",
         "Several deals of the company have headline windows that meet; the study makes them one.",
         "One price move answers to all of them.",
+        'D017 and D018 of C001 on neighbouring days, with repeats = "merge".',
         "None needed: day zero is that of the first, the features are those of the largest.",
     ),
     Rule(
@@ -87,6 +98,7 @@ RULES = (
         "Deal that shares its window with another of the company",
         "Its headline window meets that of an earlier deal of the company; the study keeps both.",
         "The two share a price move, so they count for less than two deals.",
+        'D017 and D018 of C001 on neighbouring days, with repeats = "keep_all".',
         "None needed: errors are clustered by company in the regression.",
     ),
     Rule(
@@ -94,6 +106,7 @@ RULES = (
         "Row of the other side of the deal",
         "The row is about another side than the one the study names.",
         "Both sides of a deal hear the same news; pooled in one mean they would count twice.",
+        'A row of the target in a study with event_time.side = "acquirer".',
         "None needed; make a second study for the other side.",
     ),
     Rule(
@@ -101,6 +114,7 @@ RULES = (
         "Rumour before the announcement",
         "A rumour was public a session or more before the announcement.",
         "Part of the reaction came with the rumour.",
+        "A newspaper named the deal three sessions before the companies did.",
         "None needed: the report shows the mean under either date.",
     ),
     Rule(
@@ -108,6 +122,7 @@ RULES = (
         "Second offer between the same two companies",
         "The two companies have an earlier deal in the list, less than a year before.",
         "It is mostly the same deal on new terms, which the market half knew.",
+        "C001 offers for C090 in March and again, higher, in May.",
         "None needed: the deal is kept and flagged; delete the row if it is an amendment.",
     ),
     Rule(
@@ -115,6 +130,7 @@ RULES = (
         "One of several listings chosen",
         "The company is listed more than once, and the deal is measured on one listing.",
         "Each listing closes at its own hour and in its own market.",
+        "C001 trades in New York and London; its home is London.",
         "None needed; declare the primary listing in the table of listings to settle it.",
     ),
     Rule(
@@ -122,6 +138,7 @@ RULES = (
         "Day zero moved to the next session",
         "The announcement came after the close or on a day without trading.",
         "The first price that could react is that of the next session.",
+        "Announced on Friday at 18:00 in New York: day zero is Monday.",
         "None needed.",
     ),
     Rule(
@@ -129,6 +146,7 @@ RULES = (
         "Announcement with a date and no time",
         "Only the date is known, so day zero or the session after may hold the reaction.",
         "A window of day zero alone could miss it.",
+        "announced_at = 2024-03-08, without a clock time.",
         "Add the time of the announcement.",
     ),
     Rule(
@@ -136,6 +154,7 @@ RULES = (
         "Unknown times under a headline window that ends on day zero",
         "Some deals have a date and no time, and the headline window ends on day zero.",
         "News after the close moves the next session, so the window may miss the whole reaction.",
+        "headline = [0, 0] and four deals without a time.",
         "Set event_time.headline to end on the session after, as [0, 1] does, add the times of "
         "those announcements, or leave those deals out.",
     ),
@@ -144,6 +163,7 @@ RULES = (
         "Earnings release next to the announcement",
         "The company released earnings within the days stated of the announcement.",
         "The price move belongs to both pieces of news.",
+        "Quarterly earnings came out on the day of the announcement.",
         "None needed: the deal is kept and flagged; the sensitivity table leaves it out.",
     ),
     Rule(
@@ -151,6 +171,7 @@ RULES = (
         "Other news next to the announcement",
         "The company had other news within the sessions stated of the announcement.",
         "The price move belongs to both pieces of news.",
+        "A dividend was declared on the session before.",
         "Choose in event_time.confounding whether such deals are flagged, left out or parted.",
     ),
     Rule(
@@ -158,6 +179,7 @@ RULES = (
         "Prices end inside a window",
         "The security's prices end inside the windows after the announcement.",
         "Longer windows hold fewer days than they should.",
+        "The last price is on session +6 of the window [-10, 10].",
         "Add the delisting return if it is known.",
     ),
     Rule(
@@ -165,6 +187,7 @@ RULES = (
         "Too few peers",
         "Fewer companies than the study's minimum are left to make the deal's peer return.",
         "The return of one or two peers is their own news, not the industry's.",
+        "Three companies of the industry are left, and fewest_peers = 5.",
         "Widen the column of peers, add candidates, or lower expected_returns.fewest_peers.",
     ),
     Rule(
@@ -172,6 +195,7 @@ RULES = (
         "No company to compare with",
         "No company alike was free of deals and had prices over the window.",
         "The deal has no buy-and-hold comparison in that window; its other numbers stand.",
+        "No company of the industry without a deal of its own in 250 sessions.",
         "Add candidates of the year, or ask for fewer columns in matched_control.within.",
     ),
     Rule(
@@ -179,6 +203,7 @@ RULES = (
         "Control company replaced inside the window",
         "The prices of the control end inside the window.",
         "The next nearest company takes its place from that session on.",
+        "The nearest company was taken over on session 90 of 250.",
         "None needed.",
     ),
     Rule(
@@ -186,6 +211,7 @@ RULES = (
         "Another deal inside the estimation window",
         "Sessions around another deal of the company were left out of estimation.",
         "They would be read as normal returns.",
+        "D016 of the same company lies 80 sessions earlier: eleven sessions are left out.",
         "None needed.",
     ),
     Rule(
@@ -193,6 +219,7 @@ RULES = (
         "Daily return above one half",
         "A return of more than 50% in either direction lies in the deal's windows.",
         "Real jumps happen; so do errors of the price file.",
+        "+63% on 2024-03-08.",
         "Look at the dates named.",
     ),
     Rule(
@@ -200,6 +227,7 @@ RULES = (
         "Deal very large or very small beside its company",
         "The deal value is over ten times, or under a ten thousandth of, the market value.",
         "Such a ratio is rare, and often a slip in one of the two amounts.",
+        "A deal of 40 million by a company worth 2 million.",
         "Check both amounts; the deal is kept and flagged.",
     ),
     Rule(
@@ -207,6 +235,7 @@ RULES = (
         "Spelling of a word brought to one form",
         "The cell differed from the others by capitals or spaces alone.",
         "Two spellings would make two groups of one.",
+        "'CASH ' and 'cash' in payment became 'cash'.",
         "None needed; write the word one way in the file.",
     ),
     Rule(
@@ -214,6 +243,7 @@ RULES = (
         "Payment shares scaled to the whole",
         "The shares of payment added up to within a hundredth of the whole.",
         "Rounded shares would leave a remainder that no form of payment has.",
+        "60% and 40.5% became 59.7% and 40.3%.",
         "None needed.",
     ),
     Rule(
@@ -221,6 +251,7 @@ RULES = (
         "Few deals",
         "Fewer than ten deals are left in the tests.",
         "Tests that rest on many deals do not hold, and one deal can turn the mean.",
+        "Seven deals.",
         "Rest on the tests made for few deals, and say so.",
     ),
     Rule(
@@ -228,6 +259,7 @@ RULES = (
         "Deals on very few dates",
         "All deals were announced on one or two dates.",
         "They share the news of those dates, so they speak with one voice.",
+        "All twelve deals were announced on 2024-03-08.",
         "Rest on tests that allow for deals moving together.",
     ),
     Rule(
@@ -235,6 +267,7 @@ RULES = (
         "No deal left",
         "Every deal was dropped before the abnormal returns.",
         "There is nothing to test.",
+        "Every deal lies before the first price.",
         "Read the ledger from the top; the stage that drops most is the place to look.",
     ),
     Rule(
@@ -242,6 +275,7 @@ RULES = (
         "One security on two exchanges",
         "A security code stands with two exchange codes.",
         "Its sessions and its benchmark would be another market's.",
+        "C001 at XNYS in the deal list and at XLON among the candidates.",
         "Give each listing its own code, or correct the exchange.",
     ),
 )

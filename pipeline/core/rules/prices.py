@@ -10,6 +10,7 @@ RULES = (
         "Returns of another size than their unit",
         "Daily returns scatter too much or too little to be decimals of one day.",
         "Percentages read as decimals make every reaction a hundred times too large.",
+        "A standard deviation of 1.6 a day: the returns are in percent.",
         "Declare unit = 'percent' or 'decimal' for the file under [series].",
     ),
     Rule(
@@ -17,6 +18,7 @@ RULES = (
         "Return below -100%",
         "A simple return loses more than everything.",
         "It is a logarithmic return, or a wrong cell.",
+        "-1.3 as a simple return: more than everything was lost.",
         "Correct the cell, or declare the kind of the returns under [series].",
     ),
     Rule(
@@ -24,6 +26,7 @@ RULES = (
         "Simple and logarithmic returns mixed",
         "Securities and benchmark or factors have returns of different kinds.",
         "Their difference holds half the variance, which is no reaction.",
+        "Logarithmic returns of shares beside simple returns of factors.",
         "Give returns of one kind.",
     ),
     Rule(
@@ -31,6 +34,7 @@ RULES = (
         "Total loss among logarithmic returns",
         "A return of -100% has no logarithm.",
         "The deal that lost everything would be left out.",
+        "A return of -1 on the day a company failed, in a study of logarithmic returns.",
         "Use simple returns.",
     ),
     Rule(
@@ -38,6 +42,7 @@ RULES = (
         "Dividends in prices or in the benchmark alone",
         "One of the two holds dividends and the other does not.",
         "Abnormal returns are off by the dividends, in one direction.",
+        "Prices without dividends held against a total-return index.",
         "Take the benchmark, or the prices, on the other basis.",
     ),
     Rule(
@@ -45,6 +50,7 @@ RULES = (
         "Prices that move by a hundred",
         "A close moved by a factor of about 100 while the benchmark was calm.",
         "It is quoted in pence on some dates and in pounds on others.",
+        "A close of 1234 between closes of 12.1 and 12.4: pence among pounds.",
         "Convert the closes to one unit.",
     ),
     Rule(
@@ -52,6 +58,7 @@ RULES = (
         "Many prices that jump together",
         "On one session many closes jumped, and the benchmark did not.",
         "Closes adjusted at two dates do not fit where they meet.",
+        "On 2024-01-02 most closes jump by their own factor, and the index stays.",
         "Download the whole history at once; look at the date if the move is real.",
     ),
     Rule(
@@ -59,6 +66,7 @@ RULES = (
         "Prices that are not daily",
         "Most securities go many sessions from one price to the next.",
         "Weekly or monthly prices cannot place a reaction on its day.",
+        "2024-01-31, 2024-02-29, 2024-03-28: prices of months.",
         "Export daily prices.",
     ),
     Rule(
@@ -66,6 +74,7 @@ RULES = (
         "Times of day among daily prices",
         "The dates of the price file have times of day.",
         "With several rows a session, which of them is the close is a guess.",
+        "2024-03-08 10:00 and 2024-03-08 16:00 for one share.",
         "Export one closing price a session.",
     ),
     Rule(
@@ -73,6 +82,7 @@ RULES = (
         "One price for many sessions",
         "The close did not change for several sessions in a row before the deal.",
         "The price may be a copy of an old one.",
+        "34.51 on nine sessions in a row before the deal.",
         "Compare with another source; the deal is kept.",
     ),
     Rule(
@@ -80,6 +90,7 @@ RULES = (
         "Sessions without a trade",
         "Volume was zero on many sessions before the deal.",
         "Prices that nobody traded at are late with the news.",
+        "Volume 0 on 40% of the sessions before the deal.",
         "Consider trade-to-trade returns or a model for thin trading; the deal is kept.",
     ),
     Rule(
@@ -87,6 +98,7 @@ RULES = (
         "Not traded on day zero",
         "There was no price, or volume was zero and the price that of the session before.",
         "The first price that shows the news is that of the next trade.",
+        "Volume 0 on the day of the announcement, and trading two sessions later.",
         "None needed: day zero is the session of the next trade.",
     ),
     Rule(
@@ -94,6 +106,7 @@ RULES = (
         "Many deals without prices",
         "The price file lacks the securities of more deals than the study allows.",
         "Those that are left may be a choice of their own.",
+        "31 of 120 deals name companies that the price file does not have.",
         "Compare the codes of the two tables, or complete the prices.",
     ),
     Rule(
@@ -101,6 +114,7 @@ RULES = (
         "Too few returns for another model",
         "A model beside the headline's has fewer returns than the study's minimum.",
         "Its normal return would be a guess; factors often have a shorter history.",
+        "D017 has 130 returns for the market model and 90 for the factor model, which needs 120.",
         "Complete the factors; the deal is kept and has no return under that model.",
     ),
     Rule(
@@ -108,6 +122,7 @@ RULES = (
         "Returns over several sessions",
         "A price after a gap brings the return since the last one.",
         "It is matched with the benchmark over the same sessions.",
+        "The share last traded on Monday; Thursday's return is that of three sessions.",
         "None needed.",
     ),
     Rule(
@@ -115,6 +130,7 @@ RULES = (
         "Sessions without a price, taken as zero",
         "The return of a gap stands all on the session of the next price.",
         "Variance and beta come out too small.",
+        "No price on Tuesday and Wednesday: Thursday's return holds all three days.",
         "Compare with event_time.missing = 'drop'.",
     ),
     Rule(
@@ -122,6 +138,7 @@ RULES = (
         "Gaps taken as returns of zero",
         "The study asks for returns of zero on sessions without a price.",
         "Variance and beta come out too small, so effects look too certain.",
+        'event_time.missing = "lumped" with two sessions of D017 without a price.',
         "Use it for comparison alone.",
     ),
     Rule(
@@ -129,6 +146,7 @@ RULES = (
         "Delisting return added",
         "The security left its exchange inside the windows, and its delisting return counts.",
         "Without it the loss or gain of the last holders would be missing.",
+        "C044 left its exchange on session +8 with a return of -0.31.",
         "None needed.",
     ),
     Rule(
@@ -136,6 +154,7 @@ RULES = (
         "Prices after a delisting",
         "The price file goes on after the date of a delisting.",
         "The date is wrong, or the code belongs to another company by then.",
+        "C044 was delisted on 2024-02-01, and the file has a close of 2024-02-05.",
         "Correct the date or the code; the delisting return is not used.",
     ),
     Rule(
@@ -143,6 +162,7 @@ RULES = (
         "Currency of a price not known",
         "A security or a benchmark has no currency, or two.",
         "It cannot be converted.",
+        "Prices of C044 with USD on some rows and EUR on others.",
         "Fill the column currency, or declare the currency under [series].",
     ),
     Rule(
@@ -150,6 +170,7 @@ RULES = (
         "Exchange rate missing",
         "There is no rate for a session with prices, or for the money of a deal.",
         "Money without a rate cannot stand beside other money; a return without one is left out.",
+        "No rate of SEK on 2024-03-08, when a share in Stockholm has a price.",
         "Complete the table of rates.",
     ),
     Rule(
@@ -157,6 +178,7 @@ RULES = (
         "Exchange rate turned over",
         "A rate is what the common currency costs in the other one.",
         "Every conversion with it would be upside down.",
+        "0.0067 for JPY in USD on most rows and 149.3 on one.",
         "Give what one unit of the other currency costs in the common one.",
     ),
     Rule(
@@ -164,6 +186,7 @@ RULES = (
         "Money converted",
         "The deal's money was in another currency.",
         "Sizes compare only in one currency.",
+        "EUR 200 million became USD 217 million at 1.085.",
         "None needed: the rate is that of one session before the window.",
     ),
 )

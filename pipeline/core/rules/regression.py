@@ -10,6 +10,7 @@ RULES = (
         "A characteristic of the deal is missing",
         "A variable of the regression has no finite value for the deal.",
         "Columns of one table must stand on the same rows.",
+        "D017 has no leverage, which is a control.",
         "Fill the variable, or leave it out of the study.",
     ),
     Rule(
@@ -17,6 +18,7 @@ RULES = (
         "Deal without a candidate row",
         "The company and year of the deal are not in the table of candidates.",
         "The selection model needs every announcer among those that could have announced.",
+        "C001 announced in 2019, and the candidates have C001 from 2020 on.",
         "Add the company's row to the candidates.",
     ),
     Rule(
@@ -24,6 +26,7 @@ RULES = (
         "Second deal of the company in the year",
         "The company-year's row among the candidates stands for another deal.",
         "The decision to bid is modelled once a company and year.",
+        "C001 announced D017 and D018 in 2019; its candidate row names D017.",
         "None needed: the first deal of the year is kept in the regressions.",
     ),
     Rule(
@@ -31,6 +34,7 @@ RULES = (
         "Candidates in the selection equation",
         "How many company-years enter the selection equation.",
         "A selection model speaks of the candidates it was shown.",
+        "2,998 of 3,000 company-years.",
         "None needed.",
     ),
     Rule(
@@ -38,6 +42,7 @@ RULES = (
         "Treatment without variation",
         "The deal feature has one value, or fewer than five deals with one of its values.",
         "There is nothing to compare.",
+        "All 40 deals were paid in shares, or all but three.",
         "Widen the sample, or ask about another feature.",
     ),
     Rule(
@@ -45,6 +50,7 @@ RULES = (
         "Transform without a finite value",
         "A log, ratio or power has no finite value for the rows named.",
         "The log of zero is not a number to average over.",
+        "log = true on cash, which is 0 for D017.",
         "Correct the cells, or leave the transform out.",
     ),
     Rule(
@@ -52,6 +58,7 @@ RULES = (
         "Regressors that repeat one another",
         "A regressor is a combination of the others.",
         "Its coefficient has no value.",
+        'controls = ["debt", "equity", "assets"] with assets = debt + equity.',
         "Take one of them out.",
     ),
     Rule(
@@ -60,6 +67,7 @@ RULES = (
         "There are fewer instruments than variables they are to move, or they move these in one "
         "proportion only.",
         "The effect has no value.",
+        "Two variables in instruments.also_for and one instrument.",
         "Name at least one instrument for each variable.",
     ),
     Rule(
@@ -67,6 +75,7 @@ RULES = (
         "Several chosen variables where one is allowed",
         "The column instruments the feature alone, and the study asks for more.",
         "A chosen variable taken as given would bias the feature's effect without a word.",
+        'columns = ["fuller"] with instruments.also_for = ["cross_border"].',
         "Leave the column out, or instrument the feature alone.",
     ),
     Rule(
@@ -74,6 +83,7 @@ RULES = (
         "Perfect separation",
         "A variable predicts the decision without error.",
         "The probit has no finite coefficient for it.",
+        "No company with leverage above 0.8 ever announced.",
         "Take the variable out, or merge its levels.",
     ),
     Rule(
@@ -81,6 +91,7 @@ RULES = (
         "Fewer than two clusters",
         "A cluster dimension has a single value.",
         "Clustered errors need several clusters.",
+        'clusters = ["industry"], and all deals are in packaging.',
         "Choose another cluster variable.",
     ),
     Rule(
@@ -88,6 +99,7 @@ RULES = (
         "Too few deals for the regression",
         "There are fewer rows than coefficients, or barely more.",
         "Coefficients of so few rows mean nothing.",
+        "18 deals and six coefficients.",
         "Leave controls out, or widen the sample.",
     ),
     Rule(
@@ -95,6 +107,7 @@ RULES = (
         "Regressor absorbed by the fixed effects",
         "A regressor does not vary within the fixed effects.",
         "Its coefficient has no value beside them.",
+        "'market_of_listing' is the same for all deals of a fixed effect 'exchange'.",
         "Leave out the regressor, or the effect that swallows it.",
     ),
     Rule(
@@ -102,6 +115,7 @@ RULES = (
         "Fixed effects asked for and none named",
         "The column needs fixed effects, and the study names none.",
         "Without effects the column is least squares.",
+        'columns = ["fixed_effects"] and no regression.fixed_effects.',
         "Name effects in regression.fixed_effects, or take the column out.",
     ),
     Rule(
@@ -109,6 +123,7 @@ RULES = (
         "Clustered errors asked for and no cluster named",
         "The covariance needs clusters, and the study names none.",
         "The errors cannot be made.",
+        'fit.covariance = "cr2" and no regression.clusters.',
         "Name clusters in regression.clusters.",
     ),
     Rule(
@@ -116,6 +131,7 @@ RULES = (
         "Too many cluster dimensions",
         "More than two cluster dimensions are named.",
         "Errors are made for one or two dimensions.",
+        'clusters = ["security", "year", "industry"].',
         "Name at most two.",
     ),
     Rule(
@@ -123,6 +139,7 @@ RULES = (
         "Deal without a cluster",
         "A deal that is left for the regression has no value of a cluster dimension.",
         "It cannot be put with the deals it moves with; alone it would claim to move with none.",
+        'D017 has no industry, and clusters = ["industry"].',
         "Fill the column, delete the row, or choose another cluster.",
     ),
     Rule(
@@ -130,6 +147,7 @@ RULES = (
         "Coefficient that one cluster decides",
         "The deal feature varies in one cluster alone, once the other regressors are out.",
         "The residuals of that cluster cannot tell how far its shock moved the coefficient.",
+        "Only deals of 2019 differ in the feature once the year effects are out.",
         "Cluster by a finer dimension, or do not read the coefficient.",
     ),
     Rule(
@@ -137,6 +155,7 @@ RULES = (
         "Covariance that this column does not offer",
         "The covariance named does not exist for the estimator.",
         "Another one in its place would be mislabelled.",
+        'fit.covariance = "cr2" for a selection model.',
         "Choose one of those listed.",
     ),
     Rule(
@@ -144,6 +163,7 @@ RULES = (
         "Outcome without its measurement error",
         "The column weighs deals by how precisely the outcome is measured; that is not known.",
         "Weights made up in its place would be no better than equal ones.",
+        'columns = ["variance_weighted"] beside [outcome] without standard_error.',
         "Use a return measured from prices, name outcome.standard_error, or take the column out.",
     ),
     Rule(
@@ -151,6 +171,7 @@ RULES = (
         "Deal that its own regressor fits exactly",
         "A row has leverage one: a regressor is there for it alone.",
         "Its residual is zero, and the robust error has no value.",
+        "A control that is 1 for D017 alone.",
         "Leave out the regressor, or the deal named.",
     ),
     Rule(
@@ -158,6 +179,7 @@ RULES = (
         "Instrument that repeats the controls",
         "An instrument is a combination of the controls, or does not vary within the effects.",
         "It moves nothing that the controls do not.",
+        "An instrument that is the sum of two controls.",
         "Take it out.",
     ),
     Rule(
@@ -165,6 +187,7 @@ RULES = (
         "Instrument equal to the treatment",
         "An instrument is the treatment itself, or nearly.",
         "It carries the same reasons for the choice.",
+        'use = ["share_payment"], a copy of paid_in_shares.',
         "Take it out.",
     ),
     Rule(
@@ -172,6 +195,7 @@ RULES = (
         "Too many instruments",
         "There are more instruments than the rows can carry.",
         "The estimate leans to least squares.",
+        "40 instruments and 60 deals.",
         "Keep the instruments whose argument is strongest.",
     ),
     Rule(
@@ -179,6 +203,7 @@ RULES = (
         "Selection model without candidates",
         "The column needs the candidates, and there are none.",
         "Nothing says who could have announced.",
+        'columns = ["heckman_two_step"] without [selection].',
         "Name the candidates and [selection], or take the column out.",
     ),
     Rule(
@@ -186,6 +211,7 @@ RULES = (
         "Candidates and deals do not match",
         "The candidates that announced are not the deals of the regression.",
         "Each deal needs exactly one candidate.",
+        "120 candidates announced and 118 deals are in the regression.",
         "Check the deal identifiers of the candidates.",
     ),
     Rule(
@@ -193,6 +219,7 @@ RULES = (
         "Selection model without an excluded variable",
         "No variable moves the decision to bid alone.",
         "The model leans on the shape of the normal curve alone: it is shown and does not lead.",
+        "selection.excluded = [].",
         "Name a variable in selection.excluded, with its argument.",
     ),
     Rule(
@@ -200,6 +227,7 @@ RULES = (
         "Excluded variable that is not in the equation",
         "A variable is called excluded and does not explain the decision.",
         "An exclusion must move the decision to bid.",
+        'excluded = ["divisions"], which explained nothing.',
         "Add it to the selection equation.",
     ),
     Rule(
@@ -207,6 +235,7 @@ RULES = (
         "Every candidate decided alike",
         "All candidates announced, or none did.",
         "There is no decision to model.",
+        "Every candidate announced a deal.",
         "Complete the table of candidates.",
     ),
     Rule(
@@ -214,6 +243,7 @@ RULES = (
         "Deal alone in a fixed effect",
         "No other deal has the same value of a fixed effect.",
         "Its effect fits it exactly, so it says nothing and makes errors look too small.",
+        "D017 is the only deal of 2015, and year is a fixed effect.",
         "None needed: it leaves all columns, so that they stand on the same rows.",
     ),
     Rule(
@@ -221,6 +251,7 @@ RULES = (
         "Lag without a table of candidates",
         "A lagged variable needs the candidates, company by year.",
         "A deal list does not know the year before.",
+        "lag = 1 on leverage and no inputs.candidates.",
         "Name the candidates under [inputs] with a [selection], or leave the lag out.",
     ),
     Rule(
@@ -228,6 +259,7 @@ RULES = (
         "Treatment that is not yes or no",
         "The column compares deals with the feature to deals without, and it has other values.",
         "Cutting a measured feature in two here would hide where the cut was made.",
+        "The column holds 0, 0.3 and 1, the part of the price paid in shares.",
         "State the feature as 0 and 1, or use a column for a measured one.",
     ),
     Rule(
@@ -235,6 +267,7 @@ RULES = (
         "Treated deals without a counterpart",
         "No weights of the untreated deals reach the means of the treated ones.",
         "There is nobody to compare them with.",
+        "All deals in shares are larger than any deal in cash.",
         "Leave out the control, or the deals that have no counterpart.",
     ),
     Rule(
@@ -242,6 +275,7 @@ RULES = (
         "Treatment known for deals only",
         "The column needs the feature of every candidate, announced or not.",
         "It asks what the feature does to announcing.",
+        "A switching column, and candidates without the feature.",
         "Add it to the selection variables, or take the column out.",
     ),
     Rule(
@@ -249,6 +283,7 @@ RULES = (
         "Flag that is not yes or no",
         "The column that says which outcomes count has a value other than 0 and 1.",
         "A deal must either count or not.",
+        'bounds.observed = "status", which holds 0, 1 and 2.',
         "Fill the column with 0 and 1, or leave bounds.observed out.",
     ),
     Rule(
@@ -256,6 +291,7 @@ RULES = (
         "Matching without a control",
         "No control that varies says which deals are alike.",
         "Every deal is then as near as any other.",
+        'columns = ["matching"] and controls = [].',
         "Name controls, or use least squares.",
     ),
 )

@@ -7,10 +7,20 @@ from dataclasses import dataclass
 
 @dataclass(frozen=True, slots=True)
 class Rule:
-    """A rule's key, its title for tables, what it does, why it matters and what to do."""
+    """One page of the catalogue.
+
+    Attributes:
+        key: the name that findings and ledger entries carry.
+        title: for tables.
+        meaning: what is the case when it is raised.
+        why: why that matters.
+        example: a case of it, invented.
+        remedy: what to do.
+    """
 
     key: str
     title: str
-    what: str
+    meaning: str
     why: str
+    example: str
     remedy: str

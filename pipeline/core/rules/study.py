@@ -10,6 +10,7 @@ RULES = (
         "Unknown key in the study file",
         "The study file holds a key that no part of the run reads.",
         "A misspelt key would otherwise be ignored and the default used without a word.",
+        "minimum_observation = 120 under [event_time]; the key is minimum_observations.",
         "Correct the key to the nearest known one, or delete it.",
     ),
     Rule(
@@ -17,6 +18,7 @@ RULES = (
         "Value of the wrong kind in the study file",
         "A key of the study file holds a value outside what the key allows.",
         "A guess at what was meant could change the numbers.",
+        'headline = "three days"; write headline = [-1, 1].',
         "Write a value of the kind and range stated.",
     ),
     Rule(
@@ -24,6 +26,7 @@ RULES = (
         "Event window overlaps the estimation window",
         "A window of the study shares sessions with the estimation window.",
         "The normal return would be estimated from days the announcement moved.",
+        "Estimation [-150, -21] and headline [-25, 1] share sessions -25 to -21.",
         "End the estimation window earlier, or shorten the window named.",
     ),
     Rule(
@@ -31,6 +34,7 @@ RULES = (
         "Instrument listed as a control",
         "A variable is both an instrument and a regressor of the outcome.",
         "An instrument must move the outcome through the treatment alone.",
+        "'treasury_shares' stands in regression.controls and in instruments.use.",
         "Take it out of one of the two lists.",
     ),
     Rule(
@@ -38,6 +42,7 @@ RULES = (
         "Excluded variable listed as a control",
         "A variable excluded from the outcome stands among its controls.",
         "The exclusion is what identifies the selection model.",
+        "'divisions_for_sale' stands in regression.controls and in selection.excluded.",
         "Take it out of one of the two lists.",
     ),
     Rule(
@@ -45,6 +50,7 @@ RULES = (
         "Company variable missing from the selection equation",
         "A control known for every candidate is not in selection.explained_by.",
         "Leaving it out makes the correction absorb its effect.",
+        "The control 'cash' is known for every candidate and stands not in explained_by.",
         "Add it to selection.explained_by.",
     ),
     Rule(
@@ -52,6 +58,7 @@ RULES = (
         "Variable that nothing defines",
         "The study names a variable that is neither a column nor a characteristic.",
         "It cannot enter a regression.",
+        "controls = ['leverage', 'weight'], and no column or characteristic is called 'weight'.",
         "Correct its name, or define it under [characteristics].",
     ),
     Rule(
@@ -59,6 +66,7 @@ RULES = (
         "Returns asked of a study with an outcome of its own",
         "The study has an [outcome] table and also a key that belongs to returns from prices.",
         "Two outcomes cannot be explained at once, and a key that nothing reads would mislead.",
+        '[outcome] column = "bid_premium" beside inputs.prices = "prices.csv".',
         "Delete the key named, or delete [outcome] to have returns measured from prices.",
     ),
     Rule(
@@ -66,6 +74,7 @@ RULES = (
         "Folder that cannot take the run",
         "The folder to write to is a file, holds other things, or cannot be written.",
         "A run replaces its folder whole; it must never replace anything else.",
+        "--out points to a folder with a thesis in it.",
         "Name a new folder, or one that holds an earlier run.",
     ),
     Rule(
@@ -73,6 +82,7 @@ RULES = (
         "Folder without a finished run",
         "The folder holds no run that can be read back.",
         "Two runs can only be held side by side if both are whole.",
+        "dealwake contrast reports/demo reports/dmeo, where the second folder does not exist.",
         "Name the folder of a finished run, such as reports/demo.",
     ),
     Rule(
@@ -80,6 +90,7 @@ RULES = (
         "Runs that explain different outcomes",
         "The two runs explain different columns, or the same in units that do not compare.",
         "A difference between two different things has no meaning.",
+        "One run explains abnormal returns, the other a bid premium.",
         "Compare two runs of one outcome.",
     ),
     Rule(
@@ -87,6 +98,7 @@ RULES = (
         "Treatment that is not yes or no",
         "The treatment has other values than 0 and 1.",
         "Groups, instruments and words all speak of two values.",
+        "The column holds 0, 0.3 and 1, the part of the price paid in shares.",
         "Make an indicator under [characteristics], or set regression.continuous = true.",
     ),
     Rule(
@@ -94,6 +106,7 @@ RULES = (
         "Variable named twice",
         "A variable stands twice among the regressors.",
         "It would repeat itself.",
+        'controls = ["leverage", "cash", "leverage"].',
         "Name it once.",
     ),
 )

@@ -10,6 +10,7 @@ RULES = (
         "File not found",
         "A file named in the study does not exist at the place stated.",
         "Nothing can be measured without it.",
+        'prices = "Prices.csv", and the folder holds prices.csv.',
         "Correct the path; paths count from the folder of the study file.",
     ),
     Rule(
@@ -17,6 +18,7 @@ RULES = (
         "Table that the folder lacks",
         "None of the tables in the folder can be the one that a study needs.",
         "A reaction cannot be measured without it.",
+        "A folder with deals.xlsx and index.csv, and no table with one row a company and date.",
         "Add the table, laid out as the finding says; its columns may have any names.",
     ),
     Rule(
@@ -24,6 +26,7 @@ RULES = (
         "File cannot be read",
         "The file exists, and is not a table or a picture of the kind its name says.",
         "Reading on could lose rows without a trace.",
+        "Row 12 of a csv holds a name with a comma that is not in quotes.",
         "Save it again as csv (UTF-8), parquet or xlsx; a logo as PNG, JPEG or SVG.",
     ),
     Rule(
@@ -31,6 +34,7 @@ RULES = (
         "Cells parted by more than one mark",
         "The rows of a csv file fit a comma and a semicolon (or another pair) equally well.",
         "The wrong one would cut numbers with a decimal comma in two.",
+        "1,5;2,5 in every row: two cells with decimal commas, or three cells.",
         "Set delimiter under [inputs.source] for the table.",
     ),
     Rule(
@@ -38,6 +42,7 @@ RULES = (
         "Workbook that unpacks to too much",
         "A workbook would fill far more memory than its size or any sheet explains.",
         "Files are made that way to bring a machine down.",
+        "A workbook of 40 kB that unpacks to 3 GB.",
         "Ask who sent it; save a table that is really that large as csv or parquet.",
     ),
     Rule(
@@ -45,6 +50,7 @@ RULES = (
         "Data base not reached",
         "The connection to PostgreSQL was refused, or nothing says where it is.",
         "The table cannot be read.",
+        'deals = "postgresql" with PGHOST not set.',
         "Set PGHOST, PGUSER and the others, or the variable named in inputs.connection.",
     ),
     Rule(
@@ -52,6 +58,7 @@ RULES = (
         "Code that lost its digits",
         "A code is a number of more than fifteen digits, or is written as a power of ten.",
         "Spreadsheets round such numbers, and the digits that are gone cannot be told.",
+        "1.23E+11 in deal_id, where the file once held 123456789012.",
         "Export the codes again from a column formatted as text.",
     ),
     Rule(
@@ -59,6 +66,7 @@ RULES = (
         "Table with one column a security",
         "The table has no column security, and columns called as the study's securities are.",
         "Each such column is read as the prices of that security.",
+        "date, C001, C002, C003 as headings, and no column security.",
         "Set layout = 'wide' under [inputs.source] for the table.",
     ),
     Rule(
@@ -66,6 +74,7 @@ RULES = (
         "Column not found",
         "A table lacks a column the study needs.",
         "The quantity named in the study cannot be made without it.",
+        "The deal list calls the company's code 'Ticker', and the study does not say so.",
         "Add the column, or say under [inputs.columns] what yours is called.",
     ),
     Rule(
@@ -73,6 +82,7 @@ RULES = (
         "Two columns of one name",
         "Two columns of a table have the same name, but for case and spaces.",
         "Nothing tells which of them holds the right values.",
+        "'Deal value' and 'deal_value' in one table.",
         "Rename or delete one, or name yours under [inputs.columns].",
     ),
     Rule(
@@ -80,6 +90,7 @@ RULES = (
         "Formula that failed",
         "A cell holds a spreadsheet's error, such as #DIV/0!.",
         "Reading it as missing would drop the deal without a word.",
+        "#DIV/0! in leverage, where assets were empty.",
         "Correct the formula, or empty the cell.",
     ),
     Rule(
@@ -87,6 +98,7 @@ RULES = (
         "Table without rows",
         "A table holds a header and nothing else.",
         "There is nothing to measure.",
+        "benchmarks.csv with the heading exchange,date,close and nothing below.",
         "Export the table again with its rows.",
     ),
     Rule(
@@ -94,6 +106,7 @@ RULES = (
         "Date or time that cannot be read",
         "A cell that should hold a date holds something else.",
         "A date guessed wrong by a day moves the whole reaction out of the window.",
+        "'3rd of May' in announced_at; write 2024-05-03.",
         "Write dates as YYYY-MM-DD, times as YYYY-MM-DD HH:MM.",
     ),
     Rule(
@@ -101,6 +114,7 @@ RULES = (
         "Dates in several formats",
         "One column holds dates written in more than one way.",
         "The same figures mean different days in different formats.",
+        "2024-05-03 in row 2 and 03/05/2024 in row 9.",
         "Write the whole column in one format.",
     ),
     Rule(
@@ -108,6 +122,7 @@ RULES = (
         "Dates that read both ways",
         "Every date of the column may be read day first or month first.",
         "The wrong reading moves day zero by months, and no cell gives it away.",
+        "03/05/2024 and 04/06/2024: May and June, or March and April.",
         "Declare inputs.date_format.",
     ),
     Rule(
@@ -115,6 +130,7 @@ RULES = (
         "Days counted by a spreadsheet",
         "The cells hold numbers of days, which spreadsheets count from 1900 or from 1904.",
         "The two counts lie four years and a day apart.",
+        "45231 is 2023-11-01 counted from 1900, and 2027-11-02 counted from 1904.",
         "Declare inputs.date_format = 'excel' or 'excel 1904', or write the dates out.",
     ),
     Rule(
@@ -122,6 +138,7 @@ RULES = (
         "Year of two digits",
         "A date has a year of two digits.",
         "They do not tell the century, nor which figure is the year.",
+        "03/05/24.",
         "Write the year in full.",
     ),
     Rule(
@@ -129,6 +146,7 @@ RULES = (
         "Columns that speak of persons",
         "The names of columns speak of persons, such as phone or birth.",
         "Data about persons fall under laws of their own, and the study does not need them.",
+        "A column 'contact_phone' in the deal list.",
         "Delete the columns.",
     ),
     Rule(
@@ -136,6 +154,7 @@ RULES = (
         "Date outside any plausible range",
         "A date lies in the future, or before the price history could begin.",
         "Such dates are mostly fill values of a data base.",
+        "9999-12-31 in completed_at, or an announcement of next year.",
         "Correct the date, or delete the row.",
     ),
     Rule(
@@ -143,6 +162,7 @@ RULES = (
         "Number that cannot be read",
         "A cell that should hold a number holds something else.",
         "Reading it as missing would drop the deal without a word.",
+        "'1.2bn' in deal_value; write 1200 and say in report.currency that it is millions.",
         "Write plain numbers with a decimal point, and leave unknown cells empty.",
     ),
     Rule(
@@ -150,6 +170,7 @@ RULES = (
         "Outcome of another size than its unit",
         "The cells of the outcome are too small, too large or too near one for the unit declared.",
         "A wrong unit leaves every test as it is and makes every printed number wrong.",
+        "Premiums of 1.12, 1.35 and 1.28 declared as percent; they are price ratios.",
         "Correct outcome.unit; if it is right, set outcome.unit_is_certain = true.",
     ),
     Rule(
@@ -157,6 +178,7 @@ RULES = (
         "Standard error that does not fit its outcome",
         "A standard error is missing, below zero, or no match in size for the outcomes.",
         "Deals would be weighed by it.",
+        "A standard error of -0.02, or an empty one beside a filled outcome.",
         "Correct the cells, or take outcome.standard_error out of the study.",
     ),
     Rule(
@@ -164,6 +186,7 @@ RULES = (
         "Time of day without a time zone",
         "An announcement has a time of day, and neither an offset nor a zone.",
         "The same clock time is a different session in another zone.",
+        "2024-03-08 17:45 without a zone: after the close in London, before it in New York.",
         "Fill the column timestamp_zone (for example America/New_York).",
     ),
     Rule(
@@ -171,6 +194,7 @@ RULES = (
         "Local time that does not exist or exists twice",
         "The clocks changed that night: the local time was skipped or repeated.",
         "The instant cannot be told from the wall clock.",
+        "2024-03-10 02:30 in New York, which the clocks skipped.",
         "Write the time with its offset, for example 2021-11-07T01:30:00-05:00.",
     ),
     Rule(
@@ -178,6 +202,7 @@ RULES = (
         "Unknown exchange code",
         "A listing names an exchange for which no calendar is known.",
         "Day zero cannot be placed without the exchange's sessions.",
+        "'NYSE' or 'London' in exchange; the codes are XNYS and XLON.",
         "Use the ISO 10383 code of the listing, for example XNYS or XLON.",
     ),
     Rule(
@@ -185,6 +210,7 @@ RULES = (
         "Required cell is empty",
         "A column that must be filled has an empty cell.",
         "The deal cannot be placed in time or on an exchange.",
+        "Row 10 has no exchange.",
         "Fill the cell, or delete the row.",
     ),
     Rule(
@@ -192,6 +218,7 @@ RULES = (
         "Two different rows with one deal identifier",
         "An identifier stands on two rows that differ.",
         "One of them is wrong, and no rule can tell which.",
+        "D017 on rows 18 and 42, with two announcement dates.",
         "Keep one row an identifier.",
     ),
     Rule(
@@ -199,6 +226,7 @@ RULES = (
         "Money in more than one currency",
         "A money column holds more than one currency.",
         "Sizes in different currencies cannot stand in one regression.",
+        "Deal values in EUR on some rows and in USD on others.",
         "Convert all money to one currency at the rate before the announcement.",
     ),
     Rule(
@@ -206,6 +234,7 @@ RULES = (
         "Two different prices on one date",
         "A security has two closes on one date that differ.",
         "One of them is wrong.",
+        "C001 on 2024-03-08 closes at 34.51 on one row and at 35.13 on another.",
         "Keep one row a security and date.",
     ),
     Rule(
@@ -213,6 +242,7 @@ RULES = (
         "Price of zero or below",
         "A close is zero or negative.",
         "No return can be made from it.",
+        "A close of 0 on a day without trading, or of -34.5 for the middle of bid and ask.",
         "Leave the cell empty when there was no price.",
     ),
     Rule(
@@ -220,6 +250,7 @@ RULES = (
         "Price on a day the exchange was closed",
         "The price file holds dates that are no sessions of the exchange.",
         "Many of them mean that the exchange code is wrong.",
+        "Prices on Saturdays, because the exchange of the listing is XSAU and the file says XNYS.",
         "Check the exchange of the listing; single dates are left out.",
     ),
     Rule(
@@ -227,6 +258,7 @@ RULES = (
         "Session on which most securities have no price",
         "The calendar says the exchange was open, and most prices are missing.",
         "The exchange may have closed that day without notice.",
+        "2023-09-01 at XHKG, when a typhoon closed the exchange.",
         "Check the date with the exchange.",
     ),
     Rule(
@@ -234,6 +266,7 @@ RULES = (
         "Benchmark missing",
         "The benchmark has no level on a session the study needs.",
         "An abnormal return needs the market's return of the same day.",
+        "The index has no level on 2024-03-08, day zero of D017.",
         "Complete the benchmark file.",
     ),
     Rule(
@@ -241,6 +274,7 @@ RULES = (
         "Benchmark that does not move",
         "The benchmark has the same return on every session.",
         "Nothing can be said about the market's part in a share's return.",
+        "1000.0 on every date, because the column was filled down.",
         "Give the index level of each session.",
     ),
     Rule(
@@ -248,6 +282,7 @@ RULES = (
         "Benchmark that is the share itself",
         "A company's returns and its benchmark's are all but equal.",
         "Every abnormal return of the company would be nothing.",
+        "The benchmark file holds the closes of C001 under XLON.",
         "Take an index of the market, not the company's own price.",
     ),
     Rule(
@@ -256,6 +291,7 @@ RULES = (
         "The deal's company makes up more of its benchmark than the study allows, or moves almost "
         "as one with it.",
         "Its own news moves the benchmark, so its abnormal return is too near zero.",
+        "C001 is 18% of the market value of its index.",
         "Take a broader index, or one without the company; the deal is kept and flagged.",
     ),
     Rule(
@@ -263,6 +299,7 @@ RULES = (
         "Benchmark dated one session off",
         "Most companies move with the benchmark of the session before or after, not of their own.",
         "The market's move of another day is taken off every return.",
+        "The index is dated in UTC and its close in Tokyo falls on the day before.",
         "Check the time zone the dates were cut in, and which file carries the date of delivery.",
     ),
     Rule(
@@ -270,6 +307,7 @@ RULES = (
         "Benchmark of another market",
         "Most companies hardly move with the benchmark.",
         "Whatever moved their market stays in the abnormal returns.",
+        "Shares of XTKS held against an index of XNYS.",
         "Check the exchange code and the region of the index.",
     ),
     Rule(
@@ -277,6 +315,7 @@ RULES = (
         "Risk-free rate that is not a daily one",
         "The risk-free column is too large to be a return of one day.",
         "An annual rate taken off every day makes every abnormal return a large loss.",
+        "0.0425 in risk_free, the rate of a year; a day's is about 0.00017.",
         "Divide an annual rate by the sessions of a year, and a percentage by 100.",
     ),
 )
