@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from itertools import permutations
 
 import numpy as np
 import pandas as pd
@@ -20,7 +21,7 @@ from pipeline.characteristics.universe import (
 from pipeline.core.design import Design, SelectionRows
 from pipeline.core.findings import Finding, Severity, problem, raise_errors
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
-from pipeline.core.prices import Booleans, Floats, PricePanel
+from pipeline.core.prices import Booleans, Floats, Integers, PricePanel
 
 FEWEST_A_GROUP = 5
 SHOWN = 5
@@ -140,6 +141,7 @@ def prepare(
         selection, note = selection_rows(universe, recipes, kept, roles.excluded, roles.clusters)
         findings.append(note)
     design = _design(deals, finished, roles, used, selection)
+    findings += nested_clusters(design.clusters)
     variables = {name: np.where(used, values, np.nan) for name, values in finished.items()}
     shown = [name for name in variables if name in recipes or name not in deals]
     table = deals.assign(
@@ -147,6 +149,27 @@ def prepare(
     )
     groups = {name: words(deals.loc[used, name]) for name in (*roles.effects, *roles.clusters)}
     return Prepared(design, table, ledger, tuple(findings), groups)
+
+
+def nested_clusters(clusters: Mapping[str, Integers]) -> list[Finding]:
+    """A warning for a cluster dimension whose groups lie each within one group of the other."""
+    findings = []
+    for fine, coarse in permutations(clusters, 2):
+        pairs = pd.DataFrame({"fine": clusters[fine], "coarse": clusters[coarse]})
+        pairs = pairs.drop_duplicates()
+        if pairs["fine"].is_unique and not pairs["coarse"].is_unique:
+            findings.append(
+                Finding(
+                    "nested_clusters",
+                    Severity.WARNING,
+                    "study file",
+                    got=f"each {fine} within one {coarse}",
+                    expected="two dimensions that cut across each other",
+                    remedy=f"Cluster by {coarse} alone: it allows for all that {fine} does.",
+                    column="regression.clusters",
+                )
+            )
+    return findings
 
 
 def words(values: pd.Series) -> tuple[str, ...]:

@@ -13,6 +13,7 @@ from pipeline.inputs.contracts import (
     unknown_units,
 )
 from pipeline.inputs.numerals import scaled
+from pipeline.inputs.sheet_shape import sheet_findings
 from pipeline.inputs.source import ROW, Source
 
 
@@ -21,7 +22,8 @@ def typed(
 ) -> tuple[pd.DataFrame, list[Finding]]:
     """The contracted columns; without one of them no further check of the file makes sense."""
     table, findings = apply_contract(raw, source, columns, date_format)
-    findings = unknown_names(source, columns) + unknown_units(source, columns) + findings
+    named = unknown_names(source, columns) + unknown_units(source, columns)
+    findings = sheet_findings(source) + named + findings
     if any(finding.rule in ("missing_column", "unknown_key") for finding in findings):
         raise InputProblem(findings)
     table = scaled(table, source)

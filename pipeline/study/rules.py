@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
@@ -17,12 +18,17 @@ from pipeline.study.plan_returns import returns_checks
 from pipeline.study.schema import Study
 from pipeline.study.sources import source_checks
 
+# Columns that the results have beside the variables.
+TAKEN = {"constant", "in_regression", "_row"}
+OUTCOME_NAME = re.compile(r"(car|bhar)_m?\d+_m?\d+")
+
 
 def cross_checks(study: Study, file: str) -> list[Finding]:
     """All findings about how the parts of a study fit together."""
     return [
         *_windows(study, file),
         *_circles(study, file),
+        *_reserved(study, file),
         *_roles(study, file),
         *_columns(study, file),
         *_needs(study, file),
@@ -95,6 +101,25 @@ def _circles(study: Study, file: str) -> Iterator[Finding]:
                 f"{made_of[name]}, which lead back to '{name}'",
                 "columns, or characteristics made of others",
                 "Give the characteristic another name than what it multiplies.",
+            )
+
+
+def _reserved(study: Study, file: str) -> Iterator[Finding]:
+    """Names that the tables of a run give to columns of their own."""
+    regression = study.regression
+    named = [("characteristics", name) for name in study.characteristics]
+    if regression is not None:
+        parts = (regression.treatment, *regression.controls, *regression.fixed_effects)
+        named += [("regression", name) for name in parts]
+    for key, name in dict.fromkeys(named):
+        if name in TAKEN or OUTCOME_NAME.fullmatch(name):
+            yield _error(
+                "reserved_name",
+                file,
+                key,
+                f"'{name}'",
+                "a name that no column of the results has",
+                f"Give '{name}' another name; a column is renamed under [inputs.columns.deals].",
             )
 
 

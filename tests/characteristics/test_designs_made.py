@@ -148,6 +148,19 @@ def test_a_deal_without_a_cluster_stops_the_run() -> None:
     assert found.got == "no security for D03"
 
 
+def test_clusters_within_clusters_are_told() -> None:
+    found = made(
+        lambda table: table.insert(0, "group", table["security"].str[-1]),
+        among=None,
+        roles=replace(ROLES, clusters=("security", "group")),
+    )
+    (warning,) = found.findings
+    assert (warning.rule, warning.severity) == ("nested_clusters", Severity.WARNING)
+    assert warning.got == "each security within one group"
+    crossed = made(among=None, roles=replace(ROLES, clusters=("security", "year")))
+    assert crossed.findings == ()
+
+
 def test_candidates_stand_beside_the_deals() -> None:
     found = made()
     rows = found.design.selection

@@ -132,10 +132,10 @@ def test_every_rule_is_explained(key: str) -> None:
     rule = RULES[key]
     assert rule.key == key
     assert rule_title(key) == rule.title
-    for text in (rule.title, rule.what, rule.why, rule.remedy):
+    for text in (rule.title, rule.meaning, rule.why, rule.remedy):
         assert text
         assert text[0].isupper()
-    assert all(text.endswith(".") for text in (rule.what, rule.why, rule.remedy))
+    assert all(text.endswith(".") for text in (rule.meaning, rule.why, rule.example, rule.remedy))
 
 
 def test_a_rule_outside_the_catalogue_is_put_in_words() -> None:

@@ -36,12 +36,35 @@ def test_every_rule_named_is_explained() -> None:
     assert named_rules() - set(RULES) == set()
 
 
+def test_every_page_is_of_a_rule_that_can_be_raised() -> None:
+    rooms = PIPELINE / "core" / "rules"
+    written = {
+        node.value
+        for path in PIPELINE.rglob("*.py")
+        if rooms not in path.parents
+        for node in ast.walk(ast.parse(path.read_text(encoding="utf-8")))
+        if isinstance(node, ast.Constant) and isinstance(node.value, str)
+    }
+    assert set(RULES) - written == set()
+
+
+def test_every_rule_is_shown_by_a_test() -> None:
+    tests = Path(__file__).resolve().parents[1]
+    said = "\n".join(path.read_text(encoding="utf-8") for path in tests.rglob("*.py"))
+    assert [key for key in RULES if key not in said] == []
+
+
+def test_no_two_pages_give_one_example() -> None:
+    examples = [rule.example for rule in RULES.values()]
+    assert len(set(examples)) == len(examples)
+
+
 @pytest.mark.parametrize("key", RULES)
 def test_each_rule_says_what_why_and_what_to_do(key: str) -> None:
     rule = RULES[key]
-    for text in (rule.title, rule.what, rule.why, rule.remedy):
+    for text in (rule.title, rule.meaning, rule.why, rule.remedy):
         assert text[0].isupper()
-    for text in (rule.what, rule.why, rule.remedy):
+    for text in (rule.meaning, rule.why, rule.example, rule.remedy):
         assert text.endswith(".")
     assert rule_title(key) == rule.title
 

@@ -135,6 +135,14 @@ RULES = (
         "Name at most two.",
     ),
     Rule(
+        "nested_clusters",
+        "Clusters within clusters",
+        "The groups of one cluster dimension lie each within one group of the other.",
+        "The finer one adds nothing, and its part of the covariance only adds noise.",
+        'clusters = ["security", "industry"], where each company has one industry.',
+        "Cluster by the coarser dimension alone.",
+    ),
+    Rule(
         "cluster_missing",
         "Deal without a cluster",
         "A deal that is left for the regression has no value of a cluster dimension.",

@@ -102,6 +102,14 @@ RULES = (
         "Make an indicator under [characteristics], or set regression.continuous = true.",
     ),
     Rule(
+        "reserved_name",
+        "Name that the results use themselves",
+        "A variable is called like a column that every run writes beside the variables.",
+        "One of the two would be lost in the tables.",
+        "A characteristic called 'constant', or one called 'car_m1_1'.",
+        "Give the variable another name.",
+    ),
+    Rule(
         "duplicate_variable",
         "Variable named twice",
         "A variable stands twice among the regressors.",
