@@ -43,7 +43,12 @@ def run(
         InputProblem: with every finding of the stage that could not go on.
     """
     clock = Clock(progress)
-    measured = deals_of(study, clock)
+    return _all_stages(study, clock, fresh), clock.seconds
+
+
+def _all_stages(study: Study, clock: Clock, fresh: bool = False, deal: str = "") -> Results:
+    """As :func:`run`; a ``deal`` has what its page is made from whatever its place in the list."""
+    measured = deals_of(study, clock, fresh)
     found, (placebo, draws) = reactions_of(study, measured, clock)
     with clock.stage("characteristics"):
         prepared = prepared_of(study, measured)
@@ -56,11 +61,11 @@ def run(
     with clock.stage("results"):
         results = results_of(study, measured, found, prepared, columns, placebo, doubts)
         results = with_pictures(results, study, measured, prepared, draws)
-        results = with_deal_frames(results, study, measured, prepared)
+        results = with_deal_frames(results, study, measured, prepared, deal)
     if prepared is not None:
         deals = deals_with_outcomes(study, measured)
         results = with_selection(results, selected_of(study, measured, deals, prepared, clock))
-    return results, clock.seconds
+    return results
 
 
 def deals_of(study: Study, clock: Clock, fresh: bool = False) -> Measured:
@@ -142,19 +147,19 @@ def deal_page(study: Study, name: str, progress: Progress = lambda _: None) -> A
     Raises:
         InputProblem: as :func:`run` would, or if no such deal was measured.
     """
-    results, _ = run(study, progress)
-    book = Book.of(results)
-    if name not in book.names:
+    results = _all_stages(study, Clock(progress), deal=name)
+    known = results.deals["deal"].astype(str)
+    if name not in set(known):
         raise problem(
             "unknown_variable",
             "deals",
             column="deal_id",
             got=f"'{name}'",
-            expected="a deal that was measured, such as " + ", ".join(list(book.names)[:3]),
+            expected="a deal that was measured, such as " + ", ".join(known[:3]),
             remedy="Write it as in the deal list; without --page and --whole the command says why "
             "a deal was left out.",
         )
-    return document(book, name)
+    return document(Book.of(results, [name]), name)
 
 
 def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, float, int]:

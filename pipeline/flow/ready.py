@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Container
 from typing import Any
 
 import numpy as np
@@ -75,9 +76,10 @@ def ready_standing(study: Study, deals: Any, name: str) -> Standing | None:
     return standing_of(outcome, float(values[rows[0]]), error, values, study.level)
 
 
-def standings_of(study: Study, deals: Any) -> list[dict[str, Any]]:
-    """Where every deal's outcome lies among the others, as rows of ``deal_standings``."""
-    found = {str(name): ready_standing(study, deals, str(name)) for name in deals["deal_id"]}
+def standings_of(study: Study, deals: Any, shown: Container[str]) -> list[dict[str, Any]]:
+    """Where the outcomes ``shown`` lie among all of them, as rows of ``deal_standings``."""
+    names = [str(name) for name in deals["deal_id"] if name in shown]
+    found = {name: ready_standing(study, deals, name) for name in names}
     return [
         {
             "deal": name,

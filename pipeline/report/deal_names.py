@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import itertools
 import re
 from collections.abc import Iterable, Mapping
 
@@ -44,9 +43,8 @@ def page_path(name: str) -> str:
 
 def page_links(material: Material) -> Mapping[str, str]:
     """Deal -> its page, from the folder of the report, for the deals that have one."""
-    names = page_names(material.results.deals["deal"].astype(str))
-    written = itertools.islice(names.items(), material.study.deal_pages)
-    return {deal: page_path(name) for deal, name in written}
+    deals = material.results.deals["deal"].head(material.study.deal_pages).astype(str)
+    return {deal: page_path(name) for deal, name in page_names(deals).items()}
 
 
 def all_deals(material: Material) -> Verbatim | None:

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
+from pipeline.core.house import ISO
 from pipeline.core.results import Results
 from pipeline.core.rules import rule_title
 from pipeline.report.deal_names import INDEX, page_names
@@ -33,12 +34,14 @@ from pipeline.report.document import (
     Table,
     Text,
 )
+from pipeline.report.house import styled
 from pipeline.report.material import Material, capital, embedded, prose, taken
 from pipeline.report.numerals import BP, count, in_unit, plain, show, true_minus, unit_digits
 from pipeline.report.wording import window_label
 
 Record = Mapping[str, Any]
 REPORT = "../report.html"
+MOST_DROPPED = 1_000
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -58,8 +61,8 @@ class Book:
     drawn: Mapping[str, pd.DataFrame]
 
     @classmethod
-    def of(cls, results: Results) -> Book:
-        """The book of a run."""
+    def of(cls, results: Results, deals: Sequence[str]) -> Book:
+        """The book of these deals of a run."""
         material = Material.of(results)
         frames = dict(material.frames)
         left_out = frames.get("left_out")
@@ -69,11 +72,15 @@ class Book:
             frames["left_out"] = alone.assign(place=places, deal=alone["group"])
         wanted = ("deals", "deal_stories", "deal_standings", "deal_days", "deal_fits", "left_out",
                   "deal_findings", "ledger")  # fmt: skip
-        parts = {name: _by_deal(frames[name]) for name in wanted if name in frames}
+        parts = {
+            name: _by_deal(frames[name][frames[name]["deal"].isin(deals)])
+            for name in wanted
+            if name in frames
+        }
         quartiles = _records(frames["quartiles"]) if "quartiles" in frames else []
         facts = _records(frames["picture_facts"]) if "picture_facts" in frames else []
         errors = {str(row["name"]): float(row["value"]) for row in facts}
-        names = page_names(results.deals["deal"].astype(str))
+        names = page_names(deals)
         drawn = _drawn(frames["deal_days"]) if "deal_days" in frames else {}
         return cls(material, parts, names, quartiles, errors, drawn)
 
@@ -118,13 +125,13 @@ def _records(frame: pd.DataFrame) -> list[Record]:
 
 
 def documents(results: Results, most: int) -> Iterator[tuple[str, Document]]:
-    """(name, page) of the first ``most`` deals and of the list of all deals."""
-    book = Book.of(results)
-    deals = list(book.names)
+    """(name, page) of the list of deals and of the first ``most`` of them."""
+    deals = results.deals["deal"].astype(str).tolist()
     written = deals[:most]
     if not written:
         return
-    yield INDEX, _index(book, frozenset(written))
+    book = Book.of(results, written)
+    yield INDEX, _index(book, len(deals))
     for at, deal in enumerate(written):
         before = written[at - 1] if at else ""
         after = written[at + 1] if at + 1 < len(written) else ""
@@ -153,7 +160,16 @@ def document(book: Book, deal: str, before: str = "", after: str = "") -> Docume
     ways += [(f"Next: {after}", f"{book.names[after]}.html")] if after else []
     title = f"{deal}: {where}" if where else deal
     kept = tuple(section for section in sections if section is not None)
-    return Document(title, book.material.study.title, kept, tuple(ways))
+    return _shown(book, title, kept, tuple(ways))
+
+
+def _shown(
+    book: Book, title: str, sections: tuple[Section, ...], ways: tuple[tuple[str, str], ...]
+) -> Document:
+    """A page in the house's style; its logo stays with the report, or it would be copied often."""
+    study = book.material.study
+    made = Document(title, study.title, sections, replace(study.house, logo=None), ways=ways)
+    return made if study.house.dates == ISO else styled(made)
 
 
 def _section(heading: str, *blocks: Block | None) -> Section | None:
@@ -278,21 +294,21 @@ def _standing_section(book: Book, deal: str) -> Section | None:
     return Section("The outcome", (words,))
 
 
-def _index(book: Book, written: frozenset[str]) -> Document:
-    """All deals with a link to each page, and those that were dropped with the reason."""
+def _index(book: Book, every: int) -> Document:
+    """Deals with a link to each page, of ``every`` one measured; and those dropped, with why."""
     material = book.material
-    blocks: list[Block | None] = [_list_table(book, written), _dropped_table(material)]
-    if len(written) < len(book.names):
+    blocks: list[Block | None] = [_list_table(book), _dropped_table(material)]
+    if len(book.names) < every:
         blocks.insert(0, prose(
-            "Pages were made for the first ", taken(f"{len(written):,}", "study"),
+            "Pages were made for the first ", taken(f"{len(book.names):,}", "study"),
             " deals. That of any other deal: dealwake deal STUDY ID --page FILE.",
         ))  # fmt: skip
     kept = tuple(block for block in blocks if block is not None)
     ways = (("Report", REPORT),)
-    return Document("All deals", material.study.title, (Section("Deals", kept),), ways)
+    return _shown(book, "All deals", (Section("Deals", kept),), ways)
 
 
-def _list_table(book: Book, written: frozenset[str]) -> Table:
+def _list_table(book: Book) -> Table:
     unit, ready = book.material.unit, book.material.ready
     frame, column = ("deal_standings", "value") if ready else ("deal_stories", "car")
     columns = (
@@ -303,23 +319,22 @@ def _list_table(book: Book, written: frozenset[str]) -> Table:
     rows = []
     for deal, name in book.names.items():
         row, story = book.row("deals", deal) or {}, book.row(frame, deal) or {}
-        link = f"{name}.html" if deal in written else ""
         told = [str(row[key])[:40] if _told(row.get(key)) else "" for key in
                 ("security", "exchange", "day_zero")]  # fmt: skip
         rows.append(
             (
-                Text(deal, link), Text(told[0]), Text(told[1]), Text(told[2][:10]),
+                Text(deal, f"{name}.html"), Text(told[0]), Text(told[1]), Text(told[2][:10]),
                 in_unit(float(story.get(column, np.nan)), unit),
                 count(int(story["rank"])) if "rank" in story else None,
                 plain(float(story["scar"]), 2) if "scar" in story else None,
             )
         )  # fmt: skip
-    return Table("list", prose("Every deal that was measured"), columns, tuple(rows))
+    return Table("list", prose("Deals that were measured"), columns, tuple(rows))
 
 
 def _dropped_table(material: Material) -> Table | None:
     frame = material.frames["ledger"]
-    frame = frame[frame["action"] == "dropped"]
+    frame = frame[frame["action"] == "dropped"].head(MOST_DROPPED)
     if frame.empty:
         return None
     columns = (Column("Deal"), Column("Stage"), Column("Because", prose=True), Column("Value"))

@@ -92,7 +92,7 @@ def _piece(piece: Piece, dates: str, numbers: dict[str, str]) -> Piece:
         case Reference(name):
             return Reference(name, numbers[name])
         case Verbatim(text, origin) if origin not in QUOTED:
-            return Verbatim(redated(text, dates), origin)
+            return replace(piece, text=redated(text, dates))
     return piece
 
 
@@ -100,7 +100,7 @@ def _cell(cell: Cell, dates: str) -> Cell:
     match cell:
         case Text(text):
             day = day_of(text)
-            return Day(day, dates) if day else Text(redated(text, dates))
+            return Day(day, dates) if day else replace(cell, text=redated(text, dates))
         case Interval() if cell.words:
             return replace(cell, words=redated(cell.words, dates))
     return cell

@@ -21,6 +21,7 @@ SHARED_BINS = 24
 BALANCED = 0.1
 NAMED = 3
 MOST_GROUPS = 2
+MOST_DOTS = 900
 
 
 def _fact(material: Material, picture: str, name: str, *, scale: float = 1.0,
@@ -193,7 +194,8 @@ def correction_figure(material: Material) -> Figure | None:
         f"{len(frame)} dots of the correction against its prediction; it runs from "
         f"{show(low, 2)} to {show(high, 2)}, median {show(middle, 2)}."
     )
-    return Figure("selection_correction", "correction", title, caption, alt, frame.copy())
+    data = _thinned(frame.sort_values("mills", kind="stable")).sort_index()
+    return Figure("selection_correction", "correction", title, caption, alt, data)
 
 
 def placebo_figure(material: Material) -> Figure | None:
@@ -235,6 +237,15 @@ def placebo_figure(material: Material) -> Figure | None:
     return Figure("placebo", "placebo", title, caption, alt, data, marks, axis)
 
 
+def _thinned(part: pd.DataFrame) -> pd.DataFrame:
+    """Ordered rows: all of a few; of very many both ends and evenly spaced ones between."""
+    n, third = len(part), MOST_DOTS // 3
+    if n <= MOST_DOTS:
+        return part
+    middle = np.linspace(third, n - third - 1, third).astype(np.int64)
+    return part.iloc[[*range(third), *np.unique(middle), *range(n - third, n)]]
+
+
 def left_out_figures(material: Material) -> list[Figure]:
     """Each number without each deal, and each group of deals, in turn."""
     frame = _frame(material, "left_out")
@@ -254,8 +265,10 @@ def _left_out(material: Material, target: str, frame: pd.DataFrame) -> Figure:
     unit = material.unit
     kinds = list(dict.fromkeys(frame["dimension"].astype(str)))[: 1 + MOST_GROUPS]
     frame = frame[frame["dimension"].isin(kinds) & np.isfinite(frame["estimate"])]
-    data = frame[["dimension", "group", "deals"]].reset_index(drop=True)
-    data[f"estimate_{unit.slug}"] = frame["estimate"].to_numpy() * unit.scale
+    parts = frame.sort_values("estimate", kind="stable").groupby("dimension", sort=False)
+    drawn = pd.concat([_thinned(part) for _, part in parts]).sort_index()
+    data = drawn[["dimension", "group", "deals"]].reset_index(drop=True)
+    data[f"estimate_{unit.slug}"] = drawn["estimate"].to_numpy() * unit.scale
     error = _fact(material, "left_out", f"std_error: {target}").value
     full = float((frame["estimate"] - frame["change"]).iloc[0])
     first = frame[frame["dimension"] == kinds[0]].iloc[0]
@@ -274,7 +287,8 @@ def _left_out(material: Material, target: str, frame: pd.DataFrame) -> Figure:
         taken(joined(f"{kind}s" for kind in kinds[1:]) or "groups", "check"),
         ", in order of size, in ", taken(unit.words, "study"), ". The line is the number with "
         "all of them, the strip one standard error to each side. Dots outside it are deals that "
-        "carry the answer: look at them one by one.",
+        "carry the answer: look at them one by one. Of very many the middle ones are drawn "
+        "in part.",
     )  # fmt: skip
     alt = f"The {target} without each deal or group: " + "; ".join(
         f"one {kind} left out, {amount(float(part['estimate'].min()), unit)} to "

@@ -3,32 +3,46 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Mapping
 from html import escape
 
 from markupsafe import Markup
 
-from pipeline.report.document import Cell, Interval, Number, Paragraph, Quote, Table, Text
+from pipeline.report.document import (
+    SHORTENED,
+    Cell,
+    Interval,
+    Number,
+    Paragraph,
+    Quote,
+    Reference,
+    Table,
+    Text,
+)
 from pipeline.report.numerals import clean, lines, slug
 
-_DATE = re.compile(r"\d{4}-\d\d-\d\d( \d\d:\d\d)?")
-SHORTENED = "The first rows; all of them stand in tables.xlsx."
+_MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
 
 
-def table_markup(table: Table) -> Markup:
-    """The table with its title and notes; every word escaped."""
+def table_markup(table: Table, numbers: Mapping[str, str]) -> Markup:
+    """The table with its title and notes; every word escaped.
+
+    ``numbers`` is what the tables and figures of a numbered document are called.
+    """
+    called = f"{numbers[table.name]}. " if table.name in numbers else ""
     form = " form" if table.form else ""
     parts = [
         f'<div class="table{form}" id="table-{slug(table.name)}">',
-        f'<p class="title">{prose_markup(table.title)}</p>',
+        f'<p class="title">{called}{prose_markup(table.title, numbers)}</p>',
         *(_grid(table) if table.rows else ('<p class="note">None.</p>',)),
-        *(f'<p class="note">{prose_markup(note)}</p>' for note in table.notes),
+        *(f'<p class="note">{prose_markup(note, numbers)}</p>' for note in table.notes),
         "</div>",
     ]
     return Markup("\n".join(parts) + "\n")
 
 
-def prose_markup(paragraph: Paragraph) -> str:
-    """A paragraph's words, its quoted numbers marked with where they stand."""
+def prose_markup(paragraph: Paragraph, numbers: Mapping[str, str]) -> str:
+    """A paragraph's words, its quoted numbers marked with where they stand, its links leading."""
     lead = f"<b>{_words(paragraph.lead)}</b> " if paragraph.lead else ""
     found = [lead]
     for piece in paragraph.pieces:
@@ -37,6 +51,9 @@ def prose_markup(paragraph: Paragraph) -> str:
         elif isinstance(piece, Quote):
             title = _words(source(piece))
             found.append(f'<data value="{piece.value}" title="{title}">{escape(piece.text)}</data>')
+        elif isinstance(piece, Reference):
+            kind = numbers.get(piece.name, "").partition(" ")[0].lower()
+            found.append(_linked(_words(piece.text), f"#{kind}-{slug(piece.name)}"))
         else:
             found.append(_linked(_words(piece.text), piece.href))
     return "".join(found)
@@ -50,7 +67,7 @@ def source(quote: Quote) -> str:
 
 def numeric(cell: Cell) -> bool:
     """Whether a cell's content, a number or a date, stays on one line."""
-    worded = isinstance(cell, Text) and not _DATE.fullmatch(cell.text)
+    worded = isinstance(cell, Text) and not _MOMENT.fullmatch(cell.text)
     worded = worded or (isinstance(cell, Interval) and bool(cell.words))
     return cell is not None and not worded
 

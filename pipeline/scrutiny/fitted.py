@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Container, Iterable, Mapping
 
 import numpy as np
 
@@ -15,7 +15,12 @@ CONSTANT = "constant"
 Rows = list[dict[str, object]]
 
 
-def fits_of(design: Design, columns: Iterable[Column], further: Mapping[str, Floats]) -> Rows:
+def fits_of(
+    design: Design,
+    columns: Iterable[Column],
+    further: Mapping[str, Floats],
+    shown: Container[str],
+) -> Rows:
     """One row a deal and column that predicts a deal: observed, fitted, residual, decimal.
 
     Of instruments the residual is that of the outcome's own equation, with the treatment as it
@@ -27,6 +32,7 @@ def fits_of(design: Design, columns: Iterable[Column], further: Mapping[str, Flo
         columns: of the comparison table.
         further: name -> (n,) a regressor that the design lacks, such as the correction for who
             announces.
+        shown: the deals that are told of.
     """
     rows: Rows = []
     for column in columns:
@@ -35,6 +41,8 @@ def fits_of(design: Design, columns: Iterable[Column], further: Mapping[str, Flo
             continue
         kept, left = found
         for at, rest in zip(np.flatnonzero(kept).tolist(), left.tolist(), strict=True):
+            if design.rows[at] not in shown:
+                continue
             rows.append(
                 {
                     "deal": design.rows[at],

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Container
 from dataclasses import dataclass
 
 import numpy as np
@@ -88,7 +89,9 @@ def story_of(deal: str, abnormal: AbnormalReturns, window: Window, level: float)
 
 
 def stories_of(abnormal: AbnormalReturns, window: Window, level: float, days: pd.DataFrame) -> Rows:
-    """What was measured of every deal, as rows of ``deal_stories``; numbers as in :func:`story_of`.
+    """What was measured of the deals of ``days``, as rows of ``deal_stories``, among all deals.
+
+    Numbers are those of :func:`story_of`.
 
     ``rank_standardised`` orders the deals by their standardised reaction; ``traded`` counts the
     sessions of ``days`` (see :func:`days_of`) with a return, ``outside`` those beyond their band.
@@ -96,31 +99,35 @@ def stories_of(abnormal: AbnormalReturns, window: Window, level: float, days: pd
     beyond = days["abnormal_return"].abs() > days["reach"]
     outside = beyond.groupby(days["deal"], sort=False).sum()
     traded = days.groupby("deal", sort=False)["abnormal_return"].count()
-    reach = np.array([t_reach(level, float(df)) for df in abnormal.degrees_of_freedom])
     cars, spread = abnormal.car(window), np.sqrt(abnormal.car_variance(window))
     scars = abnormal.standardised(window)
-    dates = abnormal.estimation_days
     ranks, standardised = _ranks(cars), _ranks(scars)
-    return [
-        {
-            "deal": deal,
-            "estimation_first": str(dates[at, 0]),
-            "estimation_last": str(dates[at, -1]),
-            "sessions": int(dates.shape[1]),
-            "observations": int(abnormal.observations[at]),
-            "residual_sd": float(np.sqrt(abnormal.residual_variance[at])),
-            "car": float(cars[at]),
-            "ci_low": float(cars[at] - reach[at] * spread[at]),
-            "ci_high": float(cars[at] + reach[at] * spread[at]),
-            "scar": float(scars[at]),
-            "rank": int(ranks[at]),
-            "rank_standardised": int(standardised[at]),
-            "traded": int(traded[deal]),
-            "outside": int(outside[deal]),
-            "deals": len(cars),
-        }
-        for at, deal in enumerate(abnormal.deals)
-    ]
+    places = [at for at, deal in enumerate(abnormal.deals) if deal in outside.index]
+    dates = abnormal.take(np.array(places, dtype=np.int64)).estimation_days
+    rows: Rows = []
+    for held, at in enumerate(places):
+        deal = abnormal.deals[at]
+        half = t_reach(level, float(abnormal.degrees_of_freedom[at])) * float(spread[at])
+        rows.append(
+            {
+                "deal": deal,
+                "estimation_first": str(dates[held, 0]),
+                "estimation_last": str(dates[held, -1]),
+                "sessions": int(dates.shape[1]),
+                "observations": int(abnormal.observations[at]),
+                "residual_sd": float(np.sqrt(abnormal.residual_variance[at])),
+                "car": float(cars[at]),
+                "ci_low": float(cars[at]) - half,
+                "ci_high": float(cars[at]) + half,
+                "scar": float(scars[at]),
+                "rank": int(ranks[at]),
+                "rank_standardised": int(standardised[at]),
+                "traded": int(traded[deal]),
+                "outside": int(outside[deal]),
+                "deals": len(cars),
+            }
+        )
+    return rows
 
 
 def _ranks(values: Floats) -> Integers:
@@ -128,11 +135,12 @@ def _ranks(values: Floats) -> Integers:
     return np.asarray(1 + len(values) - np.searchsorted(np.sort(values), values, side="right"))
 
 
-def days_of(abnormal: AbnormalReturns, level: float) -> pd.DataFrame:
-    """Every deal's days with half the band of each, the columns of ``deal_days``.
+def days_of(abnormal: AbnormalReturns, level: float, shown: Container[str]) -> pd.DataFrame:
+    """The days of the deals ``shown`` with half the band of each, the columns of ``deal_days``.
 
     A band is the deal's own forecast error of that session with t(M - d), as in :func:`story_of`.
     """
+    abnormal = abnormal.select(np.array([deal in shown for deal in abnormal.deals], dtype=bool))
     n, width = abnormal.returns.shape
     reach = np.array([t_reach(level, float(df)) for df in abnormal.degrees_of_freedom])
     days = np.arange(abnormal.span.start, abnormal.span.end + 1)

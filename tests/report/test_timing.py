@@ -122,7 +122,7 @@ def test_a_table_of_very_many_deals_stops_and_says_so(monkeypatch: pytest.Monkey
             "day_zero_reason": "It was before the open",
         }
     )
-    table = timing.day_zero_table(deals)
+    table = timing.day_zero_table(deals, {})
     assert [row[0].text for row in table.rows] == ["D1", "D2"]  # type: ignore[union-attr]
     assert "The first 2 of 3 rows" in table.notes[0].text
-    assert timing.day_zero_table(deals.head(2)).notes == ()
+    assert timing.day_zero_table(deals.head(2), {}).notes == ()

@@ -136,7 +136,8 @@ def test_the_correction_counts_where_it_is_known(design: Design) -> None:
 
 def test_a_difference_of_means_predicts_no_deal(design: Design) -> None:
     columns = (ols(design, OPTIONS), weighting(design, OPTIONS))
-    rows = fits_of(design, columns, {})
+    assert {row["deal"] for row in fits_of(design, columns, {}, {"deal 3"})} == {"deal 3"}
+    rows = fits_of(design, columns, {}, set(design.rows))
     assert {row["column"] for row in rows} == {"Least squares"}
     assert len(rows) == design.n
     for row in rows[:5]:

@@ -87,7 +87,8 @@ def test_deals_that_move_a_number_by_more_than_its_error_are_counted() -> None:
 
 def test_the_stories_of_all_deals_are_those_told_one_by_one() -> None:
     abnormal = clustered(deals=9, gaps=0)
-    days = days_of(abnormal, 0.9)
+    days = days_of(abnormal, 0.9, set(abnormal.deals[2:]))
+    assert set(days["deal"]) == set(abnormal.deals[2:])
     for row in stories_of(abnormal, WINDOW, 0.9, days):
         story = story_of(str(row["deal"]), abnormal, WINDOW, 0.9)
         assert story is not None
