@@ -13,9 +13,11 @@ window of 250 sessions before it and 30 after it, with the margin that the study
 
 Every reading is a process of its own, pandas and ours in turn; the shortest of the rounds counts,
 by the clock and in processor seconds of all threads, imports left out. On a machine that does
-something else at the time the clock makes ours, which uses every core, look slower. Peak memory is that of the whole process, interpreter and libraries
-included. Ours is :func:`pipeline.inputs.market.read_prices`, checks included; pandas is
-``read_parquet`` and ``read_csv`` as they come, with dates parsed.
+something else at the time the clock makes ours, which uses every core, look slower. Peak memory is
+that of the whole process, interpreter and libraries included.
+
+Ours is :func:`pipeline.inputs.market.read_prices`, checks included; pandas is ``read_parquet`` and
+``read_csv`` as they come, with dates parsed.
 """
 
 from __future__ import annotations
