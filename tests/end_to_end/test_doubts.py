@@ -13,7 +13,7 @@ from typer.testing import CliRunner
 
 from pipeline.cli import app
 from pipeline.core.clock import Clock
-from pipeline.screen import _Teller
+from pipeline.progress import Bars, Pace
 from tests.small import write_small_study
 
 DOUBTS = """
@@ -128,7 +128,7 @@ def test_who_wants_to_hear_of_portions_hears_them() -> None:
 
 def test_the_terminal_shows_how_much_is_left_of_what_is_long() -> None:
     bar = Progress(console=Console(file=io.StringIO()))
-    teller = _Teller(bar, bar.add_task("study file", total=2, left=""))
+    teller = Bars(bar, bar.add_task("study file", total=2, left=""), Pace())
     teller("scrutiny")
     teller.portion("cells", 300, 1200)
     teller.portion("cells", 900, 1200)
