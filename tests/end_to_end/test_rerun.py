@@ -13,23 +13,6 @@ from tests.end_to_end.conftest import ROOT, dealwake
 DEMO = ROOT / "configs" / "demo.toml"
 
 
-def headline_windows(folder: Path) -> set[tuple[int, int]]:
-    tests = pd.read_parquet(folder / "data" / "event_tests.parquet")
-    own = tests[tests["headline"]]
-    return set(zip(own["window_start"], own["window_end"], strict=True))
-
-
-def test_three_lines_change_the_headline_window(tmp_path: Path) -> None:
-    study = tmp_path / "wider.toml"
-    study.write_text(f'base = "{DEMO.as_posix()}"\n[event_time]\nheadline = [-2, 2]\n')
-    dealwake("run", study, "--out", tmp_path / "out")
-    assert headline_windows(tmp_path / "out") == {(-2, 2)}
-    estimates = pd.read_parquet(tmp_path / "out" / "data" / "estimates.parquet")
-    assert set(estimates["window_start"]) == {-2}
-    manifest = json.loads((tmp_path / "out" / "manifest.json").read_text())
-    assert manifest["study"]["name"] == "wider"
-
-
 LIGHT = """
 [placebo]
 draws = 0
@@ -41,13 +24,35 @@ formats = ["html"]
 
 
 @pytest.fixture(scope="module")
-def wider(tmp_path_factory: pytest.TempPathFactory) -> Path:
-    """The demo with a window from the command line, without its slower proofs."""
-    base = tmp_path_factory.mktemp("window")
-    study = base / "light.toml"
+def light(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The demo's study without its slower proofs."""
+    study = tmp_path_factory.mktemp("light") / "light.toml"
     study.write_text(f'base = "{DEMO.as_posix()}"\n{LIGHT}')
-    dealwake("run", study, "--window", "-3:3", cwd=base)
-    return base / "reports" / "light_m3_3"
+    return study
+
+
+def headline_windows(folder: Path) -> set[tuple[int, int]]:
+    tests = pd.read_parquet(folder / "data" / "event_tests.parquet")
+    own = tests[tests["headline"]]
+    return set(zip(own["window_start"], own["window_end"], strict=True))
+
+
+def test_three_lines_change_the_headline_window(light: Path, tmp_path: Path) -> None:
+    study = tmp_path / "wider.toml"
+    study.write_text(f'base = "{light.as_posix()}"\n[event_time]\nheadline = [-2, 2]\n')
+    dealwake("run", study, "--out", tmp_path / "out")
+    assert headline_windows(tmp_path / "out") == {(-2, 2)}
+    estimates = pd.read_parquet(tmp_path / "out" / "data" / "estimates.parquet")
+    assert set(estimates["window_start"]) == {-2}
+    manifest = json.loads((tmp_path / "out" / "manifest.json").read_text())
+    assert manifest["study"]["name"] == "wider"
+
+
+@pytest.fixture(scope="module")
+def wider(light: Path) -> Path:
+    """A run with a window from the command line."""
+    dealwake("run", light, "--window", "-3:3", cwd=light.parent)
+    return light.parent / "reports" / "light_m3_3"
 
 
 def test_a_window_on_the_command_line_gets_a_folder_of_its_own(wider: Path) -> None:

@@ -33,7 +33,8 @@ def test_weak_instruments_are_told_in_every_document(
 ) -> None:
     study = weak.with_name("again.toml")
     listed = ", ".join(f'"{name}"' for name in instruments)
-    study.write_text(f'base = "weak.toml"\n[instruments]\nuse = [{listed}]\n[placebo]\ndraws = 0\n')
+    light = "[placebo]\ndraws = 0\n[scrutiny]\nrun = false\n"
+    study.write_text(f'base = "weak.toml"\n[instruments]\nuse = [{listed}]\n{light}')
     dealwake("run", study, "--out", tmp_path / "out", "--quiet")
     checks = pd.read_parquet(tmp_path / "out" / "data" / "diagnostics.parquet")
     strength = checks[checks["check"].str.contains("effective F")].iloc[0]
