@@ -114,7 +114,7 @@ class Axes:
 
 def axes(scene: Scene, x: Span, y: Span, x_words: str = "", y_words: str = "", *,
          top: float = 8.0, bottom: float = 0.0, left: float = 0.0, right: float = 10.0,
-         marked: tuple[bool, bool] = (True, True)) -> Axes:  # fmt: skip
+         marked: tuple[bool, bool] = (True, True), whole: bool = False) -> Axes:  # fmt: skip
     """Axes with ticks and words, as large as the sheet lets them be.
 
     Args:
@@ -125,8 +125,10 @@ def axes(scene: Scene, x: Span, y: Span, x_words: str = "", y_words: str = "", *
         left: the least that the left side takes, more if its ticks and words need it.
         right: left free at the right side.
         marked: whether the lower and the left side have ticks.
+        whole: the left side counts something, so that only whole numbers are marked.
     """
     y_ticks = ticks(y) if marked[1] else ()
+    y_ticks = tuple(value for value in y_ticks if not whole or float(value).is_integer())
     y_lines = y_words.count("\n") + 1 if y_words else 0
     widest = max((width_of(text, SIZE) for _, text in labels(y_ticks)), default=0.0)
     edge = max(left, 8 + 13.0 * y_lines + widest + TICK)

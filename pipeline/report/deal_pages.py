@@ -242,7 +242,7 @@ def _reaction_section(book: Book, deal: str, row: Record) -> Section | None:
     )  # fmt: skip
     days = book.rows("deal_days", deal)
     figure = days_figure(book.material, story, days, book.drawn[deal])
-    return Section("What the price did", (words, figure, days_table(days)))
+    return Section("What the price did", (words, figure, days_table(days, study.house.dates)))
 
 
 def days_figure(

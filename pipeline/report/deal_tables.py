@@ -8,15 +8,16 @@ from typing import Any
 import numpy as np
 
 from pipeline.core.rules import rule_title
-from pipeline.report.document import Cell, Column, Number, Row, Table, Text
+from pipeline.report.days import day_of
+from pipeline.report.document import Cell, Column, Day, Number, Row, Table, Text
 from pipeline.report.material import Material, capital, prose
 from pipeline.report.numerals import bp, count, in_unit, plain, true_minus, unit_digits
 
 Record = Mapping[str, Any]
 
 
-def days_table(days: list[Record]) -> Table:
-    """The sessions one by one."""
+def days_table(days: list[Record], dates: str) -> Table:
+    """The sessions one by one, ``dates`` in the house's way."""
     columns = (
         Column("Session"), Column("Date"), Column("Abnormal return", "bp"),
         Column("Expected return", "bp"), Column("Band, to each side", "bp"), Column("Outside"),
@@ -24,13 +25,18 @@ def days_table(days: list[Record]) -> Table:
     rows = tuple(
         (
             Text(true_minus(f"{int(day['day']):+d}" if day["day"] else "0")),
-            Text(str(day["date"])), bp(float(day["abnormal_return"])), bp(float(day["expected"])),
-            bp(float(day["reach"])),
+            _day(str(day["date"]), dates), bp(float(day["abnormal_return"])),
+            bp(float(day["expected"])), bp(float(day["reach"])),
             Text("outside" if abs(day["abnormal_return"]) > day["reach"] else ""),
         )
         for day in days
     )  # fmt: skip
     return Table("days", prose("Session by session"), columns, rows)
+
+
+def _day(text: str, dates: str) -> Cell:
+    day = day_of(text)
+    return Day(day, dates) if day else Text(text)
 
 
 def characteristics_table(material: Material, row: Record, quartiles: list[Record]) -> Table | None:

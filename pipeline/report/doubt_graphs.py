@@ -28,7 +28,7 @@ def assumptions_figure(material: Material) -> Figure | None:
     for name in ("estimate", "low", "high"):
         data[f"{name}_{unit.slug}"] = data.pop(name) * unit.scale
     title = prose("The effect of ", embedded(named(material.feature), "study"),
-                  " under every assumption, and what each would need to be true")  # fmt: skip
+                  _survives(data, f"estimate_{unit.slug}"))  # fmt: skip
     caption = prose(
         "Each line is the effect if the words beside it were true, with its ",
         material.percent("confidence_level"), " interval, in ", taken(unit.words, "study"),
@@ -42,6 +42,17 @@ def assumptions_figure(material: Material) -> Figure | None:
     )
     axis = axis_words(material.feature, unit)
     return Figure("assumptions", "assumptions", title, caption, alt, data, marks, axis, unit.slug)
+
+
+def _survives(data: pd.DataFrame, column: str) -> str:
+    """Whether any assumption turns the sign of what its column reports."""
+    turned = False
+    for _, part in data.groupby("lead"):
+        own = part.loc[part["reported"], column]
+        turned |= bool(len(own)) and bool((np.sign(part[column]) != np.sign(own.iloc[0])).any())
+    if turned:
+        return " changes sign under some assumption put to it"
+    return " keeps its sign under every assumption put to it"
 
 
 def _harshest(material: Material, told: pd.Series[float]) -> list[dict[str, object]]:
@@ -127,7 +138,8 @@ def extrapolation_figures(material: Material) -> list[Figure]:
         data[f"estimate_{unit.slug}"] = part["estimate"] * unit.scale
         feature = embedded(named(material.feature), "study")
         of = embedded(named(str(variable)), "check")
-        title = prose("Were ", of, " recorded without error: the effect of ", feature)
+        title = prose("Were ", of, " recorded without error the effect of ", feature,
+                      f" would lie {_moved(part)}")  # fmt: skip
         caption = prose(
             "Dots: the mean least-squares effect with error added to the variable by simulation. "
             "The lines carry them back to no error at all, at the left edge; they differ in the "
@@ -146,6 +158,21 @@ def extrapolation_figures(material: Material) -> list[Figure]:
     return figures
 
 
+def _moved(part: pd.DataFrame) -> str:
+    """Where the curves end without error, against the effect as it was recorded."""
+    curves = part[part["curve"] != "simulated"]
+    ends = curves.loc[curves["zeta"] == part["zeta"].min(), "estimate"]
+    recorded = part.loc[part["zeta"] == 0, "estimate"].mean()
+    if not len(ends) or not np.isfinite(recorded):
+        return "elsewhere"
+    if (np.sign(ends) != np.sign(recorded)).all():
+        return "on the other side of zero"
+    further = ends.abs() > abs(recorded)
+    if further.all():
+        return "further from zero"
+    return "nearer to zero" if not further.any() else "nearer to zero or further, by the curve"
+
+
 def violations_figure(material: Material) -> Figure | None:
     """The ends of the instrumented intervals as the instruments' own way grows."""
     frame = material.frames.get("violations")
@@ -156,8 +183,7 @@ def violations_figure(material: Material) -> Figure | None:
     data[f"low_{unit.slug}"] = frame["ci_low"].replace([np.inf, -np.inf], np.nan) * unit.scale
     data[f"high_{unit.slug}"] = frame["ci_high"].replace([np.inf, -np.inf], np.nan) * unit.scale
     feature = embedded(named(material.feature), "study")
-    title = prose("What is left of the instrumented effect of ", feature,
-                  " as its instruments act by another way")  # fmt: skip
+    title = prose("The instrumented interval of ", feature, _held(frame))
     caption = prose(
         "The two ends of each interval. Two stages and Anderson–Rubin: any direct effects up to "
         "the share, in either direction. Drawn around zero: direct effects that are more often "
@@ -172,3 +198,16 @@ def violations_figure(material: Material) -> Figure | None:
     alt = f"Ends of intervals by the share allowed; at the largest: {told}."
     axis = axis_words(material.feature, unit)
     return Figure("violations", "violations", title, caption, alt, data, {}, axis, unit.slug)
+
+
+def _held(frame: pd.DataFrame) -> str:
+    """When the interval made for weak instruments, or else the first kind, first holds zero."""
+    kinds = list(dict.fromkeys(frame["kind"].astype(str)))
+    kind = next((name for name in kinds if name.startswith("Anderson")), kinds[0])
+    part = frame[frame["kind"] == kind].sort_values("share")
+    holds = ((part["ci_low"] <= 0) & (part["ci_high"] >= 0)).to_numpy()
+    if holds[0]:
+        return " holds zero even if its instruments act by no other way"
+    if not holds.any():
+        return " stays clear of zero at every share asked about"
+    return " stays clear of zero until its instruments act in part by another way"

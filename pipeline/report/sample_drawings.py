@@ -43,7 +43,7 @@ def _calendar(figure: Figure) -> Scene:
     most = max(float(months["deals"].max()), 1.0)
     for month, letter in enumerate(LETTERS):
         scene.add(Words((left + (month + 0.5) * wide, top - 7), letter, "ink", SMALL, "middle"))
-    scene.add(Words((WIDTH - 12, top - 7), "year", "ink", SMALL, "end"))
+    scene.add(Words((WIDTH - 12, top - 7), "all", "ink", SMALL, "end"))
     for row, year in enumerate(years):
         own = months[months["year"] == year]
         counts = dict(zip(own["month"].astype(int), own["deals"].astype(int), strict=True))
@@ -71,6 +71,7 @@ def _shared(scene: Scene, figure: Figure, top: float) -> None:
     made = axes(
         scene, (-0.6, last + 0.6), (0.0, 1.1 * float(shared["deals"].max())),
         "Other deals whose headline window meets theirs", "Deals", top=top, left=52, right=60,
+        whole=True,
     )  # fmt: skip
     for others, deals in zip(shared["others"], shared["deals"], strict=True):
         if deals:
@@ -161,7 +162,7 @@ def _correction(figure: Figure) -> Scene:
     counts, edges = np.histogram(data["mills"], np.linspace(*span, 31))
     under = axes(
         scene, span, (0.0, 1.1 * float(counts.max())), "Correction (inverse Mills ratio)", "Deals",
-        top=292, left=62,
+        top=292, left=62, whole=True,
     )  # fmt: skip
     for low, high, deals in zip(edges[:-1], edges[1:], counts, strict=True):
         if deals:
@@ -173,7 +174,7 @@ def _placebo(figure: Figure) -> Scene:
     data, scene, own = figure.data, Scene(WIDTH, 230.0), figure.marks["own"]
     span = reach(data["from"], data["to"], [own], zero=True)
     made = axes(scene, span, (0.0, 1.2 * float(data["samples"].max())),
-                wrapped(figure.axis, 80, 1), "Samples")  # fmt: skip
+                wrapped(figure.axis, 80, 1), "Samples", whole=True)  # fmt: skip
     for low, high, samples in zip(data["from"], data["to"], data["samples"], strict=True):
         if samples:
             made.bar((low, high), (0.0, float(samples)), SERIES[0], 0.55, outline=True)

@@ -9,7 +9,15 @@ from pipeline.core.estimate import TestResult
 from pipeline.report.document import Figure, Piece, Quote
 from pipeline.report.headline import MEAN_REACTION
 from pipeline.report.material import Material, capital, embedded, named, prose, quote, taken
-from pipeline.report.numerals import PERCENT, amount, plain_digits, show, slug, unit_digits
+from pipeline.report.numerals import (
+    PERCENT,
+    amount,
+    plain_digits,
+    show,
+    slug,
+    true_minus,
+    unit_digits,
+)
 from pipeline.report.wording import axis_words, joined
 
 MONTHS = (
@@ -164,7 +172,9 @@ def balance_figure(material: Material) -> Figure | None:
     )  # fmt: skip
     order = frame["before"].abs().sort_values(ascending=False, kind="stable").index
     data = frame.loc[order].reset_index(drop=True)
-    data["label"] = [capital(material.study.words(str(name))) for name in data["variable"]]
+    data["label"] = [
+        true_minus(capital(material.study.words(str(name)))) for name in data["variable"]
+    ]
     alt = "Dots before and after weighting, one row a control: " + "; ".join(
         f"{row['label']} {show(row['before'], 2)} to {show(row['after'], 2)}"
         for _, row in data.iterrows()
@@ -221,8 +231,8 @@ def placebo_figure(material: Material) -> Figure | None:
     )  # fmt: skip
     caption = prose(
         "The statistic of the test “", taken(own.name, "test"), "” for the same companies moved to "
-        "dates without an announcement, as many bars as there are spans; the thick line is the "
-        "deals themselves. The further it stands from the bars the less such a mean is what "
+        "dates without an announcement; bars count the samples, the thick line is the deals "
+        "themselves. The further it stands from the bars the less such a mean is what "
         "these shares do on any date.",
     )  # fmt: skip
     edges = np.linspace(drawn.min(), drawn.max(), min(BINS, max(4, len(drawn) // 5)) + 1)

@@ -234,3 +234,39 @@ def test_the_way_the_answer_pushes_least_squares(low: float, high: float, told: 
         b for b in section(changed).blocks if isinstance(b, Table) and b.name == "both_ways"
     )
     assert told in table.notes[0].text
+
+
+def title_of(run: Results, name: str) -> str:
+    return next(
+        b.title.text for b in section(run).blocks if isinstance(b, Figure) and b.name == name
+    )
+
+
+def with_frame(run: Results, name: str, **columns: object) -> Results:
+    return replace(run, tables={**run.tables, name: run.tables[name].assign(**columns)})
+
+
+def test_the_pictures_say_by_rule_what_was_found() -> None:
+    """Each title follows the numbers to its other wording."""
+    run = doubted_run()
+    reported = run.tables["reported"]
+    kept = with_frame(run, "reported", estimate=reported["estimate"].abs() * -1)
+    turned = with_frame(run, "reported", estimate=reported["estimate"].abs())
+    titles = {title_of(one, "assumptions") for one in (kept, turned)}
+    assert len(titles) == 2
+    assert any("changes sign" in title for title in titles)
+    holding = with_frame(run, "violations", ci_low=-1.0, ci_high=1.0)
+    clear = with_frame(run, "violations", ci_low=-1.0, ci_high=-0.5)
+    assert "holds zero even if" in title_of(holding, "violations")
+    assert "stays clear of zero at every share" in title_of(clear, "violations")
+    added = run.tables["extrapolation"]
+    name = "added_error_run_up"
+    far = added["estimate"].where(added["curve"] == "simulated", 9 * added["estimate"].max())
+    near = added["estimate"].where(added["curve"] == "simulated", added["estimate"].max() / 99)
+    sign = np.sign(added.loc[added["zeta"] == 0, "estimate"].mean())
+    assert title_of(with_frame(run, "extrapolation", estimate=sign * far.abs()), name).endswith(
+        "further from zero"
+    )
+    assert title_of(with_frame(run, "extrapolation", estimate=sign * near.abs()), name).endswith(
+        "nearer to zero"
+    )
