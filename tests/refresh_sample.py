@@ -12,6 +12,7 @@ A browser (chromium) makes the picture that the README shows; without one the ol
 
 from __future__ import annotations
 
+import re
 import shutil
 import subprocess
 import sys
@@ -25,6 +26,8 @@ CONFIGS = ROOT / "configs"
 SAMPLE = ROOT / "reports" / "sample"
 DATA = ("estimates", "event_tests", "headline", "diagnostics", "sensitivity", "ledger", "findings")
 DOCUMENTS = ("report.html", "memo.docx", "tables.xlsx")
+PAGES = ("index", "D001", "D208")
+"""Deals whose pages are kept; links to the others are taken out of the sample."""
 PICTURE = "first_screen.png"
 
 
@@ -43,12 +46,26 @@ def main() -> None:
             shutil.copytree(out / folder, SAMPLE / folder)
         for name in DOCUMENTS:
             shutil.copy(out / name, SAMPLE / name)
+        (SAMPLE / "deals").mkdir()
+        for page in PAGES:
+            shutil.copy(out / "deals" / f"{page}.html", SAMPLE / "deals")
+        for file in (SAMPLE / "report.html", *(SAMPLE / "deals").glob("*.html")):
+            file.write_text(_unlinked(file.read_text(encoding="utf-8")), encoding="utf-8")
         (SAMPLE / "data").mkdir()
         for name in DATA:
             shutil.copy(out / "data" / f"{name}.parquet", SAMPLE / "data")
         if picture:
             kept.write_bytes(picture)
     _photograph()
+
+
+def _unlinked(page: str) -> str:
+    """A page whose links to deals that are not kept are plain words."""
+
+    def kept(link: re.Match[str]) -> str:
+        return link[0] if link[1] in PAGES else link[2]
+
+    return re.sub(r'<a href="(?:deals/)?([\w-]+)\.html">(.*?)</a>', kept, page)
 
 
 def _photograph() -> None:

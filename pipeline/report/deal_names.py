@@ -51,4 +51,6 @@ def all_deals(material: Material) -> Verbatim | None:
     """Words that lead to the list of all deals; None if the run makes no pages."""
     if not material.study.deal_pages or material.results.deals.empty:
         return None
-    return Verbatim("a page for each deal", "report", page_path(INDEX))
+    every = len(material.results.deals) <= material.study.deal_pages
+    words = "a page for each deal" if every else "a page for each of the deals listed first"
+    return Verbatim(words, "report", page_path(INDEX))

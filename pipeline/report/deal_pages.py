@@ -29,6 +29,7 @@ from pipeline.report.document import (
     Figure,
     Key,
     Paragraph,
+    Piece,
     Quote,
     Section,
     Table,
@@ -50,7 +51,7 @@ class Book:
 
     ``parts`` holds, for each frame, deal -> its rows; ``names`` the page of every deal;
     ``quartiles`` the rows of that frame; ``errors`` ``std_error: target`` -> its value;
-    ``drawn`` deal -> what its picture draws.
+    ``drawn`` deal -> what its picture draws; ``level`` is the confidence level in words.
     """
 
     material: Material
@@ -59,6 +60,7 @@ class Book:
     quartiles: list[Record]
     errors: Mapping[str, float]
     drawn: Mapping[str, pd.DataFrame]
+    level: tuple[Piece, ...]
 
     @classmethod
     def of(cls, results: Results, deals: Sequence[str]) -> Book:
@@ -82,7 +84,8 @@ class Book:
         errors = {str(row["name"]): float(row["value"]) for row in facts}
         names = page_names(deals)
         drawn = _drawn(frames["deal_days"]) if "deal_days" in frames else {}
-        return cls(material, parts, names, quartiles, errors, drawn)
+        level = material.percent("confidence_level")
+        return cls(material, parts, names, quartiles, errors, drawn, level)
 
     def rows(self, frame: str, deal: str) -> list[Record]:
         """The deal's rows of a frame, none if it has no such rows."""
@@ -227,12 +230,11 @@ def _reaction_section(book: Book, deal: str, row: Record) -> Section | None:
     if story is None:
         return None
     study = book.material.study
-    level = book.material.percent("confidence_level")
     words = prose(
         "Over sessions ", taken(window_label(study.headline.label), "study"),
         " its abnormal return was ", _quoted(story, "deal_stories", "car", scale=BP), " bp, rank ",
         _quoted(story, "deal_stories", "rank"), " of ", _quoted(story, "deal_stories", "deals"),
-        " (the first is the largest). Its own ", level, " interval, from how much this "
+        " (the first is the largest). Its own ", book.level, " interval, from how much this "
         "share moves on other days, runs from ",
         _quoted(story, "deal_stories", "ci_low", scale=BP), " to ",
         _quoted(story, "deal_stories", "ci_high", scale=BP), " bp. In units of its own standard "
@@ -241,13 +243,11 @@ def _reaction_section(book: Book, deal: str, row: Record) -> Section | None:
         "deal alone.",
     )  # fmt: skip
     days = book.rows("deal_days", deal)
-    figure = days_figure(book.material, story, days, book.drawn[deal])
+    figure = days_figure(book, story, days)
     return Section("What the price did", (words, figure, days_table(days, study.house.dates)))
 
 
-def days_figure(
-    material: Material, story: Record, days: list[Record], data: pd.DataFrame
-) -> Figure:
+def days_figure(book: Book, story: Record, days: list[Record]) -> Figure:
     """The abnormal return of each session against its band."""
     outside = _quoted(story, "deal_stories", "outside")
     traded = _quoted(story, "deal_stories", "traded")
@@ -264,12 +264,13 @@ def days_figure(
     title = prose(outside, " of ", traded, " sessions lie outside their band", *largest)
     caption = prose(
         "The abnormal return of each session in basis points. The band holds what this share does "
-        "on ", material.percent("confidence_level"), " of sessions without news; a filled square "
+        "on ", book.level, " of sessions without news; a filled square "
         "is outside it. The grey strip is the headline window.",
     )  # fmt: skip
     alt = f"Dots of {len(days)} abnormal returns with a band around zero; the table holds each."
-    window = material.study.headline
+    window = book.material.study.headline
     marks = {"from": float(window.start), "to": float(window.end)}
+    data = book.drawn[str(story["deal"])]
     return Figure("days", "days", title, caption, alt, data, marks, unit="")
 
 
