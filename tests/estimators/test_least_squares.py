@@ -44,6 +44,20 @@ def test_fixed_effects_equal_indicators(design: Design, kind: str) -> None:
     assert within.effects == {"industry": 9, "year": 6}
 
 
+@pytest.mark.parametrize("scale", [1e-9, 1e9])
+def test_the_scale_of_a_regressor_does_not_matter(design: Design, scale: float) -> None:
+    X = design.X.copy()
+    X[:, design.names.index("run_up")] *= scale
+    for fit in (ols, fixed_effects):
+        one, other = fit(design, FitOptions()), fit(replace(design, X=X), FitOptions())
+        for name in one.names:
+            factor = 1 / scale if name == "run_up" else 1.0
+            before, after = one.term(name), other.term(name)
+            for part in ("coefficient", "std_error"):
+                assert after[part] == pytest.approx(before[part] * factor, rel=1e-6)
+            assert after["statistic"] == pytest.approx(before["statistic"], rel=1e-6)
+
+
 @pytest.mark.parametrize("kind", ["hc2", "hc3"])
 def test_leverage_of_one_effect_is_counted(design: Design, kind: str) -> None:
     one = replace(design, effects={"industry": design.effects["industry"]})

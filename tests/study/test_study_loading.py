@@ -13,6 +13,12 @@ from pipeline.study.load import load_study
 from tests.study.studies import BASE, changed, loaded, one_refusal, refused, write
 
 
+def test_a_window_named_twice_is_measured_once(tmp_path: Path) -> None:
+    twice = ("[[0, 1], [-5, 5]]", "[[0, 1], [-1, 1], [0, 1], [-0, 0], [0, -0]]")
+    windows = loaded(tmp_path, twice).event_time.all_windows
+    assert windows == (Window(-1, 1), Window(0, 1), Window(0, 0))
+
+
 def test_a_file_becomes_a_study_with_its_defaults(tmp_path: Path) -> None:
     study = loaded(tmp_path)
     assert study.name == "study"
