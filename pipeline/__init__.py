@@ -1,6 +1,7 @@
 """Measure how share prices react to announced deals.
 
-The public face: ``Study`` (a study file, read with ``load_study``), ``run`` and ``Results``.
+The public face: ``Study`` (read with ``load_study``), and one function a command: ``draft``,
+``check``, ``run``, ``deal``, ``power``, ``contrast_runs`` and ``explain``.
 """
 
 from __future__ import annotations
@@ -14,18 +15,33 @@ for _variable in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
     os.environ.setdefault(_variable, "1")
 
 if TYPE_CHECKING:
+    from pipeline.calls import check, contrast_runs, deal, draft, explain, power, run
+    from pipeline.core.findings import InputProblem
     from pipeline.core.results import Results
-    from pipeline.flow import run
     from pipeline.study.load import load_study
     from pipeline.study.schema import Study
 
-__all__ = ["Results", "Study", "load_study", "run"]
+__all__ = [
+    "InputProblem",
+    "Results",
+    "Study",
+    "check",
+    "contrast_runs",
+    "deal",
+    "draft",
+    "explain",
+    "load_study",
+    "power",
+    "run",
+]
 
+_COMMANDS = ("check", "contrast_runs", "deal", "draft", "explain", "power", "run")
 _HOMES = {
+    "InputProblem": "pipeline.core.findings",
     "Results": "pipeline.core.results",
     "Study": "pipeline.study.schema",
     "load_study": "pipeline.study.load",
-    "run": "pipeline.flow",
+    **dict.fromkeys(_COMMANDS, "pipeline.calls"),
 }
 
 

@@ -12,7 +12,7 @@ from pipeline.screen import finding_dict, show_finding
 if TYPE_CHECKING:
     from collections.abc import Sequence
 
-    from pipeline.draft.lines import Line
+    from pipeline.drafting.lines import Line
     from pipeline.flow.drafted import Drafted
 
 

@@ -8,7 +8,7 @@ from pathlib import Path
 
 from pipeline.core.clock import Progress
 from pipeline.core.findings import Finding, InputProblem, problem
-from pipeline.draft.make import Draft, draft
+from pipeline.drafting.make import Draft, draft
 from pipeline.flow.commands import check
 from pipeline.study.load import load_study
 

@@ -23,7 +23,7 @@ PATH_KEYS = (
 FILE_KEYS = ("base",)
 
 
-def load_study(path: Path, overrides: Mapping[str, Any] | None = None) -> Study:
+def load_study(path: Path | str, overrides: Mapping[str, Any] | None = None) -> Study:
     """Read a study file and all it inherits from.
 
     Args:
@@ -33,7 +33,7 @@ def load_study(path: Path, overrides: Mapping[str, Any] | None = None) -> Study:
     Raises:
         InputProblem: with every finding about the file at once.
     """
-    path = path.resolve()
+    path = Path(path).resolve()
     raw = _merge(_read(path, ()), overrides or {})
     raw.setdefault("name", path.stem)
     try:

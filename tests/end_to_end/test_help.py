@@ -27,7 +27,7 @@ def test_help_imports_nothing_heavy() -> None:
 
 
 def test_each_command_has_help() -> None:
-    for command in ("run", "check", "deal", "power", "explain"):
+    for command in ("draft", "run", "check", "deal", "power", "explain"):
         done = subprocess.run(
             [sys.executable, "-m", "pipeline", command, "--help"],
             cwd=ROOT, capture_output=True, text=True, check=False,

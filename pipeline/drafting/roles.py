@@ -6,7 +6,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Final
 
-from pipeline.draft.signs import Signs
+from pipeline.drafting.signs import Signs
 from pipeline.inputs.quoted import LARGEST
 
 PROVES, ALLOWS, NEVER = 1.0, 0.5, 0.0

@@ -8,7 +8,7 @@ from dataclasses import dataclass
 
 import pandas as pd
 
-from pipeline.draft.likeness import likeness
+from pipeline.drafting.likeness import likeness
 from pipeline.inputs.contracts import READ, read_dates
 from pipeline.inputs.date_formats import (
     DAY_FIRST,

@@ -8,15 +8,15 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.draft.beside import laid_long
-from pipeline.draft.features import outcome_of
-from pipeline.draft.kinds import Recognised, Sorted, sort_tables
-from pipeline.draft.lines import Line, answered, written
-from pipeline.draft.measured import measured_lines
-from pipeline.draft.outcomes import outcome_lines
-from pipeline.draft.roles import KINDS
-from pipeline.draft.sources import date_lines, source_lines
-from pipeline.draft.tables import Found, tables_in
+from pipeline.drafting.beside import laid_long
+from pipeline.drafting.features import outcome_of
+from pipeline.drafting.kinds import Recognised, Sorted, sort_tables
+from pipeline.drafting.lines import Line, answered, written
+from pipeline.drafting.measured import measured_lines
+from pipeline.drafting.outcomes import outcome_lines
+from pipeline.drafting.roles import KINDS
+from pipeline.drafting.sources import date_lines, source_lines
+from pipeline.drafting.tables import Found, tables_in
 
 NEEDED = {"deals": "deals", "prices": "prices", "benchmarks": "benchmarks"}
 HEAD = (

@@ -8,9 +8,9 @@ from dataclasses import replace
 import pandas as pd
 
 from pipeline.core.findings import InputProblem
-from pipeline.draft.roles import small
-from pipeline.draft.signs import CURRENCIES, signs_of
-from pipeline.draft.tables import Found
+from pipeline.drafting.roles import small
+from pipeline.drafting.signs import CURRENCIES, signs_of
+from pipeline.drafting.tables import Found
 from pipeline.inputs.files import ROW, read_table
 from pipeline.returns.sessions import known_exchanges
 

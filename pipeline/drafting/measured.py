@@ -8,12 +8,12 @@ from dataclasses import replace
 import numpy as np
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.draft.dates import Dating
-from pipeline.draft.features import numbers
-from pipeline.draft.history import DAILY, History, Windows, history_of, windows_of
-from pipeline.draft.kinds import Recognised, Sorted
-from pipeline.draft.lines import Line
-from pipeline.draft.outcomes import regression
+from pipeline.drafting.dates import Dating
+from pipeline.drafting.features import numbers
+from pipeline.drafting.history import DAILY, History, Windows, history_of, windows_of
+from pipeline.drafting.kinds import Recognised, Sorted
+from pipeline.drafting.lines import Line
+from pipeline.drafting.outcomes import regression
 from pipeline.inputs.quoted import LARGEST, SMALLEST
 
 MOST_PRICED = 0.8

@@ -6,12 +6,12 @@ import os
 from collections.abc import Iterator, Mapping
 from pathlib import Path
 
-from pipeline.draft.dates import Dating
-from pipeline.draft.kinds import Recognised, Sorted
-from pipeline.draft.lines import Line
-from pipeline.draft.matching import Match
-from pipeline.draft.roles import PROVES
-from pipeline.draft.signs import COMMA, Signs
+from pipeline.drafting.dates import Dating
+from pipeline.drafting.kinds import Recognised, Sorted
+from pipeline.drafting.lines import Line
+from pipeline.drafting.matching import Match
+from pipeline.drafting.roles import PROVES
+from pipeline.drafting.signs import COMMA, Signs
 
 DATE_KEY, ZONE_KEY = "inputs.date_format", "inputs.timestamp_zone"
 READ_DATES = ("announced_at", "date", "as_of", "rumoured_at", "completed_at", "withdrawn_at",

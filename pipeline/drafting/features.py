@@ -7,11 +7,11 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from pipeline.draft.kinds import Recognised
-from pipeline.draft.likeness import likeness
-from pipeline.draft.lines import Line
-from pipeline.draft.signs import Signs
-from pipeline.draft.words import AFTERWARDS, CHOICES, OUTCOMES
+from pipeline.drafting.kinds import Recognised
+from pipeline.drafting.likeness import likeness
+from pipeline.drafting.lines import Line
+from pipeline.drafting.signs import Signs
+from pipeline.drafting.words import AFTERWARDS, CHOICES, OUTCOMES
 from pipeline.inputs.contracts import READ
 from pipeline.inputs.deal_checks import PERSONAL
 

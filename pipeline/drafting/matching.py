@@ -5,11 +5,11 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
-from pipeline.draft.likeness import EXACT, likeness
-from pipeline.draft.roles import ALLOWS, Role
-from pipeline.draft.signs import Signs
-from pipeline.draft.tables import Found
-from pipeline.draft.words import COLUMNS
+from pipeline.drafting.likeness import EXACT, likeness
+from pipeline.drafting.roles import ALLOWS, Role
+from pipeline.drafting.signs import Signs
+from pipeline.drafting.tables import Found
+from pipeline.drafting.words import COLUMNS
 
 CLOSE_CALL = 0.3
 

@@ -11,7 +11,7 @@ from zoneinfo import available_timezones
 import numpy as np
 import pandas as pd
 
-from pipeline.draft.dates import Dating, dating_of
+from pipeline.drafting.dates import Dating, dating_of
 from pipeline.inputs.codes import CHECKS
 from pipeline.inputs.contracts import READ, is_missing, read_dates
 from pipeline.inputs.rates import LARGE, SMALL

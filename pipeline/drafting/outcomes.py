@@ -7,7 +7,7 @@ from collections.abc import Iterator, Mapping, Sequence
 import numpy as np
 
 from pipeline.core.outcome import UNITS
-from pipeline.draft.features import (
+from pipeline.drafting.features import (
     ROWS,
     Choice,
     Regressors,
@@ -18,9 +18,9 @@ from pipeline.draft.features import (
     regressors_of,
     repeated_company,
 )
-from pipeline.draft.kinds import Recognised
-from pipeline.draft.lines import Line
-from pipeline.draft.signs import dated
+from pipeline.drafting.kinds import Recognised
+from pipeline.drafting.lines import Line
+from pipeline.drafting.signs import dated
 from pipeline.inputs.units import unit_doubt
 
 TREATMENT = "regression.treatment"

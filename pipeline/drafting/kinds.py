@@ -5,12 +5,12 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, field
 
-from pipeline.draft.beside import series_of, value_of
-from pipeline.draft.likeness import likeness
-from pipeline.draft.matching import Match, match
-from pipeline.draft.roles import GIVEN_AS_RETURNS, KINDS, Role, small
-from pipeline.draft.tables import Found
-from pipeline.draft.words import TABLES
+from pipeline.drafting.beside import series_of, value_of
+from pipeline.drafting.likeness import likeness
+from pipeline.drafting.matching import Match, match
+from pipeline.drafting.roles import GIVEN_AS_RETURNS, KINDS, Role, small
+from pipeline.drafting.tables import Found
+from pipeline.drafting.words import TABLES
 
 LONG = 20  # rows a company from which on a table is a history
 CLOSE_CALL = 0.25

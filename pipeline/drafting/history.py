@@ -7,8 +7,8 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
-from pipeline.draft.kinds import Recognised
-from pipeline.draft.signs import dated
+from pipeline.drafting.kinds import Recognised
+from pipeline.drafting.signs import dated
 
 WANTED, GAP, FEWEST = (-250, -31), 30, 120
 SHORT_GAP, LEAST = 10, 30

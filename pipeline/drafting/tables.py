@@ -9,7 +9,7 @@ from pathlib import Path
 import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, problem
-from pipeline.draft.signs import Signs, signs_of
+from pipeline.drafting.signs import Signs, signs_of
 from pipeline.inputs.files import ROW, Source, read_table
 
 LONG = 100_000

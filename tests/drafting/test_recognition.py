@@ -14,11 +14,11 @@ import pandas as pd
 import pytest
 
 from pipeline.core.findings import InputProblem
-from pipeline.draft.history import History, windows_of
-from pipeline.draft.likeness import EXACT, PARTLY, likeness
-from pipeline.draft.lines import toml
-from pipeline.draft.make import Draft, draft
-from pipeline.draft.signs import signs_of
+from pipeline.drafting.history import History, windows_of
+from pipeline.drafting.likeness import EXACT, PARTLY, likeness
+from pipeline.drafting.lines import toml
+from pipeline.drafting.make import Draft, draft
+from pipeline.drafting.signs import signs_of
 from pipeline.flow.drafted import drafted
 from pipeline.inputs.codes import is_isin
 from pipeline.study.load import load_study
