@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from pipeline.core.findings import Finding, Severity
+from pipeline.drafting.agreement import agreed
 from pipeline.drafting.beside import laid_long
 from pipeline.drafting.features import outcome_of
 from pipeline.drafting.kinds import Recognised, Sorted, sort_tables
@@ -66,7 +67,7 @@ def draft(folder: Path, place: Path, answers: Mapping[str, object]) -> Draft:
         InputProblem: ``missing_file`` if the folder holds no table.
     """
     tables, refused = tables_in(folder)
-    kinds = _kinds(laid_long(tables))
+    kinds = agreed(_kinds(laid_long(tables)))
     missing = [*refused, *_lacking(kinds)]
     lines = [*_title(kinds, folder)]
     if any(kind in kinds.by_kind for kind in ("deals", "ready")):

@@ -10,7 +10,7 @@ from pipeline.drafting.dates import Dating
 from pipeline.drafting.kinds import Recognised, Sorted
 from pipeline.drafting.lines import Line
 from pipeline.drafting.matching import Match
-from pipeline.drafting.roles import PROVES
+from pipeline.drafting.roles import PROVES, SECURITY_CODES
 from pipeline.drafting.signs import COMMA, Signs
 
 DATE_KEY, ZONE_KEY = "inputs.date_format", "inputs.timestamp_zone"
@@ -101,6 +101,8 @@ def _evidence(found: Match, signs: Signs) -> str:
         shown = f"numbers from {signs.low:,.6g} to {signs.high:,.6g}"
     elif not shown:
         shown = f"{signs.distinct:,} different words in {signs.rows:,} rows"
+    if found.role == "security" and found.shown == PROVES and signs.code not in SECURITY_CODES:
+        return f"its codes are those of the price file ({shown})"
     if found.said == 0:
         return shown + "; its name does not say so"
     return f"its name, and {shown}"

@@ -173,6 +173,19 @@ def test_prices_as_returns_in_percent(folder: Path) -> None:
     assert value(found, "series.prices.unit") == "percent"
 
 
+def test_the_company_is_named_as_the_price_file_names_it(folder: Path) -> None:
+    def named(table: pd.DataFrame) -> pd.DataFrame:
+        isins = [PUBLISHED_ISIN[at % 3] for at in range(len(table))]
+        return table.rename(columns={"security": "short"}).assign(isin=isins, ticker=isins)
+
+    change(folder, "deals", named)
+    found = made(folder)
+    line = next(item for item in found.lines if item.path == "inputs.columns.deals.security")
+    assert (line.value, line.doubtful) == ("short", False)
+    assert "price file" in line.reason
+    assert found.missing == ()
+
+
 def test_a_decimal_comma_is_asked_about(folder: Path) -> None:
     def commas(table: pd.DataFrame) -> pd.DataFrame:
         return table.assign(size=table["size"].str.replace(".", ","))
