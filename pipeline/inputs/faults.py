@@ -31,12 +31,21 @@ def csv_fault(source: Source) -> InputProblem | None:
                 return _too_long(source, line)
             width = len(next(csv.reader([header], delimiter=mark), []))
             rows = csv.reader(text, delimiter=mark)
+            row: list[str] = []
             for number, row in enumerate(rows, start=source.header_row + 1):
                 line = number + 1
                 if row and len(row) != width:
                     remedy = f"Complete the row, or put text that holds a '{mark}' in quotes."
                     expected = f"{width} cells, as the header has"
                     return _fault(source, f"{len(row)} cells", expected, remedy, number)
+            if any("\n" in cell for cell in row[-1:]):  # it took the rest of the file with it
+                return _fault(
+                    source,
+                    "a quotation mark that is never closed",
+                    "quotation marks in pairs",
+                    "Close it, or double it where it belongs to the text.",
+                    line - 1,
+                )
     except UnicodeDecodeError:
         return problem(
             "unreadable_file",
