@@ -18,6 +18,7 @@ from pipeline.core.prices import Integers
 from pipeline.inputs.relations import FORMATS, Relation, code_of, day_of, literal, quoted, spellings
 from pipeline.inputs.source import Only
 
+UNTOLD = "DATE '0001-01-01'"
 # Vectors of 2,048 rows that are drawn at a time.
 VECTORS = 64
 A_DAY = 86_400
@@ -55,7 +56,8 @@ def plain_rows(
     relation.base.register("spans", only.spans[["first", "last"]].assign(number=number))
     relation.base.execute(
         "CREATE TEMP TABLE touched AS "
-        "SELECT number, CAST(first AS DATE) AS first, CAST(last AS DATE) AS last FROM spans"
+        "SELECT number, CAST(first AS DATE) AS first, CAST(last AS DATE) AS last FROM spans "
+        f"UNION ALL SELECT DISTINCT wanted_number, {UNTOLD}, {UNTOLD} FROM codes"
     )
     try:
         drawn = _columns(relation.base.execute(statement), _most(only.spans))
@@ -74,20 +76,21 @@ def _statement(
     if day is None or None in cells:
         return None
     when = day_of(date, kinds[date], date_format)
-    within = f"{when} BETWEEN touched.first AND touched.last"
     limits = ""
-    if kinds[date] == "VARCHAR":  # a date that cannot be compared must not be passed over
-        within = f"({when} IS NULL OR {within})"
-    else:
+    if kinds[date] != "VARCHAR":
         first, last = only.day_limits() or ("", "")
         limits = f" WHERE {quoted(date)} BETWEEN DATE '{first}' AND DATE '{last}'"
-    # Each row meets one code and is kept or not: none is read twice where spans are many.
+    # Each row meets one code and is kept or not: none is read twice where spans are many. A date
+    # that cannot be compared meets a span of its own, and is then refused.
     days = f"CAST({day} AS DATE) - DATE '1970-01-01'"
+    coded = (
+        f"SELECT cells.*, wanted_number AS code_number, coalesce({when}, {UNTOLD}) AS compared_day "
+        f"FROM {relation.view} AS cells JOIN codes ON {code_of(security)} = wanted_code{limits}"
+    )
     return (
-        f"SELECT codes.number, {days} AS day, {cells[0]} AS value, {cells[1]} AS volume "
-        f"FROM {relation.view} "
-        f"JOIN codes ON {code_of(security)} = codes.code "
-        f"SEMI JOIN touched ON touched.number = codes.number AND {within}{limits}"
+        f"SELECT code_number AS number, {days} AS day, {cells[0]} AS value, {cells[1]} AS volume "
+        f"FROM ({coded}) SEMI JOIN touched ON touched.number = code_number "
+        "AND compared_day BETWEEN touched.first AND touched.last"
     )
 
 

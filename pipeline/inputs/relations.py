@@ -111,7 +111,7 @@ def code_of(name: str) -> str:
 
 
 def spellings(codes: Sequence[str]) -> pd.DataFrame:
-    """code, number: each code by its place, as it is and, if it is a whole number 5, as 5.0.
+    """wanted_code, wanted_number: each code by its place; a whole number 5 as 5.0 besides.
 
     The contract reads both as one; so turned over, no cell has to be rewritten to be compared.
     """
@@ -119,8 +119,8 @@ def spellings(codes: Sequence[str]) -> pd.DataFrame:
     whole = [at for at, code in enumerate(codes) if code.isascii() and code.isdigit()]
     return pd.DataFrame(
         {
-            "code": [*codes, *(f"{codes[at]}.0" for at in whole)],
-            "number": np.concatenate([number, number[whole]]),
+            "wanted_code": [*codes, *(f"{codes[at]}.0" for at in whole)],
+            "wanted_number": np.concatenate([number, number[whole]]),
         }
     )
 
@@ -142,24 +142,26 @@ def day_of(name: str, kind: str, date_format: str) -> str:
 def touched(relation: Relation, code: str, day: str, only: Only) -> str:
     """The condition that keeps the rows of ``only``; registers what it compares with.
 
+    Its columns have names that no table's column has: one would be compared with itself.
     ``code`` and ``day`` are expressions; a row of a wanted security without a date stays.
     """
     codes = spellings(only.codes)
-    relation.base.register("wanted", codes)
+    relation.base.register("wanted_rows", codes)
     if only.spans is None:
-        return f"{code} IN (SELECT code FROM wanted)"
-    relation.base.register("wanted", codes_with_spans(codes, only))
+        return f"{code} IN (SELECT wanted_code FROM wanted_rows)"
+    relation.base.register("wanted_rows", codes_with_spans(codes, only))
     return (
-        f"EXISTS (SELECT 1 FROM wanted WHERE wanted.code = {code} AND ({day} IS NULL OR "
-        f"{day} BETWEEN wanted.first AND wanted.last))"
+        f"EXISTS (SELECT 1 FROM wanted_rows WHERE wanted_code = {code} AND ({day} IS NULL OR "
+        f"{day} BETWEEN wanted_first AND wanted_last))"
     )
 
 
 def codes_with_spans(codes: pd.DataFrame, only: Only) -> pd.DataFrame:
-    """code, first, last: every spelling of a code with each of its spans."""
+    """wanted_code, wanted_first, wanted_last: every spelling of a code with each of its spans."""
     assert only.spans is not None
-    named = codes.assign(security=np.asarray(only.codes, dtype=object)[codes["number"]])
-    return named.merge(only.spans, on="security")[["code", "first", "last"]]
+    named = codes.assign(security=np.asarray(only.codes, dtype=object)[codes["wanted_number"]])
+    spans = only.spans.rename(columns={"first": "wanted_first", "last": "wanted_last"})
+    return named.merge(spans, on="security")[["wanted_code", "wanted_first", "wanted_last"]]
 
 
 def select(relation: Relation, names: list[str], condition: str = "") -> str:

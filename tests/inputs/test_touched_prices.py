@@ -138,6 +138,25 @@ def test_codes_are_compared_as_they_are_read(tmp_path: Path) -> None:
     assert found["security"].astype(str).tolist() == ["007"] * 3 + ["5"] * 2
 
 
+@pytest.mark.parametrize("name", ["code", "first", "number", "wanted", "codes", "day"])
+def test_whatever_the_columns_are_called(
+    name: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Names that the statements use themselves."""
+    expected = plainly(by_hand(table(), SOME))
+    for ours in ("security", "date"):
+        source = written(tmp_path, "parquet", table().rename(columns={ours: name}))
+        source = Source("prices", source.path, {ours: name})
+        assert read_plain(source, "close", SOME, "") is not None
+        with monkeypatch.context() as slow:
+            slow.setattr(market, "read_plain", lambda *_: None)
+            found, _ = read_prices(source, SOME, "")
+        pd.testing.assert_frame_equal(plainly(found), expected, check_dtype=False)
+        pd.testing.assert_frame_equal(
+            plainly(read_prices(source, SOME, "")[0]), expected, check_dtype=False
+        )
+
+
 DATES = st.dates(pd.Timestamp("2019-01-01").date(), pd.Timestamp("2021-12-31").date())
 SPANS = st.lists(
     st.tuples(st.sampled_from(CODES), DATES, st.integers(0, 90)), min_size=1, max_size=12
