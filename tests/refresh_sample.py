@@ -1,7 +1,8 @@
-"""Make again what is committed and made from the code: the demo's sample and two study files.
+"""Make again what is committed and made from the code: the demo's sample, study files, snapshots.
 
 ``reports/sample/`` is the committed sample of the demo's documents; ``configs/every_key.toml`` and
-``configs/study.schema.json`` say what a study file may hold.
+``configs/study.schema.json`` say what a study file may hold; ``tests/report/snapshots/`` holds
+every renderer's output for one document (:mod:`tests.report.refresh_snapshots`).
 
 Run from the project's root after a change of the numbers or the documents:
 
@@ -20,6 +21,7 @@ import tempfile
 from pathlib import Path
 
 from pipeline.study.describe import every_key, json_schema
+from tests.report import refresh_snapshots
 
 ROOT = Path(__file__).resolve().parents[1]
 CONFIGS = ROOT / "configs"
@@ -33,6 +35,7 @@ PICTURE = "first_screen.png"
 
 def main() -> None:
     """Write the study files, run the demo and keep the small part of it."""
+    refresh_snapshots.main()
     (CONFIGS / "every_key.toml").write_text(every_key(), encoding="utf-8")
     (CONFIGS / "study.schema.json").write_text(json_schema(), encoding="utf-8")
     with tempfile.TemporaryDirectory() as base:

@@ -18,6 +18,7 @@ from pipeline.core.house import ISO, PLAIN, House
 Key = str | int | float | bool
 
 
+NOTHING = "None."
 SHORTENED = "The first rows; all of them stand in tables.xlsx."
 
 
@@ -226,6 +227,11 @@ class Table:
     def __post_init__(self) -> None:
         if any(len(row) != len(self.columns) for row in self.rows):
             raise ValueError(f"table {self.name}: each row needs {len(self.columns)} cells")
+
+    def numeric(self, at: int) -> bool:
+        """Whether a column, not the first, holds single numbers alone."""
+        cells = [row[at] for row in self.rows if row[at] is not None]
+        return at > 0 and bool(cells) and all(isinstance(cell, Number) for cell in cells)
 
     @property
     def page_rows(self) -> tuple[Row, ...]:

@@ -136,7 +136,14 @@ def _logo(word: Any, logo: Logo | None) -> None:
     holder = word.add_paragraph()
     width, height = placed(logo)
     picture = holder.add_run().add_picture(io.BytesIO(pixels(logo)), Mm(width), Mm(height))
-    picture._inline.docPr.set("descr", clean(logo.words))
+    _describe(picture, logo.words)
+
+
+def _describe(picture: Any, words: str) -> None:
+    """Words for readers who cannot see a picture, and no room kept around it."""
+    picture._inline.docPr.set("descr", clean(words))
+    for side in ("T", "B", "L", "R"):
+        picture._inline.set(f"dist{side}", "0")
 
 
 def _footer(footer: Any, document: Document) -> None:
@@ -179,7 +186,7 @@ def _figure(word: Any, figure: Figure, width: int, numbers: Mapping[str, str]) -
     holder = word.add_paragraph()
     keep_with_next(holder)
     shape = holder.add_run().add_picture(io.BytesIO(png(figure)), width=min(width, Mm(160)))
-    shape._inline.docPr.set("descr", clean(figure.alt))
+    _describe(shape, figure.alt)
     below = runs(word.add_paragraph(), figure.caption)
     for run in below.runs:
         run.font.size = Pt(8.5)

@@ -7,11 +7,12 @@ from typing import Any
 
 from docx.enum.style import WD_STYLE_TYPE
 from docx.enum.table import WD_TABLE_ALIGNMENT
+from docx.enum.text import WD_ALIGN_PARAGRAPH
 from docx.oxml import OxmlElement
 from docx.oxml.ns import qn
 from docx.shared import Emu, Pt
 
-from pipeline.report.document import SHORTENED, Figure, Table
+from pipeline.report.document import NOTHING, SHORTENED, Figure, Table
 from pipeline.report.docx_fields import add_number, runs
 from pipeline.report.numerals import clean, lines
 
@@ -92,6 +93,9 @@ def table_style(word: Any) -> None:
 def add_table(word: Any, table: Table, width: int, numbers: Mapping[str, str]) -> None:
     """A table with three rules, its heading repeated on every page, its title above."""
     caption(word, table, numbers)
+    if not table.rows:
+        word.add_paragraph(NOTHING)
+        return
     style = "Table Small" if len(table.columns) > 4 else "Table Text"
     rows = table.page_rows
     found = word.add_table(rows=1 + len(rows), cols=len(table.columns))
@@ -104,10 +108,11 @@ def add_table(word: Any, table: Table, width: int, numbers: Mapping[str, str]) -
     for column, wide in grid:
         column.width = wide
     head: list[tuple[str, ...]] = [(clean(column.heading),) for column in table.columns]
-    _fill(found.rows[0], head, widths, style, bold=True)
+    right = [table.numeric(at) for at in range(len(table.columns))]
+    _fill(found.rows[0], head, widths, style, right, bold=True)
     found.rows[0]._tr.get_or_add_trPr().append(OxmlElement("w:tblHeader"))
     for at, (line, row) in enumerate(zip(found.rows[1:], rows, strict=True)):
-        _fill(line, [lines(cell) for cell in row], widths, style, form=table.form)
+        _fill(line, [lines(cell) for cell in row], widths, style, right, form=table.form)
         if at == table.footer:
             _rule(line, "top")
     _below(word, table)
@@ -128,7 +133,7 @@ def _need(table: Table, at: int) -> float:
 
 def _fill(
     row: Any, content: list[tuple[str, ...]], widths: list[Any], style: str,
-    *, bold: bool = False, form: bool = False,
+    right: list[bool], *, bold: bool = False, form: bool = False,
 ) -> None:  # fmt: skip
     row._tr.get_or_add_trPr().append(OxmlElement("w:cantSplit"))
     for at, (texts, holder) in enumerate(zip(content, row.cells, strict=True)):
@@ -138,12 +143,9 @@ def _fill(
         if form:
             paragraph.paragraph_format.space_after = Pt(10)
             keep_with_next(paragraph)
-        for number, text in enumerate(texts):
-            run = paragraph.add_run()
-            if number:
-                run.add_break()
-            run.add_text(text)
-            run.bold = bold or None
+        if right[at]:
+            paragraph.alignment = WD_ALIGN_PARAGRAPH.RIGHT
+        paragraph.add_run("\n".join(texts)).bold = bold or None
         if form and at:
             _edge(holder, "bottom")
 

@@ -100,7 +100,9 @@ def _cell(cell: Cell, dates: str) -> Cell:
     match cell:
         case Text(text):
             day = day_of(text)
-            return Day(day, dates) if day else replace(cell, text=redated(text, dates))
+            if day and not cell.href:
+                return Day(day, dates)
+            return replace(cell, text=redated(text, dates))
         case Interval() if cell.words:
             return replace(cell, words=redated(cell.words, dates))
     return cell

@@ -86,10 +86,19 @@ def _template(name: str) -> Template:
         "table_markup": table_markup,
         "address": address,
         "placed": placed,
+        "css_string": css_string,
     }
     css = environment.loader.get_source(environment, "page.css")[0] if environment.loader else ""
     environment.globals["css"] = Markup(css)
     return environment.get_template(name)
+
+
+def css_string(text: str) -> Markup:
+    """``text`` as a string of a style sheet: all but letters and digits by their numbers."""
+    marks = (
+        mark if mark.isalnum() and mark.isascii() else f"\\{ord(mark):x} " for mark in clean(text)
+    )
+    return Markup('"{}"').format(Markup("".join(marks)))
 
 
 def sources(paragraphs: Iterable[Paragraph]) -> tuple[str, ...]:

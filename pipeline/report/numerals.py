@@ -37,6 +37,13 @@ def slug(text: str, joint: str = "_") -> str:
     return re.sub(r"[^a-z0-9]+", joint, text.lower()).strip(joint) or "part"
 
 
+def broken(word: str, longest: int, piece: int = 14) -> list[str]:
+    """A word of more than ``longest`` characters in pieces that a narrow column can hold."""
+    if len(word) <= longest:
+        return [word]
+    return [word[at : at + piece] for at in range(0, len(word), piece)]
+
+
 def true_minus(text: str) -> str:
     """``text`` with the hyphen before a number replaced by a minus sign, as in [−1, +1]."""
     return _HYPHEN_NUMBER.sub(MINUS, text)

@@ -16,13 +16,13 @@ from matplotlib.ft2font import FT2Font
 from pipeline.core.house import Logo
 from pipeline.core.results import Results
 from pipeline.report.document import (
+    NOTHING,
     SHORTENED,
     Block,
     Bullets,
     Callout,
     Document,
     Figure,
-    Number,
     Paragraph,
     Reference,
     Row,
@@ -33,7 +33,7 @@ from pipeline.report.docx_parts import column_widths
 from pipeline.report.figures import svg
 from pipeline.report.logo import placed
 from pipeline.report.memo import memo
-from pipeline.report.numerals import clean, lines
+from pipeline.report.numerals import broken, clean, lines
 from pipeline.report.typeset import typeset
 
 Part = dict[str, Any]
@@ -41,10 +41,11 @@ Part = dict[str, Any]
 # A row of more characters may break across pages: kept whole it might not fit on one.
 WHOLE = 900
 # A longer run without a place to break gets some, so that a narrow column never clips it.
-LONGEST = 14
+IN_CELLS, IN_PROSE = 14, 60
 BREAK = "\N{ZERO WIDTH SPACE}"
 WIDTH = 10_000
 FIGURE_SHARE = 0.8
+UNTITLED = "Untitled"
 
 
 def render(results: Results) -> dict[str, bytes]:
@@ -87,7 +88,7 @@ def _words(document: Document) -> str:
 def _paper(document: Document) -> Part:
     house, numbers = document.house, document.numbers
     return {
-        "title": _plain(document.title),
+        "title": _plain(document.title) or UNTITLED,
         "short": _plain(document.title)[:90],
         "subtitle": _plain(document.subtitle),
         "page": house.page,
@@ -143,7 +144,7 @@ def _pieces(paragraph: Paragraph) -> Iterator[Part]:
     for piece in paragraph.pieces:
         text = clean(piece if isinstance(piece, str) else piece.text)
         to = _anchor(piece.name) if isinstance(piece, Reference) else ""
-        yield {"text": _breakable(text, 60), "to": to}
+        yield {"text": _breakable(text, IN_PROSE), "to": to}
 
 
 def _anchor(name: str) -> str:
@@ -152,22 +153,19 @@ def _anchor(name: str) -> str:
 
 def _breakable(text: str, longest: int) -> str:
     """``text`` with places to break in runs of more than ``longest`` characters."""
-    words = text.split(" ")
-    return " ".join(_broken(word) if len(word) > longest else word for word in words)
-
-
-def _broken(word: str) -> str:
-    return BREAK.join(word[at : at + LONGEST] for at in range(0, len(word), LONGEST))
+    return " ".join(BREAK.join(broken(word, longest)) for word in text.split(" "))
 
 
 def _table(table: Table, numbers: Mapping[str, str]) -> Part:
     widths = column_widths(table, WIDTH)
     columns = [
-        {"heading": _breakable(_plain(column.heading), LONGEST), "width": width / WIDTH,
-         "right": _numbers(table, at)}
+        {"heading": _breakable(_plain(column.heading), IN_CELLS), "width": width / WIDTH,
+         "right": table.numeric(at)}
         for at, (column, width) in enumerate(zip(table.columns, widths, strict=True))
     ]  # fmt: skip
     notes = [_paragraph(note) for note in table.notes]
+    if not table.rows:
+        notes.insert(0, _paragraph(Paragraph((NOTHING,))))
     if table.shortened:
         notes.append(_paragraph(Paragraph((SHORTENED,))))
     return {
@@ -182,14 +180,8 @@ def _table(table: Table, numbers: Mapping[str, str]) -> Part:
     }
 
 
-def _numbers(table: Table, at: int) -> bool:
-    """Whether a column holds single numbers alone."""
-    cells = [row[at] for row in table.page_rows if row[at] is not None]
-    return at > 0 and bool(cells) and all(isinstance(cell, Number) for cell in cells)
-
-
 def _row(row: Row) -> Part:
-    cells = [[_breakable(line, LONGEST) for line in lines(cell)] for cell in row]
+    cells = [[_breakable(line, IN_CELLS) for line in lines(cell)] for cell in row]
     return {"cells": cells, "long": sum(len(line) for cell in cells for line in cell) > WHOLE}
 
 

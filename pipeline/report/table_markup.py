@@ -9,10 +9,10 @@ from html import escape
 from markupsafe import Markup
 
 from pipeline.report.document import (
+    NOTHING,
     SHORTENED,
     Cell,
     Interval,
-    Number,
     Paragraph,
     Quote,
     Reference,
@@ -27,14 +27,14 @@ _MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
 def table_markup(table: Table, numbers: Mapping[str, str]) -> Markup:
     """The table with its title and notes; every word escaped.
 
-    ``numbers`` is what the tables and figures of a numbered document are called.
+    ``numbers`` says what the tables and figures of a numbered document are called.
     """
     called = f"{numbers[table.name]}. " if table.name in numbers else ""
     form = " form" if table.form else ""
     parts = [
         f'<div class="table{form}" id="table-{slug(table.name)}">',
         f'<p class="title">{called}{prose_markup(table.title, numbers)}</p>',
-        *(_grid(table) if table.rows else ('<p class="note">None.</p>',)),
+        *(_grid(table) if table.rows else (f'<p class="note">{NOTHING}</p>',)),
         *(f'<p class="note">{prose_markup(note, numbers)}</p>' for note in table.notes),
         "</div>",
     ]
@@ -42,7 +42,7 @@ def table_markup(table: Table, numbers: Mapping[str, str]) -> Markup:
 
 
 def prose_markup(paragraph: Paragraph, numbers: Mapping[str, str]) -> str:
-    """A paragraph's words, its quoted numbers marked with where they stand, its links leading."""
+    """A paragraph's words, its quoted numbers marked with where they stand, references linked."""
     lead = f"<b>{_words(paragraph.lead)}</b> " if paragraph.lead else ""
     found = [lead]
     for piece in paragraph.pieces:
@@ -76,10 +76,7 @@ def column_class(table: Table, at: int) -> str:
     """What a column holds: plain numbers, sentences, or other."""
     if table.columns[at].prose:
         return "prose"
-    cells = [row[at] for row in table.rows if row[at] is not None]
-    if at and cells and all(isinstance(cell, Number) for cell in cells):
-        return "figures"
-    return "words"
+    return "figures" if table.numeric(at) else "words"
 
 
 def _grid(table: Table) -> list[str]:

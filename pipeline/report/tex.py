@@ -7,8 +7,8 @@ from itertools import zip_longest
 
 from pipeline.core.results import Results
 from pipeline.report.content import report
-from pipeline.report.document import Cell, Number, Table
-from pipeline.report.numerals import MINUS, clean, lines
+from pipeline.report.document import Cell, Table
+from pipeline.report.numerals import MINUS, broken, clean, lines
 
 _ESCAPES = {
     "\\": r"\textbackslash{}",
@@ -54,6 +54,7 @@ _ESCAPES = {
 _SPECIAL = re.compile("|".join(re.escape(mark) for mark in _ESCAPES))
 # Characters of the small type that fit beside one another in an ordinary text width.
 ROOM = 84
+LONGEST = 24
 
 
 def render(results: Results) -> dict[str, bytes]:
@@ -75,7 +76,8 @@ def tabular(table: Table, footer: str = "") -> str:
     wraps = _wraps(table)
     rows = enumerate(table.page_rows)
     body = [line for at, row in rows for line in _row(table, at, row, wraps)]
-    head = " & ".join(escape(column.heading) for column in table.columns)
+    put = breakable if wraps else escape
+    head = " & ".join(put(column.heading) for column in table.columns)
     below = [*(note.text for note in table.notes), *([footer] if footer else [])]
     notes = [rf"{{\par\footnotesize\raggedright {escape(text)}\par}}" for text in below]
     return "\n".join(
@@ -95,6 +97,12 @@ def escape(text: str) -> str:
     return _SPECIAL.sub(lambda found: _ESCAPES[found.group()], flat)
 
 
+def breakable(text: str) -> str:
+    """``text`` as :func:`escape` makes it, with places to break in words no column could hold."""
+    words = (broken(word, LONGEST) for word in clean(text).split())
+    return " ".join(r"\allowbreak{}".join(map(escape, pieces)) for pieces in words)
+
+
 def _wraps(table: Table) -> bool:
     """Whether the table is too wide for columns of their natural width."""
     needs = [_need(table, at) for at in range(len(table.columns))]
@@ -105,7 +113,7 @@ def _alignment(table: Table) -> str:
     """Natural columns where the table fits; columns of a share of the text width where not."""
     needs = [_need(table, at) for at in range(len(table.columns))]
     if not _wraps(table):
-        return "".join("r" if _figures(table, at) else "l" for at in range(len(needs)))
+        return "".join("r" if table.numeric(at) else "l" for at in range(len(needs)))
     words = [_longest_word(table, at) + 4 for at in range(len(needs))]
     narrow = [float(max(word, min(need + 3, 28))) for word, need in zip(words, needs, strict=True)]
     shares = (need / sum(narrow) for need in narrow)
@@ -126,18 +134,14 @@ def _need(table: Table, at: int) -> int:
 def _longest_word(table: Table, at: int) -> int:
     cells = (line for row in table.page_rows for line in lines(row[at]))
     texts = (table.columns[at].heading, *cells)
-    return max((len(word) for text in texts for word in text.split()), default=1)
-
-
-def _figures(table: Table, at: int) -> bool:
-    cells = [row[at] for row in table.page_rows if row[at] is not None]
-    return at > 0 and bool(cells) and all(isinstance(cell, Number) for cell in cells)
+    longest = max((len(word) for text in texts for word in text.split()), default=1)
+    return min(longest, LONGEST)
 
 
 def _row(table: Table, at: int, row: tuple[Cell, ...], wraps: bool) -> list[str]:
     """The lines of one row; the second line of a cell inside it, or below where cells are flat."""
     if wraps:
-        cells = (r" \newline ".join(escape(line) for line in lines(cell)) for cell in row)
+        cells = (r" \newline ".join(breakable(line) for line in lines(cell)) for cell in row)
         found = [" & ".join(cells) + r" \\"]
     else:
         stacked = zip_longest(*(lines(cell) or ("",) for cell in row), fillvalue="")

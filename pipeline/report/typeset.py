@@ -14,6 +14,8 @@ from typing import Any
 import matplotlib as mpl
 import typst
 
+# ISO 14289-1, for readers who use a screen reader; the library refuses what breaks it.
+STANDARD = "ua-1"
 TEMPLATE = "paper.typ"
 PICTURE = """\
 #set page(width: {width}mm, height: {height}mm, margin: 0pt, fill: none)
@@ -44,6 +46,7 @@ def _compiled(source: bytes, content: Any, form: Any, *, borrow: bool = False,
         format=form,
         ppi=ppi,
         font_paths=_fonts(borrow),
+        pdf_standards=STANDARD if form == "pdf" else None,
         sys_inputs={"data": json.dumps(content, ensure_ascii=False)},
     )
     if not isinstance(found, bytes):

@@ -31,7 +31,7 @@ from pipeline.report.document import (
     Text,
 )
 from pipeline.report.logo import pixels, placed
-from pipeline.report.numerals import clean, lines
+from pipeline.report.numerals import clean, lines, shown
 
 Part = Number | Day | str | None
 Formats = dict[str, Any]
@@ -192,10 +192,12 @@ def _sheet(book: Any, formats: Formats, table: Table, name: str) -> None:
 
 def _width(table: Table, at: int, names: tuple[str, ...]) -> int:
     """Width in characters of each sheet column of one table column."""
-    if len(names) > 1:
-        return 12
     cells = [row[at] for row in table.rows]
-    texts = [line for cell in cells if isinstance(cell, Text | Day) for line in lines(cell)]
+    if len(names) > 1:
+        odd = any(isinstance(cell, Interval) and cell.words for cell in cells)
+        numbers = (part for cell in cells for part in parts(cell) if isinstance(part, Number))
+        return max(18 if odd else 12, *(len(shown(number)) for number in numbers), 0)
+    texts = [text for cell in cells for text in lines(cell)]
     longest = max((len(line) for text in texts for line in text.splitlines()), default=0)
     return min(max(longest, len(table.columns[at].heading), 8), BROADEST)
 
