@@ -23,8 +23,8 @@ COMMANDS = {
     "tabcolsep", "caption", "label", "toprule", "midrule", "bottomrule", "par", "newline",
     "raggedright", "arraybackslash", "textwidth", "textbackslash", "textasciicircum",
     "textasciitilde", "textless", "textgreater", "textbar", "textquotedbl", "ldots", "leq", "geq",
-    "pm", "times", "textsuperscript", "S", "chi", "alpha", "beta", "delta", "lambda", "rho",
-    "sigma", "tau", "omega",
+    "pm", "times", "allowbreak", "textsuperscript", "S", "chi", "alpha", "beta", "delta", "lambda",
+    "rho", "sigma", "tau", "omega",
 }  # fmt: skip
 
 

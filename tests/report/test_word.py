@@ -9,9 +9,12 @@ from dataclasses import replace
 import docx
 import pytest
 from docx.enum.section import WD_ORIENT
+from lxml import etree
 
 from pipeline.core.results import Results
+from pipeline.report.document import Document, Paragraph, Reference, Section
 from pipeline.report.docx import file, render
+from pipeline.report.house import styled
 from pipeline.report.memo import memo
 from pipeline.report.numerals import lines
 from tests.report.runs import with_frames
@@ -101,3 +104,87 @@ def test_a_memo_of_one_deal(bare: Results) -> None:
     word = docx.Document(io.BytesIO(render(bare)["memo.docx"]))
     assert [s.orientation for s in word.sections] == [WD_ORIENT.PORTRAIT]
     assert "the one deal" in "\n".join(p.text for p in word.paragraphs)
+
+
+def xml_of(data: bytes, name: str = "word/document.xml") -> etree._Element:
+    with zipfile.ZipFile(io.BytesIO(data)) as package:
+        return etree.fromstring(package.read(name))
+
+
+def fields(tree: etree._Element) -> list[tuple[str, str]]:
+    """(code, what it shows) of every field, which must be whole: begin, code, separate, end."""
+    found, state, code, shown = [], "", "", ""
+    for run in tree.iter(f"{W}r"):
+        for part in run:
+            if part.tag == f"{W}fldChar":
+                kind = part.get(f"{W}fldCharType")
+                assert (state, kind) in {("", "begin"), ("begin", "separate"), ("separate", "end")}
+                if kind == "end":
+                    found.append((code.strip(), shown))
+                    state, code, shown = "", "", ""
+                else:
+                    state = kind or ""
+            elif part.tag == f"{W}instrText":
+                code += part.text or ""
+            elif state == "separate":
+                shown += part.text or ""
+    assert state == ""
+    return found
+
+
+def test_captions_are_numbered_by_fields(full: Results, files: dict[str, bytes]) -> None:
+    numbers = memo(full).numbers
+    found = [(code, shown) for code, shown in fields(xml_of(files["memo.docx"])) if "SEQ" in code]
+    assert sorted(found) == sorted(
+        (f"SEQ {kind} \\* ARABIC", at)
+        for kind, at in (called.split() for called in numbers.values())
+    )
+    captions = [p.text for p in docx.Document(io.BytesIO(files["memo.docx"])).paragraphs
+                if p.style is not None and p.style.name == "Caption"]  # fmt: skip
+    for called in numbers.values():
+        assert sum(text.startswith(f"{called}. ") for text in captions) == 1
+
+
+def test_references_are_fields_that_arrive(full: Results, files: dict[str, bytes]) -> None:
+    tree = xml_of(files["memo.docx"])
+    marks = {node.get(f"{W}name"): node.get(f"{W}id") for node in tree.iter(f"{W}bookmarkStart")}
+    ends = [node.get(f"{W}id") for node in tree.iter(f"{W}bookmarkEnd")]
+    assert sorted(marks.values()) == sorted(ends)
+    assert len(set(ends)) == len(ends)
+    found = [(code.split()[1], shown) for code, shown in fields(tree) if code.startswith("REF")]
+    numbers = memo(full).numbers
+    assert [shown for _, shown in found] == [
+        piece.text for p in memo(full).paragraphs for piece in p.pieces
+        if isinstance(piece, Reference)
+    ]  # fmt: skip
+    assert len(found) >= 3
+    assert {name for name, _ in found} <= set(marks)
+    assert {shown for _, shown in found} <= set(numbers.values())
+
+
+def test_the_foot_counts_pages_by_fields(files: dict[str, bytes]) -> None:
+    with zipfile.ZipFile(io.BytesIO(files["memo.docx"])) as package:
+        names = [name for name in package.namelist() if name.startswith("word/footer")]
+    found = [field for name in names for field in fields(xml_of(files["memo.docx"], name))]
+    assert [code for code, _ in found] == ["PAGE", "NUMPAGES"]
+
+
+def test_tables_share_a_style(word: docx.document.Document) -> None:
+    style = word.styles["Three Rules"]
+    assert {table.style.name for table in word.tables} == {style.name}
+    rules = style.element.find(f"{W}tblPr").find(f"{W}tblBorders")
+    assert [rule.tag for rule in rules] == [f"{W}top", f"{W}bottom"]
+    heading = style.element.find(f"{W}tblStylePr")
+    assert heading.get(f"{W}type") == "firstRow"
+    assert heading.find(f"{W}rPr").find(f"{W}b") is not None
+
+
+def test_the_appendix_begins_a_page(word: docx.document.Document) -> None:
+    starts = [p.text for p in word.paragraphs if p.paragraph_format.page_break_before]
+    assert starts == ["Appendix"]
+
+
+def test_a_reference_to_nothing_is_refused() -> None:
+    section = Section("S", (Paragraph((Reference("nowhere"),)),))
+    with pytest.raises(KeyError, match="nowhere"):
+        styled(Document("t", "s", (section,), numbered=True))
