@@ -6,12 +6,7 @@ Tagged, with bookmarks, fonts and drawings inside; no clock and no chance in its
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from functools import cache
-from pathlib import Path
 from typing import Any
-
-import matplotlib as mpl
-from matplotlib.ft2font import FT2Font
 
 from pipeline.core.house import Logo
 from pipeline.core.results import Results
@@ -31,6 +26,7 @@ from pipeline.report.document import (
 )
 from pipeline.report.docx_parts import column_widths
 from pipeline.report.figures import svg
+from pipeline.report.fonts import lacking
 from pipeline.report.logo import placed
 from pipeline.report.memo import memo
 from pipeline.report.numerals import broken, clean, lines
@@ -59,17 +55,6 @@ def file(document: Document) -> bytes:
     Where it holds characters that the packed fonts lack, the machine's own fonts are borrowed.
     """
     return typeset(_paper(document), borrow=bool(lacking(_words(document))))
-
-
-def lacking(text: str) -> str:
-    """The characters of ``text`` that the packed fonts cannot show, each once."""
-    return "".join(sorted({mark for mark in text if mark.isprintable()} - _shown()))
-
-
-@cache
-def _shown() -> frozenset[str]:
-    font = Path(mpl.get_data_path()) / "fonts" / "ttf" / "DejaVuSans.ttf"
-    return frozenset(chr(code) for code in FT2Font(str(font)).get_charmap())
 
 
 def _words(document: Document) -> str:

@@ -5,11 +5,10 @@ from __future__ import annotations
 import io
 import itertools
 from functools import cache
-from importlib.util import find_spec
-from pathlib import Path
 
 from PIL import Image, ImageDraw, ImageFont
 
+from pipeline.report.fonts import packed
 from pipeline.report.scene import TONES, Area, Line, Marks, Point, Scene, Stems, Words
 from pipeline.report.vector import corners
 
@@ -120,9 +119,5 @@ def _words(picture: Image.Image, brush: ImageDraw.ImageDraw, part: Words, scale:
 @cache
 def _font(size: int, bold: bool) -> ImageFont.FreeTypeFont:
     """DejaVu Sans, which holds the signs that are printed, as matplotlib ships it."""
-    home = find_spec("matplotlib")
-    if home is None or home.origin is None:
-        raise FileNotFoundError("matplotlib, whose fonts the pictures of the memo are set in")
     name = "DejaVuSans-Bold.ttf" if bold else "DejaVuSans.ttf"
-    path = Path(home.origin).parent / "mpl-data" / "fonts" / "ttf" / name
-    return ImageFont.truetype(str(path), size)
+    return ImageFont.truetype(str(packed() / name), size)

@@ -8,14 +8,14 @@ from __future__ import annotations
 import json
 from functools import cache
 from importlib.resources import files
-from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
-import matplotlib as mpl
 import typst
 
+from pipeline.report.fonts import packed
+
 # ISO 14289-1, for readers who use a screen reader; the library refuses what breaks it.
-STANDARD = "ua-1"
+STANDARD: Final = "ua-1"
 TEMPLATE = "paper.typ"
 PICTURE = """\
 #set page(width: {width}mm, height: {height}mm, margin: 0pt, fill: none)
@@ -57,5 +57,4 @@ def _compiled(source: bytes, content: Any, form: Any, *, borrow: bool = False,
 @cache
 def _fonts(borrow: bool) -> typst.Fonts:
     """The fonts packed with the typesetter, and those packed with the plotting library."""
-    packed = Path(mpl.get_data_path()) / "fonts" / "ttf"
-    return typst.Fonts(include_system_fonts=borrow, font_paths=[str(packed)])
+    return typst.Fonts(include_system_fonts=borrow, font_paths=[str(packed())])

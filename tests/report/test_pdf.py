@@ -17,6 +17,7 @@ from pipeline.core.house import House
 from pipeline.core.results import Results
 from pipeline.report import docx, pdf
 from pipeline.report.document import Column, Document, Number, Paragraph, Section, Table, Text
+from pipeline.report.fonts import lacking
 from pipeline.report.memo import memo
 from pipeline.report.numerals import lines
 from tests.report.kitchen import kitchen
@@ -227,8 +228,8 @@ def test_a_memo_of_one_deal(bare: Results) -> None:
 
 
 def test_fonts_are_borrowed_only_for_what_is_lacking() -> None:
-    assert pdf.lacking("Łódź Ω Ж χ² ≤ −1 “x” …") == ""
-    assert pdf.lacking("A 会 B 社") == "会社"
+    assert lacking("Łódź Ω Ж χ² ≤ −1 “x” …") == ""
+    assert lacking("A 会 B 社") == "会社"
 
 
 def test_the_two_memos_hold_the_same_tables(full: Results) -> None:
