@@ -270,7 +270,8 @@ def _write(
             sheet.write_string(row, column, "no bound" if math.isinf(value) else "", look)
         case Day(day, dates):
             pattern = DATES[dates]
-            look = _format(book, formats, num_format=pattern, valign="top", align="left", **rule)
+            side: dict[str, Any] = {"align": "left", "indent": int(column > 0), **rule}
+            look = _format(book, formats, num_format=pattern, valign="top", **side)
             sheet.write_datetime(row, column, datetime.combine(day, time()), look)
         case Number(value, digits, mark=mark):
             pattern = "#,##0" + (f".{'0' * digits}" if digits else "")
