@@ -83,6 +83,16 @@ def _digits(material: Material, errors: pd.Series[float]) -> int:
     return unit_digits(float(errors.abs().median()), material.unit)
 
 
+def _level_digits(material: Material, target: str, default: int) -> int:
+    """Decimals that the error of a varied number deserves, from its intervals in the variants."""
+    frame = material.results.sensitivity
+    if frame.empty or "target" not in frame:
+        return default
+    own = frame[frame["target"] == target]
+    reach = (own["ci_high"] - own["ci_low"]).astype(float).dropna() / 4
+    return unit_digits(float(reach.median()), material.unit) if len(reach) else default
+
+
 def strengths_table(material: Material) -> Table | None:
     """Confounders likened to controls."""
     frame = material.frames.get("hidden_strengths")
@@ -162,6 +172,8 @@ def controls_table(material: Material) -> Table | None:
         return None
     unit = material.unit
     digits = unit.decimals
+    errors = material.results.ladder
+    level = _digits(material, errors["std_error"]) if len(errors) else digits
     columns = (
         Column("Control left out"), Column("Effect without it", unit.short),
         Column("Effect with it", unit.short), Column("What it does to the outcome", unit.short),
@@ -170,15 +182,16 @@ def controls_table(material: Material) -> Table | None:
     rows = tuple(
         (
             Text(capital(material.study.words(str(row["control"])))),
-            in_unit(row["short"], unit, digits), in_unit(row["long"], unit, digits),
-            in_unit(row["gamma"], unit, digits), plain(row["delta"]),
+            in_unit(row["short"], unit, level), in_unit(row["long"], unit, level),
+            in_unit(row["gamma"], unit, level), plain(row["delta"]),
             in_unit(row["gamma"] * row["delta"], unit, digits),
         )
         for _, row in frame.iterrows()
     )  # fmt: skip
     notes = (
-        prose("The effect without a control is the effect with it plus the product, exactly. A "
-              "hidden factor would work the same way: only its two parts are not known."),
+        prose("The effect without a control is the effect with it plus the product, exactly "
+              "until they are rounded. A hidden factor would work the same way: only its two "
+              "parts are not known."),
     )  # fmt: skip
     return Table("controls_left_out", prose("What each control does"), columns, rows, notes)
 
@@ -220,6 +233,8 @@ def left_out_table(material: Material) -> Table | None:
     ]
     shown = pd.concat(top, ignore_index=True)
     digits = _digits(material, shown["change"].astype(float) / 5)
+    targets = dict.fromkeys(shown["target"].astype(str))
+    levels = {target: _level_digits(material, target, digits) for target in targets}
     columns = (
         Column("Number"), Column("Left out"), Column("Which"), Column("Deals", "n"),
         Column("Without it", unit.short), Column("Change", unit.short),
@@ -229,7 +244,7 @@ def left_out_table(material: Material) -> Table | None:
         (
             Text(capital(str(row["target"]))), Text(f"one {row['dimension']}"),
             Text(str(row["group"]), _page(row, pages)), count(int(row["deals"])),
-            in_unit(float(row["estimate"]), unit, digits),
+            in_unit(float(row["estimate"]), unit, levels[str(row["target"])]),
             in_unit(float(row["change"]), unit, digits),
         )
         for _, row in shown.iterrows()

@@ -15,6 +15,7 @@ from pipeline.core.findings import InputProblem
 from pipeline.core.results import Results
 from pipeline.flow import run
 from pipeline.report.content import report
+from pipeline.report.numerals import lines
 from pipeline.study.load import load_study
 from tests.small import write_small_study
 
@@ -216,7 +217,7 @@ def test_the_report_explains_day_zero(folder: Path) -> None:
     assert len(every.rows) == 40
     assert every.shortened
     row = next(row for row in every.rows if row[0].text == "D03")  # type: ignore[union-attr]
-    assert [cell.text for cell in row] == [  # type: ignore[union-attr]
+    assert [line for cell in row for line in lines(cell)] == [
         "D03", "XLON", "2019-03-16 11:00", "On a day without trading", "2019-03-18", "16:30",
         "Public 2019-03-16 11:00 (Europe/London), a weekend or holiday of XLON; the close of "
         "2019-03-18 at 16:30 is the first to hold it.",
