@@ -10,6 +10,7 @@ from typing import Any
 
 import pandas as pd
 
+from pipeline.core.house import PLAIN, House
 from pipeline.core.outcome import ABNORMAL_RETURN, Outcome
 
 
@@ -78,6 +79,7 @@ class Contrast:
         titles: estimator -> the title of its column.
         notes: what could not be made again, and why.
         outcome: what both runs explain.
+        house: the style of the later run's papers, without its logo.
     """
 
     first: str
@@ -90,3 +92,4 @@ class Contrast:
     titles: Mapping[str, str]
     notes: tuple[str, ...] = ()
     outcome: Outcome = ABNORMAL_RETURN
+    house: House = PLAIN

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any
@@ -13,11 +14,13 @@ from pipeline.contrast.runs import read_run
 from pipeline.core.clock import Progress
 from pipeline.core.contrast import Contrast, Difference, Kind, SavedRun
 from pipeline.core.findings import InputProblem, problem
-from pipeline.core.outcome import Outcome
+from pipeline.core.house import House
+from pipeline.core.outcome import Outcome, with_decimals
 from pipeline.flow.commands import run
 from pipeline.inputs.source import POSTGRES
 from pipeline.saving import digest
 from pipeline.study.load import restored
+from pipeline.study.papers import Papers, house_of
 from pipeline.study.ready import outcome_named
 
 MOST_ALONE = 12
@@ -43,6 +46,7 @@ def contrast(first: Path, second: Path, progress: Progress = lambda _: None) -> 
     found = differences(one, two)
     moves = numbers(one.numbers, two.numbers)
     explained, notes = _explained(one, two, found, moves, progress)
+    house = _house(two)
     return Contrast(
         first=one.name,
         second=two.name,
@@ -53,8 +57,14 @@ def contrast(first: Path, second: Path, progress: Progress = lambda _: None) -> 
         moved=moved_deals(one, two),
         titles={**one.titles, **two.titles},
         notes=notes,
-        outcome=outcome,
+        outcome=with_decimals(outcome, house.decimals),
+        house=house,
     )
+
+
+def _house(run: SavedRun) -> House:
+    """The style of a run's papers; its logo is not among what a run keeps."""
+    return house_of(Papers.model_validate_json(json.dumps(run.study.get("papers", {}))))
 
 
 def _outcome(one: SavedRun, two: SavedRun) -> Outcome:

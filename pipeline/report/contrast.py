@@ -20,6 +20,7 @@ from pipeline.report.document import (
     Table,
     Text,
 )
+from pipeline.report.house import styled
 from pipeline.report.material import prose, quote, taken
 from pipeline.report.numerals import count, in_unit, percent
 from pipeline.report.wording import joined, spoken
@@ -57,7 +58,8 @@ def document(contrast: Contrast) -> Document:
         Section("What each difference moved", _explained(contrast)),
         Section("Deals", (_deals(contrast), _moved(contrast))),
     )
-    return Document(f"{contrast.first} and {contrast.second}", "Two runs side by side", sections)
+    title = f"{contrast.first} and {contrast.second}"
+    return styled(Document(title, "Two runs side by side", sections, contrast.house))
 
 
 def label(contrast: Contrast, number: str) -> str:

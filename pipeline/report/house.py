@@ -27,7 +27,7 @@ from pipeline.report.document import (
 
 # Words that are quoted as they stand: the analyst's own, publications, and cells of her files.
 QUOTED = ("study", "source")
-FILES = ("findings",)
+FILES = ("findings", "differences")
 
 
 def styled(document: Document) -> Document:

@@ -22,6 +22,7 @@ def runs(tmp_path_factory: pytest.TempPathFactory) -> Path:
     second.write_text(
         'base = "study.toml"\ntitle = "Wider"\n[event_time]\nheadline = [-2, 2]\n'
         "minimum_observations = 110\n[inputs]\ndeals = 'fewer.csv'\n"
+        '[papers]\nfooter = "Confidential & ours"\n'
     )
     deals = pd.read_csv(base / "study" / "deals.csv")
     deals.iloc[1:].to_csv(base / "study" / "fewer.csv", index=False)
@@ -48,10 +49,17 @@ def test_every_difference_is_named_and_no_other(told: dict[str, object]) -> None
         "event_time.headline",
         "event_time.minimum_observations",
         "name",
+        "papers.footer",
         "title",
     }
     assert found["event_time.headline"]["first"] == "[-1, 1]"
     assert not found["title"]["moves"]
+    assert not found["papers.footer"]["moves"]
+
+
+def test_the_page_wears_the_later_runs_style(runs: Path, told: dict[str, object]) -> None:
+    page = (runs / "first_and_second" / "contrast.html").read_text(encoding="utf-8")
+    assert "<footer><p>Confidential &amp; ours</p></footer>" in page
 
 
 def test_the_moves_are_those_of_the_saved_numbers(runs: Path, told: dict[str, object]) -> None:
