@@ -78,7 +78,8 @@ def simultaneous_reach(own: Floats, mean: Floats, error: Floats, level: float, s
     if len(whole) < 2 or not usable.any():
         return float("nan")
     scaled = (whole - mean)[:, usable] / (len(whole) * error[usable])
-    size, axes = np.linalg.eigh(scaled.T @ scaled)
-    root = (axes * np.sqrt(np.maximum(size, 0.0))) @ axes.T
-    draws = np.random.default_rng(seed).standard_normal((DRAWS, len(size))) @ root
+    # The symmetric root of scaled'scaled, from scaled itself: its small values keep their digits.
+    _, size, axes = np.linalg.svd(np.linalg.qr(scaled, mode="r"))
+    root = (axes[: len(size)].T * size) @ axes[: len(size)]
+    draws = np.random.default_rng(seed).standard_normal((DRAWS, len(root))) @ root
     return float(np.quantile(np.abs(draws).max(axis=1), level))

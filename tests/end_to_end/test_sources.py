@@ -114,19 +114,14 @@ def test_the_same_study_gives_the_same_bytes(
 
 
 def test_whole_histories_give_the_same_numbers(tables: Path, expected: dict[str, bytes]) -> None:
-    """What events do not touch moves no number.
-
-    The last bit may depend on the arrays' length; the band of the path takes roots of eigenvalues
-    of nearly zero, which make some 1e-8 (the root of the machine's precision) of it.
-    """
+    """What events do not touch moves no number; the last bit may depend on the arrays' length."""
     study = study_file(tables)
     study.write_text(study.read_text().replace("[inputs]", '[inputs]\nhistory = "whole"'))
     results, _ = run(load_study(study))
     for name, frame in results.tables.items():
         touched = pd.read_parquet(io.BytesIO(expected[name]))
         whole = pd.read_parquet(io.BytesIO(parquet_bytes(frame)))
-        rtol = 1e-7 if name == "paths" else 1e-9
-        pd.testing.assert_frame_equal(touched, whole, rtol=rtol, atol=1e-12)
+        pd.testing.assert_frame_equal(touched, whole, rtol=1e-9, atol=1e-12)
 
 
 def test_a_data_base_gives_the_same_bytes_and_keeps_its_secret(
