@@ -174,6 +174,7 @@ def deal(
 ) -> None:
     """Tell one deal's whole story: day zero and why, its returns, its place, its ledger."""
     from pipeline.screen import Screen
+    from pipeline.screen_deal import show_deal, show_deal_page
 
     screen = Screen(quiet=False, as_json=as_json)
 
@@ -183,13 +184,13 @@ def deal(
 
             with screen.progress() as tell:
                 document = deal_page(_load(study, ""), name, tell)
-            screen.deal_page(document, page)
+            show_deal_page(document, page, as_json=as_json)
             return
         from pipeline.flow import deal as deal_stages
 
         with screen.progress() as tell:
             story, row, told = deal_stages(_load(study, ""), name, tell)
-        screen.deal(name, story, row, told)
+        show_deal(name, story, row, told, as_json=as_json)
 
     _guard(work, screen.problem)
 

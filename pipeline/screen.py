@@ -6,9 +6,9 @@ import json
 import math
 import os
 import sys
-from collections.abc import Iterator, Mapping, Sequence
+from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
-from dataclasses import asdict, dataclass, replace
+from dataclasses import asdict, dataclass
 from difflib import get_close_matches
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -23,13 +23,10 @@ if TYPE_CHECKING:
 
     from pipeline.core.contrast import Contrast
     from pipeline.core.findings import Finding, InputProblem
-    from pipeline.core.ledger import Ledger, LedgerEntry
-    from pipeline.core.outcome import Standing
+    from pipeline.core.ledger import Ledger
     from pipeline.core.results import Results
     from pipeline.progress import Told
-    from pipeline.report.document import Document
     from pipeline.report.document import Table as DocumentTable
-    from pipeline.significance.story import Story
 
 
 @dataclass(frozen=True, slots=True)
@@ -101,70 +98,6 @@ class Screen:
             show_finding(console, finding)
         _ledger_totals(console, ledger)
 
-    def deal(
-        self,
-        name: str,
-        story: Story | Standing | None,
-        row: Mapping[str, Any],
-        told: Sequence[tuple[str, LedgerEntry]],
-    ) -> None:
-        """One deal: its placing, its returns day by day, and what the ledger says of it."""
-        if self.as_json:
-            ledger = [{"stage": stage, **asdict(entry)} for stage, entry in told]
-            content = {"deal": name, "story": asdict(story) if story else None, "ledger": ledger}
-            print(json.dumps(content, default=str))
-            return
-        console = Console(highlight=False, markup=False)
-        listing = " on ".join(str(row[key]) for key in ("security", "exchange") if row.get(key))
-        console.print(f"{name}: {listing}" if listing else name)
-        if "day_zero_reason" in row:
-            console.print(f"Day zero {str(row['day_zero'])[:10]}: {row['day_zero_reason']}.")
-        for stage, entry in told:
-            title = rule_title(entry.rule)
-            limit = f" (limit: {entry.threshold})" if entry.threshold else ""
-            console.print(f"{stage}: {entry.action}, {title}: {entry.value}{limit}.")
-        if story is None:
-            console.print("It was left out: the ledger lines above say why.")
-            return
-        from pipeline.core.outcome import Standing
-
-        if isinstance(story, Standing):
-            _standing(console, story, row)
-            return
-        window = story.window.label.replace("-", "−")
-        interval = f"{_bp(story.low)} to {_bp(story.high)} bp"
-        console.print(
-            f"CAR{window} {_bp(story.car)} bp, its own interval {interval}, standardised "
-            f"{story.scar:.2f}; rank {story.rank} of {story.deals}, 1 the largest. Estimated on "
-            f"{story.observations} returns."
-        )
-        table = Table(box=None, pad_edge=False, header_style="")
-        for head in ("day", "date", "abnormal, bp", "expected, bp", "band ±, bp", ""):
-            table.add_column(head, justify="right")
-        for day in story.days:
-            outside = "outside" if abs(day.abnormal) > day.reach else ""
-            cells = (_bp(day.abnormal), _bp(day.expected), _bp(day.reach))
-            table.add_row(f"{day.day:+d}" if day.day else "0", day.date, *cells, outside)
-        console.print(table)
-
-    def deal_page(self, document: Document, file: Path | None) -> None:
-        """One deal with all that the run makes of it: in words and tables, or as a page."""
-        if file is not None:
-            from pipeline.report.html import page
-
-            file.parent.mkdir(parents=True, exist_ok=True)
-            file.write_text(page(replace(document, ways=())), encoding="utf-8")
-        if self.as_json:
-            content = {"deal": document.title, "page": str(file or ""), "told": _told(document)}
-            print(json.dumps(content, ensure_ascii=False))
-            return
-        console = Console(highlight=False, markup=False)
-        if file is not None:
-            console.print(f"Written to {file}", soft_wrap=True)
-            return
-        console.print(document.title)
-        _sections(console, document)
-
     def power(self, frame: pd.DataFrame, smallest: float, deals: int) -> None:
         """The smallest true mean found four times in five, then power by size of the true mean."""
         if self.as_json:
@@ -176,7 +109,8 @@ class Screen:
             console.print("Power needs at least two deals.")
             return
         console.print(
-            f"A true mean of {_bp(smallest)} bp is the smallest that is found four times in five."
+            f"A true mean of {basis_points(smallest)} bp is the smallest that is found four times "
+            "in five."
         )
         console.print(f"{deals} deals, those that move together counted for less; 5% two-sided.\n")
         table = Table(box=None, pad_edge=False, header_style="")
@@ -210,7 +144,7 @@ class Screen:
         for section in document(found).sections[:3]:
             console.print(f"\n{section.heading}")
             for block in section.blocks:
-                shown = _plain_table(block) if isinstance(block, DocumentTable) else None
+                shown = plain_table(block) if isinstance(block, DocumentTable) else None
                 console.print(shown or getattr(block, "text", ""))
         console.print(f"\nWritten to {folder}: start with contrast.html there", soft_wrap=True)
 
@@ -253,7 +187,7 @@ def _records(frame: pd.DataFrame) -> Any:
     return json.loads(frame.to_json(orient="records", double_precision=15))
 
 
-def _plain_table(block: DocumentTable) -> Table:
+def plain_table(block: DocumentTable) -> Table:
     """A document's table for the terminal."""
     from pipeline.report.numerals import lines
 
@@ -265,58 +199,7 @@ def _plain_table(block: DocumentTable) -> Table:
     return table
 
 
-def _sections(console: Console, document: Document) -> None:
-    """Headings, words and tables; a picture gives its takeaway."""
-    from pipeline.report.document import Figure, Paragraph
-    from pipeline.report.document import Table as DocumentTable
-
-    for section in document.sections:
-        console.print(f"\n{section.heading}")
-        for block in section.blocks:
-            if isinstance(block, DocumentTable):
-                console.print(_plain_table(block) if block.rows else "None.")
-            elif isinstance(block, Figure | Paragraph):
-                console.print(block.title.text if isinstance(block, Figure) else block.text)
-
-
-def _told(document: Document) -> dict[str, list[dict[str, str]]]:
-    """The tables of a document, by name: one row a line, its cells as printed."""
-    from pipeline.report.numerals import lines
-
-    return {
-        table.name: [
-            {
-                column.heading: " ".join(lines(cell))
-                for column, cell in zip(table.columns, row, strict=True)
-            }
-            for row in table.rows
-        ]
-        for table in document.tables
-    }
-
-
-def _standing(console: Console, story: Standing, row: Mapping[str, Any]) -> None:
-    """One deal's ready outcome among the others, and what else the deal list says of it."""
-    from pipeline.report.material import capital
-    from pipeline.report.numerals import amount
-
-    outcome, interval = story.outcome, ""
-    if story.low == story.low:
-        ends = f"{amount(story.low, outcome.unit)} to {amount(story.high, outcome.unit)}"
-        interval = f", its own interval {ends}"
-    console.print(
-        f"{capital(outcome.words)} {amount(story.value, outcome.unit)}{interval}; rank "
-        f"{story.rank} of {story.deals}, 1 the largest."
-    )
-    table = Table(box=None, pad_edge=False, show_header=False)
-    own = ("deal_id", "_row", "announced_date", outcome.column, f"{outcome.column}_std_dev")
-    for key, value in row.items():
-        if key not in own and value == value:
-            table.add_row(key, f"{value:.10g}" if isinstance(value, float) else str(value))
-    console.print(table)
-
-
-def _bp(value: float) -> str:
+def basis_points(value: float) -> str:
     """A decimal return in basis points, with a true minus sign; blank where there is none."""
     return f"{value * 1e4:,.0f}".replace("-", "−") if value == value else ""
 
