@@ -88,7 +88,9 @@ def numbers(first: pd.DataFrame, second: pd.DataFrame) -> pd.DataFrame:
     An effect is matched by its estimator, wherever its column stands.
     """
     one, two = _followed(first), _followed(second)
-    both = one.join(two, how="outer", suffixes=("_first", "_second"))
+    both = one.merge(
+        two, how="outer", left_index=True, right_index=True, suffixes=("_first", "_second")
+    )
     order = [*one.index, *(name for name in two.index if name not in one.index)]
     both = both.loc[order]
     unit = both["unit_first"].fillna(both["unit_second"])
