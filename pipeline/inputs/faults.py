@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+from itertools import chain
 from pathlib import Path
 
 from pipeline.core.findings import InputProblem, problem
@@ -20,7 +21,7 @@ def csv_fault(source: Source) -> InputProblem | None:
         The problem to raise, or None if nothing is found. Rows count from the first line as row 1,
         blank ones included.
     """
-    line = source.header_row
+    row, width = source.header_row, None
     try:
         with source.at.open(newline="", encoding=source.encoding or "utf-8-sig") as text:
             for _ in range(source.header_row - 1):
@@ -28,24 +29,14 @@ def csv_fault(source: Source) -> InputProblem | None:
             header = text.readline(LONGEST)
             mark = source.delimiter or max(MARKS, key=header.count)
             if len(header) == LONGEST:
-                return _too_long(source, line)
-            width = len(next(csv.reader([header], delimiter=mark), []))
-            rows = csv.reader(text, delimiter=mark)
-            row: list[str] = []
-            for number, row in enumerate(rows, start=source.header_row + 1):
-                line = number + 1
-                if row and len(row) != width:
+                return _too_long(source, row)
+            rows = csv.reader(chain([header], text), delimiter=mark, strict=True)
+            width = len(next(rows, []))
+            for row, cells in enumerate(rows, start=source.header_row + 1):
+                if cells and len(cells) != width:
                     remedy = f"Complete the row, or put text that holds a '{mark}' in quotes."
                     expected = f"{width} cells, as the header has"
-                    return _fault(source, f"{len(row)} cells", expected, remedy, number)
-            if any("\n" in cell for cell in row[-1:]):  # it took the rest of the file with it
-                return _fault(
-                    source,
-                    "a quotation mark that is never closed",
-                    "quotation marks in pairs",
-                    "Close it, or double it where it belongs to the text.",
-                    line - 1,
-                )
+                    return _fault(source, f"{len(cells)} cells", expected, remedy, row)
     except UnicodeDecodeError:
         return problem(
             "unreadable_file",
@@ -56,9 +47,22 @@ def csv_fault(source: Source) -> InputProblem | None:
             f"inputs.source.{source.table}.encoding = 'cp1252' is that of many spreadsheets.",
             row=str(_first_undecodable(source.at)),
         )
-    except csv.Error:
-        return _too_long(source, line)
+    except csv.Error as fault:
+        # Raised before the row is counted; a header that cannot be read counts as none.
+        return _misquoted(source, row if width is None else row + 1, str(fault))
     return None
+
+
+def _misquoted(source: Source, row: int, said: str) -> InputProblem:
+    """What a strict reader of quotation marks says, in plain words."""
+    if "larger than" in said:
+        return _too_long(source, row)
+    if "end of data" in said:  # it took the rest of the file with it
+        got = "a quotation mark that is never closed"
+    else:
+        got = "letters after a quotation mark that closes a cell"
+    remedy = "Close it, or double it where it belongs to the text."
+    return _fault(source, got, "quotation marks in pairs", remedy, row)
 
 
 def _too_long(source: Source, row: int) -> InputProblem:

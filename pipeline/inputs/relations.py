@@ -74,9 +74,10 @@ def _relation(base: duckdb.DuckDBPyConnection, made: str, row: str, hidden: str 
 
 
 def _csv(path: str, mark: str, source: Source) -> str:
-    options = "all_varchar = true, header = true"
+    # Left to itself the reader would take an open quotation mark for a letter.
+    options = """all_varchar = true, header = true, quote = '"', escape = '"'"""
     if mark:
-        options += f""", delim = {literal(mark)}, quote = '"', escape = '"'"""
+        options += f", delim = {literal(mark)}"
     if source.header_row > 1:
         options += f", skip = {source.header_row - 1}"
     return f"read_csv({literal(path)}, {options})"

@@ -123,6 +123,37 @@ def test_a_quotation_mark_that_is_never_closed(tmp_path: Path) -> None:
     assert "never closed" in finding.got
 
 
+UNCLOSED, ODD = (
+    "a quotation mark that is never closed",
+    "letters after a quotation mark that closes",
+)
+
+
+@pytest.mark.parametrize(
+    ("content", "row", "got"),
+    [
+        ('deal_id,size\nD1,1\nD2,"open', "3", UNCLOSED),
+        ('deal_id,"size\nD1,1\nD2,2\n', "1", UNCLOSED),
+        ('deal_id\nD1\n"D2\nD3\n', "3", UNCLOSED),
+        ('deal_id,size\n"D1,1\nD2,2\nD3,1\n', "2", UNCLOSED),
+        ('deal_id,size,z\nD0,"1,x\nD1,2,x\nD2,3,"\nD3,4,x\n', "2", "2 cells"),
+        ('deal_id,size\nD1,1\nD2,"a"b\n', "3", ODD),
+        ('deal_id,size\nD1,"' + "9\n" + "D2,1\n" * 700_000, "2", "a cell that goes on and on"),
+    ],
+    ids=["last", "header", "one column", "first", "paired by chance", "letters after", "huge"],
+)
+def test_quotation_marks_out_of_pairs(content: str, row: str, got: str, tmp_path: Path) -> None:
+    """An open mark is no letter of the cell, whatever mark parts the cells and however long."""
+    finding = refusal(csv(tmp_path, content))
+    assert (finding.rule, finding.row) == ("unreadable_file", row)
+    assert got in finding.got
+
+
+def test_a_quotation_mark_within_a_cell_is_a_letter(tmp_path: Path) -> None:
+    table = read_table(csv(tmp_path, 'deal_id,size\nD1,5" pipe\nD2,6\n'))
+    assert table["size"].tolist() == ['5" pipe', "6"]
+
+
 def test_decimal_commas_are_refused_until_declared(tmp_path: Path) -> None:
     content = "deal_id;size\nD1;1,5\nD2;1.234,5\nD3;\nD4;1 234\nD5;-0,25\nD6;7\n"
     (finding,) = findings(csv(tmp_path, content), SIZE)
