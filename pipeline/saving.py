@@ -78,7 +78,7 @@ def _manifest(
     content = {
         "study": study.model_dump(mode="json", by_alias=True, exclude=kept_out),
         "inputs": inputs,
-        "logo": {"file": logo.name, "sha256": digest(logo)} if logo else {},
+        "logo": {"file": logo.name, "sha256": digests.get("logo", "")} if logo else {},
         "packages": {name: version(name) for name in PACKAGES},
         "python": platform.python_version(),
         "seed": study.seed,
@@ -88,7 +88,7 @@ def _manifest(
 
 
 def _input(source: Source, folder: Path, digests: Mapping[str, str]) -> dict[str, str]:
-    """What was read: a file and its digest, or a query and that of its result.
+    """What was read: a file and its digest when the run began, or a query and its result's.
 
     A connection is no part of it.
     """
@@ -100,7 +100,7 @@ def _input(source: Source, folder: Path, digests: Mapping[str, str]) -> dict[str
             "query": asked,
             "sha256": digests.get(source.table, ""),
         }
-    return {**_unread(source.path, folder), "sha256": digest(source.path)}
+    return {**_unread(source.path, folder), "sha256": digests.get(source.table, "")}
 
 
 def _unread(path: Path, folder: Path) -> dict[str, str]:

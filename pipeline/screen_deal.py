@@ -72,10 +72,10 @@ def show_deal(
 def show_deal_page(document: Document, file: Path | None, *, as_json: bool) -> None:
     """One deal with all that the run makes of it: in words and tables, or as a page."""
     if file is not None:
+        from pipeline.core.disk import write_file
         from pipeline.report.html import page
 
-        file.parent.mkdir(parents=True, exist_ok=True)
-        file.write_text(page(replace(document, ways=())), encoding="utf-8")
+        write_file(file, page(replace(document, ways=())).encode(), "--page")
     if as_json:
         content = {"deal": document.title, "page": str(file or ""), "told": _told(document)}
         print(json.dumps(content, ensure_ascii=False))

@@ -39,6 +39,16 @@ formats = ["tex"]
 """
 
 
+# For tests that are not about these, which take most of the small study's second.
+LIGHT = """
+[placebo]
+draws = 0
+
+[scrutiny]
+run = false
+"""
+
+
 def write_small_study(folder: Path, deals: int = 40, seed: int = 7) -> Path:
     """Write tables and study file into ``folder``; gives the study file's path."""
     folder.mkdir(parents=True, exist_ok=True)

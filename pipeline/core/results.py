@@ -153,7 +153,7 @@ class Results:
         readings: the headline and the test that leads under another date or listing of the same
             deals, decimal, the headline's own row first; empty without one.
         look: makes the HTML that a notebook shows; None leaves it to the notebook.
-        digests: table -> SHA-256 of what a query gave, for tables that are no files.
+        digests: table -> SHA-256 of the file read, or of what a query gave.
         doubts: sentences on what the scrutiny could not ask.
     """
 

@@ -6,6 +6,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from pipeline.core.clock import Progress
+from pipeline.core.disk import write_file
 from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.core.ledger import Ledger
 from pipeline.flow.commands import check
@@ -39,10 +40,7 @@ def check_with_rows(
 
 def _write(study: Study, findings: Sequence[Finding], ledger: Ledger | None, place: Path) -> None:
     content = workbook(offending_rows(study, findings, ledger))
-    place.parent.mkdir(parents=True, exist_ok=True)
-    draft = place.with_name(f".{place.name}.new")
-    draft.write_bytes(content)
-    draft.replace(place)
+    write_file(place, content, "--rows")
 
 
 def _refuse_place(place: Path) -> None:

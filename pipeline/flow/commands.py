@@ -19,6 +19,7 @@ from pipeline.flow.explained import column_of, deals_with_outcomes, lead_of, pre
 from pipeline.flow.measured import Measured, measure_deals, placebo_of, tests_of
 from pipeline.flow.pictured import with_pictures
 from pipeline.flow.ready import ready_deals, ready_standing
+from pipeline.flow.seen import refuse_changed
 from pipeline.flow.selected import selected_of, with_selection
 from pipeline.registry import (
     TESTS,
@@ -65,6 +66,8 @@ def _all_stages(study: Study, clock: Clock, fresh: bool = False, deal: str = "")
     if prepared is not None:
         deals = deals_with_outcomes(study, measured)
         results = with_selection(results, selected_of(study, measured, deals, prepared, clock))
+    with clock.stage("results"):
+        refuse_changed(study, results.digests)
     return results
 
 

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from pipeline.core.clock import Progress
+from pipeline.core.disk import write_file
 from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.drafting.make import Draft, draft
 from pipeline.flow.commands import check
@@ -52,8 +53,7 @@ def drafted(
     made = draft(folder, place, answers)
     if not any(line.path == "inputs.deals" for line in made.lines):
         raise InputProblem(made.missing)
-    place.parent.mkdir(parents=True, exist_ok=True)
-    place.write_text(made.text, encoding="utf-8", newline="\n")
+    write_file(place, made.text.encode(), "--out")
     if made.missing:
         return Drafted(made, place, False, made.missing)
     try:

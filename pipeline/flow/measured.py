@@ -18,6 +18,7 @@ from pipeline.flow.placed import Placed, place_deals, unused_sessions
 from pipeline.flow.priced import Priced, at_the_end, price_panels
 from pipeline.flow.readings import readings_of
 from pipeline.flow.reused import price_key, return_key, shelf_of
+from pipeline.flow.seen import Seen, seen, unchanged
 from pipeline.inputs.read import Tables, read_inputs
 from pipeline.registry import (
     TESTS,
@@ -69,21 +70,27 @@ def measure_deals(study: Study, clock: Clock, fresh: bool = False) -> Measured:
     """
     shelf = shelf_of(study, fresh)
     with clock.stage("inputs"):
-        key = price_key(study) if shelf.most else ""
-    priced = shelf.kept(key, lambda: _priced(study, clock))
+        before = seen(study)
+        key = price_key(study, before.digests) if shelf.most else ""
+    priced = shelf.kept(key, lambda: _priced(study, clock, before))
     found = shelf.kept(return_key(study, key), lambda: _returns(study, priced, clock))
     by_date = found.deals["timing"].str.startswith("date only").any()
     return replace(
         found,
         panels=priced.panels,
         measured_on=priced.measured_on,
+        tables=replace(found.tables, digests={**found.tables.digests, **before.digests}),
         windows=plan.windows(study, bool(by_date)),
     )
 
 
-def _priced(study: Study, clock: Clock) -> Priced:
-    """The tables, and the price panels made from them."""
-    with clock.stage("inputs"):
+def _priced(study: Study, clock: Clock, before: Seen) -> Priced:
+    """The tables, and the price panels made from them.
+
+    Raises:
+        InputProblem: also ``changed_file``; nothing is kept of a file that was written meanwhile.
+    """
+    with clock.stage("inputs"), unchanged(study, before):
         tables = read_inputs(
             plan.sources(study),
             plan.wanted(study),

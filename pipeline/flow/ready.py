@@ -17,6 +17,7 @@ from pipeline.core.results import StudyFacts
 from pipeline.core.tables import SUMMARY_COLUMNS, typed_frame
 from pipeline.estimators.average import average
 from pipeline.flow.measured import Measured
+from pipeline.flow.seen import unchanged
 from pipeline.inputs.read import Tables
 from pipeline.inputs.ready import read_ready
 from pipeline.study import plan, plan_events, ready
@@ -33,7 +34,7 @@ def ready_deals(study: Study, clock: Clock) -> Measured:
     """
     columns = ready.outcome_columns(study)
     assert columns is not None
-    with clock.stage("inputs"):
+    with clock.stage("inputs"), unchanged(study) as before:
         read = read_ready(
             plan.sources(study),
             plan.wanted(study),
@@ -59,7 +60,7 @@ def ready_deals(study: Study, clock: Clock) -> Measured:
         candidates=read.candidates,
         factors=None,
         findings=read.findings,
-        digests=read.digests,
+        digests={**read.digests, **before.digests},
     )
     return Measured(read.deals, {}, {}, Ledger(read.ledger), read.findings, tables, ())
 

@@ -3,10 +3,10 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Mapping
 from typing import Any
 
 from pipeline.keeping import Shelf, code_digest, shelf_for
-from pipeline.saving import digest
 from pipeline.study import plan
 from pipeline.study.plan_reach import reach
 from pipeline.study.schema import Study
@@ -27,19 +27,23 @@ def shelf_of(study: Study, fresh: bool) -> Shelf:
     return shelf_for(study.compute.keep, fresh)
 
 
-def price_key(study: Study) -> str:
+def price_key(study: Study, content: Mapping[str, str]) -> str:
     """Everything that decides the tables and the price panels; '' where that is not known yet.
 
     What a server answers is not known before it is asked, and a file that is missing never is.
+
+    Args:
+        study: the study.
+        content: table -> SHA-256 of its file.
     """
     sources = plan.sources(study)
-    if any(source.is_postgres or not source.path.is_file() for source in sources.values()):
+    if not set(sources) <= set(content):
         return ""
-    content = {name: digest(source.path) for name, source in sorted(sources.items())}
+    held = {name: content[name] for name in sorted(sources)}
     wanted = (repr(sources), repr(plan.wanted(study)), repr(reach(study)))
     left_out = {"expected_returns", "benchmark_checks"}
     read = _part(study, left_out, AFTER_PRICES | AFTER_RETURNS)
-    return json.dumps(["prices", code_digest(), content, wanted, read])
+    return json.dumps(["prices", code_digest(), held, wanted, read])
 
 
 def return_key(study: Study, prices: str) -> str:

@@ -5,11 +5,14 @@ from __future__ import annotations
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import replace
+from pathlib import Path
+from tempfile import gettempdir
 from zipfile import BadZipFile
 
 import duckdb
 import pandas as pd
 
+from pipeline.core.disk import FULL, disk_refusal
 from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.inputs.faults import MARKS, csv_fault
 from pipeline.inputs.plain import plain_rows
@@ -130,6 +133,8 @@ def _raw(
         else:
             raw = _query(source, wanted, only, date_format)
     except UNREADABLE as fault:
+        if isinstance(fault, OSError) and fault.errno in FULL:
+            raise disk_refusal(fault, Path(gettempdir()), key="TMPDIR") from fault
         found = csv_fault(source) if is_csv else None
         raise found or problem(
             "unreadable_file",

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from collections.abc import Iterator
 from typing import Any
-from zipfile import ZipFile
+from zipfile import BadZipFile, ZipFile
 
 import openpyxl
 import pandas as pd
@@ -18,6 +18,8 @@ from pipeline.inputs.source import NOT_COMPUTED, ROW, Source
 MOST_BYTES = 1 << 30
 MOST_TIMES = 200
 SMALL = 1 << 24
+# What says by itself what is wrong with a file, or with the machine.
+SOUND_REFUSALS = (ValueError, KeyError, OSError, BadZipFile, MemoryError)
 ZEROS = re.compile(r"0{2,}")
 
 
@@ -61,6 +63,15 @@ def sheet_header(source: Source) -> list[str]:
 
 def _rows(source: Source, computed: bool) -> Iterator[list[Any]]:
     """The rows from the header on, without the empty cells at their ends."""
+    try:
+        yield from _read_rows(source, computed)
+    except SOUND_REFUSALS:
+        raise
+    except Exception as fault:  # A damaged part of a workbook can raise nearly anything.
+        raise ValueError(f"a damaged workbook ({fault or type(fault).__name__})") from fault
+
+
+def _read_rows(source: Source, computed: bool) -> Iterator[list[Any]]:
     book = openpyxl.load_workbook(source.at, read_only=True, data_only=computed)
     try:
         sheet = book[_sheet(source, book.sheetnames)]

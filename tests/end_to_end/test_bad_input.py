@@ -269,6 +269,7 @@ def test_a_failed_swap_puts_the_last_run_back(
             raise OSError("full")
         return original(path, target)
 
+    monkeypatch.setattr(store, "exchanged", lambda one, other: False)
     monkeypatch.setattr(Path, "rename", refuse_new)
     with pytest.raises(InputProblem, match="full"):
         store.write_folder(folder, {"a.txt": b"new"})

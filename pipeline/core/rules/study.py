@@ -78,6 +78,22 @@ RULES = (
         "Name a new folder, or one that holds an earlier run.",
     ),
     Rule(
+        "disk_full",
+        "No room left on the disk",
+        "The disk, your share of it, or a limit on the size of a file leaves no room.",
+        "A run is written whole or not at all, beside the earlier one that it replaces.",
+        "A run of 40 MB, written to a stick with 12 MB free.",
+        "Free some room or name a place on another disk, and run again; nothing was lost.",
+    ),
+    Rule(
+        "changed_file",
+        "Table that changed while it was read",
+        "A file was written again, or went away, between the beginning of a run and its end.",
+        "Some numbers would stem from the old file and some from the new one.",
+        "A colleague saves deals.xlsx while the run reads it.",
+        "Wait until whoever writes the file has finished, and run again.",
+    ),
+    Rule(
         "no_run",
         "Folder without a finished run",
         "The folder holds no run that can be read back.",

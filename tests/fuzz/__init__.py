@@ -1,0 +1,1 @@
+"""Readers fed with broken files: see :mod:`tests.fuzz.run`."""
