@@ -73,10 +73,12 @@ class Bench:
 
     Attributes:
         home: the folder.
+        light: whether the study is one that takes a part of a second.
         whole: variant -> relative name of each file -> digest; manifests by name alone.
     """
 
     home: Path
+    light: bool = False
     whole: list[dict[str, str]] = field(default_factory=list)
 
     @property
@@ -120,7 +122,7 @@ def prepared(home: Path, light: bool = False) -> Bench:
     """Two variants of the small study, each run once to know what it leaves."""
     text = write_small_study(home).read_text()
     text = text + LIGHT if light else text.replace('["tex"]', '["html", "tex"]')
-    bench = Bench(home)
+    bench = Bench(home, light)
     for variant, window in enumerate(WINDOWS):
         bench.study(variant).write_text(text.replace(WINDOWS[0], window).replace("Small", "Same"))
     for variant in (0, 1):
@@ -240,7 +242,7 @@ def kill_once(
     """Kill one run, look at the folder, and let another run sweep what was left."""
     before = bench.state()
     other = 1 - before if isinstance(before, int) else 0
-    alone, fresh = number % FRESH_PROCESS == FRESH_PROCESS - 2, number % 4 < 2
+    alone, fresh = number % FRESH_PROCESS == 0 and not bench.light, number % 4 < 2
     if number % 2:
         length = 1.2 * (usual.began(ENDED) - usual.began(WRITING))
         done = attempt(bench, other, stream.uniform(0, length), WRITING, fresh=fresh)
