@@ -54,9 +54,10 @@ def show_deal(
         return
     window = story.window.label.replace("-", "−")
     interval = f"{basis_points(story.low)} to {basis_points(story.high)} bp"
+    scar = f"{story.scar:.2f}".replace("-", "−")
     console.print(
         f"CAR{window} {basis_points(story.car)} bp, its own interval {interval}, standardised "
-        f"{story.scar:.2f}; rank {story.rank} of {story.deals}, 1 the largest. Estimated on "
+        f"{scar}; rank {story.rank} of {story.deals}, 1 the largest. Estimated on "
         f"{story.observations} returns."
     )
     table = Table(box=None, pad_edge=False, header_style="")

@@ -224,7 +224,7 @@ def _no_history(recipe: Recipe) -> Finding:
         "lag_without_history",
         Severity.ERROR,
         "study",
-        got=f"a lag of {recipe.lag} year(s), and no table of candidates",
+        got=f"a lag (in years: {recipe.lag}), and no table of candidates",
         expected="candidates, company by year",
         remedy="Name the candidates in a study with [selection], or leave the lag out.",
         column=f"characteristics.{recipe.name}.lag",

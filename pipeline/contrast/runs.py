@@ -42,7 +42,14 @@ def read_run(folder: Path) -> SavedRun:
         raise problem(
             "no_run",
             "command line",
-            got=f"{folder}: {fault}",
+            got=f"{folder}: {_told(fault)}",
             expected="a folder written by dealwake run, with its manifest and its data",
             remedy="Name the folder of a finished run, such as reports/demo.",
         ) from fault
+
+
+def _told(fault: Exception) -> str:
+    """What is wrong with a folder, in words."""
+    if isinstance(fault, FileNotFoundError):
+        return f"no file {Path(fault.filename).name} in it" if fault.filename else "a file missing"
+    return str(fault)

@@ -79,7 +79,7 @@ def apply_contract(
             findings += _lost_digits(raw, table[ROW], source, column)
         if column.filled:
             empty = is_missing(raw) & ~broken
-            findings += _empty_cells(table.loc[empty, ROW], source, column)
+            findings += _empty_cells(raw[empty], table.loc[empty, ROW], source, column)
         if column.kind == "date":
             wrong = values.notna() & (~values.between(EARLIEST, LATEST) | values.isin(FILL_VALUES))
             findings += _out_of_range(raw[wrong], table.loc[wrong, ROW], source, column)
@@ -267,11 +267,20 @@ def _bad_cells(cells: pd.Series, rows: pd.Series, source: Source, column: Column
             source.file,
             got=examples,
             expected=EXPECTED[column.kind],
-            remedy=comma_remedy(cells, source) or REMEDY[column.kind],
+            remedy=comma_remedy(cells, source) or _sign_remedy(cells) or REMEDY[column.kind],
             rows=row_numbers(rows),
             column=source.columns.get(column.name, column.name),
         )
     ]
+
+
+def _sign_remedy(cells: pd.Series) -> str:
+    """What to do with cells that each end in a percent sign; '' for others."""
+    texts = cells.astype(str).str.strip()
+    if not texts.str.fullmatch(r"[-+]?[\d.]+\s*%").all():
+        return ""
+    bare = texts.iloc[0].rstrip("% ")
+    return f"Take the signs away in the whole column: {bare} for '{texts.iloc[0]}'."
 
 
 def _lost_digits(raw: pd.Series, rows: pd.Series, source: Source, column: Column) -> list[Finding]:
@@ -328,17 +337,26 @@ def _error_cells(
     ]
 
 
-def _empty_cells(rows: pd.Series, source: Source, column: Column) -> list[Finding]:
+def _empty_cells(
+    cells: pd.Series, rows: pd.Series, source: Source, column: Column
+) -> list[Finding]:
     if rows.empty:
         return []
+    got = f"{len(rows)} empty cell" + ("s" if len(rows) > 1 else "")
+    remedy = "Fill the cells, or delete the rows."
+    words = [word for word in dict.fromkeys(cells.dropna().astype(str).str.strip()) if word]
+    if words and column.kind == "text":
+        told = " or ".join(f"'{word}'" for word in words)
+        got = f"{len(rows)} cell{'s' if len(rows) > 1 else ''} empty or {told}, a word for none"
+        remedy += f" If {told} is a code of yours, write another one in every table, such as NA.X."
     return [
         Finding(
             "missing_value",
             Severity.ERROR,
             source.file,
-            got=f"{len(rows)} empty cell" + ("s" if len(rows) > 1 else ""),
+            got=got,
             expected="a value in every row",
-            remedy="Fill the cells, or delete the rows.",
+            remedy=remedy,
             rows=row_numbers(rows),
             column=source.columns.get(column.name, column.name),
         )

@@ -16,6 +16,8 @@ from pipeline.core.findings import Finding, Severity
 SERIALS = {"excel": datetime(1899, 12, 30), "excel 1904": datetime(1904, 1, 1)}
 SERIAL_RANGE = (20_000, 60_000)
 EXAMPLES = 3
+# Where the format of one table stands that writes its dates unlike the others.
+ALONE = "date_format under the table's own inputs.source if only this file writes them so"
 FEW_WEEKDAYS = 0.7
 MONTHS = ("jan", "feb", "mar", "apr", "may", "jun", "jul", "aug", "sep", "oct", "nov", "dec")
 SERIAL, SHORT_YEAR = "a spreadsheet's serial day", "a year of two digits"
@@ -150,12 +152,14 @@ def _mixed(
 
 def _one_format(name: str, cells: list[Cell], file: str, column: str, expected: str) -> Finding:
     """A column of one format throughout that is not the one declared."""
+    mark = _mark(cells[0])
     if name == EITHER:
         return _finding(
             "ambiguous_day_month", cells, file, column,
             f"{_examples(cells)}, which may be read day first or month first: {_both(cells)}",
             expected,
-            "Declare inputs.date_format = '%d/%m/%Y' or '%m/%d/%Y', with its own marks.",
+            f"Declare inputs.date_format = '%d{mark}%m{mark}%Y' or '%m{mark}%d{mark}%Y', or "
+            f"{ALONE}.",
         )  # fmt: skip
     if name == SERIAL:
         return _finding(
@@ -169,12 +173,21 @@ def _one_format(name: str, cells: list[Cell], file: str, column: str, expected: 
             "two_digit_year", cells, file, column, _examples(cells), "a year of four digits",
             "Write the year in full; two digits do not tell the century.",
         )  # fmt: skip
-    pattern = {DAY_FIRST: " = '%d/%m/%Y'", MONTH_FIRST: " = '%m/%d/%Y'"}.get(name, "")
+    pattern = {
+        DAY_FIRST: f" = '%d{mark}%m{mark}%Y'",
+        MONTH_FIRST: f" = '%m{mark}%d{mark}%Y'",
+    }.get(name, "")
     return _finding(
         "unparseable_date", cells, file, column, f"{_examples(cells)}, written as {name}",
-        expected, f"Declare inputs.date_format{pattern}, with its own marks, or write the dates "
-        "as expected.",
+        expected, f"Declare inputs.date_format{pattern}, or {ALONE}, or write the dates as "
+        "expected.",
     )  # fmt: skip
+
+
+def _mark(cell: Cell) -> str:
+    """What stands between the parts of a date in figures; a slash if nothing is told."""
+    found = re.match(r"\d{1,4}([-/. ])", str(cell.value).strip())
+    return found[1] if found else "/"
 
 
 def _finding(

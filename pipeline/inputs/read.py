@@ -137,21 +137,29 @@ def _read_inputs(
         found.extend(findings)
         return value
 
-    listed = attempt("deals", lambda file: read_deals(file, wanted, zone, date_format, rules))
-    candidates = attempt("candidates", lambda file: read_candidates(file, wanted, date_format))
+    listed = attempt(
+        "deals", lambda file: read_deals(file, wanted, zone, file.dates(date_format), rules)
+    )
+    candidates = attempt(
+        "candidates", lambda file: read_candidates(file, wanted, file.dates(date_format))
+    )
     peers = attempt("peers", read_peers)
     lines = attempt("listings", read_listings)
-    news = attempt("news", lambda file: read_news(file, date_format))
+    news = attempt("news", lambda file: read_news(file, file.dates(date_format)))
     only = touched(reach, listed[0] if listed else None, candidates, peers, lines)
     if listed is not None:
         found += _across(listed[0], candidates, sources, lines)
     if listed is not None and "restricted" in sources:
         found += _restricted(listed[0], sources, fetcher)
-    prices = attempt("prices", lambda file: read_prices(file, only, date_format, declared), only)
-    benchmarks = attempt("benchmarks", lambda file: read_benchmarks(file, date_format, declared))
-    factors = attempt("factors", lambda file: read_factors(file, date_format, declared))
-    rates = attempt("rates", lambda file: read_rates(file, date_format, rules.common))
-    delistings = attempt("delistings", lambda file: read_delistings(file, date_format))
+    prices = attempt(
+        "prices", lambda file: read_prices(file, only, file.dates(date_format), declared), only
+    )
+    benchmarks = attempt(
+        "benchmarks", lambda file: read_benchmarks(file, file.dates(date_format), declared)
+    )
+    factors = attempt("factors", lambda file: read_factors(file, file.dates(date_format), declared))
+    rates = attempt("rates", lambda file: read_rates(file, file.dates(date_format), rules.common))
+    delistings = attempt("delistings", lambda file: read_delistings(file, file.dates(date_format)))
     raise_errors(found)
     if listed is None or prices is None or benchmarks is None:
         raise KeyError("deals, prices and benchmarks must each have a source")

@@ -108,7 +108,9 @@ def _read_ready(
     listed, candidates = None, None
     try:
         fixed = _columns(wanted, outcome, coded="restricted" in sources)
-        listed, ledger, findings = _read_list(source, fixed, wanted, outcome, date_format, rules)
+        listed, ledger, findings = _read_list(
+            source, fixed, wanted, outcome, source.dates(date_format), rules
+        )
         found += findings
         if "restricted" in sources:
             found += restricted_findings(listed, source, sources["restricted"])
@@ -116,7 +118,8 @@ def _read_ready(
         found += fault.findings
     if "candidates" in sources:
         try:
-            candidates, findings = read_candidates(sources["candidates"], wanted, date_format)
+            file = sources["candidates"]
+            candidates, findings = read_candidates(file, wanted, file.dates(date_format))
             found += findings
         except InputProblem as fault:
             found += fault.findings

@@ -35,6 +35,7 @@ class Source:
         wide: whether each code has a column of its own; None if the study does not say.
         value: the column a wide table's cells belong to.
         factors: our columns -> what their cells are multiplied by.
+        date_format: how this table alone writes dates; '' for as all tables do.
         copy: csv file a query's result was put in, once it was.
     """
 
@@ -53,6 +54,7 @@ class Source:
     value: str = "close"
     factors: Mapping[str, float] = field(default_factory=dict)
     copy: Path | None = None
+    date_format: str = ""
 
     @property
     def kind(self) -> str:
@@ -60,6 +62,10 @@ class Source:
         if self.copy is not None:
             return ".csv"
         return POSTGRES.name if self.is_postgres else self.path.suffix.lower()
+
+    def dates(self, of_all: str) -> str:
+        """How dates of this table are written, given how all tables write them."""
+        return self.date_format or of_all
 
     @property
     def is_postgres(self) -> bool:

@@ -51,8 +51,8 @@ def _survives(data: pd.DataFrame, column: str) -> str:
         own = part.loc[part["reported"], column]
         turned |= bool(len(own)) and bool((np.sign(part[column]) != np.sign(own.iloc[0])).any())
     if turned:
-        return " changes sign under some assumption put to it"
-    return " keeps its sign under every assumption put to it"
+        return " changes sign in at least one line drawn here"
+    return " keeps its sign in every line drawn here"
 
 
 def _harshest(material: Material, told: pd.Series[float]) -> list[dict[str, object]]:

@@ -168,7 +168,8 @@ def _test_words(material: Material, with_reason: bool) -> Pieces:
     if not math.isfinite(result.p_value):
         return ("; ", name, " gives no p-value", *why)
     p = material.p_value()
-    sign = "p " if p.text.startswith("<") else "p = "  # the quoted text is then "<0.001"
+    # The quoted text may be "<0.001"; the sign and its number stay on one line.
+    sign = "p\u00a0" if p.text.startswith("<") else "p\u00a0=\u00a0"
     return (", ", sign, p, " by the test ", name, *why)
 
 

@@ -104,7 +104,7 @@ def _checks(material: Material, verdict: str, words: str) -> list[Paragraph]:
         return []
     rows = frame[frame["verdict"] == verdict]
     return [
-        prose(words, embedded(f"{subject}, {check}", "check"), ".")
+        prose(words, embedded(f"{subject}, {check.removesuffix(', p')}", "check"), ".")
         for subject, check in zip(rows["subject"], rows["check"], strict=True)
     ]
 

@@ -273,9 +273,11 @@ def labels(study: Study) -> dict[str, str]:
 def conventions(study: Study) -> tuple[str, ...]:
     """The conventions a reader must know, one sentence each, from the study's own values."""
     time = study.event_time
+    minutes = "minute" if time.cutoff_minutes == 1 else "minutes"
+    less = f", less {time.cutoff_minutes} {minutes}," if time.cutoff_minutes else ""
     return (
-        "Day zero is the first session of the listing's own exchange whose close, "
-        f"less {time.cutoff_minutes} minutes, comes at or after the announcement.",
+        f"Day zero is the first session of the listing's own exchange whose close{less} comes at "
+        "or after the announcement.",
         *plan_events.date_sentences(study),
         "An announcement with a date and no time takes that date's session; the session after "
         "may hold its reaction.",

@@ -54,6 +54,10 @@ def date_sentences(study: Study) -> tuple[str, ...]:
     )
 
 
+def _sessions(count: int) -> str:
+    return f"{count} session" if count == 1 else f"{count} sessions"
+
+
 def event_sentences(study: Study) -> tuple[str, ...]:
     """How repeated deals and other news are treated."""
     time = study.event_time
@@ -61,7 +65,7 @@ def event_sentences(study: Study) -> tuple[str, ...]:
     return (
         f"Sessions within {time.mask_sessions} of another deal of the company are left out of "
         f"estimation; {REPEATED[time.repeats]}.",
-        f"A deal within {time.confounding_days} session(s) of {news} is "
+        f"A deal within {_sessions(time.confounding_days)} of {news} is "
         f"{CONFOUNDED[time.confounding]}.",
     )
 

@@ -54,6 +54,11 @@ class SourceKeys(Part):
     header_row: int = Field(
         1, ge=1, description="Row of a csv file or a sheet that holds the column names."
     )
+    date_format: str = Field(
+        "",
+        description="How this table alone writes dates, if not as inputs.date_format says: "
+        "'%d.%m.%Y', or 'excel'.",
+    )
     table: str = Field("", description="Table of a DuckDB file or of PostgreSQL.")
     query: str = Field(
         "",
@@ -94,6 +99,7 @@ def source_of(study: Study, table: str, path: Path) -> Source:
         wide=keys.layout == "wide" if keys.layout else None,
         value=value,
         factors=_factors(study, keys),
+        date_format=keys.date_format,
     )
 
 

@@ -83,7 +83,7 @@ def as_duckdb(folder: Path, made: Frames) -> str:
 
 
 def as_german_csv(folder: Path, made: Frames) -> str:
-    """Semicolons, decimal commas, days first, in cp1252."""
+    """Semicolons and decimal commas, in cp1252."""
     for name, frame in made.items():
         frame = frame.rename(columns={"size": "Größe"})
         frame.to_csv(
@@ -94,11 +94,24 @@ def as_german_csv(folder: Path, made: Frames) -> str:
     return text + '\n[inputs.columns.deals]\nsize = "Größe"\n'
 
 
+def as_dates_of_their_own(folder: Path, made: Frames) -> str:
+    """Each table writes its dates in another way, none of them ISO 8601."""
+    text = ""
+    patterns = {"deals": "%d/%m/%Y %H:%M", "prices": "%d.%m.%Y", "benchmarks": "%m-%d-%Y"}
+    for name, frame in made.items():
+        column = "announced_at" if name == "deals" else "date"
+        dates = pd.to_datetime(frame[column]).dt.strftime(patterns[name])
+        frame.assign(**{column: dates}).to_csv(folder / f"own_{name}.csv", index=False)
+        text += f'\n[inputs.source.{name}]\ndate_format = "{patterns[name]}"\n'
+    return text
+
+
 MADE: dict[str, tuple[Callable[[Path, Frames], str], str]] = {
     "parquet": (as_parquet, "{}.parquet"),
     "xlsx": (as_workbook, "{}.xlsx"),
     "duckdb": (as_duckdb, "{}.duckdb"),
     "another csv": (as_german_csv, "de_{}.csv"),
+    "dates of their own": (as_dates_of_their_own, "own_{}.csv"),
 }
 
 

@@ -60,6 +60,25 @@ def test_words_for_missing(cell: object) -> None:
     assert finding.got == "2 empty cells"
 
 
+def test_a_code_that_is_a_word_for_none_is_shown() -> None:
+    """NA is a share's code on more than one exchange: common practice, no source."""
+    _, findings = read(["AB", "NA ", ""], Column("size", "text", filled=True))
+    finding = one(findings)
+    assert (finding.rule, finding.row) == ("missing_value", "3, 4")
+    assert finding.got == "2 cells empty or 'NA', a word for none"
+    assert "code of yours" in finding.remedy
+
+
+def test_percent_signs_are_named() -> None:
+    _, findings = read(["61.3 %", "70%"], Column("size", "number"))
+    assert one(findings).remedy == "Take the signs away in the whole column: 61.3 for '61.3 %'."
+
+
+def test_a_declared_format_is_worded_with_the_files_own_marks() -> None:
+    _, findings = read(["13.01.2005", "14.01.2005"], Column("day", "date"), "%d/%m/%Y")
+    assert "'%d.%m.%Y'" in one(findings).remedy
+
+
 @pytest.mark.parametrize(
     "cell",
     ["1,5", "1,234.5", "1.234,5", "1 234", "5%", "€5", "(5)", "1.2bn", "12abc", "0x10", "1_000",
