@@ -145,13 +145,19 @@ def regressors_of(
             left.append((name, why))
             continue
         basis.append(values)
-        control, made = _characteristic(name, source, values)
+        control, made = _characteristic(name, _in_study(deals, source), values)
         taken.append(control)
         lines += made
     return Regressors(tuple(taken), tuple(lines), tuple(left))
 
 
 Source = tuple[str, ...]
+
+
+def _in_study(deals: Recognised, source: Source) -> Source:
+    """Columns as the study calls them: those that play a part by its name."""
+    parts = {match.column: role for role, match in deals.matches.items()}
+    return tuple(parts.get(column, column) for column in source)
 
 
 def _in_order(deals: Recognised, spare: Sequence[str]) -> list[tuple[str, Source]]:

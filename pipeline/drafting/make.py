@@ -16,8 +16,10 @@ from pipeline.drafting.lines import Line, answered, written
 from pipeline.drafting.measured import measured_lines
 from pipeline.drafting.outcomes import outcome_lines
 from pipeline.drafting.roles import KINDS
-from pipeline.drafting.sources import date_lines, source_lines
-from pipeline.drafting.tables import Found, tables_in
+from pipeline.drafting.signs import COMMA
+from pipeline.drafting.sources import date_lines, source_lines, table_of
+from pipeline.drafting.spelling import spellings
+from pipeline.drafting.tables import Found, files_in, tables_in
 
 NEEDED = {"deals": "deals", "prices": "prices", "benchmarks": "benchmarks"}
 HEAD = (
@@ -68,6 +70,10 @@ def draft(folder: Path, place: Path, answers: Mapping[str, object]) -> Draft:
     """
     tables, refused = tables_in(folder)
     kinds = agreed(_kinds(laid_long(tables)))
+    spelled = spellings(answers, kinds, files_in(folder))
+    if spelled:
+        tables, refused = tables_in(folder, spelled)
+        kinds = agreed(_kinds(laid_long(tables)))
     missing = [*refused, *_lacking(kinds)]
     lines = [*_title(kinds, folder)]
     if any(kind in kinds.by_kind for kind in ("deals", "ready")):
@@ -151,8 +157,21 @@ def _lacking(kinds: Sorted) -> list[Finding]:
                     got=f"no column that can be the {role.name.replace('_', ' ')} of the {kind}; "
                     "the table has " + ", ".join(item.found.signs),
                     expected=f"a column '{role.name}': {role.layout or 'a value in every row'}",
-                    remedy="Add the column to the file and draft again.",
+                    remedy=_remedy(item),
                     column=role.name,
                 )
             )
     return found
+
+
+def _remedy(item: Recognised) -> str:
+    """What to do about a part that no column fits: a decimal comma hides columns of numbers."""
+    if any(signs.trouble == COMMA for signs in item.found.signs.values()):
+        return (
+            "If it is the column with decimal commas, answer the question about them: draft again "
+            f"with --answer inputs.source.{table_of(item.kind)}.decimal=,"
+        )
+    return (
+        "Add the column to the file and draft again. If its headings stand lower down, draft again "
+        f"with --answer inputs.source.{table_of(item.kind)}.header_row=3, say."
+    )

@@ -33,8 +33,20 @@ def source_lines(kinds: Sorted, base: Path) -> list[Line]:
     ]
     layouts = [line for kind, item in kinds.by_kind.items() for line in _layout(kind, item)]
     troubles = [line for kind, item in kinds.by_kind.items() for line in _troubles(kind, item)]
+    spelled = [line for kind, item in kinds.by_kind.items() for line in _spelling(kind, item)]
     columns = [line for kind, item in kinds.by_kind.items() for line in _columns(kind, item)]
-    return [*paths, *troubles, *sheets, *layouts, *columns]
+    return [*paths, *troubles, *sheets, *layouts, *spelled, *columns]
+
+
+def _spelling(kind: str, item: Recognised) -> Iterator[Line]:
+    """How the file is written where it is not plainly; the analyst's own answers replace these."""
+    source, section = item.found.source, f"inputs.source.{table_of(kind)}"
+    if source.encoding:
+        reason = "It is not UTF-8; this is what many spreadsheets write. Look at accented letters."
+        yield Line(section, "encoding", source.encoding, reason, doubtful=True)
+    if source.header_row > 1:
+        reason = "The first row that names every column; what stands above it is not read."
+        yield Line(section, "header_row", source.header_row, reason, doubtful=True)
 
 
 def _path_line(kind: str, item: Recognised, base: Path) -> Line:
@@ -127,6 +139,7 @@ def _format_lines(
     named: list[tuple[Recognised, Dating]], answers: Mapping[str, object]
 ) -> Iterator[Line]:
     declared = {d.declared: (item, d) for item, d in named if d.declared}
+    alone = _alone(named)
     open_ones = [(item, d) for item, d in named if d.open]
     troubled = [(item, d) for item, d in named if d.trouble]
     for item, dating in troubled:
@@ -145,11 +158,27 @@ def _format_lines(
     elif declared:
         pattern, (item, dating) = next(iter(declared.items()))
         others = [f"'{other}' in {found.found.source.file}"
-                  for other, (found, _) in declared.items() if other != pattern]  # fmt: skip
+                  for other, (found, _) in declared.items()
+                  if other != pattern and found.kind not in alone]  # fmt: skip
         reason = f"{item.found.source.file} writes dates as '{dating.example}'."
         if others:
             reason += f" Other files differ: {', '.join(others)}; bring them to one format."
         yield Line("inputs", "date_format", pattern, reason, doubtful=bool(others))
+        for kind, own in alone.items():
+            if own != pattern:
+                reason = "This table writes its dates in a way of its own."
+                yield Line(f"inputs.source.{table_of(kind)}", "date_format", own, reason)
+
+
+def _alone(named: list[tuple[Recognised, Dating]]) -> dict[str, str]:
+    """Kind -> the one format of all its dates, for tables that have one."""
+    formats: dict[str, set[str]] = {}
+    for item, dating in named:
+        formats.setdefault(item.kind, set()).add(dating.declared)
+    return {
+        kind: next(iter(found)) for kind, found in formats.items()
+        if len(found) == 1 and found != {""}
+    }  # fmt: skip
 
 
 def _zone_lines(deals: Recognised, signs: Signs) -> Iterator[Line]:

@@ -3,14 +3,17 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
+from typing import Any
 
 import pandas as pd
 
 from pipeline.core.findings import Finding, InputProblem, problem
-from pipeline.drafting.signs import Signs, signs_of
-from pipeline.inputs.files import ROW, Source, read_table
+from pipeline.drafting.reading import read_as_written
+from pipeline.drafting.signs import COMMA, Signs, signs_of
+from pipeline.inputs.files import ROW, Source
+from pipeline.inputs.numerals import with_points
 
 LONG = 100_000
 KINDS = (".csv", ".parquet", ".xlsx")
@@ -48,15 +51,26 @@ class Found:
         return float(self.frame.duplicated(list(key)).mean()) < 0.01
 
 
-def tables_in(folder: Path) -> tuple[list[Found], list[Finding]]:
+def files_in(folder: Path) -> list[Path]:
+    """The files of a folder that may hold tables, by name."""
+    if not folder.is_dir():
+        return []
+    return sorted(path for path in folder.iterdir() if path.suffix.lower() in KINDS)
+
+
+def tables_in(
+    folder: Path, spelled: Mapping[Path, Mapping[str, Any]] | None = None
+) -> tuple[list[Found], list[Finding]]:
     """Every table of a folder in the order of the files' names, and why others were not read.
+
+    Args:
+        folder: where they are.
+        spelled: file -> how it is written, by the names of :class:`Source`.
 
     Raises:
         InputProblem: ``missing_file`` if there is no such folder or no table in it.
     """
-    files = sorted(path for path in folder.iterdir() if path.suffix.lower() in KINDS) if (
-        folder.is_dir()
-    ) else []  # fmt: skip
+    files = files_in(folder)
     if not files:
         raise problem(
             "missing_file",
@@ -74,7 +88,7 @@ def tables_in(folder: Path) -> tuple[list[Found], list[Finding]]:
             continue
         for source in sources:
             try:
-                found.append(_found(source))
+                found.append(_found(replace(source, **(spelled or {}).get(path, {}))))
             except InputProblem as fault:
                 refused += fault.findings
     return found, refused
@@ -91,11 +105,16 @@ def _sources(path: Path) -> Iterator[Source]:
 
 
 def _found(source: Source) -> Found:
-    frame = read_table(source).drop(columns=ROW)
+    source, frame = read_as_written(source)
+    frame = frame.drop(columns=ROW)
     frame.columns = pd.Index([str(name) for name in frame.columns])
     if len(frame) < LONG:  # a deal entered twice is no second deal
         frame = frame.drop_duplicates(ignore_index=True)
-    return Found(source, frame, {name: signs_of(name, frame[name]) for name in frame.columns})
+    signs = {name: signs_of(name, frame[name]) for name in frame.columns}
+    for name in [name for name, sign in signs.items() if sign.trouble == COMMA]:
+        frame[name] = with_points(frame[name], source)
+        signs[name] = signs_of(name, frame[name])
+    return Found(source, frame, signs)
 
 
 def _unreadable(path: Path, fault: str) -> Finding:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 from collections.abc import Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -12,6 +13,9 @@ from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.drafting.make import Draft, draft
 from pipeline.flow.commands import check
 from pipeline.study.load import load_study
+
+# The last line of a draft: drafting again may replace the file while it is as it was made.
+SEAL = "# While nothing above is changed, drafting again replaces this file: "
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,21 +43,21 @@ def drafted(
     """Draft a study, write it and check it.
 
     Raises:
-        InputProblem: ``output_folder`` if there is a file at ``place`` already, ``missing_file``
-            if the folder holds no table.
+        InputProblem: ``output_folder`` if there is a file at ``place`` that is no draft or was
+            changed since it was drafted, ``missing_file`` if the folder holds no table.
     """
-    if place.exists():
+    if place.exists() and not _untouched(place):
         raise problem(
             "output_folder",
             place.name,
-            got=f"a file at {place}",
-            expected="a new file, so that nothing you wrote is lost",
+            got=f"a file at {place} that you wrote or changed",
+            expected="a new file, or a draft as it was made, so that nothing you wrote is lost",
             remedy="Name another one with --out, or move the old one away.",
         )
     made = draft(folder, place, answers)
     if not any(line.path == "inputs.deals" for line in made.lines):
         raise InputProblem(made.missing)
-    write_file(place, made.text.encode(), "--out")
+    write_file(place, _sealed(made.text).encode(), "--out")
     if made.missing:
         return Drafted(made, place, False, made.missing)
     try:
@@ -61,3 +65,18 @@ def drafted(
     except InputProblem as fault:
         return Drafted(made, place, False, fault.findings)
     return Drafted(made, place, True, findings, (ledger.rows_in, ledger.rows_kept))
+
+
+def _sealed(text: str) -> str:
+    """The draft with a last line that tells whether it was changed."""
+    seal = hashlib.sha256(text.encode()).hexdigest()[:16]
+    return f"{text}\n{SEAL}{seal}\n"
+
+
+def _untouched(place: Path) -> bool:
+    """Whether the file is a draft that nobody has changed."""
+    try:
+        text, mark, _ = place.read_text(encoding="utf-8").rpartition(f"\n{SEAL}")
+        return bool(mark) and _sealed(text) == place.read_text(encoding="utf-8")
+    except (OSError, UnicodeDecodeError):
+        return False

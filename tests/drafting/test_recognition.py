@@ -261,3 +261,52 @@ def test_a_folder_without_tables(tmp_path: Path) -> None:
         made(tmp_path)
     with pytest.raises(InputProblem, match="no folder"):
         made(tmp_path / "none")
+
+
+def test_a_draft_is_drafted_again_until_someone_changes_it(folder: Path) -> None:
+    place = folder / "study.toml"
+    assert not drafted(folder, place, {}).checked
+    assert drafted(folder, place, {"inputs.timestamp_zone": "Europe/London"}).checked
+    place.write_text(place.read_text().replace('title = "', 'title = "My '))
+    with pytest.raises(InputProblem, match="wrote or changed"):
+        drafted(folder, place, {})
+    assert "My " in place.read_text()
+
+
+def test_answers_about_how_a_file_is_written_are_used(folder: Path) -> None:
+    """Semicolons, decimal commas, another encoding and dates with dots, as German desks export."""
+    prices = pd.read_csv(folder / "prices.csv")
+    prices["date"] = pd.to_datetime(prices["date"]).dt.strftime("%d.%m.%Y")
+    prices = prices.rename(columns={"close": "Schlußkurs"})
+    prices.to_csv(folder / "prices.csv", sep=";", decimal=",", encoding="cp1252", index=False)
+    change(folder, "benchmarks", lambda table: table.assign(
+        date=pd.to_datetime(table["date"]).dt.strftime("%d/%m/%Y")))  # fmt: skip
+    (lacking,) = made(folder).missing
+    assert lacking.remedy.endswith("--answer inputs.source.prices.decimal=,")
+    answers = {"inputs.source.prices.decimal": ",", "inputs.timestamp_zone": "Europe/London"}
+    found = drafted(folder, folder / "study.toml", answers)
+    assert found.checked
+    assert found.kept == (40, 40)
+    assert value(found.draft, "inputs.source.prices.encoding") == "cp1252"
+    formats = {value(found.draft, path) for path in (
+        "inputs.date_format", "inputs.source.benchmarks.date_format",
+        "inputs.source.prices.date_format")
+        if any(line.path == path for line in found.draft.lines)}  # fmt: skip
+    assert formats == {"%d.%m.%Y", "%d/%m/%Y"}
+
+
+def test_a_title_and_a_merged_row_above_the_headings(folder: Path) -> None:
+    deals = pd.read_csv(folder / "deals.csv", dtype=str)
+    deals["Value (EUR m)"] = np.exp(deals.pop("size").astype(float) * 4).round(3)
+    with pd.ExcelWriter(folder / "list.xlsx", engine="openpyxl") as book:
+        deals.to_excel(book, index=False, startrow=2)
+        sheet = book.sheets["Sheet1"]
+        sheet["A1"], sheet["A2"], sheet["D2"] = "Deal list, internal", "Who", "When"
+        sheet.merge_cells("A2:C2")
+    (folder / "deals.csv").unlink()
+    found = drafted(folder, folder / "study.toml", {"inputs.timestamp_zone": "Europe/London"})
+    line = next(line for line in found.draft.lines if line.key == "header_row")
+    assert (line.path, line.value, line.doubtful) == ("inputs.source.deals.header_row", 3, True)
+    # The column that plays a part is called by it wherever the study names it.
+    assert value(found.draft, "inputs.columns.deals.deal_value") == "value_(eur_m)"
+    assert found.checked
