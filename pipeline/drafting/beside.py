@@ -9,8 +9,8 @@ import pandas as pd
 
 from pipeline.core.findings import InputProblem
 from pipeline.drafting.roles import small
-from pipeline.drafting.signs import CURRENCIES, signs_of
-from pipeline.drafting.tables import Found
+from pipeline.drafting.signs import CURRENCIES
+from pipeline.drafting.tables import Found, found_of
 from pipeline.inputs.files import ROW, read_table
 from pipeline.returns.sessions import known_exchanges
 
@@ -53,7 +53,7 @@ def _long(found: Found, others: Sequence[Found]) -> Found:
     except InputProblem:
         return found
     frame.columns = pd.Index([str(name) for name in frame.columns])
-    return Found(source, frame, {name: signs_of(name, frame[name]) for name in frame.columns})
+    return found_of(source, frame)
 
 
 def _table(series: Sequence[str], others: Sequence[Found]) -> str:

@@ -110,6 +110,11 @@ def _found(source: Source) -> Found:
     frame.columns = pd.Index([str(name) for name in frame.columns])
     if len(frame) < LONG:  # a deal entered twice is no second deal
         frame = frame.drop_duplicates(ignore_index=True)
+    return found_of(source, frame)
+
+
+def found_of(source: Source, frame: pd.DataFrame) -> Found:
+    """A table with the signs of its columns; numbers with a comma are read if that was answered."""
     signs = {name: signs_of(name, frame[name]) for name in frame.columns}
     for name in [name for name, sign in signs.items() if sign.trouble == COMMA]:
         frame[name] = with_points(frame[name], source)

@@ -310,3 +310,14 @@ def test_a_title_and_a_merged_row_above_the_headings(folder: Path) -> None:
     # The column that plays a part is called by it wherever the study names it.
     assert value(found.draft, "inputs.columns.deals.deal_value") == "value_(eur_m)"
     assert found.checked
+
+
+def test_a_decimal_comma_in_closes_side_by_side_is_read_once_answered(folder: Path) -> None:
+    closes = pd.read_csv(folder / "prices.csv").pivot(
+        index="date", columns="security", values="close"
+    )
+    closes.to_csv(folder / "prices.csv", sep=";", decimal=",")
+    answers = {"inputs.source.prices.decimal": ",", "inputs.timestamp_zone": "Europe/London"}
+    found = drafted(folder, folder / "study.toml", answers)
+    assert value(found.draft, "inputs.source.prices.layout") == "wide"
+    assert found.checked
