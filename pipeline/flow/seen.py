@@ -30,7 +30,8 @@ class Seen:
 
 def files_of(study: Study) -> dict[str, Path]:
     """Every file whose content enters a run, by table; the house's logo besides."""
-    files = {name: source.path for name, source in plan.sources(study).items()}
+    sources = plan.sources(study)
+    files = {name: item.path for name, item in sources.items() if not item.is_postgres}
     if study.papers.logo is not None:
         files[LOGO] = study.papers.logo
     return files

@@ -18,6 +18,8 @@ BP = 10_000.0
 PERCENT = 100.0
 MINUS = "\N{MINUS SIGN}"
 LEAST_P = 0.001
+# Decimals of an interval's end that lies near zero.
+MOST_DIGITS = 4
 
 # Controls, lone surrogates, non-characters and marks that reorder text: no page needs them, XML
 # refuses most of them, and the last kind can make a cell read as something else.
@@ -155,7 +157,7 @@ def lines(cell: Cell) -> tuple[str, ...]:
         case Number():
             return (shown(cell),)
         case Interval():
-            ends = clean(cell.words) or f"[{shown(cell.low)}, {shown(cell.high)}]"
+            ends = clean(cell.words) or f"[{_end(cell.low)}, {_end(cell.high)}]"
             empty = not cell.words and cell.low is None
             return _filled(shown(cell.estimate), "" if empty else ends)
         case Bracketed(estimate, inside):
@@ -167,6 +169,15 @@ def lines(cell: Cell) -> tuple[str, ...]:
             adjusted = f"Holm {phrase_p(shown(cell.adjusted))}" if cell.adjusted else ""
             p = phrase_p(shown(cell.p)) if cell.p else ""
             return _filled(shown(cell.value), p, adjusted)
+
+
+def _end(number: Number | None) -> str:
+    """An interval's end as printed: never as zero unless it is, so that its side is seen."""
+    text = shown(number)
+    if number is None or not number.value or any(mark in "123456789" for mark in text):
+        return text
+    digits = -math.floor(math.log10(abs(number.value)))
+    return show(number.value, digits) + number.mark if digits <= MOST_DIGITS else text
 
 
 def _filled(*found: str) -> tuple[str, ...]:

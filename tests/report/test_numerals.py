@@ -146,3 +146,16 @@ def test_lists_and_degrees_of_freedom_in_words() -> None:
     assert joined([]) == ""
     assert df_words(math.inf) == "normal"
     assert df_words(15.5) == "15.5"
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "text"),
+    [
+        (-58.2, -0.41, "[−58, −0.4]"),
+        (0.04, 380.0, "[0.04, 380]"),
+        (-3.0, 0.0, "[−3, 0]"),
+        (-1e-9, 5.0, "[0, 5]"),
+    ],
+)
+def test_an_end_near_zero_shows_its_side(low: float, high: float, text: str) -> None:
+    assert lines(Interval(Number(1.0, 0), Number(low, 0), Number(high, 0)))[-1] == text
