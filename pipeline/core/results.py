@@ -15,6 +15,9 @@ from pipeline.core.ledger import Ledger
 from pipeline.core.outcome import ABNORMAL_RETURN, Outcome
 from pipeline.core.window import Window
 
+# What a variable that an estimator adds is called.
+OWN_WORDS = {"inverse_mills": "inverse Mills ratio"}
+
 
 @dataclass(frozen=True, slots=True)
 class StudyFacts:
@@ -84,7 +87,7 @@ class StudyFacts:
 
     def words(self, name: str) -> str:
         """A variable's label, or its name with spaces."""
-        return self.labels.get(name, name.replace("_", " "))
+        return self.labels.get(name) or OWN_WORDS.get(name, name.replace("_", " "))
 
 
 @dataclass(frozen=True, slots=True)

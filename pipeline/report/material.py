@@ -198,6 +198,8 @@ class Material:
                  *study.excluded, *study.effects, *study.clusters}  # fmt: skip
         for name in sorted((n for n in known if "_" in n), key=len, reverse=True):
             text = named(study.words(name)).join(re.split(rf"\b{re.escape(name)}\b", text))
+        for name in study.clusters:
+            text = re.sub(rf"\b(by|and) {re.escape(name)}\b", rf"\1 {study.words(name)}", text)
         return true_minus(text)
 
     def known(self, name: str) -> bool:

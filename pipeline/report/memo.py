@@ -71,7 +71,7 @@ def _appendix(material: Material) -> Iterator[Section]:
     yield Section("Appendix", (settings_table(material),), fresh=True)
     if material.results.columns:
         yield Section("How to read the columns", (reading(material, notes=False),), 3)
-        yield Section("Side by side", (comparison_table(material, full=False),), 3, wide=True)
+        yield Section("Side by side", (comparison_table(material),), 3, wide=True)
 
 
 def _where(material: Material, figure: Figure | None, table: Table) -> Paragraph:

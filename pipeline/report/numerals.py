@@ -174,7 +174,9 @@ def lines(cell: Cell) -> tuple[str, ...]:
 def _end(number: Number | None) -> str:
     """An interval's end as printed: never as zero unless it is, so that its side is seen."""
     text = shown(number)
-    if number is None or not number.value or any(mark in "123456789" for mark in text):
+    if number is None or not number.value or not math.isfinite(number.value):
+        return text
+    if any(mark in "123456789" for mark in text):
         return text
     digits = -math.floor(math.log10(abs(number.value)))
     return show(number.value, digits) + number.mark if digits <= MOST_DIGITS else text
