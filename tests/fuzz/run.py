@@ -1,6 +1,6 @@
 """Search for files that break a reader, guided by the lines of code that each file reaches.
 
-Rerun from the project's root, with the project installed and ``pip install atheris`` besides:
+Rerun from the project's root, with the project installed and ``pip install '.[fuzz]'`` besides:
 
     .venv/bin/python -m tests.fuzz.run --seconds 400
 
