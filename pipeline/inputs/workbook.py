@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from typing import Any
 from zipfile import BadZipFile, ZipFile
 
+import numpy as np
 import openpyxl
 import pandas as pd
 
@@ -34,35 +35,45 @@ def read_sheet(source: Source) -> pd.DataFrame:
         ValueError, KeyError, OSError, BadZipFile: if it is no workbook, or lacks the sheet.
     """
     _refuse_bomb(source)
-    rows = list(_rows(source, computed=True))
-    header = [str(name) if name is not None else "" for name in rows[0]] if rows else []
-    width = max((len(row) for row in rows), default=0)
-    names = [
-        header[at] if at < len(header) and header[at] else f"Unnamed: {at}" for at in range(width)
-    ]
-    cells = [row + [None] * (width - len(row)) for row in rows[1:]]
-    table = pd.DataFrame(cells, columns=range(width), dtype=object)
-    if table.isna().any(axis=None) and _has_formulas(source):
-        table = _with_formulas(table, source)
+    rows = dict(_rows(source, computed=True))
+    if _any_empty(rows) and _has_formulas(source):
+        _mark_formulas(rows, source)
+    header = rows.pop(source.header_row, [])
+    rows = dict(sorted(rows.items()))
+    # One cell in the last row or column of a sheet must not make a table of a million rows.
+    used = sorted(
+        {at for row in (header, *rows.values()) for at, cell in enumerate(row) if cell is not None}
+    )
+    names = [_name(header, at) for at in used]
+    cells = [[row[at] if at < len(row) else None for at in used] for row in rows.values()]
+    table = pd.DataFrame(cells, columns=range(len(used)), dtype=object)
     table = table.where(table.notna(), "")
     table.columns = pd.Index(names, dtype=object)
-    unused = [
-        at for at, name in enumerate(names)
-        if name.startswith("Unnamed: ") and (table.iloc[:, at] == "").all()
-    ]  # fmt: skip
-    table = table.iloc[:, [at for at in range(width) if at not in unused]]
-    return table.assign(**{ROW: range(source.header_row + 1, source.header_row + 1 + len(table))})
+    return table.assign(**{ROW: np.array(list(rows), dtype=np.int64)})
+
+
+def _name(header: list[Any], at: int) -> str:
+    named = at < len(header) and header[at] is not None
+    return str(header[at]) if named else f"Unnamed: {at}"
+
+
+def _any_empty(rows: Mapping[int, list[Any]]) -> bool:
+    """Whether a cell is empty, so that it may be a formula without a result."""
+    width = max((len(row) for row in rows.values()), default=0)
+    return not rows or any(len(row) < width or None in row for row in rows.values())
 
 
 def sheet_header(source: Source) -> list[str]:
     """The names in the header row that are filled."""
     _refuse_bomb(source)
-    first = next(_rows(source, computed=True), [])
+    number, first = next(_rows(source, computed=True), (0, []))
+    if number != source.header_row:
+        return []
     return [str(name) for name in first if name is not None]
 
 
-def _rows(source: Source, computed: bool) -> Iterator[list[Any]]:
-    """The rows from the header on, without the empty cells at their ends."""
+def _rows(source: Source, computed: bool) -> Iterator[tuple[int, list[Any]]]:
+    """Number and cells of each filled row from the header on, less the empty cells at its end."""
     try:
         yield from _read_rows(source, computed)
     except SOUND_REFUSALS:
@@ -71,18 +82,20 @@ def _rows(source: Source, computed: bool) -> Iterator[list[Any]]:
         raise ValueError(f"a damaged workbook ({fault or type(fault).__name__})") from fault
 
 
-def _read_rows(source: Source, computed: bool) -> Iterator[list[Any]]:
+def _read_rows(source: Source, computed: bool) -> Iterator[tuple[int, list[Any]]]:
     book = openpyxl.load_workbook(source.at, read_only=True, data_only=computed)
     try:
         sheet = book[_sheet(source, book.sheetnames)]
         # The size a file states may be far larger than what it holds.
         if hasattr(sheet, "reset_dimensions"):
             sheet.reset_dimensions()
-        for row in sheet.iter_rows(min_row=source.header_row):
+        rows = sheet.iter_rows(min_row=source.header_row)
+        for number, row in enumerate(rows, start=source.header_row):
             cells = [_meant(cell) for cell in row]
             while cells and cells[-1] is None:
                 cells.pop()
-            yield cells
+            if cells:
+                yield number, cells
     finally:
         book.close()
 
@@ -109,14 +122,16 @@ def _has_formulas(source: Source) -> bool:
         return any(b"<f" in archive.read(name) for name in sheets)
 
 
-def _with_formulas(table: pd.DataFrame, source: Source) -> pd.DataFrame:
-    """Cells whose formula has no saved result, marked: they are not empty."""
-    for at, row in enumerate(list(_rows(source, computed=False))[1:]):
+def _mark_formulas(rows: dict[int, list[Any]], source: Source) -> None:
+    """Cells whose formula has no saved result are marked: they are not empty."""
+    for number, row in _rows(source, computed=False):
+        cells = rows.get(number, [])
+        cells += [None] * (len(row) - len(cells))
         for column, value in enumerate(row):
-            formula = isinstance(value, str) and value.startswith("=")
-            if formula and table.iat[at, column] is None:
-                table.iat[at, column] = NOT_COMPUTED
-    return table
+            if isinstance(value, str) and value.startswith("=") and cells[column] is None:
+                cells[column] = NOT_COMPUTED
+        if any(cell is not None for cell in cells):
+            rows[number] = cells
 
 
 def _refuse_bomb(source: Source) -> None:

@@ -6,8 +6,9 @@ Rerun from the project's root, with the project installed and ``pip install '.[f
 
 ``--seconds`` is for each kind; ``--folder`` keeps what was found, so that a later search
 goes on from there. Writes ``tests/benchmarks/figures/fuzz.json``: executions, edges of the code
-reached, inputs that reached something new, and the faults found. An execution of more than
-``LIMIT`` seconds, or a process of more than ``MEMORY`` MB or 6 GiB of addresses, is a fault.
+reached, inputs that reached something new, the faults found now and those mended before. An
+execution of more than ``LIMIT`` seconds, or a process of more than ``MEMORY`` MB or 6 GiB of
+addresses, is a fault.
 """
 
 from __future__ import annotations
@@ -20,6 +21,8 @@ import sys
 import tempfile
 import time
 from pathlib import Path
+
+from tests.fuzz.targets import FOUND
 
 ROOT = Path(__file__).resolve().parents[2]
 FIGURES = ROOT / "tests" / "benchmarks" / "figures" / "fuzz.json"
@@ -77,6 +80,7 @@ def main() -> None:
     folder = chosen.folder or Path(tempfile.mkdtemp(prefix="dealwake_fuzz_"))
     figures = json.loads(FIGURES.read_text()) if FIGURES.is_file() else {}
     figures["rerun"] = "python -m tests.fuzz.run --seconds 400"
+    figures["mended"] = list(FOUND)
     for kind in chosen.kinds:
         figures.setdefault("kinds", {})[kind] = search(kind, chosen.seconds, folder / kind)
         FIGURES.write_text(json.dumps(figures, indent=2) + "\n")

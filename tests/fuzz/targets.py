@@ -56,6 +56,45 @@ SHARED = (
     b'<?xml version="1.0"?><sst xmlns="http://schemas.openxmlformats.org/spreadsheetml/2006/main" '
     b'count="1" uniqueCount="1"><si><t>D1</t></si></sst>'
 )
+# Inputs that broke a reader before it was mended, by kind; the tests run them.
+FOUND: Mapping[str, tuple[str, bytes]] = {
+    "a sheet without content": ("xlsx", bytes([24])),
+    "a style sheet that is no markup": ("xlsx", bytes([26]) + b"no markup"),
+    "a cell beyond the last row, for which a million rows were made": ("xlsx", b"\x90\x24\0"),
+    "a cell beyond the last column, for which 16,385 columns were made": ("xlsx", b"\x90\x1e"),
+}
+# Words of each kind of file, which chance alone would take long to write.
+WORDS: Mapping[str, tuple[str, ...]] = {
+    "csv": ('""', '",', "2021-03-08", "D1", ";", "1e309", "nan", "-0.0"),
+    "xlsx": (
+        "<row r='2'>", "<mergeCell ref='A1:B9'/>", "<dimension ref='A1:XFD1048576'/>", "hidden='1'",
+        "<numFmt numFmtId='164' formatCode='000'/>", "<xf numFmtId='14'/>", "date1904='1'",
+        "<sheet name='B' sheetId='2' r:id='rId9'/>", "Target='/xl/x.xml'",
+    ),
+    "parquet": ("PAR1",),
+    "study": (
+        "[inputs]", "[[", "]]", "= [", "= {", "inf", "nan", "-1", "0x7fffffffffffffff",
+        "base = 'given.toml'", "[selection]", "[placebo]", "draws = ", "[screens]", "[report]",
+        "formats = ", "[scrutiny]", "[outcome]", "[calendars.XLON]", "closed = [2018-12-31]",
+        "[characteristics.x]", "[series]",
+    ),
+    "moments": ("2021-03-28T01:30", "+25:00", "Z", "24:00", "9999-12-31", "0001-01-01", "1e308"),
+}  # fmt: skip
+# Parts of a sheet, each of which a byte may choose.
+PARTS = (
+    "<c><v>1</v></c>", "<c t='n'><v>44263.5</v></c>", "<c t='s'><v>0</v></c>",
+    "<c t='s'><v>99</v></c>", "<c t='s'/>", "<c t='b'><v>1</v></c>", "<c t='b'><v>x</v></c>",
+    "<c t='e'><v>#REF!</v></c>", "<c t='d'><v>2021-03-08T10:00:00</v></c>",
+    "<c t='d'><v>2021-13-08</v></c>", "<c t='str'><v>D1</v></c>", "<c t='nothing'><v>1</v></c>",
+    "<c t='inlineStr'><is><t>XLON</t></is></c>", "<c t='inlineStr'><is><r><t>A</t></r></is></c>",
+    "<c t='inlineStr'/>", "<c s='1'><v>44263</v></c>", "<c s='99'><v>1</v></c>",
+    "<c s='1'><v>-1</v></c>", "<c s='1'><v>1e308</v></c>", "<c><v>1e999</v></c>",
+    "<c><v>nan</v></c>", "<c><v>x</v></c>", "<c><f>1+1</f></c>", "<c><f>1+1</f><v>2</v></c>",
+    "<c><f t='shared' si='0'/></c>", "<c><f t='array' ref='A1:B2'>A1</f></c>", "<c/>",
+    "<c r='ZZ9'><v>1</v></c>", "<c r='A1'><v>1</v></c>", "<c r='1A'><v>1</v></c>",
+    "<c r='XFE1'><v>1</v></c>", "</row><row>", "</row><row r='9'>", "</row><row r='1'>",
+    "</row><row r='x'>", "</row><row hidden='1'>", "</row><row r='1048577'>",
+)  # fmt: skip
 STUDY = """title = "Small"
 question = "Does it matter?"
 [inputs]
@@ -134,14 +173,27 @@ def _sheets() -> Mapping[str, bytes]:
         return {name: archive.read(name) for name in archive.namelist()}
 
 
+def _sheet_of_parts(chosen: bytes) -> bytes:
+    heads = DEALS.splitlines()[0].split(",")
+    header = "".join(f"<c t='inlineStr'><is><t>{head}</t></is></c>" for head in heads)
+    cells = "".join(PARTS[byte % len(PARTS)] for byte in chosen)
+    space = "http://schemas.openxmlformats.org/spreadsheetml/2006/main"
+    rows = f"<row r='1'>{header}</row><row>{cells}</row>"
+    return f"<worksheet xmlns='{space}'><sheetData>{rows}</sheetData></worksheet>".encode()
+
+
 def xlsx(data: bytes, folder: Path) -> None:
-    """A sound workbook with one of its parts replaced, or bytes in the place of a workbook."""
+    """A sound workbook with one of its parts replaced, or bytes in the place of a workbook.
+
+    Half of the sheets are made of :data:`PARTS`, since bytes alone seldom make markup.
+    """
     how, content = (data[:1] + b"\0")[0], data[1:]
     path = folder / "given.xlsx"
     if how >= 240:
         path.write_bytes(content)
     else:
-        part = SHEET_PARTS[how % len(SHEET_PARTS)]
+        part = SHEET_PARTS[how % len(SHEET_PARTS)] if how < 120 else SHEET_PARTS[0]
+        content = content if how < 120 else _sheet_of_parts(content)
         with zipfile.ZipFile(path, "w") as archive:
             for name, sound in {**_sheets(), part: b""}.items():
                 archive.writestr(name, content if name == part else sound)
@@ -205,6 +257,7 @@ def seeds() -> Mapping[str, list[bytes]]:
         ],
         "xlsx": [
             bytes([1]) + SHARED,
+            *(bytes([120 + which]) + bytes(range(len(PARTS))) for which in (0, 6, 24)),
             *(
                 bytes([at + which]) + _sheets().get(name, b"")
                 for which in (0, 24)

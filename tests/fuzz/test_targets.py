@@ -20,7 +20,7 @@ from hypothesis import strategies as st
 from pipeline.core.findings import Finding, InputProblem, Severity
 from pipeline.inputs.files import read_table
 from pipeline.inputs.source import ROW, Source
-from tests.fuzz.targets import TARGETS, UnworthyRefusal, answered, seeds
+from tests.fuzz.targets import FOUND, TARGETS, UnworthyRefusal, answered, seeds
 
 # FUZZ_EXAMPLES asks for so many new examples of each property, in the place of a few known ones.
 EXAMPLES = int(os.environ.get("FUZZ_EXAMPLES", "0"))
@@ -30,11 +30,6 @@ SOME = settings(
     derandomize=not EXAMPLES,
     suppress_health_check=[HealthCheck.function_scoped_fixture],
 )
-# Inputs that broke a reader before it was mended, by kind.
-FOUND: dict[str, tuple[str, bytes]] = {
-    "a sheet without content": ("xlsx", bytes([24])),
-    "a style sheet that is no markup": ("xlsx", bytes([26]) + b"no markup"),
-}
 
 
 @pytest.mark.parametrize("kind", TARGETS)

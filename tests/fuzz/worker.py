@@ -19,7 +19,7 @@ import duckdb
 MEMORY = 6 << 30
 
 with atheris.instrument_imports(include=["pipeline", "openpyxl"]):
-    from tests.fuzz.targets import TARGETS, seeds
+    from tests.fuzz.targets import TARGETS, WORDS, seeds
 
 
 def share_one_base() -> None:
@@ -50,6 +50,9 @@ def main() -> None:
         part.mkdir(parents=True, exist_ok=True)
     for at, seed in enumerate(seeds()[name]):
         (corpus / f"seed_{at}").write_bytes(seed)
+    words = folder / "words"
+    quoted = (word.replace('"', '\\"') for word in WORDS[name])
+    words.write_text("".join(f'"{word}"\n' for word in quoted))
     resource.setrlimit(resource.RLIMIT_AS, (MEMORY, MEMORY))
     share_one_base()
     known: set[str] = set()
@@ -66,7 +69,7 @@ def main() -> None:
                 said = {"place": place, "said": str(fault)[:500], "trace": traceback.format_exc()}
                 kept.with_suffix(".json").write_text(json.dumps(said, indent=2))
 
-    atheris.Setup([sys.argv[0], *sys.argv[3:], str(corpus)], once)
+    atheris.Setup([sys.argv[0], *sys.argv[3:], f"-dict={words}", str(corpus)], once)
     atheris.Fuzz()
 
 

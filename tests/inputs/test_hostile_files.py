@@ -238,6 +238,18 @@ def test_a_sheet_that_states_more_cells_than_it_has(tmp_path: Path) -> None:
     assert read_table(Source("deals", path))["deal_id"].tolist() == ["D1"]
 
 
+def test_a_stray_cell_in_the_last_row_and_column(tmp_path: Path) -> None:
+    """As a slip of the hand leaves it: no table of a million rows or of 16,384 columns is made."""
+    rows = (["deal_id", "size"], ["D1", 1], [], ["D2", 2])
+    workbook(tmp_path / "deals.xlsx", *rows)
+    book = openpyxl.load_workbook(tmp_path / "deals.xlsx")
+    book.active["XFD1048576"] = "x"
+    book.save(tmp_path / "deals.xlsx")
+    table = read_table(Source("deals", tmp_path / "deals.xlsx"))
+    assert table.shape == (3, 4)
+    assert table["_row"].tolist() == [2, 4, 1_048_576]
+
+
 @pytest.mark.parametrize("name", ["deals.xlsx", "deals.parquet", "deals.duckdb"])
 @pytest.mark.parametrize("content", [b"", b"\0" * 5000, b"PK\x03\x04 no archive", b"PAR1 no table"])
 def test_a_file_of_nonsense(name: str, content: bytes, tmp_path: Path) -> None:
