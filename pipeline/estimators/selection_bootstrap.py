@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
-import joblib
 import numpy as np
 
 from pipeline.core.design import Design, SelectionRows
@@ -15,6 +14,7 @@ from pipeline.estimators import batched_probit as batched
 from pipeline.estimators.algebra import scaled, solve
 from pipeline.estimators.covariance import groups_of, recoded
 from pipeline.estimators.probit import Equation, ProbitFit, fit_probit, mills
+from pipeline.estimators.workers import spread
 
 CITATION = "Efron and Tibshirani (1993); Cameron, Gelbach and Miller (2008)"
 AT_ONCE = 125
@@ -83,7 +83,7 @@ def bootstrap_both_steps(
     single candidates where there is none (Efron and Tibshirani 1993; Cameron, Gelbach and Miller
     2008). A replication whose probit is separated or does not converge is left out and counted.
     Blocks of replications have a random stream each, so that the numbers do not depend on
-    ``workers``; 0 takes a second process where it is worth its start.
+    ``workers``; 0 leaves it to :mod:`pipeline.estimators.workers` where they are worth their start.
 
     Raises:
         EstimationFailed: if fewer than half of the replications succeed.
@@ -94,9 +94,7 @@ def bootstrap_both_steps(
     sizes = [min(AT_ONCE, draws - start) for start in starts]
     seeds = np.random.SeedSequence(seed).spawn(len(sizes))
     heavy = len(codes) * draws >= WORTH_A_PROCESS
-    jobs = min(workers or (joblib.cpu_count() if heavy else 1), len(sizes))
-    work = (joblib.delayed(_block)(steps, *pair) for pair in zip(sizes, seeds, strict=True))
-    parts = joblib.Parallel(n_jobs=jobs)(work)
+    parts = spread(_block, steps, list(zip(sizes, seeds, strict=True)), heavy, workers)
     gammas = np.concatenate([part[0] for part in parts])
     outcomes = np.concatenate([part[1] for part in parts])
     good = np.isfinite(gammas).all(axis=1) & np.isfinite(outcomes).all(axis=1)

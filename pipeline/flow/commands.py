@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from contextlib import AbstractContextManager
 from typing import Any
 
 from pipeline.core.clock import Clock, Progress
@@ -12,6 +13,7 @@ from pipeline.core.ledger import Ledger, LedgerEntry
 from pipeline.core.outcome import Standing
 from pipeline.core.results import Results
 from pipeline.core.tables import no_frame
+from pipeline.estimators.workers import shared_by
 from pipeline.flow.assembled import results_of
 from pipeline.flow.dealt import with_deal_frames
 from pipeline.flow.doubted import Doubts, doubts_of
@@ -49,6 +51,16 @@ def run(
 
 def _all_stages(study: Study, clock: Clock, fresh: bool = False, deal: str = "") -> Results:
     """As :func:`run`; a ``deal`` has what its page is made from whatever its place in the list."""
+    with _workers(study):
+        return _made(study, clock, fresh, deal)
+
+
+def _workers(study: Study) -> AbstractContextManager[None]:
+    """Those that the study names, who are asked before any work is done."""
+    return shared_by(study.compute.backend, study.compute.scheduler, study.compute.workers)
+
+
+def _made(study: Study, clock: Clock, fresh: bool, deal: str) -> Results:
     measured = deals_of(study, clock, fresh)
     found, (placebo, draws) = reactions_of(study, measured, clock)
     with clock.stage("characteristics"):
@@ -106,7 +118,8 @@ def check(study: Study, progress: Progress = lambda _: None) -> tuple[Ledger, tu
         InputProblem: as :func:`run` would.
     """
     clock = Clock(progress)
-    measured = deals_of(study, clock)
+    with _workers(study):
+        measured = deals_of(study, clock)
     with clock.stage("characteristics"):
         prepared = prepared_of(study, measured)
     if prepared is None:

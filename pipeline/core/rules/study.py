@@ -6,6 +6,15 @@ from pipeline.core.rules.rule import Rule
 
 RULES = (
     Rule(
+        "no_workers",
+        "Workers of the cluster not at hand",
+        "The dask library is missing, the scheduler does not answer, or its workers are too few or "
+        "of other versions.",
+        "Nothing is begun: the work would wait, or a last digit could differ.",
+        "scheduler = 'tcp://10.0.0.5:8786' where no scheduler runs.",
+        "Start scheduler and workers with the same versions, or set compute.backend = 'loky'.",
+    ),
+    Rule(
         "unknown_key",
         "Unknown key in the study file",
         "The study file holds a key that no part of the run reads.",
