@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -15,6 +16,16 @@ Booleans = NDArray[np.bool_]
 # Columns of the factor file that are no factors.
 RISK_FREE = "risk_free"
 GLOBAL = "global_market"
+
+# Securities looked at together where what is made of a whole panel would take several times its
+# memory; their columns stay in the processor's cache.
+AT_ONCE = 128
+
+
+def blocks(columns: int) -> Iterator[slice]:
+    """Slices that go through ``columns`` columns; one empty slice if there are none."""
+    for start in range(0, max(columns, 1), AT_ONCE):
+        yield slice(start, min(start + AT_ONCE, columns))
 
 
 @dataclass(frozen=True, slots=True, eq=False)

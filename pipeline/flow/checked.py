@@ -11,7 +11,6 @@ from pipeline.core.findings import Finding, InputProblem, problem
 from pipeline.core.ledger import Ledger
 from pipeline.flow.commands import check
 from pipeline.flow.offending import offending_rows
-from pipeline.report.offending import is_ours, workbook
 from pipeline.study.schema import Study
 
 
@@ -39,11 +38,15 @@ def check_with_rows(
 
 
 def _write(study: Study, findings: Sequence[Finding], ledger: Ledger | None, place: Path) -> None:
+    from pipeline.report.offending import workbook
+
     content = workbook(offending_rows(study, findings, ledger))
     write_file(place, content, "--rows")
 
 
 def _refuse_place(place: Path) -> None:
+    from pipeline.report.offending import is_ours
+
     wrong = ""
     if place.suffix.lower() != ".xlsx":
         wrong = f"'{place.name}', which is no name of a workbook"

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from contextlib import AbstractContextManager
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from pipeline.core.clock import Clock, Progress
 from pipeline.core.estimate import Column
@@ -14,24 +14,20 @@ from pipeline.core.outcome import Standing
 from pipeline.core.results import Results
 from pipeline.core.tables import no_frame
 from pipeline.estimators.workers import shared_by
-from pipeline.flow.assembled import results_of
-from pipeline.flow.dealt import with_deal_frames
-from pipeline.flow.doubted import Doubts, doubts_of
 from pipeline.flow.explained import column_of, deals_with_outcomes, lead_of, prepared_of
 from pipeline.flow.measured import Measured, measure_deals, placebo_of, tests_of
-from pipeline.flow.pictured import with_pictures
 from pipeline.flow.ready import ready_deals, ready_standing
 from pipeline.flow.seen import refuse_changed
-from pipeline.flow.selected import selected_of, with_selection
 from pipeline.registry import (
     TESTS,
     entry,
 )
-from pipeline.report.deal_pages import Book, document
-from pipeline.significance.power import detectable_of, power_of
-from pipeline.significance.story import Story, story_of
-from pipeline.significance.windows import all_windows
 from pipeline.study.schema import Study
+
+if TYPE_CHECKING:
+    from pipeline.significance.story import Story
+
+# What only some commands need is imported by them: libraries take a second to load.
 
 
 def run(
@@ -61,6 +57,12 @@ def _workers(study: Study) -> AbstractContextManager[None]:
 
 
 def _made(study: Study, clock: Clock, fresh: bool, deal: str) -> Results:
+    from pipeline.flow.assembled import results_of
+    from pipeline.flow.dealt import with_deal_frames
+    from pipeline.flow.doubted import Doubts, doubts_of
+    from pipeline.flow.pictured import with_pictures
+    from pipeline.flow.selected import selected_of, with_selection
+
     measured = deals_of(study, clock, fresh)
     found, (placebo, draws) = reactions_of(study, measured, clock)
     with clock.stage("characteristics"):
@@ -94,6 +96,8 @@ def reactions_of(study: Study, measured: Measured, clock: Clock) -> tuple[Any, A
     """The tests of every window and the placebo dates; nothing where no return was measured."""
     if study.outcome is not None:
         return (), (no_frame(), no_frame())
+    from pipeline.significance.windows import all_windows
+
     with clock.stage("tests"):
         tests = {key: entry(TESTS, key).load() for key in tests_of(study, len(measured.deals))}
         windows = measured.windows
@@ -135,6 +139,8 @@ def deal(
     Raises:
         InputProblem: as :func:`check` would, or if the deal list has no such deal.
     """
+    from pipeline.significance.story import story_of
+
     measured = deals_of(study, Clock(progress))
     listed = measured.tables.deals
     if name not in set(listed["deal_id"]):
@@ -163,6 +169,8 @@ def deal_page(study: Study, name: str, progress: Progress = lambda _: None) -> A
     Raises:
         InputProblem: as :func:`run` would, or if no such deal was measured.
     """
+    from pipeline.report.deal_pages import Book, document
+
     results = _all_stages(study, Clock(progress), deal=name)
     known = results.deals["deal"].astype(str)
     if name not in set(known):
@@ -189,6 +197,8 @@ def power(study: Study, progress: Progress = lambda _: None) -> tuple[Any, float
         InputProblem: as :func:`check` would, or ``outcome_and_returns`` for an outcome that the
             deal list holds.
     """
+    from pipeline.significance.power import detectable_of, power_of
+
     if study.outcome is not None:
         raise problem(
             "outcome_and_returns",

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import math
 import re
+from functools import lru_cache
 
 from pipeline.core.outcome import Unit
 from pipeline.report.days import day_words
@@ -34,6 +35,7 @@ def clean(text: str) -> str:
     return _UNPRINTABLE.sub("", text)
 
 
+@lru_cache(maxsize=2**10)
 def slug(text: str, joint: str = "_") -> str:
     """``text`` as a name of files and anchors: small letters, digits and ``joint``."""
     return re.sub(r"[^a-z0-9]+", joint, text.lower()).strip(joint) or "part"
@@ -46,6 +48,7 @@ def broken(word: str, longest: int, piece: int = 14) -> list[str]:
     return [word[at : at + piece] for at in range(0, len(word), piece)]
 
 
+@lru_cache(maxsize=2**14)
 def true_minus(text: str) -> str:
     """``text`` with the hyphen before a number replaced by a minus sign, as in [−1, +1]."""
     return _HYPHEN_NUMBER.sub(MINUS, text)
@@ -64,9 +67,11 @@ def show(value: float, digits: int = 0, *, least: float = 0.0, signed: bool = Fa
     if 0 <= value < least:
         return f"<{least:.{digits}f}"
     text = f"{abs(value):,.{digits}f}"
-    negative = value < 0 and any(mark in "123456789" for mark in text)
-    plus = "+" if signed and not negative and any(mark in "123456789" for mark in text) else ""
-    return f"{MINUS}{text}" if negative else f"{plus}{text}"
+    if not text.strip("0.,"):
+        return text
+    if value < 0:
+        return f"{MINUS}{text}"
+    return f"+{text}" if signed else text
 
 
 def digits_for(error: float, most: int) -> int:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Mapping
+from functools import lru_cache
 from html import escape
 
 from markupsafe import Markup
@@ -13,13 +14,14 @@ from pipeline.report.document import (
     SHORTENED,
     Cell,
     Interval,
+    Number,
     Paragraph,
     Quote,
     Reference,
     Table,
     Text,
 )
-from pipeline.report.numerals import clean, lines, slug
+from pipeline.report.numerals import clean, lines, shown, slug
 
 _MOMENT = re.compile(r"\d{4}-\d\d-\d\d \d\d:\d\d")
 
@@ -108,10 +110,23 @@ def _heading(title: str, unit: str, kind: str) -> str:
 
 
 def _cell(cell: Cell, kind: str, place: int) -> str:
-    spans = "".join(f"<span>{escape(line)}</span>" for line in lines(cell))
     if isinstance(cell, Text):
-        spans = _linked(spans, cell.href)
+        return _worded(cell.text, cell.href, kind, place == 0)
+    if isinstance(cell, Number) and place:
+        return f'<td class="{kind} number"><span>{_words(shown(cell))}</span></td>'
+    spans = "".join(f"<span>{escape(line)}</span>" for line in lines(cell))
     if place == 0:
+        return f'<th scope="row">{spans}</th>' if spans else "<td></td>"
+    number = " number" if numeric(cell) else ""
+    return f'<td class="{kind}{number}">{spans}</td>'
+
+
+@lru_cache(maxsize=2**14)
+def _worded(text: str, href: str, kind: str, first: bool) -> str:
+    """A cell of words, most of which stand on every page of a deal."""
+    cell = Text(text, href)
+    spans = _linked("".join(f"<span>{escape(line)}</span>" for line in lines(cell)), href)
+    if first:
         return f'<th scope="row">{spans}</th>' if spans else "<td></td>"
     number = " number" if numeric(cell) else ""
     return f'<td class="{kind}{number}">{spans}</td>'
@@ -121,5 +136,6 @@ def _linked(words: str, href: str) -> str:
     return f'<a href="{escape(href)}">{words}</a>' if href and words else words
 
 
+@lru_cache(maxsize=2**14)
 def _words(text: str) -> str:
     return escape(clean(text))

@@ -6,6 +6,7 @@ page's own style may replace them in the dark.
 
 from __future__ import annotations
 
+from functools import lru_cache
 from html import escape
 
 from pipeline.report.scene import INK, SIZE, TONES, Area, Line, Marks, Part, Point, Scene, Stems
@@ -95,6 +96,7 @@ def _mark(shape: str, size: float, at: Point) -> str:
     return _way(corners(shape, size, at)) + "Z"
 
 
+@lru_cache(maxsize=2**14)
 def _number(value: float) -> str:
     """At most two decimals, no exponent, no minus zero."""
     text = f"{value:.2f}".rstrip("0").rstrip(".")

@@ -10,7 +10,7 @@ import pandas as pd
 
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.ledger import Action, LedgerEntry, StageLedger
-from pipeline.core.prices import RISK_FREE, Floats, Integers, PricePanel
+from pipeline.core.prices import RISK_FREE, Floats, Integers, PricePanel, blocks
 
 FEWEST_DAYS = 60
 MOST = 0.5
@@ -154,10 +154,14 @@ def _weights(located: pd.DataFrame, benchmarks: pd.DataFrame) -> Floats:
 
 
 def _fit(panel: PricePanel, columns: Integers) -> BenchmarkFit:
-    returns, market = panel.returns[:, columns], panel.benchmark[:, None]
-    pairs = ((returns[1:], market[:-1]), (returns, market), (returns[:-1], market[1:]))
-    lags = np.stack([_correlation(own, other) for own, other in pairs])
-    days = (np.isfinite(returns) & np.isfinite(market)).sum(axis=0)
+    market = panel.benchmark[:, None]
+    parts, counts = [], []
+    for block in blocks(len(columns)):
+        returns = panel.returns[:, columns[block]]
+        pairs = ((returns[1:], market[:-1]), (returns, market), (returns[:-1], market[1:]))
+        parts.append(np.stack([_correlation(own, other) for own, other in pairs]))
+        counts.append((np.isfinite(returns) & np.isfinite(market)).sum(axis=0))
+    lags, days = np.concatenate(parts, axis=1), np.concatenate(counts)
     return BenchmarkFit(
         panel.exchange,
         columns,

@@ -94,12 +94,10 @@ def treat_news(
             rules.setdefault(RULES[kind == EARNINGS], []).append((int(gap), kind))
     entries: list[LedgerEntry] = []
     gone: list[int] = []
-    for label in located.index:
-        told = near.get(label, {})
+    for label in located.index[located.index.isin(list(near))]:
+        told = near[label]
         alone = any(gap == 0 for news in told.values() for gap, _ in news)
-        leaves = bool(told) and (
-            options.confounding == "exclude" or (options.confounding == "dummy" and alone)
-        )
+        leaves = options.confounding == "exclude" or (options.confounding == "dummy" and alone)
         gone += [label] if leaves else []
         deal = str(located.at[label, "deal_id"])
         entries += _told(deal, told, leaves, options)

@@ -7,7 +7,7 @@ from collections.abc import Iterable
 import numpy as np
 
 from pipeline.core.findings import Finding, Severity
-from pipeline.core.prices import Floats, PricePanel
+from pipeline.core.prices import Booleans, Floats, Integers, PricePanel, blocks
 from pipeline.returns.limits import DEFAULT_LIMITS, ScreenLimits
 from pipeline.returns.policies import since_last_close
 
@@ -46,18 +46,32 @@ def unit_jumps(panel: PricePanel, limits: ScreenLimits = DEFAULT_LIMITS) -> list
 
 
 def _jumps(panel: PricePanel, factors: Floats, tolerance: float, calm: float) -> Jumps:
-    moves, _ = since_last_close(panel.close)
+    found: Jumps = {}
+    wild = ~(np.abs(panel.benchmark) < calm)
+    places = [_large(panel, block, wild) for block in blocks(len(panel.securities))]
+    rows, columns, sizes = (np.concatenate(part) for part in zip(*places, strict=True))
+    for at in np.lexsort((columns, rows)):
+        ratio = (1 + sizes[at]) / (1 + panel.benchmark[rows[at]])
+        if (np.abs(ratio / factors - 1) < tolerance).any():
+            days = found.setdefault(panel.securities[columns[at]], [])
+            days.append(panel.sessions[rows[at]])
+    return found
+
+
+def _large(panel: PricePanel, block: slice, wild: Booleans) -> tuple[Integers, Integers, Floats]:
+    """Session, column and size of the large moves of some securities while the benchmark is calm.
+
+    ``wild`` (T,) says when it is not.
+    """
+    moves, _ = since_last_close(panel.close[:, block])
     moves[np.abs(moves) <= SUSPECT_FROM] = np.nan
     if panel.delisted is not None:
-        known = np.flatnonzero(panel.delisted >= 0)
-        moves[panel.delisted[known], known] = np.nan
-    moves[~(np.abs(panel.benchmark) < calm)] = np.nan
-    found: Jumps = {}
-    for row, column in np.argwhere(np.isfinite(moves)):
-        ratio = (1 + moves[row, column]) / (1 + panel.benchmark[row])
-        if (np.abs(ratio / factors - 1) < tolerance).any():
-            found.setdefault(panel.securities[column], []).append(panel.sessions[row])
-    return found
+        delisted = panel.delisted[block]
+        known = np.flatnonzero(delisted >= 0)
+        moves[delisted[known], known] = np.nan
+    moves[wild] = np.nan
+    rows, columns = np.nonzero(np.isfinite(moves))
+    return rows, columns + block.start, moves[rows, columns]
 
 
 def jumps_together(panel: PricePanel, limits: ScreenLimits = DEFAULT_LIMITS) -> list[Finding]:
@@ -66,13 +80,16 @@ def jumps_together(panel: PricePanel, limits: ScreenLimits = DEFAULT_LIMITS) -> 
     Closes adjusted at two dates, put one below the other, move by each company's own dividends
     and splits where the downloads meet.
     """
-    moves = np.abs(panel.returns - panel.benchmark[:, None])
-    known = np.isfinite(moves)
-    moves = np.where(known, moves, 0.0)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        usual = moves.sum(axis=0) / known.sum(axis=0)
-        jumped = (moves > limits.together_jump * usual).sum(axis=1)
-    enough = np.maximum(FEWEST, limits.together_share * known.sum(axis=1))
+    jumped, quoted = (np.zeros(len(panel.sessions), dtype=np.int64) for _ in range(2))
+    for block in blocks(len(panel.securities)):
+        moves = np.abs(panel.returns[:, block] - panel.benchmark[:, None])
+        known = np.isfinite(moves)
+        moves = np.where(known, moves, 0.0)
+        with np.errstate(invalid="ignore", divide="ignore"):
+            usual = moves.sum(axis=0) / known.sum(axis=0)
+            jumped += (moves > limits.together_jump * usual).sum(axis=1)
+        quoted += known.sum(axis=1)
+    enough = np.maximum(FEWEST, limits.together_share * quoted)
     days = panel.sessions[(jumped >= enough) & (np.abs(panel.benchmark) < limits.calm_benchmark)]
     if days.size == 0:
         return []

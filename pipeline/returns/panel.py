@@ -68,7 +68,8 @@ def build_panels(
             sessions = _from_the_one_before(sessions, np.datetime64(first, "D"))
         if changes and name in changes:
             sessions = changed(sessions, changes[name])
-        own = prices[prices["security"].isin(listed["security"])]
+        here = prices["security"].isin(listed["security"]).to_numpy()
+        own = prices if here.all() else prices[here]
         level = benchmarks[benchmarks["exchange"] == exchange]
         moves = None if factors is None else factors[factors["exchange"] == exchange]
         panel, more = _panel(sessions, own, level, limits, money, spans)
@@ -140,7 +141,7 @@ def _asked(days: Dates, securities: tuple[str, ...], spans: pd.DataFrame) -> Boo
     edges = np.zeros((len(days) + 1, len(securities)), dtype=np.int16)
     np.add.at(edges, (np.searchsorted(days, first), column[known]), 1)
     np.add.at(edges, (np.searchsorted(days, last, side="right"), column[known]), -1)
-    return np.cumsum(edges[:-1], axis=0) > 0
+    return np.cumsum(edges[:-1], axis=0, dtype=np.int32) > 0
 
 
 def _with_factors(
@@ -177,7 +178,8 @@ def _close_and_return(
 def simple_returns(close: Floats) -> Floats:
     """(T, S) P_t / P_(t-1) - 1; NaN on the first session, in a gap and on the session after it."""
     returns = np.full_like(close, np.nan, order="F")
-    returns[1:] = close[1:] / close[:-1] - 1
+    np.divide(close[1:], close[:-1], out=returns[1:])
+    returns[1:] -= 1
     return returns
 
 
@@ -191,9 +193,13 @@ def _lay(
     inside = row < len(days)
     inside[inside] = days[row[inside]] == on[inside]
     laid = np.full((len(days), len(securities)), np.nan, order="F")
-    volume = np.full_like(laid, np.nan, order="F")
-    laid[row[inside], codes[inside]] = prices[value].to_numpy()[inside]
-    volume[row[inside], codes[inside]] = prices["volume"].to_numpy()[inside]
+    volume = np.broadcast_to(np.nan, laid.shape)  # takes no memory where no volume is known
+    if not inside.all():
+        row, codes = row[inside], codes[inside]
+    laid[row, codes] = _inside(prices[value], inside)
+    if prices["volume"].notna().any():
+        volume = np.full_like(laid, np.nan, order="F")
+        volume[row, codes] = _inside(prices["volume"], inside)
     findings = []
     priced = prices[value].notna().to_numpy()  # an empty cell on a holiday is no price
     off = on[~inside & priced]
@@ -211,6 +217,12 @@ def _lay(
             )
         )
     return laid, volume, tuple(map(str, securities)), findings
+
+
+def _inside(column: pd.Series, inside: Booleans) -> Floats:
+    """The cells at ``inside``; the column's own memory if those are all."""
+    values = column.to_numpy()
+    return values if inside.all() else values[inside]
 
 
 def _align(days: Dates, on: pd.Series, values: Floats) -> Floats:

@@ -5,7 +5,6 @@ from __future__ import annotations
 from dataclasses import replace
 
 import numpy as np
-from scipy import stats
 
 from pipeline.core.estimate import NotApplicable, Tested, t_test, z_test
 from pipeline.core.prices import Booleans, Floats, Integers
@@ -109,6 +108,8 @@ def _summed_ranks(returns: Floats, present: Booleans) -> Floats:
     ranks[close] = 0.0
     total = np.bincount(order.ravel(), ranks.ravel(), days)
     if close.any():
+        from scipy import stats
+
         ranks = stats.rankdata(returns[close], axis=1) / (known[close] + 1)
         total += np.where(present[close], ranks, 0.0).sum(axis=0)
     return np.asarray(total)
@@ -247,6 +248,8 @@ def signed_rank(sample: CarSample) -> Tested:
     Wilcoxon 1945, Biometrics Bulletin 1. Exact up to 25 deals without ties, else normal with the
     correction of the variance for ties.
     """
+    from scipy import stats
+
     name = "Signed-rank test"
     car = sample.car[sample.car != 0]
     if len(car) < 2:

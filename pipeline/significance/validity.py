@@ -6,7 +6,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
-from scipy import special, stats
+from scipy import special
 
 from pipeline.significance.sample import CarSample
 
@@ -57,6 +57,8 @@ def symmetric(sample: CarSample) -> str:
     """Why returns are not symmetric here, or ''."""
     if sample.n < 8:
         return ""
+    from scipy import stats  # takes half a second to load
+
     skew = float(stats.skew(sample.scar))
     noise = float(np.sqrt(6 / sample.n))
     if abs(skew) < max(SKEWED, 2 * noise):

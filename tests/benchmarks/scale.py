@@ -86,10 +86,12 @@ WINDOWS = {"first": "[[0, 1], [-5, 5]]", "again": "[[0, 1], [-5, 5], [-3, 3]]"}
 
 
 def market(folder: Path, securities: int = SECURITIES) -> np.ndarray:
-    """Write prices and benchmark; return the (T,) sessions."""
+    """Write prices and benchmark unless they are there; return the (T,) sessions."""
     from pipeline.returns.sessions import sessions_between
 
     days = sessions_between("XNYS", FIRST, LAST).days
+    if (folder / "prices.parquet").exists() and (folder / "benchmarks.parquet").exists():
+        return days
     stream = np.random.default_rng(20260301)
     moves = stream.normal(0.0003, 0.01, len(days))
     index = pa.array(days.astype("datetime64[ms]"))
@@ -207,27 +209,39 @@ def main() -> None:
     parser = argparse.ArgumentParser()
     parser.add_argument("--deals", type=int, nargs="+", default=SIZES)
     parser.add_argument("--securities", type=int, default=SECURITIES)
-    parser.add_argument("--folder", default="", help="where the tables go; kept if named")
+    parser.add_argument(
+        "--folder", default="", help="where the tables go; kept, and used again, if named"
+    )
     parser.add_argument("--write", action="store_true", help="keep the figures")
     asked = parser.parse_args()
     with tempfile.TemporaryDirectory() as made:
         folder = Path(asked.folder or made)
         days = market(folder, asked.securities)
-        rows = []
+        rows: list[dict[str, object]] = []
         for deals in asked.deals:
             deal_list(folder, days, deals, asked.securities)
-            rows.append({"deals": deals, **{name: whole(folder, name) for name in WINDOWS}})
+            load = round(os.getloadavg()[0], 1)
+            runs = {name: whole(folder, name) for name in WINDOWS}
+            rows.append({"deals": deals, "load_of_the_machine": load, **runs})
             print(json.dumps(rows[-1], indent=1), flush=True)
+            if asked.write:
+                write(rows, asked.securities, len(days))
+
+
+def write(rows: list[dict[str, object]], securities: int, sessions: int) -> None:
+    """Keep what has been measured so far, in place of the same sizes of an earlier run."""
+    known = json.loads(FIGURES.read_text(encoding="utf-8"))["sizes"] if FIGURES.exists() else []
+    new = {row["deals"] for row in rows}
+    others = [row for row in known if row["deals"] not in new]
     figures = {
         "rerun": "python -m tests.benchmarks.scale --write --deals ...",
         "python": platform.python_version(),
         "cores": os.cpu_count(),
-        "securities": asked.securities,
-        "price_rows": asked.securities * len(days),
-        "sizes": rows,
+        "securities": securities,
+        "price_rows": securities * sessions,
+        "sizes": sorted([*others, *rows], key=lambda row: int(str(row["deals"]))),
     }
-    if asked.write:
-        FIGURES.write_text(json.dumps(figures, indent=2) + "\n", encoding="utf-8")
+    FIGURES.write_text(json.dumps(figures, indent=2) + "\n", encoding="utf-8")
 
 
 if __name__ == "__main__":

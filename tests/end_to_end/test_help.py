@@ -34,3 +34,17 @@ def test_each_command_has_help() -> None:
         )  # fmt: skip
         assert done.returncode == 0
         assert len(done.stdout.splitlines()) > 3
+
+
+def test_a_check_loads_only_what_it_uses() -> None:
+    code = (
+        "import sys\n"
+        "import pipeline.flow.checked\n"
+        "later = ('scipy.stats', 'scipy.optimize', 'xlsxwriter', 'joblib', 'dask', 'matplotlib',"
+        " 'pipeline.scrutiny', 'pipeline.flow.assembled')\n"
+        "print(*[name for name in later if name in sys.modules])\n"
+    )
+    shown = subprocess.run(
+        [sys.executable, "-c", code], cwd=ROOT, capture_output=True, text=True, check=True
+    ).stdout
+    assert shown.split() == []

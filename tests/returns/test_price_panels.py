@@ -7,6 +7,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from pipeline.core import prices as price_values
 from pipeline.core.findings import Finding, Severity
 from pipeline.core.prices import PricePanel
 from pipeline.returns.jumps import suspected_splits
@@ -226,3 +227,31 @@ def test_a_panel_finds_sessions_and_columns() -> None:
     assert panel.column("B") == 1
     with pytest.raises(KeyError, match="C"):
         panel.column("C")
+
+
+def found_in(close: np.ndarray, codes: list[str]) -> tuple[list[Finding], dict[str, list]]:
+    prices = long_prices(close, codes)
+    panels, _, findings = build_panels(listings(codes), prices, benchmark(), None, ())
+    return findings, suspected_splits(panels["XLON"])
+
+
+def test_the_securities_looked_at_together_change_nothing(monkeypatch: pytest.MonkeyPatch) -> None:
+    close, codes = walk(9)
+    close[90:, 7] *= 100
+    close[70:, 2] *= 100
+    close[120:, 4] /= 2
+    close[150:] *= np.linspace(1.2, 1.3, 9)  # all at once: two downloads put together
+    whole = found_in(close, codes)
+    assert {"price_unit", "prices_of_two_downloads"} <= {found.rule for found in whole[0]}
+    assert list(whole[1]) == ["S4"]
+    monkeypatch.setattr(price_values, "AT_ONCE", 2)
+    assert found_in(close, codes) == whole
+
+
+def test_unknown_volumes_take_no_memory() -> None:
+    close, codes = walk(3)
+    prices = long_prices(close, codes).assign(volume=np.nan)
+    panel = build_panels(listings(codes), prices, benchmark(), None, ())[0]["XLON"]
+    assert panel.volume.shape == panel.close.shape
+    assert np.isnan(panel.volume).all()
+    assert panel.volume.strides == (0, 0)
