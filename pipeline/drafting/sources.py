@@ -13,6 +13,9 @@ from pipeline.drafting.matching import Match
 from pipeline.drafting.roles import PROVES, SECURITY_CODES
 from pipeline.drafting.signs import COMMA, Signs
 
+# A cell that is a time of day, and the share of them that makes a column of such.
+CLOCK = r"(?i)\d{1,2}:\d{2}(:\d{2})?( ?[ap]\.?m\.?)?"
+CLOCKS = 0.8
 DATE_KEY, ZONE_KEY = "inputs.date_format", "inputs.timestamp_zone"
 READ_DATES = ("announced_at", "date", "as_of", "rumoured_at", "completed_at", "withdrawn_at",
               "amended_at", "earnings_release")  # fmt: skip
@@ -131,7 +134,7 @@ def date_lines(kinds: Sorted, answers: Mapping[str, object]) -> list[Line]:
     lines = [*_format_lines([(item, signs.dating) for item, _, signs in named], answers)]
     for item, role, signs in named:
         if role == "announced_at":
-            lines += _zone_lines(item, signs)
+            lines += [*_zone_lines(item, signs), *_clock_lines(item, signs)]
     return lines
 
 
@@ -191,3 +194,20 @@ def _zone_lines(deals: Recognised, signs: Signs) -> Iterator[Line]:
         "offset nor a column of zones. In which time zone were they written down?",
         example='"Europe/London"',
     )  # fmt: skip
+
+
+def _clock_lines(deals: Recognised, signs: Signs) -> Iterator[Line]:
+    """Times of day in a column of their own, beside dates: no reader joins the two."""
+    if signs.dating.timed:
+        return
+    for name in deals.found.signs:
+        cells = deals.found.frame[name].dropna().astype(str).str.strip()
+        cells = cells[cells != ""]
+        if len(cells) and cells.str.fullmatch(CLOCK).mean() >= CLOCKS:
+            yield Line(
+                "inputs", "", None,
+                f"'{name}' of {deals.found.source.file} holds times of day, such as "
+                f"'{cells.iloc[0]}', beside the dates of '{signs.name}'. No key joins the two, and "
+                "without a time of day every deal counts as date only: write both into one cell "
+                "(2024-03-08 17:45) to use them.",
+            )  # fmt: skip

@@ -321,3 +321,17 @@ def test_a_decimal_comma_in_closes_side_by_side_is_read_once_answered(folder: Pa
     found = drafted(folder, folder / "study.toml", answers)
     assert value(found.draft, "inputs.source.prices.layout") == "wide"
     assert found.checked
+
+
+def test_times_of_day_in_a_column_of_their_own_are_asked_about(folder: Path) -> None:
+    """Silence would make every deal date only."""
+
+    def apart(table: pd.DataFrame) -> pd.DataFrame:
+        parts = table["announced_at"].str.split(" ", expand=True)
+        return table.assign(announced_at=parts[0], clock=parts[1])
+
+    change(folder, "deals", apart)
+    found = made(folder)
+    (asked,) = [line for line in found.questions if "'clock'" in line.reason]
+    assert "write both into one cell" in asked.reason
+    assert not [line for line in found.questions if line.key == "timestamp_zone"]
