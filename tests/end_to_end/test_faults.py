@@ -20,7 +20,7 @@ import pytest
 from pipeline import keeping
 from pipeline.core import disk, store
 from pipeline.core.findings import InputProblem
-from pipeline.flow import commands, measured
+from pipeline.flow import assembled, measured
 from tests.benchmarks.kills import WINDOWS, contents, kills
 from tests.end_to_end.test_bad_input import edit, invoke, plain
 from tests.end_to_end.test_ready_table import bids, written
@@ -65,7 +65,7 @@ CHANGES: dict[str, Callable[[Path], object]] = {
 MOMENTS = {
     "before it is read": (measured, "read_inputs", before),
     "when it was read": (measured, "read_inputs", after),
-    "later in the run": (commands, "results_of", after),
+    "later in the run": (assembled, "results_of", after),
 }
 
 

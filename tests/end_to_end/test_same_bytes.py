@@ -40,7 +40,7 @@ boot.WORTH_A_PROCESS = 0
 keeping.LEAST_SECONDS = 0.0
 parallel = joblib.Parallel
 asked = []
-boot.joblib.Parallel = lambda n_jobs: asked.append(n_jobs) or parallel(n_jobs=n_jobs)
+joblib.Parallel = lambda n_jobs: asked.append(n_jobs) or parallel(n_jobs=n_jobs)
 for place in places:
     out, jobs, *options = place.split()
     joblib.cpu_count = lambda: int(jobs)
