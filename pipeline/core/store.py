@@ -19,6 +19,8 @@ from pipeline.core.findings import InputProblem, problem
 
 MARK = "manifest.json"
 ATTEMPTS = 50
+# Looks at a folder before it is refused, and the seconds between them.
+LOOKS, PAUSE = 10, 0.01
 # What a name says that another run took, or gave away, in the meantime.
 OVERTAKEN = {errno.ENOENT, errno.ENOTEMPTY, errno.EEXIST}
 A_DAY = 86_400
@@ -33,15 +35,33 @@ def refuse_foreign(folder: Path) -> None:
         InputProblem: ``output_folder`` if the target is a file, a folder that holds other things
             than a run, or cannot be written.
     """
-    target = folder.resolve()
-    if target.is_dir() and any(target.iterdir()) and not (target / MARK).is_file():
-        raise _refusal(folder, "a folder that holds other files and is no earlier run")
+    reason = ""
+    for _ in range(LOOKS):
+        reason = _foreign(folder.resolve())
+        if not reason:
+            return
+        time.sleep(PAUSE)
+    raise _refusal(folder, reason)
+
+
+def _foreign(target: Path) -> str:
+    """Why a run may not take the name of ``target``; '' if it may.
+
+    While another run puts its folder there this may see a part of one, and be wrong.
+    """
+    try:
+        held = target.is_dir() and any(target.iterdir())
+    except OSError:
+        held = False
+    if held and not (target / MARK).is_file():
+        return "a folder that holds other files and is no earlier run"
     if target.exists() and not target.is_dir():
-        raise _refusal(folder, "a file of that name")
+        return "a file of that name"
     above = next(parent for parent in target.parents if parent.exists())
     for place in (above, target):
         if place.exists() and not (place.is_dir() and os.access(place, os.W_OK)):
-            raise _refusal(folder, f"no right to write in {place}")
+            return f"no right to write in {place}"
+    return ""
 
 
 def _refusal(folder: Path, got: str) -> InputProblem:
